@@ -1,0 +1,55 @@
+"""The errors of sequester: one small tree, each with the exit code it ends a command with."""
+
+from __future__ import annotations
+
+
+class SequesterError(Exception):
+    """Base of everything sequester raises on purpose."""
+
+    exit_code = 1
+
+
+class InputError(SequesterError):
+    """The request or the data is wrong: says what, where, expected, got and the remedy.
+
+    Parameters
+    ----------
+    what : str
+        The fault in a few words.
+    where : str, optional
+        The file, row or setting at fault.
+    expected, got : str, optional
+        The two sides of the mismatch.
+    remedy : str, optional
+        What the user can do about it.
+
+    Examples
+    --------
+    >>> print(InputError("unknown plan", where="s.toml", got="'x'", remedy="use a listed plan"))
+    unknown plan (s.toml): got 'x'; use a listed plan
+    """
+
+    exit_code = 2
+
+    def __init__(
+        self, what: str, *, where: str = "", expected: str = "", got: str = "", remedy: str = ""
+    ) -> None:
+        self.fields = {
+            "what": what, "where": where, "expected": expected, "got": got, "remedy": remedy,
+        }  # fmt: skip
+        head = f"{what} ({where})" if where else what
+        sides = ", ".join(
+            f"{word} {side}" for word, side in (("expected", expected), ("got", got)) if side
+        )
+        tail = "; ".join(part for part in (sides, remedy) if part)
+        super().__init__(f"{head}: {tail}" if tail else head)
+
+
+class EmptyFoldError(InputError):
+    """A fold found no region and the plan said to stop."""
+
+
+class Refused(SequesterError):
+    """The guard refused: something chosen would meet the data that chose it."""
+
+    exit_code = 3
