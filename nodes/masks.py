@@ -1,0 +1,396 @@
+"""Rules that turn a group map into a region: threshold, cluster, strongest; and given shapes.
+
+A rule that starts from a threshold gives the critical value of t for a number of rows
+(`critical`), and then keeps some of the features above it (`keep`). Rules see only the
+features above the threshold, as members of a list of candidates, so that the same code serves
+one map, all folds of a scheme, and every flip of a test.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Protocol
+
+import numpy as np
+import numpy.typing as npt
+from scipy import stats
+from scipy.sparse import coo_array
+from scipy.sparse.csgraph import connected_components
+
+from .errors import InputError
+from .space import Space
+
+Floats = npt.NDArray[np.floating]
+Ints = npt.NDArray[np.integer]
+Bools = npt.NDArray[np.bool_]
+
+PICKS = ("largest", "peak", "nearest", "all")
+
+
+class MaskRule(Protocol):
+    """How a region is read off a group map."""
+
+    @property
+    def map_kind(self) -> str:
+        """Which group map it reads: "t" or "mean"."""
+
+    def describe(self) -> str:
+        """The rule in words, for sentences about the result."""
+
+
+@dataclass(frozen=True)
+class _Forming:
+    """A one-sided threshold on t, as a height or as the p-value that it stands for.
+
+    Parameters
+    ----------
+    height : float, optional
+        Threshold on t itself.
+    p : float, optional
+        One-sided p of t with n - 1 degrees of freedom, n the rows with data at the feature.
+    """
+
+    height: float | None = None
+    p: float | None = None
+
+    def __post_init__(self) -> None:
+        if (self.height is None) == (self.p is None):
+            raise InputError(
+                "a threshold needs exactly one of height and p",
+                got=f"height {self.height}, p {self.p}",
+            )
+        if self.height is not None and not self.height > 0:
+            raise InputError("height out of range", expected="height > 0", got=str(self.height))
+        if self.p is not None and not 0 < self.p < 0.5:
+            raise InputError("p out of range", expected="0 < p < 0.5", got=str(self.p))
+
+    @property
+    def map_kind(self) -> str:
+        return "t"
+
+    def critical(self, n: npt.ArrayLike) -> Floats:
+        """The value t must exceed, for each number of rows with data (infinite below 2)."""
+        rows = np.asarray(n, dtype=float)
+        if self.height is not None:
+            return np.where(rows >= 2, self.height, np.inf)
+        # Few distinct counts occur; the quantile is slow and exact equality is wanted.
+        counts, back = np.unique(rows, return_inverse=True)
+        heights = np.full(len(counts), np.inf)
+        enough = counts >= 2
+        heights[enough] = stats.t.isf(self.p, counts[enough] - 1)
+        out: Floats = heights[back].reshape(rows.shape)
+        return out
+
+    def _threshold(self) -> str:
+        return f"t > {self.height:g}" if self.height is not None else f"p < {self.p:g}"
+
+
+@dataclass(frozen=True)
+class Threshold(_Forming):
+    """Every feature above the threshold.
+
+    Examples
+    --------
+    >>> Threshold(p=0.01).critical(20).round(4).item()
+    2.5395
+    """
+
+    def describe(self) -> str:
+        """The rule in words."""
+        return f"all features with {self._threshold()}"
+
+
+@dataclass(frozen=True)
+class Cluster(_Forming):
+    """One cluster (or all of them) of the features above a cluster-forming threshold.
+
+    Parameters
+    ----------
+    height, p : float
+        The forming threshold; exactly one.
+    connectivity : {18, 6, 26}
+        Which voxels touch: by a face, an edge or a corner.
+    min_size : int
+        The least number of features of a cluster.
+    pick : {"largest", "peak", "nearest", "all"}
+        The cluster with most features; with the highest t; with the feature nearest to a
+        coordinate; or every cluster of sufficient size. Ties go to the lowest feature number.
+    near : (3,) float, mm
+        The coordinate for "nearest".
+    """
+
+    connectivity: int = 18
+    min_size: int = 1
+    pick: str = "largest"
+    near: tuple[float, float, float] | None = None
+
+    def __post_init__(self) -> None:
+        super().__post_init__()
+        if self.pick not in PICKS:
+            raise InputError("unknown pick", expected=f"one of {', '.join(PICKS)}", got=self.pick)
+        if self.connectivity not in (6, 18, 26):
+            raise InputError(
+                "connectivity out of range", expected="6, 18 or 26", got=str(self.connectivity)
+            )
+        if self.min_size < 1:
+            raise InputError("min_size out of range", expected=">= 1", got=str(self.min_size))
+        if (self.pick == "nearest") != (self.near is not None):
+            raise InputError(
+                'pick = "nearest" and near = [x, y, z] go together',
+                got=f"pick {self.pick!r}, near {self.near}",
+            )
+
+    def describe(self) -> str:
+        """The rule in words."""
+        which = {
+            "largest": "the largest cluster",
+            "peak": "the cluster with the highest peak",
+            "nearest": f"the cluster nearest to {self.near} mm",
+            "all": "every cluster",
+        }[self.pick]
+        return (
+            f"{which} of features with {self._threshold()} "
+            f"(connectivity {self.connectivity}, at least {self.min_size} features)"
+        )
+
+
+@dataclass(frozen=True)
+class Strongest:
+    """The k features with the highest value of the map; ties go to the lowest number.
+
+    Parameters
+    ----------
+    k : int
+        How many.
+    map_kind : {"t", "mean"}
+        Which group map ranks them.
+    """
+
+    k: int
+    map_kind: str = "t"
+
+    def __post_init__(self) -> None:
+        if self.k < 1:
+            raise InputError("k out of range", expected=">= 1", got=str(self.k))
+        if self.map_kind not in ("t", "mean"):
+            raise InputError("unknown map", expected="t or mean", got=str(self.map_kind))
+
+    def describe(self) -> str:
+        """The rule in words."""
+        return f"the {self.k} features with the highest group {self.map_kind}"
+
+
+class Neighbourhood:
+    """Who neighbours whom, made ready for finding clusters among few features again and again.
+
+    Parameters
+    ----------
+    space : Space
+        The space of the map.
+    connectivity : int
+        6, 18 or 26 on a grid.
+    """
+
+    def __init__(self, space: Space, connectivity: int) -> None:
+        table = space.neighbours(connectivity)
+        # Offset j is the opposite of offset -1-j: half of the columns holds every pair once.
+        self._table = np.ascontiguousarray(table[:, : table.shape[1] // 2])
+        self._position = np.full(space.n_features + 1, -1, dtype=np.int32)
+
+    def pairs(self, features: Ints) -> tuple[Ints, Ints]:
+        """The neighbouring pairs among some features, as positions in the list given."""
+        self._position[features] = np.arange(len(features), dtype=np.int32)
+        # Feature number -1 ("no neighbour") reads the last slot, which stays -1.
+        other = self._position[self._table[features]]
+        self._position[features] = -1
+        pair = np.flatnonzero(other >= 0)
+        return pair // other.shape[1], other.ravel()[pair]
+
+
+def components(members: Bools, pairs: tuple[Ints, Ints]) -> tuple[Ints, Ints, Ints]:
+    """The clusters of each map's members.
+
+    Parameters
+    ----------
+    members : (n_candidates, n_maps) bool
+        Which candidates are above the threshold in each map.
+    pairs : two (n_pairs,) int
+        Neighbouring candidates.
+
+    Returns
+    -------
+    candidate, map, cluster : (n_members,) int
+        For every member: which candidate, in which map, and a cluster number that is unique
+        over all maps.
+    """
+    n_maps = members.shape[1]
+    flat = np.flatnonzero(members)
+    number = np.full(members.size, -1, dtype=np.int32)
+    number[flat] = np.arange(len(flat), dtype=np.int32)
+    one, other = pairs
+    edge, of_map = np.divmod(np.flatnonzero(members[one] & members[other]), n_maps)
+    a = number[one[edge] * n_maps + of_map]
+    b = number[other[edge] * n_maps + of_map]
+    graph = coo_array((np.ones(len(a), np.int8), (a, b)), shape=(len(flat), len(flat)))
+    _, cluster = connected_components(graph.tocsr(), directed=False)
+    candidate, of_map = np.divmod(flat, n_maps)
+    return candidate, of_map, cluster
+
+
+def keep_clusters(
+    members: Bools, features: Ints, rule: Cluster, hood: Neighbourhood, t: Floats | None,
+    distance: Floats | None,
+) -> Bools:  # fmt: skip
+    """Members that the cluster rule keeps.
+
+    Parameters
+    ----------
+    members : (n_candidates, n_maps) bool
+        The candidates above the forming threshold in each map.
+    features : (n_candidates,) int
+        Their feature numbers, ascending.
+    rule : Cluster
+    hood : Neighbourhood
+        At the rule's connectivity.
+    t : (n_candidates, n_maps) float
+        Needed for ``pick = "peak"``.
+    distance : (n_features,) float
+        From the rule's coordinate, in mm; needed for ``pick = "nearest"``.
+
+    Returns
+    -------
+    (n_candidates, n_maps) bool
+    """
+    if not members.any():
+        return members
+    candidate, of_map, cluster = components(members, hood.pairs(features))
+    size = np.bincount(cluster)
+    n_clusters = len(size)
+    owner = np.empty(n_clusters, dtype=np.intp)
+    owner[cluster] = of_map
+    big = size >= rule.min_size
+    if rule.pick == "all":
+        kept = big
+    else:
+        if rule.pick == "largest":
+            merit = size.astype(float)
+        elif rule.pick == "peak":
+            if t is None:
+                raise ValueError('pick = "peak" needs the t values')
+            merit = np.full(n_clusters, -np.inf)
+            np.maximum.at(merit, cluster, t[candidate, of_map])
+        else:
+            if distance is None:
+                raise ValueError('pick = "nearest" needs the distances')
+            merit = np.full(n_clusters, -np.inf)
+            np.maximum.at(merit, cluster, -distance[features[candidate]])
+        first = np.full(n_clusters, len(features))
+        np.minimum.at(first, cluster, candidate)
+        # Per map: the best merit, then the lowest feature number.
+        order = np.lexsort((first, -merit, ~big, owner))
+        heads = order[np.unique(owner[order], return_index=True)[1]]
+        kept = np.zeros(n_clusters, bool)
+        kept[heads[big[heads]]] = True
+    out = np.zeros_like(members)
+    chosen = kept[cluster]
+    out[candidate[chosen], of_map[chosen]] = True
+    return out
+
+
+def strongest(values: Floats, k: int) -> Bools:
+    """The k highest of one map, as (n_features,) bool; NaN never, ties to the lowest number.
+
+    Examples
+    --------
+    >>> strongest(np.array([1.0, np.nan, 3.0, 3.0, 2.0]), 2).tolist()
+    [False, False, True, True, False]
+    """
+    usable = np.flatnonzero(~np.isnan(values))
+    order = usable[np.argsort(-values[usable], kind="stable")]
+    out = np.zeros(len(values), bool)
+    out[order[:k]] = True
+    return out
+
+
+def choose(
+    values: Floats, rule: MaskRule, space: Space, n: npt.ArrayLike | None = None
+) -> Bools:
+    """The region of one group map.
+
+    Parameters
+    ----------
+    values : (n_features,) float
+        t map (or mean map, for `Strongest`); NaN where undefined.
+    rule : Threshold, Cluster or Strongest
+    space : Space
+    n : int or (n_features,) int
+        Rows with data, when the threshold is given as p.
+
+    Returns
+    -------
+    (n_features,) bool
+
+    Examples
+    --------
+    >>> from sequester.nodes.space import Grid
+    >>> grid = Grid((5, 1, 1), np.eye(4))
+    >>> t = np.array([4.0, 4.0, 0.0, 9.0, 0.0])
+    >>> choose(t, Cluster(height=3.0), grid).tolist()
+    [True, True, False, False, False]
+    >>> choose(t, Cluster(height=3.0, pick="peak"), grid).tolist()
+    [False, False, False, True, False]
+    """
+    if isinstance(rule, Strongest):
+        return strongest(values, rule.k)
+    if not isinstance(rule, _Forming):
+        raise TypeError(f"no mask rule: {rule!r}")
+    if n is None and rule.p is not None:
+        raise InputError("a threshold given as p needs the number of rows", remedy="give n")
+    with np.errstate(invalid="ignore"):
+        over: Bools = values > rule.critical(2 if n is None else n)
+    if not isinstance(rule, Cluster):
+        return over
+    features = np.flatnonzero(over)
+    kept = keep_clusters(
+        over[features, None], features, rule, Neighbourhood(space, rule.connectivity),
+        values[features, None], distances(space, rule.near),
+    )  # fmt: skip
+    out = np.zeros_like(over)
+    out[features] = kept[:, 0]
+    return out
+
+
+def distances(space: Space, point: tuple[float, float, float] | None) -> Floats | None:
+    """(n_features,) distances in mm from a point; None when there is no point."""
+    if point is None:
+        return None
+    apart: Floats = np.linalg.norm(space.coordinates() - np.asarray(point), axis=1)
+    return apart
+
+
+def sphere(space: Space, centre: tuple[float, float, float], radius: float) -> Bools:
+    """The features whose centres lie within a distance of a point.
+
+    Parameters
+    ----------
+    space : Space
+    centre : (3,) float, mm
+    radius : float, mm
+
+    Examples
+    --------
+    >>> from sequester.nodes.space import Grid
+    >>> int(sphere(Grid((5, 5, 5), np.eye(4)), (2, 2, 2), 1.0).sum())
+    7
+    """
+    if not radius > 0:
+        raise InputError("radius out of range", expected="> 0 mm", got=str(radius))
+    apart = np.linalg.norm(space.coordinates() - np.asarray(centre), axis=1)
+    # A nanometre of slack: an affine's rounding must not decide about voxels on the surface.
+    inside: Bools = apart <= radius + 1e-6
+    if not inside.any():
+        raise InputError(
+            "sphere holds no feature", got=f"centre {tuple(centre)} mm, radius {radius} mm",
+            remedy="check the coordinate and its unit (mm, in the space of the data)",
+        )  # fmt: skip
+    return inside

@@ -1,0 +1,491 @@
+"""Folds, group map, mask rule and summary as one pure object, and its flips.
+
+`Procedure` is the plan; `Procedure.prepare` makes it ready on one stack of effects, and the
+`Prepared` object then chooses every fold's mask and reads the held-out values under any signs
+of the subjects. The graph's nodes use it with all signs +1; the test uses it with flipped
+signs: one code path, so that the statistic of the data equals the graph's own.
+
+How a flip is fast. The sums of squares of a fold do not change when signs are flipped, so the
+bound that the fold's sum must exceed is computed once. A flip is one float32 matrix product
+for the sums over all rows, one comparison of each feature with a bound that is low enough for
+every fold and every rounding, and float64 work on the few features left: there the folds' own
+sums are formed as `groupmaps.without_each` forms them, without the held-out rows, and decide.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator, Sequence
+from dataclasses import dataclass, field
+
+import numpy as np
+import numpy.typing as npt
+
+from .errors import EmptyFoldError, InputError
+from .flips import Signs, all_signs, random_signs
+from .foldnull import mean_dice
+from .folds import Fold, LeaveOneOut, Scheme
+from .groupmaps import Missing, bound_on_sum, filled, fold_sums, leave_out_maps, t_from_sums
+from .groupmaps import without_each
+from .masks import Cluster, MaskRule, Neighbourhood, Strongest, Threshold, distances
+from .masks import keep_clusters, strongest
+from .roi import count_at_least, exchange_p, region_mean, studentised
+from .space import Space
+
+Floats = npt.NDArray[np.floating]
+Ints = npt.NDArray[np.integer]
+Bools = npt.NDArray[np.bool_]
+
+ON_EMPTY = ("empty", "strongest", "stop")
+TAILS = ("positive", "negative")
+_BLOCK = 8192
+_FLIPS_AT_ONCE = 32
+
+
+@dataclass(frozen=True)
+class Outcome:
+    """What a procedure gives under one choice of signs.
+
+    Parameters
+    ----------
+    values : tuple of float, one per row (in the rows' given order)
+        The row's mean in the mask of the fold that held it out; 0 when that mask is empty.
+    coverage : tuple of float, one per row
+        Share of the mask in which the row has data.
+    t : float
+        Studentised mean over subjects, positive in the direction of selection.
+    estimate : float
+        Mean over subjects, in the units of the effect and with its sign.
+    sizes : tuple of int, one per fold
+        Features in each mask.
+    empty, replaced : tuple of str
+        Names of the folds in which the rule found nothing: left empty, or replaced by the
+        strongest features as the plan says.
+    dice : float
+        Mean Dice over pairs of fold masks.
+    """
+
+    values: tuple[float, ...]
+    coverage: tuple[float, ...]
+    t: float
+    estimate: float
+    sizes: tuple[int, ...]
+    empty: tuple[str, ...]
+    replaced: tuple[str, ...]
+    dice: float
+
+
+@dataclass(frozen=True)
+class FlipTest:
+    """A whole-procedure sign-flip test.
+
+    Parameters
+    ----------
+    t, p : float
+        The observed statistic; its one-sided p in the direction of selection.
+    exact : bool
+        Whether all 2^N flips were enumerated.
+    n_flips, n_at_least : int
+        Flips made, and flips whose statistic reaches the observed one.
+    abs_t_quantile : float
+        95 % quantile of |t| over the flips.
+    noise_dice : float
+        Mean over flips of the mean pairwise Dice of the fold masks: what noise alone gives.
+    noise_empty : float
+        Mean number of empty folds over flips.
+    """
+
+    t: float
+    p: float
+    exact: bool
+    n_flips: int
+    n_at_least: int
+    abs_t_quantile: float
+    noise_dice: float
+    noise_empty: float
+
+
+@dataclass(frozen=True)
+class Procedure:
+    """How regions are chosen and read: the whole of it, so that it can be repeated in a flip.
+
+    Parameters
+    ----------
+    rule : Threshold, Cluster or Strongest
+        How a region is read off a group map.
+    scheme : Scheme
+        Who is held out in each fold.
+    tail : {"positive", "negative"}
+        The direction of selection, and of the one-sided test.
+    on_empty : {"empty", "strongest", "stop"}
+        When a fold finds nothing: its values count as 0; the `k` features with the highest t
+        stand in; or the run ends with an error. In flips, "stop" counts as "empty".
+    k : int
+        For ``on_empty = "strongest"``.
+    missing : Missing
+        What counts as no data.
+
+    Examples
+    --------
+    >>> from sequester.nodes.space import Grid
+    >>> effects = np.array([[.2, .2, .6], [-.1, 2.2, -.7], [.7, .2, -.9], [1.9, .8, -.2],
+    ...                     [-.3, .2, 2.1]])
+    >>> procedure = Procedure(Strongest(k=1, map_kind="mean"))
+    >>> ready = procedure.prepare(effects, list("abcde"), Grid((3, 1, 1), np.eye(4)))
+    >>> ready.outcome().values
+    (0.2, -0.1, 0.2, 0.8, 0.2)
+    >>> ready.flip_test(n_flips=999).p       # 2^5 = 32 flips: enumerated
+    0.125
+    """
+
+    rule: MaskRule
+    scheme: Scheme = field(default_factory=LeaveOneOut)
+    tail: str = "positive"
+    on_empty: str = "empty"
+    k: int = 0
+    missing: Missing = field(default_factory=Missing)
+
+    def __post_init__(self) -> None:
+        for name, allowed in (("tail", TAILS), ("on_empty", ON_EMPTY)):
+            if getattr(self, name) not in allowed:
+                raise InputError(
+                    f"unknown {name}", expected=f"one of {', '.join(allowed)}",
+                    got=repr(getattr(self, name)),
+                )  # fmt: skip
+        if (self.on_empty == "strongest") != (self.k > 0):
+            raise InputError(
+                'on_empty = "strongest" and k go together',
+                got=f"on_empty {self.on_empty!r}, k {self.k}",
+            )
+
+    def prepare(
+        self, effects: Floats, labels: Sequence[str], space: Space,
+        names: Sequence[str] | None = None,
+    ) -> Prepared:  # fmt: skip
+        """Make the procedure ready on one stack.
+
+        Parameters
+        ----------
+        effects : (n_rows, n_features) float32 or float64
+            One effect map a row, over the search region.
+        labels : sequence of str
+            Who each row belongs to; rows that share a label are held out and flipped together.
+        space : Space
+            Of the features.
+        names : sequence of str, optional
+            Tells rows of one label apart, so that their order cannot matter.
+        """
+        return Prepared(self, effects, labels, space, names)
+
+
+class Prepared:
+    """A procedure made ready on one stack of effects; see `Procedure.prepare`.
+
+    Attributes
+    ----------
+    folds : list of Fold
+        Over the rows in their given order.
+    people : list of str
+        The distinct labels, sorted.
+    """
+
+    def __init__(
+        self, procedure: Procedure, effects: Floats, labels: Sequence[str], space: Space,
+        names: Sequence[str] | None = None,
+    ) -> None:  # fmt: skip
+        if effects.shape != (len(labels), space.n_features):
+            raise ValueError(
+                f"effects have shape {effects.shape}, the labels and the space "
+                f"{(len(labels), space.n_features)}"
+            )
+        self.procedure, self.space = procedure, space
+        self.folds = procedure.scheme.folds(labels)
+        self.people = sorted(set(labels))
+        self._labels = list(labels)
+        # Rows are sorted before any arithmetic, so that their order cannot change a bit.
+        order = sorted(
+            range(len(labels)), key=lambda i: (labels[i], names[i] if names is not None else "")
+        )
+        self._order = np.array(order)
+        self._person = np.array([self.people.index(labels[i]) for i in order])
+        self._folds = procedure.scheme.folds([labels[i] for i in order])
+        self._fold_of_row = np.empty(len(order), dtype=np.intp)
+        for k, fold in enumerate(self._folds):
+            self._fold_of_row[list(fold.held_out)] = k
+        self._sign = -1.0 if procedure.tail == "negative" else 1.0
+        x, self._present = filled(effects[self._order], procedure.missing)
+        self._x = -x if self._sign < 0 else x
+        self._by_feature = np.ascontiguousarray(self._x.T)
+        rule = procedure.rule
+        self._hood: Neighbourhood | None = None
+        self._distance: Floats | None = None
+        if isinstance(rule, Cluster):
+            self._hood = Neighbourhood(space, rule.connectivity)
+            self._distance = distances(space, rule.near)
+        if isinstance(rule, Threshold | Cluster):
+            self._prepare_bounds(rule)
+
+    def _prepare_bounds(self, rule: Threshold | Cluster) -> None:
+        """The bound on each fold's sum, and one on the sum of all rows that no fold undercuts."""
+        n_rows, n_features = self._x.shape
+        bounds = np.empty((n_features, len(self._folds)))
+        lowest = np.empty(n_features)
+        sizes = np.array([[len(fold.selection)] for fold in self._folds], dtype=float)
+        critical = rule.critical(sizes)
+        missing = self.procedure.missing
+        least = np.array([[missing.least(len(fold.selection))] for fold in self._folds])
+        for start in range(0, n_features, _BLOCK):
+            block = slice(start, start + _BLOCK)
+            x, n = self._x[:, block], sizes
+            with np.errstate(over="ignore", invalid="ignore"):
+                Q = without_each(fold_sums(x, self._folds, square=True))
+                if self._present is not None:
+                    n = without_each(fold_sums(self._present[:, block], self._folds))
+                    critical = rule.critical(n)
+                bound = bound_on_sum(critical, n, Q)
+                bound[np.isnan(bound)] = np.inf
+                if self._present is not None:
+                    bound[n < least] = np.inf
+                size = np.abs(x.astype(np.float64))
+                reach = fold_sums(size, self._folds)  # the most a fold can take off the sum
+                # Rounding of a float32 product of n_rows terms, generously.
+                slack = 4 * (n_rows + 2) * np.finfo(np.float32).eps * size.sum(axis=0)
+                low = (bound - reach).min(axis=0) - slack
+            low[np.isnan(low)] = -np.inf
+            bounds[block], lowest[block] = bound.T, low
+        self._bounds = bounds
+        with np.errstate(over="ignore"):
+            self._lowest = lowest.astype(np.float32)
+            self._screen = self._x.astype(np.float32, copy=False)
+
+    # -- choosing ---------------------------------------------------------------------------
+
+    def _row_signs(self, signs: Signs | None) -> Floats:
+        """(n_rows,) signs of the sorted rows, from (n_people,) signs."""
+        if signs is None:
+            return np.ones(len(self._person))
+        rows: Floats = signs[self._person].astype(np.float64)
+        return rows
+
+    def _candidates(self, signs: Floats) -> Iterator[Ints]:
+        """For each row of signs, the features that may be above the bound in some fold."""
+        with np.errstate(over="ignore", invalid="ignore"):
+            sums = signs.astype(np.float32) @ self._screen
+        # Negated, so that a sum that is not a number stays in.
+        may = ~(sums <= self._lowest)
+        for row in may:
+            yield np.flatnonzero(row)
+
+    def _members(self, signs: Floats, candidates: Ints) -> tuple[Ints, Bools]:
+        """The features in any fold's mask, ascending, and (n_features_found, n_folds) bool."""
+        rule = self.procedure.rule
+        if isinstance(rule, Strongest):
+            return self._strongest(signs, rule.k, rule.map_kind, range(len(self._folds)))
+        assert isinstance(rule, Threshold | Cluster)
+        # Gathered by feature (whole cache lines), worked on by row (long contiguous sums).
+        few = np.take(self._by_feature, candidates, axis=0)
+        x = np.multiply(few.T, signs[:, None], order="C")
+        with np.errstate(over="ignore", invalid="ignore"):
+            S = without_each(fold_sums(x, self._folds))
+        above = np.take(self._bounds, candidates, axis=0) < S.T
+        some = above.any(axis=1)
+        found, members = candidates[some], np.ascontiguousarray(above[some])
+        if isinstance(rule, Cluster):
+            assert self._hood is not None
+            t = self._t_of(S[:, some], x[:, some], found) if rule.pick == "peak" else None
+            members = keep_clusters(members, found, rule, self._hood, t, self._distance)
+            some = members.any(axis=1)
+            found, members = found[some], members[some]
+        return found, members
+
+    def _t_of(self, S: Floats, x: Floats, features: Ints) -> Floats:
+        """(n_features, n_folds) t values, from the folds' sums."""
+        n: Floats = np.array([[len(fold.selection)] for fold in self._folds], dtype=float)
+        if self._present is not None:
+            n = without_each(fold_sums(self._present[:, features], self._folds))
+        return t_from_sums(n, S, without_each(fold_sums(x, self._folds, square=True))).T
+
+    def _strongest(
+        self, signs: Floats, k: int, kind: str, which: Sequence[int] | range
+    ) -> tuple[Ints, Bools]:
+        """The strongest features of some folds, by their whole maps."""
+        x = self._x * signs[:, None]
+        if self._present is not None:
+            x[~self._present] = np.nan
+        maps = leave_out_maps(x, self._folds, self.procedure.missing, kind)
+        chosen = np.zeros((x.shape[1], len(self._folds)), bool)
+        for fold in which:
+            chosen[:, fold] = strongest(maps[fold], k)
+        found = np.flatnonzero(chosen.any(axis=1))
+        return found, chosen[found]
+
+    def _chosen(self, signs: Floats, candidates: Ints) -> tuple[Ints, Bools, list[int], list[int]]:
+        """Features, members, and the folds left empty and replaced."""
+        found, members = self._members(signs, candidates)
+        nothing = np.flatnonzero(~members.any(axis=0)).tolist()
+        if not nothing or self.procedure.on_empty != "strongest":
+            return found, members, nothing, []
+        more, extra = self._strongest(signs, self.procedure.k, "t", nothing)
+        both = np.union1d(found, more)
+        merged = np.zeros((len(both), len(self._folds)), bool)
+        merged[np.searchsorted(both, found)] |= members
+        merged[np.searchsorted(both, more)] |= extra
+        empty = np.flatnonzero(~merged.any(axis=0)).tolist()
+        return both, merged, empty, [fold for fold in nothing if fold not in empty]
+
+    def _read(self, signs: Floats, found: Ints, members: Bools) -> tuple[Floats, Floats]:
+        """Each sorted row's mean in its own fold's mask, and the coverage."""
+        values, coverage = np.zeros(len(signs)), np.zeros(len(signs))
+        for row, fold in enumerate(self._fold_of_row):
+            inside = found[members[:, fold]]
+            present = None if self._present is None else self._present[row, inside]
+            mean, coverage[row] = region_mean(self._by_feature[inside, row], present)
+            values[row] = mean * signs[row]
+        return values, coverage
+
+    def _per_person(self, values: Floats) -> Floats:
+        """Mean over the rows of each person, in the order of `people`."""
+        if len(self.people) == len(values):
+            return values
+        n: Floats = np.bincount(self._person)
+        means: Floats = np.bincount(self._person, weights=values) / n
+        return means
+
+    # -- results ----------------------------------------------------------------------------
+
+    def masks(self) -> list[Bools]:
+        """The mask of every fold, each (n_features,) bool.
+
+        Raises
+        ------
+        EmptyFoldError
+            When a fold finds nothing and the plan says to stop.
+        """
+        signs = self._row_signs(None)
+        found, members, empty, _ = self._chosen(signs, self._first(signs))
+        if empty and self.procedure.on_empty == "stop":
+            raise EmptyFoldError(
+                f"{len(empty)} of {len(self.folds)} folds found no region",
+                where=f"folds without {', '.join(self._folds[k].name for k in empty[:5])}",
+                remedy='relax the rule beforehand, or state on_empty = "empty" or "strongest"',
+            )
+        masks = []
+        for fold in range(len(self.folds)):
+            mask = np.zeros(self.space.n_features, bool)
+            mask[found[members[:, fold]]] = True
+            masks.append(mask)
+        return masks
+
+    def outcome(self, signs: Signs | None = None) -> Outcome:
+        """The whole procedure under signs (one per person, as in `people`; default all +1)."""
+        rows = self._row_signs(signs)
+        found, members, empty, replaced = self._chosen(rows, self._first(rows))
+        values, coverage = self._read(rows, found, members)
+        people = self._per_person(values)
+        back = np.argsort(self._order)
+        return Outcome(
+            values=tuple((self._sign * values[back]).tolist()),
+            coverage=tuple(coverage[back].tolist()),
+            t=studentised(people),
+            estimate=float(self._sign * people.mean()),
+            sizes=tuple(members.sum(axis=0).tolist()),
+            empty=tuple(self._folds[k].name for k in empty),
+            replaced=tuple(self._folds[k].name for k in replaced),
+            dice=mean_dice(members),
+        )
+
+    def _first(self, signs: Floats) -> Ints:
+        if isinstance(self.procedure.rule, Strongest):
+            return np.empty(0, dtype=np.intp)
+        return next(self._candidates(signs[None]))
+
+    def flips(
+        self, signs: Signs, progress: Callable[[int], None] | None = None
+    ) -> tuple[Floats, Floats, Ints]:
+        """The statistic, the fold masks' mean Dice, and the empty folds under each row of signs.
+
+        Parameters
+        ----------
+        signs : (n_flips, n_people) int8
+        progress : callable, optional
+            Told how many flips are done.
+        """
+        n = len(signs)
+        t, overlap, n_empty = np.empty(n), np.empty(n), np.empty(n, dtype=np.intp)
+        for start in range(0, n, _FLIPS_AT_ONCE):
+            rows = signs[start : start + _FLIPS_AT_ONCE][:, self._person].astype(np.float64)
+            if isinstance(self.procedure.rule, Strongest):
+                candidates: Iterator[Ints] = iter([np.empty(0, np.intp)] * len(rows))
+            else:
+                candidates = self._candidates(rows)
+            for i, (row, may) in enumerate(zip(rows, candidates, strict=True), start):
+                found, members, empty, _ = self._chosen(row, may)
+                t[i] = studentised(self._per_person(self._read(row, found, members)[0]))
+                overlap[i], n_empty[i] = mean_dice(members), len(empty)
+            if progress:
+                progress(min(start + _FLIPS_AT_ONCE, n))
+        return t, overlap, n_empty
+
+    def flip_test(
+        self, n_flips: int = 4999, seed: int = 0, progress: Callable[[int, int], None] | None = None
+    ) -> FlipTest:
+        """Flip each subject's data as a whole, choose and read again, compare the statistic.
+
+        Null hypothesis: the subjects' maps are independent and jointly symmetric about zero
+        over the search region. Enumerated when there are no more than `n_flips` + 1 patterns.
+
+        Parameters
+        ----------
+        n_flips : int
+            Random flips, when there are too many patterns to enumerate.
+        seed : int
+            Keys the flips, with each label and the flip's number.
+        progress : callable, optional
+            Told (done, total).
+        """
+        if n_flips < 1:
+            raise InputError("too few flips", expected="at least 1", got=str(n_flips))
+        n_people = len(self.people)
+        exact = n_people < 40 and 2**n_people <= n_flips + 1
+        total = 2**n_people if exact else n_flips
+        signs = (
+            all_signs(n_people, 0, total) if exact else random_signs(seed, self.people, 0, total)
+        )
+        t, overlap, n_empty = self.flips(
+            signs, None if progress is None else lambda done: progress(done, total)
+        )
+        observed = self.outcome().t
+        usable = overlap[~np.isnan(overlap)]
+        return FlipTest(
+            t=observed,
+            p=exchange_p(observed, t, exact=exact),
+            exact=exact,
+            n_flips=total,
+            n_at_least=count_at_least(observed, t),
+            abs_t_quantile=float(np.quantile(np.abs(t), 0.95)),
+            noise_dice=float(usable.mean()) if len(usable) else float("nan"),
+            noise_empty=float(n_empty.mean()),
+        )
+
+    def without_each_person(self) -> Floats:
+        """The estimate of the whole procedure without each person, for the jackknife."""
+        names = [str(i) for i in range(len(self._labels))]
+        back = np.argsort(self._order)
+        effects = self._sign * self._x[back]
+        if self._present is not None:
+            effects[~self._present[back]] = np.nan
+        estimates = np.empty(len(self.people))
+        for i, person in enumerate(self.people):
+            rows = [row for row, label in enumerate(self._labels) if label != person]
+            part = self.procedure.prepare(
+                effects[rows], [self._labels[r] for r in rows], self.space, [names[r] for r in rows]
+            )
+            estimates[i] = part.outcome().estimate
+        return estimates
+
+
+def held_out_rows(scheme: Scheme, labels: Sequence[str]) -> list[tuple[int, ...]]:
+    """The rows each fold holds out: the touch rule of every node that leaves some out."""
+    return [fold.held_out for fold in scheme.folds(labels)]
+
+
+__all__ = ["Fold", "FlipTest", "Outcome", "Prepared", "Procedure", "held_out_rows"]

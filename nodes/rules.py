@@ -1,0 +1,267 @@
+"""The rules by which the elements of an output inherit the touches of the inputs.
+
+A tree says what is known of a value's elements: a `Leaf` is one element (or, when the number
+of elements cannot be known before the run, all of them at once), a `Branch` is a list. A rule
+is a pure function from the trees of the inputs to the tree of one output. It stands on the
+interface class, beside its ports, in the class attribute ``touch_rules``; an output without a
+rule gets `everything`: every element touches the union of all inputs, in the role ``values``.
+
+A leaf remembers the leaves it was made from, so that the path by which a unit came in can be
+told afterwards.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
+from dataclasses import dataclass, field
+from typing import Any
+
+from .touch import Extraction, Touch, union
+
+
+@dataclass(eq=False)
+class Leaf:
+    """One element, or all elements of a list whose length is not known.
+
+    Parameters
+    ----------
+    touch : Touch
+        What it derives from.
+    parents : tuple of Leaf
+        The leaves it was made from.
+    place : str
+        Where it stands in the graph ("node.field[3]"), or the file it is.
+    single : bool
+        Whether it is known to be one element.
+    """
+
+    touch: Touch
+    parents: tuple[Leaf, ...] = ()
+    place: str = ""
+    single: bool = True
+
+
+@dataclass(eq=False)
+class Branch:
+    """A list of known length."""
+
+    children: list[Tree] = field(default_factory=list)
+
+
+Tree = Leaf | Branch
+
+
+@dataclass(frozen=True)
+class Inputs:
+    """What a rule sees of a node.
+
+    Parameters
+    ----------
+    trees : mapping of str to Tree
+        The inputs that carry data, by field.
+    settings : mapping of str to object
+        All literal input values, by field.
+    where : str
+        The node's name in the graph.
+    """
+
+    trees: Mapping[str, Tree]
+    settings: Mapping[str, Any]
+    where: str
+
+
+Rule = Callable[[Inputs], Tree]
+
+
+def leaves(tree: Tree) -> Iterator[Leaf]:
+    """All leaves of a tree, in order."""
+    if isinstance(tree, Leaf):
+        yield tree
+    else:
+        for child in tree.children:
+            yield from leaves(child)
+
+
+def joined(parts: Iterable[Leaf], *, single: bool = True) -> Leaf:
+    """The element computed from all of these."""
+    parents = tuple(parts)
+    return Leaf(union(leaf.touch for leaf in parents), parents, single=single)
+
+
+def element(tree: Tree, i: int) -> Tree:
+    """Item i of a list; of a leaf, the leaf itself, whatever i is."""
+    if isinstance(tree, Leaf):
+        return tree
+    if i < len(tree.children):
+        return tree.children[i]
+    return joined(leaves(tree))  # a list shorter than promised: every item, to be safe
+
+
+def count(trees: Iterable[Tree]) -> int | None:
+    """The number of items the branches among these agree on; None when no length is known."""
+    lengths = {len(tree.children) for tree in trees if isinstance(tree, Branch)}
+    return lengths.pop() if len(lengths) == 1 else None
+
+
+def stamped(tree: Tree, place: str) -> Tree:
+    """The same tree, standing at a place of the graph."""
+    if isinstance(tree, Branch):
+        return Branch([stamped(child, f"{place}[{i}]") for i, child in enumerate(tree.children)])
+    parents = (tree,) if tree.place else tree.parents
+    return Leaf(tree.touch, parents, place, tree.single)
+
+
+def path_to(leaf: Leaf, unit_bit: int) -> list[str]:
+    """The places by which a unit came into a leaf, the file first."""
+    places: list[str] = []
+    here: Leaf | None = leaf
+    while here is not None:
+        if here.place and (not places or places[-1] != here.place):
+            places.append(here.place)
+        here = next((p for p in here.parents if p.touch.values & unit_bit), None)
+    return places[::-1]
+
+
+def _all(inputs: Inputs, names: Iterable[str], geometry: Iterable[str] = ()) -> list[Leaf]:
+    parts = [leaf for name in names if name in inputs.trees for leaf in leaves(inputs.trees[name])]
+    for name in geometry:
+        if name in inputs.trees:
+            parts += [
+                Leaf(leaf.touch.as_geometry(), (leaf,)) for leaf in leaves(inputs.trees[name])
+            ]
+    return parts
+
+
+def everything(inputs: Inputs) -> Tree:
+    """Every element touches all inputs: the rule for what we do not know."""
+    return joined(_all(inputs, inputs.trees), single=False)
+
+
+def only(*fields: str, geometry: Sequence[str] = ()) -> Rule:
+    """One element that touches these inputs, whole, and no other."""
+
+    def rule(inputs: Inputs) -> Tree:
+        return joined(_all(inputs, fields, geometry))
+
+    return rule
+
+
+def each(*fields: str, shared: Sequence[str] = (), geometry: Sequence[str] = ()) -> Rule:
+    """Element i touches item i of each field, and the shared inputs whole."""
+
+    def rule(inputs: Inputs) -> Tree:
+        trees = [inputs.trees[name] for name in fields if name in inputs.trees]
+        common = _all(inputs, shared, geometry)
+        n = count(trees)
+        if n is None:
+            return joined([*_all(inputs, fields), *common], single=False)
+        return Branch(
+            [
+                joined([*(leaf for tree in trees for leaf in leaves(element(tree, i))), *common])
+                for i in range(n)
+            ]
+        )
+
+    return rule
+
+
+def all_but_held_out(
+    data: str,
+    held_out: Callable[[Mapping[str, Any]], list[tuple[int, ...]]],
+    shared: Sequence[str] = (),
+    geometry: Sequence[str] = (),
+) -> Rule:
+    """Element k touches every item of `data` but those that fold k holds out.
+
+    Parameters
+    ----------
+    data : str
+        The field with one item per row.
+    held_out : callable
+        From the node's settings to the row numbers held out by each fold.
+    shared, geometry : sequence of str
+        Inputs that every fold touches whole, by values or by geometry only.
+    """
+
+    def rule(inputs: Inputs) -> Tree:
+        common = _all(inputs, shared, geometry)
+        tree = inputs.trees[data]
+        if isinstance(tree, Leaf):  # one opaque element: no fold can be told apart
+            return joined([tree, *common], single=False)
+        folds = held_out(inputs.settings)
+        rows = range(len(tree.children))
+        return Branch(
+            [
+                joined(
+                    [
+                        *(x for i in rows if i not in out for x in leaves(tree.children[i])),
+                        *common,
+                    ]
+                )
+                for out in map(frozenset, folds)
+            ]
+        )
+
+    return rule
+
+
+@dataclass(frozen=True)
+class Meeting:
+    """The two inputs of an extraction: what was chosen, and the data it is judged on.
+
+    Parameters
+    ----------
+    mask, data : str
+        Field names. Item i of a list of masks meets item i of the data; one mask meets all.
+    biased : str
+        The setting that, when true, marks the values as biased (exploration).
+    """
+
+    mask: str
+    data: str
+    biased: str = ""
+
+    def pairs(self, inputs: Inputs) -> list[tuple[Leaf, Leaf]]:
+        """Every mask element with the data element it is judged on."""
+        mask, data = inputs.trees.get(self.mask), inputs.trees.get(self.data)
+        if mask is None or data is None:
+            return []
+        n = count([mask, data]) if isinstance(data, Branch) or isinstance(mask, Branch) else 1
+        if n is None:  # lengths disagree: everything against everything
+            return [(joined(leaves(mask)), joined(leaves(data)))]
+        return [(joined(leaves(element(mask, i))), joined(leaves(element(data, i)))) for i in range(n)]
+
+    def rule(self, inputs: Inputs) -> Tree:
+        """Value i touches mask i and data i, and carries the mark of their meeting."""
+        biased = bool(self.biased and inputs.settings.get(self.biased))
+        made: list[Tree] = []
+        for i, (mask, data) in enumerate(self.pairs(inputs)):
+            value = joined([mask, data])
+            mark = Extraction(f"{inputs.where}[{i}]", mask.touch.values, data.touch.values)
+            value.touch = value.touch.marked(mark, biased=biased)
+            made.append(value)
+        if len(made) == 1 and not isinstance(inputs.trees.get(self.data), Branch):
+            return made[0]
+        return Branch(made)
+
+
+@dataclass(frozen=True)
+class Statistic:
+    """The inputs of a statistic, and what it is valid for.
+
+    Parameters
+    ----------
+    values : str
+        The field with the extracted values.
+    scores : tuple of str
+        Fields with scores, covariates or group labels.
+    cross_fitted : bool
+        Whether it stays calibrated when the masks and the data take turns.
+    cure : str
+        What to use instead when it is not.
+    """
+
+    values: str
+    scores: tuple[str, ...] = ()
+    cross_fitted: bool = False
+    cure: str = ""
