@@ -375,6 +375,10 @@ class Prepared:
             masks.append(mask)
         return masks
 
+    def per_person(self, values: Sequence[float]) -> Floats:
+        """Row values (rows in their given order) averaged over each person's rows."""
+        return self._per_person(np.asarray(values, dtype=float)[self._order])
+
     def outcome(self, signs: Signs | None = None) -> Outcome:
         """The whole procedure under signs (one per person, as in `people`; default all +1)."""
         rows = self._row_signs(signs)

@@ -223,9 +223,9 @@ class Meeting:
 
     def pairs(self, inputs: Inputs) -> list[tuple[Leaf, Leaf]]:
         """Every mask element with the data element it is judged on."""
-        mask, data = inputs.trees.get(self.mask), inputs.trees.get(self.data)
-        if mask is None or data is None:
-            return []
+        # Nothing known of a side is an empty touch, which the judge will not let pass.
+        mask = inputs.trees.get(self.mask) or Leaf(Touch(), place=f"{inputs.where}.{self.mask}")
+        data = inputs.trees.get(self.data) or Leaf(Touch(), place=f"{inputs.where}.{self.data}")
         n = count([mask, data]) if isinstance(data, Branch) or isinstance(mask, Branch) else 1
         if n is None:  # lengths disagree: everything against everything
             return [(joined(leaves(mask)), joined(leaves(data)))]

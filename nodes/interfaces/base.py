@@ -1,0 +1,100 @@
+"""What all our interfaces share: contracts on the class, and errors that survive the engine."""
+
+from __future__ import annotations
+
+import json
+from importlib.metadata import version
+from pathlib import Path
+from typing import Any, ClassVar
+
+from nipype.interfaces.base import (
+    BaseInterfaceInputSpec,
+    SimpleInterface,
+    TraitedSpec,
+    isdefined,
+    traits,
+)
+
+from ..errors import InputError, Refused, SequesterError
+from ..images import write_bytes
+from ..rules import Meeting, Rule, Statistic
+
+ERROR_FILE = "sequester-error.json"
+
+
+class InputSpec(BaseInterfaceInputSpec):
+    """Adds the release to the hashed inputs: the engine does not notice a changed program."""
+
+    release = traits.Str(version("sequester"), usedefault=True, desc="sequester's version")
+
+
+class SequesterInterface(SimpleInterface):
+    """Base of our interfaces.
+
+    A subclass gives ``_work()``: load, one call, save, and a dict of the outputs.
+
+    Attributes
+    ----------
+    touch_rules : dict of str to Rule
+        How each output's elements inherit touches; an output not named touches everything.
+    volumes : dict of str to str
+        For a field with image paths, the parallel field with volume numbers.
+    meeting, statistic : Meeting, Statistic or None
+    mem_gb : float
+        What a node needs unless the plan knows better.
+    """
+
+    touch_rules: ClassVar[dict[str, Rule]] = {}
+    volumes: ClassVar[dict[str, str]] = {}
+    meeting: ClassVar[Meeting | None] = None
+    statistic: ClassVar[Statistic | None] = None
+
+    def _work(self, cwd: Path) -> dict[str, Any]:
+        raise NotImplementedError  # SimpleInterface has no abstract methods to lean on
+
+    def _run_interface(self, runtime: Any) -> Any:
+        cwd = Path(runtime.cwd)
+        try:
+            self._results = self._work(cwd)
+        except SequesterError as error:
+            # The engine turns exceptions into text; this keeps the error itself for the caller.
+            note = {"kind": type(error).__name__, "message": str(error)}
+            if isinstance(error, InputError):
+                note["fields"] = error.fields  # type: ignore[assignment]  # JSON either way
+            write_bytes(cwd / ERROR_FILE, json.dumps(note).encode())
+            raise
+        return runtime
+
+    def _value(self, name: str) -> Any:
+        value = getattr(self.inputs, name)
+        return value if isdefined(value) else None
+
+
+def kept_error(folder: Path) -> SequesterError | None:
+    """The error a node of ours left in its working folder, as it was raised."""
+    path = folder / ERROR_FILE
+    if not path.exists():
+        return None
+    note = json.loads(path.read_text())
+    if "fields" in note:
+        fields = dict(note["fields"])
+        return InputError(fields.pop("what"), **fields)
+    return {"Refused": Refused}.get(note["kind"], SequesterError)(note["message"])
+
+
+def write_json(path: Path, content: dict[str, Any]) -> str:
+    """Write JSON, keys in the given order, and return the path as text."""
+    write_bytes(path, (json.dumps(content, indent=2, ensure_ascii=False) + "\n").encode())
+    return str(path)
+
+
+__all__ = [
+    "ERROR_FILE",
+    "InputSpec",
+    "SequesterInterface",
+    "TraitedSpec",
+    "isdefined",
+    "kept_error",
+    "traits",
+    "write_json",
+]

@@ -1,0 +1,122 @@
+"""Interfaces around `procedure`: all folds' masks in one node, and the test that matches."""
+
+from __future__ import annotations
+
+from functools import partial
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+from nipype.interfaces.base import File
+
+from .. import progress
+from ..errors import SequesterError
+from ..images import Geometry, geometry_of, open_image, read_mask, stack, write_map
+from ..procedure import Prepared, Procedure, held_out_rows
+from ..results import INTERVALS, cross_fitted_result
+from ..rules import Statistic, all_but_held_out
+from .base import InputSpec, SequesterInterface, TraitedSpec, traits, write_json
+
+
+class _ProcedureInput(InputSpec):
+    in_files = traits.List(File(exists=True), mandatory=True, desc="per row: an effect map")
+    labels = traits.List(traits.Str, mandatory=True, desc="per row: who is held out as one")
+    row_names = traits.List(traits.Str, desc="per row: tells rows of one label apart")
+    search_file = File(exists=True, desc="search region; default the whole grid")
+    procedure = traits.Instance(Procedure, mandatory=True, desc="folds, map, rule, summary")
+
+
+def _prepared(inputs: Any) -> tuple[Prepared, Geometry]:
+    """The procedure on the files of a node."""
+    search = inputs.search_file or None
+    inside = None
+    if search is not None:
+        like = (inputs.in_files[0], geometry_of(open_image(inputs.in_files[0])))
+        inside, _ = read_mask(search, like)
+    effects, grid, geometry = stack(inputs.in_files, inside)
+    names = inputs.row_names or inputs.in_files
+    return inputs.procedure.prepare(effects, inputs.labels, grid, names), geometry
+
+
+def _per_fold(settings: Any) -> list[tuple[int, ...]]:
+    return held_out_rows(settings["procedure"].scheme, settings["labels"])
+
+
+def _per_row(settings: Any) -> list[tuple[int, ...]]:
+    of_row = {row: held for held in _per_fold(settings) for row in held}
+    return [of_row[row] for row in sorted(of_row)]
+
+
+_rule = partial(all_but_held_out, "in_files", shared=("search_file",))
+
+
+class _ChooseOutput(TraitedSpec):
+    mask_files = traits.List(File(exists=True), desc="per fold: the mask chosen without it")
+    row_masks = traits.List(File(exists=True), desc="per row: the mask of the fold it is out of")
+    fold_names = traits.List(traits.Str, desc="per fold: its name")
+    overlap_file = File(exists=True, desc="per voxel: share of the folds that chose it")
+
+
+class ChooseByFold(SequesterInterface):
+    """Every fold's mask, chosen without the rows that the fold holds out."""
+
+    input_spec = _ProcedureInput
+    output_spec = _ChooseOutput
+    touch_rules = {"mask_files": _rule(_per_fold), "row_masks": _rule(_per_row)}
+
+    def _work(self, cwd: Path) -> dict[str, Any]:
+        ready, geometry = _prepared(self.inputs)
+        masks, grid = ready.masks(), ready.space
+        files = [
+            str(write_map(cwd / f"fold{k:05d}.nii.gz", grid.filled(mask), geometry))
+            for k, mask in enumerate(masks)
+        ]
+        of_row = {row: files[k] for k, fold in enumerate(ready.folds) for row in fold.held_out}
+        share = np.mean(masks, axis=0, dtype=np.float32)
+        return {
+            "mask_files": files,
+            "row_masks": [of_row[row] for row in sorted(of_row)],
+            "fold_names": [fold.name for fold in ready.folds],
+            "overlap_file": str(
+                write_map(cwd / "overlap.nii.gz", grid.filled(share), geometry)
+            ),
+        }
+
+
+class _FlipInput(_ProcedureInput):
+    values = traits.List(traits.Float, mandatory=True, desc="per row: the extracted value")
+    n_flips = traits.Int(4999, usedefault=True, desc="random flips, if not enumerated")
+    seed = traits.Int(0, usedefault=True, desc="keys the flips")
+    interval = traits.Enum(*INTERVALS, usedefault=True, desc="how the interval is made")
+    names = traits.Tuple(
+        traits.Str, traits.Str, traits.Str, mandatory=True, desc="roi, plan, search region"
+    )
+
+
+class _FlipOutput(TraitedSpec):
+    record_file = File(exists=True, desc="the result, as JSON")
+
+
+class FlipTest(SequesterInterface):
+    """The whole-procedure sign-flip test, with estimate, interval and stability.
+
+    Valid for cross-fitted values: each flip chooses every fold's region again.
+    """
+
+    input_spec = _FlipInput
+    output_spec = _FlipOutput
+    statistic = Statistic(values="values", cross_fitted=True)
+
+    def _work(self, cwd: Path) -> dict[str, Any]:
+        ready, _ = _prepared(self.inputs)
+        roi = self.inputs.names[0]
+        result, outcome, _ = cross_fitted_result(
+            ready, self.inputs.names, self.inputs.n_flips, self.inputs.seed,
+            self.inputs.interval, lambda done, total: progress.tell(f"flips {roi}", done, total),
+        )  # fmt: skip
+        if list(outcome.values) != list(self.inputs.values):
+            raise SequesterError(
+                f"{roi}: the extracted values are not those of the procedure that is tested; "
+                "the masks, the maps and the test must come from one procedure"
+            )
+        return {"record_file": write_json(cwd / "result.json", result.as_dict())}

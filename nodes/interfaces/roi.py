@@ -1,0 +1,107 @@
+"""Interfaces around `roi`: the extraction, which needs clearance, and the t-test."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Any
+
+from nipype.interfaces.base import File, InputMultiObject
+
+from ..errors import InputError, Refused
+from ..groupmaps import Missing
+from ..images import check_same_grid, read_map
+from ..results import fixed_region_result
+from ..roi import region_mean
+from ..rules import Meeting, Statistic, only
+from .base import InputSpec, SequesterInterface, TraitedSpec, traits, write_json
+
+_MEETING = Meeting(mask="mask_files", data="in_files", biased="exploratory")
+
+
+class _ExtractInput(InputSpec):
+    mask_files = InputMultiObject(
+        File(exists=True), mandatory=True, desc="one mask for all maps, or one per map"
+    )
+    in_files = traits.List(File(exists=True), mandatory=True, desc="maps to read")
+    labels = traits.List(traits.Str, mandatory=True, desc="per map: the subject")
+    missing = traits.Instance(Missing, desc="what counts as no data")
+    exploratory = traits.Bool(
+        False, usedefault=True, desc="read on the data that chose the mask; values marked biased"
+    )
+    clearance = traits.Str(nohash=True, desc="handed out by the guard, by nobody else")
+
+
+class _ExtractOutput(TraitedSpec):
+    values = traits.List(traits.Float, desc="per map: the mean in its mask (0 if it is empty)")
+    coverage = traits.List(traits.Float, desc="per map: share of the mask with data")
+    sizes = traits.List(traits.Int, desc="per map: voxels in its mask")
+
+
+class Extract(SequesterInterface):
+    """The mean of each map inside its mask: the meeting of what was chosen with what is tested.
+
+    Runs only under the guard (``workflow.run(plugin=GuardPlugin(study))``), on a warm cache
+    too. For a quick look without a workflow, use `sequester.nodes.roi.region_mean`.
+    """
+
+    input_spec = _ExtractInput
+    output_spec = _ExtractOutput
+    _always_run = True
+    meeting = _MEETING
+    touch_rules = {"values": _MEETING.rule, "coverage": _MEETING.rule, "sizes": only("mask_files")}
+
+    def _work(self, cwd: Path) -> dict[str, Any]:
+        if not self._value("clearance"):
+            raise Refused(
+                "this extraction has no clearance: run the workflow under the guard, "
+                "workflow.run(plugin=GuardPlugin(study))"
+            )
+        masks, maps = self.inputs.mask_files, self.inputs.in_files
+        if len(masks) not in (1, len(maps)):
+            raise InputError("masks and maps do not pair up", got=f"{len(masks)}, {len(maps)}")
+        missing = self._value("missing") or Missing()
+        values, coverage, sizes = [], [], []
+        mask, geometry = read_map(masks[0])
+        for i, path in enumerate(maps):
+            if i and len(masks) > 1:
+                mask, geometry = read_map(masks[i])
+            data, grid = read_map(path)
+            check_same_grid((masks[min(i, len(masks) - 1)], geometry), [(path, grid)])
+            inside = data[mask != 0]
+            mean, share = region_mean(inside, missing.present(inside))
+            values.append(mean)
+            coverage.append(share)
+            sizes.append(len(inside))
+        return {"values": values, "coverage": coverage, "sizes": sizes}
+
+
+class _FixedInput(InputSpec):
+    values = traits.List(traits.Float, mandatory=True, desc="one value per subject")
+    coverage = traits.List(traits.Float, mandatory=True)
+    sizes = traits.List(traits.Int, mandatory=True)
+    names = traits.Tuple(
+        traits.Str, traits.Str, traits.Str, mandatory=True, desc="roi, plan, search region"
+    )
+
+
+class _RecordOutput(TraitedSpec):
+    record_file = File(exists=True, desc="the result, as JSON")
+
+
+class FixedRegionTest(SequesterInterface):
+    """Student's t-test and interval for a region fixed without the tested data."""
+
+    input_spec = _FixedInput
+    output_spec = _RecordOutput
+    touch_rules = {"record_file": only("values")}
+    statistic = Statistic(
+        values="values",
+        cure="use the whole-procedure sign flip (FlipTest), which chooses every fold's region "
+        "again in each flip",
+    )
+
+    def _work(self, cwd: Path) -> dict[str, Any]:
+        result = fixed_region_result(
+            self.inputs.values, self.inputs.names, self.inputs.sizes[0], self.inputs.coverage
+        )
+        return {"record_file": write_json(cwd / "result.json", result.as_dict())}

@@ -1,0 +1,207 @@
+"""What may be said of one region, for the way it was chosen.
+
+One record per region: estimate and what it estimates, interval and its kind, p and its null,
+effect size, folds and stability. A value read on the data that chose its region carries none
+of interval, p and error bar.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from dataclasses import asdict, dataclass
+
+import numpy as np
+
+from .errors import InputError
+from .procedure import FlipTest, Outcome, Prepared
+from .roi import Interval, flip_interval, jackknife_interval, one_sample_t
+
+INTERVALS = ("flips", "jackknife")
+
+FLIP_NULL = (
+    "the subjects' maps are independent and jointly symmetric about zero over the search region"
+)
+
+
+@dataclass(frozen=True)
+class RoiResult:
+    """The record of one region.
+
+    Parameters
+    ----------
+    roi, plan, rule, search : str
+        Its name, the plan, the mask rule and the search region in words.
+    n_subjects : int
+    estimate : float
+        In the units of the effect maps; `target` says what it estimates.
+    biased : bool
+        Whether the region was chosen on the tested data: then interval, t, p and dz are None.
+    interval : Interval or None
+    t, p, dz : float or None
+    p_kind : str
+        How p was made; `null` names the hypothesis and `sided` the direction.
+    n_folds, n_empty : int or None
+    empty, replaced : tuple of str
+        Folds in which the rule found nothing: left at 0, or replaced as planned.
+    dice, noise_dice : float or None
+        Mean Dice over pairs of fold masks, and what it is under flips (noise alone).
+    mask_sizes : tuple of int
+        Features in each mask.
+    coverage : float
+        Least share of the mask in which a subject has data.
+    sentence : str
+        For the text of a paper.
+    """
+
+    roi: str
+    plan: str
+    rule: str
+    search: str
+    n_subjects: int
+    estimate: float
+    target: str
+    biased: bool
+    interval: Interval | None = None
+    t: float | None = None
+    p: float | None = None
+    p_kind: str = ""
+    sided: str = ""
+    null: str = ""
+    dz: float | None = None
+    n_flips: int | None = None
+    p_error: float | None = None
+    n_folds: int | None = None
+    n_empty: int | None = None
+    empty: tuple[str, ...] = ()
+    replaced: tuple[str, ...] = ()
+    dice: float | None = None
+    noise_dice: float | None = None
+    mask_sizes: tuple[int, ...] = ()
+    coverage: float = 1.0
+    sentence: str = ""
+
+    def as_dict(self) -> dict[str, object]:
+        """Plain types, for JSON."""
+        return asdict(self)
+
+
+def p_text(p: float) -> str:
+    """A p-value as a paper prints it.
+
+    Examples
+    --------
+    >>> p_text(0.0312), p_text(0.00004)
+    ('p = .031', 'p < .001')
+    """
+    return "p < .001" if p < 0.001 else f"p = {p:.3f}".replace("0.", ".", 1)
+
+
+def cross_fitted_result(
+    ready: Prepared, names: tuple[str, str, str], n_flips: int, seed: int,
+    interval: str = "flips", progress: Callable[[int, int], None] | None = None,
+) -> tuple[RoiResult, Outcome, FlipTest]:  # fmt: skip
+    """Everything the cross-fitted plans may say: estimate, interval, whole-procedure p.
+
+    Parameters
+    ----------
+    ready : Prepared
+        The procedure on the study's effects.
+    names : (roi, plan, search region)
+    n_flips, seed : int
+    interval : {"flips", "jackknife"}
+    progress : callable, optional
+    """
+    if interval not in INTERVALS:
+        raise InputError(
+            "unknown interval", expected=f"one of {', '.join(INTERVALS)}", got=repr(interval)
+        )
+    outcome = ready.outcome()
+    test = ready.flip_test(n_flips, seed, progress)
+    people = ready.per_person(outcome.values)
+    if interval == "flips":
+        made = flip_interval(people, test.abs_t_quantile)
+    else:
+        made = jackknife_interval(outcome.estimate, ready.without_each_person())
+    roi, plan, search = names
+    procedure = ready.procedure
+    kind = (
+        f"whole-procedure sign flip, all {test.n_flips} flips"
+        if test.exact
+        else f"whole-procedure sign flip, {test.n_flips} random flips"
+    )
+    sided = "greater" if procedure.tail == "positive" else "less"
+    deviation = float(people.std(ddof=1))
+    where = f"in the search region '{search}'"
+    sentence = (
+        f"{roi}: {procedure.rule.describe()} {where}, chosen in {len(ready.folds)} folds "
+        f"({plan}); held-out mean {outcome.estimate:.3g} "
+        f"({made.kind} 95 % interval {made.low:.3g} to {made.high:.3g}), {p_text(test.p)} "
+        f"({kind}, one-sided). Null: {FLIP_NULL} '{search}'; a rejection says that there is a "
+        f"replicable effect somewhere {where}, not at any one voxel."
+    )
+    result = RoiResult(
+        roi=roi, plan=plan, rule=procedure.rule.describe(), search=search,
+        n_subjects=len(ready.people), estimate=outcome.estimate,
+        target="mean true effect over the fold masks actually used", biased=False,
+        interval=made, t=test.t, p=test.p, p_kind=kind, sided=sided, null=FLIP_NULL,
+        dz=outcome.estimate / deviation if deviation else None, n_flips=test.n_flips,
+        p_error=None if test.exact else float(np.sqrt(test.p * (1 - test.p) / test.n_flips)),
+        n_folds=len(ready.folds), n_empty=len(outcome.empty), empty=outcome.empty,
+        replaced=outcome.replaced, dice=_known(outcome.dice), noise_dice=_known(test.noise_dice),
+        mask_sizes=outcome.sizes, coverage=min(outcome.coverage), sentence=sentence,
+    )  # fmt: skip
+    return result, outcome, test
+
+
+def fixed_region_result(
+    values: Sequence[float], names: tuple[str, str, str], size: int, coverage: Sequence[float]
+) -> RoiResult:
+    """A region fixed without the tested data: the t-test and its interval are right.
+
+    Examples
+    --------
+    >>> made = fixed_region_result([1.0, 2.0, 3.0], ("a", "given", "a"), 8, [1, 1, 1])
+    >>> made.p_kind, round(made.p, 4)
+    ("Student's t, two-sided", 0.0742)
+    """
+    test = one_sample_t(np.asarray(values))
+    roi, plan, search = names
+    interval = test.interval
+    return RoiResult(
+        roi=roi, plan=plan, rule="the region as given", search=search, n_subjects=len(values),
+        estimate=test.mean, target="population mean in this region", biased=False,
+        interval=interval, t=test.t, p=test.p, p_kind="Student's t, two-sided",
+        sided="two-sided", null="the population mean in the region is zero", dz=test.dz,
+        mask_sizes=(size,), coverage=min(coverage),
+        sentence=(
+            f"{roi}: mean {test.mean:.3g} in the a-priori region '{search}' (95 % interval "
+            f"{interval.low:.3g} to {interval.high:.3g}), t({test.df}) = {test.t:.2f}, "
+            f"{p_text(test.p)}, two-sided. Null: the population mean in this region is zero "
+            "(near-normal values)."
+        ),
+    )  # fmt: skip
+
+
+def exploratory_result(
+    values: Sequence[float], names: tuple[str, str, str], rule: str, size: int,
+    coverage: Sequence[float],
+) -> RoiResult:  # fmt: skip
+    """A region chosen on the very data it is read from: the value, marked biased, and no more."""
+    roi, plan, search = names
+    estimate = float(np.mean(values)) if size else float("nan")
+    said = f"mean {estimate:.3g}, BIASED: the region was chosen" if size else (
+        "look found no region; a value would be BIASED, chosen"
+    )  # fmt: skip
+    return RoiResult(
+        roi=roi, plan=plan, rule=rule, search=search, n_subjects=len(values), estimate=estimate,
+        target="none: chosen and read on the same data, so inflated by selection", biased=True,
+        mask_sizes=(size,), coverage=min(coverage),
+        sentence=(
+            f"{roi}: exploratory {said} on the data it is read from; "
+            "no interval, no p-value and no error bar can be given."
+        ),
+    )  # fmt: skip
+
+
+def _known(value: float) -> float | None:
+    return None if np.isnan(value) else value

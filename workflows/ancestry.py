@@ -1,0 +1,240 @@
+"""Touches, propagated through the engine's expanded graph.
+
+The graph is the one the engine will run: iterables expanded, identity nodes resolved. In
+topological order, every node's input trees are put together from its literal files and from
+the output trees of its sources, and the touch rules of its interface give its output trees.
+
+What a graph cannot show, and what is done about it:
+- the length of an output whose type does not tell: all its elements share one touch;
+- what a connection function returns: the union of what it was given;
+- a file reached by its path and not by an edge: seen while running (`Ancestry.observe`).
+"""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Mapping
+from pathlib import Path
+from typing import Any
+
+import networkx as nx
+from nipype.pipeline.engine import JoinNode, MapNode
+
+from ..nodes.interfaces.base import traits
+from ..nodes.interfaces.generic import generic_rule, settings_of
+from ..nodes.rules import (
+    Branch,
+    Inputs,
+    Leaf,
+    Meeting,
+    Statistic,
+    Tree,
+    element,
+    everything,
+    joined,
+    leaves,
+    stamped,
+)
+from ..nodes.touch import Touch
+from .study import Study
+
+_SINGLE = (traits.BaseStr, traits.BaseFloat, traits.BaseInt, traits.BaseBool)
+
+
+def node_name(node: Any) -> str:
+    """The name of a node of the expanded graph, unique in it."""
+    return ".".join(part for part in (node._hierarchy, node._id) if part)
+
+
+class Ancestry:
+    """The trees of all inputs and outputs of a graph.
+
+    Parameters
+    ----------
+    graph : networkx.DiGraph
+        The expanded graph, as the engine hands it to a plugin.
+    study : Study
+    """
+
+    def __init__(self, graph: Any, study: Study) -> None:
+        self.study = study
+        self._graph = graph
+        self._order = list(nx.topological_sort(graph))
+        self._seen: dict[tuple[str, str], list[Leaf]] = {}
+        self.inputs: dict[str, Inputs] = {}
+        self.outputs: dict[tuple[str, str], Tree] = {}
+        self.propagate()
+
+    @property
+    def nodes(self) -> list[Any]:
+        """The nodes, sources first."""
+        return self._order
+
+    def propagate(self) -> None:
+        """Compute all trees, sources first."""
+        for node in self._order:
+            name = node_name(node)
+            inputs = self._inputs_of(node, name)
+            self.inputs[name] = inputs
+            for output, tree in self._outputs_of(node, inputs).items():
+                self.outputs[name, output] = stamped(tree, f"{name}.{output}")
+
+    # -- inputs -----------------------------------------------------------------------------
+
+    def _inputs_of(self, node: Any, name: str) -> Inputs:
+        settings = {**settings_of(node.interface.inputs), **settings_of(node.inputs)}
+        trees: dict[str, Tree] = {}
+        edges = self._incoming(node)
+        volumes = getattr(type(node.interface), "volumes", {})
+        for field, value in settings.items():
+            if field not in edges:
+                numbers = settings.get(volumes.get(field, ""))
+                tree = self._literal(value, numbers)
+                if tree is not None:
+                    trees[field] = tree
+        trees.update(edges)
+        for (where, field), extra in self._seen.items():
+            if where == name:
+                trees[field] = _with_extra(trees.get(field), extra)
+        return Inputs(trees, settings, name)
+
+    def _incoming(self, node: Any) -> dict[str, Tree]:
+        """The trees that arrive over edges, the slots of a JoinNode put back into lists."""
+        arriving: dict[str, Tree] = {}
+        slots: dict[str, dict[int, Tree]] = {}
+        join_fields = node.joinfield if isinstance(node, JoinNode) else []
+        for source, _, data in self._graph.in_edges(node, data=True):
+            for output, field in data["connect"]:
+                tree = self._source(node_name(source), output)
+                if tree is None:
+                    continue
+                slot = re.fullmatch(r"(.+)J(\d+)", field)
+                if slot and slot[1] in join_fields:
+                    slots.setdefault(slot[1], {})[int(slot[2])] = tree
+                else:
+                    arriving[field] = tree
+        for field, items in slots.items():
+            listed = Branch([items[k] for k in sorted(items)])
+            # With unique=True the engine drops repeats: which, is not known before the run.
+            arriving[field] = (
+                joined(leaves(listed), single=False) if getattr(node, "unique", False) else listed
+            )
+        return arriving
+
+    def _source(self, name: str, output: Any) -> Tree | None:
+        if isinstance(output, tuple):  # a connection function: (output, function, arguments)
+            tree = self.outputs.get((name, output[0]))
+            return None if tree is None else joined(leaves(tree), single=False)
+        return self.outputs.get((name, output))
+
+    def _literal(self, value: Any, volume: Any = None) -> Tree | None:
+        """The tree of a literal: None when it holds no file."""
+        if isinstance(value, list | tuple):
+            numbers = volume if isinstance(volume, list | tuple) else [volume] * len(value)
+            items = [self._literal(v, n) for v, n in zip(value, numbers, strict=False)]
+            if all(item is None for item in items):
+                return None
+            return Branch([Leaf(Touch()) if item is None else item for item in items])
+        if not isinstance(value, str | Path) or len(str(value)) > 4096 or "\n" in str(value):
+            return None
+        number = volume if isinstance(volume, int) and volume >= 0 else None
+        touch = self.study.touch_of(str(value), number)
+        if touch is None or not str(value):
+            return None
+        place = self.study.relative(str(value))
+        return Leaf(touch, place=place if number is None else f"{place} volume {number}")
+
+    # -- outputs ----------------------------------------------------------------------------
+
+    def _outputs_of(self, node: Any, inputs: Inputs) -> dict[str, Tree]:
+        # The interface itself knows its outputs, dynamic ones (Function, Split ...) included.
+        found = node.interface._outputs()
+        names = list(found.get()) if found is not None else []
+        if isinstance(node, MapNode):
+            return self._mapped(node, inputs, names)
+        return {name: _ruled(node.interface, name, inputs) for name in names}
+
+    def _mapped(self, node: Any, inputs: Inputs, names: list[str]) -> dict[str, Tree]:
+        iterated = list(node.iterfield)
+        rest = {k: v for k, v in inputs.trees.items() if k not in iterated}
+        nested = bool(getattr(node, "nested", False))
+
+        def over(trees: Mapping[str, Tree], values: Mapping[str, Any], name: str) -> Tree:
+            lengths = {len(t.children) for t in trees.values() if isinstance(t, Branch)}
+            lengths |= {
+                len(v) for k, v in values.items() if k not in trees and isinstance(v, list | tuple)
+            }
+            # The length is known when everything that has one agrees and nothing is opaque.
+            if len(lengths) != 1 or any(isinstance(t, Leaf) and not t.single for t in trees.values()):
+                whole = {k: joined(leaves(t), single=False) for k, t in trees.items()}
+                settings = {**inputs.settings, **values}
+                tree = _ruled(node.interface, name, Inputs({**rest, **whole}, settings, inputs.where))
+                return joined(leaves(tree), single=False)
+            made: list[Tree] = []
+            for i in range(lengths.pop()):
+                items = {k: element(t, i) for k, t in trees.items()}
+                ith = {
+                    k: v[i] if isinstance(v, list | tuple) and i < len(v) else v
+                    for k, v in values.items()
+                }
+                if nested and any(isinstance(t, Branch) for t in items.values()):
+                    made.append(over(items, ith, name))
+                else:
+                    made.append(
+                        _ruled(
+                            node.interface, name,
+                            Inputs({**rest, **items}, {**inputs.settings, **ith},
+                                   f"{inputs.where}[{i}]"),
+                        )
+                    )  # fmt: skip
+            return Branch(made)
+
+        trees = {k: inputs.trees[k] for k in iterated if k in inputs.trees}
+        values = {k: inputs.settings[k] for k in iterated if k in inputs.settings}
+        return {name: over(trees, values, name) for name in names}
+
+    # -- while running ----------------------------------------------------------------------
+
+    def observe(self, node: Any, field: str, found: Mapping[str, Touch]) -> None:
+        """Add what a node turned out to be given: the files it reads, and their touches."""
+        self._seen.setdefault((node_name(node), field), []).extend(
+            Leaf(touch, place=f"{place} (seen while running)") for place, touch in found.items()
+        )
+
+
+def meetings_of(interface: Any) -> tuple[Meeting | None, Statistic | None]:
+    """The meeting and the statistic an interface declares."""
+    return getattr(interface, "meeting", None), getattr(interface, "statistic", None)
+
+
+def _ruled(interface: Any, output: str, inputs: Inputs) -> Tree:
+    rules = getattr(type(interface), "touch_rules", {})
+    rule = rules.get(output) or generic_rule(interface, output) or everything
+    tree = rule(inputs)
+    if rule is everything and isinstance(tree, Leaf) and _is_single(interface, output):
+        tree.single = True
+    return tree
+
+
+def _is_single(interface: Any, output: str) -> bool:
+    trait = interface._outputs().trait(output)
+    return trait is not None and isinstance(trait.trait_type, _SINGLE)
+
+
+def _with_extra(tree: Tree | None, extra: list[Leaf]) -> Tree:
+    if tree is None:
+        return joined(extra, single=False)
+    if isinstance(tree, Leaf):
+        return joined([tree, *extra], single=tree.single)
+    return Branch([_with_extra(child, extra) for child in tree.children])
+
+
+def files_in(value: Any) -> list[str]:
+    """The strings of a nested value that name existing files."""
+    if isinstance(value, list | tuple):
+        return [path for item in value for path in files_in(item)]
+    if isinstance(value, str | Path) and 0 < len(str(value)) < 4096 and "\n" not in str(value):
+        return [str(value)] if Path(value).is_file() else []
+    return []
+
+

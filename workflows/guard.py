@@ -1,0 +1,199 @@
+"""The guard: an engine plugin that judges a workflow before and while it runs.
+
+Use it as the plugin of any workflow::
+
+    workflow.run(plugin=GuardPlugin(study))
+
+Three gates. Before the run, touches are propagated over the expanded graph and every meeting is
+judged; one that may not take place refuses the whole run, and nothing has executed. While
+running, each node's real inputs are looked at just before it runs; a study file that the graph
+did not promise (reached by its path, or under another name with the same content) is added to
+the ancestry, and everything is judged again. Clearance: an extraction runs only with a note that
+the guard hands out, on a warm cache too.
+
+What a graph cannot see, and this guard does not: choices made by a person after looking;
+values copied into a file of other bytes by a program outside the graph; files that a node
+reads behind its back without receiving their paths.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from pathlib import Path
+from typing import Any
+
+from nipype.pipeline.plugins.base import PluginBase
+from nipype.pipeline.plugins.linear import LinearPlugin
+
+from ..nodes.errors import Refused, SequesterError
+from ..nodes.interfaces.base import kept_error
+from ..nodes.interfaces.generic import settings_of
+from ..nodes.rules import Tree, joined, leaves
+from ..nodes.touch import Touch
+from .ancestry import Ancestry, files_in, meetings_of, node_name
+from .judge import Finding, judge
+from .study import Study
+
+Listener = Callable[[str, str, int, int], None]
+
+
+class GuardRefused(Refused):
+    """The guard refused; carries the findings.
+
+    Parameters
+    ----------
+    findings : list of Finding
+        Those that may not take place.
+    study : Study
+    started : bool
+        Whether nodes had executed (a refusal while running).
+    """
+
+    def __init__(self, findings: list[Finding], study: Study, *, started: bool = False) -> None:
+        self.findings = findings
+        # A chain of elements with the same fault is told once, with how many more there are.
+        told: dict[tuple[str, str], list[Finding]] = {}
+        for finding in findings:
+            told.setdefault((finding.node, finding.reason), []).append(finding)
+        when = "while running" if started else "before anything ran"
+        lines = [f"refused {when}: {len(findings)} finding{'s' if len(findings) > 1 else ''}"]
+        for group in told.values():
+            lines.append(group[0].describe(study.table))
+            if len(group) > 1:
+                lines.append(f"  ... and {len(group) - 1} more elements of this node alike")
+        super().__init__("\n".join(lines))
+
+
+def check(ancestry: Ancestry) -> tuple[list[Finding], list[Finding]]:
+    """All findings, and those among them that may not take place."""
+    findings = judge(ancestry)
+    return findings, [f for f in findings if not f.allowed]
+
+
+class GuardPlugin(PluginBase):
+    """Judges, hands out clearances, and runs the workflow node by node.
+
+    Parameters
+    ----------
+    study : Study
+        Which file is which data unit.
+    listener : callable, optional
+        Told ``(what, node, done, total)`` as nodes start and end.
+    dry : bool
+        Judge only; execute nothing.
+
+    Attributes
+    ----------
+    findings : list of Finding
+        All verdicts of the last run.
+    """
+
+    def __init__(
+        self, study: Study, listener: Listener | None = None, *, dry: bool = False
+    ) -> None:
+        super().__init__(plugin_args={})
+        self.study, self.listener, self.dry = study, listener, dry
+        self.findings: list[Finding] = []
+        self._refused: list[Finding] = []
+        self._errors: list[SequesterError] = []
+
+    def run(self, graph: Any, config: Any, updatehash: bool = False) -> None:
+        """Called by the engine with the expanded graph.
+
+        Raises
+        ------
+        GuardRefused
+            Before or while running.
+        SequesterError
+            The first error of one of our nodes, as it was raised.
+        """
+        if updatehash:
+            raise Refused("updatehash marks nodes as done that never ran; run without it")
+        self._refused, self._errors = [], []
+        ancestry = Ancestry(graph, self.study)
+        self.findings, refused = check(ancestry)
+        if refused:
+            raise GuardRefused(refused, self.study)
+        if self.dry:
+            return
+        for node in ancestry.nodes:
+            if meetings_of(node.interface)[0] is not None:
+                node.inputs.clearance = "cleared"
+        total, done = len(ancestry.nodes), 0
+
+        def status(node: Any, what: str) -> None:
+            nonlocal done
+            if what == "start":
+                self._tell("start", node, done, total)
+                self._look(ancestry, node)
+                return
+            done += 1
+            self._tell(what, node, done, total)
+            if what == "exception":
+                error = kept_error(Path(node.output_dir()))
+                if error is not None:
+                    self._errors.append(error)
+
+        linear = LinearPlugin(plugin_args={"status_callback": status})
+        try:
+            linear.run(graph, config, updatehash=False)
+        except Exception as error:
+            # Our own error says more than the engine's wrapping of it.
+            if self._refused:
+                raise GuardRefused(self._refused, self.study, started=True) from error
+            if self._errors:
+                raise self._errors[0] from error
+            raise
+
+    def _tell(self, what: str, node: Any, done: int, total: int) -> None:
+        if self.listener is not None:
+            self.listener(what, node_name(node), done, total)
+
+    def _look(self, ancestry: Ancestry, node: Any) -> None:
+        """Compare a node's real inputs with what the graph promised; judge again if they differ."""
+        node._get_inputs()
+        name = node_name(node)
+        promised = ancestry.inputs[name]
+        changed = False
+        settings = {**settings_of(node.interface.inputs), **settings_of(node.inputs)}
+        for field, value in settings.items():
+            tree = promised.trees.get(field)
+            known = _union(tree)
+            found = {}
+            for path in files_in(value):
+                touch = self.study.recognise(path)
+                if touch is None and tree is None and not self._ours(node, path):
+                    # A path that came over an edge from a node that touches nothing.
+                    touch = self.study.touch_of(path)
+                if touch is not None and not _within(touch, known):
+                    found[self.study.relative(path)] = touch
+            if found:
+                ancestry.observe(node, field, found)
+                changed = True
+        if not changed:
+            return
+        ancestry.propagate()
+        self.findings, refused = check(ancestry)
+        if refused:
+            self._refused = refused
+            raise GuardRefused(refused, self.study, started=True)
+
+    def _ours(self, node: Any, path: str) -> bool:
+        """Whether a file was made by this run, inside the engine's working folder."""
+        base = Path(node.base_dir or ".").resolve()
+        return Path(path).resolve().is_relative_to(base)
+
+
+def _union(tree: Any) -> Touch:
+
+
+    return Touch() if tree is None else joined(leaves(tree)).touch
+
+
+def _within(touch: Touch, known: Touch) -> bool:
+    """Whether the graph already promised all that a file touches."""
+    return (
+        not touch.values & ~(known.values | known.geometry)
+        and touch.origins <= known.origins
+        and touch.unknown <= known.unknown
+    )

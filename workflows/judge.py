@@ -1,0 +1,227 @@
+"""Every meeting of a graph, judged: apart, leak or unproven; and statistics that fit or not.
+
+Levels, at a meeting of mask M with data D, both restricted to values of the tested measurement:
+
+1. M and D share a unit: leak.
+2. No shared unit, but a tested subject is among M's subjects: apart at run level when M touches
+   that one subject only; a leak at subject level when it touches several.
+3. No shared subject: apart at subject level.
+
+An unknown file on either side, or a mask nobody declared, leaves the meeting unproven. A leak
+may run only into values marked biased, which no statistic accepts.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+from ..nodes.foldnull import plain_t_false_positives
+from ..nodes.rules import Leaf, Meeting, Statistic, joined, leaves, path_to
+from ..nodes.touch import Extraction, UnitTable, cross_fitted
+from .ancestry import Ancestry, meetings_of, node_name
+
+APART, LEAK, UNPROVEN = "apart", "leak", "unproven"
+
+
+@dataclass(frozen=True)
+class Finding:
+    """The verdict on one meeting.
+
+    Parameters
+    ----------
+    kind : {"extraction", "statistic"}
+    node : str
+        Where they meet.
+    item : int or None
+        Which element of a list.
+    verdict : {"apart", "leak", "unproven"}
+    level : {"subject", "run", ""}
+        What independence is shown about.
+    allowed : bool
+        Whether the run may go on: an allowed leak yields values marked biased.
+    mask_units, data_units, geometry_units : int
+        Sets of units: the mask's values, the data's, and the mask's geometry.
+    shared : int
+        Units (or, at subject level, the mask's units of the tested subjects) that both touch.
+    origins : tuple of str
+        Declared sources of the mask.
+    mask_path, data_path : tuple of str
+        How a shared unit came to either side.
+    mask_place : str
+        Where the mask comes from.
+    reason, cure : str
+    """
+
+    kind: str
+    node: str
+    item: int | None
+    verdict: str
+    level: str
+    allowed: bool
+    mask_units: int = 0
+    data_units: int = 0
+    geometry_units: int = 0
+    shared: int = 0
+    origins: tuple[str, ...] = ()
+    mask_path: tuple[str, ...] = ()
+    data_path: tuple[str, ...] = ()
+    mask_place: str = ""
+    reason: str = ""
+    cure: str = ""
+
+    def describe(self, table: UnitTable) -> str:
+        """The finding in words: meeting, fold, shared units, both paths, cure."""
+        fold = "" if self.item is None else f", element {self.item}"
+        lines = [f"{self.verdict} at {self.kind} {self.node}{fold}: {self.reason}"]
+        if self.shared:
+            lines.append(f"  shared: {table.describe(self.shared)}")
+        if self.mask_path:
+            lines.append(f"  the mask's way:  {' -> '.join(self.mask_path)}")
+        if self.data_path:
+            lines.append(f"  the data's way:  {' -> '.join(self.data_path)}")
+        if self.cure:
+            lines.append(f"  cure: {self.cure}")
+        return "\n".join(lines)
+
+
+def judge(ancestry: Ancestry) -> list[Finding]:
+    """All findings of a graph, meetings in the order in which they would run."""
+    findings: list[Finding] = []
+    for node in ancestry.nodes:
+        meeting, statistic = meetings_of(node.interface)
+        if meeting is not None:
+            findings += _extractions(ancestry, node, meeting)
+        if statistic is not None:
+            finding = _statistic(ancestry, node, statistic)
+            if finding is not None:
+                findings.append(finding)
+    return findings
+
+
+def _extractions(ancestry: Ancestry, node: object, meeting: Meeting) -> list[Finding]:
+    name = node_name(node)
+    inputs = ancestry.inputs[name]
+    pairs = meeting.pairs(inputs)
+    biased = bool(meeting.biased and inputs.settings.get(meeting.biased))
+    found = []
+    for i, (mask, data) in enumerate(pairs):
+        item = i if len(pairs) > 1 else None
+        found.append(_meet(ancestry.study.table, name, item, mask, data, biased=biased))
+    return found
+
+
+def _meet(
+    table: UnitTable, name: str, item: int | None, mask: Leaf, data: Leaf, *, biased: bool
+) -> Finding:
+    suffixes = frozenset(unit.suffix for unit in table.units_of(data.touch.values))
+    measured = table.measured(suffixes)
+    of_mask, of_data = mask.touch.values & measured, data.touch.values & measured
+    unknown = sorted(mask.touch.unknown | data.touch.unknown)
+    tested = table.people_of(of_data)
+    choosers = table.people_of(of_mask)
+    shared = table.overlapping(of_mask) & of_data
+    level, verdict, reason, cure = "", APART, "", ""
+    if shared:
+        verdict, reason = LEAK, "the mask was chosen on the data it would be tested on"
+        cure = (
+            "choose the region without the tested data (plan leave-one-subject-out, or a mask "
+            "with another origin), or read it as exploratory: a value without interval and p"
+        )
+    elif choosers & tested:
+        shared = sum(
+            1 << n for n in table.numbers(of_mask) if table.people_of(1 << n) & tested
+        )
+        if len(choosers) == 1 and choosers == tested:
+            level, reason = "run", "the mask was chosen on other runs of this one subject"
+            shared = 0
+        else:
+            level, verdict = "subject", LEAK
+            reason = (
+                "the mask was chosen on other runs of several subjects, the tested ones among "
+                "them: their persistent effects are in both"
+            )
+            cure = (
+                "leave the tested subject out of the selection, or choose each subject's own "
+                "mask from their own other runs"
+            )
+    elif unknown:
+        verdict = UNPROVEN
+        reason = f"nobody has declared what {', '.join(unknown[:3])} derives from"
+        cure = "add the file to the study table, or state its origin in the study file"
+    elif not of_data:
+        verdict, reason = UNPROVEN, "the data under test is not in the study table"
+        cure = "add its files to the study table"
+    elif not of_mask and not mask.touch.origins and not mask.touch.values:
+        verdict, reason = UNPROVEN, "nothing says where the mask comes from"
+        cure = "state its origin in the study file"
+    else:
+        level, reason = "subject", "the mask was chosen without any data of the tested subjects"
+    bit = shared & -shared
+    data_bit = (table.overlapping(bit) & of_data) if verdict == LEAK and not level else 0
+    people_bit = of_data & -of_data if verdict == LEAK and level else 0
+    towards = (data_bit & -data_bit) or people_bit
+    return Finding(
+        "extraction", name, item, verdict, level, verdict == APART or (verdict == LEAK and biased),
+        of_mask, of_data, mask.touch.geometry, shared if verdict == LEAK else 0,
+        tuple(sorted(mask.touch.origins)),
+        tuple(path_to(mask, bit)) if verdict == LEAK else (),
+        tuple(path_to(data, towards)) if verdict == LEAK else (),
+        _place(mask), reason, cure,
+    )  # fmt: skip
+
+
+def _place(leaf: Leaf) -> str:
+    while not leaf.place and len(leaf.parents) == 1:
+        leaf = leaf.parents[0]
+    return leaf.place
+
+
+def _statistic(ancestry: Ancestry, node: object, statistic: Statistic) -> Finding | None:
+    name = node_name(node)
+    tree = ancestry.inputs[name].trees.get(statistic.values)
+    if tree is None:
+        return None
+    table = ancestry.study.table
+    whole = joined(leaves(tree))
+    marks = whole.touch.extractions
+    mask_units = data_units = 0
+    for mark in marks:
+        mask_units |= mark.mask
+        data_units |= mark.data
+    verdict, reason, cure = APART, "", ""
+    if whole.touch.biased:
+        verdict, reason = LEAK, "the values are marked biased, and no statistic accepts them"
+        cure = "report the exploratory value alone, or choose the region without the tested data"
+    elif any(table.overlapping(mark.mask) & mark.data for mark in marks):
+        verdict, reason = LEAK, "its values were read in a region chosen on those very data"
+        cure = "see the extraction that leaks"
+    elif not statistic.cross_fitted and cross_fitted(marks, table):
+        n = len(marks)
+        rate = (
+            f" (about {plain_t_false_positives(n, n, 0.01):.0%} of the time at a nominal 5 %, "
+            f"for n = {n} and a threshold of p < .01)"
+            if n > 3
+            else ""
+        )
+        verdict, reason = LEAK, (
+            f"the {n} values are cross-fitted: each mask was chosen on the other values' data, "
+            "so the values are correlated and this statistic rejects a true null far more often "
+            f"than it says{rate}"
+        )
+        cure = statistic.cure
+    elif not marks and whole.touch.unknown:
+        verdict, reason = UNPROVEN, (
+            f"nobody has declared what {', '.join(sorted(whole.touch.unknown)[:3])} derives from"
+        )
+        cure = "state its origin in the study file"
+    return Finding(
+        "statistic", name, None, verdict, _weakest(marks, table) if verdict == APART else "",
+        verdict == APART, mask_units, data_units, reason=reason, cure=cure,
+    )  # fmt: skip
+
+
+def _weakest(marks: frozenset[Extraction], table: UnitTable) -> str:
+    for mark in marks:
+        if table.people_of(mark.mask) & table.people_of(mark.data):
+            return "run"
+    return "subject"

@@ -1,0 +1,265 @@
+"""Each plan as a ready-made workflow, and a whole study as one.
+
+Every plan has an ``inputnode`` with ``effects`` (a list with one map per row) and an
+``outputnode``; nest it in a workflow of your own and run that under the guard.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from pathlib import Path
+from typing import Any
+
+from nipype import IdentityInterface, Node, Workflow
+
+from ..nodes.interfaces import (
+    ChooseByFold,
+    ChooseMask,
+    Extract,
+    FixedRegionTest,
+    FlipTest,
+    GivenMask,
+    GroupMap,
+    SphereMask,
+    SubjectMaps,
+)
+from ..nodes.procedure import Procedure
+from .settings import A_PRIORI, EXPLORATORY, LEAVE_ONE_OUT, Region, Roi, Settings
+
+
+def node(interface: Any, name: str, mem_gb: float = 0.5, **inputs: Any) -> Node:
+    """A node of ours: hashed by content, with its memory need stated."""
+    made = Node(interface, name=name, mem_gb=mem_gb, n_procs=1)
+    # By time stamp and size, another subject's file could pass for this one's.
+    made.config = {"execution": {"hash_method": "content"}}
+    for field, value in inputs.items():
+        if value is not None:
+            setattr(made.inputs, field, value)
+    return made
+
+
+def _ends(workflow: Workflow, outputs: Sequence[str]) -> tuple[Node, Node]:
+    start = Node(IdentityInterface(["effects"]), name="inputnode")
+    end = Node(IdentityInterface(list(outputs)), name="outputnode")
+    workflow.add_nodes([start, end])
+    return start, end
+
+
+def region_node(region: Region, name: str, reference: str, root: Path) -> Node | None:
+    """The node that makes a given region's mask; None for the whole map."""
+    if region.mask:
+        path = str(root / region.mask)
+        return node(GivenMask(), name, in_file=path, reference=reference)
+    if region.centre is not None:
+        return node(
+            SphereMask(), name, reference=reference, centre=region.centre, radius=region.radius,
+            origin=region.origin,
+        )  # fmt: skip
+    return None
+
+
+def leave_one_subject_out(
+    name: str, procedure: Procedure, labels: Sequence[str], search: Node | None = None,
+    search_name: str = "whole map", n_flips: int = 4999, seed: int = 0, interval: str = "flips",
+    test: str = "whole-procedure", mem_gb: float = 1.0,
+) -> Workflow:  # fmt: skip
+    """Choose a region without each subject in turn, read it there, test the whole procedure.
+
+    Parameters
+    ----------
+    name : str
+        Of the region and of the workflow.
+    procedure : Procedure
+        Mask rule, folds, what happens when a fold finds nothing.
+    labels : sequence of str
+        Per map of ``inputnode.effects``: who it belongs to.
+    search : Node, optional
+        With an output ``mask_file``: the search region.
+    search_name : str
+        What the search region is called in the p sentence.
+    n_flips, seed : int
+    interval : {"flips", "jackknife"}
+    test : {"whole-procedure", "t", "none"}
+        A plain t is refused by the guard; it can be asked for to see the reason.
+    mem_gb : float
+        Needed by the nodes that hold the whole stack.
+
+    Returns
+    -------
+    nipype.Workflow
+        With ``inputnode.effects`` and ``outputnode.{mask_files, overlap_file, values,
+        record_file}``.
+
+    Examples
+    --------
+    >>> from sequester.nodes.masks import Cluster
+    >>> plan = leave_one_subject_out("arbor", Procedure(Cluster(p=0.001)), ["01", "02", "03"])
+    >>> sorted(plan.list_node_names())
+    ['choose', 'extract', 'inputnode', 'outputnode', 'test']
+    """
+    workflow = Workflow(name=name)
+    start, end = _ends(workflow, ["mask_files", "overlap_file", "values", "record_file"])
+    labels = list(labels)
+    choose = node(ChooseByFold(), "choose", mem_gb, labels=labels, procedure=procedure)
+    extract = node(Extract(), "extract", labels=labels, missing=procedure.missing)
+    workflow.connect(
+        [
+            (start, choose, [("effects", "in_files")]),
+            (start, extract, [("effects", "in_files")]),
+            (choose, extract, [("row_masks", "mask_files")]),
+            (choose, end, [("mask_files", "mask_files"), ("overlap_file", "overlap_file")]),
+            (extract, end, [("values", "values")]),
+        ]
+    )
+    if search is not None:
+        workflow.connect(search, "mask_file", choose, "search_file")
+    names = (name, LEAVE_ONE_OUT, search_name)
+    if test == "whole-procedure":
+        flips = node(
+            FlipTest(), "test", mem_gb, labels=labels, procedure=procedure, n_flips=n_flips,
+            seed=seed, interval=interval, names=names,
+        )  # fmt: skip
+        workflow.connect(
+            [
+                (start, flips, [("effects", "in_files")]),
+                (extract, flips, [("values", "values")]),
+                (flips, end, [("record_file", "record_file")]),
+            ]
+        )
+        if search is not None:
+            workflow.connect(search, "mask_file", flips, "search_file")
+    elif test == "t":
+        _fixed_test(workflow, extract, end, names)
+    return workflow
+
+
+def _fixed_test(workflow: Workflow, extract: Node, end: Node, names: tuple[str, str, str]) -> None:
+    test = node(FixedRegionTest(), "test", names=names)
+    workflow.connect(
+        [
+            (extract, test, [(f, f) for f in ("values", "coverage", "sizes")]),
+            (test, end, [("record_file", "record_file")]),
+        ]
+    )
+
+
+def a_priori(
+    name: str, labels: Sequence[str], region: Node, region_name: str, missing: Any = None,
+    test: str = "t",
+) -> Workflow:  # fmt: skip
+    """Read a region that was fixed beforehand, and test its mean.
+
+    Parameters
+    ----------
+    name : str
+    labels : sequence of str
+        Per map of ``inputnode.effects``.
+    region : Node
+        With an output ``mask_file``: a `GivenMask` or `SphereMask` whose origin is declared.
+    region_name : str
+    missing : Missing, optional
+    test : {"t", "none"}
+    """
+    workflow = Workflow(name=name)
+    start, end = _ends(workflow, ["mask_files", "values", "record_file"])
+    extract = node(Extract(), "extract", labels=list(labels), missing=missing)
+    workflow.connect(
+        [
+            (start, extract, [("effects", "in_files")]),
+            (region, extract, [("mask_file", "mask_files")]),
+            (region, end, [("mask_file", "mask_files")]),
+            (extract, end, [("values", "values")]),
+        ]
+    )
+    if test == "t":
+        _fixed_test(workflow, extract, end, (name, A_PRIORI, region_name))
+    return workflow
+
+
+def exploratory(
+    name: str, procedure: Procedure, labels: Sequence[str], search: Node | None = None,
+    search_name: str = "whole map", test: str = "none", mem_gb: float = 1.0,
+) -> Workflow:  # fmt: skip
+    """Choose a region on all data and read it on the same data: a value marked biased.
+
+    Parameters
+    ----------
+    name : str
+    procedure : Procedure
+        Its mask rule is used once, on the group map of everybody.
+    labels : sequence of str
+    search : Node, optional
+    search_name : str
+    test : {"none", "t"}
+        With "t" the values are not marked, and the guard refuses the run: the circular analysis.
+    mem_gb : float
+    """
+    workflow = Workflow(name=name)
+    start, end = _ends(workflow, ["mask_files", "values", "record_file"])
+    group = node(GroupMap(), "group", mem_gb, missing=procedure.missing)
+    choose = node(
+        ChooseMask(), "choose", rule=procedure.rule, k=procedure.k,
+        on_empty=procedure.on_empty, negative=procedure.tail == "negative",
+    )  # fmt: skip
+    extract = node(
+        Extract(), "extract", labels=list(labels), missing=procedure.missing,
+        exploratory=test == "none",
+    )  # fmt: skip
+    workflow.connect(
+        [
+            (start, group, [("effects", "in_files")]),
+            (start, extract, [("effects", "in_files")]),
+            (group, choose, [("out_file", "in_file"), ("count_file", "count_file")]),
+            (choose, extract, [("mask_file", "mask_files")]),
+            (choose, end, [("mask_file", "mask_files")]),
+            (extract, end, [("values", "values")]),
+        ]
+    )
+    if search is not None:
+        workflow.connect(search, "mask_file", choose, "search_file")
+    if test == "t":
+        _fixed_test(workflow, extract, end, (name, EXPLORATORY, search_name))
+    return workflow
+
+
+def study_workflow(settings: Settings, base_dir: Path) -> Workflow:
+    """The workflow of a whole STUDY.toml: maps of each subject, then every region's plan.
+
+    Parameters
+    ----------
+    settings : Settings
+    base_dir : Path
+        The engine's working folder; not an output.
+    """
+    workflow = Workflow(name=settings.name, base_dir=str(base_dir))
+    workflow.config["execution"] = {
+        "crashdump_dir": str(base_dir), "create_report": "false", "stop_on_first_crash": "true",
+        "remove_unnecessary_outputs": "false",
+    }  # fmt: skip
+    rows, root = settings.rows, settings.root
+    paths = [[str(root / row.path) for row in runs] for _, runs in rows]
+    maps = node(
+        SubjectMaps(), "maps", in_files=paths, labels=[label for label, _ in rows],
+        volumes=[[-1 if r.volume is None else r.volume for r in runs] for _, runs in rows],
+        missing=settings.missing,
+    )  # fmt: skip
+    people = [runs[0].person for _, runs in rows]
+    for roi in settings.rois:
+        where = region_node(roi.region, "region", paths[0][0], root)
+        plan = _plan(roi, people, where, settings)
+        workflow.connect(maps, "out_files", plan, "inputnode.effects")
+    return workflow
+
+
+def _plan(roi: Roi, people: list[str], where: Node | None, settings: Settings) -> Workflow:
+    name, _, search = roi.names
+    if roi.plan == A_PRIORI:
+        assert where is not None, "an a-priori region is a mask or a sphere"
+        return a_priori(name, people, where, search, settings.missing, roi.test)
+    assert roi.procedure is not None
+    if roi.plan == EXPLORATORY:
+        return exploratory(name, roi.procedure, people, where, search, roi.test)
+    return leave_one_subject_out(
+        name, roi.procedure, people, where, search, roi.n_flips, settings.seed, roi.interval,
+        roi.test,
+    )  # fmt: skip

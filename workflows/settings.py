@@ -1,0 +1,400 @@
+"""STUDY.toml: what to analyse and how, stated beforehand.
+
+Every key is checked; an unknown one is an error that names its line and the known ones.
+"""
+
+from __future__ import annotations
+
+import re
+import tomllib
+from collections.abc import Iterable
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+from ..nodes.errors import InputError
+from ..nodes.folds import LeaveOneOut
+from ..nodes.groupmaps import Missing
+from ..nodes.masks import Cluster, MaskRule, Strongest, Threshold
+from ..nodes.procedure import ON_EMPTY, TAILS, Procedure
+from ..nodes.results import INTERVALS
+from ..nodes.touch import ENTITIES, Unit
+from .digests import digest_text
+from .study import Origin, Row, Study, read_table
+
+LEAVE_ONE_OUT, A_PRIORI, EXPLORATORY = "leave-one-subject-out", "a-priori", "exploratory"
+PLANS = (LEAVE_ONE_OUT, A_PRIORI, EXPLORATORY)
+# The tests that may be asked for, the default first. The plain t of cross-fitted or circular
+# values can be asked for, and is refused by the guard with the reason.
+TESTS = {LEAVE_ONE_OUT: ("whole-procedure", "t"), A_PRIORI: ("t",), EXPLORATORY: ("none", "t")}
+
+_KEYS = {
+    "": {"study", "data", "roi", "origin"},
+    "study": {"name", "table", "output", "seed"},
+    "data": {"select", "zeros_are_missing", "min_fraction"},
+    "origin": {"source", "files", "derived_from"},
+    "roi": {
+        "name", "plan", "search", "region", "rule", "tail", "on_empty", "k", "flips", "interval",
+        "test",
+    },
+    "rule": {"kind", "height", "p", "connectivity", "min_size", "pick", "near", "k"},
+    "region": {"mask", "centre", "radius", "origin", "derived_from"},
+}  # fmt: skip
+
+
+@dataclass(frozen=True)
+class Region:
+    """A region given from outside: a mask file, or a sphere in mm; or the whole map.
+
+    Parameters
+    ----------
+    origin : str
+        Where it comes from.
+    mask : str
+        Path relative to the study; "" for a sphere or the whole map.
+    centre : (3,) float or None, mm
+    radius : float, mm
+    """
+
+    origin: str = ""
+    mask: str = ""
+    centre: tuple[float, float, float] | None = None
+    radius: float = 0.0
+
+    def describe(self) -> str:
+        """In words, for sentences about the result."""
+        if self.mask:
+            return Path(self.mask).name
+        if self.centre is not None:
+            at = ", ".join(f"{x:g}" for x in self.centre)
+            return f"sphere of {self.radius:g} mm at ({at}) mm"
+        return "whole map"
+
+
+@dataclass(frozen=True)
+class Roi:
+    """One region of interest and how it is chosen and tested."""
+
+    name: str
+    plan: str
+    region: Region
+    procedure: Procedure | None
+    n_flips: int
+    interval: str
+    test: str
+
+    @property
+    def names(self) -> tuple[str, str, str]:
+        """(roi, plan, search region), as results carry them."""
+        return self.name, self.plan, self.region.describe()
+
+
+@dataclass(frozen=True)
+class Settings:
+    """A whole STUDY.toml.
+
+    Parameters
+    ----------
+    name : str
+    root, output : Path
+        The study's folder, and where results go.
+    seed : int
+    missing : Missing
+    study : Study
+    rows : tuple of (label, tuple of Row)
+        Per subject, sorted: the maps to average.
+    left_out : tuple of Row
+        With an exclude_reason.
+    rois : tuple of Roi
+    digest : str
+        SHA-256 of the file.
+    """
+
+    name: str
+    root: Path
+    output: Path
+    seed: int
+    missing: Missing
+    study: Study
+    rows: tuple[tuple[str, tuple[Row, ...]], ...]
+    left_out: tuple[Row, ...]
+    rois: tuple[Roi, ...]
+    digest: str
+
+
+class _Reader:
+    """Reads keys of a TOML table, with errors that name the file and the line."""
+
+    def __init__(self, path: Path, text: str) -> None:
+        self.path, self.lines = path, text.splitlines()
+
+    def where(self, key: str) -> str:
+        """The file, and the first line on which a key stands."""
+        pattern = re.compile(rf'(^|[\s{{,\["]){re.escape(key)}["\]]*\s*[=\]]')
+        for number, line in enumerate(self.lines, 1):
+            if pattern.search(line):
+                return f"{self.path}, line {number}"
+        return str(self.path)
+
+    def known(self, table: dict[str, Any], section: str) -> None:
+        """Refuse keys that do not exist."""
+        for key in table:
+            if key not in _KEYS[section]:
+                raise InputError(
+                    f"unknown key {key!r}" + (f" in {section}" if section else ""),
+                    where=self.where(key), expected="one of " + ", ".join(sorted(_KEYS[section])),
+                )  # fmt: skip
+
+    def get(self, table: dict[str, Any], key: str, kind: type | tuple[type, ...], default: Any) -> Any:
+        """A value of a type, or the default; `...` as default makes it mandatory."""
+        if key not in table:
+            if default is ...:
+                raise InputError(f"missing key {key!r}", where=str(self.path))
+            return default
+        value = table[key]
+        if not isinstance(value, kind) or (isinstance(value, bool) and kind is not bool):
+            names = kind.__name__ if isinstance(kind, type) else " or ".join(k.__name__ for k in kind)
+            raise InputError(
+                f"{key} has the wrong type", where=self.where(key), expected=names,
+                got=f"{type(value).__name__} {value!r}",
+            )  # fmt: skip
+        return value
+
+    def one_of(self, table: dict[str, Any], key: str, allowed: Iterable[str], default: Any) -> str:
+        """A word out of a list."""
+        value = self.get(table, key, str, default)
+        if value not in allowed:
+            raise InputError(
+                f"unknown {key}", where=self.where(key), expected="one of " + ", ".join(allowed),
+                got=repr(value),
+            )  # fmt: skip
+        return str(value)
+
+
+def read_settings(path: str | Path) -> Settings:
+    """Read and check a STUDY.toml and the study table it names.
+
+    Raises
+    ------
+    InputError
+        For anything wrong in either; names file and line.
+    """
+    path = Path(path)
+    if not path.is_file():
+        raise InputError("no such study file", where=str(path), remedy="give a STUDY.toml")
+    try:
+        text = path.read_text(encoding="utf-8")
+        toml = tomllib.loads(text)
+    except (tomllib.TOMLDecodeError, UnicodeDecodeError) as error:
+        raise InputError(
+            "malformed TOML", where=str(path), got=str(error), remedy="correct that line"
+        ) from error
+    read = _Reader(path, text)
+    read.known(toml, "")
+    head, data = read.get(toml, "study", dict, ...), read.get(toml, "data", dict, {})
+    read.known(head, "study")
+    read.known(data, "data")
+    root = path.parent.absolute()
+    missing = Missing(
+        read.get(data, "zeros_are_missing", bool, True),
+        float(read.get(data, "min_fraction", (int, float), 0.8)),
+    )
+    rois = tuple(_roi(read, table, missing) for table in read.get(toml, "roi", list, ...))
+    _distinct(read, [roi.name for roi in rois])
+    origins = tuple(_origins(read, toml, rois, root))
+    plain = read_table(root / read.get(head, "table", str, ...), root)
+    study = Study(root, plain.rows, origins, plain.columns)
+    rows, left_out = _selected(read, study, read.get(data, "select", dict, {}))
+    return Settings(
+        name=_label(read, read.get(head, "name", str, ...), "name"), root=root,
+        output=root / read.get(head, "output", str, "results"),
+        seed=read.get(head, "seed", int, 0), missing=missing, study=study, rows=rows,
+        left_out=left_out, rois=rois, digest=digest_text(text),
+    )  # fmt: skip
+
+
+def _label(read: _Reader, value: str, key: str) -> str:
+    """BIDS labels, which names become part of, are letters and digits."""
+    if not re.fullmatch(r"[A-Za-z0-9]+", value):
+        raise InputError(
+            f"{key} is no label", where=read.where(key), expected="letters and digits only",
+            got=repr(value),
+        )  # fmt: skip
+    return value
+
+
+def _distinct(read: _Reader, names: list[str]) -> None:
+    if not names:
+        raise InputError("no [[roi]]", where=str(read.path), remedy="state at least one")
+    folded = [name.lower() for name in names]  # one file name each, on any file system
+    for name in names:
+        if folded.count(name.lower()) > 1:
+            raise InputError("two [[roi]] of one name", where=str(read.path), got=repr(name))
+
+
+def _point(read: _Reader, table: dict[str, Any], key: str) -> tuple[float, float, float] | None:
+    value = read.get(table, key, list, None)
+    if value is None:
+        return None
+    if len(value) != 3 or not all(isinstance(x, int | float) for x in value):
+        raise InputError(
+            f"{key} is no coordinate", where=read.where(key), expected="[x, y, z] in mm",
+            got=str(value),
+        )  # fmt: skip
+    return float(value[0]), float(value[1]), float(value[2])
+
+
+def _region(read: _Reader, table: dict[str, Any], key: str) -> Region:
+    read.known(table, "region")
+    mask, centre = read.get(table, "mask", str, ""), _point(read, table, "centre")
+    if bool(mask) == (centre is not None):
+        raise InputError(
+            f"{key} needs either a mask or a centre and radius", where=read.where(key),
+            got=str(table),
+        )  # fmt: skip
+    origin = read.get(table, "origin", str, "")
+    if not origin.strip():
+        raise InputError(
+            f"{key} without an origin", where=read.where(key),
+            remedy='state where it comes from, with a source: origin = "..."',
+        )  # fmt: skip
+    radius = float(read.get(table, "radius", (int, float), 0 if mask else ...))
+    return Region(origin.strip(), mask, centre, radius)
+
+
+def _rule(read: _Reader, table: dict[str, Any]) -> MaskRule:
+    read.known(table, "rule")
+    kind = read.one_of(table, "kind", ("threshold", "cluster", "strongest"), ...)
+    allowed = {
+        "threshold": {"height", "p"},
+        "strongest": {"k"},
+        "cluster": {"height", "p", "connectivity", "min_size", "pick", "near"},
+    }[kind]
+    for key in table:
+        if key not in {*allowed, "kind"}:
+            raise InputError(
+                f"key {key!r} does not go with rule kind {kind!r}", where=read.where(key),
+                expected="one of " + ", ".join(sorted(allowed)),
+            )  # fmt: skip
+    if kind == "strongest":
+        return Strongest(read.get(table, "k", int, ...))
+    height = read.get(table, "height", (int, float), None)
+    p = read.get(table, "p", (int, float), None)
+    if kind == "threshold":
+        return Threshold(height, p)
+    return Cluster(
+        height, p, read.get(table, "connectivity", int, 18), read.get(table, "min_size", int, 1),
+        read.get(table, "pick", str, "largest"), _point(read, table, "near"),
+    )  # fmt: skip
+
+
+def _roi(read: _Reader, table: dict[str, Any], missing: Missing) -> Roi:
+    read.known(table, "roi")
+    name = _label(read, read.get(table, "name", str, ...), "name")
+    plan = read.one_of(table, "plan", PLANS, ...)
+    given = plan == A_PRIORI
+    wrong = {"search", "rule", "tail", "on_empty", "k", "flips", "interval"} if given else {"region"}
+    for key in table:
+        if key in wrong:
+            raise InputError(f"key {key!r} does not go with plan {plan!r}", where=read.where(key))
+    key = "region" if given else "search"
+    place = read.get(table, key, dict, ... if given else None)
+    region = Region() if place is None else _region(read, place, key)
+    procedure = None
+    if not given:
+        procedure = Procedure(
+            rule=_rule(read, read.get(table, "rule", dict, ...)), scheme=LeaveOneOut(),
+            tail=read.one_of(table, "tail", TAILS, "positive"),
+            on_empty=read.one_of(table, "on_empty", ON_EMPTY, "empty"),
+            k=read.get(table, "k", int, 0), missing=missing,
+        )  # fmt: skip
+    test = read.one_of(table, "test", TESTS[plan], TESTS[plan][0])
+    return Roi(
+        name, plan, region, procedure, read.get(table, "flips", int, 4999),
+        read.one_of(table, "interval", INTERVALS, "flips"), test,
+    )  # fmt: skip
+
+
+def _origins(
+    read: _Reader, toml: dict[str, Any], rois: tuple[Roi, ...], root: Path
+) -> Iterable[Origin]:
+    for roi, table in zip(rois, toml["roi"], strict=True):
+        place = table.get("region", table.get("search", {}))
+        if roi.region.origin:
+            files = (roi.region.mask,) if roi.region.mask else ()
+            yield Origin(roi.region.origin, files, _units(read, place))
+    for table in read.get(toml, "origin", list, []):
+        read.known(table, "origin")
+        files = []
+        for pattern in read.get(table, "files", list, ...):
+            matched = sorted(str(p.relative_to(root)) for p in root.glob(str(pattern)))
+            if not matched:
+                raise InputError(
+                    "origin names no file", where=read.where("files"), got=repr(pattern)
+                )
+            files += matched
+        yield Origin(read.get(table, "source", str, ...), tuple(files), _units(read, table))
+
+
+def _units(read: _Reader, table: dict[str, Any]) -> tuple[Unit, ...]:
+    units = []
+    for pattern in read.get(table, "derived_from", list, []):
+        for key in pattern:
+            if key not in (*ENTITIES, "suffix"):
+                raise InputError(
+                    f"unknown entity {key!r}", where=read.where(key),
+                    expected="one of " + ", ".join((*ENTITIES, "suffix")),
+                )  # fmt: skip
+        units.append(Unit(**{key: str(value) for key, value in pattern.items()}))
+    return tuple(units)
+
+
+def _selected(
+    read: _Reader, study: Study, select: dict[str, Any]
+) -> tuple[tuple[tuple[str, tuple[Row, ...]], ...], tuple[Row, ...]]:
+    """The rows to analyse, per subject, and those left out with a reason."""
+    wanted: dict[str, set[str]] = {}
+    for column, value in select.items():
+        if column not in study.columns:
+            raise InputError(
+                f"unknown column {column!r}", where=read.where(column),
+                expected="a column of the study table: " + ", ".join(study.columns),
+            )  # fmt: skip
+        wanted[column] = {str(v) for v in (value if isinstance(value, list) else [value])}
+    rows = [r for r in study.rows if all(r.column(c) in v for c, v in wanted.items())]
+    left_out = tuple(row for row in rows if row.exclude_reason)
+    kept = [row for row in rows if not row.exclude_reason]
+    if not kept:
+        raise InputError(
+            "no subject left", where=str(read.path),
+            got=f"{len(study.rows)} rows in the table, {len(left_out)} of the selected excluded",
+            remedy="check [data] select and the exclude_reason column",
+        )  # fmt: skip
+    contrasts = sorted({row.contrast for row in kept})
+    if len(contrasts) > 1:
+        raise InputError(
+            "several contrasts selected", where=read.where("data"), got=", ".join(contrasts),
+            remedy='name one: [data] select = { contrast = "..." }',
+        )  # fmt: skip
+    of_sub: dict[str, list[Row]] = {}
+    for row in kept:
+        of_sub.setdefault(row.unit.sub, []).append(row)
+    for label, runs in of_sub.items():
+        for row in runs:
+            for entity in (*ENTITIES, "suffix"):
+                if entity != "run" and row.column(entity) != runs[0].column(entity):
+                    raise InputError(
+                        f"maps of sub-{label} differ in {entity}", where=str(read.path),
+                        got=f"{runs[0].column(entity)!r} and {row.column(entity)!r}",
+                        remedy=f"only runs are averaged: select one {entity}",
+                    )  # fmt: skip
+        numbers = [row.unit.run for row in runs]
+        if len(set(numbers)) != len(numbers):
+            raise InputError(
+                f"sub-{label} has several maps of one run", where=str(read.path),
+                got=", ".join(row.name for row in runs), remedy="select one, or fill the run column",
+            )  # fmt: skip
+    ordered = tuple(
+        (label, tuple(sorted(of_sub[label], key=lambda row: row.unit))) for label in sorted(of_sub)
+    )
+    return ordered, left_out

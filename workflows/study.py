@@ -1,0 +1,304 @@
+"""Which file is which data unit: the study table, and origins of files from outside.
+
+The table is a TSV with a row per effect map: ``path`` and ``volume`` (of a 4-D file, from 0),
+the BIDS entities of the unit, the ``suffix`` of what was acquired, ``contrast``,
+``exclude_reason``, ``exchange`` (rows that share it count as one subject), and any covariates.
+"""
+
+from __future__ import annotations
+
+import csv
+import os
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass, field
+from pathlib import Path
+
+from ..nodes.errors import InputError
+from ..nodes.touch import ENTITIES, Touch, Unit, UnitTable
+from .digests import digest
+
+COLUMNS = (
+    "path", "volume", "sub", "ses", "task", "acq", "dir", "rec", "run", "suffix", "contrast",
+    "exclude_reason", "exchange",
+)  # fmt: skip
+_BLANK = ("", "n/a")
+
+
+@dataclass(frozen=True)
+class Row:
+    """One effect map of the study.
+
+    Parameters
+    ----------
+    path : str
+        Relative to the study's root.
+    volume : int or None
+        Which volume of a 4-D file.
+    unit : Unit
+    contrast, exclude_reason, exchange : str
+    extra : tuple of (column, value)
+        Covariates, as text.
+    line : int
+        In the table.
+    """
+
+    path: str
+    volume: int | None
+    unit: Unit
+    contrast: str = ""
+    exclude_reason: str = ""
+    exchange: str = ""
+    extra: tuple[tuple[str, str], ...] = ()
+    line: int = 0
+
+    def column(self, name: str) -> str:
+        """The value in a column, as text."""
+        if name in ENTITIES or name == "suffix":
+            return str(getattr(self.unit, name))
+        if name in ("path", "contrast", "exclude_reason", "exchange"):
+            return str(getattr(self, name))
+        return dict(self.extra)[name]
+
+    @property
+    def person(self) -> str:
+        """Who the row counts as."""
+        return self.exchange or self.unit.sub
+
+    @property
+    def name(self) -> str:
+        """The row in messages and file lists."""
+        return self.path if self.volume is None else f"{self.path} volume {self.volume}"
+
+
+@dataclass(frozen=True)
+class Origin:
+    """A declared source of files (or coordinates) from outside the study.
+
+    Parameters
+    ----------
+    source : str
+        Where it comes from, in a sentence with a reference.
+    files : tuple of str
+        Paths relative to the study's root; empty for a coordinate.
+    derived_from : tuple of Unit
+        The study's own units it was made from, if any (blank entities match all).
+    """
+
+    source: str
+    files: tuple[str, ...] = ()
+    derived_from: tuple[Unit, ...] = ()
+
+
+@dataclass
+class Study:
+    """The table and the origins: what is known of every file.
+
+    Parameters
+    ----------
+    root : Path
+        Recorded paths are relative to it.
+    rows : sequence of Row
+    origins : sequence of Origin
+    columns : sequence of str
+        Those of the table.
+
+    Examples
+    --------
+    >>> rows = [Row("a.nii.gz", None, Unit(sub="01", suffix="bold"))]
+    >>> study = Study(Path("."), rows)
+    >>> study.table.describe(study.touch_of("a.nii.gz").values)
+    'sub-01_bold'
+    """
+
+    root: Path
+    rows: Sequence[Row]
+    origins: Sequence[Origin] = ()
+    columns: Sequence[str] = COLUMNS
+    table: UnitTable = field(init=False)
+
+    def __post_init__(self) -> None:
+        people: dict[Unit, str] = {}
+        of_sub: dict[str, tuple[str, int]] = {}
+        for row in self.rows:
+            people[row.unit] = row.person
+            person, line = of_sub.setdefault(row.unit.sub, (row.person, row.line))
+            if person != row.person:
+                raise InputError(
+                    f"sub-{row.unit.sub} has two exchange values", where=f"lines {line}, {row.line}",
+                    got=f"{person!r} and {row.person!r}",
+                    remedy="give all rows of a subject the same value",
+                )  # fmt: skip
+        self.table = UnitTable((row.unit for row in self.rows), people)
+        self._by_path: dict[str, list[tuple[int | None, int]]] = {}
+        for row in self.rows:
+            entry = (row.volume, self.table.bits([row.unit]))
+            for key in self._keys(row.path):
+                self._by_path.setdefault(key, []).append(entry)
+        self._origin_of: dict[str, Origin] = {}
+        for origin in self.origins:
+            for name in origin.files:
+                for key in self._keys(name):
+                    self._origin_of[key] = origin
+        self._sizes: dict[int, list[str]] | None = None
+
+    def _keys(self, path: str) -> set[str]:
+        full = os.path.abspath(self.root / path)
+        return {full, os.path.realpath(full)}
+
+    def relative(self, path: str | Path) -> str:
+        """A path relative to the root, or as it is when elsewhere."""
+        full = os.path.abspath(self.root / path)
+        root = os.path.abspath(self.root)
+        return os.path.relpath(full, root) if full.startswith(root + os.sep) else full
+
+    def _touch_of_key(self, key: str, volume: int | None) -> Touch | None:
+        if key in self._by_path:
+            bits = 0
+            for of_volume, unit in self._by_path[key]:
+                # Without a volume number, a 4-D file touches all its units.
+                if volume is None or of_volume is None or of_volume == volume:
+                    bits |= unit
+            return Touch(values=bits)
+        if key in self._origin_of:
+            return self._touch_of_origin(self._origin_of[key])
+        return None
+
+    def _touch_of_origin(self, origin: Origin) -> Touch:
+        bits = 0
+        for pattern in origin.derived_from:
+            bits |= self.table.matching(pattern)
+        return Touch(values=bits, origins=frozenset({origin.source}))
+
+    def touch_of(self, path: str, volume: int | None = None) -> Touch | None:
+        """What a file touches: its unit, its origin, unknown; None when it is no file.
+
+        Parameters
+        ----------
+        path : str
+            Absolute, or relative to the root.
+        volume : int, optional
+        """
+        for key in self._keys(path):
+            touch = self._touch_of_key(key, volume)
+            if touch is not None:
+                return touch
+        full = self.root / path
+        if full.is_file() or full.is_dir():
+            return Touch(unknown=frozenset({self.relative(path)}))
+        return None
+
+    def recognise(self, path: str) -> Touch | None:
+        """Like `touch_of` for a declared file, also by its content under another name."""
+        for key in self._keys(path):
+            touch = self._touch_of_key(key, None)
+            if touch is not None:
+                return touch
+        if self._sizes is None:
+            self._sizes = {}
+            for key in [*self._by_path, *self._origin_of]:
+                if os.path.isfile(key):
+                    self._sizes.setdefault(os.path.getsize(key), []).append(key)
+        if not os.path.isfile(path):
+            return None
+        # Only a file of the same size can have the same bytes.
+        for key in self._sizes.get(os.path.getsize(path), []):
+            if digest(key) == digest(path):
+                return self._touch_of_key(key, None)
+        return None
+
+    @property
+    def paths(self) -> list[str]:
+        """Distinct paths of the rows that are not left out."""
+        return list(dict.fromkeys(row.path for row in self.rows if not row.exclude_reason))
+
+
+def read_table(path: str | Path, root: Path | None = None) -> Study:
+    """Read a study table.
+
+    Parameters
+    ----------
+    path : path of a TSV file
+    root : Path, optional
+        What the table's paths are relative to; default: the table's folder.
+
+    Raises
+    ------
+    InputError
+        When columns or cells are wrong; names the line.
+    """
+    path = Path(path)
+    if not path.is_file():
+        raise InputError(
+            "no such study table", where=str(path), remedy="make one: sequester table FOLDER"
+        )
+    with path.open(newline="", encoding="utf-8-sig") as stream:
+        lines = list(csv.reader(stream, delimiter="\t"))
+    if not lines:
+        raise InputError("empty study table", where=str(path))
+    header = lines[0]
+    for needed in ("path", "sub"):
+        if needed not in header:
+            raise InputError(
+                f"study table without a {needed} column", where=str(path),
+                expected="tab-separated columns " + " ".join(COLUMNS), got=" ".join(header),
+            )  # fmt: skip
+    repeated = {name for name in header if header.count(name) > 1}
+    if repeated:
+        raise InputError("column named twice", where=str(path), got=", ".join(sorted(repeated)))
+    rows = [
+        _row(dict(zip(header, cells, strict=True)), f"{path}, line {number}", number)
+        if len(cells) == len(header)
+        else _ragged(path, number, len(header), len(cells))
+        for number, cells in enumerate(lines[1:], 2)
+        if cells
+    ]
+    seen: dict[tuple[str, int | None], int] = {}
+    for row in rows:
+        before = seen.setdefault((row.path, row.volume), row.line)
+        if before != row.line:
+            raise InputError(
+                "the same map on two rows", where=f"{path}, lines {before} and {row.line}",
+                got=row.name, remedy="each map of a subject needs a file (or volume) of its own",
+            )  # fmt: skip
+    return Study(root or path.parent, rows, columns=header)
+
+
+def _ragged(path: Path, number: int, expected: int, got: int) -> Row:
+    raise InputError(
+        "row of another length", where=f"{path}, line {number}",
+        expected=f"{expected} tab-separated cells", got=str(got),
+    )  # fmt: skip
+
+
+def _row(cells: dict[str, str], where: str, line: int) -> Row:
+    value = {name: "" if cell.strip() in _BLANK else cell.strip() for name, cell in cells.items()}
+    if not value["path"] or not value["sub"]:
+        raise InputError("row without a path or a sub", where=where, got=str(cells))
+    volume = value.get("volume", "")
+    if volume and not volume.isdigit():
+        raise InputError("volume is no number", where=where, expected="0, 1, ...", got=volume)
+    known = {*COLUMNS, *ENTITIES}
+    return Row(
+        path=value["path"],
+        volume=int(volume) if volume else None,
+        unit=Unit(**{e: value.get(e, "") for e in ENTITIES}, suffix=value.get("suffix", "")),
+        contrast=value.get("contrast", ""),
+        exclude_reason=value.get("exclude_reason", ""),
+        exchange=value.get("exchange", ""),
+        extra=tuple((name, cell) for name, cell in value.items() if name not in known),
+        line=line,
+    )
+
+
+def table_text(rows: Iterable[Row]) -> str:
+    """A study table as TSV, blank cells as n/a, sorted by path and volume."""
+    lines = ["\t".join(COLUMNS)]
+    for row in sorted(rows, key=lambda r: (r.path, -1 if r.volume is None else r.volume)):
+        cells = {
+            "path": row.path, "volume": "" if row.volume is None else str(row.volume),
+            "suffix": row.unit.suffix, "contrast": row.contrast,
+            "exclude_reason": row.exclude_reason, "exchange": row.exchange,
+            **{e: getattr(row.unit, e) for e in ENTITIES},
+        }  # fmt: skip
+        lines.append("\t".join(cells[name] or "n/a" for name in COLUMNS))
+    return "\n".join(lines) + "\n"

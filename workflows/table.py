@@ -1,0 +1,122 @@
+"""`sequester table`: a study table from file names.
+
+Entities are read from BIDS-derivative names, or from a pattern with ``{sub}``-like fields
+relative to the folder. The suffix is that of what was acquired, which a derivative's name does
+not tell: it is asked for.
+"""
+
+from __future__ import annotations
+
+import os
+import re
+from pathlib import Path
+
+from ..nodes.errors import InputError
+from ..nodes.images import n_volumes, open_image
+from ..nodes.touch import ENTITIES, Unit
+from .study import Row
+
+_FIELDS = (*ENTITIES, "contrast")
+_ENDINGS = (".nii", ".nii.gz")
+# Derivative maps that hold no effect of their own.
+_NOT_EFFECTS = ("mask", "dseg", "probseg")
+
+
+def rows_from(
+    folder: Path, pattern: str | None = None, suffix: str = "bold", base: Path | None = None
+) -> list[Row]:
+    """Rows for the maps below a folder.
+
+    Parameters
+    ----------
+    folder : Path
+    pattern : str, optional
+        Such as "sub-{sub}/con_{contrast}.nii.gz"; "*" matches within a name. Without it, all
+        names of BIDS form are taken, ``stat-effect`` alone where several statistics lie there.
+    suffix : str
+        Of what was acquired.
+    base : Path, optional
+        Paths are written relative to it; default the folder.
+
+    Raises
+    ------
+    InputError
+        When nothing matches.
+
+    Examples
+    --------
+    >>> _entities("sub-01_task-lanterns_run-2_contrast-a_stat-effect_statmap")["run"]
+    '2'
+    """
+    if not folder.is_dir():
+        raise InputError("no such folder", where=str(folder))
+    base = base or folder
+    files = sorted(
+        Path(root) / name
+        for root, _, names in os.walk(folder, followlinks=True)
+        for name in names
+        if name.endswith(_ENDINGS) and not name.startswith(".")
+    )
+    found: list[tuple[Path, dict[str, str]]] = []
+    matcher = None if pattern is None else _matcher(pattern)
+    for path in files:
+        if matcher is not None:
+            match = matcher.fullmatch(path.relative_to(folder).as_posix())
+            fields = match.groupdict() if match else None
+        else:
+            fields = _entities(path.name.removesuffix(".gz").removesuffix(".nii"))
+        if fields is not None:
+            found.append((path, fields))
+    if matcher is None and any(fields.get("stat") == "effect" for _, fields in found):
+        found = [(path, fields) for path, fields in found if fields.get("stat") == "effect"]
+    if not found:
+        raise InputError(
+            "no effect map found", where=str(folder),
+            expected=pattern or "names such as sub-01_task-x_contrast-y_stat-effect_statmap.nii.gz",
+            got=f"{len(files)} NIfTI files", remedy='give --pattern, such as "sub-{sub}/map.nii.gz"',
+        )  # fmt: skip
+    return [row for path, fields in found for row in _rows(path, fields, suffix, base)]
+
+
+def _rows(path: Path, fields: dict[str, str], suffix: str, base: Path) -> list[Row]:
+    relative = os.path.relpath(path, base)
+    unit = Unit(**{e: fields.get(e, "") for e in ENTITIES}, suffix=suffix)
+    # A broken link stays in the table: the run says that it is not fetched.
+    total = n_volumes(path, open_image(path)) if path.exists() else 1
+    contrast = fields.get("contrast", "")
+    if total == 1:
+        return [Row(relative, None, unit, contrast)]
+    return [Row(relative, volume, unit, contrast) for volume in range(total)]
+
+
+def _entities(stem: str) -> dict[str, str] | None:
+    """The entities of a BIDS name; None when it has none or is no effect map."""
+    *parts, suffix = stem.split("_")
+    pairs = [part.split("-", 1) for part in parts]
+    if not parts or any(len(pair) != 2 for pair in pairs) or pairs[0][0] != "sub":
+        return None
+    if suffix in _NOT_EFFECTS:
+        return None
+    return {key: value for key, value in pairs}
+
+
+def _matcher(pattern: str) -> re.Pattern[str]:
+    pieces, seen = [], set()
+    for piece in re.split(r"(\{\w+\}|\*)", pattern):
+        if piece == "*":
+            pieces.append("[^/]*")
+        elif piece.startswith("{"):
+            name = piece[1:-1]
+            if name not in _FIELDS:
+                raise InputError(
+                    "unknown field in the pattern", where=pattern,
+                    expected="one of " + ", ".join(f"{{{f}}}" for f in _FIELDS), got=piece,
+                )  # fmt: skip
+            # A field named twice must read the same twice.
+            pieces.append(f"(?P={name})" if name in seen else f"(?P<{name}>[^/_]+?)")
+            seen.add(name)
+        else:
+            pieces.append(re.escape(piece))
+    if "sub" not in seen:
+        raise InputError("pattern without {sub}", where=pattern)
+    return re.compile("".join(pieces))
