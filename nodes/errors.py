@@ -35,8 +35,12 @@ class InputError(SequesterError):
         self, what: str, *, where: str = "", expected: str = "", got: str = "", remedy: str = ""
     ) -> None:
         self.fields = {
-            "what": what, "where": where, "expected": expected, "got": got, "remedy": remedy,
-        }  # fmt: skip
+            "what": what,
+            "where": where,
+            "expected": expected,
+            "got": got,
+            "remedy": remedy,
+        }
         head = f"{what} ({where})" if where else what
         sides = ", ".join(
             f"{word} {side}" for word, side in (("expected", expected), ("got", got)) if side

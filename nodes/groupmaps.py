@@ -57,9 +57,10 @@ class Missing:
     def __post_init__(self) -> None:
         if not 0 < self.min_fraction <= 1:
             raise InputError(
-                "min_fraction out of range", expected="0 < min_fraction <= 1",
+                "min_fraction out of range",
+                expected="0 < min_fraction <= 1",
                 got=str(self.min_fraction),
-            )  # fmt: skip
+            )
 
     def present(self, effects: Floats) -> Bools:
         """Where there is data: the shape of `effects`, bool."""
@@ -81,7 +82,7 @@ def filled(effects: Floats, missing: Missing) -> tuple[Floats, Bools | None]:
     return np.where(present, effects, effects.dtype.type(0)), present
 
 
-def fold_sums(stack: Floats, folds: Sequence[Fold], *, square: bool = False) -> Floats:
+def fold_sums(stack: Floats | Bools, folds: Sequence[Fold], *, square: bool = False) -> Floats:
     """Sums over each fold's held-out rows.
 
     Parameters
@@ -132,6 +133,23 @@ def without_each(parts: Floats) -> Floats:
         front += parts[k - 1]
         out[k] += front
     return out
+
+
+def rows_with_data(present: Bools | None, folds: Sequence[Fold]) -> Floats:
+    """How many rows of each fold's selection side have data at each feature.
+
+    Parameters
+    ----------
+    present : (n_rows, n_features) bool, or None for everywhere
+    folds : sequence of Fold
+
+    Returns
+    -------
+    (n_folds, n_features) float64, or (n_folds, 1) when nothing is missing
+    """
+    if present is None:
+        return np.array([[len(fold.selection)] for fold in folds], dtype=float)
+    return without_each(fold_sums(present, folds))
 
 
 def t_from_sums(n: Floats | float, S: Floats, Q: Floats) -> Floats:
@@ -198,18 +216,15 @@ def leave_out_maps(
     missing = missing or Missing()
     _check_stack(effects, folds)
     out = np.empty((len(folds), effects.shape[1]), dtype=effects.dtype)
-    sizes = np.array([[len(fold.selection)] for fold in folds], dtype=float)
     least = np.array([[missing.least(len(fold.selection))] for fold in folds])
     for start in range(0, effects.shape[1], _BLOCK):
         block = slice(start, start + _BLOCK)
         x, present = filled(effects[:, block], missing)
         S = without_each(fold_sums(x, folds))
-        n: Floats = sizes
-        if present is not None:
-            n = without_each(fold_sums(present, folds))
+        n = rows_with_data(present, folds)
         if kind == "mean":
             with np.errstate(invalid="ignore", divide="ignore"):
-                values = S / n
+                values: Floats = S / n
         else:
             values = t_from_sums(n, S, without_each(fold_sums(x, folds, square=True)))
         if present is not None:

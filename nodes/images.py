@@ -69,10 +69,11 @@ def open_image(path: str | Path) -> Any:
     if not path.exists():
         if path.is_symlink():
             raise InputError(
-                "file not fetched", where=str(path),
+                "file not fetched",
+                where=str(path),
                 got=f"a link to {os.readlink(path)}, which is not there",
                 remedy="fetch the file's content, or leave the row out with an exclude_reason",
-            )  # fmt: skip
+            )
         raise InputError("no such file", where=str(path), remedy="check the path in the table")
     try:
         image = nib.load(path)
@@ -80,17 +81,19 @@ def open_image(path: str | Path) -> Any:
         raise _unreadable(path, error) from error
     if not isinstance(image, nib.Nifti1Image | nib.Nifti1Pair | nib.Nifti2Image):
         raise InputError(
-            "not a NIfTI image", where=str(path), got=type(image).__name__,
+            "not a NIfTI image",
+            where=str(path),
+            got=type(image).__name__,
             remedy="convert the map to NIfTI (.nii or .nii.gz)",
-        )  # fmt: skip
+        )
     return image
 
 
 def geometry_of(image: Any) -> Geometry:
     """The grid of an image's volumes."""
-    shape = (tuple(int(n) for n in image.shape) + (1, 1, 1))[:3]
-    rows = tuple(tuple(float(x) for x in row) for row in np.asarray(image.affine))
-    return Geometry(shape, rows)  # type: ignore[arg-type]  # three entries by the slice
+    x, y, z = (*(int(n) for n in image.shape), 1, 1, 1)[:3]
+    rows = tuple(tuple(float(v) for v in row) for row in np.asarray(image.affine))
+    return Geometry((x, y, z), rows)
 
 
 def n_volumes(path: str | Path, image: Any) -> int:
@@ -106,10 +109,12 @@ def n_volumes(path: str | Path, image: Any) -> int:
         shape = shape[:-1]
     if len(shape) > 4:
         raise InputError(
-            "too many dimensions", where=str(path), expected="3-D, or 4-D with a volume number",
+            "too many dimensions",
+            where=str(path),
+            expected="3-D, or 4-D with a volume number",
             got=f"{len(shape)}-D {tuple(shape)}",
             remedy="split the file into 3-D or 4-D images",
-        )  # fmt: skip
+        )
     return int(shape[3]) if len(shape) == 4 else 1
 
 
@@ -137,9 +142,11 @@ def read_map(path: str | Path, volume: int | None = None) -> tuple[Floats, Geome
     total, geometry = n_volumes(path, image), geometry_of(image)
     if volume is None and total > 1:
         raise InputError(
-            "4-D file without a volume number", where=str(path), got=f"{total} volumes",
+            "4-D file without a volume number",
+            where=str(path),
+            got=f"{total} volumes",
             remedy="fill the table's volume column (counting from 0)",
-        )  # fmt: skip
+        )
     if volume is not None and not 0 <= volume < total:
         raise InputError(
             "no such volume", where=str(path), expected=f"0 to {total - 1}", got=str(volume)
@@ -161,9 +168,12 @@ def _unreadable(path: Path, error: Exception) -> InputError:
         kind = "damaged or truncated file"
     reason = " ".join(str(error).split()) or type(error).__name__
     return InputError(
-        kind, where=str(path), expected="a NIfTI-1 or NIfTI-2 image", got=reason,
+        kind,
+        where=str(path),
+        expected="a NIfTI-1 or NIfTI-2 image",
+        got=reason,
         remedy="copy or make the file again",
-    )  # fmt: skip
+    )
 
 
 def check_same_grid(
@@ -174,10 +184,12 @@ def check_same_grid(
     for other_name, other in others:
         if not grid.same_as(other):
             raise InputError(
-                "grids differ", where=other_name,
-                expected=f"the grid of {name}: {grid}", got=str(other),
+                "grids differ",
+                where=other_name,
+                expected=f"the grid of {name}: {grid}",
+                got=str(other),
                 remedy="resample it to that grid, or leave it out of the study table",
-            )  # fmt: skip
+            )
 
 
 def read_mask(path: str | Path, like: tuple[str, Geometry] | None = None) -> tuple[Bools, Geometry]:

@@ -238,9 +238,13 @@ def components(members: Bools, pairs: tuple[Ints, Ints]) -> tuple[Ints, Ints, In
 
 
 def keep_clusters(
-    members: Bools, features: Ints, rule: Cluster, hood: Neighbourhood, t: Floats | None,
+    members: Bools,
+    features: Ints,
+    rule: Cluster,
+    hood: Neighbourhood,
+    t: Floats | None,
     distance: Floats | None,
-) -> Bools:  # fmt: skip
+) -> Bools:
     """Members that the cluster rule keeps.
 
     Parameters
@@ -312,9 +316,7 @@ def strongest(values: Floats, k: int) -> Bools:
     return out
 
 
-def choose(
-    values: Floats, rule: MaskRule, space: Space, n: npt.ArrayLike | None = None
-) -> Bools:
+def choose(values: Floats, rule: MaskRule, space: Space, n: npt.ArrayLike | None = None) -> Bools:
     """The region of one group map.
 
     Parameters
@@ -352,9 +354,13 @@ def choose(
         return over
     features = np.flatnonzero(over)
     kept = keep_clusters(
-        over[features, None], features, rule, Neighbourhood(space, rule.connectivity),
-        values[features, None], distances(space, rule.near),
-    )  # fmt: skip
+        over[features, None],
+        features,
+        rule,
+        Neighbourhood(space, rule.connectivity),
+        values[features, None],
+        distances(space, rule.near),
+    )
     out = np.zeros_like(over)
     out[features] = kept[:, 0]
     return out
@@ -390,7 +396,8 @@ def sphere(space: Space, centre: tuple[float, float, float], radius: float) -> B
     inside: Bools = apart <= radius + 1e-6
     if not inside.any():
         raise InputError(
-            "sphere holds no feature", got=f"centre {tuple(centre)} mm, radius {radius} mm",
+            "sphere holds no feature",
+            got=f"centre {tuple(centre)} mm, radius {radius} mm",
             remedy="check the coordinate and its unit (mm, in the space of the data)",
-        )  # fmt: skip
+        )
     return inside

@@ -24,10 +24,26 @@ from .errors import EmptyFoldError, InputError
 from .flips import Signs, all_signs, random_signs
 from .foldnull import mean_dice
 from .folds import Fold, LeaveOneOut, Scheme
-from .groupmaps import Missing, bound_on_sum, filled, fold_sums, leave_out_maps, t_from_sums
-from .groupmaps import without_each
-from .masks import Cluster, MaskRule, Neighbourhood, Strongest, Threshold, distances
-from .masks import keep_clusters, strongest
+from .groupmaps import (
+    Missing,
+    bound_on_sum,
+    filled,
+    fold_sums,
+    leave_out_maps,
+    rows_with_data,
+    t_from_sums,
+    without_each,
+)
+from .masks import (
+    Cluster,
+    MaskRule,
+    Neighbourhood,
+    Strongest,
+    Threshold,
+    distances,
+    keep_clusters,
+    strongest,
+)
 from .roi import count_at_least, exchange_p, region_mean, studentised
 from .space import Space
 
@@ -148,9 +164,10 @@ class Procedure:
         for name, allowed in (("tail", TAILS), ("on_empty", ON_EMPTY)):
             if getattr(self, name) not in allowed:
                 raise InputError(
-                    f"unknown {name}", expected=f"one of {', '.join(allowed)}",
+                    f"unknown {name}",
+                    expected=f"one of {', '.join(allowed)}",
                     got=repr(getattr(self, name)),
-                )  # fmt: skip
+                )
         if (self.on_empty == "strongest") != (self.k > 0):
             raise InputError(
                 'on_empty = "strongest" and k go together',
@@ -158,9 +175,12 @@ class Procedure:
             )
 
     def prepare(
-        self, effects: Floats, labels: Sequence[str], space: Space,
+        self,
+        effects: Floats,
+        labels: Sequence[str],
+        space: Space,
         names: Sequence[str] | None = None,
-    ) -> Prepared:  # fmt: skip
+    ) -> Prepared:
         """Make the procedure ready on one stack.
 
         Parameters
@@ -189,9 +209,13 @@ class Prepared:
     """
 
     def __init__(
-        self, procedure: Procedure, effects: Floats, labels: Sequence[str], space: Space,
+        self,
+        procedure: Procedure,
+        effects: Floats,
+        labels: Sequence[str],
+        space: Space,
         names: Sequence[str] | None = None,
-    ) -> None:  # fmt: skip
+    ) -> None:
         if effects.shape != (len(labels), space.n_features):
             raise ValueError(
                 f"effects have shape {effects.shape}, the labels and the space "
@@ -229,21 +253,18 @@ class Prepared:
         n_rows, n_features = self._x.shape
         bounds = np.empty((n_features, len(self._folds)))
         lowest = np.empty(n_features)
-        sizes = np.array([[len(fold.selection)] for fold in self._folds], dtype=float)
-        critical = rule.critical(sizes)
         missing = self.procedure.missing
         least = np.array([[missing.least(len(fold.selection))] for fold in self._folds])
         for start in range(0, n_features, _BLOCK):
             block = slice(start, start + _BLOCK)
-            x, n = self._x[:, block], sizes
+            x = self._x[:, block]
+            present = None if self._present is None else self._present[:, block]
+            n = rows_with_data(present, self._folds)
             with np.errstate(over="ignore", invalid="ignore"):
                 Q = without_each(fold_sums(x, self._folds, square=True))
-                if self._present is not None:
-                    n = without_each(fold_sums(self._present[:, block], self._folds))
-                    critical = rule.critical(n)
-                bound = bound_on_sum(critical, n, Q)
+                bound = bound_on_sum(rule.critical(n), n, Q)
                 bound[np.isnan(bound)] = np.inf
-                if self._present is not None:
+                if present is not None:
                     bound[n < least] = np.inf
                 size = np.abs(x.astype(np.float64))
                 reach = fold_sums(size, self._folds)  # the most a fold can take off the sum
@@ -299,9 +320,8 @@ class Prepared:
 
     def _t_of(self, S: Floats, x: Floats, features: Ints) -> Floats:
         """(n_features, n_folds) t values, from the folds' sums."""
-        n: Floats = np.array([[len(fold.selection)] for fold in self._folds], dtype=float)
-        if self._present is not None:
-            n = without_each(fold_sums(self._present[:, features], self._folds))
+        present = None if self._present is None else self._present[:, features]
+        n = rows_with_data(present, self._folds)
         return t_from_sums(n, S, without_each(fold_sums(x, self._folds, square=True))).T
 
     def _strongest(
@@ -346,8 +366,7 @@ class Prepared:
         """Mean over the rows of each person, in the order of `people`."""
         if len(self.people) == len(values):
             return values
-        n: Floats = np.bincount(self._person)
-        means: Floats = np.bincount(self._person, weights=values) / n
+        means: Floats = np.bincount(self._person, weights=values) / np.bincount(self._person)
         return means
 
     # -- results ----------------------------------------------------------------------------
@@ -492,4 +511,4 @@ def held_out_rows(scheme: Scheme, labels: Sequence[str]) -> list[tuple[int, ...]
     return [fold.held_out for fold in scheme.folds(labels)]
 
 
-__all__ = ["Fold", "FlipTest", "Outcome", "Prepared", "Procedure", "held_out_rows"]
+__all__ = ["FlipTest", "Fold", "Outcome", "Prepared", "Procedure", "held_out_rows"]

@@ -97,9 +97,13 @@ def p_text(p: float) -> str:
 
 
 def cross_fitted_result(
-    ready: Prepared, names: tuple[str, str, str], n_flips: int, seed: int,
-    interval: str = "flips", progress: Callable[[int, int], None] | None = None,
-) -> tuple[RoiResult, Outcome, FlipTest]:  # fmt: skip
+    ready: Prepared,
+    names: tuple[str, str, str],
+    n_flips: int,
+    seed: int,
+    interval: str = "flips",
+    progress: Callable[[int, int], None] | None = None,
+) -> tuple[RoiResult, Outcome, FlipTest]:
     """Everything the cross-fitted plans may say: estimate, interval, whole-procedure p.
 
     Parameters
@@ -140,16 +144,33 @@ def cross_fitted_result(
         f"replicable effect somewhere {where}, not at any one voxel."
     )
     result = RoiResult(
-        roi=roi, plan=plan, rule=procedure.rule.describe(), search=search,
-        n_subjects=len(ready.people), estimate=outcome.estimate,
-        target="mean true effect over the fold masks actually used", biased=False,
-        interval=made, t=test.t, p=test.p, p_kind=kind, sided=sided, null=FLIP_NULL,
-        dz=outcome.estimate / deviation if deviation else None, n_flips=test.n_flips,
+        roi=roi,
+        plan=plan,
+        rule=procedure.rule.describe(),
+        search=search,
+        n_subjects=len(ready.people),
+        estimate=outcome.estimate,
+        target="mean true effect over the fold masks actually used",
+        biased=False,
+        interval=made,
+        t=test.t,
+        p=test.p,
+        p_kind=kind,
+        sided=sided,
+        null=FLIP_NULL,
+        dz=outcome.estimate / deviation if deviation else None,
+        n_flips=test.n_flips,
         p_error=None if test.exact else float(np.sqrt(test.p * (1 - test.p) / test.n_flips)),
-        n_folds=len(ready.folds), n_empty=len(outcome.empty), empty=outcome.empty,
-        replaced=outcome.replaced, dice=_known(outcome.dice), noise_dice=_known(test.noise_dice),
-        mask_sizes=outcome.sizes, coverage=min(outcome.coverage), sentence=sentence,
-    )  # fmt: skip
+        n_folds=len(ready.folds),
+        n_empty=len(outcome.empty),
+        empty=outcome.empty,
+        replaced=outcome.replaced,
+        dice=_known(outcome.dice),
+        noise_dice=_known(test.noise_dice),
+        mask_sizes=outcome.sizes,
+        coverage=min(outcome.coverage),
+        sentence=sentence,
+    )
     return result, outcome, test
 
 
@@ -168,39 +189,63 @@ def fixed_region_result(
     roi, plan, search = names
     interval = test.interval
     return RoiResult(
-        roi=roi, plan=plan, rule="the region as given", search=search, n_subjects=len(values),
-        estimate=test.mean, target="population mean in this region", biased=False,
-        interval=interval, t=test.t, p=test.p, p_kind="Student's t, two-sided",
-        sided="two-sided", null="the population mean in the region is zero", dz=test.dz,
-        mask_sizes=(size,), coverage=min(coverage),
+        roi=roi,
+        plan=plan,
+        rule="the region as given",
+        search=search,
+        n_subjects=len(values),
+        estimate=test.mean,
+        target="population mean in this region",
+        biased=False,
+        interval=interval,
+        t=test.t,
+        p=test.p,
+        p_kind="Student's t, two-sided",
+        sided="two-sided",
+        null="the population mean in the region is zero",
+        dz=test.dz,
+        mask_sizes=(size,),
+        coverage=min(coverage),
         sentence=(
             f"{roi}: mean {test.mean:.3g} in the a-priori region '{search}' (95 % interval "
             f"{interval.low:.3g} to {interval.high:.3g}), t({test.df}) = {test.t:.2f}, "
             f"{p_text(test.p)}, two-sided. Null: the population mean in this region is zero "
             "(near-normal values)."
         ),
-    )  # fmt: skip
+    )
 
 
 def exploratory_result(
-    values: Sequence[float], names: tuple[str, str, str], rule: str, size: int,
+    values: Sequence[float],
+    names: tuple[str, str, str],
+    rule: str,
+    size: int,
     coverage: Sequence[float],
-) -> RoiResult:  # fmt: skip
+) -> RoiResult:
     """A region chosen on the very data it is read from: the value, marked biased, and no more."""
     roi, plan, search = names
     estimate = float(np.mean(values)) if size else float("nan")
-    said = f"mean {estimate:.3g}, BIASED: the region was chosen" if size else (
-        "look found no region; a value would be BIASED, chosen"
-    )  # fmt: skip
+    said = (
+        f"mean {estimate:.3g}, BIASED: the region was chosen"
+        if size
+        else ("look found no region; a value would be BIASED, chosen")
+    )
     return RoiResult(
-        roi=roi, plan=plan, rule=rule, search=search, n_subjects=len(values), estimate=estimate,
-        target="none: chosen and read on the same data, so inflated by selection", biased=True,
-        mask_sizes=(size,), coverage=min(coverage),
+        roi=roi,
+        plan=plan,
+        rule=rule,
+        search=search,
+        n_subjects=len(values),
+        estimate=estimate,
+        target="none: chosen and read on the same data, so inflated by selection",
+        biased=True,
+        mask_sizes=(size,),
+        coverage=min(coverage),
         sentence=(
             f"{roi}: exploratory {said} on the data it is read from; "
             "no interval, no p-value and no error bar can be given."
         ),
-    )  # fmt: skip
+    )
 
 
 def _known(value: float) -> float | None:

@@ -101,9 +101,7 @@ def small_sample_factor(df: int) -> float:
     >>> round(small_sample_factor(9), 9)
     0.913874892
     """
-    return float(
-        np.exp(special.gammaln(df / 2) - special.gammaln((df - 1) / 2)) / np.sqrt(df / 2)
-    )
+    return float(np.exp(special.gammaln(df / 2) - special.gammaln((df - 1) / 2)) / np.sqrt(df / 2))
 
 
 def one_sample_t(values: npt.ArrayLike, level: float = 0.95) -> TTest:
@@ -136,10 +134,14 @@ def one_sample_t(values: npt.ArrayLike, level: float = 0.95) -> TTest:
     half = float(stats.t.ppf((1 + level) / 2, df)) * deviation / float(np.sqrt(len(x)))
     dz = mean / deviation if deviation else float(np.copysign(np.inf, mean)) if mean else 0.0
     return TTest(
-        mean, t, df, float(2 * stats.t.sf(abs(t), df)),
+        mean,
+        t,
+        df,
+        float(2 * stats.t.sf(abs(t), df)),
         Interval(mean - half, mean + half, "exact", "Student's t interval (near-normal values)"),
-        dz, dz * small_sample_factor(df),
-    )  # fmt: skip
+        dz,
+        dz * small_sample_factor(df),
+    )
 
 
 def exchange_p(observed: float, others: Floats, *, exact: bool) -> float:
@@ -200,10 +202,12 @@ def flip_interval(values: Floats, abs_t_quantile: float, level: float = 0.95) ->
     mean = float(values.mean())
     half = float(values.std(ddof=1)) / float(np.sqrt(len(values))) * abs_t_quantile
     return Interval(
-        mean - half, mean + half, "approximate",
+        mean - half,
+        mean + half,
+        "approximate",
         f"standard error x the {level:.0%} quantile of |t| over whole-procedure sign flips; "
         "two-sided, so it may include 0 when the one-sided p < .05",
-    )  # fmt: skip
+    )
 
 
 def jackknife_interval(estimate: float, without: Floats, level: float = 0.95) -> Interval:
@@ -228,10 +232,12 @@ def jackknife_interval(estimate: float, without: Floats, level: float = 0.95) ->
     error = float(np.sqrt((n - 1) / n * np.square(without - without.mean()).sum()))
     half = float(stats.t.ppf((1 + level) / 2, n - 1)) * error
     return Interval(
-        estimate - half, estimate + half, "conservative",
+        estimate - half,
+        estimate + half,
+        "conservative",
         "delete-one jackknife of the whole procedure; "
         "the interval is conservative and may include 0 when p < .05",
-    )  # fmt: skip
+    )
 
 
 def holm(p: Sequence[float]) -> list[float]:

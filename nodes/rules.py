@@ -229,7 +229,9 @@ class Meeting:
         n = count([mask, data]) if isinstance(data, Branch) or isinstance(mask, Branch) else 1
         if n is None:  # lengths disagree: everything against everything
             return [(joined(leaves(mask)), joined(leaves(data)))]
-        return [(joined(leaves(element(mask, i))), joined(leaves(element(data, i)))) for i in range(n)]
+        return [
+            (joined(leaves(element(mask, i))), joined(leaves(element(data, i)))) for i in range(n)
+        ]
 
     def rule(self, inputs: Inputs) -> Tree:
         """Value i touches mask i and data i, and carries the mark of their meeting."""

@@ -57,7 +57,7 @@ class Grid:
     def __init__(
         self, shape: tuple[int, int, int], affine: npt.ArrayLike, inside: Bools | None = None
     ) -> None:
-        self.shape = tuple(int(n) for n in shape)
+        self.shape: tuple[int, int, int] = (int(shape[0]), int(shape[1]), int(shape[2]))
         self.affine = np.asarray(affine, dtype=float)
         n_voxels = int(np.prod(self.shape))
         inside = np.ones(n_voxels, bool) if inside is None else np.asarray(inside, bool).ravel()
@@ -110,4 +110,5 @@ def offsets(connectivity: int) -> npt.NDArray[np.int64]:
     reach = {6: 1, 18: 2, 26: 3}[connectivity]
     steps = np.stack(np.meshgrid(*[[-1, 0, 1]] * 3, indexing="ij"), axis=-1).reshape(-1, 3)
     distance = np.abs(steps).sum(axis=1)
-    return steps[(distance > 0) & (distance <= reach)]
+    near: npt.NDArray[np.int64] = steps[(distance > 0) & (distance <= reach)]
+    return near

@@ -165,10 +165,14 @@ class Ancestry:
                 len(v) for k, v in values.items() if k not in trees and isinstance(v, list | tuple)
             }
             # The length is known when everything that has one agrees and nothing is opaque.
-            if len(lengths) != 1 or any(isinstance(t, Leaf) and not t.single for t in trees.values()):
+            if len(lengths) != 1 or any(
+                isinstance(t, Leaf) and not t.single for t in trees.values()
+            ):
                 whole = {k: joined(leaves(t), single=False) for k, t in trees.items()}
                 settings = {**inputs.settings, **values}
-                tree = _ruled(node.interface, name, Inputs({**rest, **whole}, settings, inputs.where))
+                tree = _ruled(
+                    node.interface, name, Inputs({**rest, **whole}, settings, inputs.where)
+                )
                 return joined(leaves(tree), single=False)
             made: list[Tree] = []
             for i in range(lengths.pop()):
@@ -182,11 +186,15 @@ class Ancestry:
                 else:
                     made.append(
                         _ruled(
-                            node.interface, name,
-                            Inputs({**rest, **items}, {**inputs.settings, **ith},
-                                   f"{inputs.where}[{i}]"),
+                            node.interface,
+                            name,
+                            Inputs(
+                                {**rest, **items},
+                                {**inputs.settings, **ith},
+                                f"{inputs.where}[{i}]",
+                            ),
                         )
-                    )  # fmt: skip
+                    )
             return Branch(made)
 
         trees = {k: inputs.trees[k] for k in iterated if k in inputs.trees}
@@ -236,5 +244,3 @@ def files_in(value: Any) -> list[str]:
     if isinstance(value, str | Path) and 0 < len(str(value)) < 4096 and "\n" not in str(value):
         return [str(value)] if Path(value).is_file() else []
     return []
-
-

@@ -59,8 +59,9 @@ def _command(function: Callable[..., None]) -> Callable[..., None]:
 
     wrapped.__name__, wrapped.__doc__ = function.__name__, function.__doc__
     wrapped.__click_params__ = [  # type: ignore[attr-defined]  # click's own place for options
-        *getattr(wrapped, "__click_params__", []), *getattr(function, "__click_params__", []),
-    ]  # fmt: skip
+        *getattr(wrapped, "__click_params__", []),
+        *getattr(function, "__click_params__", []),
+    ]
     return wrapped
 
 
@@ -101,9 +102,10 @@ class _Progress:
 @main.command()
 @click.argument("study_toml", type=click.Path(path_type=Path))
 @click.option(
-    "--work", type=click.Path(path_type=Path),
+    "--work",
+    type=click.Path(path_type=Path),
     help="Keep the engine's working folder here, so that a second run is faster.",
-)  # fmt: skip
+)
 @_command
 def run(study_toml: Path, work: Path | None, show: _Progress, as_json: bool) -> None:
     """Analyse a study and write its output folder."""
@@ -113,8 +115,11 @@ def run(study_toml: Path, work: Path | None, show: _Progress, as_json: bool) -> 
     result = run_study(settings, show.node, work)
     show.clear()
     if as_json:
-        click.echo(json.dumps({"output": str(result.output), "tests": result.tests}, allow_nan=False,
-                              default=str))  # fmt: skip
+        click.echo(
+            json.dumps(
+                {"output": str(result.output), "tests": result.tests}, allow_nan=False, default=str
+            )
+        )
         return
     _print_tests(settings, result.tests)
     click.echo(f"\nWritten to {result.output}\n{CAUTION}")
@@ -152,9 +157,13 @@ def check(study_toml: Path, show: _Progress, as_json: bool) -> None:
 @click.option("--output", type=click.Path(path_type=Path), help="File; default: standard output.")
 @_command
 def table(
-    folder: Path, pattern: str | None, suffix: str, output: Path | None, show: _Progress,
+    folder: Path,
+    pattern: str | None,
+    suffix: str,
+    output: Path | None,
+    show: _Progress,
     as_json: bool,
-) -> None:  # fmt: skip
+) -> None:
     """Write the study table of the effect maps below a folder.
 
     Paths are relative to the table's own folder (to the current one on standard output).
@@ -167,13 +176,21 @@ def table(
     text = table_text(rows)
     if output is not None:
         if output.exists():
-            raise InputError("table exists already", where=str(output),
-                             remedy="remove it, or name another file")  # fmt: skip
+            raise InputError(
+                "table exists already", where=str(output), remedy="remove it, or name another file"
+            )
         write_bytes(output.absolute(), text.encode())
     subjects = len({row.unit.sub for row in rows})
     if as_json:
-        click.echo(json.dumps({"maps": len(rows), "subjects": subjects,
-                               "output": None if output is None else str(output)}))  # fmt: skip
+        click.echo(
+            json.dumps(
+                {
+                    "maps": len(rows),
+                    "subjects": subjects,
+                    "output": None if output is None else str(output),
+                }
+            )
+        )
     elif output is None:
         click.echo(text, nl=False)
     else:
@@ -196,7 +213,9 @@ def demo(folder: Path, show: _Progress, as_json: bool) -> None:
     tests = {row["roi"]: row for row in result.tests}
     masks = folder / "results" / "masks"
     truth = {
-        name: truth_in([read_map(p)[0] != 0 for p in sorted(masks.glob(f"label-{name}_*_mask.nii.gz"))])
+        name: truth_in(
+            [read_map(p)[0] != 0 for p in sorted(masks.glob(f"label-{name}_*_mask.nii.gz"))]
+        )
         for name in PLACES
     }
     looked = {
@@ -212,18 +231,40 @@ def demo(folder: Path, show: _Progress, as_json: bool) -> None:
     if not refusal:
         raise SequesterError("the circular twin was not refused; please report this")
     if as_json:
-        click.echo(json.dumps({"truth": truth, "truth_in_circular": looked, "tests": result.tests,
-                               "refusal": refusal}, default=str))  # fmt: skip
+        click.echo(
+            json.dumps(
+                {
+                    "truth": truth,
+                    "truth_in_circular": looked,
+                    "tests": result.tests,
+                    "refusal": refusal,
+                },
+                default=str,
+            )
+        )
         return
-    rows = [["region", "chosen and read on all (BIASED)", "truth there", "held out, 95 % interval",
-             "truth there", "p"]]  # fmt: skip
+    rows = [
+        [
+            "region",
+            "chosen and read on all (BIASED)",
+            "truth there",
+            "held out, 95 % interval",
+            "truth there",
+            "p",
+        ]
+    ]
     for name in PLACES:
         row, look = tests[name], tests[f"{name}Look"]
-        rows.append([
-            name, f"{look['estimate']:.2f}", f"{looked[name]:.2f}",
-            f"{row['estimate']:.2f} [{row['interval_low']:.2f}, {row['interval_high']:.2f}]",
-            f"{truth[name]:.2f}", _p(row["p"]),
-        ])  # fmt: skip
+        rows.append(
+            [
+                name,
+                f"{look['estimate']:.2f}",
+                f"{looked[name]:.2f}",
+                f"{row['estimate']:.2f} [{row['interval_low']:.2f}, {row['interval_high']:.2f}]",
+                f"{truth[name]:.2f}",
+                _p(row["p"]),
+            ]
+        )
     click.echo(
         "A made-up study: 24 subjects x 4 runs. Arbor responds strongly, Brook weakly, and\n"
         "Cinder is noise: there is nothing in it to find.\n"
@@ -240,16 +281,26 @@ def demo(folder: Path, show: _Progress, as_json: bool) -> None:
 
 def _plain(finding: Finding, study: Study) -> dict[str, Any]:
     return {
-        "kind": finding.kind, "node": finding.node, "item": finding.item,
-        "verdict": finding.verdict, "level": finding.level, "allowed": finding.allowed,
+        "kind": finding.kind,
+        "node": finding.node,
+        "item": finding.item,
+        "verdict": finding.verdict,
+        "level": finding.level,
+        "allowed": finding.allowed,
         "shared": [str(u) for u in study.table.units_of(finding.shared)],
-        "mask_path": list(finding.mask_path), "data_path": list(finding.data_path),
-        "reason": finding.reason, "cure": finding.cure,
-    }  # fmt: skip
+        "mask_path": list(finding.mask_path),
+        "data_path": list(finding.data_path),
+        "reason": finding.reason,
+        "cure": finding.cure,
+    }
 
 
 def _verdict(finding: Finding) -> str:
-    return f"{finding.verdict} (values marked biased)" if finding.verdict == "leak" else finding.verdict
+    return (
+        f"{finding.verdict} (values marked biased)"
+        if finding.verdict == "leak"
+        else finding.verdict
+    )
 
 
 def _p(p: float | None) -> str:
@@ -258,21 +309,38 @@ def _p(p: float | None) -> str:
 
 def _print_tests(settings: Settings, tests: list[dict[str, Any]]) -> None:
     left = len(settings.left_out)
-    click.echo(f"{settings.name}: {len(settings.rows)} subjects"
-               + (f", {left} maps left out (reasons in the table)" if left else "") + "\n")  # fmt: skip
-    rows = [["roi", "plan", "estimate", "95 % interval", "dz", "p", "p Holm", "empty", "Dice (noise)"]]
+    click.echo(
+        f"{settings.name}: {len(settings.rows)} subjects"
+        + (f", {left} maps left out (reasons in the table)" if left else "")
+        + "\n"
+    )
+    rows = [
+        ["roi", "plan", "estimate", "95 % interval", "dz", "p", "p Holm", "empty", "Dice (noise)"]
+    ]
     for row in tests:
         if row["biased"]:
             value = "-" if row["estimate"] != row["estimate"] else f"{row['estimate']:.3g}"
             rows.append([row["roi"], row["plan"], f"{value} BIASED", *["-"] * 6])
             continue
-        folds = "-" if row["n_folds"] is None else f"{row['n_empty'] + row['n_replaced']}/{row['n_folds']}"
+        folds = (
+            "-"
+            if row["n_folds"] is None
+            else f"{row['n_empty'] + row['n_replaced']}/{row['n_folds']}"
+        )
         dice = "-" if row["dice"] is None else f"{row['dice']:.2f} ({row['noise_dice']:.2f})"
-        rows.append([
-            row["roi"], row["plan"], f"{row['estimate']:.3g}",
-            f"{row['interval_low']:.3g} to {row['interval_high']:.3g} ({row['interval_kind']})",
-            f"{row['dz']:.2f}", _p(row["p"]), _p(row["p_holm"]), folds, dice,
-        ])  # fmt: skip
+        rows.append(
+            [
+                row["roi"],
+                row["plan"],
+                f"{row['estimate']:.3g}",
+                f"{row['interval_low']:.3g} to {row['interval_high']:.3g} ({row['interval_kind']})",
+                f"{row['dz']:.2f}",
+                _p(row["p"]),
+                _p(row["p_holm"]),
+                folds,
+                dice,
+            ]
+        )
     _print_table(rows)
     for row in tests:
         click.echo("\n" + textwrap.fill(row["sentence"], 96))

@@ -51,7 +51,7 @@ class Place:
 
 PLACES = {
     "Arbor": Place((-36.0, 12.0, 21.0), (21.0, 18.0, 18.0), (12.0, 9.0, 9.0), 1.0),
-    "Brook": Place((36.0, -48.0, 15.0), (18.0, 21.0, 18.0), (9.0, 12.0, 9.0), 0.6),
+    "Brook": Place((36.0, -48.0, 15.0), (18.0, 21.0, 18.0), (9.0, 12.0, 9.0), 0.7),
     "Cinder": Place((3.0, -69.0, -12.0), (18.0, 18.0, 15.0), (0.0, 0.0, 0.0), 0.0),
 }
 
@@ -132,13 +132,24 @@ def _settings(names: Sequence[str], output: str, *, circular: bool) -> str:
     for name in names:
         if circular:
             # Asking for a test of a circular region: the guard refuses.
-            parts.append(_LOOK.format(name=name, look="", plan="exploratory", test='\ntest = "t"',
-                                      origin=_ORIGIN, flips=""))  # fmt: skip
+            parts.append(
+                _LOOK.format(
+                    name=name,
+                    look="",
+                    plan="exploratory",
+                    test='\ntest = "t"',
+                    origin=_ORIGIN,
+                    flips="",
+                )
+            )
         else:
             for look, plan in (("", "leave-one-subject-out"), ("Look", "exploratory")):
                 flips = "" if look else f"\nflips = {FLIPS}"
-                parts.append(_LOOK.format(name=name, look=look, plan=plan, test="",
-                                          origin=_ORIGIN, flips=flips))  # fmt: skip
+                parts.append(
+                    _LOOK.format(
+                        name=name, look=look, plan=plan, test="", origin=_ORIGIN, flips=flips
+                    )
+                )
     return "".join(parts)
 
 
@@ -161,12 +172,14 @@ def write_demo(folder: Path, seed: int = SEED) -> tuple[Path, Path]:
     InputError
         When the folder holds something else.
     """
-    if folder.exists() and (not folder.is_dir() or any(folder.iterdir())):
-        if not (folder / "table.tsv").is_file() or not (folder / "circular.toml").is_file():
-            raise InputError(
-                "demo folder holds something else", where=str(folder),
-                expected="a new folder, or an earlier demo", remedy="name another folder",
-            )  # fmt: skip
+    ours = (folder / "table.tsv").is_file() and (folder / "circular.toml").is_file()
+    if folder.exists() and not ours and (not folder.is_dir() or any(folder.iterdir())):
+        raise InputError(
+            "demo folder holds something else",
+            where=str(folder),
+            expected="a new folder, or an earlier demo",
+            remedy="name another folder",
+        )
     grid, rows = geometry(), []
     (folder / "regions").mkdir(parents=True, exist_ok=True)
     for name in PLACES:

@@ -28,7 +28,7 @@ from nipype.pipeline.plugins.linear import LinearPlugin
 from ..nodes.errors import Refused, SequesterError
 from ..nodes.interfaces.base import kept_error
 from ..nodes.interfaces.generic import settings_of
-from ..nodes.rules import Tree, joined, leaves
+from ..nodes.rules import joined, leaves
 from ..nodes.touch import Touch
 from .ancestry import Ancestry, files_in, meetings_of, node_name
 from .judge import Finding, judge
@@ -185,7 +185,6 @@ class GuardPlugin(PluginBase):
 
 
 def _union(tree: Any) -> Touch:
-
 
     return Touch() if tree is None else joined(leaves(tree)).touch
 

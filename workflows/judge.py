@@ -128,9 +128,7 @@ def _meet(
             "with another origin), or read it as exploratory: a value without interval and p"
         )
     elif choosers & tested:
-        shared = sum(
-            1 << n for n in table.numbers(of_mask) if table.people_of(1 << n) & tested
-        )
+        shared = sum(1 << n for n in table.numbers(of_mask) if table.people_of(1 << n) & tested)
         if len(choosers) == 1 and choosers == tested:
             level, reason = "run", "the mask was chosen on other runs of this one subject"
             shared = 0
@@ -161,13 +159,23 @@ def _meet(
     people_bit = of_data & -of_data if verdict == LEAK and level else 0
     towards = (data_bit & -data_bit) or people_bit
     return Finding(
-        "extraction", name, item, verdict, level, verdict == APART or (verdict == LEAK and biased),
-        of_mask, of_data, mask.touch.geometry, shared if verdict == LEAK else 0,
+        "extraction",
+        name,
+        item,
+        verdict,
+        level,
+        verdict == APART or (verdict == LEAK and biased),
+        of_mask,
+        of_data,
+        mask.touch.geometry,
+        shared if verdict == LEAK else 0,
         tuple(sorted(mask.touch.origins)),
         tuple(path_to(mask, bit)) if verdict == LEAK else (),
         tuple(path_to(data, towards)) if verdict == LEAK else (),
-        _place(mask), reason, cure,
-    )  # fmt: skip
+        _place(mask),
+        reason,
+        cure,
+    )
 
 
 def _place(leaf: Leaf) -> str:
@@ -203,21 +211,33 @@ def _statistic(ancestry: Ancestry, node: object, statistic: Statistic) -> Findin
             if n > 3
             else ""
         )
-        verdict, reason = LEAK, (
-            f"the {n} values are cross-fitted: each mask was chosen on the other values' data, "
-            "so the values are correlated and this statistic rejects a true null far more often "
-            f"than it says{rate}"
+        verdict, reason = (
+            LEAK,
+            (
+                f"the {n} values are cross-fitted: each mask was chosen on the other values' data, "
+                "so they are correlated and this statistic rejects a true null far more often than "
+                f"it says{rate}"
+            ),
         )
         cure = statistic.cure
     elif not marks and whole.touch.unknown:
-        verdict, reason = UNPROVEN, (
-            f"nobody has declared what {', '.join(sorted(whole.touch.unknown)[:3])} derives from"
+        verdict, reason = (
+            UNPROVEN,
+            (f"nobody has declared what {', '.join(sorted(whole.touch.unknown)[:3])} derives from"),
         )
         cure = "state its origin in the study file"
     return Finding(
-        "statistic", name, None, verdict, _weakest(marks, table) if verdict == APART else "",
-        verdict == APART, mask_units, data_units, reason=reason, cure=cure,
-    )  # fmt: skip
+        "statistic",
+        name,
+        None,
+        verdict,
+        _weakest(marks, table) if verdict == APART else "",
+        verdict == APART,
+        mask_units,
+        data_units,
+        reason=reason,
+        cure=cure,
+    )
 
 
 def _weakest(marks: frozenset[Extraction], table: UnitTable) -> str:

@@ -128,27 +128,34 @@ def claimed(target: Path) -> Iterator[Path]:
     """
     if target.exists() and not target.is_dir():
         raise InputError(
-            "output is a file", where=str(target), expected="a folder, or nothing yet",
+            "output is a file",
+            where=str(target),
+            expected="a folder, or nothing yet",
             remedy="name another output folder",
-        )  # fmt: skip
+        )
     if target.is_dir() and any(target.iterdir()) and not (target / MANIFEST).is_file():
         raise InputError(
-            "output folder holds something else", where=str(target),
+            "output folder holds something else",
+            where=str(target),
             expected=f"nothing, or an earlier run ({MANIFEST})",
             remedy="name another output folder; nothing was changed",
-        )  # fmt: skip
+        )
     try:
         target.parent.mkdir(parents=True, exist_ok=True)
         lock = FileLock(target.parent / f".{target.name}.lock")
         lock.acquire(timeout=0)
     except Timeout:
         raise InputError(
-            "output folder in use", where=str(target), got="another run is writing to it",
+            "output folder in use",
+            where=str(target),
+            got="another run is writing to it",
             remedy="wait for it, or name another output folder",
         ) from None
     except OSError as error:
         raise InputError(
-            "output folder cannot be made", where=str(target), got=str(error),
+            "output folder cannot be made",
+            where=str(target),
+            got=str(error),
             remedy="check the path and its permissions",
         ) from error
     # The lock is held, so whatever lies here was left by a run that was killed.
@@ -165,7 +172,9 @@ def claimed(target: Path) -> Iterator[Path]:
         stage.rename(target)
     except OSError as error:
         raise InputError(
-            "output cannot be written", where=str(target), got=os.strerror(error.errno or 0),
+            "output cannot be written",
+            where=str(target),
+            got=os.strerror(error.errno or 0),
             remedy="make room, or name another output folder; earlier results are untouched",
         ) from error
     finally:
@@ -200,21 +209,27 @@ def write_all(
         if output.overlap is not None:
             name = f"label-{output.roi.name}_desc-foldoverlap_probseg.nii.gz"
             shutil.copyfile(output.overlap, masks / name)
-            _sidecar(masks / name, {
-                "Description": "Share of the folds whose mask holds the voxel.",
-                "Sources": [f"bids::masks/{mask}" for mask, _ in output.masks],
-            })  # fmt: skip
+            _sidecar(
+                masks / name,
+                {
+                    "Description": "Share of the folds whose mask holds the voxel.",
+                    "Sources": [f"bids::masks/{mask}" for mask, _ in output.masks],
+                },
+            )
     _table(stage / "roi_values.tsv", VALUE_COLUMNS, _value_rows(settings, outputs))
     tests = _test_rows(settings, outputs, findings)
     _table(stage / "roi_tests.tsv", TEST_COLUMNS, tests)
     _table(stage / "touches.tsv", TOUCH_COLUMNS, _touch_rows(settings.study, findings))
-    write_json(stage / "dataset_description.json", {
-        "Name": f"{settings.name}: region-of-interest statistics",
-        "BIDSVersion": "1.9.0",
-        "DatasetType": "derivative",
-        "GeneratedBy": [{"Name": "sequester", "Version": version("sequester")}],
-        "DatasetLinks": {"study": os.path.relpath(settings.root, settings.output)},
-    })  # fmt: skip
+    write_json(
+        stage / "dataset_description.json",
+        {
+            "Name": f"{settings.name}: region-of-interest statistics",
+            "BIDSVersion": "1.9.0",
+            "DatasetType": "derivative",
+            "GeneratedBy": [{"Name": "sequester", "Version": version("sequester")}],
+            "DatasetLinks": {"study": os.path.relpath(settings.root, settings.output)},
+        },
+    )
     _manifest(stage, settings)
     return tests
 
@@ -244,12 +259,16 @@ def _value_rows(settings: Settings, outputs: Sequence[RoiOutput]) -> Iterator[di
     for output in outputs:
         for i, (label, _) in enumerate(settings.rows):
             yield {
-                "roi": output.roi.name, "plan": output.roi.plan, "sub": label,
-                "value": output.values[i], "mask": output.mask_of_row[i],
+                "roi": output.roi.name,
+                "plan": output.roi.plan,
+                "sub": label,
+                "value": output.values[i],
+                "mask": output.mask_of_row[i],
                 "mask_voxels": output.sizes[i],
                 "mask_mm3": output.sizes[i] * output.record["voxel_mm3"],
-                "coverage": output.coverage[i], "biased": output.record["biased"],
-            }  # fmt: skip
+                "coverage": output.coverage[i],
+                "biased": output.record["biased"],
+            }
 
 
 def _test_rows(
@@ -263,12 +282,13 @@ def _test_rows(
         levels = {f.level for f in met}
         row = {name: record.get(name) for name in TEST_COLUMNS}
         row |= {
-            "interval_low": interval.get("low"), "interval_high": interval.get("high"),
+            "interval_low": interval.get("low"),
+            "interval_high": interval.get("high"),
             "interval_kind": interval.get("kind"),
             "n_replaced": None if record["n_folds"] is None else len(record["replaced"]),
             "level": "run" if "run" in levels else "subject" if "subject" in levels else None,
             "verdict": worst[0].verdict if worst else None,
-        }  # fmt: skip
+        }
         rows.append(row)
     return rows
 
@@ -285,13 +305,16 @@ def _touch_rows(study: Study, findings: Sequence[Finding]) -> Iterator[dict[str,
             inside, outside = table.units_of(bits), table.units_of(table.everything & ~bits)
             complement = len(outside) < len(inside)
             yield {
-                "mask": finding.mask_place, "extraction": where, "role": role,
+                "mask": finding.mask_place,
+                "extraction": where,
+                "role": role,
                 "encoding": "all_but" if complement else "units",
                 "touched": " ".join(map(str, outside if complement else inside)),
                 "tested": " ".join(map(str, table.units_of(finding.data_units))),
-                "origin": "; ".join(finding.origins), "verdict": finding.verdict,
+                "origin": "; ".join(finding.origins),
+                "verdict": finding.verdict,
                 "level": finding.level,
-            }  # fmt: skip
+            }
 
 
 def _table(path: Path, columns: dict[str, str], rows: Any) -> None:
@@ -319,22 +342,30 @@ def _manifest(stage: Path, settings: Settings) -> None:
     outside = [f for origin in study.origins for f in origin.files]
     inputs = [row.path for _, runs in settings.rows for row in runs] + outside
     files = sorted(p for p in stage.rglob("*") if p.is_file())
-    write_json(stage / MANIFEST, {
-        "study": settings.name,
-        "settings_sha256": settings.digest,
-        "seed": settings.seed,
-        "versions": {
-            "sequester": version("sequester"), "python": platform.python_version(),
-            **{name: version(name) for name in _DEPENDENCIES},
+    write_json(
+        stage / MANIFEST,
+        {
+            "study": settings.name,
+            "settings_sha256": settings.digest,
+            "seed": settings.seed,
+            "versions": {
+                "sequester": version("sequester"),
+                "python": platform.python_version(),
+                **{name: version(name) for name in _DEPENDENCIES},
+            },
+            "inputs": {path: digest(settings.root / path) for path in sorted(set(inputs))},
+            "left_out": {row.name: row.exclude_reason for row in settings.left_out},
+            "origins": [
+                {
+                    "source": o.source,
+                    "files": list(o.files),
+                    "derived_from": [str(u) for u in o.derived_from],
+                }
+                for o in study.origins
+            ],
+            "outputs": {str(p.relative_to(stage)): digest(p) for p in files},
         },
-        "inputs": {path: digest(settings.root / path) for path in sorted(set(inputs))},
-        "left_out": {row.name: row.exclude_reason for row in settings.left_out},
-        "origins": [
-            {"source": o.source, "files": list(o.files), "derived_from": [str(u) for u in o.derived_from]}
-            for o in study.origins
-        ],
-        "outputs": {str(p.relative_to(stage)): digest(p) for p in files},
-    })  # fmt: skip
+    )
 
 
 def find_nodes(graph: Any) -> dict[str, Any]:

@@ -52,17 +52,28 @@ def region_node(region: Region, name: str, reference: str, root: Path) -> Node |
         return node(GivenMask(), name, in_file=path, reference=reference)
     if region.centre is not None:
         return node(
-            SphereMask(), name, reference=reference, centre=region.centre, radius=region.radius,
+            SphereMask(),
+            name,
+            reference=reference,
+            centre=region.centre,
+            radius=region.radius,
             origin=region.origin,
-        )  # fmt: skip
+        )
     return None
 
 
 def leave_one_subject_out(
-    name: str, procedure: Procedure, labels: Sequence[str], search: Node | None = None,
-    search_name: str = "whole map", n_flips: int = 4999, seed: int = 0, interval: str = "flips",
-    test: str = "whole-procedure", mem_gb: float = 1.0,
-) -> Workflow:  # fmt: skip
+    name: str,
+    procedure: Procedure,
+    labels: Sequence[str],
+    search: Node | None = None,
+    search_name: str = "whole map",
+    n_flips: int = 4999,
+    seed: int = 0,
+    interval: str = "flips",
+    test: str = "whole-procedure",
+    mem_gb: float = 1.0,
+) -> Workflow:
     """Choose a region without each subject in turn, read it there, test the whole procedure.
 
     Parameters
@@ -116,9 +127,16 @@ def leave_one_subject_out(
     names = (name, LEAVE_ONE_OUT, search_name)
     if test == "whole-procedure":
         flips = node(
-            FlipTest(), "test", mem_gb, labels=labels, procedure=procedure, n_flips=n_flips,
-            seed=seed, interval=interval, names=names,
-        )  # fmt: skip
+            FlipTest(),
+            "test",
+            mem_gb,
+            labels=labels,
+            procedure=procedure,
+            n_flips=n_flips,
+            seed=seed,
+            interval=interval,
+            names=names,
+        )
         workflow.connect(
             [
                 (start, flips, [("effects", "in_files")]),
@@ -144,9 +162,13 @@ def _fixed_test(workflow: Workflow, extract: Node, end: Node, names: tuple[str, 
 
 
 def a_priori(
-    name: str, labels: Sequence[str], region: Node, region_name: str, missing: Any = None,
+    name: str,
+    labels: Sequence[str],
+    region: Node,
+    region_name: str,
+    missing: Any = None,
     test: str = "t",
-) -> Workflow:  # fmt: skip
+) -> Workflow:
     """Read a region that was fixed beforehand, and test its mean.
 
     Parameters
@@ -177,9 +199,14 @@ def a_priori(
 
 
 def exploratory(
-    name: str, procedure: Procedure, labels: Sequence[str], search: Node | None = None,
-    search_name: str = "whole map", test: str = "none", mem_gb: float = 1.0,
-) -> Workflow:  # fmt: skip
+    name: str,
+    procedure: Procedure,
+    labels: Sequence[str],
+    search: Node | None = None,
+    search_name: str = "whole map",
+    test: str = "none",
+    mem_gb: float = 1.0,
+) -> Workflow:
     """Choose a region on all data and read it on the same data: a value marked biased.
 
     Parameters
@@ -198,13 +225,20 @@ def exploratory(
     start, end = _ends(workflow, ["mask_files", "values", "record_file"])
     group = node(GroupMap(), "group", mem_gb, missing=procedure.missing)
     choose = node(
-        ChooseMask(), "choose", rule=procedure.rule, k=procedure.k,
-        on_empty=procedure.on_empty, negative=procedure.tail == "negative",
-    )  # fmt: skip
+        ChooseMask(),
+        "choose",
+        rule=procedure.rule,
+        k=procedure.k,
+        on_empty=procedure.on_empty,
+        negative=procedure.tail == "negative",
+    )
     extract = node(
-        Extract(), "extract", labels=list(labels), missing=procedure.missing,
+        Extract(),
+        "extract",
+        labels=list(labels),
+        missing=procedure.missing,
         exploratory=test == "none",
-    )  # fmt: skip
+    )
     workflow.connect(
         [
             (start, group, [("effects", "in_files")]),
@@ -233,16 +267,21 @@ def study_workflow(settings: Settings, base_dir: Path) -> Workflow:
     """
     workflow = Workflow(name=settings.name, base_dir=str(base_dir))
     workflow.config["execution"] = {
-        "crashdump_dir": str(base_dir), "create_report": "false", "stop_on_first_crash": "true",
+        "crashdump_dir": str(base_dir),
+        "create_report": "false",
+        "stop_on_first_crash": "true",
         "remove_unnecessary_outputs": "false",
-    }  # fmt: skip
+    }
     rows, root = settings.rows, settings.root
     paths = [[str(root / row.path) for row in runs] for _, runs in rows]
     maps = node(
-        SubjectMaps(), "maps", in_files=paths, labels=[label for label, _ in rows],
+        SubjectMaps(),
+        "maps",
+        in_files=paths,
+        labels=[label for label, _ in rows],
         volumes=[[-1 if r.volume is None else r.volume for r in runs] for _, runs in rows],
         missing=settings.missing,
-    )  # fmt: skip
+    )
     people = [runs[0].person for _, runs in rows]
     for roi in settings.rois:
         where = region_node(roi.region, "region", paths[0][0], root)
@@ -260,6 +299,13 @@ def _plan(roi: Roi, people: list[str], where: Node | None, settings: Settings) -
     if roi.plan == EXPLORATORY:
         return exploratory(name, roi.procedure, people, where, search, roi.test)
     return leave_one_subject_out(
-        name, roi.procedure, people, where, search, roi.n_flips, settings.seed, roi.interval,
+        name,
+        roi.procedure,
+        people,
+        where,
+        search,
+        roi.n_flips,
+        settings.seed,
+        roi.interval,
         roi.test,
-    )  # fmt: skip
+    )

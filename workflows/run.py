@@ -64,23 +64,28 @@ def verify(settings: Settings) -> None:
             total = n_volumes(path, image)
             if row.volume is not None and row.volume >= total:
                 raise InputError(
-                    "no such volume", where=str(path), expected=f"0 to {total - 1}",
+                    "no such volume",
+                    where=str(path),
+                    expected=f"0 to {total - 1}",
                     got=str(row.volume),
-                )  # fmt: skip
+                )
             if row.volume is None and total > 1:
                 raise InputError(
-                    "4-D file without a volume number", where=str(path), got=f"{total} volumes",
+                    "4-D file without a volume number",
+                    where=str(path),
+                    got=f"{total} volumes",
                     remedy="fill the table's volume column (counting from 0)",
-                )  # fmt: skip
+                )
             first = first or (str(path), geometry_of(image))
             check_same_grid(first, [(str(path), geometry_of(image))])
             key = (digest(path), row.volume)
             if seen.setdefault(key, row.name) != row.name:
                 raise InputError(
-                    "identical files under two names", where=str(path),
+                    "identical files under two names",
+                    where=str(path),
                     got=f"the same bytes as {seen[key]}",
                     remedy="one of the two rows of the study table names the wrong file",
-                )  # fmt: skip
+                )
     assert first is not None, "settings hold at least one row"
     for roi in settings.rois:
         if roi.region.mask:
@@ -192,9 +197,10 @@ def _collect(roi: Roi, settings: Settings, nodes: dict[str, Any]) -> RoiOutput:
         names = [f"label-{roi.name}_desc-without{_alnum(f)}_mask.nii.gz" for f in chosen.fold_names]
         if len(set(names)) != len(names):
             raise InputError(
-                "subject labels that differ only in punctuation", got=", ".join(chosen.fold_names),
+                "subject labels that differ only in punctuation",
+                got=", ".join(chosen.fold_names),
                 remedy="BIDS labels are letters and digits; rename them in the table",
-            )  # fmt: skip
+            )
         masks = list(zip(names, map(Path, chosen.mask_files), strict=True))
         of_file = {str(path): name for name, path in masks}
         mask_of_row = [of_file[path] for path in chosen.row_masks]
@@ -242,4 +248,3 @@ def _searched(output: RoiOutput, settings: Settings) -> Any:
     geometry = geometry_of(open_image(output.masks[0][1]))
     grid = Grid(geometry.shape, geometry.affine)
     return grid.filled(sphere(grid, region.centre, region.radius)).astype(bool)
-

@@ -34,12 +34,21 @@ _KEYS = {
     "data": {"select", "zeros_are_missing", "min_fraction"},
     "origin": {"source", "files", "derived_from"},
     "roi": {
-        "name", "plan", "search", "region", "rule", "tail", "on_empty", "k", "flips", "interval",
+        "name",
+        "plan",
+        "search",
+        "region",
+        "rule",
+        "tail",
+        "on_empty",
+        "k",
+        "flips",
+        "interval",
         "test",
     },
     "rule": {"kind", "height", "p", "connectivity", "min_size", "pick", "near", "k"},
     "region": {"mask", "centre", "radius", "origin", "derived_from"},
-}  # fmt: skip
+}
 
 
 @dataclass(frozen=True)
@@ -142,10 +151,13 @@ class _Reader:
             if key not in _KEYS[section]:
                 raise InputError(
                     f"unknown key {key!r}" + (f" in {section}" if section else ""),
-                    where=self.where(key), expected="one of " + ", ".join(sorted(_KEYS[section])),
-                )  # fmt: skip
+                    where=self.where(key),
+                    expected="one of " + ", ".join(sorted(_KEYS[section])),
+                )
 
-    def get(self, table: dict[str, Any], key: str, kind: type | tuple[type, ...], default: Any) -> Any:
+    def get(
+        self, table: dict[str, Any], key: str, kind: type | tuple[type, ...], default: Any
+    ) -> Any:
         """A value of a type, or the default; `...` as default makes it mandatory."""
         if key not in table:
             if default is ...:
@@ -153,11 +165,15 @@ class _Reader:
             return default
         value = table[key]
         if not isinstance(value, kind) or (isinstance(value, bool) and kind is not bool):
-            names = kind.__name__ if isinstance(kind, type) else " or ".join(k.__name__ for k in kind)
+            names = (
+                kind.__name__ if isinstance(kind, type) else " or ".join(k.__name__ for k in kind)
+            )
             raise InputError(
-                f"{key} has the wrong type", where=self.where(key), expected=names,
+                f"{key} has the wrong type",
+                where=self.where(key),
+                expected=names,
                 got=f"{type(value).__name__} {value!r}",
-            )  # fmt: skip
+            )
         return value
 
     def one_of(self, table: dict[str, Any], key: str, allowed: Iterable[str], default: Any) -> str:
@@ -165,9 +181,11 @@ class _Reader:
         value = self.get(table, key, str, default)
         if value not in allowed:
             raise InputError(
-                f"unknown {key}", where=self.where(key), expected="one of " + ", ".join(allowed),
+                f"unknown {key}",
+                where=self.where(key),
+                expected="one of " + ", ".join(allowed),
                 got=repr(value),
-            )  # fmt: skip
+            )
         return str(value)
 
 
@@ -206,20 +224,28 @@ def read_settings(path: str | Path) -> Settings:
     study = Study(root, plain.rows, origins, plain.columns)
     rows, left_out = _selected(read, study, read.get(data, "select", dict, {}))
     return Settings(
-        name=_label(read, read.get(head, "name", str, ...), "name"), root=root,
+        name=_label(read, read.get(head, "name", str, ...), "name"),
+        root=root,
         output=root / read.get(head, "output", str, "results"),
-        seed=read.get(head, "seed", int, 0), missing=missing, study=study, rows=rows,
-        left_out=left_out, rois=rois, digest=digest_text(text),
-    )  # fmt: skip
+        seed=read.get(head, "seed", int, 0),
+        missing=missing,
+        study=study,
+        rows=rows,
+        left_out=left_out,
+        rois=rois,
+        digest=digest_text(text),
+    )
 
 
 def _label(read: _Reader, value: str, key: str) -> str:
     """BIDS labels, which names become part of, are letters and digits."""
     if not re.fullmatch(r"[A-Za-z0-9]+", value):
         raise InputError(
-            f"{key} is no label", where=read.where(key), expected="letters and digits only",
+            f"{key} is no label",
+            where=read.where(key),
+            expected="letters and digits only",
             got=repr(value),
-        )  # fmt: skip
+        )
     return value
 
 
@@ -238,9 +264,11 @@ def _point(read: _Reader, table: dict[str, Any], key: str) -> tuple[float, float
         return None
     if len(value) != 3 or not all(isinstance(x, int | float) for x in value):
         raise InputError(
-            f"{key} is no coordinate", where=read.where(key), expected="[x, y, z] in mm",
+            f"{key} is no coordinate",
+            where=read.where(key),
+            expected="[x, y, z] in mm",
             got=str(value),
-        )  # fmt: skip
+        )
     return float(value[0]), float(value[1]), float(value[2])
 
 
@@ -249,15 +277,17 @@ def _region(read: _Reader, table: dict[str, Any], key: str) -> Region:
     mask, centre = read.get(table, "mask", str, ""), _point(read, table, "centre")
     if bool(mask) == (centre is not None):
         raise InputError(
-            f"{key} needs either a mask or a centre and radius", where=read.where(key),
+            f"{key} needs either a mask or a centre and radius",
+            where=read.where(key),
             got=str(table),
-        )  # fmt: skip
+        )
     origin = read.get(table, "origin", str, "")
     if not origin.strip():
         raise InputError(
-            f"{key} without an origin", where=read.where(key),
+            f"{key} without an origin",
+            where=read.where(key),
             remedy='state where it comes from, with a source: origin = "..."',
-        )  # fmt: skip
+        )
     radius = float(read.get(table, "radius", (int, float), 0 if mask else ...))
     return Region(origin.strip(), mask, centre, radius)
 
@@ -273,9 +303,10 @@ def _rule(read: _Reader, table: dict[str, Any]) -> MaskRule:
     for key in table:
         if key not in {*allowed, "kind"}:
             raise InputError(
-                f"key {key!r} does not go with rule kind {kind!r}", where=read.where(key),
+                f"key {key!r} does not go with rule kind {kind!r}",
+                where=read.where(key),
                 expected="one of " + ", ".join(sorted(allowed)),
-            )  # fmt: skip
+            )
     if kind == "strongest":
         return Strongest(read.get(table, "k", int, ...))
     height = read.get(table, "height", (int, float), None)
@@ -283,9 +314,13 @@ def _rule(read: _Reader, table: dict[str, Any]) -> MaskRule:
     if kind == "threshold":
         return Threshold(height, p)
     return Cluster(
-        height, p, read.get(table, "connectivity", int, 18), read.get(table, "min_size", int, 1),
-        read.get(table, "pick", str, "largest"), _point(read, table, "near"),
-    )  # fmt: skip
+        height,
+        p,
+        read.get(table, "connectivity", int, 18),
+        read.get(table, "min_size", int, 1),
+        read.get(table, "pick", str, "largest"),
+        _point(read, table, "near"),
+    )
 
 
 def _roi(read: _Reader, table: dict[str, Any], missing: Missing) -> Roi:
@@ -293,7 +328,9 @@ def _roi(read: _Reader, table: dict[str, Any], missing: Missing) -> Roi:
     name = _label(read, read.get(table, "name", str, ...), "name")
     plan = read.one_of(table, "plan", PLANS, ...)
     given = plan == A_PRIORI
-    wrong = {"search", "rule", "tail", "on_empty", "k", "flips", "interval"} if given else {"region"}
+    wrong = (
+        {"search", "rule", "tail", "on_empty", "k", "flips", "interval"} if given else {"region"}
+    )
     for key in table:
         if key in wrong:
             raise InputError(f"key {key!r} does not go with plan {plan!r}", where=read.where(key))
@@ -303,16 +340,23 @@ def _roi(read: _Reader, table: dict[str, Any], missing: Missing) -> Roi:
     procedure = None
     if not given:
         procedure = Procedure(
-            rule=_rule(read, read.get(table, "rule", dict, ...)), scheme=LeaveOneOut(),
+            rule=_rule(read, read.get(table, "rule", dict, ...)),
+            scheme=LeaveOneOut(),
             tail=read.one_of(table, "tail", TAILS, "positive"),
             on_empty=read.one_of(table, "on_empty", ON_EMPTY, "empty"),
-            k=read.get(table, "k", int, 0), missing=missing,
-        )  # fmt: skip
+            k=read.get(table, "k", int, 0),
+            missing=missing,
+        )
     test = read.one_of(table, "test", TESTS[plan], TESTS[plan][0])
     return Roi(
-        name, plan, region, procedure, read.get(table, "flips", int, 4999),
-        read.one_of(table, "interval", INTERVALS, "flips"), test,
-    )  # fmt: skip
+        name,
+        plan,
+        region,
+        procedure,
+        read.get(table, "flips", int, 4999),
+        read.one_of(table, "interval", INTERVALS, "flips"),
+        test,
+    )
 
 
 def _origins(
@@ -325,15 +369,15 @@ def _origins(
             yield Origin(roi.region.origin, files, _units(read, place))
     for table in read.get(toml, "origin", list, []):
         read.known(table, "origin")
-        files = []
+        listed: list[str] = []
         for pattern in read.get(table, "files", list, ...):
             matched = sorted(str(p.relative_to(root)) for p in root.glob(str(pattern)))
             if not matched:
                 raise InputError(
                     "origin names no file", where=read.where("files"), got=repr(pattern)
                 )
-            files += matched
-        yield Origin(read.get(table, "source", str, ...), tuple(files), _units(read, table))
+            listed += matched
+        yield Origin(read.get(table, "source", str, ...), tuple(listed), _units(read, table))
 
 
 def _units(read: _Reader, table: dict[str, Any]) -> tuple[Unit, ...]:
@@ -342,9 +386,10 @@ def _units(read: _Reader, table: dict[str, Any]) -> tuple[Unit, ...]:
         for key in pattern:
             if key not in (*ENTITIES, "suffix"):
                 raise InputError(
-                    f"unknown entity {key!r}", where=read.where(key),
+                    f"unknown entity {key!r}",
+                    where=read.where(key),
                     expected="one of " + ", ".join((*ENTITIES, "suffix")),
-                )  # fmt: skip
+                )
         units.append(Unit(**{key: str(value) for key, value in pattern.items()}))
     return tuple(units)
 
@@ -357,25 +402,29 @@ def _selected(
     for column, value in select.items():
         if column not in study.columns:
             raise InputError(
-                f"unknown column {column!r}", where=read.where(column),
+                f"unknown column {column!r}",
+                where=read.where(column),
                 expected="a column of the study table: " + ", ".join(study.columns),
-            )  # fmt: skip
+            )
         wanted[column] = {str(v) for v in (value if isinstance(value, list) else [value])}
     rows = [r for r in study.rows if all(r.column(c) in v for c, v in wanted.items())]
     left_out = tuple(row for row in rows if row.exclude_reason)
     kept = [row for row in rows if not row.exclude_reason]
     if not kept:
         raise InputError(
-            "no subject left", where=str(read.path),
+            "no subject left",
+            where=str(read.path),
             got=f"{len(study.rows)} rows in the table, {len(left_out)} of the selected excluded",
             remedy="check [data] select and the exclude_reason column",
-        )  # fmt: skip
+        )
     contrasts = sorted({row.contrast for row in kept})
     if len(contrasts) > 1:
         raise InputError(
-            "several contrasts selected", where=read.where("data"), got=", ".join(contrasts),
+            "several contrasts selected",
+            where=read.where("data"),
+            got=", ".join(contrasts),
             remedy='name one: [data] select = { contrast = "..." }',
-        )  # fmt: skip
+        )
     of_sub: dict[str, list[Row]] = {}
     for row in kept:
         of_sub.setdefault(row.unit.sub, []).append(row)
@@ -384,16 +433,19 @@ def _selected(
             for entity in (*ENTITIES, "suffix"):
                 if entity != "run" and row.column(entity) != runs[0].column(entity):
                     raise InputError(
-                        f"maps of sub-{label} differ in {entity}", where=str(read.path),
+                        f"maps of sub-{label} differ in {entity}",
+                        where=str(read.path),
                         got=f"{runs[0].column(entity)!r} and {row.column(entity)!r}",
                         remedy=f"only runs are averaged: select one {entity}",
-                    )  # fmt: skip
+                    )
         numbers = [row.unit.run for row in runs]
         if len(set(numbers)) != len(numbers):
             raise InputError(
-                f"sub-{label} has several maps of one run", where=str(read.path),
-                got=", ".join(row.name for row in runs), remedy="select one, or fill the run column",
-            )  # fmt: skip
+                f"sub-{label} has several maps of one run",
+                where=str(read.path),
+                got=", ".join(row.name for row in runs),
+                remedy="select one, or fill the run column",
+            )
     ordered = tuple(
         (label, tuple(sorted(of_sub[label], key=lambda row: row.unit))) for label in sorted(of_sub)
     )

@@ -18,9 +18,20 @@ from ..nodes.touch import ENTITIES, Touch, Unit, UnitTable
 from .digests import digest
 
 COLUMNS = (
-    "path", "volume", "sub", "ses", "task", "acq", "dir", "rec", "run", "suffix", "contrast",
-    "exclude_reason", "exchange",
-)  # fmt: skip
+    "path",
+    "volume",
+    "sub",
+    "ses",
+    "task",
+    "acq",
+    "dir",
+    "rec",
+    "run",
+    "suffix",
+    "contrast",
+    "exclude_reason",
+    "exchange",
+)
 _BLANK = ("", "n/a")
 
 
@@ -124,10 +135,11 @@ class Study:
             person, line = of_sub.setdefault(row.unit.sub, (row.person, row.line))
             if person != row.person:
                 raise InputError(
-                    f"sub-{row.unit.sub} has two exchange values", where=f"lines {line}, {row.line}",
+                    f"sub-{row.unit.sub} has two exchange values",
+                    where=f"lines {line}, {row.line}",
                     got=f"{person!r} and {row.person!r}",
                     remedy="give all rows of a subject the same value",
-                )  # fmt: skip
+                )
         self.table = UnitTable((row.unit for row in self.rows), people)
         self._by_path: dict[str, list[tuple[int | None, int]]] = {}
         for row in self.rows:
@@ -239,9 +251,11 @@ def read_table(path: str | Path, root: Path | None = None) -> Study:
     for needed in ("path", "sub"):
         if needed not in header:
             raise InputError(
-                f"study table without a {needed} column", where=str(path),
-                expected="tab-separated columns " + " ".join(COLUMNS), got=" ".join(header),
-            )  # fmt: skip
+                f"study table without a {needed} column",
+                where=str(path),
+                expected="tab-separated columns " + " ".join(COLUMNS),
+                got=" ".join(header),
+            )
     repeated = {name for name in header if header.count(name) > 1}
     if repeated:
         raise InputError("column named twice", where=str(path), got=", ".join(sorted(repeated)))
@@ -257,17 +271,21 @@ def read_table(path: str | Path, root: Path | None = None) -> Study:
         before = seen.setdefault((row.path, row.volume), row.line)
         if before != row.line:
             raise InputError(
-                "the same map on two rows", where=f"{path}, lines {before} and {row.line}",
-                got=row.name, remedy="each map of a subject needs a file (or volume) of its own",
-            )  # fmt: skip
+                "the same map on two rows",
+                where=f"{path}, lines {before} and {row.line}",
+                got=row.name,
+                remedy="each map of a subject needs a file (or volume) of its own",
+            )
     return Study(root or path.parent, rows, columns=header)
 
 
 def _ragged(path: Path, number: int, expected: int, got: int) -> Row:
     raise InputError(
-        "row of another length", where=f"{path}, line {number}",
-        expected=f"{expected} tab-separated cells", got=str(got),
-    )  # fmt: skip
+        "row of another length",
+        where=f"{path}, line {number}",
+        expected=f"{expected} tab-separated cells",
+        got=str(got),
+    )
 
 
 def _row(cells: dict[str, str], where: str, line: int) -> Row:
@@ -295,10 +313,13 @@ def table_text(rows: Iterable[Row]) -> str:
     lines = ["\t".join(COLUMNS)]
     for row in sorted(rows, key=lambda r: (r.path, -1 if r.volume is None else r.volume)):
         cells = {
-            "path": row.path, "volume": "" if row.volume is None else str(row.volume),
-            "suffix": row.unit.suffix, "contrast": row.contrast,
-            "exclude_reason": row.exclude_reason, "exchange": row.exchange,
+            "path": row.path,
+            "volume": "" if row.volume is None else str(row.volume),
+            "suffix": row.unit.suffix,
+            "contrast": row.contrast,
+            "exclude_reason": row.exclude_reason,
+            "exchange": row.exchange,
             **{e: getattr(row.unit, e) for e in ENTITIES},
-        }  # fmt: skip
+        }
         lines.append("\t".join(cells[name] or "n/a" for name in COLUMNS))
     return "\n".join(lines) + "\n"

@@ -71,10 +71,12 @@ def rows_from(
         found = [(path, fields) for path, fields in found if fields.get("stat") == "effect"]
     if not found:
         raise InputError(
-            "no effect map found", where=str(folder),
+            "no effect map found",
+            where=str(folder),
             expected=pattern or "names such as sub-01_task-x_contrast-y_stat-effect_statmap.nii.gz",
-            got=f"{len(files)} NIfTI files", remedy='give --pattern, such as "sub-{sub}/map.nii.gz"',
-        )  # fmt: skip
+            got=f"{len(files)} NIfTI files",
+            remedy='give --pattern, such as "sub-{sub}/map.nii.gz"',
+        )
     return [row for path, fields in found for row in _rows(path, fields, suffix, base)]
 
 
@@ -109,9 +111,11 @@ def _matcher(pattern: str) -> re.Pattern[str]:
             name = piece[1:-1]
             if name not in _FIELDS:
                 raise InputError(
-                    "unknown field in the pattern", where=pattern,
-                    expected="one of " + ", ".join(f"{{{f}}}" for f in _FIELDS), got=piece,
-                )  # fmt: skip
+                    "unknown field in the pattern",
+                    where=pattern,
+                    expected="one of " + ", ".join(f"{{{f}}}" for f in _FIELDS),
+                    got=piece,
+                )
             # A field named twice must read the same twice.
             pieces.append(f"(?P={name})" if name in seen else f"(?P<{name}>[^/_]+?)")
             seen.add(name)

@@ -59,7 +59,7 @@ def _folds_held_out(settings: Any) -> list[tuple[int, ...]]:
 
 
 class LeaveOutMaps(SequesterInterface):
-    """The group map of every fold's selection side, in one pass: map k never sees its held-out rows."""
+    """Every fold's group map, in one pass: map k never sees the rows that fold k holds out."""
 
     input_spec = _LeaveOutInput
     output_spec = _LeaveOutOutput

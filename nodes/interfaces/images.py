@@ -80,15 +80,19 @@ def _checked(data: Any, path: str, missing: Missing, seen: dict[bytes, str]) -> 
     present = missing.present(data)
     if not present.any():
         raise InputError(
-            "effect map without data", where=path, got="only zeros, NaN and infinities",
+            "effect map without data",
+            where=path,
+            got="only zeros, NaN and infinities",
             remedy="make the map again, or leave it out with an exclude_reason",
-        )  # fmt: skip
+        )
     digest = blake2b(np.ascontiguousarray(data).tobytes(), digest_size=16).digest()
     if digest in seen:
         raise InputError(
-            "the same map under two names", where=path, got=f"identical to {seen[digest]}",
+            "the same map under two names",
+            where=path,
+            got=f"identical to {seen[digest]}",
             remedy="one of the two rows of the study table names the wrong file",
-        )  # fmt: skip
+        )
     seen[digest] = path
     return np.where(present, data, data.dtype.type(np.nan))
 

@@ -57,9 +57,11 @@ class ChooseMask(SequesterInterface):
             chosen = strongest(values[inside], self.inputs.k)
         if not chosen.any() and self.inputs.on_empty == "stop":
             raise EmptyFoldError(
-                "the rule found nothing", where=f"search region {search or 'whole map'}",
-                expected=rule.describe(), remedy="relax the rule, or report that nothing was found",
-            )  # fmt: skip
+                "the rule found nothing",
+                where=f"search region {search or 'whole map'}",
+                expected=rule.describe(),
+                remedy="relax the rule, or report that nothing was found",
+            )
         return {"mask_file": str(write_map(cwd / "mask.nii.gz", grid.filled(chosen), geometry))}
 
 
@@ -71,9 +73,11 @@ def _placed(inputs: Inputs) -> Tree:
         if isinstance(tree, Leaf):
             geometry = geometry | tree.touch.as_geometry()
     origin = inputs.settings.get("origin")
-    stated = Touch(origins=frozenset({origin})) if origin else Touch(
-        unknown=frozenset({f"the coordinate given to {inputs.where}"})
-    )  # fmt: skip
+    stated = (
+        Touch(origins=frozenset({origin}))
+        if origin
+        else Touch(unknown=frozenset({f"the coordinate given to {inputs.where}"}))
+    )
     return Leaf(geometry | stated, place=f"coordinate of {inputs.where}")
 
 

@@ -15,6 +15,7 @@ from ..images import Geometry, geometry_of, open_image, read_mask, stack, write_
 from ..procedure import Prepared, Procedure, held_out_rows
 from ..results import INTERVALS, cross_fitted_result
 from ..rules import Statistic, all_but_held_out
+from ..space import Grid
 from .base import InputSpec, SequesterInterface, TraitedSpec, traits, write_json
 
 
@@ -26,7 +27,7 @@ class _ProcedureInput(InputSpec):
     procedure = traits.Instance(Procedure, mandatory=True, desc="folds, map, rule, summary")
 
 
-def _prepared(inputs: Any) -> tuple[Prepared, Geometry]:
+def _prepared(inputs: Any) -> tuple[Prepared, Grid, Geometry]:
     """The procedure on the files of a node."""
     search = inputs.search_file or None
     inside = None
@@ -35,7 +36,7 @@ def _prepared(inputs: Any) -> tuple[Prepared, Geometry]:
         inside, _ = read_mask(search, like)
     effects, grid, geometry = stack(inputs.in_files, inside)
     names = inputs.row_names or inputs.in_files
-    return inputs.procedure.prepare(effects, inputs.labels, grid, names), geometry
+    return inputs.procedure.prepare(effects, inputs.labels, grid, names), grid, geometry
 
 
 def _per_fold(settings: Any) -> list[tuple[int, ...]]:
@@ -65,21 +66,19 @@ class ChooseByFold(SequesterInterface):
     touch_rules = {"mask_files": _rule(_per_fold), "row_masks": _rule(_per_row)}
 
     def _work(self, cwd: Path) -> dict[str, Any]:
-        ready, geometry = _prepared(self.inputs)
-        masks, grid = ready.masks(), ready.space
+        ready, grid, geometry = _prepared(self.inputs)
+        masks = ready.masks()
         files = [
             str(write_map(cwd / f"fold{k:05d}.nii.gz", grid.filled(mask), geometry))
             for k, mask in enumerate(masks)
         ]
         of_row = {row: files[k] for k, fold in enumerate(ready.folds) for row in fold.held_out}
-        share = np.mean(masks, axis=0, dtype=np.float32)
+        share = np.stack(masks).mean(axis=0, dtype=np.float32)
         return {
             "mask_files": files,
             "row_masks": [of_row[row] for row in sorted(of_row)],
             "fold_names": [fold.name for fold in ready.folds],
-            "overlap_file": str(
-                write_map(cwd / "overlap.nii.gz", grid.filled(share), geometry)
-            ),
+            "overlap_file": str(write_map(cwd / "overlap.nii.gz", grid.filled(share), geometry)),
         }
 
 
@@ -108,12 +107,16 @@ class FlipTest(SequesterInterface):
     statistic = Statistic(values="values", cross_fitted=True)
 
     def _work(self, cwd: Path) -> dict[str, Any]:
-        ready, _ = _prepared(self.inputs)
+        ready, _, _ = _prepared(self.inputs)
         roi = self.inputs.names[0]
         result, outcome, _ = cross_fitted_result(
-            ready, self.inputs.names, self.inputs.n_flips, self.inputs.seed,
-            self.inputs.interval, lambda done, total: progress.tell(f"flips {roi}", done, total),
-        )  # fmt: skip
+            ready,
+            self.inputs.names,
+            self.inputs.n_flips,
+            self.inputs.seed,
+            self.inputs.interval,
+            lambda done, total: progress.tell(f"flips {roi}", done, total),
+        )
         if list(outcome.values) != list(self.inputs.values):
             raise SequesterError(
                 f"{roi}: the extracted values are not those of the procedure that is tested; "

@@ -12,15 +12,22 @@ from typing import Any
 __version__ = "0.1.0"
 
 _STARTERS = {
-    "Guard": "sequester.workflows.guard",
-    "Study": "sequester.workflows.study",
+    "GuardPlugin": "sequester.workflows.guard",
+    "read_table": "sequester.workflows.study",
+    "read_settings": "sequester.workflows.settings",
+    "run_study": "sequester.workflows.run",
     "leave_one_subject_out": "sequester.workflows.plans",
-    "given_region": "sequester.workflows.plans",
+    "a_priori": "sequester.workflows.plans",
     "exploratory": "sequester.workflows.plans",
+    "Cluster": "sequester.nodes.masks",
+    "Threshold": "sequester.nodes.masks",
     "Procedure": "sequester.nodes.procedure",
 }
 
-__all__ = ["__version__", *_STARTERS]
+__all__ = [  # noqa: PLE0604 - the names are strings, checked by a test
+    "__version__",
+    *_STARTERS,
+]
 
 
 def __getattr__(name: str) -> Any:
