@@ -136,12 +136,19 @@ def cross_fitted_result(
     sided = "greater" if procedure.tail == "positive" else "less"
     deviation = float(people.std(ddof=1))
     where = f"in the search region '{search}'"
+    idle = len(outcome.empty) + len(outcome.replaced)
+    nothing = (
+        f" In {idle} of {len(ready.folds)} folds the rule found nothing; there "
+        + ("the strongest features stood in." if outcome.replaced else "the value counts as 0.")
+        if idle
+        else ""
+    )
     sentence = (
         f"{roi}: {procedure.rule.describe()} {where}, chosen in {len(ready.folds)} folds "
         f"({plan}); held-out mean {outcome.estimate:.3g} "
         f"({made.kind} 95 % interval {made.low:.3g} to {made.high:.3g}), {p_text(test.p)} "
         f"({kind}, one-sided). Null: {FLIP_NULL} '{search}'; a rejection says that there is a "
-        f"replicable effect somewhere {where}, not at any one voxel."
+        f"replicable effect somewhere {where}, not at any one voxel.{nothing}"
     )
     result = RoiResult(
         roi=roi,

@@ -46,6 +46,20 @@ def region_mean(values: Floats, present: Bools | None = None) -> tuple[float, fl
     return float(values.sum(dtype=np.float64)) / len(values), len(values) / n
 
 
+def per_person(values: Sequence[float], labels: Sequence[str]) -> list[float]:
+    """Values averaged over the rows of each label, by sorted label.
+
+    Examples
+    --------
+    >>> per_person([1.0, 2.0, 4.0], ["b", "a", "b"])
+    [2.0, 2.5]
+    """
+    of_label: dict[str, list[float]] = {}
+    for value, label in zip(values, labels, strict=True):
+        of_label.setdefault(label, []).append(value)
+    return [float(np.mean(of_label[label])) for label in sorted(of_label)]
+
+
 def studentised(values: Floats) -> float:
     """Student's t of the mean against zero: mean / (sd / sqrt(n)); 0 when all values are 0.
 

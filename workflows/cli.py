@@ -247,9 +247,9 @@ def demo(folder: Path, show: _Progress, as_json: bool) -> None:
         [
             "region",
             "chosen and read on all (BIASED)",
-            "truth there",
+            "truth in it",
             "held out, 95 % interval",
-            "truth there",
+            "truth in it",
             "p",
         ]
     ]
@@ -303,6 +303,10 @@ def _verdict(finding: Finding) -> str:
     )
 
 
+def _number(value: float | None) -> str:
+    return "-" if value is None else f"{value:.2f}"
+
+
 def _p(p: float | None) -> str:
     return "-" if p is None else "< .001" if p < 0.001 else f"{p:.3f}".replace("0.", ".", 1)
 
@@ -327,14 +331,14 @@ def _print_tests(settings: Settings, tests: list[dict[str, Any]]) -> None:
             if row["n_folds"] is None
             else f"{row['n_empty'] + row['n_replaced']}/{row['n_folds']}"
         )
-        dice = "-" if row["dice"] is None else f"{row['dice']:.2f} ({row['noise_dice']:.2f})"
+        dice = "-" if row["dice"] is None else f"{row['dice']:.2f} ({_number(row['noise_dice'])})"
         rows.append(
             [
                 row["roi"],
                 row["plan"],
                 f"{row['estimate']:.3g}",
                 f"{row['interval_low']:.3g} to {row['interval_high']:.3g} ({row['interval_kind']})",
-                f"{row['dz']:.2f}",
+                _number(row["dz"]),
                 _p(row["p"]),
                 _p(row["p_holm"]),
                 folds,

@@ -94,11 +94,13 @@ def true_effect() -> Floats:
     return truth
 
 
-def _smooth_noise(rng: np.random.Generator, sd: float) -> Floats:
+def _smooth_noise(
+    rng: np.random.Generator, sd: float, shape: tuple[int, ...] = SHAPE
+) -> Floats:
     sigma = FWHM_MM / VOXEL_MM / np.sqrt(8 * np.log(2))
     # Summing the squared kernel gives the sd that smoothing leaves: (2 sigma sqrt(pi))^(-3/2).
     left = (2 * sigma * np.sqrt(np.pi)) ** -1.5
-    white = rng.standard_normal(SHAPE, dtype=np.float32)
+    white = rng.standard_normal(shape, dtype=np.float32)
     noise: Floats = gaussian_filter(white, sigma, mode="wrap") * np.float32(sd / left)
     return noise
 
@@ -109,6 +111,38 @@ def subject_runs(seed: int, subject: int) -> list[Floats]:
     own = true_effect().astype(np.float32) + _smooth_noise(rng, SUBJECT_SD)
     inside = brain()
     return [np.where(inside, own + _smooth_noise(rng, RUN_SD), 0) for _ in range(N_RUNS)]
+
+
+def region_effects(name: str, seed: int) -> tuple[Floats, Grid]:
+    """Everybody's run average inside one search region, without the rest of the brain.
+
+    For simulation over many seeds: the same distribution as the maps on disk (the average of
+    four runs' noise is drawn at once), other numbers.
+
+    Parameters
+    ----------
+    name : str
+    seed : int
+
+    Returns
+    -------
+    effects : (N_SUBJECTS, n_features) float32
+    grid : Grid
+        Of the search region.
+    """
+    inside = search_region(name)
+    # A margin of one FWHM on each side, so that the wrapped edges of the noise stay outside.
+    margin = int(np.ceil(FWHM_MM / VOXEL_MM))
+    box = tuple(
+        slice(max(0, int(where.min()) - margin), int(where.max()) + margin + 1)
+        for where in np.nonzero(inside)
+    )
+    part = inside[box]
+    truth = true_effect()[box][part].astype(np.float32)
+    sd = float(np.sqrt(SUBJECT_SD**2 + RUN_SD**2 / N_RUNS))
+    rng = np.random.default_rng([seed, len(name)])
+    effects = [truth + _smooth_noise(rng, sd, part.shape)[part] for _ in range(N_SUBJECTS)]
+    return np.stack(effects), Grid(SHAPE, geometry().affine, inside)
 
 
 _LOOK = """

@@ -57,10 +57,10 @@ class GuardRefused(Refused):
             told.setdefault((finding.node, finding.reason), []).append(finding)
         when = "while running" if started else "before anything ran"
         lines = [f"refused {when}: {len(findings)} finding{'s' if len(findings) > 1 else ''}"]
-        for group in told.values():
-            lines.append(group[0].describe(study.table))
+        for number, group in enumerate(told.values(), 1):
+            lines.append(f"\n{number}. {group[0].describe(study.table)}")
             if len(group) > 1:
-                lines.append(f"  ... and {len(group) - 1} more elements of this node alike")
+                lines.append(f"    {'also':<8}{len(group) - 1} more elements of this node")
         super().__init__("\n".join(lines))
 
 

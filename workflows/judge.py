@@ -13,6 +13,7 @@ may run only into values marked biased, which no statistic accepts.
 
 from __future__ import annotations
 
+import textwrap
 from dataclasses import dataclass
 
 from ..nodes.foldnull import plain_t_false_positives
@@ -20,6 +21,7 @@ from ..nodes.rules import Leaf, Meeting, Statistic, joined, leaves, path_to
 from ..nodes.touch import Extraction, UnitTable, cross_fitted
 from .ancestry import Ancestry, meetings_of, node_name
 
+_WIDTH = 84  # of a line of a refusal's reason and cure
 APART, LEAK, UNPROVEN = "apart", "leak", "unproven"
 
 
@@ -72,15 +74,14 @@ class Finding:
     def describe(self, table: UnitTable) -> str:
         """The finding in words: meeting, fold, shared units, both paths, cure."""
         fold = "" if self.item is None else f", element {self.item}"
-        lines = [f"{self.verdict} at {self.kind} {self.node}{fold}: {self.reason}"]
-        if self.shared:
-            lines.append(f"  shared: {table.describe(self.shared)}")
-        if self.mask_path:
-            lines.append(f"  the mask's way:  {' -> '.join(self.mask_path)}")
-        if self.data_path:
-            lines.append(f"  the data's way:  {' -> '.join(self.data_path)}")
-        if self.cure:
-            lines.append(f"  cure: {self.cure}")
+        parts = [("shared", [table.describe(self.shared, most=2)] if self.shared else [])]
+        parts += [("region", list(self.mask_path)), ("data", list(self.data_path))]
+        parts += [("cure", textwrap.wrap(self.cure, _WIDTH))]
+        lines = textwrap.wrap(f"{self.verdict}: {self.node}{fold}: {self.reason}", _WIDTH + 10)
+        for head, told in parts:
+            for i, text in enumerate(told):
+                arrow = "-> " if i and head in ("region", "data") else ""
+                lines.append(f"    {head if not i else '':<8}{arrow}{text}")
         return "\n".join(lines)
 
 

@@ -152,7 +152,7 @@ def leave_one_subject_out(
 
 
 def _fixed_test(workflow: Workflow, extract: Node, end: Node, names: tuple[str, str, str]) -> None:
-    test = node(FixedRegionTest(), "test", names=names)
+    test = node(FixedRegionTest(), "test", names=names, labels=extract.inputs.labels)
     workflow.connect(
         [
             (extract, test, [(f, f) for f in ("values", "coverage", "sizes")]),

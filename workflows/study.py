@@ -152,6 +152,7 @@ class Study:
                 for key in self._keys(name):
                     self._origin_of[key] = origin
         self._sizes: dict[int, list[str]] | None = None
+        self._contents: dict[int, dict[str, str]] = {}
 
     def _keys(self, path: str) -> set[str]:
         full = os.path.abspath(self.root / path)
@@ -205,18 +206,21 @@ class Study:
             touch = self._touch_of_key(key, None)
             if touch is not None:
                 return touch
+        if not os.path.isfile(path):
+            return None
         if self._sizes is None:
             self._sizes = {}
             for key in [*self._by_path, *self._origin_of]:
                 if os.path.isfile(key):
                     self._sizes.setdefault(os.path.getsize(key), []).append(key)
-        if not os.path.isfile(path):
+        # Only a file of the same size can have the same bytes, so only those are read.
+        size = os.path.getsize(path)
+        if size not in self._contents:
+            self._contents[size] = {digest(key): key for key in self._sizes.get(size, [])}
+        if not self._contents[size]:
             return None
-        # Only a file of the same size can have the same bytes.
-        for key in self._sizes.get(os.path.getsize(path), []):
-            if digest(key) == digest(path):
-                return self._touch_of_key(key, None)
-        return None
+        known = self._contents[size].get(digest(path))
+        return None if known is None else self._touch_of_key(known, None)
 
     @property
     def paths(self) -> list[str]:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import math
 from importlib.metadata import version
 from pathlib import Path
 from typing import Any, ClassVar
@@ -83,9 +84,21 @@ def kept_error(folder: Path) -> SequesterError | None:
 
 
 def write_json(path: Path, content: dict[str, Any]) -> str:
-    """Write JSON, keys in the given order, and return the path as text."""
-    write_bytes(path, (json.dumps(content, indent=2, ensure_ascii=False) + "\n").encode())
+    """Write JSON, keys in the given order, and return the path as text.
+
+    Numbers that are not finite become null: JSON has no word for them.
+    """
+    text = json.dumps(_finite(content), indent=2, ensure_ascii=False, allow_nan=False)
+    write_bytes(path, f"{text}\n".encode())
     return str(path)
+
+
+def _finite(value: Any) -> Any:
+    if isinstance(value, dict):
+        return {key: _finite(item) for key, item in value.items()}
+    if isinstance(value, list | tuple):
+        return [_finite(item) for item in value]
+    return None if isinstance(value, float) and not math.isfinite(value) else value
 
 
 __all__ = [

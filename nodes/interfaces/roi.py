@@ -11,7 +11,7 @@ from ..errors import InputError, Refused
 from ..groupmaps import Missing
 from ..images import check_same_grid, read_map
 from ..results import fixed_region_result
-from ..roi import region_mean
+from ..roi import per_person, region_mean
 from ..rules import Meeting, Statistic, only
 from .base import InputSpec, SequesterInterface, TraitedSpec, traits, write_json
 
@@ -77,8 +77,9 @@ class Extract(SequesterInterface):
 
 class _FixedInput(InputSpec):
     values = traits.List(traits.Float, mandatory=True, desc="one value per subject")
-    coverage = traits.List(traits.Float, mandatory=True)
-    sizes = traits.List(traits.Int, mandatory=True)
+    labels = traits.List(traits.Str, desc="per value: who it belongs to; default one each")
+    coverage = traits.List(traits.Float, mandatory=True, desc="per value: share of the mask")
+    sizes = traits.List(traits.Int, mandatory=True, desc="per value: voxels in the mask")
     names = traits.Tuple(
         traits.Str, traits.Str, traits.Str, mandatory=True, desc="roi, plan, search region"
     )
@@ -101,7 +102,12 @@ class FixedRegionTest(SequesterInterface):
     )
 
     def _work(self, cwd: Path) -> dict[str, Any]:
+        values = self.inputs.values
+        labels = self._value("labels") or list(map(str, range(len(values))))
         result = fixed_region_result(
-            self.inputs.values, self.inputs.names, self.inputs.sizes[0], self.inputs.coverage
+            per_person(values, labels),
+            self.inputs.names,
+            self.inputs.sizes[0],
+            self.inputs.coverage,
         )
         return {"record_file": write_json(cwd / "result.json", result.as_dict())}
