@@ -18,6 +18,7 @@ from pathlib import Path
 from typing import Any
 
 import networkx as nx
+from nipype.interfaces.io import DataGrabber, SelectFiles
 from nipype.pipeline.engine import JoinNode, MapNode
 
 from ..nodes.interfaces.base import traits
@@ -150,9 +151,25 @@ class Ancestry:
         # The interface itself knows its outputs, dynamic ones (Function, Split ...) included.
         found = node.interface._outputs()
         names = list(found.get()) if found is not None else []
+        grabbed = self._grabbed(node)
+        if grabbed is not None:
+            return {name: grabbed.get(name) or everything(inputs) for name in names}
         if isinstance(node, MapNode):
             return self._mapped(node, inputs, names)
         return {name: _ruled(node.interface, name, inputs) for name in names}
+
+    def _grabbed(self, node: Any) -> dict[str, Tree] | None:
+        """What a file grabber will find, when all its inputs are known before the run."""
+        if type(node.interface) not in (SelectFiles, DataGrabber) or isinstance(node, MapNode):
+            return None
+        if self._graph.in_degree(node):
+            return None
+        try:
+            found = node.interface._list_outputs()
+        except OSError:
+            return None  # it will fail when it runs, and say so itself
+        trees = {name: self._literal(value) for name, value in found.items()}
+        return {name: tree for name, tree in trees.items() if tree is not None}
 
     def _mapped(self, node: Any, inputs: Inputs, names: list[str]) -> dict[str, Tree]:
         iterated = list(node.iterfield)

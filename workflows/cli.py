@@ -19,6 +19,7 @@ os.environ.setdefault("NO_ET", "1")
 
 from ..nodes import progress
 from ..nodes.errors import SequesterError
+from .guard import GuardRefused
 from .judge import Finding
 from .settings import Settings, read_settings
 from .study import Study, table_text
@@ -50,7 +51,10 @@ def _command(function: Callable[..., None]) -> Callable[..., None]:
         except SequesterError as error:
             show.clear()
             if as_json:
-                click.echo(json.dumps({"error": str(error), "exit_code": error.exit_code}))
+                told: dict[str, Any] = {"error": str(error), "exit_code": error.exit_code}
+                if isinstance(error, GuardRefused):
+                    told["findings"] = [_plain(f, error.study) for f in error.findings]
+                click.echo(json.dumps(told))
             click.echo(f"sequester: {error}", err=True)
             sys.exit(error.exit_code)
         finally:
@@ -204,7 +208,6 @@ def demo(folder: Path, show: _Progress, as_json: bool) -> None:
     """Make a small study with known truth, analyse it, and have its circular twin refused."""
     from ..nodes.images import read_map
     from .demo import PLACES, truth_in, write_demo
-    from .guard import GuardRefused
     from .run import run_study
 
     show.say("making 24 subjects x 4 runs of effect maps")

@@ -94,9 +94,7 @@ def true_effect() -> Floats:
     return truth
 
 
-def _smooth_noise(
-    rng: np.random.Generator, sd: float, shape: tuple[int, ...] = SHAPE
-) -> Floats:
+def _smooth_noise(rng: np.random.Generator, sd: float, shape: tuple[int, ...] = SHAPE) -> Floats:
     sigma = FWHM_MM / VOXEL_MM / np.sqrt(8 * np.log(2))
     # Summing the squared kernel gives the sd that smoothing leaves: (2 sigma sqrt(pi))^(-3/2).
     left = (2 * sigma * np.sqrt(np.pi)) ** -1.5

@@ -50,7 +50,7 @@ class GuardRefused(Refused):
     """
 
     def __init__(self, findings: list[Finding], study: Study, *, started: bool = False) -> None:
-        self.findings = findings
+        self.findings, self.study = findings, study
         # A chain of elements with the same fault is told once, with how many more there are.
         told: dict[tuple[str, str], list[Finding]] = {}
         for finding in findings:

@@ -148,8 +148,11 @@ def _meet(
         reason = f"nobody has declared what {', '.join(unknown[:3])} derives from"
         cure = "add the file to the study table, or state its origin in the study file"
     elif not of_data:
-        verdict, reason = UNPROVEN, "the data under test is not in the study table"
-        cure = "add its files to the study table"
+        verdict, reason = UNPROVEN, "the graph shows no file of the study table in the tested data"
+        cure = (
+            "list the files in the study table, and give them to a node as inputs (literals, "
+            "iterables, a file grabber) so that the graph shows them"
+        )
     elif not of_mask and not mask.touch.origins and not mask.touch.values:
         verdict, reason = UNPROVEN, "nothing says where the mask comes from"
         cure = "state its origin in the study file"

@@ -73,7 +73,7 @@ class Region:
     def describe(self) -> str:
         """In words, for sentences about the result."""
         if self.mask:
-            return Path(self.mask).name
+            return Path(self.mask).name.removesuffix(".gz").removesuffix(".nii")
         if self.centre is not None:
             at = ", ".join(f"{x:g}" for x in self.centre)
             return f"sphere of {self.radius:g} mm at ({at}) mm"
