@@ -96,6 +96,19 @@ def p_text(p: float) -> str:
     return "p < .001" if p < 0.001 else f"p = {p:.3f}".replace("0.", ".", 1)
 
 
+def estimate_texts(estimate: float, low: float, high: float) -> tuple[str, str, str]:
+    """An estimate and its interval, rounded as the interval's half width (two digits) deserves.
+
+    Examples
+    --------
+    >>> estimate_texts(1.23607, 0.78208, 1.69006)
+    ('1.24', '0.78', '1.69')
+    """
+    half = (high - low) / 2
+    digits = max(0, 1 - int(np.floor(np.log10(half)))) if np.isfinite(half) and half > 0 else 3
+    return f"{estimate:.{digits}f}", f"{low:.{digits}f}", f"{high:.{digits}f}"
+
+
 def cross_fitted_result(
     ready: Prepared,
     names: tuple[str, str, str],
@@ -143,10 +156,11 @@ def cross_fitted_result(
         if idle
         else ""
     )
+    mean, low, high = estimate_texts(outcome.estimate, made.low, made.high)
     sentence = (
         f"{roi}: {procedure.rule.describe()} {where}, chosen in {len(ready.folds)} folds "
-        f"({plan}); held-out mean {outcome.estimate:.3g} "
-        f"({made.kind} 95 % interval {made.low:.3g} to {made.high:.3g}), {p_text(test.p)} "
+        f"({plan}); held-out mean {mean} "
+        f"({made.kind} 95 % interval {low} to {high}), {p_text(test.p)} "
         f"({kind}, one-sided). Null: {FLIP_NULL} '{search}'; a rejection says that there is a "
         f"replicable effect somewhere {where}, not at any one voxel.{nothing}"
     )
@@ -195,6 +209,7 @@ def fixed_region_result(
     test = one_sample_t(np.asarray(values))
     roi, plan, search = names
     interval = test.interval
+    mean, low, high = estimate_texts(test.mean, interval.low, interval.high)
     return RoiResult(
         roi=roi,
         plan=plan,
@@ -214,8 +229,8 @@ def fixed_region_result(
         mask_sizes=(size,),
         coverage=min(coverage),
         sentence=(
-            f"{roi}: mean {test.mean:.3g} in the a-priori region '{search}' (95 % interval "
-            f"{interval.low:.3g} to {interval.high:.3g}), t({test.df}) = {test.t:.2f}, "
+            f"{roi}: mean {mean} in the a-priori region '{search}' (95 % interval "
+            f"{low} to {high}), t({test.df}) = {test.t:.2f}, "
             f"{p_text(test.p)}, two-sided. Null: the population mean in this region is zero "
             "(near-normal values)."
         ),

@@ -17,7 +17,7 @@ NODE_LAYERS = [
 ]  # fmt: skip
 WORKFLOW_LAYERS = [
     "digests", "study", "ancestry", "judge", "guard", "settings", "plans", "outputs", "run",
-    "table", "demo", "cli",
+    "table", "demo", "show", "cli",
 ]  # fmt: skip
 
 

@@ -1,0 +1,126 @@
+"""What the command line shows: progress, tables, findings."""
+
+from __future__ import annotations
+
+import math
+import shutil
+import sys
+import textwrap
+import time
+from collections.abc import Mapping, Sequence
+from typing import Any
+
+import click
+
+from ..nodes.results import estimate_texts, p_text
+from .judge import LEAK, Finding
+from .settings import Settings
+from .study import Study
+
+CAUTION = "For research use, not for diagnosis. Follow your ethics board and local rules."
+
+
+class Progress:
+    """One line on standard error, rewritten in place on a terminal, sparse elsewhere."""
+
+    def __init__(self, *, quiet: bool) -> None:
+        self.quiet = quiet
+        self._live = sys.stderr.isatty()
+        self._shown, self._last = "", 0.0
+
+    def say(self, text: str) -> None:
+        """Show a line."""
+        if self.quiet:
+            return
+        if self._live:
+            width = shutil.get_terminal_size().columns - 1
+            click.echo("\r" + text[:width].ljust(len(self._shown)), nl=False, err=True)
+            self._shown = text[:width]
+        else:
+            click.echo(text, err=True)
+
+    def node(self, what: str, name: str, done: int, total: int) -> None:
+        """Hear of a node (see `guard.Listener`)."""
+        if what == "start":
+            self.say(f"[{done}/{total}] {name}")
+
+    def work(self, what: str, done: int, total: int) -> None:
+        """Hear of long work inside a node (see `progress.listen`)."""
+        now = time.monotonic()
+        if now - self._last > (0.2 if self._live else 10) or (self._live and done == total):
+            self._last = now
+            self.say(f"{what}: {done} of {total}")
+
+    def clear(self) -> None:
+        """Take the line away."""
+        if self._shown:
+            click.echo("\r" + " " * len(self._shown) + "\r", nl=False, err=True)
+            self._shown = ""
+
+
+def finding_record(finding: Finding, study: Study) -> dict[str, Any]:
+    """A finding in plain types, for JSON."""
+    names = (
+        "kind", "node", "item", "verdict", "level", "allowed", "mask_path", "data_path",
+        "reason", "cure",
+    )  # fmt: skip
+    shared = [str(unit) for unit in study.table.units_of(finding.shared)]
+    return {name: getattr(finding, name) for name in names} | {"shared": shared}
+
+
+def print_findings(findings: Sequence[Finding]) -> None:
+    """A line per node: how many meetings, verdicts, levels."""
+    rows = [["node", "kind", "meetings", "verdict", "level"]]
+    for name in dict.fromkeys(finding.node for finding in findings):
+        here = [finding for finding in findings if finding.node == name]
+        verdicts = dict.fromkeys(
+            f"{f.verdict} (values marked biased)" if f.verdict == LEAK else f.verdict for f in here
+        )
+        levels = dict.fromkeys(finding.level for finding in here if finding.level)
+        rows.append(
+            [name, here[0].kind, str(len(here)), ", ".join(verdicts), ", ".join(levels) or "-"]
+        )
+    print_table(rows)
+
+
+def print_tests(settings: Settings, tests: Sequence[Mapping[str, Any]]) -> None:
+    """The results of a run: a line per region, then its sentence."""
+    left = len(settings.left_out)
+    note = f", {left} maps left out (reasons in the table)" if left else ""
+    click.echo(f"{settings.name}: {len(settings.rows)} subjects{note}\n")
+    rows = [
+        ["roi", "plan", "estimate", "95 % interval", "dz", "p", "p Holm", "empty", "Dice (noise)"]
+    ]
+    for row in tests:
+        head = [row["roi"], row["plan"]]
+        if row["biased"]:
+            value = "-" if math.isnan(row["estimate"]) else f"{row['estimate']:.3g}"
+            rows.append([*head, f"{value} BIASED", *["-"] * 6])
+            continue
+        mean, low, high = estimate_texts(row["estimate"], row["interval_low"], row["interval_high"])
+        interval = f"{low} to {high} ({row['interval_kind']})"
+        folds, dice = "-", "-"
+        if row["n_folds"] is not None:
+            folds = f"{row['n_empty'] + row['n_replaced']}/{row['n_folds']}"
+            dice = f"{_two_digits(row['dice'])} ({_two_digits(row['noise_dice'])})"
+        numbers = [_two_digits(row["dz"]), p_value(row["p"]), p_value(row["p_holm"])]
+        rows.append([*head, mean, interval, *numbers, folds, dice])
+    print_table(rows)
+    for row in tests:
+        click.echo("\n" + textwrap.fill(row["sentence"], 96))
+
+
+def print_table(rows: Sequence[Sequence[str]]) -> None:
+    """Columns padded to their widest cell, the first row underlined."""
+    widths = [max(map(len, column)) for column in zip(*rows, strict=True)]
+    for row in [rows[0], ["-" * width for width in widths], *rows[1:]]:
+        click.echo("  ".join(map(str.ljust, row, widths)).rstrip())
+
+
+def p_value(p: float | None) -> str:
+    """A p-value for a table's cell."""
+    return "-" if p is None else p_text(p).removeprefix("p ").removeprefix("= ")
+
+
+def _two_digits(value: float | None) -> str:
+    return "-" if value is None else f"{value:.2f}"
