@@ -179,8 +179,14 @@ def demo(folder: Path, show: Progress, as_json: bool) -> dict[str, Any]:
     show.clear()
     if not as_json:
         rows = [
-            ["region", "chosen and read on all (BIASED)", "truth in it"]
-            + ["held out, 95 % interval", "truth in it", "p"]
+            [
+                "region",
+                "chosen and read on all (BIASED)",
+                "truth in it",
+                "held out, 95 % interval",
+                "truth in it",
+                "p",
+            ]
         ]
         for name in PLACES:
             row, look = tests[name], tests[f"{name}Look"]
@@ -188,8 +194,14 @@ def demo(folder: Path, show: Progress, as_json: bool) -> dict[str, Any]:
                 row["estimate"], row["interval_low"], row["interval_high"]
             )
             rows.append(
-                [name, f"{look['estimate']:.2f}", f"{looked[name]:.2f}"]
-                + [f"{mean} [{low}, {high}]", f"{held_out[name]:.2f}", p_value(row["p"])]
+                [
+                    name,
+                    f"{look['estimate']:.2f}",
+                    f"{looked[name]:.2f}",
+                    f"{mean} [{low}, {high}]",
+                    f"{held_out[name]:.2f}",
+                    p_value(row["p"]),
+                ]
             )
         click.echo(
             "A made-up study: 24 subjects x 4 runs. Arbor responds strongly, Brook weakly, and\n"
