@@ -88,12 +88,17 @@ class LeaveOneOut(Scheme):
 class KFold(Scheme):
     """k folds of nearly equal size, dealt in an order fixed by the seed and the labels.
 
+    With k = 2 this is the split half, used in both directions.
+
     Parameters
     ----------
     k : int
         Number of folds.
     seed : int
         The same seed and labels give the same folds, whatever the order of the rows.
+    strata : tuple of (label, stratum)
+        Labels of one stratum are spread evenly over the folds; a label that is not named
+        belongs to the stratum "".
 
     Examples
     --------
@@ -104,13 +109,94 @@ class KFold(Scheme):
 
     k: int
     seed: int = 0
+    strata: tuple[tuple[str, str], ...] = ()
 
     def _held_out(self, labels: list[str]) -> list[tuple[str, tuple[str, ...]]]:
         if self.k < 2:
             raise InputError("too few folds", expected="k >= 2", got=str(self.k))
         _need(labels, self.k, f"{self.k} folds")
-        dealt = sorted(labels, key=lambda label: _draw(self.seed, label))
+        stratum = dict(self.strata)
+        dealt = sorted(labels, key=lambda label: (stratum.get(label, ""), _draw(self.seed, label)))
         return [(f"{i + 1}of{self.k}", tuple(dealt[i :: self.k])) for i in range(self.k)]
+
+
+@dataclass(frozen=True)
+class Given(Scheme):
+    """Folds named by the user: who is held out in which.
+
+    Parameters
+    ----------
+    fold_of : tuple of (label, fold name)
+        Every label exactly once.
+
+    Examples
+    --------
+    >>> scheme = Given((("a", "x"), ("b", "y"), ("c", "x")))
+    >>> [(fold.name, fold.held_out) for fold in scheme.folds(["a", "b", "c"])]
+    [('x', (0, 2)), ('y', (1,))]
+    """
+
+    fold_of: tuple[tuple[str, str], ...]
+
+    def _held_out(self, labels: list[str]) -> list[tuple[str, tuple[str, ...]]]:
+        of = dict(self.fold_of)
+        lost = [label for label in labels if not of.get(label)]
+        if lost or len(of) != len(self.fold_of):
+            raise InputError(
+                "folds do not name every subject once",
+                got=f"no fold for {', '.join(lost)}" if lost else "a subject in two folds",
+                remedy="fill the fold column of the study table, the same on all rows of a subject",
+            )
+        names = sorted({of[label] for label in labels})
+        _need(names, 2, "folds of a column")
+        return [(name, tuple(label for label in labels if of[label] == name)) for name in names]
+
+
+@dataclass(frozen=True)
+class Halves(Scheme):
+    """Two folds over ordered labels (runs): each half is held out once.
+
+    Labels are ordered by number where they are numbers. With an odd count the first half, or
+    the odd positions, hold one more; a missing run moves those behind it up by one position.
+
+    Parameters
+    ----------
+    how : {"odd-even", "first-second"}
+
+    Examples
+    --------
+    >>> [fold.held_out for fold in Halves("odd-even").folds(["1", "2", "10"])]
+    [(0, 2), (1,)]
+    >>> [fold.held_out for fold in Halves("first-second").folds(["1", "2", "10"])]
+    [(0, 1), (2,)]
+    """
+
+    how: str = "odd-even"
+
+    def __post_init__(self) -> None:
+        if self.how not in ("odd-even", "first-second"):
+            raise InputError(
+                "unknown way to halve", expected="odd-even or first-second", got=repr(self.how)
+            )
+
+    def _held_out(self, labels: list[str]) -> list[tuple[str, tuple[str, ...]]]:
+        _need(labels, 2, "two halves")
+        ordered = sorted(labels, key=natural_key)
+        if self.how == "odd-even":
+            return [("odd", tuple(ordered[::2])), ("even", tuple(ordered[1::2]))]
+        middle = (len(ordered) + 1) // 2
+        return [("first", tuple(ordered[:middle])), ("second", tuple(ordered[middle:]))]
+
+
+def natural_key(label: str) -> tuple[int, int, str]:
+    """Sorts numbers by value, before other labels.
+
+    Examples
+    --------
+    >>> sorted(["10", "2", "b"], key=natural_key)
+    ['2', '10', 'b']
+    """
+    return (0, int(label), label) if label.isdigit() else (1, 0, label)
 
 
 def _draw(seed: int, label: str) -> bytes:

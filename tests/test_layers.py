@@ -12,7 +12,7 @@ WORKFLOWS = Path(sequester.workflows.__file__).parent
 
 # Lowest first; a module imports from modules before it only.
 NODE_LAYERS = [
-    "errors", "progress", "touch", "rules", "space", "folds", "flips", "groupmaps", "masks",
+    "errors", "progress", "touch", "rules", "space", "regrid", "folds", "flips", "groupmaps", "masks",
     "roi", "foldnull", "procedure", "results", "images", "interfaces",
 ]  # fmt: skip
 WORKFLOW_LAYERS = [
