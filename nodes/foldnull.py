@@ -47,6 +47,8 @@ def mean_dice(members: Bools) -> float:
 def expected_dice(n_subjects: int, n_folds: int, p: float) -> float:
     """Dice of two folds' masks that noise alone gives: Phi2(-u, -u; (N-2m)/(N-m)) / p.
 
+    For selection maps that are normal under the null; t maps of few subjects overlap less.
+
     Examples
     --------
     >>> round(expected_dice(20, 20, 0.01), 3)

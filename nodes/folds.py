@@ -148,7 +148,8 @@ class Given(Scheme):
                 remedy="fill the fold column of the study table, the same on all rows of a subject",
             )
         names = sorted({of[label] for label in labels})
-        _need(names, 2, "folds of a column")
+        if len(names) < 2:
+            raise InputError("a single fold", expected="two or more", got=repr(names[0]))
         return [(name, tuple(label for label in labels if of[label] == name)) for name in names]
 
 
@@ -196,7 +197,7 @@ def natural_key(label: str) -> tuple[int, int, str]:
     >>> sorted(["10", "2", "b"], key=natural_key)
     ['2', '10', 'b']
     """
-    return (0, int(label), label) if label.isdigit() else (1, 0, label)
+    return (0, int(label), label) if label.isdecimal() else (1, 0, label)
 
 
 def _draw(seed: int, label: str) -> bytes:

@@ -97,7 +97,8 @@ def fold_sums(stack: Floats | Bools, folds: Sequence[Fold], *, square: bool = Fa
     -------
     (n_folds, n_features) float64
     """
-    x = np.square(stack, dtype=np.float64) if square else stack.astype(np.float64, copy=False)
+    with np.errstate(over="ignore"):  # an infinite square keeps its feature out of every mask
+        x = np.square(stack, dtype=np.float64) if square else stack.astype(np.float64, copy=False)
     if len(folds) == len(x) and all(f.held_out == (k,) for k, f in enumerate(folds)):
         return x
     out = np.zeros((len(folds), x.shape[1]))
@@ -227,9 +228,7 @@ def leave_out_maps(
                 values: Floats = S / n
         else:
             values = t_from_sums(n, S, without_each(fold_sums(x, folds, square=True)))
-        if present is not None:
-            values[n < least] = np.nan
-        out[:, block] = values
+        out[:, block] = np.where(n < least, np.nan, values)
     return out
 
 
@@ -241,6 +240,8 @@ def group_map(effects: Floats, missing: Missing | None = None, kind: str = "t") 
     >>> group_map(np.array([[1.0, 0.0], [2.0, 5.0], [3.0, 0.0]])).round(4).tolist()
     [3.4641, nan]
     """
+    if effects.dtype.kind != "f":
+        raise ValueError(f"effects are float, not {effects.dtype}")
     missing = missing or Missing()
     out = np.empty(effects.shape[1], effects.dtype)
     least = missing.least(len(effects))
@@ -254,14 +255,17 @@ def group_map(effects: Floats, missing: Missing | None = None, kind: str = "t") 
             with np.errstate(invalid="ignore", divide="ignore"):
                 values = S / n
         else:
-            values = t_from_sums(n, S, np.square(x).sum(axis=0))
+            with np.errstate(over="ignore"):
+                values = t_from_sums(n, S, np.square(x).sum(axis=0))
         out[start : start + _BLOCK] = np.where(n < least, np.nan, values)
     return out
 
 
 def _check_stack(effects: Floats, folds: Sequence[Fold]) -> None:
-    if effects.ndim != 2:
-        raise ValueError(f"effects are (n_rows, n_features), not {effects.shape}")
+    if effects.ndim != 2 or effects.dtype.kind != "f":
+        raise ValueError(
+            f"effects are (n_rows, n_features) float, not {effects.shape} {effects.dtype}"
+        )
     held = sorted(row for fold in folds for row in fold.held_out)
     if held != list(range(len(effects))):
         raise ValueError(f"the folds do not partition the {len(effects)} rows of the stack")

@@ -34,8 +34,8 @@ class MaskRule(Protocol):
     def map_kind(self) -> str:
         """Which group map it reads: "t" or "mean"."""
 
-    def describe(self) -> str:
-        """The rule in words, for sentences about the result."""
+    def describe(self, tail: str = "positive") -> str:
+        """The rule in words, for sentences about the result in a direction."""
 
 
 @dataclass(frozen=True)
@@ -81,8 +81,11 @@ class _Forming:
         out: Floats = heights[back].reshape(rows.shape)
         return out
 
-    def _threshold(self) -> str:
-        return f"t > {self.height:g}" if self.height is not None else f"p < {self.p:g}"
+    def _threshold(self, tail: str) -> str:
+        below = tail == "negative"
+        if self.height is not None:
+            return f"t < -{self.height:g}" if below else f"t > {self.height:g}"
+        return f"p < {self.p:g}" + (" for effects below zero" if below else "")
 
 
 @dataclass(frozen=True)
@@ -95,9 +98,9 @@ class Threshold(_Forming):
     2.5395
     """
 
-    def describe(self) -> str:
+    def describe(self, tail: str = "positive") -> str:
         """The rule in words."""
-        return f"all features with {self._threshold()}"
+        return f"all features with {self._threshold(tail)}"
 
 
 @dataclass(frozen=True)
@@ -140,16 +143,17 @@ class Cluster(_Forming):
                 got=f"pick {self.pick!r}, near {self.near}",
             )
 
-    def describe(self) -> str:
+    def describe(self, tail: str = "positive") -> str:
         """The rule in words."""
+        extreme = "lowest trough" if tail == "negative" else "highest peak"
         which = {
             "largest": "the largest cluster",
-            "peak": "the cluster with the highest peak",
+            "peak": f"the cluster with the {extreme}",
             "nearest": f"the cluster nearest to {self.near} mm",
             "all": "every cluster",
         }[self.pick]
         return (
-            f"{which} of features with {self._threshold()} "
+            f"{which} of features with {self._threshold(tail)} "
             f"(connectivity {self.connectivity}, at least {self.min_size} features)"
         )
 
@@ -175,9 +179,10 @@ class Strongest:
         if self.map_kind not in ("t", "mean"):
             raise InputError("unknown map", expected="t or mean", got=str(self.map_kind))
 
-    def describe(self) -> str:
+    def describe(self, tail: str = "positive") -> str:
         """The rule in words."""
-        return f"the {self.k} features with the highest group {self.map_kind}"
+        which = "lowest" if tail == "negative" else "highest"
+        return f"the {self.k} features with the {which} group {self.map_kind}"
 
 
 class Neighbourhood:

@@ -174,6 +174,10 @@ class Procedure:
                 got=f"on_empty {self.on_empty!r}, k {self.k}",
             )
 
+    def describe(self) -> str:
+        """How a region is chosen, in words."""
+        return self.rule.describe(self.tail)
+
     def prepare(
         self,
         effects: Floats,
@@ -195,6 +199,27 @@ class Procedure:
             Tells rows of one label apart, so that their order cannot matter.
         """
         return Prepared(self, effects, labels, space, names)
+
+
+@dataclass(frozen=True)
+class _Screen:
+    """What makes flips fast; arrays of one stack.
+
+    Parameters
+    ----------
+    rows : (n_rows, n_features) float32
+    by_feature : (n_features, n_rows)
+        The stack, turned.
+    bounds : (n_features, n_folds) float64
+        What each fold's sum must exceed.
+    lowest : (n_features,) float32
+        What the sum over all rows must exceed for any fold to pass; NaN where unknown.
+    """
+
+    rows: Floats
+    by_feature: Floats
+    bounds: Floats
+    lowest: Floats
 
 
 class Prepared:
@@ -238,45 +263,54 @@ class Prepared:
         self._sign = -1.0 if procedure.tail == "negative" else 1.0
         x, self._present = filled(effects[self._order], procedure.missing)
         self._x = -x if self._sign < 0 else x
-        self._by_feature = np.ascontiguousarray(self._x.T)
         rule = procedure.rule
         self._hood: Neighbourhood | None = None
         self._distance: Floats | None = None
         if isinstance(rule, Cluster):
             self._hood = Neighbourhood(space, rule.connectivity)
             self._distance = distances(space, rule.near)
-        if isinstance(rule, Threshold | Cluster):
-            self._prepare_bounds(rule)
+        self._screen: _Screen | None = None
 
-    def _prepare_bounds(self, rule: Threshold | Cluster) -> None:
-        """The bound on each fold's sum, and one on the sum of all rows that no fold undercuts."""
-        n_rows, n_features = self._x.shape
-        bounds = np.empty((n_features, len(self._folds)))
-        lowest = np.empty(n_features)
+    def _bound_of(self, features: Ints | slice) -> Floats:
+        """(n_folds, n_features) what each fold's sum must exceed; no signs change it."""
+        rule = self.procedure.rule
+        assert isinstance(rule, Threshold | Cluster)
+        present = None if self._present is None else self._present[:, features]
+        n = rows_with_data(present, self._folds)
+        with np.errstate(over="ignore", invalid="ignore"):
+            Q = without_each(fold_sums(self._x[:, features], self._folds, square=True))
+            bound = bound_on_sum(rule.critical(n), n, Q)
+        # A feature of zeros alone never passes; nor one where too few rows have data.
         missing = self.procedure.missing
         least = np.array([[missing.least(len(fold.selection))] for fold in self._folds])
+        bound[(Q == 0) | np.isnan(bound) | (n < least)] = np.inf
+        return bound
+
+    def _screened(self) -> _Screen:
+        """What makes flips fast, built when the first flip asks for it."""
+        if self._screen is not None:
+            return self._screen
+        n_rows, n_features = self._x.shape
+        single = np.finfo(np.float32)
+        bounds = np.empty((n_features, len(self._folds)))
+        lowest = np.empty(n_features, np.float32)
         for start in range(0, n_features, _BLOCK):
             block = slice(start, start + _BLOCK)
-            x = self._x[:, block]
-            present = None if self._present is None else self._present[:, block]
-            n = rows_with_data(present, self._folds)
+            bound = self._bound_of(block)
+            size = np.abs(self._x[:, block].astype(np.float64))
             with np.errstate(over="ignore", invalid="ignore"):
-                Q = without_each(fold_sums(x, self._folds, square=True))
-                bound = bound_on_sum(rule.critical(n), n, Q)
-                bound[np.isnan(bound)] = np.inf
-                if present is not None:
-                    bound[n < least] = np.inf
-                size = np.abs(x.astype(np.float64))
                 reach = fold_sums(size, self._folds)  # the most a fold can take off the sum
-                # Rounding of a float32 product of n_rows terms, generously.
-                slack = 4 * (n_rows + 2) * np.finfo(np.float32).eps * size.sum(axis=0)
+                total = size.sum(axis=0)
+                # Rounding and underflow of a float32 sum of n_rows terms, generously.
+                slack = 4 * (n_rows + 2) * (single.eps * total + single.tiny)
                 low = (bound - reach).min(axis=0) - slack
-            low[np.isnan(low)] = -np.inf
-            bounds[block], lowest[block] = bound.T, low
-        self._bounds = bounds
+                # Where float32 may overflow, no bound holds: NaN keeps the feature in.
+                low[~(total < single.max / 2)] = np.nan
+                bounds[block], lowest[block] = bound.T, low
         with np.errstate(over="ignore"):
-            self._lowest = lowest.astype(np.float32)
-            self._screen = self._x.astype(np.float32, copy=False)
+            rows = self._x.astype(np.float32, copy=False)
+        self._screen = _Screen(rows, np.ascontiguousarray(self._x.T), bounds, lowest)
+        return self._screen
 
     # -- choosing ---------------------------------------------------------------------------
 
@@ -289,40 +323,61 @@ class Prepared:
 
     def _candidates(self, signs: Floats) -> Iterator[Ints]:
         """For each row of signs, the features that may be above the bound in some fold."""
+        screen = self._screened()
         with np.errstate(over="ignore", invalid="ignore"):
-            sums = signs.astype(np.float32) @ self._screen
-        # Negated, so that a sum that is not a number stays in.
-        may = ~(sums <= self._lowest)
+            sums = signs.astype(np.float32) @ screen.rows
+        # Negated, so that what is not a number stays in.
+        may = ~(sums <= screen.lowest)
         for row in may:
             yield np.flatnonzero(row)
+
+    def _passing(self, signs: Floats) -> Ints:
+        """The features above the bound in some fold, by a pass over all of them."""
+        if isinstance(self.procedure.rule, Strongest):
+            return np.empty(0, dtype=np.intp)
+        found = []
+        for start in range(0, self._x.shape[1], _BLOCK):
+            block = slice(start, start + _BLOCK)
+            S = self._sums_of(self._x[:, block], signs)
+            found.append(start + np.flatnonzero((self._bound_of(block) < S).any(axis=0)))
+        return np.concatenate(found)
+
+    def _sums_of(self, x: Floats, signs: Floats) -> Floats:
+        """(n_folds, n_features) sums over each fold's selection side, under signs."""
+        with np.errstate(over="ignore", invalid="ignore"):
+            signed = np.multiply(x, signs[:, None], order="C")
+            return without_each(fold_sums(signed, self._folds))
 
     def _members(self, signs: Floats, candidates: Ints) -> tuple[Ints, Bools]:
         """The features in any fold's mask, ascending, and (n_features_found, n_folds) bool."""
         rule = self.procedure.rule
         if isinstance(rule, Strongest):
             return self._strongest(signs, rule.k, rule.map_kind, range(len(self._folds)))
-        assert isinstance(rule, Threshold | Cluster)
-        # Gathered by feature (whole cache lines), worked on by row (long contiguous sums).
-        few = np.take(self._by_feature, candidates, axis=0)
-        x = np.multiply(few.T, signs[:, None], order="C")
-        with np.errstate(over="ignore", invalid="ignore"):
-            S = without_each(fold_sums(x, self._folds))
-        above = np.take(self._bounds, candidates, axis=0) < S.T
+        if self._screen is None:
+            x, bounds = self._x[:, candidates], self._bound_of(candidates).T
+        else:
+            # Gathered by feature (whole cache lines), worked on by row (contiguous sums).
+            x = np.take(self._screen.by_feature, candidates, axis=0).T
+            bounds = np.take(self._screen.bounds, candidates, axis=0)
+        S = self._sums_of(x, signs)
+        above = bounds < S.T
         some = above.any(axis=1)
         found, members = candidates[some], np.ascontiguousarray(above[some])
         if isinstance(rule, Cluster):
             assert self._hood is not None
-            t = self._t_of(S[:, some], x[:, some], found) if rule.pick == "peak" else None
+            t = self._t_of(S[:, some], found) if rule.pick == "peak" else None
             members = keep_clusters(members, found, rule, self._hood, t, self._distance)
             some = members.any(axis=1)
             found, members = found[some], members[some]
         return found, members
 
-    def _t_of(self, S: Floats, x: Floats, features: Ints) -> Floats:
+    def _t_of(self, S: Floats, features: Ints) -> Floats:
         """(n_features, n_folds) t values, from the folds' sums."""
         present = None if self._present is None else self._present[:, features]
         n = rows_with_data(present, self._folds)
-        return t_from_sums(n, S, without_each(fold_sums(x, self._folds, square=True))).T
+        with np.errstate(over="ignore", invalid="ignore"):
+            Q = without_each(fold_sums(self._x[:, features], self._folds, square=True))
+        return t_from_sums(n, S, Q).T
 
     def _strongest(
         self, signs: Floats, k: int, kind: str, which: Sequence[int] | range
@@ -358,7 +413,7 @@ class Prepared:
         for row, fold in enumerate(self._fold_of_row):
             inside = found[members[:, fold]]
             present = None if self._present is None else self._present[row, inside]
-            mean, coverage[row] = region_mean(self._by_feature[inside, row], present)
+            mean, coverage[row] = region_mean(self._x[row, inside], present)
             values[row] = mean * signs[row]
         return values, coverage
 
@@ -380,7 +435,7 @@ class Prepared:
             When a fold finds nothing and the plan says to stop.
         """
         signs = self._row_signs(None)
-        found, members, empty, _ = self._chosen(signs, self._first(signs))
+        found, members, empty, _ = self._chosen(signs, self._passing(signs))
         if empty and self.procedure.on_empty == "stop":
             raise EmptyFoldError(
                 f"{len(empty)} of {len(self.folds)} folds found no region",
@@ -401,7 +456,7 @@ class Prepared:
     def outcome(self, signs: Signs | None = None) -> Outcome:
         """The whole procedure under signs (one per person, as in `people`; default all +1)."""
         rows = self._row_signs(signs)
-        found, members, empty, replaced = self._chosen(rows, self._first(rows))
+        found, members, empty, replaced = self._chosen(rows, self._passing(rows))
         values, coverage = self._read(rows, found, members)
         people = self._per_person(values)
         back = np.argsort(self._order)
@@ -415,11 +470,6 @@ class Prepared:
             replaced=tuple(self._folds[k].name for k in replaced),
             dice=mean_dice(members),
         )
-
-    def _first(self, signs: Floats) -> Ints:
-        if isinstance(self.procedure.rule, Strongest):
-            return np.empty(0, dtype=np.intp)
-        return next(self._candidates(signs[None]))
 
     def flips(
         self, signs: Signs, progress: Callable[[int], None] | None = None
@@ -484,13 +534,21 @@ class Prepared:
             exact=exact,
             n_flips=total,
             n_at_least=count_at_least(observed, t),
-            abs_t_quantile=float(np.quantile(np.abs(t), 0.95)),
+            # "higher" takes one of the values, and so needs no arithmetic with infinities.
+            abs_t_quantile=float(np.quantile(np.abs(t), 0.95, method="higher")),
             noise_dice=float(usable.mean()) if len(usable) else float("nan"),
             noise_empty=float(n_empty.mean()),
         )
 
     def without_each_person(self) -> Floats:
         """The estimate of the whole procedure without each person, for the jackknife."""
+        if len(self.people) < 4:
+            raise InputError(
+                "too few subjects for the jackknife",
+                expected="at least 4",
+                got=str(len(self.people)),
+                remedy='use interval = "flips"',
+            )
         names = [str(i) for i in range(len(self._labels))]
         back = np.argsort(self._order)
         effects = self._sign * self._x[back]

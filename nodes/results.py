@@ -147,27 +147,29 @@ def cross_fitted_result(
         else f"whole-procedure sign flip, {test.n_flips} random flips"
     )
     sided = "greater" if procedure.tail == "positive" else "less"
-    deviation = float(people.std(ddof=1))
+    sign = 1 if procedure.tail == "positive" else -1
     where = f"in the search region '{search}'"
-    idle = len(outcome.empty) + len(outcome.replaced)
-    nothing = (
-        f" In {idle} of {len(ready.folds)} folds the rule found nothing; there "
-        + ("the strongest features stood in." if outcome.replaced else "the value counts as 0.")
-        if idle
-        else ""
-    )
+    folds = len(ready.folds)
+    notes = [
+        f" In {len(names)} of {folds} folds the rule found nothing; there {what}."
+        for names, what in (
+            (outcome.replaced, "the strongest features stood in"),
+            (outcome.empty, "the value counts as 0"),
+        )
+        if names
+    ]
     mean, low, high = estimate_texts(outcome.estimate, made.low, made.high)
     sentence = (
-        f"{roi}: {procedure.rule.describe()} {where}, chosen in {len(ready.folds)} folds "
+        f"{roi}: {procedure.describe()} {where}, chosen in {folds} folds "
         f"({plan}); held-out mean {mean} "
         f"({made.kind} 95 % interval {low} to {high}), {p_text(test.p)} "
-        f"({kind}, one-sided). Null: {FLIP_NULL} '{search}'; a rejection says that there is a "
-        f"replicable effect somewhere {where}, not at any one voxel.{nothing}"
+        f"({kind}, one-sided: {sided}). Null: {FLIP_NULL} '{search}'; a rejection says that there "
+        f"is a replicable effect somewhere {where}, not at any one voxel.{''.join(notes)}"
     )
     result = RoiResult(
         roi=roi,
         plan=plan,
-        rule=procedure.rule.describe(),
+        rule=procedure.describe(),
         search=search,
         n_subjects=len(ready.people),
         estimate=outcome.estimate,
@@ -179,10 +181,10 @@ def cross_fitted_result(
         p_kind=kind,
         sided=sided,
         null=FLIP_NULL,
-        dz=outcome.estimate / deviation if deviation else None,
+        dz=sign * test.t / float(np.sqrt(len(people))) if np.isfinite(test.t) and test.t else None,
         n_flips=test.n_flips,
         p_error=None if test.exact else float(np.sqrt(test.p * (1 - test.p) / test.n_flips)),
-        n_folds=len(ready.folds),
+        n_folds=folds,
         n_empty=len(outcome.empty),
         empty=outcome.empty,
         replaced=outcome.replaced,

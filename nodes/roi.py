@@ -146,7 +146,7 @@ def one_sample_t(values: npt.ArrayLike, level: float = 0.95) -> TTest:
     df, mean, deviation = len(x) - 1, float(x.mean()), float(x.std(ddof=1))
     t = studentised(x)
     half = float(stats.t.ppf((1 + level) / 2, df)) * deviation / float(np.sqrt(len(x)))
-    dz = mean / deviation if deviation else float(np.copysign(np.inf, mean)) if mean else 0.0
+    dz = t / float(np.sqrt(len(x)))
     return TTest(
         mean,
         t,

@@ -210,7 +210,7 @@ def _collect(roi: Roi, settings: Settings, nodes: dict[str, Any]) -> RoiOutput:
         record = read_record(test.result.outputs.record_file)
     else:
         assert roi.procedure is not None, "only the exploratory plan goes without a test"
-        rule = roi.procedure.rule.describe()
+        rule = roi.procedure.describe()
         record = exploratory_result(values, roi.names, rule, sizes[0], coverage).as_dict()
     image = open_image(masks[0][1])
     record["voxel_mm3"] = float(abs(np.linalg.det(image.affine[:3, :3])))
