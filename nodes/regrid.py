@@ -7,6 +7,8 @@ the source's finer voxels ask for.
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 import numpy.typing as npt
 
