@@ -83,9 +83,7 @@ def covered_fraction(mask: Bools, source: Grid, target: Grid) -> Floats:
     return fraction / len(shifts)
 
 
-def _looked_up(
-    volume: npt.NDArray[np.generic], source: Grid, mm: Floats
-) -> npt.NDArray[np.generic]:
+def _looked_up(volume: npt.NDArray[Any], source: Grid, mm: Floats) -> npt.NDArray[Any]:
     inverse = np.linalg.inv(source.affine)
     # A millionth of a voxel of slack: a point on a border must not fall by rounding.
     where = np.rint(mm @ inverse[:3, :3].T + inverse[:3, 3] + 1e-6).astype(int)
