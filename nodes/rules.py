@@ -63,14 +63,44 @@ class Inputs:
         All literal input values, by field.
     where : str
         The node's name in the graph.
+    arriving : frozenset of str
+        The fields that an edge fills: their values are not known before the run.
+    declared : mapping of str to Touch
+        What each origin declared in the study touches, by its source.
     """
 
     trees: Mapping[str, Tree]
     settings: Mapping[str, Any]
     where: str
+    arriving: frozenset[str] = frozenset()
+    declared: Mapping[str, Touch] = field(default_factory=dict)
 
 
-Rule = Callable[[Inputs], Tree]
+@dataclass(frozen=True)
+class Rule:
+    """How one output inherits touches.
+
+    An input that carries data and that the rule does not name (a parameter computed from data,
+    say) is added to every element: what sets a parameter chooses too.
+
+    Parameters
+    ----------
+    names : frozenset of str or None
+        The inputs that `derive` accounts for; None for all of them.
+    derive : callable
+        From the inputs to the output's tree.
+    """
+
+    names: frozenset[str] | None
+    derive: Callable[[Inputs], Tree]
+
+    def __call__(self, inputs: Inputs) -> Tree:
+        """The tree of the output."""
+        tree = self.derive(inputs)
+        if self.names is None:
+            return tree
+        extra = _all(inputs, sorted(inputs.trees.keys() - self.names))
+        return _with(tree, extra) if extra else tree
 
 
 def leaves(tree: Tree) -> Iterator[Leaf]:
@@ -111,6 +141,13 @@ def stamped(tree: Tree, place: str) -> Tree:
     return Leaf(tree.touch, parents, place, tree.single)
 
 
+def _with(tree: Tree, extra: list[Leaf]) -> Tree:
+    if isinstance(tree, Leaf):
+        made = joined([tree, *extra], single=tree.single)
+        return made
+    return Branch([_with(child, extra) for child in tree.children])
+
+
 def path_to(leaf: Leaf, unit_bit: int) -> list[str]:
     """The places by which a unit came into a leaf, the file first."""
     places: list[str] = []
@@ -132,24 +169,27 @@ def _all(inputs: Inputs, names: Iterable[str], geometry: Iterable[str] = ()) -> 
     return parts
 
 
-def everything(inputs: Inputs) -> Tree:
-    """Every element touches all inputs: the rule for what we do not know."""
+def _everything(inputs: Inputs) -> Tree:
     return joined(_all(inputs, inputs.trees), single=False)
 
 
-def only(*fields: str, geometry: Sequence[str] = ()) -> Rule:
-    """One element that touches these inputs, whole, and no other."""
+everything = Rule(None, _everything)
+"""Every element touches all inputs: the rule for what we do not know."""
 
-    def rule(inputs: Inputs) -> Tree:
-        return joined(_all(inputs, fields, geometry))
 
-    return rule
+def only(*fields: str, geometry: Sequence[str] = (), ignored: Sequence[str] = ()) -> Rule:
+    """One element that touches these inputs, whole; the ignored ones cannot reach it."""
+
+    return Rule(
+        frozenset({*fields, *geometry, *ignored}),
+        lambda inputs: joined(_all(inputs, fields, geometry)),
+    )
 
 
 def each(*fields: str, shared: Sequence[str] = (), geometry: Sequence[str] = ()) -> Rule:
     """Element i touches item i of each field, and the shared inputs whole."""
 
-    def rule(inputs: Inputs) -> Tree:
+    def derive(inputs: Inputs) -> Tree:
         trees = [inputs.trees[name] for name in fields if name in inputs.trees]
         common = _all(inputs, shared, geometry)
         n = count(trees)
@@ -162,12 +202,13 @@ def each(*fields: str, shared: Sequence[str] = (), geometry: Sequence[str] = ())
             ]
         )
 
-    return rule
+    return Rule(frozenset({*fields, *shared, *geometry}), derive)
 
 
 def all_but_held_out(
     data: str,
     held_out: Callable[[Mapping[str, Any]], list[tuple[int, ...]]],
+    known_by: Sequence[str] = (),
     shared: Sequence[str] = (),
     geometry: Sequence[str] = (),
 ) -> Rule:
@@ -179,16 +220,17 @@ def all_but_held_out(
         The field with one item per row.
     held_out : callable
         From the node's settings to the row numbers held out by each fold.
+    known_by : sequence of str
+        The settings that `held_out` reads; when one arrives over an edge, no fold can be told.
     shared, geometry : sequence of str
         Inputs that every fold touches whole, by values or by geometry only.
     """
 
-    def rule(inputs: Inputs) -> Tree:
+    def derive(inputs: Inputs) -> Tree:
         common = _all(inputs, shared, geometry)
-        tree = inputs.trees[data]
-        if isinstance(tree, Leaf):  # one opaque element: no fold can be told apart
-            return joined([tree, *common], single=False)
-        folds = held_out(inputs.settings)
+        tree = inputs.trees.get(data, Leaf(Touch(), single=False))
+        if isinstance(tree, Leaf) or any(name in inputs.arriving for name in known_by):
+            return joined([*leaves(tree), *common], single=False)
         rows = range(len(tree.children))
         return Branch(
             [
@@ -198,11 +240,11 @@ def all_but_held_out(
                         *common,
                     ]
                 )
-                for out in map(frozenset, folds)
+                for out in map(frozenset, held_out(inputs.settings))
             ]
         )
 
-    return rule
+    return Rule(frozenset({data, *shared, *geometry}), derive)
 
 
 @dataclass(frozen=True)
@@ -226,6 +268,8 @@ class Meeting:
         # Nothing known of a side is an empty touch, which the judge will not let pass.
         mask = inputs.trees.get(self.mask) or Leaf(Touch(), place=f"{inputs.where}.{self.mask}")
         data = inputs.trees.get(self.data) or Leaf(Touch(), place=f"{inputs.where}.{self.data}")
+        if isinstance(mask, Branch) and len(mask.children) == 1:
+            mask = mask.children[0]  # one mask in a list is one mask for all data
         n = count([mask, data]) if isinstance(data, Branch) or isinstance(mask, Branch) else 1
         if n is None:  # lengths disagree: everything against everything
             return [(joined(leaves(mask)), joined(leaves(data)))]
@@ -233,16 +277,22 @@ class Meeting:
             (joined(leaves(element(mask, i))), joined(leaves(element(data, i)))) for i in range(n)
         ]
 
-    def rule(self, inputs: Inputs) -> Tree:
+    @property
+    def rule(self) -> Rule:
         """Value i touches mask i and data i, and carries the mark of their meeting."""
+        return Rule(frozenset({self.mask, self.data}), self._values)
+
+    def _values(self, inputs: Inputs) -> Tree:
         biased = bool(self.biased and inputs.settings.get(self.biased))
+        data = inputs.trees.get(self.data)
         made: list[Tree] = []
-        for i, (mask, data) in enumerate(self.pairs(inputs)):
-            value = joined([mask, data])
-            mark = Extraction(f"{inputs.where}[{i}]", mask.touch.values, data.touch.values)
+        for i, (mask, read) in enumerate(self.pairs(inputs)):
+            value = joined([mask, read])
+            mark = Extraction(f"{inputs.where}[{i}]", mask.touch.values, read.touch.values)
             value.touch = value.touch.marked(mark, biased=biased)
             made.append(value)
-        if len(made) == 1 and not isinstance(inputs.trees.get(self.data), Branch):
+        if len(made) == 1 and isinstance(made[0], Leaf) and not isinstance(data, Branch):
+            made[0].single = data is not None and data.single
             return made[0]
         return Branch(made)
 

@@ -7,7 +7,7 @@ and ``feature_size`` (mm3 or mm2 per feature).
 
 from __future__ import annotations
 
-from typing import Protocol
+from typing import Any, Protocol
 
 import numpy as np
 import numpy.typing as npt
@@ -96,7 +96,7 @@ class Grid:
         inside[self.voxels[features]] = True
         return Grid(self.shape, self.affine, inside)
 
-    def filled(self, values: npt.NDArray[np.generic]) -> npt.NDArray[np.generic]:
+    def filled(self, values: npt.NDArray[Any]) -> npt.NDArray[Any]:
         """A volume holding one value per feature, zero elsewhere."""
         volume = np.zeros(int(np.prod(self.shape)), dtype=values.dtype)
         volume[self.voxels] = values

@@ -154,7 +154,9 @@ class UnitTable:
         return found
 
     def measured(self, suffixes: frozenset[str]) -> int:
-        """The set of units whose suffix is one of these (or open)."""
+        """The set of units whose suffix is one of these (or open); all, if one of these is open."""
+        if "" in suffixes:
+            return self.everything
         return self._pack(
             i for i, u in enumerate(self.units) if not u.suffix or u.suffix in suffixes
         )

@@ -13,11 +13,14 @@ What a graph cannot show, and what is done about it:
 from __future__ import annotations
 
 import re
-from collections.abc import Mapping
+from collections.abc import Callable, Iterator, Mapping
+from dataclasses import replace
+from functools import partial
 from pathlib import Path
 from typing import Any
 
 import networkx as nx
+from nipype.interfaces.base.traits_extension import BasePath
 from nipype.interfaces.io import DataGrabber, SelectFiles
 from nipype.pipeline.engine import JoinNode, MapNode
 
@@ -39,7 +42,7 @@ from ..nodes.rules import (
 from ..nodes.touch import Touch
 from .study import Study
 
-_SINGLE = (traits.BaseStr, traits.BaseFloat, traits.BaseInt, traits.BaseBool)
+_SINGLE = (traits.BaseStr, traits.BaseFloat, traits.BaseInt, traits.BaseBool, BasePath)
 
 
 def node_name(node: Any) -> str:
@@ -84,49 +87,57 @@ class Ancestry:
 
     def _inputs_of(self, node: Any, name: str) -> Inputs:
         settings = {**settings_of(node.interface.inputs), **settings_of(node.inputs)}
+        edges = self._incoming(node, settings)
+        for field in edges:  # what an edge brings replaces a literal
+            settings.pop(field, None)
         trees: dict[str, Tree] = {}
-        edges = self._incoming(node)
         volumes = getattr(type(node.interface), "volumes", {})
         for field, value in settings.items():
-            if field not in edges:
-                numbers = settings.get(volumes.get(field, ""))
-                tree = self._literal(value, numbers)
-                if tree is not None:
-                    trees[field] = tree
+            tree = self._literal(value, settings.get(volumes.get(field, "")))
+            if tree is not None:
+                trees[field] = tree
         trees.update(edges)
         for (where, field), extra in self._seen.items():
             if where == name:
                 trees[field] = _with_extra(trees.get(field), extra)
-        return Inputs(trees, settings, name)
+        return Inputs(trees, settings, name, frozenset(edges), self.study.declared)
 
-    def _incoming(self, node: Any) -> dict[str, Tree]:
+    def _incoming(self, node: Any, settings: dict[str, Any]) -> dict[str, Tree]:
         """The trees that arrive over edges, the slots of a JoinNode put back into lists."""
         arriving: dict[str, Tree] = {}
         slots: dict[str, dict[int, Tree]] = {}
         join_fields = node.joinfield if isinstance(node, JoinNode) else []
+
+        def slot_of(field: str) -> tuple[str, int] | None:
+            match = re.fullmatch(r"(.+)J(\d+)", field)
+            return (match[1], int(match[2])) if match and match[1] in join_fields else None
+
+        # Right behind its iterable, a JoinNode's slots hold literals.
+        for field in list(settings):
+            slot = slot_of(field)
+            if slot is not None:
+                tree = self._literal(settings.pop(field)) or Leaf(Touch())
+                slots.setdefault(slot[0], {})[slot[1]] = tree
         for source, _, data in self._graph.in_edges(node, data=True):
             for output, field in data["connect"]:
                 tree = self._source(node_name(source), output)
-                if tree is None:
-                    continue
-                slot = re.fullmatch(r"(.+)J(\d+)", field)
-                if slot and slot[1] in join_fields:
-                    slots.setdefault(slot[1], {})[int(slot[2])] = tree
+                slot = slot_of(field)
+                if slot is not None:
+                    slots.setdefault(slot[0], {})[slot[1]] = tree
                 else:
                     arriving[field] = tree
         for field, items in slots.items():
             listed = Branch([items[k] for k in sorted(items)])
             # With unique=True the engine drops repeats: which, is not known before the run.
-            arriving[field] = (
-                joined(leaves(listed), single=False) if getattr(node, "unique", False) else listed
-            )
+            unique = getattr(node, "_unique", False)
+            arriving[field] = joined(leaves(listed), single=False) if unique else listed
         return arriving
 
-    def _source(self, name: str, output: Any) -> Tree | None:
+    def _source(self, name: str, output: Any) -> Tree:
         if isinstance(output, tuple):  # a connection function: (output, function, arguments)
-            tree = self.outputs.get((name, output[0]))
-            return None if tree is None else joined(leaves(tree), single=False)
-        return self.outputs.get((name, output))
+            tree = self.outputs.get((name, output[0]), Leaf(Touch()))
+            return joined(leaves(tree), single=False)
+        return self.outputs.get((name, output), Leaf(Touch()))
 
     def _literal(self, value: Any, volume: Any = None) -> Tree | None:
         """The tree of a literal: None when it holds no file."""
@@ -140,7 +151,7 @@ class Ancestry:
             return None
         number = volume if isinstance(volume, int) and volume >= 0 else None
         touch = self.study.touch_of(str(value), number)
-        if touch is None or not str(value):
+        if touch is None:
             return None
         place = self.study.relative(str(value))
         return Leaf(touch, place=place if number is None else f"{place} volume {number}")
@@ -172,51 +183,16 @@ class Ancestry:
         return {name: tree for name, tree in trees.items() if tree is not None}
 
     def _mapped(self, node: Any, inputs: Inputs, names: list[str]) -> dict[str, Tree]:
-        iterated = list(node.iterfield)
-        rest = {k: v for k, v in inputs.trees.items() if k not in iterated}
-        nested = bool(getattr(node, "nested", False))
-
-        def over(trees: Mapping[str, Tree], values: Mapping[str, Any], name: str) -> Tree:
-            lengths = {len(t.children) for t in trees.values() if isinstance(t, Branch)}
-            lengths |= {
-                len(v) for k, v in values.items() if k not in trees and isinstance(v, list | tuple)
-            }
-            # The length is known when everything that has one agrees and nothing is opaque.
-            if len(lengths) != 1 or any(
-                isinstance(t, Leaf) and not t.single for t in trees.values()
-            ):
-                whole = {k: joined(leaves(t), single=False) for k, t in trees.items()}
-                settings = {**inputs.settings, **values}
-                tree = _ruled(
-                    node.interface, name, Inputs({**rest, **whole}, settings, inputs.where)
-                )
-                return joined(leaves(tree), single=False)
-            made: list[Tree] = []
-            for i in range(lengths.pop()):
-                items = {k: element(t, i) for k, t in trees.items()}
-                ith = {
-                    k: v[i] if isinstance(v, list | tuple) and i < len(v) else v
-                    for k, v in values.items()
-                }
-                if nested and any(isinstance(t, Branch) for t in items.values()):
-                    made.append(over(items, ith, name))
-                else:
-                    made.append(
-                        _ruled(
-                            node.interface,
-                            name,
-                            Inputs(
-                                {**rest, **items},
-                                {**inputs.settings, **ith},
-                                f"{inputs.where}[{i}]",
-                            ),
-                        )
-                    )
-            return Branch(made)
-
-        trees = {k: inputs.trees[k] for k in iterated if k in inputs.trees}
-        values = {k: inputs.settings[k] for k in iterated if k in inputs.settings}
-        return {name: over(trees, values, name) for name in names}
+        """The outputs of a MapNode: a list with one tree per iteration."""
+        given = iterations(node, inputs)
+        made: dict[str, Tree] = {}
+        for name in names:
+            if isinstance(given, list):
+                made[name] = _over(given, partial(_ruled, node.interface, name))
+            else:
+                tree = _ruled(node.interface, name, given)
+                made[name] = joined(leaves(tree), single=False)
+        return made
 
     # -- while running ----------------------------------------------------------------------
 
@@ -225,6 +201,66 @@ class Ancestry:
         self._seen.setdefault((node_name(node), field), []).extend(
             Leaf(touch, place=f"{place} (seen while running)") for place, touch in found.items()
         )
+
+
+Iterations = Inputs | list["Iterations"]
+
+
+def iterations(node: Any, inputs: Inputs) -> Iterations:
+    """What each iteration of a MapNode is given; as one when their number is not known.
+
+    For a nested MapNode a list of lists; for any other node its inputs, as they are.
+    """
+    if not isinstance(node, MapNode):
+        return inputs
+    iterated = [f for f in node.iterfield if f in inputs.trees or f in inputs.settings]
+    return _iterated(inputs, iterated, nested=bool(getattr(node, "nested", False)))
+
+
+def _iterated(inputs: Inputs, iterated: list[str], *, nested: bool) -> Iterations:
+    lengths: set[int] = set()
+    known = bool(iterated)
+    for field in iterated:
+        tree, value = inputs.trees.get(field), inputs.settings.get(field)
+        if isinstance(tree, Branch):
+            lengths.add(len(tree.children))
+        elif isinstance(tree, Leaf):
+            known = known and tree.single  # the engine puts a single value into a list
+        elif isinstance(value, list | tuple):
+            lengths.add(len(value))
+    if not known or len(lengths) > 1:
+        whole: dict[str, Tree] = {
+            field: joined(leaves(tree), single=False)
+            for field, tree in inputs.trees.items()
+            if field in iterated
+        }
+        return replace(inputs, trees={**inputs.trees, **whole})
+    made: list[Iterations] = []
+    for i in range(lengths.pop() if lengths else 1):
+        trees, settings = dict(inputs.trees), dict(inputs.settings)
+        for field in iterated:
+            if field in trees:
+                trees[field] = element(trees[field], i)
+            value = settings.get(field)
+            if isinstance(value, list | tuple) and i < len(value):
+                settings[field] = value[i]
+        one = replace(inputs, trees=trees, settings=settings, where=f"{inputs.where}[{i}]")
+        deeper = nested and any(isinstance(trees.get(field), Branch) for field in iterated)
+        made.append(_iterated(one, iterated, nested=True) if deeper else one)
+    return made
+
+
+def _over(given: list[Iterations], derive: Callable[[Inputs], Tree]) -> Tree:
+    return Branch([_over(one, derive) if isinstance(one, list) else derive(one) for one in given])
+
+
+def flat(given: Iterations) -> Iterator[Inputs]:
+    """All iterations, in order."""
+    if isinstance(given, list):
+        for one in given:
+            yield from flat(one)
+    else:
+        yield given
 
 
 def meetings_of(interface: Any) -> tuple[Meeting | None, Statistic | None]:

@@ -18,15 +18,17 @@ reads behind its back without receiving their paths.
 
 from __future__ import annotations
 
+import time
 from collections.abc import Callable
 from pathlib import Path
 from typing import Any
 
+import networkx as nx
 from nipype.pipeline.plugins.base import PluginBase
 from nipype.pipeline.plugins.linear import LinearPlugin
 
 from ..nodes.errors import Refused, SequesterError
-from ..nodes.interfaces.base import kept_error
+from ..nodes.interfaces.base import SequesterInterface, kept_error
 from ..nodes.interfaces.generic import settings_of
 from ..nodes.rules import joined, leaves
 from ..nodes.touch import Touch
@@ -50,7 +52,7 @@ class GuardRefused(Refused):
     """
 
     def __init__(self, findings: list[Finding], study: Study, *, started: bool = False) -> None:
-        self.findings, self.study = findings, study
+        self.findings, self.study, self.started = findings, study, started
         # A chain of elements with the same fault is told once, with how many more there are.
         told: dict[tuple[str, str], list[Finding]] = {}
         for finding in findings:
@@ -96,6 +98,8 @@ class GuardPlugin(PluginBase):
         self.findings: list[Finding] = []
         self._refused: list[Finding] = []
         self._errors: list[SequesterError] = []
+        self._started = 0.0
+        self._folders: dict[str, Any] = {}
 
     def run(self, graph: Any, config: Any, updatehash: bool = False) -> None:
         """Called by the engine with the expanded graph.
@@ -116,16 +120,24 @@ class GuardPlugin(PluginBase):
             raise GuardRefused(refused, self.study)
         if self.dry:
             return
+        self._started = time.time()
+        self._folders = {str(Path(n.output_dir()).resolve()): n for n in ancestry.nodes}
         for node in ancestry.nodes:
+            if isinstance(node.interface, SequesterInterface):
+                # By size and time stamp, another subject's file could pass for this one's.
+                execution = {**node.config["execution"], "hash_method": "content"}
+                node.config = {**node.config, "execution": execution}
             if meetings_of(node.interface)[0] is not None:
-                node.inputs.clearance = "cleared"
+                # A MapNode hands its elements what its interface holds.
+                for inputs in (node.inputs, node.interface.inputs):
+                    inputs.trait_set(clearance="cleared")
         total, done = len(ancestry.nodes), 0
 
         def status(node: Any, what: str) -> None:
             nonlocal done
             if what == "start":
                 self._tell("start", node, done, total)
-                self._look(ancestry, node)
+                self._look(ancestry, graph, node)
                 return
             done += 1
             self._tell(what, node, done, total)
@@ -149,22 +161,24 @@ class GuardPlugin(PluginBase):
         if self.listener is not None:
             self.listener(what, node_name(node), done, total)
 
-    def _look(self, ancestry: Ancestry, node: Any) -> None:
+    def _look(self, ancestry: Ancestry, graph: Any, node: Any) -> None:
         """Compare a node's real inputs with what the graph promised; judge again if they differ."""
         node._get_inputs()
-        name = node_name(node)
-        promised = ancestry.inputs[name]
+        promised = ancestry.inputs[node_name(node)]
         changed = False
         settings = {**settings_of(node.interface.inputs), **settings_of(node.inputs)}
         for field, value in settings.items():
-            tree = promised.trees.get(field)
-            known = _union(tree)
+            known = _union(promised.trees.get(field))
             found = {}
             for path in files_in(value):
-                touch = self.study.recognise(path)
-                if touch is None and tree is None and not self._ours(node, path):
-                    # A path that came over an edge from a node that touches nothing.
-                    touch = self.study.touch_of(path)
+                if field in promised.arriving:
+                    touch = self.study.recognise(path)
+                    if touch is None and not self._made_upstream(graph, node, path):
+                        touch = self.study.touch_of(path)
+                elif self.study.is_declared(path):
+                    continue  # the graph showed this literal, volume by volume
+                else:
+                    touch = self.study.recognise(path)
                 if touch is not None and not _within(touch, known):
                     found[self.study.relative(path)] = touch
             if found:
@@ -178,10 +192,13 @@ class GuardPlugin(PluginBase):
             self._refused = refused
             raise GuardRefused(refused, self.study, started=True)
 
-    def _ours(self, node: Any, path: str) -> bool:
-        """Whether a file was made by this run, inside the engine's working folder."""
-        base = Path(node.base_dir or ".").resolve()
-        return Path(path).resolve().is_relative_to(base)
+    def _made_upstream(self, graph: Any, node: Any, path: str) -> bool:
+        """Whether a file lies in the folder of a node upstream, or was written by this run."""
+        full = Path(path).resolve()
+        owner = next((self._folders[str(f)] for f in full.parents if str(f) in self._folders), None)
+        if owner is not None:
+            return owner is node or nx.has_path(graph, owner, node)
+        return full.stat().st_mtime >= self._started
 
 
 def _union(tree: Any) -> Touch:

@@ -14,12 +14,12 @@ may run only into values marked biased, which no statistic accepts.
 from __future__ import annotations
 
 import textwrap
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from ..nodes.foldnull import plain_t_false_positives
 from ..nodes.rules import Leaf, Meeting, Statistic, joined, leaves, path_to
 from ..nodes.touch import Extraction, UnitTable, cross_fitted
-from .ancestry import Ancestry, meetings_of, node_name
+from .ancestry import Ancestry, flat, iterations, meetings_of, node_name
 
 _WIDTH = 84  # of a line of a refusal's reason and cure
 APART, LEAK, UNPROVEN = "apart", "leak", "unproven"
@@ -101,48 +101,50 @@ def judge(ancestry: Ancestry) -> list[Finding]:
 
 def _extractions(ancestry: Ancestry, node: object, meeting: Meeting) -> list[Finding]:
     name = node_name(node)
-    inputs = ancestry.inputs[name]
-    pairs = meeting.pairs(inputs)
-    biased = bool(meeting.biased and inputs.settings.get(meeting.biased))
-    found = []
-    for i, (mask, data) in enumerate(pairs):
-        item = i if len(pairs) > 1 else None
-        found.append(_meet(ancestry.study.table, name, item, mask, data, biased=biased))
-    return found
+    met = [
+        (mask, data, bool(meeting.biased and one.settings.get(meeting.biased)))
+        for one in flat(iterations(node, ancestry.inputs[name]))
+        for mask, data in meeting.pairs(one)
+    ]
+    table = ancestry.study.table
+    return [
+        _meet(table, name, i if len(met) > 1 else None, mask, data, biased=biased)
+        for i, (mask, data, biased) in enumerate(met)
+    ]
+
+
+def _measured_in(table: UnitTable, data: int) -> int:
+    """The units of the tested measurement: only these count for a leak."""
+    return table.measured(frozenset(unit.suffix for unit in table.units_of(data)))
 
 
 def _meet(
     table: UnitTable, name: str, item: int | None, mask: Leaf, data: Leaf, *, biased: bool
 ) -> Finding:
-    suffixes = frozenset(unit.suffix for unit in table.units_of(data.touch.values))
-    measured = table.measured(suffixes)
+    measured = _measured_in(table, data.touch.values)
     of_mask, of_data = mask.touch.values & measured, data.touch.values & measured
     unknown = sorted(mask.touch.unknown | data.touch.unknown)
     tested = table.people_of(of_data)
     choosers = table.people_of(of_mask)
     shared = table.overlapping(of_mask) & of_data
-    level, verdict, reason, cure = "", APART, "", ""
+    verdict, level, reason, cure = APART, "", "", ""
     if shared:
         verdict, reason = LEAK, "the mask was chosen on the data it would be tested on"
         cure = (
             "choose the region without the tested data (plan leave-one-subject-out, or a mask "
             "with another origin), or read it as exploratory: a value without interval and p"
         )
-    elif choosers & tested:
+    elif choosers & tested and not (len(choosers) == 1 and choosers == tested):
+        verdict, level = LEAK, "subject"
         shared = sum(1 << n for n in table.numbers(of_mask) if table.people_of(1 << n) & tested)
-        if len(choosers) == 1 and choosers == tested:
-            level, reason = "run", "the mask was chosen on other runs of this one subject"
-            shared = 0
-        else:
-            level, verdict = "subject", LEAK
-            reason = (
-                "the mask was chosen on other runs of several subjects, the tested ones among "
-                "them: their persistent effects are in both"
-            )
-            cure = (
-                "leave the tested subject out of the selection, or choose each subject's own "
-                "mask from their own other runs"
-            )
+        reason = (
+            "the mask was chosen on other runs of several subjects, the tested ones among "
+            "them: their persistent effects are in both"
+        )
+        cure = (
+            "leave the tested subject out of the selection, or choose each subject's own "
+            "mask from their own other runs"
+        )
     elif unknown:
         verdict = UNPROVEN
         reason = f"nobody has declared what {', '.join(unknown[:3])} derives from"
@@ -153,29 +155,31 @@ def _meet(
             "list the files in the study table, and give them to a node as inputs (literals, "
             "iterables, a file grabber) so that the graph shows them"
         )
-    elif not of_mask and not mask.touch.origins and not mask.touch.values:
+    elif not mask.touch.values and not mask.touch.origins:
         verdict, reason = UNPROVEN, "nothing says where the mask comes from"
         cure = "state its origin in the study file"
+    elif choosers & tested:
+        level, reason = "run", "the mask was chosen on other runs of this one subject"
     else:
         level, reason = "subject", "the mask was chosen without any data of the tested subjects"
-    bit = shared & -shared
-    data_bit = (table.overlapping(bit) & of_data) if verdict == LEAK and not level else 0
-    people_bit = of_data & -of_data if verdict == LEAK and level else 0
-    towards = (data_bit & -data_bit) or people_bit
+    leak = verdict == LEAK
+    # One unit on each side for the two ways: the same, or two that overlap (or one person's).
+    to_data = shared & -shared if leak and not level else of_data & -of_data
+    to_mask = table.overlapping(to_data) & of_mask if leak and not level else shared
     return Finding(
         "extraction",
         name,
         item,
         verdict,
         level,
-        verdict == APART or (verdict == LEAK and biased),
+        verdict == APART or (leak and biased),
         of_mask,
         of_data,
         mask.touch.geometry,
-        shared if verdict == LEAK else 0,
+        shared if leak else 0,
         tuple(sorted(mask.touch.origins)),
-        tuple(path_to(mask, bit)) if verdict == LEAK else (),
-        tuple(path_to(data, towards)) if verdict == LEAK else (),
+        tuple(path_to(mask, to_mask & -to_mask)) if leak else (),
+        tuple(path_to(data, to_data)) if leak else (),
         _place(mask),
         reason,
         cure,
@@ -195,7 +199,10 @@ def _statistic(ancestry: Ancestry, node: object, statistic: Statistic) -> Findin
         return None
     table = ancestry.study.table
     whole = joined(leaves(tree))
-    marks = whole.touch.extractions
+    marks = [
+        replace(mark, mask=mark.mask & _measured_in(table, mark.data))
+        for mark in whole.touch.extractions
+    ]
     mask_units = data_units = 0
     for mark in marks:
         mask_units |= mark.mask
@@ -224,12 +231,13 @@ def _statistic(ancestry: Ancestry, node: object, statistic: Statistic) -> Findin
             ),
         )
         cure = statistic.cure
-    elif not marks and whole.touch.unknown:
-        verdict, reason = (
-            UNPROVEN,
-            (f"nobody has declared what {', '.join(sorted(whole.touch.unknown)[:3])} derives from"),
-        )
+    elif whole.touch.unknown:
+        unknown = ", ".join(sorted(whole.touch.unknown)[:3])
+        verdict, reason = UNPROVEN, f"nobody has declared what {unknown} derives from"
         cure = "state its origin in the study file"
+    elif not marks:
+        verdict, reason = UNPROVEN, "nothing says in which region its values were read"
+        cure = "read them with Extract, so that the region and the data are judged"
     return Finding(
         "statistic",
         name,
@@ -244,8 +252,6 @@ def _statistic(ancestry: Ancestry, node: object, statistic: Statistic) -> Findin
     )
 
 
-def _weakest(marks: frozenset[Extraction], table: UnitTable) -> str:
-    for mark in marks:
-        if table.people_of(mark.mask) & table.people_of(mark.data):
-            return "run"
-    return "subject"
+def _weakest(marks: list[Extraction], table: UnitTable) -> str:
+    within = any(table.people_of(mark.mask) & table.people_of(mark.data) for mark in marks)
+    return "run" if within else "subject"

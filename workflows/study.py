@@ -14,7 +14,7 @@ from dataclasses import dataclass, field
 from pathlib import Path
 
 from ..nodes.errors import InputError
-from ..nodes.touch import ENTITIES, Touch, Unit, UnitTable
+from ..nodes.touch import ENTITIES, Touch, Unit, UnitTable, union
 from .digests import digest
 
 COLUMNS = (
@@ -126,6 +126,7 @@ class Study:
     origins: Sequence[Origin] = ()
     columns: Sequence[str] = COLUMNS
     table: UnitTable = field(init=False)
+    declared: dict[str, Touch] = field(init=False)
 
     def __post_init__(self) -> None:
         people: dict[Unit, str] = {}
@@ -141,6 +142,14 @@ class Study:
                     remedy="give all rows of a subject the same value",
                 )
         self.table = UnitTable((row.unit for row in self.rows), people)
+        self.declared = {
+            origin.source: union(
+                Touch(values=self._derived(other), origins=frozenset({other.source}))
+                for other in self.origins
+                if other.source == origin.source
+            )
+            for origin in self.origins
+        }
         self._by_path: dict[str, list[tuple[int | None, int]]] = {}
         for row in self.rows:
             entry = (row.volume, self.table.bits([row.unit]))
@@ -152,7 +161,13 @@ class Study:
                 for key in self._keys(name):
                     self._origin_of[key] = origin
         self._sizes: dict[int, list[str]] | None = None
-        self._contents: dict[int, dict[str, str]] = {}
+        self._contents: dict[int, dict[str, list[str]]] = {}
+
+    def _derived(self, origin: Origin) -> int:
+        bits = 0
+        for pattern in origin.derived_from:
+            bits |= self.table.matching(pattern)
+        return bits
 
     def _keys(self, path: str) -> set[str]:
         full = os.path.abspath(self.root / path)
@@ -177,10 +192,7 @@ class Study:
         return None
 
     def _touch_of_origin(self, origin: Origin) -> Touch:
-        bits = 0
-        for pattern in origin.derived_from:
-            bits |= self.table.matching(pattern)
-        return Touch(values=bits, origins=frozenset({origin.source}))
+        return self.declared[origin.source]
 
     def touch_of(self, path: str, volume: int | None = None) -> Touch | None:
         """What a file touches: its unit, its origin, unknown; None when it is no file.
@@ -195,10 +207,14 @@ class Study:
             touch = self._touch_of_key(key, volume)
             if touch is not None:
                 return touch
-        full = self.root / path
-        if full.is_file() or full.is_dir():
+        # A text too long for a file name is no file; os.path says so without an error.
+        if path and os.path.exists(self.root / path):
             return Touch(unknown=frozenset({self.relative(path)}))
         return None
+
+    def is_declared(self, path: str) -> bool:
+        """Whether the table or an origin names this path."""
+        return any(key in self._by_path or key in self._origin_of for key in self._keys(path))
 
     def recognise(self, path: str) -> Touch | None:
         """Like `touch_of` for a declared file, also by its content under another name."""
@@ -216,11 +232,14 @@ class Study:
         # Only a file of the same size can have the same bytes, so only those are read.
         size = os.path.getsize(path)
         if size not in self._contents:
-            self._contents[size] = {digest(key): key for key in self._sizes.get(size, [])}
+            known: dict[str, list[str]] = {}
+            for key in self._sizes.get(size, []):
+                known.setdefault(digest(key), []).append(key)
+            self._contents[size] = known
         if not self._contents[size]:
             return None
-        known = self._contents[size].get(digest(path))
-        return None if known is None else self._touch_of_key(known, None)
+        touches = [self._touch_of_key(k, None) for k in self._contents[size].get(digest(path), [])]
+        return union(touch for touch in touches if touch is not None) if touches else None
 
     @property
     def paths(self) -> list[str]:
@@ -297,7 +316,7 @@ def _row(cells: dict[str, str], where: str, line: int) -> Row:
     if not value["path"] or not value["sub"]:
         raise InputError("row without a path or a sub", where=where, got=str(cells))
     volume = value.get("volume", "")
-    if volume and not volume.isdigit():
+    if volume and not volume.isdecimal():
         raise InputError("volume is no number", where=where, expected="0, 1, ...", got=volume)
     known = {*COLUMNS, *ENTITIES}
     return Row(

@@ -16,7 +16,7 @@ from nipype.interfaces.base import (
     traits,
 )
 
-from ..errors import InputError, Refused, SequesterError
+from ..errors import InputError, SequesterError
 from ..images import write_bytes
 from ..rules import Meeting, Rule, Statistic
 
@@ -72,15 +72,24 @@ class SequesterInterface(SimpleInterface):
 
 
 def kept_error(folder: Path) -> SequesterError | None:
-    """The error a node of ours left in its working folder, as it was raised."""
-    path = folder / ERROR_FILE
-    if not path.exists():
+    """The error a node of ours (or an element of it) left in its working folder, as raised."""
+    elements = folder.glob(f"mapflow/*/{ERROR_FILE}")  # where a MapNode runs its elements
+    path = next((p for p in [folder / ERROR_FILE, *sorted(elements)] if p.is_file()), None)
+    if path is None:
         return None
     note = json.loads(path.read_text())
+    kind = _error_kinds(SequesterError)[note["kind"]]
     if "fields" in note:
         fields = dict(note["fields"])
-        return InputError(fields.pop("what"), **fields)
-    return {"Refused": Refused}.get(note["kind"], SequesterError)(note["message"])
+        return kind(fields.pop("what"), **fields)
+    return kind(note["message"])
+
+
+def _error_kinds(base: type[SequesterError]) -> dict[str, type[SequesterError]]:
+    found = {base.__name__: base}
+    for kind in base.__subclasses__():
+        found |= _error_kinds(kind)
+    return found
 
 
 def write_json(path: Path, content: dict[str, Any]) -> str:

@@ -9,10 +9,11 @@ import numpy as np
 from nipype.interfaces.base import File
 
 from ..folds import LeaveOneOut, Scheme
-from ..groupmaps import Missing, group_map, leave_out_maps
+from ..groupmaps import Floats, Missing, group_map, leave_out_maps
 from ..images import stack, write_map
 from ..procedure import held_out_rows
 from ..rules import all_but_held_out, only
+from ..space import Grid
 from .base import InputSpec, SequesterInterface, TraitedSpec, traits
 
 
@@ -40,9 +41,15 @@ class GroupMap(SequesterInterface):
         values = group_map(effects, missing, self.inputs.kind)
         count = missing.present(effects).sum(axis=0).astype(np.float32)
         return {
-            "out_file": str(write_map(cwd / "group.nii.gz", grid.filled(values), geometry)),
+            "out_file": str(write_map(cwd / "group.nii.gz", _filled(grid, values), geometry)),
             "count_file": str(write_map(cwd / "count.nii.gz", grid.filled(count), geometry)),
         }
+
+
+def _filled(grid: Grid, values: Floats) -> Floats:
+    """A map's volume, in float32: one float64 row must not show in the others' maps."""
+    volume: Floats = grid.filled(values.astype(np.float32))
+    return volume
 
 
 class _LeaveOutInput(_MapsInput):
@@ -63,7 +70,7 @@ class LeaveOutMaps(SequesterInterface):
 
     input_spec = _LeaveOutInput
     output_spec = _LeaveOutOutput
-    touch_rules = {"out_files": all_but_held_out("in_files", _folds_held_out)}
+    touch_rules = {"out_files": all_but_held_out("in_files", _folds_held_out, ("labels", "scheme"))}
 
     def _work(self, cwd: Path) -> dict[str, Any]:
         effects, grid, geometry = stack(self.inputs.in_files)
@@ -71,7 +78,7 @@ class LeaveOutMaps(SequesterInterface):
         maps = leave_out_maps(effects, folds, self._value("missing"), self.inputs.kind)
         return {
             "out_files": [
-                str(write_map(cwd / f"fold{k:05d}.nii.gz", grid.filled(values), geometry))
+                str(write_map(cwd / f"fold{k:05d}.nii.gz", _filled(grid, values), geometry))
                 for k, values in enumerate(maps)
             ]
         }

@@ -12,7 +12,7 @@ from ..errors import EmptyFoldError, InputError
 from ..images import geometry_of, open_image, read_map, read_mask, write_map
 from ..masks import Cluster, Strongest, Threshold, choose, sphere, strongest
 from ..procedure import ON_EMPTY
-from ..rules import Inputs, Leaf, Tree, only
+from ..rules import Branch, Inputs, Leaf, Rule, Tree, joined, leaves, only
 from ..space import Grid
 from ..touch import Touch
 from .base import InputSpec, SequesterInterface, TraitedSpec, traits
@@ -67,18 +67,18 @@ class ChooseMask(SequesterInterface):
 
 def _placed(inputs: Inputs) -> Tree:
     """A sphere touches its declared origin; a coordinate without one was chosen who knows how."""
-    reference = [inputs.trees["reference"]] if "reference" in inputs.trees else []
-    geometry = Touch()
-    for tree in reference:
-        if isinstance(tree, Leaf):
-            geometry = geometry | tree.touch.as_geometry()
+    parts = [
+        Leaf(leaf.touch.as_geometry(), (leaf,))
+        for leaf in leaves(inputs.trees.get("reference", Branch()))
+    ]
     origin = inputs.settings.get("origin")
-    stated = (
-        Touch(origins=frozenset({origin}))
-        if origin
-        else Touch(unknown=frozenset({f"the coordinate given to {inputs.where}"}))
-    )
-    return Leaf(geometry | stated, place=f"coordinate of {inputs.where}")
+    if origin:
+        stated = inputs.declared.get(origin) or Touch(origins=frozenset({origin}))
+        parts.append(Leaf(stated, place=f"coordinate of {inputs.where}"))
+    elif "centre" not in inputs.arriving:
+        typed = frozenset({f"the coordinate given to {inputs.where}"})
+        parts.append(Leaf(Touch(unknown=typed), place=f"coordinate of {inputs.where}"))
+    return joined(parts)
 
 
 class _SphereInput(InputSpec):
@@ -95,7 +95,7 @@ class SphereMask(SequesterInterface):
 
     input_spec = _SphereInput
     output_spec = _MaskOutput
-    touch_rules = {"mask_file": _placed}
+    touch_rules = {"mask_file": Rule(frozenset({"reference"}), _placed)}
 
     def _work(self, cwd: Path) -> dict[str, Any]:
         geometry = geometry_of(open_image(self.inputs.reference))

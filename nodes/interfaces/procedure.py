@@ -48,7 +48,12 @@ def _per_row(settings: Any) -> list[tuple[int, ...]]:
     return [of_row[row] for row in sorted(of_row)]
 
 
-_rule = partial(all_but_held_out, "in_files", shared=("search_file",))
+_rule = partial(
+    all_but_held_out,
+    "in_files",
+    known_by=("labels", "procedure"),
+    shared=("search_file",),
+)
 
 
 class _ChooseOutput(TraitedSpec):
@@ -63,7 +68,10 @@ class ChooseByFold(SequesterInterface):
 
     input_spec = _ProcedureInput
     output_spec = _ChooseOutput
-    touch_rules = {"mask_files": _rule(_per_fold), "row_masks": _rule(_per_row)}
+    touch_rules = {
+        "mask_files": _rule(held_out=_per_fold),
+        "row_masks": _rule(held_out=_per_row),
+    }
 
     def _work(self, cwd: Path) -> dict[str, Any]:
         ready, grid, geometry = _prepared(self.inputs)

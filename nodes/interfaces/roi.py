@@ -48,7 +48,11 @@ class Extract(SequesterInterface):
     output_spec = _ExtractOutput
     _always_run = True
     meeting = _MEETING
-    touch_rules = {"values": _MEETING.rule, "coverage": _MEETING.rule, "sizes": only("mask_files")}
+    touch_rules = {
+        "values": _MEETING.rule,
+        "coverage": _MEETING.rule,
+        "sizes": only("mask_files", ignored=("in_files",)),
+    }
 
     def _work(self, cwd: Path) -> dict[str, Any]:
         if not self._value("clearance"):
@@ -94,7 +98,7 @@ class FixedRegionTest(SequesterInterface):
 
     input_spec = _FixedInput
     output_spec = _RecordOutput
-    touch_rules = {"record_file": only("values")}
+    touch_rules = {"record_file": only("values", "coverage", "sizes")}
     statistic = Statistic(
         values="values",
         cure="use the whole-procedure sign flip (FlipTest), which chooses every fold's region "
