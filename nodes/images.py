@@ -151,7 +151,15 @@ def read_map(path: str | Path, volume: int | None = None) -> tuple[Floats, Geome
         raise InputError(
             "no such volume", where=str(path), expected=f"0 to {total - 1}", got=str(volume)
         )
-    dtype = np.float64 if image.get_data_dtype() == np.float64 else np.float32
+    stored_as = image.get_data_dtype()
+    if stored_as.kind not in "fiu":
+        raise InputError(
+            "not a map of real numbers",
+            where=str(path),
+            expected="integers or floating point",
+            got="complex numbers" if stored_as.kind == "c" else f"values of {stored_as}",
+        )
+    dtype = np.float64 if stored_as == np.float64 else np.float32
     try:
         stored = image.dataobj
         # One volume is sliced from the file, not from the whole file's data.

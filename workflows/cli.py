@@ -58,7 +58,14 @@ def _command(function: Callable[..., dict[str, Any]]) -> Callable[..., None]:
         show = Progress(quiet=quiet or as_json)
         progress.listen(show.work)
         try:
-            told = function(show=show, as_json=as_json, **arguments)
+            try:
+                told = function(show=show, as_json=as_json, **arguments)
+            except OSError as error:
+                raise InputError(
+                    "cannot be read or written",
+                    where=str(error.filename or "output"),
+                    got=os.strerror(error.errno) if error.errno else str(error),
+                ) from error
             if as_json:
                 _print_json(told)
         except SequesterError as error:

@@ -167,9 +167,7 @@ def claimed(target: Path) -> Iterator[Path]:
             shutil.rmtree(leftover, ignore_errors=True)
         stage.mkdir()
         yield stage
-        if target.exists():
-            target.rename(old)
-        stage.rename(target)
+        _take_place(stage, target, old)
     except OSError as error:
         raise InputError(
             "output cannot be written",
@@ -182,6 +180,18 @@ def claimed(target: Path) -> Iterator[Path]:
             shutil.rmtree(leftover, ignore_errors=True)
         lock.release()
         Path(lock.lock_file).unlink(missing_ok=True)
+
+
+def _take_place(stage: Path, target: Path, old: Path) -> None:
+    """Give the new results their name; the earlier ones come back if that fails."""
+    if target.exists():
+        target.rename(old)
+    try:
+        stage.rename(target)
+    except BaseException:
+        if old.exists():
+            old.rename(target)
+        raise
 
 
 def write_all(

@@ -174,9 +174,10 @@ def _run(workflow: Any, guard: GuardPlugin) -> Any:
     try:
         return workflow.run(plugin=guard)
     except Exception as error:
-        if "No space left on device" in str(error):
-            # Inside the engine the error is text; the caller tells it as any full disk.
-            raise OSError(errno.ENOSPC, os.strerror(errno.ENOSPC)) from error
+        # Inside the engine the error is text; the caller tells it as any fault in writing.
+        for code in (errno.ENOSPC, errno.EDQUOT, errno.EFBIG, errno.EROFS):
+            if os.strerror(code) in str(error):
+                raise OSError(code, os.strerror(code)) from error
         raise
 
 

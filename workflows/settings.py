@@ -134,16 +134,35 @@ class Settings:
 class _Reader:
     """Reads keys of a TOML table, with errors that name the file and the line."""
 
-    def __init__(self, path: Path, text: str) -> None:
-        self.path, self.lines = path, text.splitlines()
+    def __init__(self, path: Path, text: str, start: int = 0) -> None:
+        self.path, self.text, self.start = path, text, start
+
+    def within(self, section: str, number: int) -> _Reader:
+        """The same file, looking for lines from the header of table `number` of an array on."""
+        headers = [
+            i
+            for i, line in enumerate(self.text.splitlines())
+            if re.match(rf"\s*\[\[\s*{section}\s*\]\]", line)
+        ]
+        return _Reader(self.path, self.text, headers[number] if number < len(headers) else 0)
 
     def where(self, key: str) -> str:
         """The file, and the first line on which a key stands."""
         pattern = re.compile(rf'(^|[\s{{,\["]){re.escape(key)}["\]]*\s*[=\]]')
-        for number, line in enumerate(self.lines, 1):
+        for number, line in enumerate(self.text.splitlines()[self.start :], self.start + 1):
             if pattern.search(line):
                 return f"{self.path}, line {number}"
         return str(self.path)
+
+    def tables(self, table: dict[str, Any], key: str, default: Any) -> list[dict[str, Any]]:
+        """A list of tables, such as ``[[roi]]``."""
+        listed = self.get(table, key, list, default)
+        for item in listed:
+            if not isinstance(item, dict):
+                raise InputError(
+                    f"{key} is no list of tables", where=self.where(key), got=repr(item)
+                )
+        return list(listed)
 
     def known(self, table: dict[str, Any], section: str) -> None:
         """Refuse keys that do not exist."""
@@ -217,7 +236,8 @@ def read_settings(path: str | Path) -> Settings:
         read.get(data, "zeros_are_missing", bool, True),
         float(read.get(data, "min_fraction", (int, float), 0.8)),
     )
-    rois = tuple(_roi(read, table, missing) for table in read.get(toml, "roi", list, ...))
+    tables = read.tables(toml, "roi", ...)
+    rois = tuple(_roi(read.within("roi", i), t, missing) for i, t in enumerate(tables))
     _distinct(read, [roi.name for roi in rois])
     origins = tuple(_origins(read, toml, rois, root))
     plain = read_table(root / read.get(head, "table", str, ...), root)
@@ -362,15 +382,22 @@ def _roi(read: _Reader, table: dict[str, Any], missing: Missing) -> Roi:
 def _origins(
     read: _Reader, toml: dict[str, Any], rois: tuple[Roi, ...], root: Path
 ) -> Iterable[Origin]:
-    for roi, table in zip(rois, toml["roi"], strict=True):
+    for i, (roi, table) in enumerate(zip(rois, toml["roi"], strict=True)):
         place = table.get("region", table.get("search", {}))
         if roi.region.origin:
             files = (roi.region.mask,) if roi.region.mask else ()
-            yield Origin(roi.region.origin, files, _units(read, place))
-    for table in read.get(toml, "origin", list, []):
+            yield Origin(roi.region.origin, files, _units(read.within("roi", i), place))
+    for table in read.tables(toml, "origin", []):
         read.known(table, "origin")
         listed: list[str] = []
         for pattern in read.get(table, "files", list, ...):
+            if Path(str(pattern)).is_absolute():
+                raise InputError(
+                    "absolute pattern",
+                    where=read.where("files"),
+                    expected="a pattern relative to the study file",
+                    got=repr(pattern),
+                )
             matched = sorted(str(p.relative_to(root)) for p in root.glob(str(pattern)))
             if not matched:
                 raise InputError(
@@ -382,7 +409,7 @@ def _origins(
 
 def _units(read: _Reader, table: dict[str, Any]) -> tuple[Unit, ...]:
     units = []
-    for pattern in read.get(table, "derived_from", list, []):
+    for pattern in read.tables(table, "derived_from", []):
         for key in pattern:
             if key not in (*ENTITIES, "suffix"):
                 raise InputError(

@@ -266,8 +266,13 @@ def read_table(path: str | Path, root: Path | None = None) -> Study:
         raise InputError(
             "no such study table", where=str(path), remedy="make one: sequester table FOLDER"
         )
-    with path.open(newline="", encoding="utf-8-sig") as stream:
-        lines = list(csv.reader(stream, delimiter="\t"))
+    try:
+        with path.open(newline="", encoding="utf-8-sig") as stream:
+            lines = list(csv.reader(stream, delimiter="\t"))
+    except (OSError, UnicodeDecodeError, csv.Error) as error:
+        raise InputError(
+            "unreadable study table", where=str(path), expected="a TSV in UTF-8", got=str(error)
+        ) from error
     if not lines:
         raise InputError("empty study table", where=str(path))
     header = lines[0]
@@ -332,17 +337,17 @@ def _row(cells: dict[str, str], where: str, line: int) -> Row:
 
 
 def table_text(rows: Iterable[Row]) -> str:
-    """A study table as TSV, blank cells as n/a, sorted by path and volume."""
-    lines = ["\t".join(COLUMNS)]
-    for row in sorted(rows, key=lambda r: (r.path, -1 if r.volume is None else r.volume)):
-        cells = {
-            "path": row.path,
-            "volume": "" if row.volume is None else str(row.volume),
-            "suffix": row.unit.suffix,
-            "contrast": row.contrast,
-            "exclude_reason": row.exclude_reason,
-            "exchange": row.exchange,
-            **{e: getattr(row.unit, e) for e in ENTITIES},
-        }
-        lines.append("\t".join(cells[name] or "n/a" for name in COLUMNS))
+    """A study table as TSV, blank cells as n/a, sorted by path and volume.
+
+    A column ``ce`` (contrast agent, after ``acq``) is added when a row has one.
+    """
+    listed = sorted(rows, key=lambda r: (r.path, -1 if r.volume is None else r.volume))
+    columns = list(COLUMNS)
+    if any(row.unit.ce for row in listed):
+        columns.insert(columns.index("dir"), "ce")
+    lines = ["\t".join(columns)]
+    for row in listed:
+        volume = "" if row.volume is None else str(row.volume)
+        cells = [volume if name == "volume" else row.column(name) for name in columns]
+        lines.append("\t".join(cell or "n/a" for cell in cells))
     return "\n".join(lines) + "\n"

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import os
 import re
+from collections.abc import Iterator
 from pathlib import Path
 
 from ..nodes.errors import InputError
@@ -51,12 +52,7 @@ def rows_from(
     if not folder.is_dir():
         raise InputError("no such folder", where=str(folder))
     base = base or folder
-    files = sorted(
-        Path(root) / name
-        for root, _, names in os.walk(folder, followlinks=True)
-        for name in names
-        if name.endswith(_ENDINGS) and not name.startswith(".")
-    )
+    files = sorted(_images_below(folder))
     found: list[tuple[Path, dict[str, str]]] = []
     matcher = None if pattern is None else _matcher(pattern)
     for path in files:
@@ -78,6 +74,18 @@ def rows_from(
             remedy='give --pattern, such as "sub-{sub}/map.nii.gz"',
         )
     return [row for path, fields in found for row in _rows(path, fields, suffix, base)]
+
+
+def _images_below(folder: Path) -> Iterator[Path]:
+    """NIfTI files in a tree, links followed, each folder once."""
+    seen = set()
+    for root, folders, names in os.walk(folder, followlinks=True):
+        seen.add(os.path.realpath(root))
+        # A link back up would repeat the tree without end.
+        folders[:] = [f for f in folders if os.path.realpath(os.path.join(root, f)) not in seen]
+        for name in names:
+            if name.endswith(_ENDINGS) and not name.startswith("."):
+                yield Path(root) / name
 
 
 def _rows(path: Path, fields: dict[str, str], suffix: str, base: Path) -> list[Row]:

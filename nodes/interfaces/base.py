@@ -62,7 +62,12 @@ class SequesterInterface(SimpleInterface):
             note = {"kind": type(error).__name__, "message": str(error)}
             if isinstance(error, InputError):
                 note["fields"] = error.fields  # type: ignore[assignment]  # JSON either way
-            write_bytes(cwd / ERROR_FILE, json.dumps(note).encode())
+            try:
+                write_bytes(cwd / ERROR_FILE, json.dumps(note).encode())
+            except OSError:
+                # On a full disk there is no room for the note either; the error itself goes on,
+                # as the engine's text.
+                raise error from None
             raise
         return runtime
 
