@@ -14,7 +14,7 @@ sums are formed as `groupmaps.without_each` forms them, without the held-out row
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -55,6 +55,9 @@ ON_EMPTY = ("empty", "strongest", "stop")
 TAILS = ("positive", "negative")
 _BLOCK = 8192
 _FLIPS_AT_ONCE = 32
+# Small enough for a BLAS to stay on one thread and in its cache: the product is soon done, and
+# waiting for other threads is what would take long.
+_SCREEN_BLOCK = 1024
 
 
 @dataclass(frozen=True)
@@ -321,15 +324,23 @@ class Prepared:
         rows: Floats = signs[self._person].astype(np.float64)
         return rows
 
-    def _candidates(self, signs: Floats) -> Iterator[Ints]:
+    def _candidates(self, signs: Floats) -> list[Ints]:
         """For each row of signs, the features that may be above the bound in some fold."""
-        screen = self._screened()
+        screen, single = self._screened(), signs.astype(np.float32)
+        flips, features = [], []
         with np.errstate(over="ignore", invalid="ignore"):
-            sums = signs.astype(np.float32) @ screen.rows
-        # Negated, so that what is not a number stays in.
-        may = ~(sums <= screen.lowest)
-        for row in may:
-            yield np.flatnonzero(row)
+            for start in range(0, self._x.shape[1], _SCREEN_BLOCK):
+                block = slice(start, start + _SCREEN_BLOCK)
+                # Negated, so that what is not a number stays in.
+                may = ~(single @ screen.rows[:, block] <= screen.lowest[block])
+                flip, feature = np.divmod(np.flatnonzero(may), may.shape[1])
+                flips.append(flip)
+                features.append(feature + start)
+        of_flip = np.concatenate(flips)
+        # Blocks come in order, so a stable sort by flip leaves the features ascending.
+        order = np.argsort(of_flip, kind="stable")
+        ends = np.cumsum(np.bincount(of_flip, minlength=len(signs)))
+        return np.split(np.concatenate(features)[order], ends[:-1])
 
     def _passing(self, signs: Floats) -> Ints:
         """The features above the bound in some fold, by a pass over all of them."""
@@ -354,12 +365,10 @@ class Prepared:
         if isinstance(rule, Strongest):
             return self._strongest(signs, rule.k, rule.map_kind, range(len(self._folds)))
         if self._screen is None:
-            x, bounds = self._x[:, candidates], self._bound_of(candidates).T
+            bounds = self._bound_of(candidates).T
         else:
-            # Gathered by feature (whole cache lines), worked on by row (contiguous sums).
-            x = np.take(self._screen.by_feature, candidates, axis=0).T
             bounds = np.take(self._screen.bounds, candidates, axis=0)
-        S = self._sums_of(x, signs)
+        S = self._sums_of(self._columns(candidates), signs)
         above = bounds < S.T
         some = above.any(axis=1)
         found, members = candidates[some], np.ascontiguousarray(above[some])
@@ -410,12 +419,21 @@ class Prepared:
     def _read(self, signs: Floats, found: Ints, members: Bools) -> tuple[Floats, Floats]:
         """Each sorted row's mean in its own fold's mask, and the coverage."""
         values, coverage = np.zeros(len(signs)), np.zeros(len(signs))
+        of_fold = np.ascontiguousarray(members.T)
+        few = self._columns(found)
         for row, fold in enumerate(self._fold_of_row):
-            inside = found[members[:, fold]]
-            present = None if self._present is None else self._present[row, inside]
-            mean, coverage[row] = region_mean(self._x[row, inside], present)
+            inside = of_fold[fold]
+            present = None if self._present is None else self._present[row, found[inside]]
+            mean, coverage[row] = region_mean(few[row, inside], present)
             values[row] = mean * signs[row]
         return values, coverage
+
+    def _columns(self, features: Ints) -> Floats:
+        """(n_rows, n_some_features) of the stack."""
+        if self._screen is None:
+            return self._x[:, features]
+        # Gathered by feature: whole cache lines.
+        return np.take(self._screen.by_feature, features, axis=0).T
 
     def _per_person(self, values: Floats) -> Floats:
         """Mean over the rows of each person, in the order of `people`."""
@@ -487,7 +505,7 @@ class Prepared:
         for start in range(0, n, _FLIPS_AT_ONCE):
             rows = signs[start : start + _FLIPS_AT_ONCE][:, self._person].astype(np.float64)
             if isinstance(self.procedure.rule, Strongest):
-                candidates: Iterator[Ints] = iter([np.empty(0, np.intp)] * len(rows))
+                candidates = [np.empty(0, np.intp)] * len(rows)
             else:
                 candidates = self._candidates(rows)
             for i, (row, may) in enumerate(zip(rows, candidates, strict=True), start):

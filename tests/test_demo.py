@@ -89,7 +89,7 @@ def test_noise_looks_like_a_finding_when_circular_and_not_when_held_out():
         circular[seed], naive[seed] = values.mean(), stats.ttest_1samp(values, 0).pvalue
         ready = procedure.prepare(effects, SUBJECTS, grid)
         held_out[seed] = ready.outcome().estimate
-        rejected += ready.flip_test(n_flips=99, seed=seed).p <= 0.05
+        rejected += ready.flip_test(n_flips=39, seed=seed).p <= 0.05
     assert circular.min() > 0
     assert (naive < 0.05).mean() > 0.9
     assert abs(held_out.mean()) < 4 * held_out.std(ddof=1) / np.sqrt(n)
