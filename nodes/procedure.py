@@ -187,6 +187,7 @@ class Procedure:
         labels: Sequence[str],
         space: Space,
         names: Sequence[str] | None = None,
+        tested: Floats | None = None,
     ) -> Prepared:
         """Make the procedure ready on one stack.
 
@@ -200,8 +201,11 @@ class Procedure:
             Of the features.
         names : sequence of str, optional
             Tells rows of one label apart, so that their order cannot matter.
+        tested : (n_rows, n_features) float, optional
+            The maps that are read and tested, when they are not those that choose (another
+            contrast of the same rows, held out and flipped together with it).
         """
-        return Prepared(self, effects, labels, space, names)
+        return Prepared(self, effects, labels, space, names, tested)
 
 
 @dataclass(frozen=True)
@@ -243,6 +247,7 @@ class Prepared:
         labels: Sequence[str],
         space: Space,
         names: Sequence[str] | None = None,
+        tested: Floats | None = None,
     ) -> None:
         if effects.shape != (len(labels), space.n_features):
             raise ValueError(
@@ -266,6 +271,12 @@ class Prepared:
         self._sign = -1.0 if procedure.tail == "negative" else 1.0
         x, self._present = filled(effects[self._order], procedure.missing)
         self._x = -x if self._sign < 0 else x
+        self._read_x, self._read_present = self._x, self._present
+        if tested is not None:
+            if tested.shape != effects.shape:
+                raise ValueError(f"tested maps of {tested.shape} for effects of {effects.shape}")
+            read, self._read_present = filled(tested[self._order], procedure.missing)
+            self._read_x = -read if self._sign < 0 else read
         rule = procedure.rule
         self._hood: Neighbourhood | None = None
         self._distance: Floats | None = None
@@ -420,10 +431,12 @@ class Prepared:
         """Each sorted row's mean in its own fold's mask, and the coverage."""
         values, coverage = np.zeros(len(signs)), np.zeros(len(signs))
         of_fold = np.ascontiguousarray(members.T)
-        few = self._columns(found)
+        few = self._columns(found) if self._read_x is self._x else self._read_x[:, found]
         for row, fold in enumerate(self._fold_of_row):
             inside = of_fold[fold]
-            present = None if self._present is None else self._present[row, found[inside]]
+            present = None
+            if self._read_present is not None:
+                present = self._read_present[row, found[inside]]
             mean, coverage[row] = region_mean(few[row, inside], present)
             values[row] = mean * signs[row]
         return values, coverage
@@ -504,9 +517,8 @@ class Prepared:
         t, overlap, n_empty = np.empty(n), np.empty(n), np.empty(n, dtype=np.intp)
         for start in range(0, n, _FLIPS_AT_ONCE):
             rows = signs[start : start + _FLIPS_AT_ONCE][:, self._person].astype(np.float64)
-            if isinstance(self.procedure.rule, Strongest):
-                candidates = [np.empty(0, np.intp)] * len(rows)
-            else:
+            candidates: list[Ints] = [np.empty(0, np.intp)] * len(rows)
+            if not isinstance(self.procedure.rule, Strongest):
                 candidates = self._candidates(rows)
             for i, (row, may) in enumerate(zip(rows, candidates, strict=True), start):
                 found, members, empty, _ = self._chosen(row, may)
@@ -568,18 +580,30 @@ class Prepared:
                 remedy='use interval = "flips"',
             )
         names = [str(i) for i in range(len(self._labels))]
-        back = np.argsort(self._order)
-        effects = self._sign * self._x[back]
-        if self._present is not None:
-            effects[~self._present[back]] = np.nan
+        effects = self._given(self._x, self._present)
+        tested = None
+        if self._read_x is not self._x:
+            tested = self._given(self._read_x, self._read_present)
         estimates = np.empty(len(self.people))
         for i, person in enumerate(self.people):
             rows = [row for row, label in enumerate(self._labels) if label != person]
             part = self.procedure.prepare(
-                effects[rows], [self._labels[r] for r in rows], self.space, [names[r] for r in rows]
+                effects[rows],
+                [self._labels[r] for r in rows],
+                self.space,
+                [names[r] for r in rows],
+                None if tested is None else tested[rows],
             )
             estimates[i] = part.outcome().estimate
         return estimates
+
+    def _given(self, x: Floats, present: Bools | None) -> Floats:
+        """A stack as it was given: rows in their order, signs as they were, NaN where missing."""
+        back = np.argsort(self._order)
+        stack: Floats = self._sign * x[back]
+        if present is not None:
+            stack[~present[back]] = np.nan
+        return stack
 
 
 def held_out_rows(scheme: Scheme, labels: Sequence[str]) -> list[tuple[int, ...]]:

@@ -14,9 +14,9 @@ import numpy as np
 
 from .errors import InputError
 from .procedure import FlipTest, Outcome, Prepared
-from .roi import Interval, flip_interval, jackknife_interval, one_sample_t
+from .roi import Interval, flip_interval, fold_interval, jackknife_interval, one_sample_t
 
-INTERVALS = ("flips", "jackknife")
+INTERVALS = ("flips", "jackknife", "folds")
 
 FLIP_NULL = (
     "the subjects' maps are independent and jointly symmetric about zero over the search region"
@@ -125,7 +125,7 @@ def cross_fitted_result(
         The procedure on the study's effects.
     names : (roi, plan, search region)
     n_flips, seed : int
-    interval : {"flips", "jackknife"}
+    interval : {"flips", "jackknife", "folds"}
     progress : callable, optional
     """
     if interval not in INTERVALS:
@@ -137,6 +137,8 @@ def cross_fitted_result(
     people = ready.per_person(outcome.values)
     if interval == "flips":
         made = flip_interval(people, test.abs_t_quantile)
+    elif interval == "folds":
+        made = fold_interval(people, len(ready.folds))
     else:
         made = jackknife_interval(outcome.estimate, ready.without_each_person())
     roi, plan, search = names

@@ -314,7 +314,7 @@ def test_empty_folds_are_in_the_sentence():
 
 def test_an_unknown_interval_is_refused():
     with pytest.raises(
-        InputError, match="unknown interval: expected one of flips, jackknife, got 't'"
+        InputError, match="unknown interval: expected one of flips, jackknife, folds, got 't'"
     ):
         cross_fitted_result(ready(Procedure(Threshold(p=0.01))), NAMES, 19, 0, "t")
 

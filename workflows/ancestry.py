@@ -12,6 +12,7 @@ What a graph cannot show, and what is done about it:
 
 from __future__ import annotations
 
+import os
 import re
 from collections.abc import Callable, Iterator, Mapping
 from dataclasses import replace
@@ -106,22 +107,16 @@ class Ancestry:
         """The trees that arrive over edges, the slots of a JoinNode put back into lists."""
         arriving: dict[str, Tree] = {}
         slots: dict[str, dict[int, Tree]] = {}
-        join_fields = node.joinfield if isinstance(node, JoinNode) else []
-
-        def slot_of(field: str) -> tuple[str, int] | None:
-            match = re.fullmatch(r"(.+)J(\d+)", field)
-            return (match[1], int(match[2])) if match and match[1] in join_fields else None
-
         # Right behind its iterable, a JoinNode's slots hold literals.
         for field in list(settings):
-            slot = slot_of(field)
+            slot = join_slot(node, field)
             if slot is not None:
                 tree = self._literal(settings.pop(field)) or Leaf(Touch())
                 slots.setdefault(slot[0], {})[slot[1]] = tree
         for source, _, data in self._graph.in_edges(node, data=True):
             for output, field in data["connect"]:
                 tree = self._source(node_name(source), output)
-                slot = slot_of(field)
+                slot = join_slot(node, field)
                 if slot is not None:
                     slots.setdefault(slot[0], {})[slot[1]] = tree
                 else:
@@ -263,6 +258,12 @@ def flat(given: Iterations) -> Iterator[Inputs]:
         yield given
 
 
+def join_slot(node: Any, field: str) -> tuple[str, int] | None:
+    """The field and the place in its list that a slot of a JoinNode stands for."""
+    match = re.fullmatch(r"(.+)J(\d+)", field) if isinstance(node, JoinNode) else None
+    return (match[1], int(match[2])) if match and match[1] in node.joinfield else None
+
+
 def meetings_of(interface: Any) -> tuple[Meeting | None, Statistic | None]:
     """The meeting and the statistic an interface declares."""
     return getattr(interface, "meeting", None), getattr(interface, "statistic", None)
@@ -295,5 +296,5 @@ def files_in(value: Any) -> list[str]:
     if isinstance(value, list | tuple):
         return [path for item in value for path in files_in(item)]
     if isinstance(value, str | Path) and 0 < len(str(value)) < 4096 and "\n" not in str(value):
-        return [str(value)] if Path(value).is_file() else []
+        return [str(value)] if os.path.isfile(value) else []
     return []

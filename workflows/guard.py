@@ -18,7 +18,6 @@ reads behind its back without receiving their paths.
 
 from __future__ import annotations
 
-import time
 from collections.abc import Callable
 from pathlib import Path
 from typing import Any
@@ -32,7 +31,7 @@ from ..nodes.interfaces.base import SequesterInterface, kept_error
 from ..nodes.interfaces.generic import settings_of
 from ..nodes.rules import joined, leaves
 from ..nodes.touch import Touch
-from .ancestry import Ancestry, files_in, meetings_of, node_name
+from .ancestry import Ancestry, files_in, join_slot, meetings_of, node_name
 from .judge import Finding, judge
 from .study import Study
 
@@ -98,7 +97,6 @@ class GuardPlugin(PluginBase):
         self.findings: list[Finding] = []
         self._refused: list[Finding] = []
         self._errors: list[SequesterError] = []
-        self._started = 0.0
         self._folders: dict[str, Any] = {}
 
     def run(self, graph: Any, config: Any, updatehash: bool = False) -> None:
@@ -120,7 +118,6 @@ class GuardPlugin(PluginBase):
             raise GuardRefused(refused, self.study)
         if self.dry:
             return
-        self._started = time.time()
         self._folders = {str(Path(n.output_dir()).resolve()): n for n in ancestry.nodes}
         for node in ancestry.nodes:
             if isinstance(node.interface, SequesterInterface):
@@ -167,7 +164,9 @@ class GuardPlugin(PluginBase):
         promised = ancestry.inputs[node_name(node)]
         changed = False
         settings = {**settings_of(node.interface.inputs), **settings_of(node.inputs)}
-        for field, value in settings.items():
+        for name, value in settings.items():
+            slot = join_slot(node, name)
+            field = slot[0] if slot else name
             known = _union(promised.trees.get(field))
             found = {}
             for path in files_in(value):
@@ -193,12 +192,14 @@ class GuardPlugin(PluginBase):
             raise GuardRefused(refused, self.study, started=True)
 
     def _made_upstream(self, graph: Any, node: Any, path: str) -> bool:
-        """Whether a file lies in the folder of a node upstream, or was written by this run."""
-        full = Path(path).resolve()
-        owner = next((self._folders[str(f)] for f in full.parents if str(f) in self._folders), None)
-        if owner is not None:
-            return owner is node or nx.has_path(graph, owner, node)
-        return full.stat().st_mtime >= self._started
+        """Whether a file lies in the folder of a node upstream.
+
+        A file elsewhere is unknown, although a node of this run may have put it there: on a
+        warm cache nobody could tell, and the same workflow must be judged the same twice.
+        """
+        parents = map(str, Path(path).resolve().parents)
+        owner = next((self._folders[f] for f in parents if f in self._folders), None)
+        return owner is not None and (owner is node or nx.has_path(graph, owner, node))
 
 
 def _union(tree: Any) -> Touch:

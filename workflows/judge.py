@@ -18,7 +18,7 @@ from dataclasses import dataclass, replace
 
 from ..nodes.foldnull import plain_t_false_positives
 from ..nodes.rules import Leaf, Meeting, Statistic, joined, leaves, path_to
-from ..nodes.touch import Extraction, UnitTable, cross_fitted
+from ..nodes.touch import Extraction, Touch, UnitTable, cross_fitted
 from .ancestry import Ancestry, flat, iterations, meetings_of, node_name
 
 _WIDTH = 84  # of a line of a refusal's reason and cure
@@ -93,9 +93,7 @@ def judge(ancestry: Ancestry) -> list[Finding]:
         if meeting is not None:
             findings += _extractions(ancestry, node, meeting)
         if statistic is not None:
-            finding = _statistic(ancestry, node, statistic)
-            if finding is not None:
-                findings.append(finding)
+            findings.append(_statistic(ancestry, node, statistic))
     return findings
 
 
@@ -192,11 +190,10 @@ def _place(leaf: Leaf) -> str:
     return leaf.place
 
 
-def _statistic(ancestry: Ancestry, node: object, statistic: Statistic) -> Finding | None:
+def _statistic(ancestry: Ancestry, node: object, statistic: Statistic) -> Finding:
     name = node_name(node)
-    tree = ancestry.inputs[name].trees.get(statistic.values)
-    if tree is None:
-        return None
+    # Values typed in have no tree: an empty touch, which is not let pass.
+    tree = ancestry.inputs[name].trees.get(statistic.values) or Leaf(Touch())
     table = ancestry.study.table
     whole = joined(leaves(tree))
     marks = [

@@ -26,7 +26,7 @@ from ..nodes.interfaces.base import write_json
 from .ancestry import node_name
 from .digests import digest
 from .judge import Finding
-from .settings import EXPLORATORY, LEAVE_ONE_OUT, Roi, Settings
+from .settings import CROSS_FITTED, EXPLORATORY, Roi, Settings
 from .study import Study
 
 MANIFEST = "manifest.json"
@@ -246,9 +246,10 @@ def write_all(
 
 def _sources(settings: Settings, output: RoiOutput) -> Iterator[list[str]]:
     """For each mask, the study's files whose values it derives from."""
-    every = [(runs[0].person, row.path) for _, runs in settings.rows for row in runs]
+    chosen_on = output.roi.choosing or settings.rows
+    every = [(runs[0].person, row.path) for _, runs in chosen_on for row in runs]
     for name, _ in output.masks:
-        if output.roi.plan == LEAVE_ONE_OUT:
+        if output.roi.plan in CROSS_FITTED:
             people = {
                 runs[0].person
                 for (_, runs), mask in zip(settings.rows, output.mask_of_row, strict=True)
@@ -350,7 +351,7 @@ def _manifest(stage: Path, settings: Settings) -> None:
     """What went in and what came out, with digests: enough to repeat the run and compare."""
     study = settings.study
     outside = [f for origin in study.origins for f in origin.files]
-    inputs = [row.path for _, runs in settings.rows for row in runs] + outside
+    inputs = [row.path for row in settings.used] + outside
     files = sorted(p for p in stage.rglob("*") if p.is_file())
     write_json(
         stage / MANIFEST,

@@ -7,11 +7,13 @@ Every plan has an ``inputnode`` with ``effects`` (a list with one map per row) a
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
 from nipype import IdentityInterface, Node, Workflow
 
+from ..nodes.folds import LeaveOneOut
 from ..nodes.interfaces import (
     ChooseByFold,
     ChooseMask,
@@ -24,7 +26,7 @@ from ..nodes.interfaces import (
     SubjectMaps,
 )
 from ..nodes.procedure import Procedure
-from .settings import A_PRIORI, EXPLORATORY, LEAVE_ONE_OUT, Region, Roi, Settings
+from .settings import A_PRIORI, EXPLORATORY, LEAVE_ONE_OUT, Region, Roi, Settings, Subjects
 
 
 def node(interface: Any, name: str, mem_gb: float = 0.5, **inputs: Any) -> Node:
@@ -38,8 +40,10 @@ def node(interface: Any, name: str, mem_gb: float = 0.5, **inputs: Any) -> Node:
     return made
 
 
-def _ends(workflow: Workflow, outputs: Sequence[str]) -> tuple[Node, Node]:
-    start = Node(IdentityInterface(["effects"]), name="inputnode")
+def _ends(
+    workflow: Workflow, outputs: Sequence[str], inputs: Sequence[str] = ("effects",)
+) -> tuple[Node, Node]:
+    start = Node(IdentityInterface(list(inputs)), name="inputnode")
     end = Node(IdentityInterface(list(outputs)), name="outputnode")
     workflow.add_nodes([start, end])
     return start, end
@@ -62,7 +66,7 @@ def region_node(region: Region, name: str, reference: str, root: Path) -> Node |
     return None
 
 
-def leave_one_subject_out(
+def cross_fitted(
     name: str,
     procedure: Procedure,
     labels: Sequence[str],
@@ -72,16 +76,18 @@ def leave_one_subject_out(
     seed: int = 0,
     interval: str = "flips",
     test: str = "whole-procedure",
+    plan: str = "folds over subjects",
+    other_maps: bool = False,
     mem_gb: float = 1.0,
 ) -> Workflow:
-    """Choose a region without each subject in turn, read it there, test the whole procedure.
+    """Choose a region without each fold's subjects, read it there, test the whole procedure.
 
     Parameters
     ----------
     name : str
         Of the region and of the workflow.
     procedure : Procedure
-        Mask rule, folds, what happens when a fold finds nothing.
+        Mask rule, folds (its ``scheme``), what happens when a fold finds nothing.
     labels : sequence of str
         Per map of ``inputnode.effects``: who it belongs to.
     search : Node, optional
@@ -89,9 +95,15 @@ def leave_one_subject_out(
     search_name : str
         What the search region is called in the p sentence.
     n_flips, seed : int
-    interval : {"flips", "jackknife"}
-    test : {"whole-procedure", "t", "none"}
+    interval : {"flips", "jackknife", "folds"}
+        "folds" is for few folds, not for leave-one-subject-out.
+    test : {"whole-procedure", "t"}
         A plain t is refused by the guard; it can be asked for to see the reason.
+    plan : str
+        What the plan is called in results.
+    other_maps : bool
+        Choose on ``inputnode.choosing`` (another contrast of the same subjects) and test
+        ``inputnode.effects``; both are held out and flipped together.
     mem_gb : float
         Needed by the nodes that hold the whole stack.
 
@@ -103,19 +115,23 @@ def leave_one_subject_out(
 
     Examples
     --------
+    >>> from sequester.nodes.folds import KFold
     >>> from sequester.nodes.masks import Cluster
-    >>> plan = leave_one_subject_out("arbor", Procedure(Cluster(p=0.001)), ["01", "02", "03"])
+    >>> rule = Procedure(Cluster(p=0.001), scheme=KFold(5))
+    >>> plan = cross_fitted("arbor", rule, [f"{i:02}" for i in range(20)], plan="k-fold")
     >>> sorted(plan.list_node_names())
     ['choose', 'extract', 'inputnode', 'outputnode', 'test']
     """
     workflow = Workflow(name=name)
-    start, end = _ends(workflow, ["mask_files", "overlap_file", "values", "record_file"])
+    fields = ["effects", "choosing"] if other_maps else ["effects"]
+    start, end = _ends(workflow, ["mask_files", "overlap_file", "values", "record_file"], fields)
+    chooser = fields[-1]
     labels = list(labels)
     choose = node(ChooseByFold(), "choose", mem_gb, labels=labels, procedure=procedure)
     extract = node(Extract(), "extract", labels=labels, missing=procedure.missing)
     workflow.connect(
         [
-            (start, choose, [("effects", "in_files")]),
+            (start, choose, [(chooser, "in_files")]),
             (start, extract, [("effects", "in_files")]),
             (choose, extract, [("row_masks", "mask_files")]),
             (choose, end, [("mask_files", "mask_files"), ("overlap_file", "overlap_file")]),
@@ -124,7 +140,7 @@ def leave_one_subject_out(
     )
     if search is not None:
         workflow.connect(search, "mask_file", choose, "search_file")
-    names = (name, LEAVE_ONE_OUT, search_name)
+    names = (name, plan, search_name)
     if test == "whole-procedure":
         flips = node(
             FlipTest(),
@@ -139,16 +155,38 @@ def leave_one_subject_out(
         )
         workflow.connect(
             [
-                (start, flips, [("effects", "in_files")]),
+                (start, flips, [(chooser, "in_files")]),
                 (extract, flips, [("values", "values")]),
                 (flips, end, [("record_file", "record_file")]),
             ]
         )
+        if other_maps:
+            workflow.connect(start, "effects", flips, "tested_files")
         if search is not None:
             workflow.connect(search, "mask_file", flips, "search_file")
     elif test == "t":
         _fixed_test(workflow, extract, end, names)
     return workflow
+
+
+def leave_one_subject_out(
+    name: str,
+    procedure: Procedure,
+    labels: Sequence[str],
+    search: Node | None = None,
+    **settings: Any,
+) -> Workflow:
+    """`cross_fitted`, each subject held out once; further settings are those of `cross_fitted`.
+
+    Examples
+    --------
+    >>> from sequester.nodes.masks import Cluster
+    >>> plan = leave_one_subject_out("arbor", Procedure(Cluster(p=0.001)), ["01", "02", "03"])
+    >>> plan.get_node("choose").inputs.procedure.scheme
+    LeaveOneOut()
+    """
+    procedure = replace(procedure, scheme=LeaveOneOut())
+    return cross_fitted(name, procedure, labels, search, plan=LEAVE_ONE_OUT, **settings)
 
 
 def _fixed_test(workflow: Workflow, extract: Node, end: Node, names: tuple[str, str, str]) -> None:
@@ -272,33 +310,40 @@ def study_workflow(settings: Settings, base_dir: Path) -> Workflow:
         "stop_on_first_crash": "true",
         "remove_unnecessary_outputs": "false",
     }
-    rows, root = settings.rows, settings.root
-    paths = [[str(root / row.path) for row in runs] for _, runs in rows]
-    maps = node(
+    root = settings.root
+    maps = _subject_maps(settings, settings.rows, "maps")
+    people = [runs[0].person for _, runs in settings.rows]
+    reference = str(root / settings.rows[0][1][0].path)
+    for roi in settings.rois:
+        where = region_node(roi.region, "region", reference, root)
+        plan = _plan(roi, people, where, settings)
+        workflow.connect(maps, "out_files", plan, "inputnode.effects")
+        if roi.choosing is not None:
+            choosing = _subject_maps(settings, roi.choosing, f"{roi.name}Choosing")
+            workflow.connect(choosing, "out_files", plan, "inputnode.choosing")
+    return workflow
+
+
+def _subject_maps(settings: Settings, rows: Subjects, name: str) -> Node:
+    return node(
         SubjectMaps(),
-        "maps",
-        in_files=paths,
+        name,
+        in_files=[[str(settings.root / row.path) for row in runs] for _, runs in rows],
         labels=[label for label, _ in rows],
         volumes=[[-1 if r.volume is None else r.volume for r in runs] for _, runs in rows],
         missing=settings.missing,
     )
-    people = [runs[0].person for _, runs in rows]
-    for roi in settings.rois:
-        where = region_node(roi.region, "region", paths[0][0], root)
-        plan = _plan(roi, people, where, settings)
-        workflow.connect(maps, "out_files", plan, "inputnode.effects")
-    return workflow
 
 
 def _plan(roi: Roi, people: list[str], where: Node | None, settings: Settings) -> Workflow:
-    name, _, search = roi.names
-    if roi.plan == A_PRIORI:
+    name, plan, search = roi.names
+    if plan == A_PRIORI:
         assert where is not None, "an a-priori region is a mask or a sphere"
         return a_priori(name, people, where, search, settings.missing, roi.test)
     assert roi.procedure is not None
-    if roi.plan == EXPLORATORY:
+    if plan == EXPLORATORY:
         return exploratory(name, roi.procedure, people, where, search, roi.test)
-    return leave_one_subject_out(
+    return cross_fitted(
         name,
         roi.procedure,
         people,
@@ -308,4 +353,6 @@ def _plan(roi: Roi, people: list[str], where: Node | None, settings: Settings) -
         settings.seed,
         roi.interval,
         roi.test,
+        plan,
+        roi.choosing is not None,
     )

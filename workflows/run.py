@@ -26,7 +26,7 @@ from .guard import GuardPlugin, Listener
 from .judge import Finding
 from .outputs import RoiOutput, claimed, find_nodes, read_record, write_all
 from .plans import study_workflow
-from .settings import A_PRIORI, EXPLORATORY, Roi, Settings
+from .settings import A_PRIORI, EXPLORATORY, LEAVE_ONE_OUT, Roi, Settings
 
 
 @dataclass(frozen=True)
@@ -57,35 +57,34 @@ def verify(settings: Settings) -> None:
     """
     first = None
     seen: dict[tuple[str, int | None], str] = {}
-    for _, runs in settings.rows:
-        for row in runs:
-            path = settings.root / row.path
-            image = open_image(path)
-            total = n_volumes(path, image)
-            if row.volume is not None and row.volume >= total:
-                raise InputError(
-                    "no such volume",
-                    where=str(path),
-                    expected=f"0 to {total - 1}",
-                    got=str(row.volume),
-                )
-            if row.volume is None and total > 1:
-                raise InputError(
-                    "4-D file without a volume number",
-                    where=str(path),
-                    got=f"{total} volumes",
-                    remedy="fill the table's volume column (counting from 0)",
-                )
-            first = first or (str(path), geometry_of(image))
-            check_same_grid(first, [(str(path), geometry_of(image))])
-            key = (digest(path), row.volume)
-            if seen.setdefault(key, row.name) != row.name:
-                raise InputError(
-                    "identical files under two names",
-                    where=str(path),
-                    got=f"the same bytes as {seen[key]}",
-                    remedy="one of the two rows of the study table names the wrong file",
-                )
+    for row in settings.used:
+        path = settings.root / row.path
+        image = open_image(path)
+        total = n_volumes(path, image)
+        if row.volume is not None and row.volume >= total:
+            raise InputError(
+                "no such volume",
+                where=str(path),
+                expected=f"0 to {total - 1}",
+                got=str(row.volume),
+            )
+        if row.volume is None and total > 1:
+            raise InputError(
+                "4-D file without a volume number",
+                where=str(path),
+                got=f"{total} volumes",
+                remedy="fill the table's volume column (counting from 0)",
+            )
+        first = first or (str(path), geometry_of(image))
+        check_same_grid(first, [(str(path), geometry_of(image))])
+        key = (digest(path), row.volume)
+        if seen.setdefault(key, row.name) != row.name:
+            raise InputError(
+                "identical files under two names",
+                where=str(path),
+                got=f"the same bytes as {seen[key]}",
+                remedy="one of the two rows of the study table names the wrong file",
+            )
     assert first is not None, "settings hold at least one row"
     for roi in settings.rois:
         if roi.region.mask:
@@ -195,7 +194,8 @@ def _collect(roi: Roi, settings: Settings, nodes: dict[str, Any]) -> RoiOutput:
         masks, mask_of_row = [(name, source)], [name] * len(labels)
     else:
         chosen = nodes[f"{prefix}.choose"].result.outputs
-        names = [f"label-{roi.name}_desc-without{_alnum(f)}_mask.nii.gz" for f in chosen.fold_names]
+        word = "without" if roi.plan == LEAVE_ONE_OUT else "fold"
+        names = [f"label-{roi.name}_desc-{word}{_alnum(f)}_mask.nii.gz" for f in chosen.fold_names]
         if len(set(names)) != len(names):
             raise InputError(
                 "subject labels that differ only in punctuation",

@@ -13,7 +13,7 @@ from pathlib import Path
 from typing import Any
 
 from ..nodes.errors import InputError
-from ..nodes.folds import LeaveOneOut
+from ..nodes.folds import Given, KFold, LeaveOneOut, Scheme
 from ..nodes.groupmaps import Missing
 from ..nodes.masks import Cluster, MaskRule, Strongest, Threshold
 from ..nodes.procedure import ON_EMPTY, TAILS, Procedure
@@ -23,32 +23,43 @@ from .digests import digest_text
 from .study import Origin, Row, Study, read_table
 
 LEAVE_ONE_OUT, A_PRIORI, EXPLORATORY = "leave-one-subject-out", "a-priori", "exploratory"
-PLANS = (LEAVE_ONE_OUT, A_PRIORI, EXPLORATORY)
+K_FOLD, SPLIT_HALF, GIVEN_FOLDS = "k-fold", "split-half", "given-folds"
+# The plans in which subjects take turns at choosing and being tested.
+CROSS_FITTED = (LEAVE_ONE_OUT, K_FOLD, SPLIT_HALF, GIVEN_FOLDS)
+PLANS = (*CROSS_FITTED, A_PRIORI, EXPLORATORY)
 # The tests that may be asked for, the default first. The plain t of cross-fitted or circular
 # values can be asked for, and is refused by the guard with the reason.
-TESTS = {LEAVE_ONE_OUT: ("whole-procedure", "t"), A_PRIORI: ("t",), EXPLORATORY: ("none", "t")}
+TESTS = {
+    **dict.fromkeys(CROSS_FITTED, ("whole-procedure", "t")),
+    A_PRIORI: ("t",),
+    EXPLORATORY: ("none", "t"),
+}
 
 _KEYS = {
     "": {"study", "data", "roi", "origin"},
     "study": {"name", "table", "output", "seed"},
     "data": {"select", "zeros_are_missing", "min_fraction"},
     "origin": {"source", "files", "derived_from"},
-    "roi": {
-        "name",
-        "plan",
-        "search",
-        "region",
-        "rule",
-        "tail",
-        "on_empty",
-        "k",
-        "flips",
-        "interval",
-        "test",
-    },
+    "roi": {"name", "plan", "test"},
     "rule": {"kind", "height", "p", "connectivity", "min_size", "pick", "near", "k"},
     "region": {"mask", "centre", "radius", "origin", "derived_from"},
 }
+
+
+_CHOOSING = {"search", "rule", "tail", "on_empty", "k"}
+_FOLDED = _CHOOSING | {"flips", "interval", "choose_on"}
+# The keys of each plan, beside those of every [[roi]].
+_PLAN_KEYS = {
+    LEAVE_ONE_OUT: _FOLDED,
+    K_FOLD: _FOLDED | {"folds", "stratify"},
+    SPLIT_HALF: _FOLDED | {"stratify"},
+    GIVEN_FOLDS: _FOLDED | {"fold_column"},
+    A_PRIORI: {"region"},
+    EXPLORATORY: _CHOOSING,
+}
+
+# Per subject, sorted by label: the rows whose maps are averaged.
+Subjects = tuple[tuple[str, tuple[Row, ...]], ...]
 
 
 @dataclass(frozen=True)
@@ -82,7 +93,10 @@ class Region:
 
 @dataclass(frozen=True)
 class Roi:
-    """One region of interest and how it is chosen and tested."""
+    """One region of interest and how it is chosen and tested.
+
+    `choosing` holds the rows it is chosen on, when they are not those that are tested.
+    """
 
     name: str
     plan: str
@@ -91,6 +105,7 @@ class Roi:
     n_flips: int
     interval: str
     test: str
+    choosing: Subjects | None = None
 
     @property
     def names(self) -> tuple[str, str, str]:
@@ -125,10 +140,16 @@ class Settings:
     seed: int
     missing: Missing
     study: Study
-    rows: tuple[tuple[str, tuple[Row, ...]], ...]
+    rows: Subjects
     left_out: tuple[Row, ...]
     rois: tuple[Roi, ...]
     digest: str
+
+    @property
+    def used(self) -> tuple[Row, ...]:
+        """Every row that is read, tested ones first, each once."""
+        sets = [self.rows, *(roi.choosing for roi in self.rois if roi.choosing is not None)]
+        return tuple(dict.fromkeys(row for rows in sets for _, runs in rows for row in runs))
 
 
 class _Reader:
@@ -237,17 +258,21 @@ def read_settings(path: str | Path) -> Settings:
         float(read.get(data, "min_fraction", (int, float), 0.8)),
     )
     tables = read.tables(toml, "roi", ...)
-    rois = tuple(_roi(read.within("roi", i), t, missing) for i, t in enumerate(tables))
+    plain = read_table(root / read.get(head, "table", str, ...), root)
+    select, seed = read.get(data, "select", dict, {}), read.get(head, "seed", int, 0)
+    rows, left_out = _selected(read, plain, select)
+    rois = tuple(
+        _roi(read.within("roi", i), table, missing, seed, rows, plain, select)
+        for i, table in enumerate(tables)
+    )
     _distinct(read, [roi.name for roi in rois])
     origins = tuple(_origins(read, toml, rois, root))
-    plain = read_table(root / read.get(head, "table", str, ...), root)
     study = Study(root, plain.rows, origins, plain.columns)
-    rows, left_out = _selected(read, study, read.get(data, "select", dict, {}))
     return Settings(
         name=_label(read, read.get(head, "name", str, ...), "name"),
         root=root,
         output=root / read.get(head, "output", str, "results"),
-        seed=read.get(head, "seed", int, 0),
+        seed=seed,
         missing=missing,
         study=study,
         rows=rows,
@@ -343,17 +368,29 @@ def _rule(read: _Reader, table: dict[str, Any]) -> MaskRule:
     )
 
 
-def _roi(read: _Reader, table: dict[str, Any], missing: Missing) -> Roi:
-    read.known(table, "roi")
+def _roi(
+    read: _Reader,
+    table: dict[str, Any],
+    missing: Missing,
+    seed: int,
+    rows: Subjects,
+    study: Study,
+    select: dict[str, Any],
+) -> Roi:
+    for key in table:
+        if key not in _KEYS["roi"].union(*_PLAN_KEYS.values()):
+            known = _KEYS["roi"].union(*_PLAN_KEYS.values())
+            raise InputError(
+                f"unknown key {key!r} in roi",
+                where=read.where(key),
+                expected="one of " + ", ".join(sorted(known)),
+            )
     name = _label(read, read.get(table, "name", str, ...), "name")
     plan = read.one_of(table, "plan", PLANS, ...)
-    given = plan == A_PRIORI
-    wrong = (
-        {"search", "rule", "tail", "on_empty", "k", "flips", "interval"} if given else {"region"}
-    )
     for key in table:
-        if key in wrong:
+        if key not in _KEYS["roi"] | _PLAN_KEYS[plan]:
             raise InputError(f"key {key!r} does not go with plan {plan!r}", where=read.where(key))
+    given = plan == A_PRIORI
     key = "region" if given else "search"
     place = read.get(table, key, dict, ... if given else None)
     region = Region() if place is None else _region(read, place, key)
@@ -361,22 +398,88 @@ def _roi(read: _Reader, table: dict[str, Any], missing: Missing) -> Roi:
     if not given:
         procedure = Procedure(
             rule=_rule(read, read.get(table, "rule", dict, ...)),
-            scheme=LeaveOneOut(),
+            scheme=_scheme(read, table, plan, seed, rows, study),
             tail=read.one_of(table, "tail", TAILS, "positive"),
             on_empty=read.one_of(table, "on_empty", ON_EMPTY, "empty"),
             k=read.get(table, "k", int, 0),
             missing=missing,
         )
     test = read.one_of(table, "test", TESTS[plan], TESTS[plan][0])
+    of_folds = plan in (K_FOLD, SPLIT_HALF, GIVEN_FOLDS)
+    intervals = INTERVALS if of_folds else tuple(i for i in INTERVALS if i != "folds")
     return Roi(
         name,
         plan,
         region,
         procedure,
         read.get(table, "flips", int, 4999),
-        read.one_of(table, "interval", INTERVALS, "flips"),
+        read.one_of(table, "interval", intervals, "folds" if of_folds else "flips"),
         test,
+        _choosing(read, table, rows, study, select),
     )
+
+
+def _choosing(
+    read: _Reader, table: dict[str, Any], rows: Subjects, study: Study, select: dict[str, Any]
+) -> Subjects | None:
+    """The rows a region is chosen on, when they differ from those that are tested."""
+    own = read.get(table, "choose_on", dict, None)
+    if own is None:
+        return None
+    chosen, _ = _selected(read, study, {**select, **own})
+    here, there = {label for label, _ in rows}, {label for label, _ in chosen}
+    if here != there:
+        raise InputError(
+            "choose_on selects other subjects than [data] select",
+            where=read.where("choose_on"),
+            got="sub-" + ", sub-".join(sorted(here ^ there)) + " in one of them only",
+            remedy="give every subject a map of both, or an exclude_reason on both",
+        )
+    return None if chosen == rows else chosen
+
+
+def _scheme(
+    read: _Reader, table: dict[str, Any], plan: str, seed: int, rows: Subjects, study: Study
+) -> Scheme:
+    """The folds of a plan, over the people of the study."""
+    if plan in (K_FOLD, SPLIT_HALF):
+        k = 2 if plan == SPLIT_HALF else read.get(table, "folds", int, 5)
+        if k < 2:
+            raise InputError(
+                "too few folds", where=read.where("folds"), expected=">= 2", got=str(k)
+            )
+        return KFold(k, seed, _per_person(read, table, "stratify", rows, study))
+    if plan == GIVEN_FOLDS:
+        read.get(table, "fold_column", str, ...)
+        return Given(_per_person(read, table, "fold_column", rows, study))
+    return LeaveOneOut()
+
+
+def _per_person(
+    read: _Reader, table: dict[str, Any], key: str, rows: Subjects, study: Study
+) -> tuple[tuple[str, str], ...]:
+    """Each person's value in the column that a key names; nothing when the key is absent."""
+    column = read.get(table, key, str, "")
+    if not column:
+        return ()
+    if column not in study.columns:
+        raise InputError(
+            f"unknown column {column!r}",
+            where=read.where(key),
+            expected="a column of the study table: " + ", ".join(study.columns),
+        )
+    found: dict[str, str] = {}
+    for _, runs in rows:
+        for row in runs:
+            value = row.column(column)
+            if found.setdefault(row.person, value) != value:
+                raise InputError(
+                    f"{row.person} has two values of {column}",
+                    where=str(read.path),
+                    got=f"{found[row.person]!r} and {value!r}",
+                    remedy="give all rows that count as one subject the same value",
+                )
+    return tuple(sorted(found.items()))
 
 
 def _origins(
@@ -391,9 +494,9 @@ def _origins(
         read.known(table, "origin")
         listed: list[str] = []
         for pattern in read.get(table, "files", list, ...):
-            if Path(str(pattern)).is_absolute():
+            if not str(pattern) or Path(str(pattern)).is_absolute():
                 raise InputError(
-                    "absolute pattern",
+                    "pattern of files out of range",
                     where=read.where("files"),
                     expected="a pattern relative to the study file",
                     got=repr(pattern),
@@ -423,7 +526,7 @@ def _units(read: _Reader, table: dict[str, Any]) -> tuple[Unit, ...]:
 
 def _selected(
     read: _Reader, study: Study, select: dict[str, Any]
-) -> tuple[tuple[tuple[str, tuple[Row, ...]], ...], tuple[Row, ...]]:
+) -> tuple[Subjects, tuple[Row, ...]]:
     """The rows to analyse, per subject, and those left out with a reason."""
     wanted: dict[str, set[str]] = {}
     for column, value in select.items():

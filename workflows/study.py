@@ -207,8 +207,10 @@ class Study:
             touch = self._touch_of_key(key, volume)
             if touch is not None:
                 return touch
-        # A text too long for a file name is no file; os.path says so without an error.
-        if path and os.path.exists(self.root / path):
+        # A text too long for a file name is no file; os.path says so without an error. A word
+        # that happens to name a folder (a subject's label, say) is a word.
+        full = self.root / path
+        if os.path.isfile(full) or (os.path.isabs(path) and os.path.isdir(full)):
             return Touch(unknown=frozenset({self.relative(path)}))
         return None
 

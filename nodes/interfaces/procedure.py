@@ -11,7 +11,7 @@ from nipype.interfaces.base import File
 
 from .. import progress
 from ..errors import SequesterError
-from ..images import Geometry, geometry_of, open_image, read_mask, stack, write_map
+from ..images import Geometry, check_same_grid, geometry_of, open_image, read_mask, stack, write_map
 from ..procedure import Prepared, Procedure, held_out_rows
 from ..results import INTERVALS, cross_fitted_result
 from ..rules import Statistic, all_but_held_out
@@ -36,7 +36,15 @@ def _prepared(inputs: Any) -> tuple[Prepared, Grid, Geometry]:
         inside, _ = read_mask(search, like)
     effects, grid, geometry = stack(inputs.in_files, inside)
     names = inputs.row_names or inputs.in_files
-    return inputs.procedure.prepare(effects, inputs.labels, grid, names), grid, geometry
+    tested = None
+    if getattr(inputs, "tested_files", None):
+        check_same_grid(
+            (inputs.in_files[0], geometry),
+            [(path, geometry_of(open_image(path))) for path in inputs.tested_files],
+        )
+        tested, _, _ = stack(inputs.tested_files, inside)
+    ready = inputs.procedure.prepare(effects, inputs.labels, grid, names, tested)
+    return ready, grid, geometry
 
 
 def _per_fold(settings: Any) -> list[tuple[int, ...]]:
@@ -91,6 +99,9 @@ class ChooseByFold(SequesterInterface):
 
 
 class _FlipInput(_ProcedureInput):
+    tested_files = traits.List(
+        File(exists=True), desc="per row: the map that is tested, if not the one that chooses"
+    )
     values = traits.List(traits.Float, mandatory=True, desc="per row: the extracted value")
     n_flips = traits.Int(4999, usedefault=True, desc="random flips, if not enumerated")
     seed = traits.Int(0, usedefault=True, desc="keys the flips")
