@@ -177,12 +177,16 @@ everything = Rule(None, _everything)
 """Every element touches all inputs: the rule for what we do not know."""
 
 
-def only(*fields: str, geometry: Sequence[str] = (), ignored: Sequence[str] = ()) -> Rule:
-    """One element that touches these inputs, whole; the ignored ones cannot reach it."""
-
+def only(
+    *fields: str,
+    geometry: Sequence[str] = (),
+    ignored: Sequence[str] = (),
+    single: bool = True,
+) -> Rule:
+    """An element (or a list) that touches these inputs whole; the ignored ones cannot reach it."""
     return Rule(
         frozenset({*fields, *geometry, *ignored}),
-        lambda inputs: joined(_all(inputs, fields, geometry)),
+        lambda inputs: joined(_all(inputs, fields, geometry), single=single),
     )
 
 

@@ -51,7 +51,7 @@ class Extract(SequesterInterface):
     touch_rules = {
         "values": _MEETING.rule,
         "coverage": _MEETING.rule,
-        "sizes": only("mask_files", ignored=("in_files",)),
+        "sizes": only("mask_files", ignored=("in_files",), single=False),
     }
 
     def _work(self, cwd: Path) -> dict[str, Any]:
