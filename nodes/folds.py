@@ -73,14 +73,23 @@ class Scheme(ABC):
 class LeaveOneOut(Scheme):
     """Each label is held out once.
 
+    Parameters
+    ----------
+    least : int
+        How many labels there must be: 3 subjects (two are left for a t), 2 runs for a mean.
+
     Examples
     --------
     >>> [fold.held_out for fold in LeaveOneOut().folds(["b", "a", "a", "c"])]
     [(1, 2), (0,), (3,)]
     """
 
+    least: int = 3
+
     def _held_out(self, labels: list[str]) -> list[tuple[str, tuple[str, ...]]]:
-        _need(labels, 3, "leave-one-subject-out")
+        _need(
+            labels, self.least, "leave-one-subject-out" if self.least > 2 else "leave-one-run-out"
+        )
         return [(label, (label,)) for label in labels]
 
 

@@ -241,6 +241,64 @@ def fixed_region_result(
     )
 
 
+def own_mask_result(
+    values: Sequence[float],
+    names: tuple[str, str, str],
+    sizes: Sequence[int],
+    coverage: Sequence[float],
+) -> RoiResult:
+    """A mask of each subject's own, chosen on their other runs: t across subjects, run level.
+
+    Parameters
+    ----------
+    values : sequence of float, one per subject
+        Averaged over the subject's runs.
+    names : (roi, plan, search region)
+    sizes, coverage : sequence, one per run
+
+    Examples
+    --------
+    >>> made = own_mask_result([1.0, 2.0, 3.0], ("a", "leave-one-run-out", "b"), [8, 8], [1, 1])
+    >>> made.null
+    'no subject has a replicable effect in the search region'
+    """
+    test = one_sample_t(np.asarray(values))
+    roi, plan, search = names
+    interval = test.interval
+    mean, low, high = estimate_texts(test.mean, interval.low, interval.high)
+    empty = sum(size == 0 for size in sizes)
+    note = f" {empty} of {len(sizes)} masks are empty; their value counts as 0." if empty else ""
+    return RoiResult(
+        roi=roi,
+        plan=plan,
+        rule="each subject's own mask, from their other runs",
+        search=search,
+        n_subjects=len(values),
+        estimate=test.mean,
+        target="mean over these subjects of the effect in their own masks",
+        biased=False,
+        interval=interval,
+        t=test.t,
+        p=test.p,
+        p_kind="Student's t across subjects, two-sided",
+        sided="two-sided",
+        null="no subject has a replicable effect in the search region",
+        dz=test.dz,
+        n_folds=len(sizes),
+        n_empty=empty,
+        mask_sizes=tuple(sizes),
+        coverage=min(coverage),
+        sentence=(
+            f"{roi}: mean {mean} in each subject's own mask in the search region '{search}', "
+            f"chosen on their other runs ({plan}; 95 % interval {low} to {high}), "
+            f"t({test.df}) = {test.t:.2f}, {p_text(test.p)}, two-sided. Null: no subject has a "
+            "replicable effect there (run level: what protects is that run noise is independent). "
+            "It speaks of a population mean only if the effects that choose and those that are "
+            f"tested are uncorrelated across subjects.{note}"
+        ),
+    )
+
+
 def exploratory_result(
     values: Sequence[float],
     names: tuple[str, str, str],

@@ -251,6 +251,41 @@ def all_but_held_out(
     return Rule(frozenset({data, *shared, *geometry}), derive)
 
 
+def chosen_on(
+    data: str,
+    rows: Callable[[Mapping[str, Any]], list[tuple[int, ...]]],
+    known_by: Sequence[str] = (),
+    shared: Sequence[str] = (),
+) -> Rule:
+    """Element k touches the items of `data` that `rows` names for it, and no other.
+
+    Parameters
+    ----------
+    data : str
+        The field with one item per row.
+    rows : callable
+        From the node's settings to the row numbers that each element is chosen on.
+    known_by : sequence of str
+        The settings that `rows` reads; when one arrives over an edge, no element can be told.
+    shared : sequence of str
+        Inputs that every element touches whole.
+    """
+
+    def derive(inputs: Inputs) -> Tree:
+        common = _all(inputs, shared)
+        tree = inputs.trees.get(data, Leaf(Touch(), single=False))
+        if isinstance(tree, Leaf) or any(name in inputs.arriving for name in known_by):
+            return joined([*leaves(tree), *common], single=False)
+        return Branch(
+            [
+                joined([*(x for i in chosen for x in leaves(element(tree, i))), *common])
+                for chosen in rows(inputs.settings)
+            ]
+        )
+
+    return Rule(frozenset({data, *shared}), derive)
+
+
 @dataclass(frozen=True)
 class Meeting:
     """The two inputs of an extraction: what was chosen, and the data it is judged on.
@@ -313,11 +348,15 @@ class Statistic:
         Fields with scores, covariates or group labels.
     cross_fitted : bool
         Whether it stays calibrated when the masks and the data take turns.
+    labels : str
+        The setting that says who each value belongs to, when values of one person are averaged
+        before anything else; then a person's own values may have taken turns.
     cure : str
         What to use instead when it is not.
     """
 
     values: str
+    labels: str = ""
     scores: tuple[str, ...] = ()
     cross_fitted: bool = False
     cure: str = ""

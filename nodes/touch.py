@@ -253,8 +253,17 @@ def union(touches: Iterable[Touch]) -> Touch:
     )
 
 
-def cross_fitted(extractions: Iterable[Extraction], table: UnitTable) -> bool:
+def cross_fitted(
+    extractions: Iterable[Extraction], table: UnitTable, *, averaged: bool = False
+) -> bool:
     """Whether the mask behind one of these values was chosen on the data behind another.
+
+    Parameters
+    ----------
+    extractions : iterable of Extraction
+    table : UnitTable
+    averaged : bool
+        Whether each person's values are averaged first: turns within a person do not count.
 
     Examples
     --------
@@ -264,8 +273,10 @@ def cross_fitted(extractions: Iterable[Extraction], table: UnitTable) -> bool:
     (True, False)
     """
     marks = list(extractions)
+    people = [table.people_of(mark.data) for mark in marks] if averaged else []
     for i, one in enumerate(marks):
         reach = table.overlapping(one.mask)
-        if any(reach & other.data for j, other in enumerate(marks) if j != i):
-            return True
+        for j, other in enumerate(marks):
+            if i != j and reach & other.data and not (averaged and people[i] == people[j]):
+                return True
     return False

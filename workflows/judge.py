@@ -211,7 +211,9 @@ def _statistic(ancestry: Ancestry, node: object, statistic: Statistic) -> Findin
     elif any(table.overlapping(mark.mask) & mark.data for mark in marks):
         verdict, reason = LEAK, "its values were read in a region chosen on those very data"
         cure = "see the extraction that leaks"
-    elif not statistic.cross_fitted and cross_fitted(marks, table):
+    elif not statistic.cross_fitted and cross_fitted(
+        marks, table, averaged=_averaged(ancestry, name, statistic, data_units)
+    ):
         n = len(marks)
         rate = (
             f" (about {plain_t_false_positives(n, n, 0.01):.0%} of the time at a nominal 5 %, "
@@ -247,6 +249,12 @@ def _statistic(ancestry: Ancestry, node: object, statistic: Statistic) -> Findin
         reason=reason,
         cure=cure,
     )
+
+
+def _averaged(ancestry: Ancestry, name: str, statistic: Statistic, data: int) -> bool:
+    """Whether a statistic averages each person's values first: its labels name each person."""
+    labels = ancestry.inputs[name].settings.get(statistic.labels)
+    return labels is not None and len(set(labels)) == len(ancestry.study.table.people_of(data))
 
 
 def _weakest(marks: list[Extraction], table: UnitTable) -> str:

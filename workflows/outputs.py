@@ -21,12 +21,13 @@ from typing import Any
 from filelock import FileLock, Timeout
 
 from ..nodes.errors import InputError
+from ..nodes.folds import LeaveOneOut
 from ..nodes.images import write_bytes
 from ..nodes.interfaces.base import write_json
 from .ancestry import node_name
 from .digests import digest
 from .judge import Finding
-from .settings import CROSS_FITTED, EXPLORATORY, Roi, Settings
+from .settings import CROSS_FITTED, EXPLORATORY, OWN_MASKS, Roi, Settings
 from .study import Study
 
 MANIFEST = "manifest.json"
@@ -36,6 +37,7 @@ VALUE_COLUMNS = {
     "roi": "Region of interest, as named in STUDY.toml.",
     "plan": "How the region was chosen.",
     "sub": "Subject label.",
+    "run": "Run, when each run has a mask of its own; n/a when runs were averaged.",
     "value": "Mean effect of the subject in its mask, in the units of the effect maps; 0 when the "
     "mask is empty.",
     "mask": "Mask the value was read in.",
@@ -97,13 +99,15 @@ class RoiOutput:
     roi : Roi
     record : dict
         The result, as `RoiResult.as_dict`.
-    values, coverage : sequence of float, one per subject
-    sizes : sequence of int, one per subject
-        Voxels in each subject's mask.
+    values, coverage : sequence of float, one per row
+    sizes : sequence of int, one per row
+        Voxels in each row's mask.
     masks : sequence of (name, Path)
         Mask files, by what they are called in the folder.
     mask_of_row : sequence of str
-        Per subject, the name of its mask.
+        Per row, the name of its mask.
+    rows : sequence of (subject, run)
+        What a row is; the run is "" when runs were averaged.
     overlap : Path or None
     """
 
@@ -114,6 +118,7 @@ class RoiOutput:
     sizes: Sequence[int]
     masks: Sequence[tuple[str, Path]]
     mask_of_row: Sequence[str]
+    rows: Sequence[tuple[str, str]]
     overlap: Path | None
 
 
@@ -226,7 +231,7 @@ def write_all(
                     "Sources": [f"bids::masks/{mask}" for mask, _ in output.masks],
                 },
             )
-    _table(stage / "roi_values.tsv", VALUE_COLUMNS, _value_rows(settings, outputs))
+    _table(stage / "roi_values.tsv", VALUE_COLUMNS, _value_rows(outputs))
     tests = _test_rows(settings, outputs, findings)
     _table(stage / "roi_tests.tsv", TEST_COLUMNS, tests)
     _table(stage / "touches.tsv", TOUCH_COLUMNS, _touch_rows(settings.study, findings))
@@ -247,17 +252,27 @@ def write_all(
 def _sources(settings: Settings, output: RoiOutput) -> Iterator[list[str]]:
     """For each mask, the study's files whose values it derives from."""
     chosen_on = output.roi.choosing or settings.rows
-    every = [(runs[0].person, row.path) for _, runs in chosen_on for row in runs]
+    every = [row for _, runs in chosen_on for row in runs]
+    tested = [runs for _, runs in settings.rows]
+    if output.roi.plan in OWN_MASKS:
+        scheme = output.roi.procedure.scheme if output.roi.procedure else LeaveOneOut(2)
+        for runs in tested:
+            of_run: dict[int, list[str]] = {}
+            for fold in scheme.folds([row.unit.run for row in runs]):
+                for held in fold.held_out:
+                    of_run[held] = [runs[i].path for i in fold.selection]
+            yield from (of_run[i] for i in range(len(runs)))
+        return
     for name, _ in output.masks:
         if output.roi.plan in CROSS_FITTED:
             people = {
                 runs[0].person
-                for (_, runs), mask in zip(settings.rows, output.mask_of_row, strict=True)
+                for runs, mask in zip(tested, output.mask_of_row, strict=True)
                 if mask == name
             }
-            yield [path for person, path in every if person not in people]
+            yield [row.path for row in every if row.person not in people]
         elif output.roi.plan == EXPLORATORY:
-            yield [path for _, path in every]
+            yield [row.path for row in every]
         else:
             yield [output.roi.region.mask] if output.roi.region.mask else []
 
@@ -266,13 +281,14 @@ def _sidecar(path: Path, content: dict[str, Any]) -> None:
     write_json(path.with_name(path.name.removesuffix(".nii.gz") + ".json"), content)
 
 
-def _value_rows(settings: Settings, outputs: Sequence[RoiOutput]) -> Iterator[dict[str, Any]]:
+def _value_rows(outputs: Sequence[RoiOutput]) -> Iterator[dict[str, Any]]:
     for output in outputs:
-        for i, (label, _) in enumerate(settings.rows):
+        for i, (label, run) in enumerate(output.rows):
             yield {
                 "roi": output.roi.name,
                 "plan": output.roi.plan,
                 "sub": label,
+                "run": run,
                 "value": output.values[i],
                 "mask": output.mask_of_row[i],
                 "mask_voxels": output.sizes[i],

@@ -17,6 +17,7 @@ from ..nodes.folds import LeaveOneOut
 from ..nodes.interfaces import (
     ChooseByFold,
     ChooseMask,
+    ChooseWithin,
     Extract,
     FixedRegionTest,
     FlipTest,
@@ -26,7 +27,17 @@ from ..nodes.interfaces import (
     SubjectMaps,
 )
 from ..nodes.procedure import Procedure
-from .settings import A_PRIORI, EXPLORATORY, LEAVE_ONE_OUT, Region, Roi, Settings, Subjects
+from .settings import (
+    A_PRIORI,
+    EXPLORATORY,
+    LEAVE_ONE_OUT,
+    LEAVE_RUN_OUT,
+    OWN_MASKS,
+    Region,
+    Roi,
+    Settings,
+    Subjects,
+)
 
 
 def node(interface: Any, name: str, mem_gb: float = 0.5, **inputs: Any) -> Node:
@@ -183,20 +194,80 @@ def leave_one_subject_out(
     >>> from sequester.nodes.masks import Cluster
     >>> plan = leave_one_subject_out("arbor", Procedure(Cluster(p=0.001)), ["01", "02", "03"])
     >>> plan.get_node("choose").inputs.procedure.scheme
-    LeaveOneOut()
+    LeaveOneOut(least=3)
     """
     procedure = replace(procedure, scheme=LeaveOneOut())
     return cross_fitted(name, procedure, labels, search, plan=LEAVE_ONE_OUT, **settings)
 
 
-def _fixed_test(workflow: Workflow, extract: Node, end: Node, names: tuple[str, str, str]) -> None:
-    test = node(FixedRegionTest(), "test", names=names, labels=extract.inputs.labels)
+def _fixed_test(
+    workflow: Workflow,
+    extract: Node,
+    end: Node,
+    names: tuple[str, str, str],
+    *,
+    own_masks: bool = False,
+) -> None:
+    test = node(
+        FixedRegionTest(),
+        "test",
+        names=names,
+        labels=extract.inputs.labels,
+        own_masks=own_masks,
+    )
     workflow.connect(
         [
             (extract, test, [(f, f) for f in ("values", "coverage", "sizes")]),
             (test, end, [("record_file", "record_file")]),
         ]
     )
+
+
+def own_masks(
+    name: str,
+    procedure: Procedure,
+    labels: Sequence[str],
+    runs: Sequence[str],
+    search: Node | None = None,
+    search_name: str = "whole map",
+    plan: str = LEAVE_RUN_OUT,
+    mem_gb: float = 0.5,
+) -> Workflow:
+    """Each subject's own mask from their other runs; runs averaged, then t across subjects.
+
+    Parameters
+    ----------
+    name : str
+    procedure : Procedure
+        Its rule reads the subject's mean (or t) over the runs that choose; its scheme folds
+        over runs (`LeaveOneOut(2)`, `Halves`).
+    labels, runs : sequence of str
+        Per map of ``inputnode.effects``: the subject and the run.
+    search : Node, optional
+        With an output ``mask_file``: the region in which each subject's mask lies.
+    search_name, plan : str
+    mem_gb : float
+    """
+    workflow = Workflow(name=name)
+    start, end = _ends(workflow, ["mask_files", "values", "record_file"])
+    labels = list(labels)
+    choose = node(
+        ChooseWithin(), "choose", mem_gb, labels=labels, runs=list(runs), procedure=procedure
+    )
+    extract = node(Extract(), "extract", labels=labels, missing=procedure.missing)
+    workflow.connect(
+        [
+            (start, choose, [("effects", "in_files")]),
+            (start, extract, [("effects", "in_files")]),
+            (choose, extract, [("row_masks", "mask_files")]),
+            (choose, end, [("row_masks", "mask_files")]),
+            (extract, end, [("values", "values")]),
+        ]
+    )
+    if search is not None:
+        workflow.connect(search, "mask_file", choose, "search_file")
+    _fixed_test(workflow, extract, end, (name, plan, search_name), own_masks=True)
+    return workflow
 
 
 def a_priori(
@@ -312,12 +383,17 @@ def study_workflow(settings: Settings, base_dir: Path) -> Workflow:
     }
     root = settings.root
     maps = _subject_maps(settings, settings.rows, "maps")
+    by_run = tuple((label, (row,)) for label, runs in settings.rows for row in runs)
+    single = None
+    if any(roi.plan in OWN_MASKS for roi in settings.rois):
+        single = _subject_maps(settings, by_run, "runs")
     people = [runs[0].person for _, runs in settings.rows]
     reference = str(root / settings.rows[0][1][0].path)
     for roi in settings.rois:
         where = region_node(roi.region, "region", reference, root)
         plan = _plan(roi, people, where, settings)
-        workflow.connect(maps, "out_files", plan, "inputnode.effects")
+        source = single if roi.plan in OWN_MASKS else maps
+        workflow.connect(source, "out_files", plan, "inputnode.effects")
         if roi.choosing is not None:
             choosing = _subject_maps(settings, roi.choosing, f"{roi.name}Choosing")
             workflow.connect(choosing, "out_files", plan, "inputnode.choosing")
@@ -341,6 +417,10 @@ def _plan(roi: Roi, people: list[str], where: Node | None, settings: Settings) -
         assert where is not None, "an a-priori region is a mask or a sphere"
         return a_priori(name, people, where, search, settings.missing, roi.test)
     assert roi.procedure is not None
+    if plan in OWN_MASKS:
+        rows = [row for _, runs in settings.rows for row in runs]
+        subjects, runs = [row.person for row in rows], [row.unit.run for row in rows]
+        return own_masks(name, roi.procedure, subjects, runs, where, search, plan)
     if plan == EXPLORATORY:
         return exploratory(name, roi.procedure, people, where, search, roi.test)
     return cross_fitted(

@@ -26,7 +26,7 @@ from .guard import GuardPlugin, Listener
 from .judge import Finding
 from .outputs import RoiOutput, claimed, find_nodes, read_record, write_all
 from .plans import study_workflow
-from .settings import A_PRIORI, EXPLORATORY, LEAVE_ONE_OUT, Roi, Settings
+from .settings import A_PRIORI, EXPLORATORY, LEAVE_ONE_OUT, OWN_MASKS, Roi, Settings
 
 
 @dataclass(frozen=True)
@@ -185,13 +185,21 @@ def _collect(roi: Roi, settings: Settings, nodes: dict[str, Any]) -> RoiOutput:
     prefix = f"{settings.name}.{roi.name}"
     extracted = nodes[f"{prefix}.extract"].result.outputs
     values, coverage, sizes = extracted.values, extracted.coverage, extracted.sizes
-    labels = [label for label, _ in settings.rows]
+    rows = [(label, "") for label, _ in settings.rows]
     overlap = None
     if roi.plan in (A_PRIORI, EXPLORATORY):
         step = "region" if roi.plan == A_PRIORI else "choose"
         source = Path(nodes[f"{prefix}.{step}"].result.outputs.mask_file)
         name = f"label-{roi.name}_mask.nii.gz"
-        masks, mask_of_row = [(name, source)], [name] * len(labels)
+        masks, mask_of_row = [(name, source)], [name] * len(rows)
+    elif roi.plan in OWN_MASKS:
+        rows = [(label, row.unit.run) for label, runs in settings.rows for row in runs]
+        mask_of_row = [
+            f"sub-{_alnum(sub)}_run-{_alnum(run)}_label-{roi.name}_desc-otherruns_mask.nii.gz"
+            for sub, run in rows
+        ]
+        chosen = nodes[f"{prefix}.choose"].result.outputs
+        masks = list(zip(mask_of_row, map(Path, chosen.row_masks), strict=True))
     else:
         chosen = nodes[f"{prefix}.choose"].result.outputs
         word = "without" if roi.plan == LEAVE_ONE_OUT else "fold"
@@ -215,7 +223,7 @@ def _collect(roi: Roi, settings: Settings, nodes: dict[str, Any]) -> RoiOutput:
         record = exploratory_result(values, roi.names, rule, sizes[0], coverage).as_dict()
     image = open_image(masks[0][1])
     record["voxel_mm3"] = float(abs(np.linalg.det(image.affine[:3, :3])))
-    return RoiOutput(roi, record, values, coverage, sizes, masks, mask_of_row, overlap)
+    return RoiOutput(roi, record, values, coverage, sizes, masks, mask_of_row, rows, overlap)
 
 
 def _alnum(label: str) -> str:

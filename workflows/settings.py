@@ -13,7 +13,7 @@ from pathlib import Path
 from typing import Any
 
 from ..nodes.errors import InputError
-from ..nodes.folds import Given, KFold, LeaveOneOut, Scheme
+from ..nodes.folds import Given, Halves, KFold, LeaveOneOut, Scheme
 from ..nodes.groupmaps import Missing
 from ..nodes.masks import Cluster, MaskRule, Strongest, Threshold
 from ..nodes.procedure import ON_EMPTY, TAILS, Procedure
@@ -26,12 +26,15 @@ LEAVE_ONE_OUT, A_PRIORI, EXPLORATORY = "leave-one-subject-out", "a-priori", "exp
 K_FOLD, SPLIT_HALF, GIVEN_FOLDS = "k-fold", "split-half", "given-folds"
 # The plans in which subjects take turns at choosing and being tested.
 CROSS_FITTED = (LEAVE_ONE_OUT, K_FOLD, SPLIT_HALF, GIVEN_FOLDS)
-PLANS = (*CROSS_FITTED, A_PRIORI, EXPLORATORY)
+LEAVE_RUN_OUT, SPLIT_RUNS = "leave-one-run-out", "split-half-runs"
+# The plans in which each subject has masks of their own, from their other runs.
+OWN_MASKS = (LEAVE_RUN_OUT, SPLIT_RUNS)
+PLANS = (*CROSS_FITTED, *OWN_MASKS, A_PRIORI, EXPLORATORY)
 # The tests that may be asked for, the default first. The plain t of cross-fitted or circular
 # values can be asked for, and is refused by the guard with the reason.
 TESTS = {
     **dict.fromkeys(CROSS_FITTED, ("whole-procedure", "t")),
-    A_PRIORI: ("t",),
+    **dict.fromkeys((*OWN_MASKS, A_PRIORI), ("t",)),
     EXPLORATORY: ("none", "t"),
 }
 
@@ -41,7 +44,7 @@ _KEYS = {
     "data": {"select", "zeros_are_missing", "min_fraction"},
     "origin": {"source", "files", "derived_from"},
     "roi": {"name", "plan", "test"},
-    "rule": {"kind", "height", "p", "connectivity", "min_size", "pick", "near", "k"},
+    "rule": {"kind", "height", "p", "connectivity", "min_size", "pick", "near", "k", "map"},
     "region": {"mask", "centre", "radius", "origin", "derived_from"},
 }
 
@@ -54,6 +57,8 @@ _PLAN_KEYS = {
     K_FOLD: _FOLDED | {"folds", "stratify"},
     SPLIT_HALF: _FOLDED | {"stratify"},
     GIVEN_FOLDS: _FOLDED | {"fold_column"},
+    LEAVE_RUN_OUT: _CHOOSING,
+    SPLIT_RUNS: _CHOOSING | {"halves"},
     A_PRIORI: {"region"},
     EXPLORATORY: _CHOOSING,
 }
@@ -342,7 +347,7 @@ def _rule(read: _Reader, table: dict[str, Any]) -> MaskRule:
     kind = read.one_of(table, "kind", ("threshold", "cluster", "strongest"), ...)
     allowed = {
         "threshold": {"height", "p"},
-        "strongest": {"k"},
+        "strongest": {"k", "map"},
         "cluster": {"height", "p", "connectivity", "min_size", "pick", "near"},
     }[kind]
     for key in table:
@@ -353,7 +358,8 @@ def _rule(read: _Reader, table: dict[str, Any]) -> MaskRule:
                 expected="one of " + ", ".join(sorted(allowed)),
             )
     if kind == "strongest":
-        return Strongest(read.get(table, "k", int, ...))
+        kind = read.one_of(table, "map", ("t", "mean"), "t")
+        return Strongest(read.get(table, "k", int, ...), kind)
     height = read.get(table, "height", (int, float), None)
     p = read.get(table, "p", (int, float), None)
     if kind == "threshold":
@@ -404,6 +410,8 @@ def _roi(
             k=read.get(table, "k", int, 0),
             missing=missing,
         )
+    if plan in OWN_MASKS:
+        _enough_runs(read, plan, rows)
     test = read.one_of(table, "test", TESTS[plan], TESTS[plan][0])
     of_folds = plan in (K_FOLD, SPLIT_HALF, GIVEN_FOLDS)
     intervals = INTERVALS if of_folds else tuple(i for i in INTERVALS if i != "folds")
@@ -417,6 +425,18 @@ def _roi(
         test,
         _choosing(read, table, rows, study, select),
     )
+
+
+def _enough_runs(read: _Reader, plan: str, rows: Subjects) -> None:
+    few = [label for label, runs in rows if len(runs) < 2]
+    if few:
+        raise InputError(
+            f"too few runs for {plan}",
+            where=str(read.path),
+            expected="at least 2 runs (the run column) of every subject",
+            got="one for sub-" + ", sub-".join(few),
+            remedy="leave these subjects out with an exclude_reason, or choose another plan",
+        )
 
 
 def _choosing(
@@ -452,7 +472,9 @@ def _scheme(
     if plan == GIVEN_FOLDS:
         read.get(table, "fold_column", str, ...)
         return Given(_per_person(read, table, "fold_column", rows, study))
-    return LeaveOneOut()
+    if plan == SPLIT_RUNS:
+        return Halves(read.get(table, "halves", str, "odd-even"))
+    return LeaveOneOut(2 if plan == LEAVE_RUN_OUT else 3)
 
 
 def _per_person(

@@ -7,12 +7,13 @@ derives from) and, where it has one, its meeting or its statistic.
 from .groupmaps import GroupMap, LeaveOutMaps
 from .images import SubjectMaps
 from .masks import ChooseMask, GivenMask, SphereMask
-from .procedure import ChooseByFold, FlipTest
+from .procedure import ChooseByFold, ChooseWithin, FlipTest
 from .roi import Extract, FixedRegionTest
 
 __all__ = [
     "ChooseByFold",
     "ChooseMask",
+    "ChooseWithin",
     "Extract",
     "FixedRegionTest",
     "FlipTest",

@@ -11,10 +11,19 @@ from nipype.interfaces.base import File
 
 from .. import progress
 from ..errors import SequesterError
-from ..images import Geometry, check_same_grid, geometry_of, open_image, read_mask, stack, write_map
+from ..images import (
+    Bools,
+    Geometry,
+    check_same_grid,
+    geometry_of,
+    open_image,
+    read_mask,
+    stack,
+    write_map,
+)
 from ..procedure import Prepared, Procedure, held_out_rows
 from ..results import INTERVALS, cross_fitted_result
-from ..rules import Statistic, all_but_held_out
+from ..rules import Statistic, all_but_held_out, chosen_on
 from ..space import Grid
 from .base import InputSpec, SequesterInterface, TraitedSpec, traits, write_json
 
@@ -29,11 +38,7 @@ class _ProcedureInput(InputSpec):
 
 def _prepared(inputs: Any) -> tuple[Prepared, Grid, Geometry]:
     """The procedure on the files of a node."""
-    search = inputs.search_file or None
-    inside = None
-    if search is not None:
-        like = (inputs.in_files[0], geometry_of(open_image(inputs.in_files[0])))
-        inside, _ = read_mask(search, like)
+    inside = _search(inputs, inputs.in_files[0])
     effects, grid, geometry = stack(inputs.in_files, inside)
     names = inputs.row_names or inputs.in_files
     tested = None
@@ -45,6 +50,13 @@ def _prepared(inputs: Any) -> tuple[Prepared, Grid, Geometry]:
         tested, _, _ = stack(inputs.tested_files, inside)
     ready = inputs.procedure.prepare(effects, inputs.labels, grid, names, tested)
     return ready, grid, geometry
+
+
+def _search(inputs: Any, reference: str) -> Bools | None:
+    """The search region on the grid of a map; None for the whole of it."""
+    if not inputs.search_file:
+        return None
+    return read_mask(inputs.search_file, (reference, geometry_of(open_image(reference))))[0]
 
 
 def _per_fold(settings: Any) -> list[tuple[int, ...]]:
@@ -96,6 +108,60 @@ class ChooseByFold(SequesterInterface):
             "fold_names": [fold.name for fold in ready.folds],
             "overlap_file": str(write_map(cwd / "overlap.nii.gz", grid.filled(share), geometry)),
         }
+
+
+class _WithinInput(_ProcedureInput):
+    runs = traits.List(traits.Str, mandatory=True, desc="per row: the run, distinct in a subject")
+
+
+def _own_rows(settings: Any) -> list[tuple[int, ...]]:
+    """Per row: the rows of the same subject that its mask is chosen on."""
+    scheme, labels, runs = settings["procedure"].scheme, settings["labels"], settings["runs"]
+    chosen: dict[int, tuple[int, ...]] = {}
+    for rows in _rows_of(labels).values():
+        for fold in scheme.folds([runs[row] for row in rows]):
+            for held in fold.held_out:
+                chosen[rows[held]] = tuple(rows[i] for i in fold.selection)
+    return [chosen[row] for row in range(len(labels))]
+
+
+def _rows_of(labels: list[str]) -> dict[str, list[int]]:
+    of_label: dict[str, list[int]] = {}
+    for row, label in enumerate(labels):
+        of_label.setdefault(label, []).append(row)
+    return of_label
+
+
+class _WithinOutput(TraitedSpec):
+    row_masks = traits.List(File(exists=True), desc="per row: the subject's mask without that run")
+
+
+class ChooseWithin(SequesterInterface):
+    """Each subject's own masks: for every run, chosen on the subject's other runs alone."""
+
+    input_spec = _WithinInput
+    output_spec = _WithinOutput
+    touch_rules = {
+        "row_masks": chosen_on(
+            "in_files", _own_rows, ("labels", "runs", "procedure"), ("search_file",)
+        )
+    }
+
+    def _work(self, cwd: Path) -> dict[str, Any]:
+        labels, runs = self.inputs.labels, self.inputs.runs
+        files: dict[int, str] = {}
+        for rows in _rows_of(labels).values():
+            paths = [self.inputs.in_files[row] for row in rows]
+            effects, grid, geometry = stack(paths, _search(self.inputs, paths[0]))
+            own = [runs[row] for row in rows]
+            ready = self.inputs.procedure.prepare(effects, own, grid)
+            masks = ready.masks()
+            for fold, mask in zip(ready.folds, masks, strict=True):
+                for held in fold.held_out:
+                    row = rows[held]
+                    path = cwd / f"row{row:05d}.nii.gz"
+                    files[row] = str(write_map(path, grid.filled(mask), geometry))
+        return {"row_masks": [files[row] for row in range(len(labels))]}
 
 
 class _FlipInput(_ProcedureInput):

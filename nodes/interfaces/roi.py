@@ -10,7 +10,7 @@ from nipype.interfaces.base import File, InputMultiObject
 from ..errors import InputError, Refused
 from ..groupmaps import Missing
 from ..images import check_same_grid, read_map
-from ..results import fixed_region_result
+from ..results import fixed_region_result, own_mask_result
 from ..roi import per_person, region_mean
 from ..rules import Meeting, Statistic, only
 from .base import InputSpec, SequesterInterface, TraitedSpec, traits, write_json
@@ -87,6 +87,7 @@ class _FixedInput(InputSpec):
     names = traits.Tuple(
         traits.Str, traits.Str, traits.Str, mandatory=True, desc="roi, plan, search region"
     )
+    own_masks = traits.Bool(False, usedefault=True, desc="each subject has masks of their own")
 
 
 class _RecordOutput(TraitedSpec):
@@ -101,6 +102,7 @@ class FixedRegionTest(SequesterInterface):
     touch_rules = {"record_file": only("values", "coverage", "sizes")}
     statistic = Statistic(
         values="values",
+        labels="labels",
         cure="use the whole-procedure sign flip (FlipTest), which chooses every fold's region "
         "again in each flip",
     )
@@ -108,10 +110,10 @@ class FixedRegionTest(SequesterInterface):
     def _work(self, cwd: Path) -> dict[str, Any]:
         values = self.inputs.values
         labels = self._value("labels") or list(map(str, range(len(values))))
-        result = fixed_region_result(
-            per_person(values, labels),
-            self.inputs.names,
-            self.inputs.sizes[0],
-            self.inputs.coverage,
-        )
+        people, names = per_person(values, labels), self.inputs.names
+        sizes, coverage = self.inputs.sizes, self.inputs.coverage
+        if self.inputs.own_masks:
+            result = own_mask_result(people, names, sizes, coverage)
+        else:
+            result = fixed_region_result(people, names, sizes[0], coverage)
         return {"record_file": write_json(cwd / "result.json", result.as_dict())}
