@@ -47,8 +47,8 @@ class RoiResult:
         Mean Dice over pairs of fold masks, and what it is under flips (noise alone).
     mask_sizes : tuple of int
         Features in each mask.
-    coverage : float
-        Least share of the mask in which a subject has data.
+    coverage : float or None
+        Least share of a mask in which its subject has data; empty masks do not count.
     sentence : str
         For the text of a paper.
     """
@@ -77,7 +77,7 @@ class RoiResult:
     dice: float | None = None
     noise_dice: float | None = None
     mask_sizes: tuple[int, ...] = ()
-    coverage: float = 1.0
+    coverage: float | None = None
     sentence: str = ""
 
     def as_dict(self) -> dict[str, object]:
@@ -193,7 +193,7 @@ def cross_fitted_result(
         dice=_known(outcome.dice),
         noise_dice=_known(test.noise_dice),
         mask_sizes=outcome.sizes,
-        coverage=min(outcome.coverage),
+        coverage=_least(outcome.coverage),
         sentence=sentence,
     )
     return result, outcome, test
@@ -231,7 +231,7 @@ def fixed_region_result(
         null="the population mean in the region is zero",
         dz=test.dz,
         mask_sizes=(size,),
-        coverage=min(coverage),
+        coverage=_least(coverage),
         sentence=(
             f"{roi}: mean {mean} in the a-priori region '{search}' (95 % interval "
             f"{low} to {high}), t({test.df}) = {test.t:.2f}, "
@@ -287,7 +287,7 @@ def own_mask_result(
         n_folds=len(sizes),
         n_empty=empty,
         mask_sizes=tuple(sizes),
-        coverage=min(coverage),
+        coverage=_least(coverage),
         sentence=(
             f"{roi}: mean {mean} in each subject's own mask in the search region '{search}', "
             f"chosen on their other runs ({plan}; 95 % interval {low} to {high}), "
@@ -305,8 +305,23 @@ def exploratory_result(
     rule: str,
     size: int,
     coverage: Sequence[float],
+    *,
+    replaced: bool = False,
 ) -> RoiResult:
-    """A region chosen on the very data it is read from: the value, marked biased, and no more."""
+    """A region chosen on the very data it is read from: the value, marked biased, and no more.
+
+    Parameters
+    ----------
+    values : sequence of float
+    names : (roi, plan, search region)
+    rule : str
+        The mask rule in words.
+    size : int
+        Features in the mask.
+    coverage : sequence of float
+    replaced : bool
+        Whether the rule found nothing and the strongest features stood in.
+    """
     roi, plan, search = names
     estimate = float(np.mean(values)) if size else float("nan")
     said = (
@@ -324,12 +339,18 @@ def exploratory_result(
         target="none: chosen and read on the same data, so inflated by selection",
         biased=True,
         mask_sizes=(size,),
-        coverage=min(coverage),
+        coverage=_least(coverage),
         sentence=(
             f"{roi}: exploratory {said} on the data it is read from; "
             "no interval, no p-value and no error bar can be given."
+            + (" The rule found nothing; the strongest features stood in." if replaced else "")
         ),
     )
+
+
+def _least(coverage: Sequence[float]) -> float | None:
+    """The least coverage of a mask that holds something of its subject."""
+    return min((share for share in coverage if share > 0), default=None)
 
 
 def _known(value: float) -> float | None:

@@ -316,6 +316,14 @@ class Meeting:
             (joined(leaves(element(mask, i))), joined(leaves(element(data, i)))) for i in range(n)
         ]
 
+    def lengths(self, inputs: Inputs) -> tuple[int, int] | None:
+        """How many masks and data there are, when they cannot be paired."""
+        mask, data = inputs.trees.get(self.mask), inputs.trees.get(self.data)
+        if not isinstance(mask, Branch) or not isinstance(data, Branch):
+            return None
+        n_masks, n_data = len(mask.children), len(data.children)
+        return None if n_masks in (1, n_data) else (n_masks, n_data)
+
     @property
     def rule(self) -> Rule:
         """Value i touches mask i and data i, and carries the mark of their meeting."""
@@ -344,8 +352,6 @@ class Statistic:
     ----------
     values : str
         The field with the extracted values.
-    scores : tuple of str
-        Fields with scores, covariates or group labels.
     cross_fitted : bool
         Whether it stays calibrated when the masks and the data take turns.
     labels : str
@@ -357,6 +363,5 @@ class Statistic:
 
     values: str
     labels: str = ""
-    scores: tuple[str, ...] = ()
     cross_fitted: bool = False
     cure: str = ""

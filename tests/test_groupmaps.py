@@ -226,7 +226,7 @@ def test_faults_are_named():
         leave_out_maps(np.ones(3), LeaveOneOut().folds(list("abc")))
     with pytest.raises(ValueError, match="folds do not partition the 3 rows"):
         leave_out_maps(np.ones((3, 2)), LeaveOneOut().folds(list("abcd")))
-    with pytest.raises(ValueError, match="float, not .* int64"):
+    with pytest.raises(ValueError, match=r"float, not .* int64"):
         leave_out_maps(np.ones((3, 2), np.int64), LeaveOneOut().folds(list("abc")))
     with pytest.raises(ValueError, match="effects are float, not int64"):
         group_map(np.ones((3, 2), np.int64))

@@ -12,8 +12,8 @@ WORKFLOWS = Path(sequester.workflows.__file__).parent
 
 # Lowest first; a module imports from modules before it only.
 NODE_LAYERS = [
-    "errors", "progress", "touch", "rules", "space", "regrid", "folds", "flips", "groupmaps", "masks",
-    "roi", "foldnull", "procedure", "results", "images", "interfaces",
+    "errors", "progress", "touch", "rules", "space", "regrid", "folds", "flips", "groupmaps",
+    "masks", "roi", "foldnull", "procedure", "results", "images", "interfaces",
 ]  # fmt: skip
 WORKFLOW_LAYERS = [
     "digests", "study", "ancestry", "judge", "guard", "settings", "plans", "outputs", "run",

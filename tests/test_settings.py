@@ -183,7 +183,8 @@ def test_documented_example_is_read(study, tmp_path):
         (
             HEAD + FOUND.replace("leave-one-subject-out", "leave-some-out"),
             "unknown plan (STUDY, line 7): expected one of leave-one-subject-out, k-fold, "
-            "split-half, given-folds, a-priori, exploratory, got 'leave-some-out'",
+            "split-half, given-folds, leave-one-run-out, split-half-runs, a-priori, "
+            "exploratory, got 'leave-some-out'",
         ),
         (
             HEAD + FOUND.replace("threshold", "hull"),
@@ -361,7 +362,8 @@ def test_rows_left_out_are_recorded(analysed):
         found = {(r["roi"], r["sub"]) for r in csv.DictReader(stream, delimiter="\t")}
     subjects = ("01", "02", "03", "05", "06", "07")
     assert found == {(roi, sub) for roi in ("Ridge", "Vale") for sub in subjects}
-    assert "1 maps left out (reasons in the table)" in run(analysed / "STUDY.toml").stdout
+    said = run(analysed / "STUDY.toml").stdout
+    assert "1 of the selected maps left out (reasons in the table)" in said
 
 
 def test_row_left_out_may_lack_its_file(analysed, tmp_path):

@@ -15,6 +15,7 @@ from __future__ import annotations
 import os
 import re
 from collections.abc import Callable, Iterator, Mapping
+from copy import deepcopy
 from dataclasses import replace
 from functools import partial
 from pathlib import Path
@@ -49,6 +50,9 @@ _SINGLE = (traits.BaseStr, traits.BaseFloat, traits.BaseInt, traits.BaseBool, Ba
 def node_name(node: Any) -> str:
     """The name of a node of the expanded graph, unique in it."""
     return ".".join(part for part in (node._hierarchy, node._id) if part)
+
+
+_GRABBERS = (SelectFiles, DataGrabber)
 
 
 class Ancestry:
@@ -157,25 +161,24 @@ class Ancestry:
         # The interface itself knows its outputs, dynamic ones (Function, Split ...) included.
         found = node.interface._outputs()
         names = list(found.get()) if found is not None else []
-        grabbed = self._grabbed(node)
+        grabbed = self._grabbed(node, inputs)
         if grabbed is not None:
-            return {name: grabbed.get(name) or everything(inputs) for name in names}
+            return grabbed
         if isinstance(node, MapNode):
             return self._mapped(node, inputs, names)
         return {name: _ruled(node.interface, name, inputs) for name in names}
 
-    def _grabbed(self, node: Any) -> dict[str, Tree] | None:
+    def _grabbed(self, node: Any, inputs: Inputs) -> dict[str, Tree] | None:
         """What a file grabber will find, when all its inputs are known before the run."""
-        if type(node.interface) not in (SelectFiles, DataGrabber) or isinstance(node, MapNode):
+        if type(node.interface) not in _GRABBERS or self._graph.in_degree(node):
             return None
-        if self._graph.in_degree(node):
-            return None
+        given = iterations(node, inputs)
         try:
-            found = node.interface._list_outputs()
+            found = _found(node.interface, given)
         except OSError:
             return None  # it will fail when it runs, and say so itself
-        trees = {name: self._literal(value) for name, value in found.items()}
-        return {name: tree for name, tree in trees.items() if tree is not None}
+        names = node.interface._outputs().get()
+        return {name: self._literal(_picked(found, name)) or Leaf(Touch()) for name in names}
 
     def _mapped(self, node: Any, inputs: Inputs, names: list[str]) -> dict[str, Tree]:
         """The outputs of a MapNode: a list with one tree per iteration."""
@@ -262,6 +265,20 @@ def join_slot(node: Any, field: str) -> tuple[str, int] | None:
     """The field and the place in its list that a slot of a JoinNode stands for."""
     match = re.fullmatch(r"(.+)J(\d+)", field) if isinstance(node, JoinNode) else None
     return (match[1], int(match[2])) if match and match[1] in node.joinfield else None
+
+
+def _found(interface: Any, given: Iterations) -> Any:
+    """The outputs of a grabber for each iteration, nested as they are."""
+    if isinstance(given, list):
+        return [_found(interface, one) for one in given]
+    one = deepcopy(interface)
+    for field, value in given.settings.items():
+        setattr(one.inputs, field, value)
+    return one._list_outputs()
+
+
+def _picked(found: Any, name: str) -> Any:
+    return [_picked(one, name) for one in found] if isinstance(found, list) else found.get(name)
 
 
 def meetings_of(interface: Any) -> tuple[Meeting | None, Statistic | None]:

@@ -60,6 +60,8 @@ def _command(function: Callable[..., dict[str, Any]]) -> Callable[..., None]:
         try:
             try:
                 told = function(show=show, as_json=as_json, **arguments)
+            except BrokenPipeError:
+                raise  # whoever read our output has gone; click ends quietly
             except OSError as error:
                 raise InputError(
                     "cannot be read or written",
@@ -158,7 +160,8 @@ def table(
     if not as_json:
         said = f"{len(rows)} maps of {subjects} subjects written to {output}\n"
         click.echo(text if output is None else said, nl=False)
-    return {"maps": len(rows), "subjects": subjects, "output": output and str(output)}
+    told = {"maps": len(rows), "subjects": subjects, "output": output and str(output)}
+    return told if output is not None else {**told, "table": text}
 
 
 @main.command()

@@ -18,6 +18,7 @@ reads behind its back without receiving their paths.
 
 from __future__ import annotations
 
+import os
 from collections.abc import Callable
 from pathlib import Path
 from typing import Any
@@ -26,7 +27,7 @@ import networkx as nx
 from nipype.pipeline.plugins.base import PluginBase
 from nipype.pipeline.plugins.linear import LinearPlugin
 
-from ..nodes.errors import Refused, SequesterError
+from ..nodes.errors import InputError, Refused, SequesterError
 from ..nodes.interfaces.base import SequesterInterface, kept_error
 from ..nodes.interfaces.generic import settings_of
 from ..nodes.rules import joined, leaves
@@ -98,6 +99,7 @@ class GuardPlugin(PluginBase):
         self._refused: list[Finding] = []
         self._errors: list[SequesterError] = []
         self._folders: dict[str, Any] = {}
+        self._states: dict[str, tuple[int, int, int]] = {}
 
     def run(self, graph: Any, config: Any, updatehash: bool = False) -> None:
         """Called by the engine with the expanded graph.
@@ -118,7 +120,12 @@ class GuardPlugin(PluginBase):
             raise GuardRefused(refused, self.study)
         if self.dry:
             return
-        self._folders = {str(Path(n.output_dir()).resolve()): n for n in ancestry.nodes}
+        self._folders = self._working_folders(ancestry)
+        self._states = {}
+        for inputs in ancestry.inputs.values():
+            for path in files_in(list(inputs.settings.values())):
+                if self.study.is_declared(path):
+                    self._unchanged(path)
         for node in ancestry.nodes:
             if isinstance(node.interface, SequesterInterface):
                 # By size and time stamp, another subject's file could pass for this one's.
@@ -135,6 +142,9 @@ class GuardPlugin(PluginBase):
             if what == "start":
                 self._tell("start", node, done, total)
                 self._look(ancestry, graph, node)
+                here = [f for f in self._refused if f.node == node_name(node)]
+                if here:
+                    raise GuardRefused(here, self.study, started=True)
                 return
             done += 1
             self._tell(what, node, done, total)
@@ -153,6 +163,21 @@ class GuardPlugin(PluginBase):
             if self._errors:
                 raise self._errors[0] from error
             raise
+
+    def _working_folders(self, ancestry: Ancestry) -> dict[str, Any]:
+        """Every node by its working folder, which must be its own."""
+        folders: dict[str, Any] = {}
+        for node in ancestry.nodes:
+            folder = str(Path(node.output_dir()).resolve())
+            if folder in folders:
+                raise InputError(
+                    "two nodes share a working folder",
+                    where=folder,
+                    got=f"{node_name(folders[folder])} and {node_name(node)}",
+                    remedy="iterable values must differ in letters and digits, not in signs alone",
+                )
+            folders[folder] = node
+        return folders
 
     def _tell(self, what: str, node: Any, done: int, total: int) -> None:
         if self.listener is not None:
@@ -175,7 +200,8 @@ class GuardPlugin(PluginBase):
                     if touch is None and not self._made_upstream(graph, node, path):
                         touch = self.study.touch_of(path)
                 elif self.study.is_declared(path):
-                    continue  # the graph showed this literal, volume by volume
+                    self._unchanged(path)  # the graph showed this literal, volume by volume
+                    continue
                 else:
                     touch = self.study.recognise(path)
                 if touch is not None and not _within(touch, known):
@@ -186,10 +212,21 @@ class GuardPlugin(PluginBase):
         if not changed:
             return
         ancestry.propagate()
-        self.findings, refused = check(ancestry)
-        if refused:
-            self._refused = refused
-            raise GuardRefused(refused, self.study, started=True)
+        before = set(self._refused)
+        self.findings, self._refused = check(ancestry)
+        # What turns out here stops here, before it is used; other branches go on.
+        new = [finding for finding in self._refused if finding not in before]
+        if new:
+            raise GuardRefused(self._refused, self.study, started=True)
+
+    def _unchanged(self, path: str) -> None:
+        """Refuse a declared file that is no longer the one that was judged."""
+        status = os.stat(path)
+        now = (status.st_ino, status.st_size, status.st_mtime_ns)
+        if self._states.setdefault(os.path.realpath(path), now) != now:
+            error = Refused(f"{self.study.relative(path)} was changed while the workflow ran")
+            self._errors.append(error)
+            raise error
 
     def _made_upstream(self, graph: Any, node: Any, path: str) -> bool:
         """Whether a file lies in the folder of a node upstream.

@@ -85,6 +85,16 @@ class Finding:
         return "\n".join(lines)
 
 
+_DECLARE = (
+    "state where the region comes from: origin in STUDY.toml, or read_table(..., origins=[Origin("
+    "source, files)]); if it was made from this study's data, say so with derived_from"
+)
+
+
+def _subs(table: UnitTable, bits: int) -> set[str]:
+    return {unit.sub for unit in table.units_of(bits)}
+
+
 def judge(ancestry: Ancestry) -> list[Finding]:
     """All findings of a graph, meetings in the order in which they would run."""
     findings: list[Finding] = []
@@ -99,12 +109,28 @@ def judge(ancestry: Ancestry) -> list[Finding]:
 
 def _extractions(ancestry: Ancestry, node: object, meeting: Meeting) -> list[Finding]:
     name = node_name(node)
+    given = list(flat(iterations(node, ancestry.inputs[name])))
     met = [
         (mask, data, bool(meeting.biased and one.settings.get(meeting.biased)))
-        for one in flat(iterations(node, ancestry.inputs[name]))
+        for one in given
         for mask, data in meeting.pairs(one)
     ]
     table = ancestry.study.table
+    unpaired = [lengths for one in given if (lengths := meeting.lengths(one)) is not None]
+    if unpaired:
+        masks, maps = unpaired[0]
+        return [
+            Finding(
+                "extraction",
+                name,
+                None,
+                UNPROVEN,
+                "",
+                False,
+                reason=f"{masks} masks do not pair up with {maps} maps",
+                cure="give one label and one map for every row that takes part",
+            )
+        ]
     return [
         _meet(table, name, i if len(met) > 1 else None, mask, data, biased=biased)
         for i, (mask, data, biased) in enumerate(met)
@@ -143,10 +169,17 @@ def _meet(
             "leave the tested subject out of the selection, or choose each subject's own "
             "mask from their own other runs"
         )
+        if not _subs(table, of_mask) & _subs(table, of_data):
+            alike = ", ".join(sorted(choosers & tested))
+            reason = (
+                "the mask was chosen on somebody who counts as the same subject as the tested "
+                f"one (exchange {alike})"
+            )
+            cure = "give both the same label, so that they are held out together"
     elif unknown:
         verdict = UNPROVEN
         reason = f"nobody has declared what {', '.join(unknown[:3])} derives from"
-        cure = "add the file to the study table, or state its origin in the study file"
+        cure = _DECLARE if mask.touch.unknown else "add the file to the study table"
     elif not of_data:
         verdict, reason = UNPROVEN, "the graph shows no file of the study table in the tested data"
         cure = (
@@ -155,7 +188,7 @@ def _meet(
         )
     elif not mask.touch.values and not mask.touch.origins:
         verdict, reason = UNPROVEN, "nothing says where the mask comes from"
-        cure = "state its origin in the study file"
+        cure = _DECLARE
     elif choosers & tested:
         level, reason = "run", "the mask was chosen on other runs of this one subject"
     else:
@@ -233,7 +266,7 @@ def _statistic(ancestry: Ancestry, node: object, statistic: Statistic) -> Findin
     elif whole.touch.unknown:
         unknown = ", ".join(sorted(whole.touch.unknown)[:3])
         verdict, reason = UNPROVEN, f"nobody has declared what {unknown} derives from"
-        cure = "state its origin in the study file"
+        cure = _DECLARE
     elif not marks:
         verdict, reason = UNPROVEN, "nothing says in which region its values were read"
         cure = "read them with Extract, so that the region and the data are judged"

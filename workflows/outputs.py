@@ -51,7 +51,7 @@ TEST_COLUMNS = {
     "plan": "How the region was chosen.",
     "rule": "The mask rule in words.",
     "search": "The search region that the null hypothesis covers.",
-    "n_subjects": "Subjects tested.",
+    "n_subjects": "Independent subjects tested: rows that share an exchange value are one.",
     "estimate": "Mean of the values, in the units of the effect maps.",
     "target": "What the estimate estimates.",
     "biased": "true for exploratory values: no interval, no p, no error bar.",
@@ -68,13 +68,13 @@ TEST_COLUMNS = {
     "dz": "Mean of the values over their standard deviation.",
     "n_flips": "Sign flips made.",
     "n_folds": "Folds.",
-    "n_empty": "Folds in which the rule found nothing, counted as 0.",
+    "n_empty": "Folds in which the rule found nothing and the value counts as 0.",
     "n_replaced": "Folds in which the rule found nothing and the strongest features stood in.",
     "dice": "Mean Dice overlap of pairs of fold masks.",
     "noise_dice": "The same under sign flips: what noise alone gives.",
-    "coverage": "Least coverage over subjects.",
+    "coverage": "Least coverage over subjects; empty masks do not count.",
     "level": "What independence of mask and data is shown about: subject or run.",
-    "verdict": "The guard's verdict: apart, or leak (exploratory).",
+    "verdict": "The guard's verdict: apart, or leak (allowed for exploratory values alone).",
     "sentence": "The result in a sentence.",
 }
 TOUCH_COLUMNS = {
@@ -218,9 +218,12 @@ def write_all(
     uri = "bids:study:{}".format
     for output in outputs:
         files = list(output.masks)
+        search = [output.roi.region.mask] if output.roi.region.mask else []
         for (name, source), selection in zip(files, _sources(settings, output), strict=True):
             shutil.copyfile(source, masks / name)
-            _sidecar(masks / name, {"Type": "ROI", "Sources": [uri(p) for p in selection]})
+            # A 4-D file is one source, however many of its volumes are used.
+            sources = dict.fromkeys([*selection, *search])
+            _sidecar(masks / name, {"Type": "ROI", "Sources": [uri(p) for p in sources]})
         if output.overlap is not None:
             name = f"label-{output.roi.name}_desc-foldoverlap_probseg.nii.gz"
             shutil.copyfile(output.overlap, masks / name)
@@ -274,7 +277,7 @@ def _sources(settings: Settings, output: RoiOutput) -> Iterator[list[str]]:
         elif output.roi.plan == EXPLORATORY:
             yield [row.path for row in every]
         else:
-            yield [output.roi.region.mask] if output.roi.region.mask else []
+            yield []
 
 
 def _sidecar(path: Path, content: dict[str, Any]) -> None:
@@ -374,6 +377,7 @@ def _manifest(stage: Path, settings: Settings) -> None:
         {
             "study": settings.name,
             "settings_sha256": settings.digest,
+            "table_sha256": digest(settings.table_path),
             "seed": settings.seed,
             "versions": {
                 "sequester": version("sequester"),

@@ -86,6 +86,17 @@ def verify(settings: Settings) -> None:
                 remedy="one of the two rows of the study table names the wrong file",
             )
     assert first is not None, "settings hold at least one row"
+    maps = {key[0]: name for key, name in seen.items()}
+    for origin in settings.study.origins:
+        for name in origin.files:
+            path_of_origin = settings.root / name
+            if path_of_origin.is_file() and digest(path_of_origin) in maps:
+                raise InputError(
+                    "a declared origin is one of the study's own maps",
+                    where=str(path_of_origin),
+                    got=f"the same bytes as {maps[digest(path_of_origin)]}",
+                    remedy="give the file its row in the study table, or the region another file",
+                )
     for roi in settings.rois:
         if roi.region.mask:
             read_mask(settings.root / roi.region.mask, first)
@@ -220,7 +231,10 @@ def _collect(roi: Roi, settings: Settings, nodes: dict[str, Any]) -> RoiOutput:
     else:
         assert roi.procedure is not None, "only the exploratory plan goes without a test"
         rule = roi.procedure.describe()
-        record = exploratory_result(values, roi.names, rule, sizes[0], coverage).as_dict()
+        replaced = bool(nodes[f"{prefix}.choose"].result.outputs.replaced)
+        record = exploratory_result(
+            values, roi.names, rule, sizes[0], coverage, replaced=replaced
+        ).as_dict()
     image = open_image(masks[0][1])
     record["voxel_mm3"] = float(abs(np.linalg.det(image.affine[:3, :3])))
     return RoiOutput(roi, record, values, coverage, sizes, masks, mask_of_row, rows, overlap)

@@ -137,6 +137,7 @@ class Settings:
     rois : tuple of Roi
     digest : str
         SHA-256 of the file.
+    table_path : Path
     """
 
     name: str
@@ -149,6 +150,7 @@ class Settings:
     left_out: tuple[Row, ...]
     rois: tuple[Roi, ...]
     digest: str
+    table_path: Path
 
     @property
     def used(self) -> tuple[Row, ...]:
@@ -284,6 +286,7 @@ def read_settings(path: str | Path) -> Settings:
         left_out=left_out,
         rois=rois,
         digest=digest_text(text),
+        table_path=root / head["table"],
     )
 
 

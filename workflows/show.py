@@ -86,10 +86,22 @@ def print_findings(findings: Sequence[Finding]) -> None:
 def print_tests(settings: Settings, tests: Sequence[Mapping[str, Any]]) -> None:
     """The results of a run: a line per region, then its sentence."""
     left = len(settings.left_out)
-    note = f", {left} maps left out (reasons in the table)" if left else ""
-    click.echo(f"{settings.name}: {len(settings.rows)} subjects{note}\n")
+    note = f", {left} of the selected maps left out (reasons in the table)" if left else ""
+    people = {runs[0].person for _, runs in settings.rows}
+    alike = "" if len(people) == len(settings.rows) else f", {len(people)} of them independent"
+    click.echo(f"{settings.name}: {len(settings.rows)} subjects{alike}{note}\n")
     rows = [
-        ["roi", "plan", "estimate", "95 % interval", "dz", "p", "p Holm", "empty", "Dice (noise)"]
+        [
+            "roi",
+            "plan",
+            "estimate",
+            "95 % interval",
+            "dz",
+            "p",
+            "p Holm",
+            "found in",
+            "Dice (noise)",
+        ]
     ]
     for row in tests:
         head = [row["roi"], row["plan"]]
@@ -101,11 +113,14 @@ def print_tests(settings: Settings, tests: Sequence[Mapping[str, Any]]) -> None:
         interval = f"{low} to {high} ({row['interval_kind']})"
         folds, dice = "-", "-"
         if row["n_folds"] is not None:
-            folds = f"{row['n_empty'] + row['n_replaced']}/{row['n_folds']}"
+            found = row["n_folds"] - row["n_empty"] - row["n_replaced"]
+            folds = f"{found}/{row['n_folds']} folds"
             dice = f"{_two_digits(row['dice'])} ({_two_digits(row['noise_dice'])})"
         numbers = [_two_digits(row["dz"]), p_value(row["p"]), p_value(row["p_holm"])]
         rows.append([*head, mean, interval, *numbers, folds, dice])
     print_table(rows)
+    if any(row["p"] is not None and row["p_holm"] is None for row in tests):
+        click.echo("\np Holm is not given: the search regions overlap (or one is the whole map).")
     for row in tests:
         click.echo("\n" + textwrap.fill(row["sentence"], 96))
 

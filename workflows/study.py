@@ -150,11 +150,10 @@ class Study:
             )
             for origin in self.origins
         }
-        self._by_path: dict[str, list[tuple[int | None, int]]] = {}
+        self._by_path: dict[str, list[Row]] = {}
         for row in self.rows:
-            entry = (row.volume, self.table.bits([row.unit]))
             for key in self._keys(row.path):
-                self._by_path.setdefault(key, []).append(entry)
+                self._by_path.setdefault(key, []).append(row)
         self._origin_of: dict[str, Origin] = {}
         for origin in self.origins:
             for name in origin.files:
@@ -181,12 +180,14 @@ class Study:
 
     def _touch_of_key(self, key: str, volume: int | None) -> Touch | None:
         if key in self._by_path:
-            bits = 0
-            for of_volume, unit in self._by_path[key]:
+            bits, unknown = 0, []
+            for row in self._by_path[key]:
                 # Without a volume number, a 4-D file touches all its units.
-                if volume is None or of_volume is None or of_volume == volume:
-                    bits |= unit
-            return Touch(values=bits)
+                if volume is None or row.volume is None or row.volume == volume:
+                    bits |= self.table.bits([row.unit])
+                    if row.exclude_reason:
+                        unknown.append(f"{row.name} (left out of the study: {row.exclude_reason})")
+            return Touch(values=bits, unknown=frozenset(unknown))
         if key in self._origin_of:
             return self._touch_of_origin(self._origin_of[key])
         return None
@@ -243,13 +244,27 @@ class Study:
         touches = [self._touch_of_key(k, None) for k in self._contents[size].get(digest(path), [])]
         return union(touch for touch in touches if touch is not None) if touches else None
 
+    def label_of(self, path: str | Path, volume: int | None = None) -> str:
+        """Who a map of the table counts as: its ``exchange`` value, or its ``sub``.
+
+        Raises
+        ------
+        InputError
+            When the table has no such map.
+        """
+        for key in self._keys(str(path)):
+            for row in self._by_path.get(key, []):
+                if volume is None or row.volume == volume:
+                    return row.person
+        raise InputError("no such map in the study table", where=str(path))
+
     @property
     def paths(self) -> list[str]:
         """Distinct paths of the rows that are not left out."""
         return list(dict.fromkeys(row.path for row in self.rows if not row.exclude_reason))
 
 
-def read_table(path: str | Path, root: Path | None = None) -> Study:
+def read_table(path: str | Path, root: Path | None = None, origins: Sequence[Origin] = ()) -> Study:
     """Read a study table.
 
     Parameters
@@ -257,6 +272,8 @@ def read_table(path: str | Path, root: Path | None = None) -> Study:
     path : path of a TSV file
     root : Path, optional
         What the table's paths are relative to; default: the table's folder.
+    origins : sequence of Origin, optional
+        Declared sources of files and coordinates from outside the study.
 
     Raises
     ------
@@ -306,7 +323,7 @@ def read_table(path: str | Path, root: Path | None = None) -> Study:
                 got=row.name,
                 remedy="each map of a subject needs a file (or volume) of its own",
             )
-    return Study(root or path.parent, rows, columns=header)
+    return Study(root or path.parent, rows, tuple(origins), header)
 
 
 def _ragged(path: Path, number: int, expected: int, got: int) -> Row:

@@ -77,15 +77,20 @@ def rows_from(
 
 
 def _images_below(folder: Path) -> Iterator[Path]:
-    """NIfTI files in a tree, links followed, each folder once."""
-    seen = set()
-    for root, folders, names in os.walk(folder, followlinks=True):
-        seen.add(os.path.realpath(root))
-        # A link back up would repeat the tree without end.
-        folders[:] = [f for f in folders if os.path.realpath(os.path.join(root, f)) not in seen]
-        for name in names:
-            if name.endswith(_ENDINGS) and not name.startswith("."):
-                yield Path(root) / name
+    """NIfTI files in a tree, links followed, each folder once and by its own path first."""
+    seen: set[str] = set()
+    waiting = [str(folder)]
+    while waiting:
+        for root, folders, names in os.walk(waiting.pop(0), followlinks=False):
+            if os.path.realpath(root) in seen:  # a link back up would repeat the tree
+                folders.clear()
+                continue
+            seen.add(os.path.realpath(root))
+            links = [os.path.join(root, f) for f in sorted(folders)]
+            waiting += [path for path in links if os.path.islink(path)]
+            for name in names:
+                if name.endswith(_ENDINGS) and not name.startswith("."):
+                    yield Path(root) / name
 
 
 def _rows(path: Path, fields: dict[str, str], suffix: str, base: Path) -> list[Row]:

@@ -22,6 +22,10 @@ class _MaskOutput(TraitedSpec):
     mask_file = File(exists=True, desc="the region, 0 and 1")
 
 
+class _ChooseOutput(_MaskOutput):
+    replaced = traits.Bool(desc="the rule found nothing, and the strongest features stand in")
+
+
 class _ChooseInput(InputSpec):
     in_file = File(exists=True, mandatory=True, desc="group map")
     rule = traits.Instance(object, mandatory=True, desc="Threshold, Cluster or Strongest")
@@ -36,8 +40,11 @@ class ChooseMask(SequesterInterface):
     """The region a rule reads off one group map, inside a search region."""
 
     input_spec = _ChooseInput
-    output_spec = _MaskOutput
-    touch_rules = {"mask_file": only("in_file", "search_file", "count_file")}
+    output_spec = _ChooseOutput
+    touch_rules = {
+        "mask_file": only("in_file", "search_file", "count_file"),
+        "replaced": only("in_file", "search_file", "count_file"),
+    }
 
     def _work(self, cwd: Path) -> dict[str, Any]:
         rule = self.inputs.rule
@@ -53,7 +60,8 @@ class ChooseMask(SequesterInterface):
         n = None if count is None else read_map(count)[0][inside]
         grid = Grid(geometry.shape, geometry.affine, inside)
         chosen = choose(values[inside], rule, grid, n)
-        if not chosen.any() and self.inputs.on_empty == "strongest":
+        replaced = not chosen.any() and self.inputs.on_empty == "strongest"
+        if replaced:
             chosen = strongest(values[inside], self.inputs.k)
         if not chosen.any() and self.inputs.on_empty == "stop":
             raise EmptyFoldError(
@@ -62,7 +70,8 @@ class ChooseMask(SequesterInterface):
                 expected=rule.describe(),
                 remedy="relax the rule, or report that nothing was found",
             )
-        return {"mask_file": str(write_map(cwd / "mask.nii.gz", grid.filled(chosen), geometry))}
+        path = write_map(cwd / "mask.nii.gz", grid.filled(chosen), geometry)
+        return {"mask_file": str(path), "replaced": replaced}
 
 
 def _placed(inputs: Inputs) -> Tree:

@@ -5,6 +5,7 @@ from __future__ import annotations
 from pathlib import Path
 from typing import Any
 
+import numpy as np
 from nipype.interfaces.base import File, InputMultiObject
 
 from ..errors import InputError, Refused
@@ -71,7 +72,7 @@ class Extract(SequesterInterface):
                 mask, geometry = read_map(masks[i])
             data, grid = read_map(path)
             check_same_grid((masks[min(i, len(masks) - 1)], geometry), [(path, grid)])
-            inside = data[mask != 0]
+            inside = data[np.isfinite(mask) & (mask != 0)]
             mean, share = region_mean(inside, missing.present(inside))
             values.append(mean)
             coverage.append(share)
@@ -103,8 +104,8 @@ class FixedRegionTest(SequesterInterface):
     statistic = Statistic(
         values="values",
         labels="labels",
-        cure="use the whole-procedure sign flip (FlipTest), which chooses every fold's region "
-        "again in each flip",
+        cure="use the whole-procedure sign flip, which chooses every fold's region again in each "
+        'flip (FlipTest; in STUDY.toml the default: leave test = "t" out)',
     )
 
     def _work(self, cwd: Path) -> dict[str, Any]:

@@ -14,9 +14,12 @@ __version__ = "0.1.0"
 _STARTERS = {
     "GuardPlugin": "sequester.workflows.guard",
     "read_table": "sequester.workflows.study",
+    "Origin": "sequester.workflows.study",
     "read_settings": "sequester.workflows.settings",
     "run_study": "sequester.workflows.run",
     "leave_one_subject_out": "sequester.workflows.plans",
+    "cross_fitted": "sequester.workflows.plans",
+    "own_masks": "sequester.workflows.plans",
     "a_priori": "sequester.workflows.plans",
     "exploratory": "sequester.workflows.plans",
     "Cluster": "sequester.nodes.masks",
