@@ -152,6 +152,8 @@ def run_study(
     InputError
     """
     verify(settings)
+    if work is not None and work.exists() and not work.is_dir():
+        raise InputError("--work is a file", where=str(work), remedy="name a folder")
     guard = GuardPlugin(settings.study, listener)
     with claimed(settings.output) as stage:
         engine = work if work is not None else stage.with_name(f".{settings.output.name}.work")

@@ -5,6 +5,7 @@ Every key is checked; an unknown one is an error that names its line and the kno
 
 from __future__ import annotations
 
+import math
 import re
 import tomllib
 from collections.abc import Iterable
@@ -315,7 +316,8 @@ def _point(read: _Reader, table: dict[str, Any], key: str) -> tuple[float, float
     value = read.get(table, key, list, None)
     if value is None:
         return None
-    if len(value) != 3 or not all(isinstance(x, int | float) for x in value):
+    numbers = [x for x in value if isinstance(x, int | float) and not isinstance(x, bool)]
+    if len(value) != 3 or len(numbers) != 3 or not all(map(math.isfinite, numbers)):
         raise InputError(
             f"{key} is no coordinate",
             where=read.where(key),
@@ -342,6 +344,10 @@ def _region(read: _Reader, table: dict[str, Any], key: str) -> Region:
             remedy='state where it comes from, with a source: origin = "..."',
         )
     radius = float(read.get(table, "radius", (int, float), 0 if mask else ...))
+    if not mask and not 0 < radius < math.inf:
+        raise InputError(
+            "radius out of range", where=read.where("radius"), expected="> 0 mm", got=f"{radius:g}"
+        )
     return Region(origin.strip(), mask, centre, radius)
 
 
@@ -405,14 +411,20 @@ def _roi(
     region = Region() if place is None else _region(read, place, key)
     procedure = None
     if not given:
-        procedure = Procedure(
-            rule=_rule(read, read.get(table, "rule", dict, ...)),
-            scheme=_scheme(read, table, plan, seed, rows, study),
-            tail=read.one_of(table, "tail", TAILS, "positive"),
-            on_empty=read.one_of(table, "on_empty", ON_EMPTY, "empty"),
-            k=read.get(table, "k", int, 0),
-            missing=missing,
-        )
+        try:
+            procedure = Procedure(
+                rule=_rule(read, read.get(table, "rule", dict, ...)),
+                scheme=_scheme(read, table, plan, seed, rows, study),
+                tail=read.one_of(table, "tail", TAILS, "positive"),
+                on_empty=read.one_of(table, "on_empty", ON_EMPTY, "empty"),
+                k=read.get(table, "k", int, 0),
+                missing=missing,
+            )
+        except InputError as error:
+            # The numerics know no file; here is where it was asked for.
+            fields = dict(error.fields)
+            fields["where"] = fields["where"] or f"{read.where('rule')}, roi {name}"
+            raise InputError(fields.pop("what"), **fields) from error
     if plan in OWN_MASKS:
         _enough_runs(read, plan, rows)
     test = read.one_of(table, "test", TESTS[plan], TESTS[plan][0])

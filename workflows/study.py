@@ -287,7 +287,8 @@ def read_table(path: str | Path, root: Path | None = None, origins: Sequence[Ori
         )
     try:
         with path.open(newline="", encoding="utf-8-sig") as stream:
-            lines = list(csv.reader(stream, delimiter="\t"))
+            # BIDS tables know no quoting: a quotation mark is a character.
+            lines = list(csv.reader(stream, delimiter="\t", quoting=csv.QUOTE_NONE))
     except (OSError, UnicodeDecodeError, csv.Error) as error:
         raise InputError(
             "unreadable study table", where=str(path), expected="a TSV in UTF-8", got=str(error)
@@ -337,6 +338,8 @@ def _ragged(path: Path, number: int, expected: int, got: int) -> Row:
 
 def _row(cells: dict[str, str], where: str, line: int) -> Row:
     value = {name: "" if cell.strip() in _BLANK else cell.strip() for name, cell in cells.items()}
+    if "\0" in value["path"]:
+        raise InputError("path with a NUL character", where=where)
     if not value["path"] or not value["sub"]:
         raise InputError("row without a path or a sub", where=where, got=str(cells))
     volume = value.get("volume", "")
