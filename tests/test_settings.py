@@ -203,7 +203,7 @@ def test_documented_example_is_read(study, tmp_path):
         (HEAD + FOUND.replace("p = 0.01", "hight = 3"), "unknown key 'hight' in rule (STUDY, line"),
         (
             HEAD + FOUND + 'on_empty = "strongest"\n',
-            "on_empty = \"strongest\" and k go together: got on_empty 'strongest', k 0",
+            'on_empty = "strongest" and k go together (STUDY, line 8, roi Ridge): got on_empty',
         ),
         (HEAD + FOUND + 'on_empty = "smallest"\n', "unknown on_empty (STUDY, line 9)"),
         (HEAD + FOUND + 'tail = "both"\n', "unknown tail (STUDY, line 9)"),
