@@ -69,9 +69,12 @@ class Missing:
             present &= effects != 0
         return present
 
-    def least(self, n_rows: int) -> int:
-        """The number of rows that must have data for a feature to count (2 at the least)."""
-        return max(2, int(np.ceil(self.min_fraction * n_rows - 1e-9)))
+    def least(self, n_rows: int, kind: str = "t") -> int:
+        """The number of rows that must have data for a feature to count.
+
+        Two at the least for a t; one row has a mean.
+        """
+        return max(1 if kind == "mean" else 2, int(np.ceil(self.min_fraction * n_rows - 1e-9)))
 
 
 def filled(effects: Floats, missing: Missing) -> tuple[Floats, Bools | None]:
@@ -217,7 +220,7 @@ def leave_out_maps(
     missing = missing or Missing()
     _check_stack(effects, folds)
     out = np.empty((len(folds), effects.shape[1]), dtype=effects.dtype)
-    least = np.array([[missing.least(len(fold.selection))] for fold in folds])
+    least = np.array([[missing.least(len(fold.selection), kind)] for fold in folds])
     for start in range(0, effects.shape[1], _BLOCK):
         block = slice(start, start + _BLOCK)
         x, present = filled(effects[:, block], missing)
@@ -244,7 +247,7 @@ def group_map(effects: Floats, missing: Missing | None = None, kind: str = "t") 
         raise ValueError(f"effects are float, not {effects.dtype}")
     missing = missing or Missing()
     out = np.empty(effects.shape[1], effects.dtype)
-    least = missing.least(len(effects))
+    least = missing.least(len(effects), kind)
     for start in range(0, effects.shape[1], _BLOCK):
         x, present = filled(effects[:, start : start + _BLOCK].astype(np.float64), missing)
         n: Floats = np.asarray(

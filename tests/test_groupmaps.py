@@ -210,11 +210,13 @@ def test_two_features_by_hand(checks):
     np.testing.assert_allclose(made, case["t"], rtol=1e-12)
 
 
-def test_a_selection_of_one_row_has_no_t_and_too_little_data_for_a_mean():
+def test_a_selection_of_one_row_has_no_t_and_is_its_own_mean():
     effects, folds = stack(np.float64, n=2), KFold(2).folds(["a", "b"])
     assert np.isnan(group_map(effects[:1])).all()
-    for kind in ("t", "mean"):
-        assert np.isnan(leave_out_maps(effects, folds, kind=kind)).all()
+    np.testing.assert_array_equal(group_map(effects[:1], kind="mean"), effects[0])
+    assert np.isnan(leave_out_maps(effects, folds)).all()
+    means = leave_out_maps(effects, folds, kind="mean")
+    np.testing.assert_array_equal(means, [effects[fold.selection[0]] for fold in folds])
 
 
 def test_faults_are_named():
