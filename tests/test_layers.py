@@ -16,8 +16,8 @@ NODE_LAYERS = [
     "masks", "roi", "foldnull", "procedure", "results", "images", "interfaces",
 ]  # fmt: skip
 WORKFLOW_LAYERS = [
-    "digests", "study", "ancestry", "judge", "guard", "settings", "plans", "outputs", "run",
-    "table", "demo", "show", "cli",
+    "digests", "study", "ancestry", "judge", "engines", "guard", "settings", "plans",
+    "outputs", "run", "table", "demo", "show", "cli",
 ]  # fmt: skip
 
 

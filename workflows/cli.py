@@ -102,11 +102,20 @@ def _print_json(told: dict[str, Any]) -> None:
     type=click.Path(path_type=Path),
     help="Keep the engine's working folder here, so that a second run is faster.",
 )
+@click.option(
+    "--processes",
+    type=click.IntRange(1),
+    default=1,
+    show_default=True,
+    help="How many steps may run at once; the results have the same bytes.",
+)
 @_command
-def run(study_toml: Path, work: Path | None, show: Progress, as_json: bool) -> dict[str, Any]:
+def run(
+    study_toml: Path, work: Path | None, processes: int, show: Progress, as_json: bool
+) -> dict[str, Any]:
     """Analyse a study and write its output folder."""
     settings = read_settings(study_toml)
-    result = run_study(settings, show.node, work)
+    result = run_study(settings, show.node, work, processes)
     show.clear()
     if not as_json:
         print_tests(settings, result.tests)

@@ -25,7 +25,6 @@ from typing import Any
 
 import networkx as nx
 from nipype.pipeline.plugins.base import PluginBase
-from nipype.pipeline.plugins.linear import LinearPlugin
 
 from ..nodes.errors import InputError, Refused, SequesterError
 from ..nodes.interfaces.base import SequesterInterface, kept_error
@@ -33,6 +32,7 @@ from ..nodes.interfaces.generic import settings_of
 from ..nodes.rules import joined, leaves
 from ..nodes.touch import Touch
 from .ancestry import Ancestry, files_in, join_slot, meetings_of, node_name
+from .engines import engine
 from .judge import Finding, judge
 from .study import Study
 
@@ -73,12 +73,14 @@ def check(ancestry: Ancestry) -> tuple[list[Finding], list[Finding]]:
 
 
 class GuardPlugin(PluginBase):
-    """Judges, hands out clearances, and runs the workflow node by node.
+    """Judges, hands out clearances, and runs the workflow.
 
     Parameters
     ----------
     study : Study
         Which file is which data unit.
+    processes : int
+        1 runs one node after another (Linear), more run that many at once (MultiProc).
     listener : callable, optional
         Told ``(what, node, done, total)`` as nodes start and end.
     dry : bool
@@ -91,10 +93,15 @@ class GuardPlugin(PluginBase):
     """
 
     def __init__(
-        self, study: Study, listener: Listener | None = None, *, dry: bool = False
+        self,
+        study: Study,
+        listener: Listener | None = None,
+        *,
+        processes: int = 1,
+        dry: bool = False,
     ) -> None:
         super().__init__(plugin_args={})
-        self.study, self.listener, self.dry = study, listener, dry
+        self.study, self.listener, self.processes, self.dry = study, listener, processes, dry
         self.findings: list[Finding] = []
         self._refused: list[Finding] = []
         self._errors: list[SequesterError] = []
@@ -135,27 +142,27 @@ class GuardPlugin(PluginBase):
                 # A MapNode hands its elements what its interface holds.
                 for inputs in (node.inputs, node.interface.inputs):
                     inputs.trait_set(clearance="cleared")
-        total, done = len(ancestry.nodes), 0
+        names, done = {node_name(node) for node in ancestry.nodes}, 0
 
-        def status(node: Any, what: str) -> None:
+        def before(node: Any) -> None:
+            self._tell("start", node, done, len(names))
+            self._look(ancestry, graph, node)
+            here = [f for f in self._refused if f.node == node_name(node)]
+            if here:
+                raise GuardRefused(here, self.study, started=True)
+
+        def after(node: Any, what: str) -> None:
             nonlocal done
-            if what == "start":
-                self._tell("start", node, done, total)
-                self._look(ancestry, graph, node)
-                here = [f for f in self._refused if f.node == node_name(node)]
-                if here:
-                    raise GuardRefused(here, self.study, started=True)
-                return
-            done += 1
-            self._tell(what, node, done, total)
+            if node_name(node) in names:  # not an element of a MapNode
+                done += 1
+                self._tell(what, node, done, len(names))
             if what == "exception":
                 error = kept_error(Path(node.output_dir()))
                 if error is not None:
                     self._errors.append(error)
 
-        linear = LinearPlugin(plugin_args={"status_callback": status})
         try:
-            linear.run(graph, config, updatehash=False)
+            engine(self.processes, before, after).run(graph, config, updatehash=False)
         except Exception as error:
             # Our own error says more than the engine's wrapping of it.
             if self._refused:

@@ -380,6 +380,7 @@ def study_workflow(settings: Settings, base_dir: Path) -> Workflow:
         "create_report": "false",
         "stop_on_first_crash": "true",
         "remove_unnecessary_outputs": "false",
+        "poll_sleep_duration": "0.05",  # the default of 2 s would be most of a run
     }
     root = settings.root
     maps = _subject_maps(settings, settings.rows, "maps")

@@ -132,7 +132,10 @@ def check_study(settings: Settings) -> list[Finding]:
 
 
 def run_study(
-    settings: Settings, listener: Listener | None = None, work: Path | None = None
+    settings: Settings,
+    listener: Listener | None = None,
+    work: Path | None = None,
+    processes: int = 1,
 ) -> RunResult:
     """Run a study under the guard and write its output folder.
 
@@ -144,6 +147,8 @@ def run_study(
     work : Path, optional
         Keep the engine's working folder here, for a faster second run. By default it lies
         beside the output and is removed.
+    processes : int
+        How many nodes may run at once; the output has the same bytes.
 
     Raises
     ------
@@ -154,7 +159,7 @@ def run_study(
     verify(settings)
     if work is not None and work.exists() and not work.is_dir():
         raise InputError("--work is a file", where=str(work), remedy="name a folder")
-    guard = GuardPlugin(settings.study, listener)
+    guard = GuardPlugin(settings.study, listener, processes=processes)
     with claimed(settings.output) as stage:
         engine = work if work is not None else stage.with_name(f".{settings.output.name}.work")
         if work is None:

@@ -1,0 +1,210 @@
+"""The guard on several processes: the same verdicts, the same bytes, nothing left hanging."""
+
+import signal
+from pathlib import Path
+
+import numpy as np
+import pytest
+from click.testing import CliRunner
+from nipype import Function, MapNode, Node, Workflow
+from sequester.nodes.errors import InputError
+from sequester.nodes.images import Geometry, write_map
+from sequester.nodes.interfaces import Extract, GivenMask, SubjectMaps
+from sequester.workflows.cli import main
+from sequester.workflows.guard import GuardPlugin, GuardRefused
+from sequester.workflows.study import Origin, Study, read_table
+
+SHAPE = (5, 5, 4)
+GRID = Geometry(SHAPE, ((2, 0, 0, 0), (0, 2, 0, 0), (0, 0, 2, 0), (0, 0, 0, 1)))
+LABELS = [f"{i:02d}" for i in range(6)]
+
+
+@pytest.fixture(autouse=True)
+def time_limit():
+    """A pool whose worker dies would wait for ever; a test must not."""
+
+    def late(signum, frame):
+        raise TimeoutError("still running after two minutes")
+
+    before = signal.signal(signal.SIGALRM, late)
+    signal.alarm(120)
+    yield
+    signal.alarm(0)
+    signal.signal(signal.SIGALRM, before)
+
+
+@pytest.fixture
+def folder(tmp_path):
+    rng = np.random.default_rng(5)
+    lines = ["path\tsub\tsuffix"]
+    for label in LABELS:
+        write_map(tmp_path / f"{label}.nii", rng.standard_normal(SHAPE).astype(np.float32), GRID)
+        lines.append(f"{label}.nii\t{label}\tbold")
+    write_map(tmp_path / "moss.nii", np.arange(100).reshape(SHAPE) < 40, GRID)
+    (tmp_path / "table.tsv").write_text("\n".join(lines) + "\n")
+    return tmp_path
+
+
+@pytest.fixture
+def study(folder) -> Study:
+    return read_table(folder / "table.tsv", origins=[Origin("a chart of moss", ("moss.nii",))])
+
+
+def workflow(folder: Path) -> Workflow:
+    made = Workflow("w", base_dir=str(folder / "work"))
+    made.config["execution"] = {
+        "crashdump_dir": str(folder / "work"),
+        "create_report": "false",
+        "poll_sleep_duration": "0.02",
+    }
+    return made
+
+
+def function(body: str, **inputs) -> Function:
+    made = Function(input_names=list(inputs), output_names=["out"])
+    made.inputs.function_str = body
+    for name, value in inputs.items():
+        setattr(made.inputs, name, value)
+    return made
+
+
+def result_of(folder: Path, name: str) -> bool:
+    return bool(list((folder / "work" / "w" / name).glob("result_*")))
+
+
+STUDY = """[study]
+name = "moss"
+table = "table.tsv"
+[[roi]]
+name = "Turn"
+plan = "leave-one-subject-out"
+rule = { kind = "cluster", p = 0.2 }
+flips = 63
+[[roi]]
+name = "Chart"
+plan = "a-priori"
+region = { mask = "moss.nii", origin = "a chart of moss" }
+[[roi]]
+name = "Look"
+plan = "exploratory"
+rule = { kind = "strongest", k = 4 }
+"""
+
+
+def test_the_same_bytes_on_one_process_and_on_two(folder):
+    (folder / "STUDY.toml").write_text(STUDY)
+    found = []
+    for processes in ("1", "2"):
+        done = CliRunner().invoke(
+            main, ["run", str(folder / "STUDY.toml"), "-q", "--processes", processes]
+        )
+        assert done.exit_code == 0, done.output
+        results = folder / "results"
+        found.append(
+            {p.relative_to(results): p.read_bytes() for p in results.rglob("*") if p.is_file()}
+        )
+    assert found[0] == found[1]
+    assert len(found[0]) > 20
+
+
+@pytest.mark.parametrize("processes", [1, 2])
+def test_a_refusal_while_running_stops_what_depends_on_it_alone(folder, study, processes):
+    """A node hands on the path of a tested map as a mask; another branch has nothing to do
+    with it, and ends."""
+    maps = [str(folder / f"{label}.nii") for label in LABELS]
+    made = workflow(folder)
+    hard = function(f"def hard(x):\n    return {maps[0]!r}\n", x=str(folder / "moss.nii"))
+    read = Node(Extract(in_files=[maps[0]], labels=LABELS[:1]), "read")
+    made.connect(Node(hard, "hard"), "out", read, "mask_files")
+    after = Node(function("def after(x):\n    return x\n", x=None), "after")
+    made.connect(read, "values", after, "x")
+    slow = "def slow(x):\n    import time\n    time.sleep(0.3)\n    return x\n"
+    other, last = (Node(function(slow, x=1), "other"), Node(function(slow, x=None), "last"))
+    made.connect(other, "out", last, "x")
+    with pytest.raises(GuardRefused, match="refused while running") as told:
+        made.run(plugin=GuardPlugin(study, processes=processes))
+    assert told.value.started
+    assert [f.node for f in told.value.findings] == ["w.read"]
+    assert [result_of(folder, n) for n in ("hard", "read", "after", "other", "last")] == [
+        True,
+        False,
+        False,
+        True,
+        True,
+    ]
+
+
+@pytest.mark.parametrize("processes", [1, 2])
+def test_a_map_node_is_looked_at_before_it_is_split(folder, study, processes):
+    maps = [str(folder / f"{label}.nii") for label in LABELS]
+    made = workflow(folder)
+    hard = function(f"def hard(x):\n    return [{maps[0]!r}, {maps[1]!r}]\n", x=1)
+    each = MapNode(function("def each(x):\n    return x\n", x=None), iterfield=["x"], name="each")
+    read = Node(Extract(in_files=maps[:2], labels=LABELS[:2]), "read")
+    made.connect(Node(hard, "hard"), "out", each, "x")
+    mask = Node(GivenMask(in_file=str(folder / "moss.nii"), reference=maps[0]), "mask")
+    join = Node(function("def join(x, y):\n    return y\n", x=None, y=None), "join")
+    made.connect([(each, join, [("out", "x")]), (mask, join, [("mask_file", "y")])])
+    made.connect(join, "out", read, "mask_files")
+    with pytest.raises(GuardRefused, match="refused while running"):
+        made.run(plugin=GuardPlugin(study, processes=processes))
+    assert not (folder / "work" / "w" / "each" / "mapflow").exists()
+    assert not result_of(folder, "read")
+
+
+@pytest.mark.parametrize("processes", [1, 2])
+def test_an_error_of_our_nodes_arrives_as_itself(folder, study, processes):
+    (folder / "03.nii").write_bytes(b"no image")
+    made = workflow(folder)
+    maps = [str(folder / f"{label}.nii") for label in LABELS]
+    made.add_nodes([Node(SubjectMaps(in_files=maps, labels=LABELS), "maps")])
+    with pytest.raises(InputError, match=r"unreadable image \(.*03\.nii\)"):
+        made.run(plugin=GuardPlugin(study, processes=processes))
+
+
+def test_a_leak_is_refused_before_any_process_starts(folder, study):
+    made = workflow(folder)
+    maps = [str(folder / f"{label}.nii") for label in LABELS]
+    trace = folder / "trace"
+    body = f"def mark(x):\n    open({str(trace)!r}, 'w').close()\n    return x\n"
+    mark = Node(function(body, x=maps[0]), "mark")
+    read = Node(Extract(in_files=[maps[0]], labels=LABELS[:1]), "read")
+    made.connect(mark, "out", read, "mask_files")
+    with pytest.raises(GuardRefused, match="refused before anything ran: 1 finding"):
+        made.run(plugin=GuardPlugin(study, processes=2))
+    assert not trace.exists()
+
+
+def test_a_declared_file_that_changes_while_the_workflow_runs_is_refused(folder, study):
+    maps = [str(folder / f"{label}.nii") for label in LABELS]
+    moss = folder / "moss.nii"
+    made = workflow(folder)
+    body = (
+        "def swap(x):\n    import shutil\n"
+        f"    shutil.copyfile({maps[0]!r}, {str(moss)!r})\n    return x\n"
+    )
+    swap = Node(function(body, x=maps[:2]), "swap")
+    read = Node(Extract(mask_files=[str(moss)], labels=LABELS[:2]), "read")
+    made.connect(swap, "out", read, "in_files")
+    with pytest.raises(Exception, match=r"moss\.nii was changed while the workflow ran"):
+        made.run(plugin=GuardPlugin(study))
+    assert not result_of(folder, "read")
+
+
+def test_a_row_left_out_of_the_study_is_not_read(folder):
+    text = (folder / "table.tsv").read_text().splitlines()
+    rows = [f"{text[0]}\texclude_reason", *(f"{line}\tn/a" for line in text[1:-1])]
+    (folder / "table.tsv").write_text("\n".join([*rows, f"{text[-1]}\tmoved"]) + "\n")
+    study = read_table(folder / "table.tsv", origins=[Origin("a chart of moss", ("moss.nii",))])
+    maps = [str(folder / f"{label}.nii") for label in LABELS]
+    made = workflow(folder)
+    read = Extract(in_files=maps, labels=LABELS, mask_files=[str(folder / "moss.nii")])
+    made.add_nodes([Node(read, "read")])
+    with pytest.raises(GuardRefused, match=r"05\.nii \(left out of the study: moved\)"):
+        made.run(plugin=GuardPlugin(study))
+
+
+def test_who_a_map_counts_as(folder, study):
+    assert study.label_of(folder / "03.nii") == study.label_of("03.nii") == "03"
+    with pytest.raises(InputError, match="no such map in the study table"):
+        study.label_of("moss.nii")
