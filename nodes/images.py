@@ -237,21 +237,25 @@ def stack(
     geometry : Geometry
         Of the files.
     """
-    rows: list[Floats] = []
+    effects: Floats | None = None
     first: tuple[str, Geometry] | None = None
-    for path in paths:
+    for i, path in enumerate(paths):
         data, geometry = read_map(path)
         if first is None:
             first = (str(path), geometry)
             if inside is not None and inside.shape != geometry.shape:
                 raise ValueError(f"mask of shape {inside.shape} for maps of {geometry.shape}")
         check_same_grid(first, [(str(path), geometry)])
-        rows.append(data.ravel() if inside is None else data[inside])
-    if first is None:
+        row = data.ravel() if inside is None else data[inside]
+        if effects is None:
+            # Filled in place: a large study is held once, not once more while it is stacked.
+            effects = np.empty((len(paths), row.size), row.dtype)
+        elif row.dtype.itemsize > effects.dtype.itemsize:
+            effects = effects.astype(row.dtype)
+        effects[i] = row
+    if first is None or effects is None:
         raise InputError("no effect map", remedy="check the study table and the rows it leaves out")
-    dtype = np.result_type(*rows)
-    grid = Grid(first[1].shape, first[1].affine, inside)
-    return np.stack(rows).astype(dtype, copy=False), grid, first[1]
+    return effects, Grid(first[1].shape, first[1].affine, inside), first[1]
 
 
 def write_map(path: str | Path, data: npt.NDArray[Any], geometry: Geometry) -> Path:

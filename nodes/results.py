@@ -9,12 +9,13 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 from dataclasses import asdict, dataclass
+from typing import Any
 
 import numpy as np
 
 from .errors import InputError
 from .procedure import FlipTest, Outcome, Prepared
-from .roi import Interval, flip_interval, fold_interval, jackknife_interval, one_sample_t
+from .roi import Interval, TTest, flip_interval, fold_interval, jackknife_interval, one_sample_t
 
 INTERVALS = ("flips", "jackknife", "folds")
 
@@ -211,25 +212,17 @@ def fixed_region_result(
     ("Student's t, two-sided", 0.0742)
     """
     test = one_sample_t(np.asarray(values))
-    roi, plan, search = names
+    roi, _, search = names
     interval = test.interval
     mean, low, high = estimate_texts(test.mean, interval.low, interval.high)
-    return RoiResult(
-        roi=roi,
-        plan=plan,
+    return _of_t(
+        test,
+        names,
+        len(values),
         rule="the region as given",
-        search=search,
-        n_subjects=len(values),
-        estimate=test.mean,
         target="population mean in this region",
-        biased=False,
-        interval=interval,
-        t=test.t,
-        p=test.p,
         p_kind="Student's t, two-sided",
-        sided="two-sided",
         null="the population mean in the region is zero",
-        dz=test.dz,
         mask_sizes=(size,),
         coverage=_least(coverage),
         sentence=(
@@ -268,22 +261,14 @@ def own_mask_result(
     mean, low, high = estimate_texts(test.mean, interval.low, interval.high)
     empty = sum(size == 0 for size in sizes)
     note = f" {empty} of {len(sizes)} masks are empty; their value counts as 0." if empty else ""
-    return RoiResult(
-        roi=roi,
-        plan=plan,
+    return _of_t(
+        test,
+        names,
+        len(values),
         rule="each subject's own mask, from their other runs",
-        search=search,
-        n_subjects=len(values),
-        estimate=test.mean,
         target="mean over these subjects of the effect in their own masks",
-        biased=False,
-        interval=interval,
-        t=test.t,
-        p=test.p,
         p_kind="Student's t across subjects, two-sided",
-        sided="two-sided",
         null="no subject has a replicable effect in the search region",
-        dz=test.dz,
         n_folds=len(sizes),
         n_empty=empty,
         mask_sizes=tuple(sizes),
@@ -296,6 +281,25 @@ def own_mask_result(
             "It speaks of a population mean only if the effects that choose and those that are "
             f"tested are uncorrelated across subjects.{note}"
         ),
+    )
+
+
+def _of_t(test: TTest, names: tuple[str, str, str], n: int, **more: Any) -> RoiResult:
+    """What every record of a two-sided t-test holds."""
+    roi, plan, search = names
+    return RoiResult(
+        roi=roi,
+        plan=plan,
+        search=search,
+        n_subjects=n,
+        estimate=test.mean,
+        biased=False,
+        interval=test.interval,
+        t=test.t,
+        p=test.p,
+        sided="two-sided",
+        dz=test.dz,
+        **more,
     )
 
 

@@ -101,7 +101,10 @@ class ChooseByFold(SequesterInterface):
             for k, mask in enumerate(masks)
         ]
         of_row = {row: files[k] for k, fold in enumerate(ready.folds) for row in fold.held_out}
-        share = np.stack(masks).mean(axis=0, dtype=np.float32)
+        share = np.zeros(grid.n_features, np.float32)
+        for mask in masks:
+            share += mask
+        share /= len(masks)
         return {
             "mask_files": files,
             "row_masks": [of_row[row] for row in sorted(of_row)],
