@@ -21,6 +21,7 @@ from nibabel.filebasedimages import ImageFileError
 from nibabel.spatialimages import HeaderDataError
 
 from .errors import InputError
+from .regrid import covered_fraction
 from .space import Grid
 
 Floats = npt.NDArray[np.floating]
@@ -200,21 +201,43 @@ def check_same_grid(
             )
 
 
-def read_mask(path: str | Path, like: tuple[str, Geometry] | None = None) -> tuple[Bools, Geometry]:
+def read_mask(
+    path: str | Path, like: tuple[str, Geometry] | None = None, *, regrid: bool = False
+) -> tuple[Bools, Geometry]:
     """A mask file as booleans: every voxel that is finite and not zero.
+
+    Parameters
+    ----------
+    path : path of a NIfTI file
+    like : (name, Geometry), optional
+        The grid that the mask must be on.
+    regrid : bool
+        Bring a mask on another grid to that of `like`: voxels covered by half or more.
 
     Raises
     ------
     InputError
-        When it is empty, or not on the grid of `like`.
+        When it is empty (also after regridding), or not on the grid of `like`.
     """
     data, geometry = read_map(path)
-    if like is not None:
-        check_same_grid(like, [(str(path), geometry)])
     mask: Bools = np.isfinite(data) & (data != 0)
     if not mask.any():
         raise InputError("empty mask", where=str(path), remedy="give a mask with some voxels")
-    return mask, geometry
+    if like is None or geometry.same_as(like[1]):
+        return mask, geometry
+    if not regrid:
+        check_same_grid(like, [(str(path), geometry)])
+    target = Grid(like[1].shape, like[1].affine)
+    brought: Bools = covered_fraction(mask, Grid(geometry.shape, geometry.affine), target) >= 0.5
+    if not brought.any():
+        raise InputError(
+            "no voxel is covered by half of the mask",
+            where=str(path),
+            expected=f"a mask that meets the grid of {like[0]}: {like[1]}",
+            got=str(geometry),
+            remedy="check that both are in the same space (mm)",
+        )
+    return brought.reshape(like[1].shape), like[1]
 
 
 def stack(
@@ -249,7 +272,7 @@ def stack(
         row = data.ravel() if inside is None else data[inside]
         if effects is None:
             # Filled in place: a large study is held once, not once more while it is stacked.
-            effects = np.empty((len(paths), row.size), row.dtype)
+            effects = np.zeros((len(paths), row.size), row.dtype)
         elif row.dtype.itemsize > effects.dtype.itemsize:
             effects = effects.astype(row.dtype)
         effects[i] = row

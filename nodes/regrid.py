@@ -74,10 +74,15 @@ def covered_fraction(mask: Bools, source: Grid, target: Grid) -> Floats:
     steps = [(np.arange(n) + 0.5) / n - 0.5 for n in points]
     inside = np.stack(np.meshgrid(*steps, indexing="ij"), axis=-1).reshape(-1, 3)
     shifts = inside @ target.affine[:3, :3].T
-    fraction = np.zeros(target.n_features)
     centres = target.coordinates()
-    for start in range(0, target.n_features, _BLOCK):
-        block = slice(start, start + _BLOCK)
+    # Most of the target is far from the mask: only what is within a voxel's reach is looked at.
+    where = source.coordinates()[mask.ravel()[source.voxels]]
+    reach = np.abs(source.affine[:3, :3]).sum(axis=1) + np.abs(target.affine[:3, :3]).sum(axis=1)
+    inside_box = (centres >= where.min(axis=0) - reach) & (centres <= where.max(axis=0) + reach)
+    near = np.flatnonzero(inside_box.all(axis=1))
+    fraction = np.zeros(target.n_features)
+    for start in range(0, len(near), _BLOCK):
+        block = near[start : start + _BLOCK]
         for shift in shifts:
             fraction[block] += _looked_up(mask, source, centres[block] + shift)
     return fraction / len(shifts)

@@ -64,7 +64,7 @@ def region_node(region: Region, name: str, reference: str, root: Path) -> Node |
     """The node that makes a given region's mask; None for the whole map."""
     if region.mask:
         path = str(root / region.mask)
-        return node(GivenMask(), name, in_file=path, reference=reference)
+        return node(GivenMask(), name, in_file=path, reference=reference, regrid=region.regrid)
     if region.centre is not None:
         return node(
             SphereMask(),

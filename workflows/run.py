@@ -99,7 +99,7 @@ def verify(settings: Settings) -> None:
                 )
     for roi in settings.rois:
         if roi.region.mask:
-            read_mask(settings.root / roi.region.mask, first)
+            read_mask(settings.root / roi.region.mask, first, regrid=roi.region.regrid)
 
 
 @contextmanager
@@ -272,7 +272,8 @@ def _searched(output: RoiOutput, settings: Settings) -> Any:
     """The voxels a region's null covers; None for the whole map."""
     region = output.roi.region
     if region.mask:
-        return read_mask(settings.root / region.mask)[0]
+        like = (str(output.masks[0][1]), geometry_of(open_image(output.masks[0][1])))
+        return read_mask(settings.root / region.mask, like, regrid=region.regrid)[0]
     if region.centre is None:
         return None
     geometry = geometry_of(open_image(output.masks[0][1]))

@@ -46,7 +46,7 @@ _KEYS = {
     "origin": {"source", "files", "derived_from"},
     "roi": {"name", "plan", "test"},
     "rule": {"kind", "height", "p", "connectivity", "min_size", "pick", "near", "k", "map"},
-    "region": {"mask", "centre", "radius", "origin", "derived_from"},
+    "region": {"mask", "regrid", "centre", "radius", "origin", "derived_from"},
 }
 
 
@@ -80,12 +80,15 @@ class Region:
         Path relative to the study; "" for a sphere or the whole map.
     centre : (3,) float or None, mm
     radius : float, mm
+    regrid : bool
+        Bring a mask on another grid to that of the maps.
     """
 
     origin: str = ""
     mask: str = ""
     centre: tuple[float, float, float] | None = None
     radius: float = 0.0
+    regrid: bool = False
 
     def describe(self) -> str:
         """In words, for sentences about the result."""
@@ -348,7 +351,8 @@ def _region(read: _Reader, table: dict[str, Any], key: str) -> Region:
         raise InputError(
             "radius out of range", where=read.where("radius"), expected="> 0 mm", got=f"{radius:g}"
         )
-    return Region(origin.strip(), mask, centre, radius)
+    regrid = read.get(table, "regrid", bool, False)
+    return Region(origin.strip(), mask, centre, radius, regrid)
 
 
 def _rule(read: _Reader, table: dict[str, Any]) -> MaskRule:

@@ -116,10 +116,13 @@ class SphereMask(SequesterInterface):
 class _GivenInput(InputSpec):
     in_file = File(exists=True, mandatory=True, desc="mask from outside, with a declared origin")
     reference = File(exists=True, mandatory=True, desc="image that gives the grid")
+    regrid = traits.Bool(
+        False, usedefault=True, desc="bring a mask on another grid to that of the reference"
+    )
 
 
 class GivenMask(SequesterInterface):
-    """A mask from outside, checked against the data's grid and made 0 and 1."""
+    """A mask from outside, on the data's grid (or brought to it) and made 0 and 1."""
 
     input_spec = _GivenInput
     output_spec = _MaskOutput
@@ -127,5 +130,5 @@ class GivenMask(SequesterInterface):
 
     def _work(self, cwd: Path) -> dict[str, Any]:
         like = (self.inputs.reference, geometry_of(open_image(self.inputs.reference)))
-        mask, geometry = read_mask(self.inputs.in_file, like)
+        mask, geometry = read_mask(self.inputs.in_file, like, regrid=self.inputs.regrid)
         return {"mask_file": str(write_map(cwd / "mask.nii.gz", mask, geometry))}
