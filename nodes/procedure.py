@@ -188,6 +188,8 @@ class Procedure:
         space: Space,
         names: Sequence[str] | None = None,
         tested: Floats | None = None,
+        *,
+        copy: bool = True,
     ) -> Prepared:
         """Make the procedure ready on one stack.
 
@@ -204,8 +206,10 @@ class Procedure:
         tested : (n_rows, n_features) float, optional
             The maps that are read and tested, when they are not those that choose (another
             contrast of the same rows, held out and flipped together with it).
+        copy : bool
+            Without a copy the stack must not change afterwards; it saves the memory of one.
         """
-        return Prepared(self, effects, labels, space, names, tested)
+        return Prepared(self, effects, labels, space, names, tested, copy=copy)
 
 
 @dataclass(frozen=True)
@@ -248,6 +252,8 @@ class Prepared:
         space: Space,
         names: Sequence[str] | None = None,
         tested: Floats | None = None,
+        *,
+        copy: bool = True,
     ) -> None:
         if effects.shape != (len(labels), space.n_features):
             raise ValueError(
@@ -269,13 +275,13 @@ class Prepared:
         for k, fold in enumerate(self._folds):
             self._fold_of_row[list(fold.held_out)] = k
         self._sign = -1.0 if procedure.tail == "negative" else 1.0
-        x, self._present = filled(effects[self._order], procedure.missing)
+        x, self._present = filled(_sorted(effects, self._order, copy), procedure.missing)
         self._x = -x if self._sign < 0 else x
         self._read_x, self._read_present = self._x, self._present
         if tested is not None:
             if tested.shape != effects.shape:
                 raise ValueError(f"tested maps of {tested.shape} for effects of {effects.shape}")
-            read, self._read_present = filled(tested[self._order], procedure.missing)
+            read, self._read_present = filled(_sorted(tested, self._order, copy), procedure.missing)
             self._read_x = -read if self._sign < 0 else read
         rule = procedure.rule
         self._hood: Neighbourhood | None = None
@@ -604,6 +610,11 @@ class Prepared:
         if present is not None:
             stack[~present[back]] = np.nan
         return stack
+
+
+def _sorted(stack: Floats, order: Ints, copy: bool) -> Floats:
+    """The rows in another order; the stack itself, if wished and if it is in it already."""
+    return stack if not copy and (order == np.arange(len(order))).all() else stack[order]
 
 
 def held_out_rows(scheme: Scheme, labels: Sequence[str]) -> list[tuple[int, ...]]:

@@ -578,3 +578,15 @@ def test_too_few_flips_too_few_subjects_and_stacks_of_another_shape_are_refused(
         plan.prepare(made.effects[:, 1:], made.labels, made.grid)
     with pytest.raises(ValueError, match="effects have shape"):
         plan.prepare(made.effects[1:], made.labels, made.grid)
+
+
+def test_without_a_copy_the_result_is_the_same_and_the_stack_untouched():
+    effects = np.random.default_rng(3).standard_normal((8, 40))
+    before = effects.copy()
+    procedure = Procedure(Threshold(p=0.1), tail="negative")
+    space, labels = Grid((40, 1, 1), np.eye(4)), list("abcdefgh")
+    with_copy = procedure.prepare(effects, labels, space)
+    without = procedure.prepare(effects, labels, space, copy=False)
+    assert without.outcome() == with_copy.outcome()
+    assert without.flip_test(63) == with_copy.flip_test(63)
+    np.testing.assert_array_equal(effects, before)

@@ -48,7 +48,8 @@ def _prepared(inputs: Any) -> tuple[Prepared, Grid, Geometry]:
             [(path, geometry_of(open_image(path))) for path in inputs.tested_files],
         )
         tested, _, _ = stack(inputs.tested_files, inside)
-    ready = inputs.procedure.prepare(effects, inputs.labels, grid, names, tested)
+    # The stack was read for this alone: no copy, which a large study has no room for.
+    ready = inputs.procedure.prepare(effects, inputs.labels, grid, names, tested, copy=False)
     return ready, grid, geometry
 
 
