@@ -23,7 +23,7 @@ import numpy.typing as npt
 from .errors import EmptyFoldError, InputError
 from .flips import Signs, all_signs, random_signs
 from .foldnull import mean_dice
-from .folds import Fold, LeaveOneOut, Scheme
+from .folds import LeaveOneOut, Scheme
 from .groupmaps import (
     Missing,
     bound_on_sum,
@@ -620,6 +620,3 @@ def _sorted(stack: Floats, order: Ints, copy: bool) -> Floats:
 def held_out_rows(scheme: Scheme, labels: Sequence[str]) -> list[tuple[int, ...]]:
     """The rows each fold holds out: the touch rule of every node that leaves some out."""
     return [fold.held_out for fold in scheme.folds(labels)]
-
-
-__all__ = ["FlipTest", "Fold", "Outcome", "Prepared", "Procedure", "held_out_rows"]

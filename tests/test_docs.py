@@ -1,5 +1,6 @@
 """What the documents show runs, and names what exists."""
 
+import json
 import re
 import runpy
 import tomllib
@@ -21,6 +22,15 @@ def test_the_own_workflow_runs_and_is_cleared(tmp_path, capfd):
     assert record["p"] == 1 / 200
     assert record["n_subjects"] == demo.N_SUBJECTS
     assert "guard: apart (subject)" in capfd.readouterr().out
+
+
+def test_the_snippet_of_the_readme_runs_as_printed(tmp_path, monkeypatch):
+    demo.write_demo(tmp_path)
+    monkeypatch.chdir(tmp_path)
+    (code,) = re.findall(r"```python\n(.*?)```", (DOCS.parent / "README.md").read_text(), re.S)
+    exec(compile(code, "README.md", "exec"), {})
+    (record,) = (tmp_path / "work" / "mine" / "arbor" / "test").glob("result.json")
+    assert json.loads(record.read_text())["p"] == 1 / 1000
 
 
 def study_file() -> str:

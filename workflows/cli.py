@@ -7,6 +7,7 @@ import os
 import sys
 import textwrap
 from collections.abc import Callable
+from functools import wraps
 from pathlib import Path
 from typing import Any
 
@@ -54,6 +55,7 @@ def _command(function: Callable[..., dict[str, Any]]) -> Callable[..., None]:
 
     @click.option("--quiet", "-q", is_flag=True, help="No progress.")
     @click.option("--json", "as_json", is_flag=True, help="Print one JSON object.")
+    @wraps(function)  # brings the command's own options along
     def wrapped(*, quiet: bool, as_json: bool, **arguments: Any) -> None:
         show = Progress(quiet=quiet or as_json)
         progress.listen(show.work)
@@ -83,11 +85,6 @@ def _command(function: Callable[..., dict[str, Any]]) -> Callable[..., None]:
             show.clear()
             progress.listen(None)
 
-    wrapped.__name__, wrapped.__doc__ = function.__name__, function.__doc__
-    wrapped.__click_params__ = [  # type: ignore[attr-defined]  # click's own place for options
-        *getattr(wrapped, "__click_params__", []),
-        *getattr(function, "__click_params__", []),
-    ]
     return wrapped
 
 

@@ -258,11 +258,6 @@ class Study:
                     return row.person
         raise InputError("no such map in the study table", where=str(path))
 
-    @property
-    def paths(self) -> list[str]:
-        """Distinct paths of the rows that are not left out."""
-        return list(dict.fromkeys(row.path for row in self.rows if not row.exclude_reason))
-
 
 def read_table(path: str | Path, root: Path | None = None, origins: Sequence[Origin] = ()) -> Study:
     """Read a study table.

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import math
+from abc import ABC, abstractmethod
 from importlib.metadata import version
 from pathlib import Path
 from typing import Any, ClassVar
@@ -29,7 +30,7 @@ class InputSpec(BaseInterfaceInputSpec):
     release = traits.Str(version("sequester"), usedefault=True, desc="sequester's version")
 
 
-class SequesterInterface(SimpleInterface):
+class SequesterInterface(SimpleInterface, ABC):
     """Base of our interfaces.
 
     A subclass gives ``_work()``: load, one call, save, and a dict of the outputs.
@@ -50,8 +51,9 @@ class SequesterInterface(SimpleInterface):
     meeting: ClassVar[Meeting | None] = None
     statistic: ClassVar[Statistic | None] = None
 
+    @abstractmethod
     def _work(self, cwd: Path) -> dict[str, Any]:
-        raise NotImplementedError  # SimpleInterface has no abstract methods to lean on
+        """Load, one call, save; the outputs by name."""
 
     def _run_interface(self, runtime: Any) -> Any:
         cwd = Path(runtime.cwd)
@@ -59,9 +61,9 @@ class SequesterInterface(SimpleInterface):
             self._results = self._work(cwd)
         except SequesterError as error:
             # The engine turns exceptions into text; this keeps the error itself for the caller.
-            note = {"kind": type(error).__name__, "message": str(error)}
+            note: dict[str, Any] = {"kind": type(error).__name__, "message": str(error)}
             if isinstance(error, InputError):
-                note["fields"] = error.fields  # type: ignore[assignment]  # JSON either way
+                note["fields"] = error.fields
             try:
                 write_bytes(cwd / ERROR_FILE, json.dumps(note).encode())
             except OSError:
