@@ -1,9 +1,10 @@
-"""Rules that turn a group map into a region: threshold, cluster, strongest; and given shapes.
+"""Rules that turn a group map into a region: by height, by rank, by the peak; and given shapes.
 
 A rule that starts from a threshold gives the critical value of t for a number of rows
 (`critical`), and then keeps some of the features above it (`keep`). Rules see only the
 features above the threshold, as members of a list of candidates, so that the same code serves
-one map, all folds of a scheme, and every flip of a test.
+one map, all folds of a scheme, and every flip of a test. The other rules rank the features
+(`Strongest`) or start from the first of them (`PeakSphere`).
 """
 
 from __future__ import annotations
@@ -16,6 +17,7 @@ import numpy.typing as npt
 from scipy import stats
 from scipy.sparse import coo_array
 from scipy.sparse.csgraph import connected_components
+from scipy.spatial import KDTree
 
 from .errors import InputError
 from .space import Space
@@ -25,6 +27,9 @@ Ints = npt.NDArray[np.integer]
 Bools = npt.NDArray[np.bool_]
 
 PICKS = ("largest", "peak", "nearest", "all")
+MAP_KINDS = ("t", "mean")
+# A nanometre of slack: an affine's rounding must not decide about voxels on a sphere's surface.
+_SURFACE_MM = 1e-6
 
 
 class MaskRule(Protocol):
@@ -160,29 +165,109 @@ class Cluster(_Forming):
 
 @dataclass(frozen=True)
 class Strongest:
-    """The k features with the highest value of the map; ties go to the lowest number.
+    """The features with the highest value of the map; ties go to the lowest number.
 
     Parameters
     ----------
     k : int
-        How many.
+        How many; or else
     map_kind : {"t", "mean"}
         Which group map ranks them.
+    fraction : float
+        Which share of the features that have a value in the map, rounded up.
+
+    Examples
+    --------
+    >>> Strongest(fraction=0.05).number(1990)
+    100
     """
 
-    k: int
+    k: int = 0
     map_kind: str = "t"
+    fraction: float = 0.0
 
     def __post_init__(self) -> None:
-        if self.k < 1:
+        if (self.k == 0) == (self.fraction == 0):
+            raise InputError(
+                "the strongest features need exactly one of k and fraction",
+                got=f"k {self.k}, fraction {self.fraction}",
+            )
+        if self.k < 0:
             raise InputError("k out of range", expected=">= 1", got=str(self.k))
-        if self.map_kind not in ("t", "mean"):
-            raise InputError("unknown map", expected="t or mean", got=str(self.map_kind))
+        if self.fraction and not 0 < self.fraction < 1:
+            raise InputError(
+                "fraction out of range", expected="0 < fraction < 1", got=str(self.fraction)
+            )
+        _check_kind(self.map_kind)
+
+    def number(self, usable: int) -> int:
+        """How many features it keeps of a map in which so many have a value."""
+        # 7 % of 100 features are 7, though 0.07 x 100 is a little more in binary.
+        return self.k or max(1, int(np.ceil(self.fraction * usable - 1e-9)))
 
     def describe(self, tail: str = "positive") -> str:
         """The rule in words."""
-        which = "lowest" if tail == "negative" else "highest"
-        return f"the {self.k} features with the {which} group {self.map_kind}"
+        many = f"{self.k} features" if self.k else f"{100 * self.fraction:g} % of the features"
+        return f"the {many} with the {_extreme(tail)} group {self.map_kind}"
+
+
+@dataclass(frozen=True)
+class PeakSphere:
+    """The features around the highest value of the map, by the distance of their centres.
+
+    A feature without data on the selection side cannot be the peak; it may lie in the sphere.
+
+    Parameters
+    ----------
+    radius : float, mm
+    map_kind : {"t", "mean"}
+        Which group map has the peak; a tie goes to the lowest feature number.
+    """
+
+    radius: float
+    map_kind: str = "t"
+
+    def __post_init__(self) -> None:
+        if not 0 < self.radius < np.inf:
+            raise InputError("radius out of range", expected="> 0 mm", got=str(self.radius))
+        _check_kind(self.map_kind)
+
+    def describe(self, tail: str = "positive") -> str:
+        """The rule in words."""
+        return (
+            f"the features within {self.radius:g} mm of the one with the {_extreme(tail)} "
+            f"group {self.map_kind}"
+        )
+
+
+def _check_kind(kind: str) -> None:
+    if kind not in MAP_KINDS:
+        raise InputError("unknown map", expected=" or ".join(MAP_KINDS), got=str(kind))
+
+
+def _extreme(tail: str) -> str:
+    return "lowest" if tail == "negative" else "highest"
+
+
+class Spheres:
+    """The features within a radius of any feature, found again and again.
+
+    Parameters
+    ----------
+    space : Space
+    radius : float, mm
+    """
+
+    def __init__(self, space: Space, radius: float) -> None:
+        self._mm, self._radius = space.coordinates(), radius
+        self._tree = KDTree(self._mm)
+
+    def around(self, feature: int) -> Ints:
+        """Their numbers, ascending; the feature is among them."""
+        near = self._tree.query_ball_point(
+            self._mm[feature], self._radius + _SURFACE_MM, return_sorted=True
+        )
+        return np.asarray(near, dtype=np.intp)
 
 
 class Neighbourhood:
@@ -315,9 +400,13 @@ def strongest(values: Floats, k: int) -> Bools:
     [False, False, True, True, False]
     """
     usable = np.flatnonzero(~np.isnan(values))
-    order = usable[np.argsort(-values[usable], kind="stable")]
     out = np.zeros(len(values), bool)
-    out[order[:k]] = True
+    if len(usable) <= k:
+        out[usable] = True
+        return out
+    limit = np.partition(values[usable], len(usable) - k)[len(usable) - k]
+    out[values > limit] = True
+    out[np.flatnonzero(values == limit)[: k - np.count_nonzero(out)]] = True
     return out
 
 
@@ -327,8 +416,8 @@ def choose(values: Floats, rule: MaskRule, space: Space, n: npt.ArrayLike | None
     Parameters
     ----------
     values : (n_features,) float
-        t map (or mean map, for `Strongest`); NaN where undefined.
-    rule : Threshold, Cluster or Strongest
+        t map (or mean map, for rules with ``map_kind = "mean"``); NaN where undefined.
+    rule : Threshold, Cluster, Strongest or PeakSphere
     space : Space
     n : int or (n_features,) int
         Rows with data, when the threshold is given as p.
@@ -348,7 +437,12 @@ def choose(values: Floats, rule: MaskRule, space: Space, n: npt.ArrayLike | None
     [False, False, False, True, False]
     """
     if isinstance(rule, Strongest):
-        return strongest(values, rule.k)
+        return strongest(values, rule.number(int(np.count_nonzero(~np.isnan(values)))))
+    if isinstance(rule, PeakSphere):
+        around = np.zeros(len(values), bool)
+        for peak in np.flatnonzero(strongest(values, 1)).tolist():
+            around[Spheres(space, rule.radius).around(peak)] = True
+        return around
     if not isinstance(rule, _Forming):
         raise TypeError(f"no mask rule: {rule!r}")
     if n is None and rule.p is not None:
@@ -397,8 +491,7 @@ def sphere(space: Space, centre: tuple[float, float, float], radius: float) -> B
     if not radius > 0:
         raise InputError("radius out of range", expected="> 0 mm", got=str(radius))
     apart = np.linalg.norm(space.coordinates() - np.asarray(centre), axis=1)
-    # A nanometre of slack: an affine's rounding must not decide about voxels on the surface.
-    inside: Bools = apart <= radius + 1e-6
+    inside: Bools = apart <= radius + _SURFACE_MM
     if not inside.any():
         raise InputError(
             "sphere holds no feature",

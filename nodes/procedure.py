@@ -10,11 +10,14 @@ bound that the fold's sum must exceed is computed once. A flip is one float32 ma
 for the sums over all rows, one comparison of each feature with a bound that is low enough for
 every fold and every rounding, and float64 work on the few features left: there the folds' own
 sums are formed as `groupmaps.without_each` forms them, without the held-out rows, and decide.
+A rule that ranks features has no such bound beforehand. The folds' exact maps at some features
+that look strong give one for this flip: what does not reach the k-th value of these is not
+among the k strongest.
 """
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -38,13 +41,15 @@ from .masks import (
     Cluster,
     MaskRule,
     Neighbourhood,
+    PeakSphere,
+    Spheres,
     Strongest,
     Threshold,
     distances,
     keep_clusters,
     strongest,
 )
-from .roi import count_at_least, exchange_p, region_mean, studentised
+from .roi import block_values, count_at_least, exchange_p, studentised
 from .space import Space
 
 Floats = npt.NDArray[np.floating]
@@ -53,11 +58,15 @@ Bools = npt.NDArray[np.bool_]
 
 ON_EMPTY = ("empty", "strongest", "stop")
 TAILS = ("positive", "negative")
+# Summaries of a row that change their sign with it, and that need nothing but the row.
+READ_BY = ("mean", "median", "component")
 _BLOCK = 8192
 _FLIPS_AT_ONCE = 32
 # Small enough for a BLAS to stay on one thread and in its cache: the product is soon done, and
 # waiting for other threads is what would take long.
 _SCREEN_BLOCK = 1024
+# Relative rounding of a few float32 operations, generously.
+_SINGLE = 1e-5
 
 
 @dataclass(frozen=True)
@@ -67,7 +76,7 @@ class Outcome:
     Parameters
     ----------
     values : tuple of float, one per row (in the rows' given order)
-        The row's mean in the mask of the fold that held it out; 0 when that mask is empty.
+        The row's summary in the mask of the fold that held it out; 0 when that mask is empty.
     coverage : tuple of float, one per row
         Share of the mask in which the row has data.
     t : float
@@ -129,7 +138,7 @@ class Procedure:
 
     Parameters
     ----------
-    rule : Threshold, Cluster or Strongest
+    rule : Threshold, Cluster, Strongest or PeakSphere
         How a region is read off a group map.
     scheme : Scheme
         Who is held out in each fold.
@@ -142,6 +151,8 @@ class Procedure:
         For ``on_empty = "strongest"``.
     missing : Missing
         What counts as no data.
+    summary : {"mean", "median", "component"}
+        How a row is read in its mask; the component is that of all rows of one label.
 
     Examples
     --------
@@ -162,9 +173,10 @@ class Procedure:
     on_empty: str = "empty"
     k: int = 0
     missing: Missing = field(default_factory=Missing)
+    summary: str = "mean"
 
     def __post_init__(self) -> None:
-        for name, allowed in (("tail", TAILS), ("on_empty", ON_EMPTY)):
+        for name, allowed in (("tail", TAILS), ("on_empty", ON_EMPTY), ("summary", READ_BY)):
             if getattr(self, name) not in allowed:
                 raise InputError(
                     f"unknown {name}",
@@ -213,24 +225,59 @@ class Procedure:
 
 
 @dataclass(frozen=True)
-class _Screen:
-    """What makes flips fast; arrays of one stack.
+class _Stack:
+    """What every flip reads; arrays of one stack.
 
     Parameters
     ----------
     rows : (n_rows, n_features) float32
     by_feature : (n_features, n_rows)
         The stack, turned.
-    bounds : (n_features, n_folds) float64
+    """
+
+    rows: Floats
+    by_feature: Floats
+
+
+@dataclass(frozen=True)
+class _Bounds:
+    """What makes flips of a threshold fast.
+
+    Parameters
+    ----------
+    each : (n_features, n_folds) float64
         What each fold's sum must exceed.
     lowest : (n_features,) float32
         What the sum over all rows must exceed for any fold to pass; NaN where unknown.
     """
 
-    rows: Floats
-    by_feature: Floats
-    bounds: Floats
+    each: Floats
     lowest: Floats
+
+
+@dataclass(frozen=True)
+class _Ranks:
+    """What makes flips of a rank fast: no fold can give a feature more than sum x scale + reach.
+
+    Here the sum is that over all rows, in float32, and what a fold gives is S / sqrt(n Q), which
+    is t / sqrt(n - 1 + t^2), or the mean, according to the map.
+
+    Parameters
+    ----------
+    scale, reach : (n_features,) float32
+        Reach is NaN where unknown; both are 0 where no fold's map can be above 0.
+    most : float
+        The most degrees of freedom of any fold; infinite for the mean.
+    """
+
+    scale: Floats
+    reach: Floats
+    most: float
+
+    def least(self, value: float) -> float:
+        """The least of sum x scale + reach with which a map can reach a value above 0."""
+        reached = value if np.isinf(self.most) else value / np.sqrt(self.most + value * value)
+        return float(reached * (1 - _SINGLE))
 
 
 class Prepared:
@@ -283,13 +330,53 @@ class Prepared:
                 raise ValueError(f"tested maps of {tested.shape} for effects of {effects.shape}")
             read, self._read_present = filled(_sorted(tested, self._order, copy), procedure.missing)
             self._read_x = -read if self._sign < 0 else read
+        self._blocks = [[row] for row in range(len(order))]
+        if procedure.summary == "component":
+            people = range(len(self.people))
+            self._blocks = [np.flatnonzero(self._person == i).tolist() for i in people]
         rule = procedure.rule
         self._hood: Neighbourhood | None = None
         self._distance: Floats | None = None
+        self._spheres: Spheres | None = None
         if isinstance(rule, Cluster):
             self._hood = Neighbourhood(space, rule.connectivity)
             self._distance = distances(space, rule.near)
-        self._screen: _Screen | None = None
+        elif isinstance(rule, PeakSphere):
+            self._spheres = Spheres(space, rule.radius)
+        self._k = self._ranked_first()
+        self._stack: _Stack | None = None
+        self._bounds: _Bounds | None = None
+        self._ranks: dict[str, _Ranks] = {}
+
+    def _ranked_first(self) -> list[int]:
+        """How many features the rule takes from the top of each fold's map; no signs change it."""
+        rule, n_folds = self.procedure.rule, len(self._folds)
+        if isinstance(rule, PeakSphere):
+            return [1] * n_folds
+        if not isinstance(rule, Strongest):
+            return [0] * n_folds
+        if rule.k:
+            return [rule.k] * n_folds
+        usable = np.zeros(n_folds, dtype=np.intp)
+        for block in self._pieces():
+            enough, _ = self._usable(block, rule.map_kind)
+            usable += np.count_nonzero(enough, axis=1)
+        return [rule.number(n) for n in usable.tolist()]
+
+    def _pieces(self) -> list[slice]:
+        """The features in blocks."""
+        n_features = self._x.shape[1]
+        return [
+            slice(start, min(start + _BLOCK, n_features)) for start in range(0, n_features, _BLOCK)
+        ]
+
+    def _usable(self, block: slice, kind: str) -> tuple[Bools, Floats]:
+        """(n_folds, n_features) whether enough rows have data, and how many have."""
+        n = rows_with_data(None if self._present is None else self._present[:, block], self._folds)
+        missing = self.procedure.missing
+        least = np.array([[missing.least(len(fold.selection), kind)] for fold in self._folds])
+        n = np.broadcast_to(n, (len(n), block.stop - block.start))
+        return n >= least, n
 
     def _bound_of(self, features: Ints | slice) -> Floats:
         """(n_folds, n_features) what each fold's sum must exceed; no signs change it."""
@@ -306,31 +393,71 @@ class Prepared:
         bound[(Q == 0) | np.isnan(bound) | (n < least)] = np.inf
         return bound
 
-    def _screened(self) -> _Screen:
-        """What makes flips fast, built when the first flip asks for it."""
-        if self._screen is not None:
-            return self._screen
-        n_rows, n_features = self._x.shape
+    def _turned(self) -> _Stack:
+        """What every flip reads, built when the first flip asks for it."""
+        if self._stack is None:
+            with np.errstate(over="ignore"):
+                rows = self._x.astype(np.float32, copy=False)
+            self._stack = _Stack(rows, np.ascontiguousarray(self._x.T))
+        return self._stack
+
+    def _most_off(self, block: slice) -> tuple[Floats, Floats, Bools]:
+        """How far fold sums and the float32 sum over all rows can be apart.
+
+        Returns
+        -------
+        reach : (n_folds, n_features)
+            The most that leaving out a fold can change the sum.
+        slack : (n_features,)
+            Rounding and underflow of a float32 sum, generously.
+        known : (n_features,) bool
+            False where float32 may overflow, and no bound holds.
+        """
         single = np.finfo(np.float32)
-        bounds = np.empty((n_features, len(self._folds)))
-        lowest = np.empty(n_features, np.float32)
-        for start in range(0, n_features, _BLOCK):
-            block = slice(start, start + _BLOCK)
-            bound = self._bound_of(block)
-            size = np.abs(self._x[:, block].astype(np.float64))
-            with np.errstate(over="ignore", invalid="ignore"):
-                reach = fold_sums(size, self._folds)  # the most a fold can take off the sum
-                total = size.sum(axis=0)
-                # Rounding and underflow of a float32 sum of n_rows terms, generously.
-                slack = 4 * (n_rows + 2) * (single.eps * total + single.tiny)
-                low = (bound - reach).min(axis=0) - slack
-                # Where float32 may overflow, no bound holds: NaN keeps the feature in.
-                low[~(total < single.max / 2)] = np.nan
-                bounds[block], lowest[block] = bound.T, low
-        with np.errstate(over="ignore"):
-            rows = self._x.astype(np.float32, copy=False)
-        self._screen = _Screen(rows, np.ascontiguousarray(self._x.T), bounds, lowest)
-        return self._screen
+        size = np.abs(self._x[:, block].astype(np.float64))
+        with np.errstate(over="ignore", invalid="ignore"):
+            reach = fold_sums(size, self._folds)
+            total = size.sum(axis=0)
+            slack = 4 * (len(size) + 2) * (single.eps * total + single.tiny)
+            return reach, slack, total < single.max / 2
+
+    def _thresholds(self) -> _Bounds:
+        """What makes flips of a threshold fast, built when the first flip asks for it."""
+        if self._bounds is None:
+            each = np.empty((self._x.shape[1], len(self._folds)))
+            lowest = np.empty(len(each), np.float32)
+            for block in self._pieces():
+                bound = self._bound_of(block)
+                reach, slack, known = self._most_off(block)
+                with np.errstate(over="ignore", invalid="ignore"):
+                    # NaN keeps a feature in.
+                    lowest[block] = np.where(known, (bound - reach).min(axis=0) - slack, np.nan)
+                each[block] = bound.T
+            self._bounds = _Bounds(each, lowest)
+        return self._bounds
+
+    def _ranking(self, kind: str) -> _Ranks:
+        """What makes flips of a rank fast, built when the first flip asks for it."""
+        if kind not in self._ranks:
+            scale, reach = np.empty((2, self._x.shape[1]), np.float32)
+            for block in self._pieces():
+                enough, n = self._usable(block, kind)
+                off, slack, known = self._most_off(block)
+                with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
+                    width = n
+                    if kind == "t":
+                        x = self._x[:, block]
+                        width = np.sqrt(n * without_each(fold_sums(x, self._folds, square=True)))
+                    by = 1 / np.where(enough, width, np.inf).min(axis=0)
+                    far = (off.max(axis=0) + slack) * by * (1 + _SINGLE)
+                    known &= np.isfinite(by.astype(np.float32)) & np.isfinite(far)
+                    far[~known] = np.nan
+                nothing = ~enough.any(axis=0) | (off == 0).all(axis=0)
+                scale[block] = np.where(known & ~nothing, by, 0)
+                reach[block] = np.where(nothing, 0, far)
+            most = max(len(fold.selection) for fold in self._folds) - 1
+            self._ranks[kind] = _Ranks(scale, reach, most if kind == "t" else np.inf)
+        return self._ranks[kind]
 
     # -- choosing ---------------------------------------------------------------------------
 
@@ -342,32 +469,64 @@ class Prepared:
         return rows
 
     def _candidates(self, signs: Floats) -> list[Ints]:
-        """For each row of signs, the features that may be above the bound in some fold."""
-        screen, single = self._screened(), signs.astype(np.float32)
+        """For each row of signs, the features that may be in some fold's mask (or its peak)."""
+        rule = self.procedure.rule
+        if isinstance(rule, Strongest | PeakSphere):
+            return self._may_lead(signs, max(self._k), rule.map_kind)
+        lowest = self._thresholds().lowest
         flips, features = [], []
-        with np.errstate(over="ignore", invalid="ignore"):
-            for start in range(0, self._x.shape[1], _SCREEN_BLOCK):
-                block = slice(start, start + _SCREEN_BLOCK)
-                # Negated, so that what is not a number stays in.
-                may = ~(single @ screen.rows[:, block] <= screen.lowest[block])
-                flip, feature = np.divmod(np.flatnonzero(may), may.shape[1])
-                flips.append(flip)
-                features.append(feature + start)
+        for block, sums in self._all_sums(signs):
+            # Negated, so that what is not a number stays in.
+            may = ~(sums <= lowest[block])
+            flip, feature = np.divmod(np.flatnonzero(may), may.shape[1])
+            flips.append(flip)
+            features.append(feature + block.start)
         of_flip = np.concatenate(flips)
         # Blocks come in order, so a stable sort by flip leaves the features ascending.
         order = np.argsort(of_flip, kind="stable")
         ends = np.cumsum(np.bincount(of_flip, minlength=len(signs)))
         return np.split(np.concatenate(features)[order], ends[:-1])
 
+    def _all_sums(self, signs: Floats) -> Iterator[tuple[slice, Floats]]:
+        """Blocks of features with their (n_flips, n_features) float32 sums over all rows."""
+        rows, single = self._turned().rows, signs.astype(np.float32)
+        for start in range(0, self._x.shape[1], _SCREEN_BLOCK):
+            block = slice(start, start + _SCREEN_BLOCK)
+            with np.errstate(over="ignore", invalid="ignore"):
+                yield block, single @ rows[:, block]
+
+    def _may_lead(self, signs: Floats, k: int, kind: str) -> list[Ints]:
+        """For each row of signs, the features that may be among the k strongest of some fold."""
+        n_features = self._x.shape[1]
+        everything: Ints = np.arange(n_features)
+        looked_at = 2 * k + 50
+        if 2 * looked_at > n_features:
+            return [everything] * len(signs)
+        ranks, scores = self._ranking(kind), np.empty((len(signs), n_features), np.float32)
+        with np.errstate(over="ignore", invalid="ignore"):
+            for block, sums in self._all_sums(signs):
+                np.multiply(sums, ranks.scale[block], out=scores[:, block])
+        found: list[Ints] = []
+        for row, score in zip(signs, scores, strict=True):
+            strong = np.sort(np.argpartition(score, -looked_at)[-looked_at:])
+            maps = self._maps_at(strong, row, kind)
+            maps[np.isnan(maps)] = -np.inf
+            value = float(np.partition(maps, -k, axis=1)[:, -k].min())
+            if 0 < value < np.inf:
+                # Negated, so that what is not a number stays in.
+                found.append(np.flatnonzero(~(score + ranks.reach < ranks.least(value))))
+            else:
+                found.append(everything)
+        return found
+
     def _passing(self, signs: Floats) -> Ints:
         """The features above the bound in some fold, by a pass over all of them."""
-        if isinstance(self.procedure.rule, Strongest):
-            return np.empty(0, dtype=np.intp)
+        if isinstance(self.procedure.rule, Strongest | PeakSphere):
+            return np.arange(self._x.shape[1])
         found = []
-        for start in range(0, self._x.shape[1], _BLOCK):
-            block = slice(start, start + _BLOCK)
+        for block in self._pieces():
             S = self._sums_of(self._x[:, block], signs)
-            found.append(start + np.flatnonzero((self._bound_of(block) < S).any(axis=0)))
+            found.append(block.start + np.flatnonzero((self._bound_of(block) < S).any(axis=0)))
         return np.concatenate(found)
 
     def _sums_of(self, x: Floats, signs: Floats) -> Floats:
@@ -379,12 +538,13 @@ class Prepared:
     def _members(self, signs: Floats, candidates: Ints) -> tuple[Ints, Bools]:
         """The features in any fold's mask, ascending, and (n_features_found, n_folds) bool."""
         rule = self.procedure.rule
-        if isinstance(rule, Strongest):
-            return self._strongest(signs, rule.k, rule.map_kind, range(len(self._folds)))
-        if self._screen is None:
+        if isinstance(rule, Strongest | PeakSphere):
+            found, members = self._strongest(signs, candidates, self._k, rule.map_kind)
+            return (found, members) if self._spheres is None else self._around(found, members)
+        if self._bounds is None:
             bounds = self._bound_of(candidates).T
         else:
-            bounds = np.take(self._screen.bounds, candidates, axis=0)
+            bounds = np.take(self._bounds.each, candidates, axis=0)
         S = self._sums_of(self._columns(candidates), signs)
         above = bounds < S.T
         some = above.any(axis=1)
@@ -405,19 +565,39 @@ class Prepared:
             Q = without_each(fold_sums(self._x[:, features], self._folds, square=True))
         return t_from_sums(n, S, Q).T
 
+    def _maps_at(self, features: Ints, signs: Floats, kind: str) -> Floats:
+        """(n_folds, n_some_features) the folds' maps; NaN where too few rows have data."""
+        maps = np.empty((len(self._folds), len(features)))
+        for start in range(0, len(features), _BLOCK):
+            some = features[start : start + _BLOCK]
+            x = self._columns(some) * signs[:, None]
+            if self._present is not None:
+                x[~self._present[:, some]] = np.nan
+            missing = self.procedure.missing
+            maps[:, start : start + _BLOCK] = leave_out_maps(x, self._folds, missing, kind)
+        return maps
+
     def _strongest(
-        self, signs: Floats, k: int, kind: str, which: Sequence[int] | range
+        self, signs: Floats, candidates: Ints, k: Sequence[int], kind: str
     ) -> tuple[Ints, Bools]:
-        """The strongest features of some folds, by their whole maps."""
-        x = self._x * signs[:, None]
-        if self._present is not None:
-            x[~self._present] = np.nan
-        maps = leave_out_maps(x, self._folds, self.procedure.missing, kind)
-        chosen = np.zeros((x.shape[1], len(self._folds)), bool)
-        for fold in which:
-            chosen[:, fold] = strongest(maps[fold], k)
-        found = np.flatnonzero(chosen.any(axis=1))
-        return found, chosen[found]
+        """The strongest of the candidates in each fold's map, so many as `k` says for the fold."""
+        maps = self._maps_at(candidates, signs, kind)
+        chosen = np.zeros((len(candidates), len(self._folds)), bool)
+        for fold, many in enumerate(k):
+            if many:
+                chosen[:, fold] = strongest(maps[fold], many)
+        some = chosen.any(axis=1)
+        return candidates[some], chosen[some]
+
+    def _around(self, peaks: Ints, members: Bools) -> tuple[Ints, Bools]:
+        """The spheres around each fold's peak."""
+        assert self._spheres is not None
+        spheres = [self._spheres.around(peak) for peak in peaks.tolist()]
+        found = np.unique(np.concatenate([np.empty(0, np.intp), *spheres]))
+        inside = np.zeros((len(found), len(self._folds)), bool)
+        for peak, fold in np.argwhere(members):
+            inside[np.searchsorted(found, spheres[peak]), fold] = True
+        return found, inside
 
     def _chosen(self, signs: Floats, candidates: Ints) -> tuple[Ints, Bools, list[int], list[int]]:
         """Features, members, and the folds left empty and replaced."""
@@ -425,7 +605,12 @@ class Prepared:
         nothing = np.flatnonzero(~members.any(axis=0)).tolist()
         if not nothing or self.procedure.on_empty != "strongest":
             return found, members, nothing, []
-        more, extra = self._strongest(signs, self.procedure.k, "t", nothing)
+        k = self.procedure.k
+        stand_ins: Ints = np.arange(self._x.shape[1])
+        if self._stack is not None:
+            (stand_ins,) = self._may_lead(signs[None], k, "t")
+        wanted = [k if fold in nothing else 0 for fold in range(len(self._folds))]
+        more, extra = self._strongest(signs, stand_ins, wanted, "t")
         both = np.union1d(found, more)
         merged = np.zeros((len(both), len(self._folds)), bool)
         merged[np.searchsorted(both, found)] |= members
@@ -434,25 +619,26 @@ class Prepared:
         return both, merged, empty, [fold for fold in nothing if fold not in empty]
 
     def _read(self, signs: Floats, found: Ints, members: Bools) -> tuple[Floats, Floats]:
-        """Each sorted row's mean in its own fold's mask, and the coverage."""
+        """Each sorted row's summary in its own fold's mask, and the coverage."""
         values, coverage = np.zeros(len(signs)), np.zeros(len(signs))
         of_fold = np.ascontiguousarray(members.T)
         few = self._columns(found) if self._read_x is self._x else self._read_x[:, found]
-        for row, fold in enumerate(self._fold_of_row):
-            inside = of_fold[fold]
+        for rows in self._blocks:
+            inside = of_fold[self._fold_of_row[rows[0]]]
             present = None
             if self._read_present is not None:
-                present = self._read_present[row, found[inside]]
-            mean, coverage[row] = region_mean(few[row, inside], present)
-            values[row] = mean * signs[row]
-        return values, coverage
+                present = self._read_present[np.ix_(rows, found[inside])]
+            values[rows], coverage[rows] = block_values(
+                few[np.ix_(rows, inside)], present, self.procedure.summary
+            )
+        return values * signs, coverage
 
     def _columns(self, features: Ints) -> Floats:
         """(n_rows, n_some_features) of the stack."""
-        if self._screen is None:
+        if self._stack is None:
             return self._x[:, features]
         # Gathered by feature: whole cache lines.
-        return np.take(self._screen.by_feature, features, axis=0).T
+        return np.take(self._stack.by_feature, features, axis=0).T
 
     def _per_person(self, values: Floats) -> Floats:
         """Mean over the rows of each person, in the order of `people`."""
@@ -523,10 +709,7 @@ class Prepared:
         t, overlap, n_empty = np.empty(n), np.empty(n), np.empty(n, dtype=np.intp)
         for start in range(0, n, _FLIPS_AT_ONCE):
             rows = signs[start : start + _FLIPS_AT_ONCE][:, self._person].astype(np.float64)
-            candidates: list[Ints] = [np.empty(0, np.intp)] * len(rows)
-            if not isinstance(self.procedure.rule, Strongest):
-                candidates = self._candidates(rows)
-            for i, (row, may) in enumerate(zip(rows, candidates, strict=True), start):
+            for i, (row, may) in enumerate(zip(rows, self._candidates(rows), strict=True), start):
                 found, members, empty, _ = self._chosen(row, may)
                 t[i] = studentised(self._per_person(self._read(row, found, members)[0]))
                 overlap[i], n_empty[i] = mean_dice(members), len(empty)

@@ -18,6 +18,8 @@ from .errors import InputError
 Floats = npt.NDArray[np.floating]
 Bools = npt.NDArray[np.bool_]
 
+SUMMARIES = ("mean", "median", "weighted", "component")
+
 
 def region_mean(values: Floats, present: Bools | None = None) -> tuple[float, float]:
     """The mean inside a region of one row, over the features that have data.
@@ -38,12 +40,143 @@ def region_mean(values: Floats, present: Bools | None = None) -> tuple[float, fl
     >>> region_mean(np.array([1.0, 3.0, 8.0]), np.array([True, True, False]))
     (2.0, 0.6666666666666666)
     """
-    n = len(values)
-    if present is not None:
-        values = values[present]
-    if not len(values):
+    return region_value(values, present)
+
+
+def region_value(
+    values: Floats,
+    present: Bools | None = None,
+    summary: str = "mean",
+    weights: Floats | None = None,
+) -> tuple[float, float]:
+    """One value for a map inside a region, over the features that have data.
+
+    Parameters
+    ----------
+    values : (n_features_in_region,) float
+    present : (n_features_in_region,) bool, optional
+        Where there is data; the default is everywhere.
+    summary : {"mean", "median", "weighted", "component"}
+        "component" of a single map is its root mean square with the sign of its mean.
+    weights : (n_features_in_region,) float
+        For "weighted": not negative; those of the features with data are scaled to a sum of 1.
+
+    Returns
+    -------
+    value, coverage : float
+        Coverage is the share of the features (for "weighted": of the weight) that has data.
+        Value 0 and coverage 0 when there is nothing to read.
+
+    Examples
+    --------
+    >>> x, there = np.array([1.0, 3.0, 8.0, 2.0]), np.array([True, True, True, False])
+    >>> region_value(x, there, "median")
+    (3.0, 0.75)
+    >>> region_value(x, there, "weighted", np.array([1.0, 1.0, 0.0, 2.0]))
+    (2.0, 0.5)
+    """
+    there = slice(None) if present is None else present
+    # In float64 before any sum, so that a map has the same value in whichever type it is held.
+    x = values[there].astype(np.float64, copy=False)
+    if summary == "weighted":
+        if weights is None:
+            raise ValueError('summary = "weighted" needs the weights')
+        held = weights[there].astype(np.float64, copy=False)
+        weight = float(held.sum())
+        if not weight:
+            return 0.0, 0.0
+        return float((held * x).sum()) / weight, weight / float(weights.sum(dtype=np.float64))
+    if not len(x):
         return 0.0, 0.0
-    return float(values.sum(dtype=np.float64)) / len(values), len(values) / n
+    coverage = len(x) / len(values)
+    if summary == "mean":
+        return float(x.sum()) / len(x), coverage
+    if summary == "median":
+        return float(np.median(x)), coverage
+    if summary == "component":
+        return float(first_component(x[None])[0]), coverage
+    raise ValueError(f"summary is one of {', '.join(SUMMARIES)}, not {summary!r}")
+
+
+def first_component(maps: Floats, present: Bools | None = None) -> Floats:
+    """Scores of one person's maps on their first principal component inside a region.
+
+    The component is not centred (a response that all maps share is what it is after); scores
+    are divided by sqrt(n_features), so that a constant map of height h scores h. Its sign is
+    that by which its weights over features sum to 0 or more (if to 0: the first weight that is
+    not 0 is positive). So the scores change sign with the maps, and follow the maps' order, to
+    the last bit.
+
+    Parameters
+    ----------
+    maps : (n_maps, n_features) float
+    present : (n_maps, n_features) bool, optional
+        Where there is data; features that lack it in any of the maps are left out.
+
+    Returns
+    -------
+    (n_maps,) float64; zeros when no feature is left.
+
+    Examples
+    --------
+    >>> first_component(np.array([[2.0, 2.0, 2.0], [-1.0, -1.0, -1.0]])).round(12).tolist()
+    [2.0, -1.0]
+    """
+    x = maps.astype(np.float64, copy=False)
+    if present is not None:
+        x = x[:, present.all(axis=0)]
+    size = float(np.abs(x).max(initial=0.0))
+    if not size:
+        return np.zeros(len(x))
+    # Scaled, so that no square overflows; every map turned to begin positively and the maps in
+    # an order of their own, so that neither signs nor order reach the arithmetic.
+    first = np.take_along_axis(x, (x != 0).argmax(axis=1)[:, None], axis=1)
+    turn = np.sign(first[:, 0])
+    turned = x / size * turn[:, None]
+    order = sorted(range(len(x)), key=lambda i: turned[i].tobytes())
+    turned = turned[order]
+    # From the products of maps with maps, few numbers however large the region; einsum, because
+    # a BLAS may round otherwise on another number of threads.
+    _, vectors = np.linalg.eigh(np.einsum("if,jf->ij", turned, turned))
+    weights = np.einsum("i,if->f", vectors[:, -1], turned)
+    # Read back from the maps, so that two that are the same score the same.
+    scores = np.einsum("if,f->i", turned, weights)
+    scores /= np.sqrt(np.square(weights).sum() * x.shape[1])
+    lead = weights.sum() or weights[weights != 0][0]
+    out = np.empty(len(x))
+    out[order] = np.sign(lead) * size * scores
+    return out * turn
+
+
+def block_values(
+    maps: Floats,
+    present: Bools | None = None,
+    summary: str = "mean",
+    weights: Floats | None = None,
+) -> tuple[Floats, Floats]:
+    """The values of one person's maps inside one region, and their coverage.
+
+    Parameters
+    ----------
+    maps : (n_maps, n_features_in_region) float
+    present : (n_maps, n_features_in_region) bool, optional
+    summary, weights
+        As for `region_value`; "component" is that of all the maps together, over the features
+        with data in each of them.
+
+    Returns
+    -------
+    values, coverage : (n_maps,) float64
+    """
+    if summary == "component" and maps.shape[1]:
+        share = 1.0 if present is None else float(present.all(axis=0).mean())
+        return first_component(maps, present), np.full(len(maps), share)
+    made = [
+        region_value(row, None if present is None else present[i], summary, weights)
+        for i, row in enumerate(maps)
+    ]
+    values, coverage = np.array(made).reshape(-1, 2).T
+    return values, coverage
 
 
 def per_person(values: Sequence[float], labels: Sequence[str]) -> list[float]:

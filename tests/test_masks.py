@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+import math
+from fractions import Fraction
+
 import numpy as np
 import pytest
 from hypothesis import given, settings
@@ -15,6 +18,7 @@ from sequester.nodes.groupmaps import Missing
 from sequester.nodes.masks import (
     Cluster,
     Neighbourhood,
+    PeakSphere,
     Strongest,
     Threshold,
     choose,
@@ -140,6 +144,8 @@ def test_voxels_joined_only_through_a_voxel_outside_are_two_clusters():
             Cluster(p=0.2, pick="all", connectivity=26),
             Cluster(p=0.2, pick="nearest", near=(1.0, 2.0, 0.0)),
             Strongest(k=3),
+            Strongest(fraction=0.2, map_kind="mean"),
+            PeakSphere(1.5),
         ]
     ),
     st.sampled_from(["positive", "negative"]),
@@ -205,6 +211,24 @@ def test_the_strongest_are_the_highest_with_ties_to_the_lowest_feature(values, k
     assert (choose(values, Strongest(k), grid) == strongest(values, k)).all()
 
 
+@pytest.mark.parametrize("usable", [0, 1, 99, 100, 300, 250_000])
+def test_a_fraction_is_a_share_of_the_features_with_a_value(usable):
+    rng = np.random.default_rng(usable)
+    for percent in range(1, 100):
+        # Exact arithmetic: 7 % of 100 features are 7, whatever binary makes of 0.07.
+        expected = max(1, math.ceil(Fraction(percent, 100) * usable))
+        rule = Strongest(fraction=percent / 100)
+        assert rule.number(usable) == expected
+        if usable > 300:
+            continue
+        values = rng.integers(0, 9, usable + 20).astype(float)  # ties
+        values[rng.permutation(len(values))[:20]] = np.nan
+        grid = Grid((len(values), 1, 1), np.eye(4))
+        mask = choose(values, rule, grid)
+        assert (mask == choose(values, Strongest(expected), grid)).all()
+        assert int(mask.sum()) == min(expected, usable)
+
+
 def test_the_strongest_by_mean_may_differ_from_those_by_t():
     # A large mean with a large spread, and a small one with hardly any.
     effects = np.array([[1.0, 9.0], [1.1, -1.0], [0.9, 8.0], [1.0, -2.0]])
@@ -259,6 +283,36 @@ def test_voxels_on_the_surface_belong_to_the_sphere_whatever_the_rounding(reach,
         assert int(mask.sum()) == n
 
 
+@given(SHAPES, st.floats(0.3, 9), st.tuples(*[st.floats(-180, 180)] * 3), SEEDS)
+def test_a_peak_sphere_is_the_sphere_around_the_first_highest_feature(shape, radius, angles, seed):
+    rng = np.random.default_rng(seed)
+    turn = Rotation.from_euler("xyz", angles, degrees=True).as_matrix()
+    affine = from_matvec(turn @ np.diag([-2.0, 2.5, 3.0]), rng.uniform(-50, 50, 3))
+    grid = Grid(shape, affine, rng.uniform(size=shape) < 0.8)
+    values = rng.integers(-5, 5, grid.n_features).astype(float)  # coarse: ties
+    values[rng.uniform(size=len(values)) < 0.4] = np.nan
+    chosen = choose(values, PeakSphere(radius), grid)
+    if np.isnan(values).all():
+        assert not chosen.any()
+        return
+    peak = min(np.flatnonzero(~np.isnan(values)), key=lambda i: (-values[i], i))
+    assert chosen[peak]
+    centre = tuple(grid.coordinates()[peak])
+    assert (chosen == sphere(grid, centre, radius)).all()
+
+
+@pytest.mark.parametrize(("reach", "n"), [(1, 7), (2, 19), (3, 27), (4, 33)])
+def test_a_peak_sphere_holds_its_surface_whatever_the_rounding(reach, n):
+    # As for a sphere around a point: 1 + 6 + 12 + 8 + 6 lattice points.
+    t = np.zeros((7, 7, 7))
+    t[3, 3, 3] = 1
+    for seed in range(20):
+        rng = np.random.default_rng(seed)
+        turn = Rotation.random(random_state=seed).as_matrix()
+        grid = Grid(t.shape, from_matvec(turn * 2.4, rng.uniform(-90, 90, 3)))
+        assert int(choose(t.ravel(), PeakSphere(2.4 * np.sqrt(reach)), grid).sum()) == n
+
+
 # -- faults ---------------------------------------------------------------------------------
 
 
@@ -274,8 +328,16 @@ def test_voxels_on_the_surface_belong_to_the_sphere_whatever_the_rounding(reach,
         (lambda: Cluster(p=0.01, min_size=0), "min_size out of range: expected >= 1, got 0"),
         (lambda: Cluster(p=0.01, pick="nearest"), "go together: got pick 'nearest', near None"),
         (lambda: Cluster(p=0.01, near=(0, 0, 0)), "go together: got pick 'largest', near"),
-        (lambda: Strongest(0), "k out of range: expected >= 1, got 0"),
+        (lambda: Strongest(0), "exactly one of k and fraction: got k 0, fraction 0.0"),
+        (lambda: Strongest(3, fraction=0.1), "of k and fraction: got k 3, fraction 0.1"),
+        (lambda: Strongest(-1), "k out of range: expected >= 1, got -1"),
+        (lambda: Strongest(fraction=1.0), "fraction out of range: expected 0 < fraction < 1, got"),
+        (lambda: Strongest(fraction=-0.1), "expected 0 < fraction < 1, got -0.1"),
+        (lambda: Strongest(fraction=float("nan")), "expected 0 < fraction < 1, got nan"),
         (lambda: Strongest(3, "z"), "unknown map: expected t or mean, got z"),
+        (lambda: PeakSphere(0.0), "radius out of range: expected > 0 mm, got 0.0"),
+        (lambda: PeakSphere(float("nan")), "radius out of range: expected > 0 mm, got nan"),
+        (lambda: PeakSphere(6.0, "z"), "unknown map: expected t or mean, got z"),
         (lambda: sphere(Grid((2, 2, 2), np.eye(4)), (0, 0, 0), 0.0), "radius out of range"),
         (
             lambda: choose(np.zeros(8), Threshold(p=0.01), Grid((2, 2, 2), np.eye(4))),
@@ -300,6 +362,12 @@ def test_rules_describe_themselves():
         in Cluster(height=3.0, pick="nearest", near=(1.0, 2.0, 3.0)).describe()
     )
     assert Strongest(5).describe() == "the 5 features with the highest group t"
+    share = Strongest(fraction=0.05, map_kind="mean")
+    assert share.describe() == "the 5 % of the features with the highest group mean"
+    assert share.describe("negative") == "the 5 % of the features with the lowest group mean"
+    around = PeakSphere(7.5)
+    assert around.describe() == "the features within 7.5 mm of the one with the highest group t"
+    assert around.describe("negative").endswith("of the one with the lowest group t")
 
 
 def test_the_missing_rule_reaches_the_mask():

@@ -1,8 +1,9 @@
 """The whole procedure against a naive float64 loop over folds, SciPy's t-test and ndimage.
 
 Under the data's own signs and under flips; with missing data, several rows a person, k folds,
-both tails and every rule. Then what must not matter (held-out data, order, blocks), the
-five-subject example by enumeration, and the level of the test when nothing is there.
+both tails, every rule and every summary. Then what must not matter (held-out data, order,
+blocks), the five-subject example by enumeration, and the level of the test when nothing is
+there.
 """
 
 from __future__ import annotations
@@ -22,7 +23,7 @@ from sequester.nodes.flips import all_signs, random_signs
 from sequester.nodes.foldnull import dice, plain_t_false_positives
 from sequester.nodes.folds import KFold, LeaveOneOut
 from sequester.nodes.groupmaps import Missing
-from sequester.nodes.masks import Cluster, Strongest, Threshold
+from sequester.nodes.masks import Cluster, PeakSphere, Strongest, Threshold
 from sequester.nodes.procedure import Prepared, Procedure
 from sequester.nodes.space import Grid
 
@@ -44,10 +45,16 @@ class Naive:
 
 
 def _naive_mask(rule, t, mean, n, grid) -> np.ndarray:
-    if isinstance(rule, Strongest):
+    if isinstance(rule, Strongest | PeakSphere):
         ranked = t if rule.map_kind == "t" else mean
         order = [i for i in np.argsort(-ranked, kind="stable") if not np.isnan(ranked[i])]
-        return np.isin(np.arange(len(t)), order[: rule.k])
+        if isinstance(rule, Strongest):
+            k = rule.k or max(1, int(np.ceil(rule.fraction * len(order) - 1e-9)))
+            return np.isin(np.arange(len(t)), order[:k])
+        if not order:
+            return np.zeros(len(t), bool)
+        mm = grid.coordinates()
+        return np.sqrt(np.square(mm - mm[order[0]]).sum(axis=1)) < rule.radius + 1e-6
     with np.errstate(invalid="ignore"):
         limit = rule.height if rule.p is None else stats.t.isf(rule.p, np.maximum(n, 2) - 1)
         above = t > limit
@@ -109,10 +116,24 @@ def naive(procedure: Procedure, effects, labels, grid, signs=None) -> Naive:
         for row in fold.held_out:
             inside = x[row, mask]
             inside = inside[~np.isnan(inside)]
-            made.values[row] = inside.mean() if len(inside) else 0
+            if len(inside) and procedure.summary != "component":
+                made.values[row] = {"mean": np.mean, "median": np.median}[procedure.summary](inside)
+        if procedure.summary == "component":
+            for label in {labels[row] for row in fold.held_out}:
+                block = [row for row in fold.held_out if labels[row] == label]
+                made.values[block] = _naive_component(x[np.ix_(block, np.flatnonzero(mask))])
     owner = np.array(labels)
     made.people = np.array([direction * made.values[owner == p].mean() for p in people])
     return made
+
+
+def _naive_component(maps: np.ndarray) -> np.ndarray:
+    """The block's scores by a singular value decomposition."""
+    kept = maps[:, ~np.isnan(maps).any(axis=0)]
+    if not kept.size:
+        return np.zeros(len(maps))
+    u, s, v = np.linalg.svd(kept, full_matrices=False)
+    return u[:, 0] * s[0] * np.sign(v[0].sum()) / np.sqrt(kept.shape[1])
 
 
 # -- studies --------------------------------------------------------------------------------
@@ -173,6 +194,10 @@ RULES = {
     "p": Threshold(p=0.05),
     "strongest": Strongest(7),
     "strongest mean": Strongest(7, "mean"),
+    "fraction": Strongest(fraction=0.04),
+    "fraction mean": Strongest(fraction=0.04, map_kind="mean"),
+    "peak sphere": PeakSphere(3.6),
+    "peak sphere mean": PeakSphere(3.6, "mean"),
     **{
         f"{pick} {connectivity}": Cluster(
             p=0.1,
@@ -234,6 +259,92 @@ def test_masks_and_values_equal_a_naive_loop_under_every_sign(rule, kind, tail):
             assert (one == other).all()
 
 
+@pytest.mark.parametrize("tail", ["positive", "negative"])
+@pytest.mark.parametrize("kind", KINDS)
+@pytest.mark.parametrize("rule", ["height", "fraction", "peak sphere", "largest 18"])
+@pytest.mark.parametrize("summary", ["median", "component"])
+def test_other_summaries_equal_a_naive_loop_under_every_sign(summary, rule, kind, tail):
+    given_study = study(kind)
+    ready = given_study.prepare(RULES[rule], tail=tail, summary=summary)
+    signs = random_signs(12, ready.people, 0, 4)
+    t, _, _ = ready.flips(signs)
+    assert_equal(ready, given_study.naive(ready))
+    for i, flip in enumerate(signs):
+        expected = given_study.naive(ready, flip)
+        assert_equal(ready, expected, flip)
+        assert t[i] == pytest.approx(expected.t, rel=1e-6, abs=1e-9)
+
+
+@given(
+    rule=st.sampled_from(sorted(RULES)),
+    kind=st.sampled_from(KINDS),
+    summary=st.sampled_from(["mean", "median", "component"]),
+    tail=st.sampled_from(["positive", "negative"]),
+    seed=st.integers(0, 2**32 - 1),
+)
+@settings(max_examples=60)
+def test_values_change_sign_with_everything_and_with_nothing_less(rule, kind, summary, tail, seed):
+    other = {"positive": "negative", "negative": "positive"}[tail]
+    made = study(kind)
+    ready = made.prepare(RULES[rule], tail=tail, summary=summary)
+    made.effects = -made.effects
+    turned = made.prepare(RULES[rule], tail=other, summary=summary)
+    flip = random_signs(seed, ready.people, 0, 1)[0]
+    for signs in (None, flip):
+        one, opposite = ready.outcome(signs), turned.outcome(signs)
+        assert opposite.values == tuple(-value for value in one.values)
+        assert (opposite.t, opposite.coverage, opposite.sizes) == (one.t, one.coverage, one.sizes)
+    # Flipped signs of the data and flipped data are the same, bit for bit.
+    of_row = dict(zip(ready.people, flip, strict=True))
+    made.effects = -made.effects * np.float32([[of_row[p]] for p in made.labels])
+    again = made.prepare(RULES[rule], tail=tail, summary=summary)
+    assert again.outcome() == ready.outcome(flip)
+
+
+@given(
+    rule=st.sampled_from(
+        [Strongest(9), Strongest(fraction=0.02), Strongest(9, "mean"), PeakSphere(2.0)]
+    ),
+    kind=st.sampled_from(["noise", "heavy", "holes", "one-sided", "ties", "zeros", "huge", "tiny"]),
+    dtype=st.sampled_from([np.float32, np.float64]),
+    scheme=st.sampled_from([LeaveOneOut(), KFold(3, seed=1)]),
+    seed=st.integers(0, 2**32 - 1),
+)
+@settings(max_examples=150)
+def test_what_makes_flips_of_a_rank_fast_changes_no_bit(rule, kind, dtype, scheme, seed):
+    rng = np.random.default_rng(seed)
+    grid = Grid((10, 10, 10), np.eye(4))
+    effects = rng.standard_normal((9, 1000))
+    effects[:, rng.integers(1000, size=40)] += 2
+    missing = Missing(zeros=kind != "zeros", min_fraction=0.6)
+    if kind == "heavy":
+        effects = effects**5 * 10.0 ** rng.uniform(-4, 4, 1000)
+    elif kind in ("holes", "zeros"):
+        effects[rng.uniform(size=effects.shape) < 0.2] = 0
+        effects[:, :100] = 0
+    elif kind == "one-sided":  # every map's signs agree: flips leave few folds above 0
+        effects = -np.abs(effects)
+    elif kind == "ties":
+        effects = np.round(effects)
+        effects[:, ::7] = effects[:, :1]
+        effects[:, 1::7] = 3
+    elif kind in ("huge", "tiny"):
+        effects *= {"huge": 3e37, "tiny": 1e-40}[kind]
+    plan = Procedure(rule, scheme=scheme, missing=missing)
+    labels = [f"{i}" for i in range(9)]
+    with np.errstate(over="ignore"):
+        effects = effects.astype(dtype)
+    plain, fast = (plan.prepare(effects, labels, grid) for _ in range(2))
+    signs = np.vstack([np.ones((1, 9), np.int8), random_signs(seed, plain.people, 0, 3)])
+    t, overlap, n_empty = fast.flips(signs)
+    for i, flip in enumerate(signs):
+        outcome = plain.outcome(flip)  # by the folds' whole maps
+        assert t[i] == outcome.t
+        np.testing.assert_equal(overlap[i], outcome.dice)
+        assert n_empty[i] == len(outcome.empty)
+        assert fast.outcome(flip) == outcome
+
+
 def test_t_of_the_data_is_t_of_the_flip_that_flips_nobody():
     for rule in RULES.values():
         for kind in KINDS:
@@ -268,8 +379,13 @@ def test_an_empty_fold_counts_as_zero_or_is_replaced_as_planned(sparse):
         for one, other in zip(ready.masks(), expected.masks, strict=True):
             assert (one == other).all()
         assert_equal(ready, expected)
-        for flip in random_signs(2, ready.people, 0, 4):
-            assert_equal(ready, made.naive(ready, flip), flip)
+        signs = random_signs(2, ready.people, 0, 4)
+        t, _, n_empty = made.prepare(rule, **plan).flips(signs)
+        for i, flip in enumerate(signs):
+            expected = made.naive(ready, flip)
+            assert_equal(ready, expected, flip)
+            assert t[i] == pytest.approx(expected.t, rel=1e-6, abs=1e-9)
+            assert n_empty[i] == len(expected.empty)
 
 
 def test_a_plan_to_stop_names_the_folds_that_found_nothing(sparse):
@@ -304,6 +420,10 @@ def test_nothing_stands_in_where_there_is_no_data_at_all():
     ready = made.prepare(Threshold(p=0.01), on_empty="strongest", k=3)
     assert len(ready.outcome().empty) == 10
     assert ready.outcome().replaced == ()
+    for rule in (Strongest(3), Strongest(fraction=0.1), PeakSphere(5.0)):
+        ready = made.prepare(rule, summary="component")
+        assert ready.outcome().sizes == (0,) * 10
+        assert ready.flip_test(9).noise_empty == 10
 
 
 # -- what must not matter -------------------------------------------------------------------
@@ -367,7 +487,7 @@ def test_held_out_data_at_the_edge_of_the_number_format(kind, dtype, extreme, ru
 @pytest.mark.parametrize("scale", [1e-60, 1e-40, 1e-15, 1e12, 1e60])
 def test_the_unit_of_the_effects_does_not_matter(scale):
     made = study("plain")
-    for rule in ("p", "peak 18", "strongest"):
+    for rule in ("p", "peak 18", "strongest", "peak sphere"):
         made.effects = study("plain").effects.astype(np.float64)
         before = made.prepare(RULES[rule]).masks()
         made.effects = made.effects * scale
@@ -376,10 +496,19 @@ def test_the_unit_of_the_effects_does_not_matter(scale):
 
 
 @pytest.mark.parametrize("kind", KINDS)
-@pytest.mark.parametrize("rule", ["p", "peak 18", "strongest"])
-def test_the_order_of_the_rows_changes_no_bit(kind, rule):
+@pytest.mark.parametrize(
+    ("rule", "summary"),
+    [
+        ("p", "mean"),
+        ("peak 18", "median"),
+        ("strongest", "mean"),
+        ("fraction", "component"),
+        ("peak sphere", "component"),
+    ],
+)
+def test_the_order_of_the_rows_changes_no_bit(kind, rule, summary):
     made = study(kind)
-    straight = made.prepare(RULES[rule])
+    straight = made.prepare(RULES[rule], summary=summary)
     order = np.random.default_rng(6).permutation(len(made.labels))
     shuffled = Study(
         made.effects[order],
@@ -388,7 +517,7 @@ def test_the_order_of_the_rows_changes_no_bit(kind, rule):
         made.grid,
         made.scheme,
         made.missing,
-    ).prepare(RULES[rule])
+    ).prepare(RULES[rule], summary=summary)
     for one, other in zip(straight.masks(), shuffled.masks(), strict=True):
         assert (one == other).all()
     one, other = straight.outcome(), shuffled.outcome()
@@ -405,7 +534,7 @@ def test_the_order_of_the_rows_changes_no_bit(kind, rule):
 
 
 @pytest.mark.parametrize("kind", ["plain", "rows, holes, zeros kept, 4 folds"])
-@pytest.mark.parametrize("rule", ["p", "peak 18", "strongest"])
+@pytest.mark.parametrize("rule", ["p", "peak 18", "strongest", "fraction", "peak sphere"])
 def test_neither_blocks_nor_batches_change_a_bit(monkeypatch, kind, rule):
     made = study(kind)
     ready = made.prepare(RULES[rule])
@@ -467,6 +596,11 @@ def test_all_patterns_are_enumerated_when_they_are_no_more_than_the_flips_and_on
     assert (drawn.exact, drawn.n_flips) == (False, 62)
     t = np.array([made.naive(ready, flip).t for flip in all_signs(6, 0, 64)])
     assert exact.p == (t >= t[0] - 1e-9).mean()
+    for rule in ("fraction", "peak sphere", "peak sphere mean"):
+        for summary in ("mean", "median", "component"):
+            other = made.prepare(RULES[rule], summary=summary)
+            t = np.array([made.naive(other, flip).t for flip in all_signs(6, 0, 64)])
+            assert other.flip_test(63).p == (t >= t[0] - 1e-9).mean()
     assert drawn.p == (1 + drawn.n_at_least) / 63
     assert ready.flip_test(63, 2) == exact
     assert exact.p >= 1 / 64
@@ -559,6 +693,7 @@ def test_with_an_effect_there_p_is_at_its_minimum_in_its_own_direction_only():
         ({"on_empty": "skip"}, "unknown on_empty: expected one of empty, strongest, stop, got"),
         ({"on_empty": "strongest"}, 'on_empty = "strongest" and k go together: got on_empty'),
         ({"k": 3}, "go together: got on_empty 'empty', k 3"),
+        ({"summary": "weighted"}, "unknown summary: expected one of mean, median, component, got"),
     ],
 )
 def test_a_plan_that_makes_no_sense_is_refused(settings_, message):

@@ -4,24 +4,31 @@ from __future__ import annotations
 
 import dataclasses
 import itertools
+from pathlib import Path
+from typing import Any
 
+import nibabel as nib
 import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy import stats
 from sequester.nodes.errors import InputError
-from sequester.nodes.masks import Strongest, Threshold
-from sequester.nodes.procedure import Prepared, Procedure
-from sequester.nodes.results import (
-    cross_fitted_result,
-    exploratory_result,
-    fixed_region_result,
-    p_text,
-)
+from sequester.nodes.fixed import fixed_region_result
+from sequester.nodes.folds import KFold, LeaveOneOut
+from sequester.nodes.groupmaps import Missing
+from sequester.nodes.heldout import cross_fitted_result
+from sequester.nodes.images import Geometry, write_map
+from sequester.nodes.interfaces import ChooseByFold, Extract
+from sequester.nodes.masks import PeakSphere, Strongest, Threshold
+from sequester.nodes.procedure import READ_BY, Prepared, Procedure
+from sequester.nodes.results import exploratory_result, p_text
 from sequester.nodes.roi import (
+    SUMMARIES,
+    block_values,
     count_at_least,
     exchange_p,
+    first_component,
     flip_interval,
     fold_interval,
     holm,
@@ -29,11 +36,15 @@ from sequester.nodes.roi import (
     one_sample_t,
     per_person,
     region_mean,
+    region_value,
     sign_flip_t,
     small_sample_factor,
     studentised,
 )
+from sequester.nodes.rules import Branch, Inputs, Leaf
 from sequester.nodes.space import Grid
+from sequester.nodes.touch import Touch
+from sklearn.decomposition import TruncatedSVD
 from statsmodels.stats.multitest import multipletests
 from statsmodels.stats.weightstats import DescrStatsW
 
@@ -218,6 +229,290 @@ def test_a_region_is_read_where_there_is_data(cells):
     assert region_mean(values, np.ones_like(present)) == region_mean(values)
 
 
+SEEDS = st.integers(0, 2**32 - 1)
+
+
+@given(st.integers(1, 40), SEEDS)
+def test_median_and_weighted_mean_are_numpys_over_the_features_with_data(n, seed):
+    rng = np.random.default_rng(seed)
+    x = rng.standard_normal(n).astype(np.float32)
+    there = rng.uniform(size=n) < 0.7
+    weights = np.where(rng.uniform(size=n) < 0.3, 0, rng.uniform(size=n))
+    full = x.astype(float)[there]
+    median, coverage = region_value(x, there, "median")
+    value, share = region_value(x, there, "weighted", weights)
+    if there.any():
+        assert (median, coverage) == (np.median(full), there.mean())
+    else:
+        assert (median, coverage) == (0, 0)
+    if weights[there].any():
+        assert value == pytest.approx(np.average(full, weights=weights[there]), rel=1e-9, abs=1e-12)
+        assert share == pytest.approx(weights[there].sum() / weights.sum(), rel=1e-9)
+    else:
+        assert (value, share) == (0, 0)
+    # Equal weights are a mean, and only their ratios count.
+    mean, _ = region_value(x, there)
+    assert region_value(x, there, "weighted", np.full(n, 0.3))[0] == pytest.approx(mean, abs=1e-12)
+    again = region_value(x, there, "weighted", 8 * weights)
+    assert again == pytest.approx((value, share), rel=1e-12, abs=1e-15)
+
+
+@given(st.integers(1, 6), st.integers(2, 40), SEEDS)
+def test_scores_are_those_of_a_singular_value_decomposition(n_maps, n, seed):
+    rng = np.random.default_rng(seed)
+    maps = rng.uniform(0.2, 2, (n_maps, 1)) * rng.standard_normal(n) + 0.2 * rng.standard_normal(
+        (n_maps, n)
+    )
+    maps += 0.5
+    there = rng.uniform(size=maps.shape) < 0.95
+    kept = maps[:, there.all(axis=0)]
+    scores = first_component(np.where(there, maps, 99), there)
+    if not kept.size:
+        assert not scores.any()
+        return
+    u, s, v = np.linalg.svd(kept, full_matrices=False)
+    expected = u[:, 0] * s[0] * np.sign(v[0].sum()) / np.sqrt(kept.shape[1])
+    np.testing.assert_allclose(scores, expected, atol=1e-9)
+    if min(kept.shape) > 1:
+        theirs = TruncatedSVD(1, algorithm="arpack", random_state=0).fit_transform(kept)[:, 0]
+        np.testing.assert_allclose(
+            np.abs(scores), np.abs(theirs) / np.sqrt(kept.shape[1]), atol=1e-9
+        )
+
+
+@given(st.integers(1, 5), st.integers(1, 30), st.sampled_from([1e-150, 1.0, 1e150]), SEEDS)
+def test_scores_follow_signs_and_order_of_the_maps_to_the_last_bit(n_maps, n, unit, seed):
+    rng = np.random.default_rng(seed)
+    maps = rng.standard_normal((n_maps, n)) * unit
+    maps[rng.uniform(size=maps.shape) < 0.2] = 0
+    if n_maps > 2:
+        maps[1] = -maps[0]  # no order of the two but by their signs
+    scores = first_component(maps)
+    assert np.isfinite(scores).all()
+    order = rng.permutation(n_maps)
+    assert (first_component(maps[order]) == scores[order]).all()
+    assert (first_component(-maps) == -scores).all()
+    for summary in SUMMARIES:
+        value, coverage = region_value(maps[0], None, summary, np.ones(n))
+        assert region_value(-maps[0], None, summary, np.ones(n)) == (-value, coverage)
+
+
+def test_scores_of_maps_whose_component_can_be_told_by_hand():
+    assert first_component(np.full((1, 7), 0.1)) == pytest.approx([0.1], rel=1e-15)
+    assert first_component(np.full((3, 7), -0.1)) == pytest.approx([-0.1] * 3, rel=1e-15)
+    # One map: the root mean square, with the sign of the mean.
+    for x in ([3.0, 4.0, -1.0], [-3.0, -4.0, 1.0]):
+        rms = np.sqrt(26 / 3) * np.sign(sum(x))
+        assert first_component(np.array([x])) == pytest.approx([rms], rel=1e-14)
+        assert region_value(np.array(x), None, "component") == pytest.approx((rms, 1), rel=1e-14)
+    # Weights that sum to 0: the first that is not 0 is positive.
+    assert first_component(np.array([[0.0, -2.0, 2.0]])) == pytest.approx([-np.sqrt(8 / 3)])
+    # Not centred: maps that differ in height alone have their heights for scores.
+    assert first_component(np.outer([1.0, 2.0, -4.0], np.ones(9))) == pytest.approx([1, 2, -4])
+    for nothing in (np.zeros((2, 3)), np.zeros((2, 0))):
+        assert first_component(nothing).tolist() == [0, 0]
+    assert first_component(np.ones((2, 2)), np.array([[True, False], [False, True]])).any() == 0
+
+
+def test_a_block_is_read_over_what_all_its_maps_have():
+    maps = np.array([[1.0, 2.0, 3.0, 4.0], [2.0, 4.0, 9.0, 8.0]])
+    there = np.array([[True, True, True, True], [True, True, False, True]])
+    values, coverage = block_values(maps, there, "component")
+    assert values == pytest.approx(np.array([1, 2]) * np.sqrt(21 / 3))
+    assert coverage.tolist() == [0.75, 0.75]
+    values, coverage = block_values(maps, there, "median")
+    assert (values.tolist(), coverage.tolist()) == ([2.5, 4.0], [1.0, 0.75])
+    with pytest.raises(ValueError, match="summary is one of mean, median, weighted, component"):
+        block_values(maps, there, "mode")
+    with pytest.raises(ValueError, match="needs the weights"):
+        region_value(maps[0], None, "weighted")
+
+
+# -- values from files -----------------------------------------------------------------------
+
+GEOMETRY = Geometry((5, 5, 5), tuple(map(tuple, np.diag([2.0, 2.0, 2.0, 1.0]).tolist())))
+
+
+@pytest.fixture
+def files(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> list[str]:
+    """Nine maps, one of them in float64, each without data somewhere."""
+    monkeypatch.setenv("NO_ET", "1")  # the engine would ask the network for its latest version
+    rng = np.random.default_rng(5)
+    made = []
+    for i in range(9):
+        data = rng.normal(0.5, 1, GEOMETRY.shape)
+        data[rng.uniform(size=data.shape) < 0.1] = np.nan
+        kind = np.float64 if i == 4 else np.float32
+        made.append(str(write_map(tmp_path / f"map{i}.nii", data.astype(kind), GEOMETRY)))
+    return made
+
+
+def run(interface: type, folder: Path, **inputs: Any) -> Any:
+    work = folder / f"run{len(list(folder.iterdir()))}"
+    work.mkdir()
+    return interface(**inputs).run(cwd=str(work)).outputs
+
+
+def extracted(folder: Path, **inputs: Any) -> Any:
+    return run(Extract, folder, clearance="a test's", **inputs)
+
+
+def mask_file(folder: Path, mask: Any) -> str:
+    path = folder / f"mask{len(list(folder.iterdir()))}.nii"
+    return str(write_map(path, np.asarray(mask, dtype=np.float32), GEOMETRY))
+
+
+@pytest.mark.parametrize("summary", READ_BY)
+@pytest.mark.parametrize("tail", ["positive", "negative"])
+@pytest.mark.parametrize(
+    ("rule", "labels", "scheme"),
+    [
+        (Threshold(p=0.2), list("ihgfedcba"), LeaveOneOut()),
+        (Strongest(fraction=0.1), list("abcabdcea"), LeaveOneOut()),
+        (PeakSphere(4.0), list("aabbccdde"), KFold(2)),
+    ],
+)
+def test_extracted_values_are_the_procedures_own_to_the_last_bit(
+    rule, labels, scheme, summary, tail, files, tmp_path
+):
+    plan = Procedure(rule, scheme, tail, missing=Missing(min_fraction=0.5), summary=summary)
+    chosen = run(ChooseByFold, tmp_path, in_files=files, labels=labels, procedure=plan)
+    read = extracted(
+        tmp_path,
+        in_files=files,
+        labels=labels,
+        mask_files=chosen.row_masks,
+        summary=summary,
+        missing=plan.missing,
+    )
+    prepared = Prepared(
+        plan,
+        np.stack([_load(path) for path in files]),
+        labels,
+        Grid(GEOMETRY.shape, GEOMETRY.affine),
+        files,
+    )
+    outcome = prepared.outcome()
+    assert len(set(outcome.values)) > 7
+    assert tuple(read.values) == outcome.values
+    assert tuple(read.coverage) == outcome.coverage
+
+
+def _load(path: str) -> np.ndarray:
+    return np.asarray(nib.load(path).dataobj, dtype=np.float64).ravel()
+
+
+def test_a_weighted_mean_takes_its_weights_from_the_mask(files, tmp_path):
+    weights = np.random.default_rng(1).uniform(size=GEOMETRY.shape)
+    weights[:2] = 0
+    read = extracted(
+        tmp_path,
+        in_files=files,
+        labels=list("abcdefghi"),
+        mask_files=[mask_file(tmp_path, weights)],
+        summary="weighted",
+    )
+    stored = weights.astype(np.float32).ravel().astype(float)
+    for path, value, share in zip(files, read.values, read.coverage, strict=True):
+        x = _load(path)
+        there = np.isfinite(x) & (stored > 0)
+        assert value == pytest.approx(np.average(x[there], weights=stored[there]), rel=1e-12)
+        assert share == pytest.approx(stored[there].sum() / stored.sum(), rel=1e-12)
+    assert read.sizes == [75] * 9
+
+
+@pytest.mark.parametrize("bad", [np.nan, -0.5, np.inf])
+def test_what_cannot_be_a_weight_is_refused(bad, files, tmp_path):
+    weights = np.ones(GEOMETRY.shape)
+    weights[0, 0, :2] = bad
+    inputs = {
+        "in_files": files,
+        "labels": list("abcdefghi"),
+        "mask_files": [mask_file(tmp_path, weights)],
+    }
+    with pytest.raises(InputError, match=r"cannot be weights .*mask.*: expected no .* got 2 such"):
+        extracted(tmp_path, summary="weighted", **inputs)
+    extracted(tmp_path, summary="mean", **inputs)
+
+
+def test_a_component_is_that_of_the_maps_of_one_label_in_one_mask(files, tmp_path):
+    first = np.zeros(GEOMETRY.shape)
+    first[1:4] = 1
+    second = np.ones(GEOMETRY.shape) - first
+    one, other = mask_file(tmp_path, first), mask_file(tmp_path, second)
+    read = extracted(
+        tmp_path,
+        in_files=files[:5],
+        labels=list("abaab"),
+        mask_files=[one, one, one, other, other],
+        summary="component",
+    )
+    for rows, mask in (([0, 2], first), ([1], first), ([3], second), ([4], second)):
+        maps = np.stack([_load(files[row]) for row in rows])[:, mask.ravel() > 0]
+        kept = maps[:, np.isfinite(maps).all(axis=0)]
+        u, s, v = np.linalg.svd(kept, full_matrices=False)
+        scores = u[:, 0] * s[0] * np.sign(v[0].sum()) / np.sqrt(kept.shape[1])
+        assert [read.values[row] for row in rows] == pytest.approx(scores, rel=1e-9)
+        assert [read.coverage[row] for row in rows] == [kept.shape[1] / maps.shape[1]] * len(rows)
+
+
+def test_maps_with_too_little_data_are_all_named_with_their_coverage(files, tmp_path):
+    mask = np.zeros(GEOMETRY.shape)
+    mask[2] = 1
+    inputs = {
+        "in_files": files,
+        "labels": list("abcdefghi"),
+        "mask_files": [mask_file(tmp_path, mask)],
+    }
+    shares = extracted(tmp_path, **inputs).coverage
+    least = sorted(shares)[6]  # met by three: a share of just that is enough
+    short = [f"{x} {s:.3g}" for x, s in zip("abcdefghi", shares, strict=True) if s < least]
+    assert len(short) > 5
+    with pytest.raises(InputError) as caught:
+        extracted(tmp_path, min_coverage=least, **inputs)
+    assert str(caught.value) == (
+        f"{len(short)} of 9 maps have too little data in their masks: "
+        f"expected coverage of at least {least:g}, "
+        f"got {', '.join(short[:5])} and {len(short) - 5} more; "
+        "leave them out with an exclude_reason, or lower min_coverage"
+    )
+    # An empty mask has nothing to cover.
+    inputs["mask_files"] = [mask_file(tmp_path, 0 * mask)]
+    assert extracted(tmp_path, min_coverage=0.9, **inputs).values == [0.0] * 9
+
+
+def test_labels_and_maps_must_pair_up(files, tmp_path):
+    with pytest.raises(InputError, match="labels and maps do not pair up: got 1, 2"):
+        extracted(tmp_path, in_files=files[:2], labels=["a"], mask_files=files[:1])
+
+
+@pytest.mark.parametrize(
+    ("settings_", "arriving", "together"),
+    [
+        ({"summary": "mean", "labels": list("aba")}, (), [{0}, {1}, {2}]),
+        ({"summary": "component", "labels": list("aba")}, (), [{0, 2}, {1}, {0, 2}]),
+        ({"summary": "mean", "labels": list("aba")}, ("summary",), [{0, 2}, {1}, {0, 2}]),
+        ({"summary": "component"}, ("labels",), [{0, 1, 2}] * 3),
+        ({"summary": "component", "labels": list("ab")}, (), [{0, 1, 2}] * 3),
+    ],
+)
+def test_a_component_touches_the_other_maps_of_its_label(settings_, arriving, together):
+    masks = Branch([Leaf(Touch(values=8 << i)) for i in range(3)])
+    data = Branch([Leaf(Touch(values=1 << i)) for i in range(3)])
+    inputs = Inputs(
+        {"mask_files": masks, "in_files": data}, settings_, "extract", frozenset(arriving)
+    )
+    for output in ("values", "coverage"):
+        tree = Extract.touch_rules[output](inputs)
+        assert isinstance(tree, Branch)
+        for child, rows in zip(tree.children, together, strict=True):
+            assert isinstance(child, Leaf)
+            assert child.touch.values == sum(9 << row for row in rows)
+            # The marks by which a statistic is judged are those of the meetings.
+            marks = {(mark.where, mark.mask, mark.data) for mark in child.touch.extractions}
+            assert marks == {(f"extract[{row}]", 8 << row, 1 << row) for row in rows}
+
+
 def test_rows_of_a_person_are_averaged():
     assert per_person([1.0, 2.0, 4.0, 0.0], ["b", "a", "b", "c"]) == [2.0, 2.5, 0.0]
 
@@ -321,7 +616,7 @@ def test_an_unknown_interval_is_refused():
 
 def test_a_fixed_region_has_students_t(checks):
     difference = np.subtract(checks["sleep"]["g2"], checks["sleep"]["g1"])
-    made = fixed_region_result(difference, ("hollow", "a-priori", "ring"), 31, [1.0] * 9 + [0.5])
+    made = fixed_region_result(difference, ("hollow", "a-priori", "ring"), [31], [1.0] * 9 + [0.5])
     paired = checks["sleep"]["paired"]
     assert [made.estimate, made.t, made.p] == pytest.approx(
         [paired["mean"], paired["t"], paired["p"]], rel=1e-12

@@ -9,14 +9,39 @@ import numpy as np
 from nipype.interfaces.base import File, InputMultiObject
 
 from ..errors import InputError, Refused
+from ..fixed import (
+    CHOSEN_ON,
+    fixed_region_result,
+    group_mask_result,
+    own_mask_result,
+)
 from ..groupmaps import Missing
 from ..images import check_same_grid, read_map
-from ..results import fixed_region_result, own_mask_result
-from ..roi import per_person, region_mean
-from ..rules import Meeting, Statistic, only
+from ..roi import SUMMARIES, Floats, block_values, per_person
+from ..rules import Branch, Inputs, Leaf, Meeting, Rule, Statistic, Tree, joined, leaves, only
 from .base import InputSpec, SequesterInterface, TraitedSpec, traits, write_json
 
-_MEETING = Meeting(mask="mask_files", data="in_files", biased="exploratory")
+_MEETING = Meeting(
+    mask="mask_files", data="in_files", biased="exploratory", these_only="these_subjects"
+)
+
+
+def _with_block(inputs: Inputs) -> Tree:
+    """As the meeting has it; a component also touches the other rows of its label."""
+    tree = _MEETING.rule.derive(inputs)
+    component = inputs.settings.get("summary") == "component" or "summary" in inputs.arriving
+    if isinstance(tree, Leaf) or not component:
+        return tree
+    labels = inputs.settings.get("labels", [])
+    if "labels" in inputs.arriving or len(labels) != len(tree.children):
+        labels = [""] * len(tree.children)  # nobody can be told apart
+    of_label: dict[str, list[Leaf]] = {}
+    for label, child in zip(labels, tree.children, strict=True):
+        of_label.setdefault(label, []).extend(leaves(child))
+    return Branch([joined(of_label[label]) for label in labels])
+
+
+_VALUES = Rule(_MEETING.rule.names, _with_block)
 
 
 class _ExtractInput(InputSpec):
@@ -26,23 +51,43 @@ class _ExtractInput(InputSpec):
     in_files = traits.List(File(exists=True), mandatory=True, desc="maps to read")
     labels = traits.List(traits.Str, mandatory=True, desc="per map: the subject")
     missing = traits.Instance(Missing, desc="what counts as no data")
+    summary = traits.Enum(
+        *SUMMARIES,
+        usedefault=True,
+        desc='how a map is read; "weighted" by the mask\'s own values, "component" together with '
+        "the other maps of its label in the same mask",
+    )
+    min_coverage = traits.Float(
+        0.0, usedefault=True, desc="least share of a mask in which each map must have data"
+    )
     exploratory = traits.Bool(
         False, usedefault=True, desc="read on the data that chose the mask; values marked biased"
+    )
+    these_subjects = traits.Bool(
+        False, usedefault=True, desc="the claim is about the tested subjects only"
     )
     clearance = traits.Str(nohash=True, desc="handed out by the guard, by nobody else")
 
 
 class _ExtractOutput(TraitedSpec):
-    values = traits.List(traits.Float, desc="per map: the mean in its mask (0 if it is empty)")
+    values = traits.List(traits.Float, desc="per map: the summary in its mask (0 if it is empty)")
     coverage = traits.List(traits.Float, desc="per map: share of the mask with data")
     sizes = traits.List(traits.Int, desc="per map: voxels in its mask")
 
 
 class Extract(SequesterInterface):
-    """The mean of each map inside its mask: the meeting of what was chosen with what is tested.
+    """One value of each map inside its mask: the meeting of what was chosen with what is tested.
 
     Runs only under the guard (``workflow.run(plugin=GuardPlugin(study))``), on a warm cache
-    too. For a quick look without a workflow, use `sequester.nodes.roi.region_mean`.
+    too. For a quick look without a workflow, use `sequester.nodes.roi.region_value`.
+
+    Raises
+    ------
+    Refused
+        Without clearance.
+    InputError
+        When masks, labels and maps do not pair up; for a negative or missing weight; and when
+        maps have data in less than `min_coverage` of their (non-empty) masks.
     """
 
     input_spec = _ExtractInput
@@ -50,8 +95,8 @@ class Extract(SequesterInterface):
     _always_run = True
     meeting = _MEETING
     touch_rules = {
-        "values": _MEETING.rule,
-        "coverage": _MEETING.rule,
+        "values": _VALUES,
+        "coverage": _VALUES,
         "sizes": only("mask_files", ignored=("in_files",), single=False),
     }
 
@@ -61,23 +106,75 @@ class Extract(SequesterInterface):
                 "this extraction has no clearance: run the workflow under the guard, "
                 "workflow.run(plugin=GuardPlugin(study))"
             )
-        masks, maps = self.inputs.mask_files, self.inputs.in_files
+        masks, maps, labels = self.inputs.mask_files, self.inputs.in_files, self.inputs.labels
         if len(masks) not in (1, len(maps)):
             raise InputError("masks and maps do not pair up", got=f"{len(masks)}, {len(maps)}")
-        missing = self._value("missing") or Missing()
-        values, coverage, sizes = [], [], []
-        mask, geometry = read_map(masks[0])
-        for i, path in enumerate(maps):
-            if i and len(masks) > 1:
-                mask, geometry = read_map(masks[i])
-            data, grid = read_map(path)
-            check_same_grid((masks[min(i, len(masks) - 1)], geometry), [(path, grid)])
-            inside = data[np.isfinite(mask) & (mask != 0)]
-            mean, share = region_mean(inside, missing.present(inside))
-            values.append(mean)
-            coverage.append(share)
-            sizes.append(len(inside))
+        if len(labels) != len(maps):
+            raise InputError("labels and maps do not pair up", got=f"{len(labels)}, {len(maps)}")
+        mask_of = list(masks) * (len(maps) if len(masks) == 1 else 1)
+        missing, summary = self._value("missing") or Missing(), self.inputs.summary
+        values, coverage, sizes = [0.0] * len(maps), [0.0] * len(maps), [0] * len(maps)
+        last = ""
+        for rows in _blocks(labels, mask_of, summary):
+            path = mask_of[rows[0]]
+            if path != last:
+                mask, geometry = read_map(path)
+                inside, last = np.isfinite(mask) & (mask != 0), path
+                weights = _weights(path, mask)[inside] if summary == "weighted" else None
+            read = []
+            for row in rows:
+                data, grid = read_map(maps[row])
+                check_same_grid((path, geometry), [(maps[row], grid)])
+                read.append(data[inside])
+            block = np.stack(read)
+            made, shares = block_values(block, missing.present(block), summary, weights)
+            for row, value, share in zip(rows, made.tolist(), shares.tolist(), strict=True):
+                values[row], coverage[row], sizes[row] = value, share, block.shape[1]
+        _check_coverage(labels, coverage, sizes, self.inputs.min_coverage)
         return {"values": values, "coverage": coverage, "sizes": sizes}
+
+
+def _blocks(labels: list[str], mask_of: list[str], summary: str) -> list[list[int]]:
+    """The rows that are read together: for a component, those of one label in one mask."""
+    if summary != "component":
+        return [[row] for row in range(len(labels))]
+    found: dict[tuple[str, str], list[int]] = {}
+    for row, key in enumerate(zip(labels, mask_of, strict=True)):
+        found.setdefault(key, []).append(row)
+    return list(found.values())
+
+
+def _weights(path: str, mask: Floats) -> Floats:
+    """A mask's own values, if they can be weights."""
+    wrong = ~(np.isfinite(mask) & (mask >= 0))
+    if wrong.any():
+        raise InputError(
+            "a mask's values cannot be weights",
+            where=path,
+            expected="no negative, infinite or missing value",
+            got=f"{int(wrong.sum())} such voxels, {float(mask[wrong][0]):g} the first",
+            remedy='set them to 0, or use summary = "mean"',
+        )
+    return mask
+
+
+def _check_coverage(
+    labels: list[str], coverage: list[float], sizes: list[int], least: float
+) -> None:
+    """Whether every map has data in enough of its mask."""
+    short = [
+        f"{label} {share:.3g}"
+        for label, share, size in zip(labels, coverage, sizes, strict=True)
+        if size and share < least
+    ]
+    if short:
+        more = f" and {len(short) - 5} more" if len(short) > 5 else ""
+        raise InputError(
+            f"{len(short)} of {len(labels)} maps have too little data in their masks",
+            expected=f"coverage of at least {least:g}",
+            got=", ".join(short[:5]) + more,
+            remedy="leave them out with an exclude_reason, or lower min_coverage",
+        )
 
 
 class _FixedInput(InputSpec):
@@ -88,7 +185,12 @@ class _FixedInput(InputSpec):
     names = traits.Tuple(
         traits.Str, traits.Str, traits.Str, mandatory=True, desc="roi, plan, search region"
     )
-    own_masks = traits.Bool(False, usedefault=True, desc="each subject has masks of their own")
+    chosen_on = traits.Enum(
+        *CHOSEN_ON, usedefault=True, desc="what the masks were chosen on; for the result in words"
+    )
+    these_subjects = traits.Bool(
+        False, usedefault=True, desc="the claim is about the tested subjects only"
+    )
 
 
 class _RecordOutput(TraitedSpec):
@@ -104,6 +206,7 @@ class FixedRegionTest(SequesterInterface):
     statistic = Statistic(
         values="values",
         labels="labels",
+        these_only="these_subjects",
         cure="use the whole-procedure sign flip, which chooses every fold's region again in each "
         'flip (FlipTest; in STUDY.toml the default: leave test = "t" out)',
     )
@@ -113,8 +216,12 @@ class FixedRegionTest(SequesterInterface):
         labels = self._value("labels") or list(map(str, range(len(values))))
         people, names = per_person(values, labels), self.inputs.names
         sizes, coverage = self.inputs.sizes, self.inputs.coverage
-        if self.inputs.own_masks:
-            result = own_mask_result(people, names, sizes, coverage)
+        chosen_on = self.inputs.chosen_on
+        if chosen_on == "nothing":
+            result = fixed_region_result(people, names, sizes, coverage)
+        elif chosen_on == "group":
+            these = self.inputs.these_subjects
+            result = group_mask_result(people, names, sizes, coverage, these_subjects=these)
         else:
-            result = fixed_region_result(people, names, sizes[0], coverage)
+            result = own_mask_result(people, names, sizes, coverage, chosen_on)
         return {"record_file": write_json(cwd / "result.json", result.as_dict())}
