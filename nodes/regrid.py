@@ -70,7 +70,7 @@ def covered_fraction(mask: Bools, source: Grid, target: Grid) -> Floats:
     [0.5, 0.0]
     """
     ratio = _voxel_mm(target) / _voxel_mm(source)
-    points = np.clip(np.ceil(2 * ratio), 2, _MOST_POINTS).astype(int)
+    points = np.clip(np.ceil(4 * ratio), 4, _MOST_POINTS).astype(int)
     steps = [(np.arange(n) + 0.5) / n - 0.5 for n in points]
     inside = np.stack(np.meshgrid(*steps, indexing="ij"), axis=-1).reshape(-1, 3)
     shifts = inside @ target.affine[:3, :3].T
