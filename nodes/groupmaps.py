@@ -218,7 +218,7 @@ def leave_out_maps(
     [2.135, 1.8028, 1.5894, 3.4641]
     """
     missing = missing or Missing()
-    _check_stack(effects, folds)
+    check_stack(effects, folds)
     out = np.empty((len(folds), effects.shape[1]), dtype=effects.dtype)
     least = np.array([[missing.least(len(fold.selection), kind)] for fold in folds])
     for start in range(0, effects.shape[1], _BLOCK):
@@ -264,7 +264,8 @@ def group_map(effects: Floats, missing: Missing | None = None, kind: str = "t") 
     return out
 
 
-def _check_stack(effects: Floats, folds: Sequence[Fold]) -> None:
+def check_stack(effects: Floats, folds: Sequence[Fold]) -> None:
+    """Raise a `ValueError` when the folds do not partition the rows of a float stack."""
     if effects.ndim != 2 or effects.dtype.kind != "f":
         raise ValueError(
             f"effects are (n_rows, n_features) float, not {effects.shape} {effects.dtype}"
