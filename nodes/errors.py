@@ -48,6 +48,11 @@ class InputError(SequesterError):
         tail = "; ".join(part for part in (sides, remedy) if part)
         super().__init__(f"{head}: {tail}" if tail else head)
 
+    def at(self, where: str) -> InputError:
+        """The same error at a place, unless it names one: numerics know no file."""
+        fields = {**self.fields, "where": self.fields["where"] or where}
+        return type(self)(fields.pop("what"), **fields)
+
 
 class EmptyFoldError(InputError):
     """A fold found no region and the plan said to stop."""

@@ -6,11 +6,13 @@ files are deterministic (no time stamp, fixed compression) and appear whole or n
 
 from __future__ import annotations
 
+import csv
 import gzip
 import os
 import zlib
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import lru_cache
 from pathlib import Path
 from typing import Any
 
@@ -30,7 +32,8 @@ Bools = npt.NDArray[np.bool_]
 # Affines that differ by less than this (mm, and mm per voxel) are the same grid: headers store
 # float32, and programs round-trip them through quaternions.
 _SAME_MM = 1e-3
-_PACK_LEVEL = 4
+# Masks are long runs of one value: the quickest level already packs them to a hundredth.
+_PACK_LEVEL = 1
 
 
 @dataclass(frozen=True)
@@ -77,7 +80,8 @@ def open_image(path: str | Path) -> Any:
             )
         raise InputError("no such file", where=str(path), remedy="check the path in the table")
     try:
-        image = nib.load(path)
+        # Not mapped into memory: for whole volumes, page by page takes longer than reading.
+        image = nib.load(path, mmap=False)
     except (ImageFileError, HeaderDataError, EOFError, zlib.error, OSError, ValueError) as error:
         raise _unreadable(path, error) from error
     if not isinstance(image, nib.Nifti1Image | nib.Nifti1Pair | nib.Nifti2Image):
@@ -160,7 +164,6 @@ def read_map(path: str | Path, volume: int | None = None) -> tuple[Floats, Geome
             expected="integers or floating point",
             got="complex numbers" if stored_as.kind == "c" else f"values of {stored_as}",
         )
-    dtype = np.float64 if stored_as == np.float64 else np.float32
     try:
         stored = image.dataobj
         # One volume is sliced from the file, not from the whole file's data.
@@ -168,7 +171,12 @@ def read_map(path: str | Path, volume: int | None = None) -> tuple[Floats, Geome
         data = data.reshape(geometry.shape)
     except (EOFError, zlib.error, OSError, ValueError) as error:
         raise _unreadable(Path(path), error) from error
-    return data.astype(dtype, copy=False), geometry
+    return data.astype(_read_as(image), copy=False), geometry
+
+
+def _read_as(image: Any) -> type[np.float32 | np.float64]:
+    """The type in which an image's values are read."""
+    return np.float64 if image.get_data_dtype() == np.float64 else np.float32
 
 
 def _unreadable(path: Path, error: Exception) -> InputError:
@@ -240,6 +248,118 @@ def read_mask(
     return brought.reshape(like[1].shape), like[1]
 
 
+def read_labels(path: str | Path) -> tuple[npt.NDArray[np.integer], Geometry]:
+    """A label image as integers of the type they are stored in.
+
+    Whole numbers stored as floating point or in 64 bits become int32.
+
+    Parameters
+    ----------
+    path : path of a 3-D NIfTI file
+
+    Returns
+    -------
+    labels : (x, y, z) int
+    geometry : Geometry
+
+    Raises
+    ------
+    InputError
+        When a voxel holds something else than a whole number of 32 bits.
+    """
+    image = open_image(path)
+    total, geometry = n_volumes(path, image), geometry_of(image)
+    if total > 1:
+        raise InputError(
+            "4-D label image",
+            where=str(path),
+            expected="one volume with a number per label",
+            got=f"{total} volumes",
+            remedy="split the file into 3-D images",
+        )
+    try:
+        data = np.asarray(image.dataobj).reshape(geometry.shape)
+    except (EOFError, zlib.error, OSError, ValueError) as error:
+        raise _unreadable(Path(path), error) from error
+    if data.dtype.kind in "iu" and data.dtype.itemsize <= 4:
+        return data, geometry
+    whole = np.zeros(data.shape, bool)
+    if data.dtype.kind in "iuf":
+        # Also false for NaN, infinities and what 32 bits do not hold.
+        held = np.iinfo(np.int32)
+        whole = (data >= held.min) & (data <= held.max) & (data == np.rint(data))
+    if not whole.all():
+        raise InputError(
+            "label image with something else than labels",
+            where=str(path),
+            expected="whole numbers of 32 bits at all voxels",
+            got=f"{data[~whole][0]} and the like ({data.dtype}) at {(~whole).sum()} voxels",
+            remedy="give the image of labels (dseg), not of probabilities or values",
+        )
+    return data.astype(np.int32), geometry
+
+
+def read_label_table(path: str | Path) -> list[tuple[int, str]]:
+    """The numbers and names of a label table (BIDS ``dseg.tsv``); rows without a name are left out.
+
+    Parameters
+    ----------
+    path : path of a TSV file with the columns index and name
+
+    Returns
+    -------
+    list of (number, name)
+
+    Raises
+    ------
+    InputError
+        When columns or cells are wrong; names the line.
+    """
+    try:
+        with Path(path).open(newline="", encoding="utf-8-sig") as stream:
+            # BIDS tables know no quoting: a quotation mark is a character.
+            lines = list(csv.reader(stream, delimiter="\t", quoting=csv.QUOTE_NONE))
+    except (OSError, UnicodeDecodeError, csv.Error) as error:
+        raise InputError(
+            "unreadable label table", where=str(path), expected="a TSV in UTF-8", got=str(error)
+        ) from error
+    header = [cell.strip() for cell in lines[0]] if lines else []
+    if not {"index", "name"} <= set(header):
+        raise InputError(
+            "label table without index and name",
+            where=str(path),
+            expected="tab-separated columns index and name, and any others",
+            got=" ".join(header) or "an empty file",
+        )
+    table = []
+    for number, cells in enumerate(lines[1:], 2):
+        if not any(cell.strip() for cell in cells):
+            continue
+        where = f"{path}, line {number}"
+        if len(cells) != len(header):
+            raise InputError(
+                "row of another length",
+                where=where,
+                expected=f"{len(header)} tab-separated cells",
+                got=str(len(cells)),
+            )
+        row = dict(zip(header, (cell.strip() for cell in cells), strict=True))
+        if not row["index"].removeprefix("-").isdecimal():
+            raise InputError(
+                "index is no whole number", where=where, expected="0, 1, ...", got=row["index"]
+            )
+        if row["name"] not in ("", "n/a"):
+            table.append((int(row["index"]), row["name"]))
+    return table
+
+
+def table_beside(path: str | Path) -> Path | None:
+    """The label table of the same name beside a label image; None when there is none."""
+    path = Path(path)
+    table = path.with_name(Path(path.name.removesuffix(".gz")).stem + ".tsv")
+    return table if table.is_file() else None
+
+
 def stack(
     paths: Sequence[str | Path], inside: Bools | None = None
 ) -> tuple[Floats, Grid, Geometry]:
@@ -260,25 +380,25 @@ def stack(
     geometry : Geometry
         Of the files.
     """
-    effects: Floats | None = None
-    first: tuple[str, Geometry] | None = None
+    if not paths:
+        raise InputError("no effect map", remedy="check the study table and the rows it leaves out")
+    image = open_image(paths[0])
+    first = (str(paths[0]), geometry_of(image))
+    shape = first[1].shape
+    if inside is not None and inside.shape != shape:
+        raise ValueError(f"mask of shape {inside.shape} for maps of {shape}")
+    # Where the features lie in a file, which holds x fastest.
+    number = np.arange(int(np.prod(shape))).reshape(shape, order="F")
+    places = number.ravel() if inside is None else number[inside]
+    # Filled in place: a large study is held once, not once more while it is stacked.
+    effects: Floats = np.zeros((len(paths), len(places)), _read_as(image))
     for i, path in enumerate(paths):
         data, geometry = read_map(path)
-        if first is None:
-            first = (str(path), geometry)
-            if inside is not None and inside.shape != geometry.shape:
-                raise ValueError(f"mask of shape {inside.shape} for maps of {geometry.shape}")
         check_same_grid(first, [(str(path), geometry)])
-        row = data.ravel() if inside is None else data[inside]
-        if effects is None:
-            # Filled in place: a large study is held once, not once more while it is stacked.
-            effects = np.zeros((len(paths), row.size), row.dtype)
-        elif row.dtype.itemsize > effects.dtype.itemsize:
-            effects = effects.astype(row.dtype)
-        effects[i] = row
-    if first is None or effects is None:
-        raise InputError("no effect map", remedy="check the study table and the rows it leaves out")
-    return effects, Grid(first[1].shape, first[1].affine, inside), first[1]
+        if data.dtype.itemsize > effects.dtype.itemsize:
+            effects = effects.astype(data.dtype)
+        effects[i] = data.ravel(order="F")[places]
+    return effects, Grid(shape, first[1].affine, inside), first[1]
 
 
 def write_map(path: str | Path, data: npt.NDArray[Any], geometry: Geometry) -> Path:
@@ -296,23 +416,43 @@ def write_map(path: str | Path, data: npt.NDArray[Any], geometry: Geometry) -> P
         Absolute.
     """
     path = Path(path).absolute()
-    stored = data.astype(np.uint8) if data.dtype == bool else data
-    image = nib.Nifti1Image(stored, geometry.affine)
-    image.header.set_xyzt_units("mm")
-    # Write unscaled: nibabel would otherwise leave slope and intercept to the data's range.
-    image.header.set_slope_inter(1, 0)
-    blob = image.to_bytes()
+    if data.dtype == bool:
+        stored = data.view(np.uint8)
+    else:
+        stored = data.astype(data.dtype.newbyteorder("="), copy=False)
+    # The file holds x fastest: what was read from such a file is not copied on the way.
+    volume = np.ascontiguousarray(stored.T)
+    header = _header(stored.shape, stored.dtype, geometry)
     if path.name.endswith(".gz"):
-        blob = gzip.compress(blob, compresslevel=_PACK_LEVEL, mtime=0)
-    write_bytes(path, blob)
+        blob = b"".join([header, volume.data])
+        write_bytes(path, gzip.compress(blob, compresslevel=_PACK_LEVEL, mtime=0))
+    else:
+        write_bytes(path, header, volume.data)
     return path
 
 
-def write_bytes(path: Path, blob: bytes) -> None:
-    """Write a file under another name, then give it its own: never half a file."""
+@lru_cache(maxsize=16)
+def _header(shape: tuple[int, ...], dtype: np.dtype[Any], geometry: Geometry) -> bytes:
+    """What stands before the data in a NIfTI-1 file: the header, and that no extension follows."""
+    image = nib.Nifti1Image(np.broadcast_to(np.zeros((), dtype), shape), geometry.affine)
+    image.header.set_xyzt_units("mm")
+    # Write unscaled: nibabel would otherwise leave slope and intercept to the data's range.
+    image.header.set_slope_inter(1, 0)
+    image.header.set_data_offset(image.header.single_vox_offset)
+    return bytes(image.header.binaryblock) + bytes(4)
+
+
+def write_bytes(path: Path, blob: bytes, *more: memoryview) -> None:
+    """Write a file under another name, then give it its own: never half a file.
+
+    What follows the first part is not copied in memory to be joined to it.
+    """
     part = path.with_name(f".{path.name}.part")
     try:
         part.write_bytes(blob)
+        for piece in more:
+            with part.open("ab") as stream:
+                stream.write(piece)
         part.replace(path)
     except OSError:
         part.unlink(missing_ok=True)

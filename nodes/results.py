@@ -7,21 +7,13 @@ of interval, p and error bar.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Sequence
 from dataclasses import asdict, dataclass
 from typing import Any
 
 import numpy as np
 
-from .errors import InputError
-from .procedure import FlipTest, Outcome, Prepared
-from .roi import Interval, TTest, flip_interval, fold_interval, jackknife_interval, one_sample_t
-
-INTERVALS = ("flips", "jackknife", "folds")
-
-FLIP_NULL = (
-    "the subjects' maps are independent and jointly symmetric about zero over the search region"
-)
+from .roi import Interval, TTest
 
 
 @dataclass(frozen=True)
@@ -110,199 +102,6 @@ def estimate_texts(estimate: float, low: float, high: float) -> tuple[str, str, 
     return f"{estimate:.{digits}f}", f"{low:.{digits}f}", f"{high:.{digits}f}"
 
 
-def cross_fitted_result(
-    ready: Prepared,
-    names: tuple[str, str, str],
-    n_flips: int,
-    seed: int,
-    interval: str = "flips",
-    progress: Callable[[int, int], None] | None = None,
-) -> tuple[RoiResult, Outcome, FlipTest]:
-    """Everything the cross-fitted plans may say: estimate, interval, whole-procedure p.
-
-    Parameters
-    ----------
-    ready : Prepared
-        The procedure on the study's effects.
-    names : (roi, plan, search region)
-    n_flips, seed : int
-    interval : {"flips", "jackknife", "folds"}
-    progress : callable, optional
-    """
-    if interval not in INTERVALS:
-        raise InputError(
-            "unknown interval", expected=f"one of {', '.join(INTERVALS)}", got=repr(interval)
-        )
-    outcome = ready.outcome()
-    test = ready.flip_test(n_flips, seed, progress)
-    people = ready.per_person(outcome.values)
-    if interval == "flips":
-        made = flip_interval(people, test.abs_t_quantile)
-    elif interval == "folds":
-        made = fold_interval(people, len(ready.folds))
-    else:
-        made = jackknife_interval(outcome.estimate, ready.without_each_person())
-    roi, plan, search = names
-    procedure = ready.procedure
-    kind = (
-        f"whole-procedure sign flip, all {test.n_flips} flips"
-        if test.exact
-        else f"whole-procedure sign flip, {test.n_flips} random flips"
-    )
-    sided = "greater" if procedure.tail == "positive" else "less"
-    sign = 1 if procedure.tail == "positive" else -1
-    where = f"in the search region '{search}'"
-    folds = len(ready.folds)
-    notes = [
-        f" In {len(names)} of {folds} folds the rule found nothing; there {what}."
-        for names, what in (
-            (outcome.replaced, "the strongest features stood in"),
-            (outcome.empty, "the value counts as 0"),
-        )
-        if names
-    ]
-    mean, low, high = estimate_texts(outcome.estimate, made.low, made.high)
-    sentence = (
-        f"{roi}: {procedure.describe()} {where}, chosen in {folds} folds "
-        f"({plan}); held-out mean {mean} "
-        f"({made.kind} 95 % interval {low} to {high}), {p_text(test.p)} "
-        f"({kind}, one-sided: {sided}). Null: {FLIP_NULL} '{search}'; a rejection says that there "
-        f"is a replicable effect somewhere {where}, not at any one voxel.{''.join(notes)}"
-    )
-    result = RoiResult(
-        roi=roi,
-        plan=plan,
-        rule=procedure.describe(),
-        search=search,
-        n_subjects=len(ready.people),
-        estimate=outcome.estimate,
-        target="mean true effect over the fold masks actually used",
-        biased=False,
-        interval=made,
-        t=test.t,
-        p=test.p,
-        p_kind=kind,
-        sided=sided,
-        null=FLIP_NULL,
-        dz=sign * test.t / float(np.sqrt(len(people))) if np.isfinite(test.t) and test.t else None,
-        n_flips=test.n_flips,
-        p_error=None if test.exact else float(np.sqrt(test.p * (1 - test.p) / test.n_flips)),
-        n_folds=folds,
-        n_empty=len(outcome.empty),
-        empty=outcome.empty,
-        replaced=outcome.replaced,
-        dice=_known(outcome.dice),
-        noise_dice=_known(test.noise_dice),
-        mask_sizes=outcome.sizes,
-        coverage=_least(outcome.coverage),
-        sentence=sentence,
-    )
-    return result, outcome, test
-
-
-def fixed_region_result(
-    values: Sequence[float], names: tuple[str, str, str], size: int, coverage: Sequence[float]
-) -> RoiResult:
-    """A region fixed without the tested data: the t-test and its interval are right.
-
-    Examples
-    --------
-    >>> made = fixed_region_result([1.0, 2.0, 3.0], ("a", "given", "a"), 8, [1, 1, 1])
-    >>> made.p_kind, round(made.p, 4)
-    ("Student's t, two-sided", 0.0742)
-    """
-    test = one_sample_t(np.asarray(values))
-    roi, _, search = names
-    interval = test.interval
-    mean, low, high = estimate_texts(test.mean, interval.low, interval.high)
-    return _of_t(
-        test,
-        names,
-        len(values),
-        rule="the region as given",
-        target="population mean in this region",
-        p_kind="Student's t, two-sided",
-        null="the population mean in the region is zero",
-        mask_sizes=(size,),
-        coverage=_least(coverage),
-        sentence=(
-            f"{roi}: mean {mean} in the a-priori region '{search}' (95 % interval "
-            f"{low} to {high}), t({test.df}) = {test.t:.2f}, "
-            f"{p_text(test.p)}, two-sided. Null: the population mean in this region is zero "
-            "(near-normal values)."
-        ),
-    )
-
-
-def own_mask_result(
-    values: Sequence[float],
-    names: tuple[str, str, str],
-    sizes: Sequence[int],
-    coverage: Sequence[float],
-) -> RoiResult:
-    """A mask of each subject's own, chosen on their other runs: t across subjects, run level.
-
-    Parameters
-    ----------
-    values : sequence of float, one per subject
-        Averaged over the subject's runs.
-    names : (roi, plan, search region)
-    sizes, coverage : sequence, one per run
-
-    Examples
-    --------
-    >>> made = own_mask_result([1.0, 2.0, 3.0], ("a", "leave-one-run-out", "b"), [8, 8], [1, 1])
-    >>> made.null
-    'no subject has a replicable effect in the search region'
-    """
-    test = one_sample_t(np.asarray(values))
-    roi, plan, search = names
-    interval = test.interval
-    mean, low, high = estimate_texts(test.mean, interval.low, interval.high)
-    empty = sum(size == 0 for size in sizes)
-    note = f" {empty} of {len(sizes)} masks are empty; their value counts as 0." if empty else ""
-    return _of_t(
-        test,
-        names,
-        len(values),
-        rule="each subject's own mask, from their other runs",
-        target="mean over these subjects of the effect in their own masks",
-        p_kind="Student's t across subjects, two-sided",
-        null="no subject has a replicable effect in the search region",
-        n_folds=len(sizes),
-        n_empty=empty,
-        mask_sizes=tuple(sizes),
-        coverage=_least(coverage),
-        sentence=(
-            f"{roi}: mean {mean} in each subject's own mask in the search region '{search}', "
-            f"chosen on their other runs ({plan}; 95 % interval {low} to {high}), "
-            f"t({test.df}) = {test.t:.2f}, {p_text(test.p)}, two-sided. Null: no subject has a "
-            "replicable effect there (run level: what protects is that run noise is independent). "
-            "It speaks of a population mean only if the effects that choose and those that are "
-            f"tested are uncorrelated across subjects.{note}"
-        ),
-    )
-
-
-def _of_t(test: TTest, names: tuple[str, str, str], n: int, **more: Any) -> RoiResult:
-    """What every record of a two-sided t-test holds."""
-    roi, plan, search = names
-    return RoiResult(
-        roi=roi,
-        plan=plan,
-        search=search,
-        n_subjects=n,
-        estimate=test.mean,
-        biased=False,
-        interval=test.interval,
-        t=test.t,
-        p=test.p,
-        sided="two-sided",
-        dz=test.dz,
-        **more,
-    )
-
-
 def exploratory_result(
     values: Sequence[float],
     names: tuple[str, str, str],
@@ -343,7 +142,7 @@ def exploratory_result(
         target="none: chosen and read on the same data, so inflated by selection",
         biased=True,
         mask_sizes=(size,),
-        coverage=_least(coverage),
+        coverage=least(coverage),
         sentence=(
             f"{roi}: exploratory {said} on the data it is read from; "
             "no interval, no p-value and no error bar can be given."
@@ -352,10 +151,35 @@ def exploratory_result(
     )
 
 
-def _least(coverage: Sequence[float]) -> float | None:
+def of_t(test: TTest, names: tuple[str, str, str], n: int, **more: Any) -> RoiResult:
+    """What every record of a two-sided t-test holds."""
+    roi, plan, search = names
+    return RoiResult(
+        roi=roi,
+        plan=plan,
+        search=search,
+        n_subjects=n,
+        estimate=test.mean,
+        biased=False,
+        interval=test.interval,
+        t=test.t,
+        p=test.p,
+        sided="two-sided",
+        dz=test.dz,
+        **more,
+    )
+
+
+def distinct(sizes: Sequence[int]) -> tuple[int, ...]:
+    """One size when all masks have it, else every mask's."""
+    return (sizes[0],) if len(set(sizes)) == 1 else tuple(sizes)
+
+
+def least(coverage: Sequence[float]) -> float | None:
     """The least coverage of a mask that holds something of its subject."""
     return min((share for share in coverage if share > 0), default=None)
 
 
-def _known(value: float) -> float | None:
+def known(value: float) -> float | None:
+    """A value, or None for one that is not there."""
     return None if np.isnan(value) else value

@@ -190,15 +190,29 @@ def only(
     )
 
 
-def each(*fields: str, shared: Sequence[str] = (), geometry: Sequence[str] = ()) -> Rule:
-    """Element i touches item i of each field, and the shared inputs whole."""
+def each(
+    *fields: str,
+    shared: Sequence[str] = (),
+    geometry: Sequence[str] = (),
+    one_or_each: Sequence[str] = (),
+) -> Rule:
+    """Element i touches item i of each field, and the shared inputs whole.
+
+    A field of `one_or_each` with a single item is shared, and else like the others.
+    """
 
     def derive(inputs: Inputs) -> Tree:
+        listed = [inputs.trees[name] for name in one_or_each if name in inputs.trees]
+        single = [t for t in listed if isinstance(t, Branch) and len(t.children) == 1]
         trees = [inputs.trees[name] for name in fields if name in inputs.trees]
-        common = _all(inputs, shared, geometry)
+        trees += [tree for tree in listed if tree not in single]
+        common = [
+            *_all(inputs, shared, geometry),
+            *(leaf for tree in single for leaf in leaves(tree)),
+        ]
         n = count(trees)
         if n is None:
-            return joined([*_all(inputs, fields), *common], single=False)
+            return joined([*_all(inputs, [*fields, *one_or_each]), *common], single=False)
         return Branch(
             [
                 joined([*(leaf for tree in trees for leaf in leaves(element(tree, i))), *common])
@@ -206,7 +220,7 @@ def each(*fields: str, shared: Sequence[str] = (), geometry: Sequence[str] = ())
             ]
         )
 
-    return Rule(frozenset({*fields, *shared, *geometry}), derive)
+    return Rule(frozenset({*fields, *shared, *geometry, *one_or_each}), derive)
 
 
 def all_but_held_out(
@@ -256,6 +270,7 @@ def chosen_on(
     rows: Callable[[Mapping[str, Any]], list[tuple[int, ...]]],
     known_by: Sequence[str] = (),
     shared: Sequence[str] = (),
+    one_or_each: Sequence[str] = (),
 ) -> Rule:
     """Element k touches the items of `data` that `rows` names for it, and no other.
 
@@ -269,21 +284,27 @@ def chosen_on(
         The settings that `rows` reads; when one arrives over an edge, no element can be told.
     shared : sequence of str
         Inputs that every element touches whole.
+    one_or_each : sequence of str
+        Inputs with one item for all elements, or one for each.
     """
 
     def derive(inputs: Inputs) -> Tree:
         common = _all(inputs, shared)
         tree = inputs.trees.get(data, Leaf(Touch(), single=False))
         if isinstance(tree, Leaf) or any(name in inputs.arriving for name in known_by):
-            return joined([*leaves(tree), *common], single=False)
-        return Branch(
-            [
-                joined([*(x for i in chosen for x in leaves(element(tree, i))), *common])
-                for chosen in rows(inputs.settings)
-            ]
-        )
+            return joined([*leaves(tree), *common, *_all(inputs, one_or_each)], single=False)
+        made: list[Tree] = []
+        for k, chosen in enumerate(rows(inputs.settings)):
+            parts = [x for i in chosen for x in leaves(element(tree, i))]
+            for name in one_or_each:
+                if name in inputs.trees:
+                    own = inputs.trees[name]
+                    one = isinstance(own, Branch) and len(own.children) == 1
+                    parts += leaves(own if one else element(own, k))
+            made.append(joined([*parts, *common]))
+        return Branch(made)
 
-    return Rule(frozenset({data, *shared}), derive)
+    return Rule(frozenset({data, *shared, *one_or_each}), derive)
 
 
 @dataclass(frozen=True)
@@ -296,11 +317,15 @@ class Meeting:
         Field names. Item i of a list of masks meets item i of the data; one mask meets all.
     biased : str
         The setting that, when true, marks the values as biased (exploration).
+    these_only : str
+        The setting that, when true, declares that the claim is about the tested subjects only,
+        not about those they were drawn from.
     """
 
     mask: str
     data: str
     biased: str = ""
+    these_only: str = ""
 
     def pairs(self, inputs: Inputs) -> list[tuple[Leaf, Leaf]]:
         """Every mask element with the data element it is judged on."""
@@ -329,6 +354,13 @@ class Meeting:
         """Value i touches mask i and data i, and carries the mark of their meeting."""
         return Rule(frozenset({self.mask, self.data}), self._values)
 
+    @property
+    def whole(self) -> Rule:
+        """All values in one file: it touches every mask and map, and carries every mark."""
+        return Rule(
+            frozenset({self.mask, self.data}), lambda inputs: joined(leaves(self._values(inputs)))
+        )
+
     def _values(self, inputs: Inputs) -> Tree:
         biased = bool(self.biased and inputs.settings.get(self.biased))
         data = inputs.trees.get(self.data)
@@ -354,6 +386,8 @@ class Statistic:
         The field with the extracted values.
     cross_fitted : bool
         Whether it stays calibrated when the masks and the data take turns.
+    these_only : str
+        The setting that, when true, declares that it speaks of the tested subjects only.
     labels : str
         The setting that says who each value belongs to, when values of one person are averaged
         before anything else; then a person's own values may have taken turns.
@@ -365,3 +399,4 @@ class Statistic:
     labels: str = ""
     cross_fitted: bool = False
     cure: str = ""
+    these_only: str = ""

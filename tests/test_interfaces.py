@@ -18,6 +18,7 @@ import numpy as np
 import pytest
 import sequester.nodes.interfaces as interfaces
 from nipype.interfaces.base import isdefined
+from sequester.nodes.design import regression, two_sample
 from sequester.nodes.errors import EmptyFoldError, InputError, Refused, SequesterError
 from sequester.nodes.folds import KFold, LeaveOneOut
 from sequester.nodes.groupmaps import Missing
@@ -61,6 +62,30 @@ def box(seed: int) -> Any:
     return np.random.default_rng(seed).random(GRID.shape) < 0.3
 
 
+def parcels(seed: int) -> Any:
+    """A label image."""
+    return np.random.default_rng(seed).integers(0, 5, GRID.shape).astype(np.int16)
+
+
+def full_but_one(seed: int) -> Any:
+    """A mask of the whole grid but for one voxel in the middle."""
+    mask = np.ones(GRID.shape, bool)
+    mask[2 + seed // 1000, 2, 2] = False
+    return mask
+
+
+def label_table(folder: Path, variant: int) -> str:
+    """A table in which another label is called Arbor."""
+    path = folder / f"labels{variant}.tsv"
+    path.write_text(f"index\tname\n{1 + variant}\tArbor\n3\tBrook\n")
+    return str(path)
+
+
+def weight(seed: int) -> Any:
+    """A mask whose values weigh."""
+    return box(seed) * np.random.default_rng(seed + 1).random(GRID.shape)
+
+
 @dataclass(frozen=True)
 class Case:
     """An interface with inputs, and what may stand in for each element of each input.
@@ -80,6 +105,23 @@ def image(make: Callable[[int], Any], number: int) -> Callable[[Path, int], str]
     def write(folder: Path, variant: int) -> str:
         data = make(1000 * variant + number)
         return str(write_map(folder / f"{make.__name__}{number}-{variant}.nii", data, GRID))
+
+    return write
+
+
+def label_image(seed: int) -> Any:
+    """A label image of parcels 2 to 4, or 1 to 3."""
+    numbers = np.array((0, 2, 3, 4) if seed < 1000 else (0, 1, 2, 3), np.int16)
+    return np.random.default_rng(seed).choice(numbers, GRID.shape)
+
+
+def table(number: int) -> Callable[[Path, int], str]:
+    """Five rows over two parcels, in (0, 1)."""
+
+    def write(folder: Path, variant: int) -> str:
+        path = folder / f"table{number}-{variant}.npy"
+        np.save(path, np.random.default_rng(1000 * variant + number).random((5, 2)))
+        return str(path)
 
     return write
 
@@ -112,6 +154,54 @@ CASES = {
         {"kind": ("t", "mean"), "scheme": (KFold(2), LeaveOneOut())},
         {"labels": list(PEOPLE)},
     ),
+    "GroupMap by a design": Case(
+        interfaces.GroupMap,
+        {"in_files": maps()},
+        {"design": (two_sample("ababa", "a", "b"), regression([1, 2, 3, 5, 8]))},
+    ),
+    "LeaveOutMaps by a design": Case(
+        interfaces.LeaveOutMaps,
+        {"in_files": maps(7)},
+        {"design": (two_sample("abababa", "a", "b"), two_sample("abababb", "a", "b"))},
+        {"labels": list("dacbegf")},
+    ),
+    "FoldLists": Case(
+        interfaces.FoldLists,
+        {"in_files": maps()},
+        {"labels": (list(PEOPLE), list("xacbe")), "scheme": (KFold(2), LeaveOneOut())},
+    ),
+    "MasksByRow": Case(
+        interfaces.MasksByRow,
+        {"mask_files": [image(box, i) for i in range(3)]},
+        {"fold_of_row": ([1, 0, 2, 0, 1], [1, 0, 2, 0, 0])},
+    ),
+    "HeldOutSummary": Case(
+        interfaces.HeldOutSummary,
+        {
+            "values": [value(0.5 + i, 9.0 + i) for i in range(4)],
+            "coverage": [value(1.0, 0.25 + i / 8) for i in range(4)],
+            "sizes": [value(7, 8) for _ in range(4)],
+        },
+        {
+            "labels": (list("abcd"), list("abcc")),
+            "n_folds": (4, 2),
+            "rule": ("one rule", "another"),
+            "names": (NAMES, ("other", *NAMES[1:])),
+        },
+    ),
+    "HeldOutSummary of two groups": Case(
+        interfaces.HeldOutSummary,
+        {
+            "values": [value(0.5 + i, 9.0 + i) for i in range(4)],
+            "coverage": [value(1.0, 0.25 + i / 8) for i in range(4)],
+            "sizes": [value(7, 8) for _ in range(4)],
+        },
+        {
+            "groups": (list("abab"), list("abaa")),
+            "compared": (("a", "b"), ("b", "a")),
+        },
+        {"labels": list("wxyz"), "n_folds": 4, "rule": "a rule", "names": NAMES},
+    ),
     "ChooseMask": Case(
         interfaces.ChooseMask,
         {
@@ -133,6 +223,29 @@ CASES = {
     "GivenMask": Case(
         interfaces.GivenMask, {"in_file": image(box, 0), "reference": image(noise, 1)}
     ),
+    "LabelMask": Case(
+        interfaces.LabelMask,
+        {
+            "in_file": image(parcels, 0),
+            "table_file": label_table,
+            "reference": image(noise, 1),
+        },
+        {"labels": (["Arbor", 4], ["Brook"])},
+    ),
+    "RegridLabels": Case(
+        interfaces.RegridLabels, {"in_file": image(parcels, 0), "reference": image(noise, 1)}
+    ),
+    "CombineMasks": Case(
+        interfaces.CombineMasks,
+        {"in_files": [image(box, i) for i in range(3)]},
+        {"how": ("union", "difference")},
+    ),
+    "ErodeMask": Case(
+        interfaces.ErodeMask, {"in_file": image(full_but_one, 0)}, {"mm": (3.5, 5.0)}
+    ),
+    "MirrorMask": Case(
+        interfaces.MirrorMask, {"in_file": image(box, 0)}, {"how": ("other", "both")}
+    ),
     "ChooseByFold": Case(
         interfaces.ChooseByFold,
         {"in_files": maps(), "search_file": image(box, 9)},
@@ -141,15 +254,59 @@ CASES = {
     ),
     "ChooseWithin": Case(
         interfaces.ChooseWithin,
-        {"in_files": maps(7), "search_file": image(box, 9)},
+        {"in_files": maps(7), "search_files": [image(box, 9)]},
         {"procedure": PROCEDURES},
         # Two subjects with four and three runs, the rows interleaved and the runs out of order.
         {"labels": list("babbaab"), "runs": list("2314123")},
     ),
+    "ChooseWithin, a search region each": Case(
+        interfaces.ChooseWithin,
+        {"in_files": maps(6), "search_files": [image(box, 9 + i) for i in range(6)]},
+        fixed={"labels": list("babbaa"), "runs": list("231412"), "procedure": PROCEDURES[1]},
+    ),
+    "ChooseEach": Case(
+        interfaces.ChooseEach,
+        {"in_files": [image(t_map, i) for i in range(3)], "search_files": [image(box, 9)]},
+        {"rule": (Threshold(height=4), Strongest(3)), "negative": (False, True)},
+    ),
+    "ChooseEach, a search region each": Case(
+        interfaces.ChooseEach,
+        {
+            "in_files": [image(t_map, i) for i in range(3)],
+            "search_files": [image(box, 9 + i) for i in range(3)],
+        },
+        fixed={"rule": Threshold(height=4)},
+    ),
     "Extract": Case(
         interfaces.Extract,
         {"mask_files": [image(box, i) for i in range(5)], "in_files": maps()},
-        {"missing": (Missing(zeros=True), Missing(zeros=False))},
+        {"missing": (Missing(zeros=True), Missing(zeros=False)), "summary": ("mean", "median")},
+        {"labels": list(PEOPLE), "clearance": "a test's"},
+    ),
+    "Extract weighted": Case(
+        interfaces.Extract,
+        {"mask_files": [image(weight, i) for i in range(5)], "in_files": maps()},
+        fixed={"labels": list(PEOPLE), "clearance": "a test's", "summary": "weighted"},
+    ),
+    "Extract a component": Case(
+        interfaces.Extract,
+        {"mask_files": [image(box, 0)], "in_files": maps()},
+        # Two subjects with two maps, one with one.
+        fixed={"labels": list("abacb"), "clearance": "a test's", "summary": "component"},
+    ),
+    "ExtractParcels": Case(
+        interfaces.ExtractParcels,
+        {"label_files": [image(label_image, i) for i in range(5)], "in_files": maps()},
+        {
+            "missing": (Missing(zeros=True), Missing(zeros=False)),
+            "min_coverage": (0.0, 1.0),
+        },
+        {"labels": list(PEOPLE), "clearance": "a test's"},
+    ),
+    "ExtractParcels of some parcels": Case(
+        interfaces.ExtractParcels,
+        {"label_files": [image(label_image, 9)], "in_files": maps()},
+        {"parcels": ([2, 3], [3, 4])},
         {"labels": list(PEOPLE), "clearance": "a test's"},
     ),
     "FlipTest": Case(
@@ -178,8 +335,39 @@ CASES = {
         {
             "names": (NAMES, ("other", *NAMES[1:])),
             "labels": (["a", "b", "c"], ["a", "b", "b"]),
-            "own_masks": (False, True),
+            "chosen_on": ("nothing", "localizer"),
         },
+    ),
+    "FixedRegionTest on a group mask": Case(
+        interfaces.FixedRegionTest,
+        {
+            "values": [value(0.5 + i, 9.0 + i) for i in range(3)],
+            "coverage": [value(1.0, 0.25 + i / 8) for i in range(3)],
+            "sizes": [value(7, 8)],
+        },
+        {"these_subjects": (False, True)},
+        {"names": NAMES, "chosen_on": "group"},
+    ),
+    "FamilyTest": Case(
+        interfaces.FamilyTest,
+        {
+            "values_file": table(0),
+            "coverage_file": table(1),
+            "sizes": [[value(7, 8), value(5, 9)]],
+            "parcels": [value(1, 3), value(2, 4)],
+        },
+        {
+            "names": (NAMES, ("other", *NAMES[1:])),
+            "labels": (list("abcde"), list("abbcd")),
+            "parcel_names": (["Arbor", "Brook"], ["Arbor", "Cinder"]),
+            "min_coverage": (0.0, 0.5),
+            "own_labels": (False, True),
+        },
+    ),
+    "FamilyTest with a table": Case(
+        interfaces.FamilyTest,
+        {"values_file": table(0), "coverage_file": table(1), "table_file": label_table},
+        fixed={"labels": list("abcde"), "parcels": [1, 2], "sizes": [[7, 5]], "names": NAMES},
     ),
 }
 
@@ -241,10 +429,18 @@ def places(case: Case) -> list[tuple[Any, ...]]:
 
 
 def elements(name: str, output: Any) -> dict[tuple[Any, ...], Any]:
-    """The elements of an output: the items of a list, or the output itself."""
-    if isinstance(output, list):
-        return {(name, i): item for i, item in enumerate(output)}
-    return {(name,): output}
+    """The elements of an output: the items of a list (of lists), or the output itself."""
+    made: dict[tuple[Any, ...], Any] = {}
+
+    def walk(place: tuple[Any, ...], item: Any) -> None:
+        if isinstance(item, list):
+            for i, child in enumerate(item):
+                walk((*place, i), child)
+        else:
+            made[place] = item
+
+    walk((name,), output)
+    return made
 
 
 def contents(outputs: dict[str, Any]) -> dict[tuple[Any, ...], Any]:
@@ -273,8 +469,9 @@ def tree_of(
 
 
 def touch_at(tree: Tree, element: tuple[Any, ...]) -> Touch:
-    if isinstance(tree, Branch):
-        tree = tree.children[element[1]]
+    for i in element[1:]:
+        if isinstance(tree, Branch):
+            tree = tree.children[i]
     assert isinstance(tree, Leaf)
     return tree.touch
 
@@ -326,7 +523,12 @@ def perturbed(tmp_path_factory: pytest.TempPathFactory) -> Callable[[str, str], 
 
 # -- the rules ---------------------------------------------------------------------------------
 
-GEOMETRY = {("SphereMask", "reference"), ("GivenMask", "reference")}
+GEOMETRY = {
+    ("SphereMask", "reference"),
+    ("GivenMask", "reference"),
+    ("LabelMask", "reference"),
+    ("RegridLabels", "reference"),
+}
 
 
 def test_every_interface_has_a_case():
@@ -402,10 +604,16 @@ def test_no_rule_takes_a_list_for_one_element(name: str, tmp_path: Path):
 PRECISE = [
     ("SubjectMaps", "out_files"),
     ("LeaveOutMaps", "out_files"),
+    ("LeaveOutMaps by a design", "out_files"),
+    ("FoldLists", "selection_files"),
+    ("FoldLists", "held_out_files"),
+    ("MasksByRow", "row_masks"),
     ("ChooseByFold", "mask_files"),
     ("ChooseByFold", "row_masks"),
     ("ChooseWithin", "row_masks"),
     ("Extract", "values"),
+    ("Extract weighted", "values"),
+    ("Extract a component", "values"),
 ]
 
 
@@ -415,7 +623,12 @@ def test_precise_rules_do_not_overstate(
 ):
     seen = perturbed(name, "data")
     mine = [element for element in seen.touch if element[0] == output]
-    assert len(mine) == {"SubjectMaps": 3, "LeaveOutMaps": 2, "ChooseWithin": 7}.get(name, 5)
+    assert len(mine) == {
+        "SubjectMaps": 3,
+        "LeaveOutMaps": 2,
+        "LeaveOutMaps by a design": 7,
+        "ChooseWithin": 7,
+    }.get(name, 5)
     for element in mine:
         felt = {place for place, changed in seen.changed.items() if element in changed}
         assert felt == seen.values(element), element

@@ -19,10 +19,12 @@ from sequester.nodes.interfaces import (
     ChooseByFold,
     ChooseMask,
     Extract,
+    FamilyTest,
     FixedRegionTest,
     FlipTest,
     GivenMask,
     GroupMap,
+    HeldOutSummary,
     SphereMask,
 )
 from sequester.nodes.masks import Strongest
@@ -419,8 +421,9 @@ def analysis(
         Extract(in_files=paths(study, data), labels=list(SUBJECTS), **extract), name="extract"
     )
     graph.connect(region, output, read, "mask_files")
-    fields = ("values",) if kind is FlipTest else ("values", "coverage", "sizes")
-    graph.connect([(read, statistic(kind, study, SUBJECTS), [(f, f) for f in fields])])
+    others = ("coverage", "sizes") if kind is FixedRegionTest else ()
+    fields = [("values", kind.statistic.values), *((f, f) for f in others)]
+    graph.connect([(read, statistic(kind, study, SUBJECTS), fields)])
     return graph
 
 
@@ -439,8 +442,8 @@ def of_statistic(graph: Workflow, study: Study) -> Finding:
 
 
 class TestStatistics:
-    def test_there_are_two_kinds(self):
-        assert set(statistics()) == {FixedRegionTest, FlipTest}
+    def test_these_are_the_kinds(self):
+        assert set(statistics()) == {FamilyTest, FixedRegionTest, FlipTest, HeldOutSummary}
 
     @pytest.mark.parametrize("scheme", [LeaveOneOut(), KFold(2)])
     def test_a_t_test_of_cross_fitted_values_is_refused(self, scheme: Scheme, study: Study):
@@ -492,7 +495,7 @@ class TestStatistics:
         after = function("after", a=None)
         graph.connect(between, "out", after, "a")
         test = statistic(kind, study, SUBJECTS)
-        graph.connect(after, "out", test, "values")
+        graph.connect(after, "out", test, kind.statistic.values)
         assert "marked biased" in of_statistic(graph, study).reason
 
     @pytest.mark.parametrize("kind", statistics())

@@ -12,12 +12,14 @@ WORKFLOWS = Path(sequester.workflows.__file__).parent
 
 # Lowest first; a module imports from modules before it only.
 NODE_LAYERS = [
-    "errors", "progress", "touch", "rules", "space", "regrid", "folds", "flips", "groupmaps",
-    "masks", "roi", "foldnull", "procedure", "results", "images", "interfaces",
+    "errors", "progress", "touch", "rules", "space", "regrid", "folds", "flips", "subjects",
+    "groupmaps", "design", "masks", "regions", "roi", "parcels", "foldnull", "procedure",
+    "results", "heldout", "fixed", "images", "interfaces",
 ]  # fmt: skip
 WORKFLOW_LAYERS = [
-    "digests", "study", "ancestry", "judge", "engines", "guard", "settings", "plans",
-    "outputs", "run", "table", "demo", "show", "cli",
+    "digests", "study", "ancestry", "judge", "engines", "guard", "keys", "selection", "regions",
+    "plans", "around", "settings", "build", "collect", "outputs", "verify", "run", "table", "demo",
+    "show", "cli",
 ]  # fmt: skip
 
 

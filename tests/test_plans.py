@@ -189,7 +189,7 @@ def test_a_t_test_over_run_folds_is_refused_and_over_subjects_is_not(tmp_path, a
     choose = Node(ChooseWithin(labels=labels, runs=runs, procedure=procedure), "choose")
     extract = Node(Extract(labels=labels), "extract")
     choose.inputs.in_files = extract.inputs.in_files = maps
-    test = Node(FixedRegionTest(names=("a", "b", "c"), own_masks=True), "test")
+    test = Node(FixedRegionTest(names=("a", "b", "c"), chosen_on="other runs"), "test")
     if averaged:
         test.inputs.labels = labels
     workflow.connect(choose, "row_masks", extract, "mask_files")

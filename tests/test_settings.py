@@ -15,7 +15,8 @@ from sequester.nodes.groupmaps import Missing
 from sequester.nodes.masks import Cluster, Strongest, Threshold
 from sequester.nodes.touch import Unit
 from sequester.workflows.cli import main
-from sequester.workflows.settings import Region, read_settings
+from sequester.workflows.regions import Ball, MaskFile
+from sequester.workflows.settings import read_settings
 
 HEAD = """\
 [study]
@@ -62,7 +63,7 @@ def test_defaults(study, tmp_path):
     settings = study(HEAD + FOUND)
     assert (settings.name, settings.seed) == ("kites", 0)
     assert (settings.root, settings.output) == (tmp_path, tmp_path / "results")
-    assert settings.missing == Missing(zeros=True, min_fraction=0.8)
+    assert settings.maps.missing == Missing(zeros=True, min_fraction=0.8)
     (roi,) = settings.rois
     assert (roi.n_flips, roi.interval, roi.test) == (4999, "flips", "whole-procedure")
     assert (roi.procedure.tail, roi.procedure.on_empty) == ("positive", "empty")
@@ -72,7 +73,8 @@ def test_defaults(study, tmp_path):
 def test_subjects_are_sorted_as_text_and_runs_within_them(study):
     table = TABLE + row("b.nii", "2", "2") + row("c.nii", "10", "1") + row("a.nii", "2", "1")
     settings = study(HEAD + GIVEN, table)
-    assert [(label, [r.path for r in runs]) for label, runs in settings.rows] == [
+    found = settings.rois[0].tested.subjects
+    assert [(label, [r.path for r in runs]) for label, runs in found] == [
         ("10", ["c.nii"]),
         ("2", ["a.nii", "b.nii"]),
     ]
@@ -101,10 +103,9 @@ def test_regions_and_their_origins(study):
     text = HEAD + GIVEN + FOUND
     text += 'search = { mask = "ridge.nii.gz", origin = "an atlas", derived_from = [{sub="1"}] }\n'
     settings = study(text)
-    assert settings.rois[0].region == Region(
-        "drawn for this test", centre=(9.0, 12.0, 9.0), radius=4.0
-    )
-    assert settings.rois[1].region == Region("an atlas", "ridge.nii.gz")
+    assert settings.rois[0].region == Ball("drawn for this test", (), "", (9.0, 12.0, 9.0), 4.0)
+    derived = (Unit(sub="1"),)
+    assert settings.rois[1].region == MaskFile("an atlas", derived, "", "ridge.nii.gz")
     atlas = settings.study.origins[1]
     assert (atlas.source, atlas.files) == ("an atlas", ("ridge.nii.gz",))
     assert atlas.derived_from == (Unit(sub="1"),)
@@ -129,11 +130,12 @@ def test_selection_of_rows(study):
         table += row(f"{sub}l.nii", sub, contrast="lull")
     data = '\n[data]\nselect = {{ contrast = "{}"{} }}\n'
     settings = study(HEAD + data.format("lull", "") + GIVEN, table)
-    assert [r.path for _, runs in settings.rows for r in runs] == ["1l.nii", "2l.nii", "3l.nii"]
+    found = settings.rois[0].tested.subjects
+    assert [r.path for _, runs in found for r in runs] == ["1l.nii", "2l.nii", "3l.nii"]
     settings = study(HEAD + data.format("gust", ', sub = ["1", "3"]') + GIVEN, table)
-    assert [label for label, _ in settings.rows] == ["1", "3"]
+    assert [label for label, _ in settings.rois[0].tested.subjects] == ["1", "3"]
     settings = study(HEAD + data.format("gust", ", age = 45") + GIVEN, table)
-    assert [label for label, _ in settings.rows] == ["2", "3"]
+    assert [label for label, _ in settings.rois[0].tested.subjects] == ["2", "3"]
 
 
 def test_documented_example_is_read(study, tmp_path):
@@ -183,12 +185,12 @@ def test_documented_example_is_read(study, tmp_path):
         (
             HEAD + FOUND.replace("leave-one-subject-out", "leave-some-out"),
             "unknown plan (STUDY, line 7): expected one of leave-one-subject-out, k-fold, "
-            "split-half, given-folds, leave-one-run-out, split-half-runs, a-priori, "
-            "exploratory, got 'leave-some-out'",
+            "split-half, given-folds, leave-one-run-out, split-half-runs, localizer, "
+            "a-priori, exploratory, got 'leave-some-out'",
         ),
         (
             HEAD + FOUND.replace("threshold", "hull"),
-            "unknown kind (STUDY, line 8): expected one of threshold, cluster, strongest, got 'hu",
+            "unknown kind (STUDY, line 8): expected one of threshold, strongest, cluster, peak-sp",
         ),
         (
             HEAD + FOUND.replace("p = 0.01", "p = 0.01, min_size = 3"),
@@ -217,11 +219,11 @@ def test_documented_example_is_read(study, tmp_path):
         (HEAD + GIVEN + 'test = "whole-procedure"\n', "unknown test (STUDY, line 9): expected on"),
         (
             HEAD + GIVEN.replace("centre = [9, 12, 9], radius = 4, ", ""),
-            "region needs either a mask or a centre and radius (STUDY, line 8)",
+            "region needs exactly one of mask, centre, atlas, union, intersection, difference (",
         ),
         (
             HEAD + GIVEN.replace("radius = 4", 'radius = 4, mask = "ridge.nii.gz"'),
-            "region needs either a mask or a centre and radius (STUDY, line 8)",
+            "region needs exactly one of mask, centre, atlas, union, intersection, difference (",
         ),
         (HEAD + GIVEN.replace("[9, 12, 9]", "[9, 12]"), "centre is no coordinate (STUDY, line 8)"),
         (HEAD + GIVEN.replace("radius = 4, ", ""), "missing key 'radius' (STUDY)"),
@@ -231,7 +233,7 @@ def test_documented_example_is_read(study, tmp_path):
         ),
         (
             HEAD + GIVEN.replace("}", ", derived_from = [{ subject = '1' }] }"),
-            "unknown entity 'subject' (STUDY, line 8): expected one of sub, ses, task",
+            "unknown key 'subject' in derived_from (STUDY, line 8): expected one of acq, ce, dir",
         ),
         (HEAD + GIVEN.replace("}", ", derived_from = [1] }"), "derived_from"),
         (
@@ -246,7 +248,7 @@ def test_documented_example_is_read(study, tmp_path):
         (HEAD + FOUND + '\n[[origin]]\nfiles = ["*.gz"]\n', "missing key 'source' (STUDY)"),
         (
             HEAD + "\n[data]\nmin_fraction = 1.5\n" + FOUND,
-            "min_fraction out of range: expected 0 < min_fraction <= 1, got 1.5",
+            "min_fraction out of range (STUDY, line 6): expected 0 < min_fraction <= 1, got 1.5",
         ),
         (
             HEAD + "\n[data]\nselect = { mood = 'calm' }\n" + FOUND,

@@ -4,7 +4,8 @@ Levels, at a meeting of mask M with data D, both restricted to values of the tes
 
 1. M and D share a unit: leak.
 2. No shared unit, but a tested subject is among M's subjects: apart at run level when M touches
-   that one subject only; a leak at subject level when it touches several.
+   that one subject only; a leak at subject level when it touches several, unless the claim is
+   declared to be about these subjects only: then apart at run level.
 3. No shared subject: apart at subject level.
 
 An unknown file on either side, or a mask nobody declared, leaves the meeting unproven. A leak
@@ -14,6 +15,7 @@ may run only into values marked biased, which no statistic accepts.
 from __future__ import annotations
 
 import textwrap
+from collections.abc import Mapping
 from dataclasses import dataclass, replace
 
 from ..nodes.foldnull import plain_t_false_positives
@@ -111,7 +113,7 @@ def _extractions(ancestry: Ancestry, node: object, meeting: Meeting) -> list[Fin
     name = node_name(node)
     given = list(flat(iterations(node, ancestry.inputs[name])))
     met = [
-        (mask, data, bool(meeting.biased and one.settings.get(meeting.biased)))
+        (mask, data, one.settings.get(meeting.biased) is True, _these(meeting, one.settings))
         for one in given
         for mask, data in meeting.pairs(one)
     ]
@@ -132,9 +134,14 @@ def _extractions(ancestry: Ancestry, node: object, meeting: Meeting) -> list[Fin
             )
         ]
     return [
-        _meet(table, name, i if len(met) > 1 else None, mask, data, biased=biased)
-        for i, (mask, data, biased) in enumerate(met)
+        _meet(table, name, i if len(met) > 1 else None, mask, data, biased=biased, these_only=these)
+        for i, (mask, data, biased, these) in enumerate(met)
     ]
+
+
+def _these(contract: Meeting | Statistic, settings: Mapping[str, object]) -> bool:
+    """Whether the claim is declared to be about the tested subjects only."""
+    return settings.get(contract.these_only) is True
 
 
 def _measured_in(table: UnitTable, data: int) -> int:
@@ -143,7 +150,14 @@ def _measured_in(table: UnitTable, data: int) -> int:
 
 
 def _meet(
-    table: UnitTable, name: str, item: int | None, mask: Leaf, data: Leaf, *, biased: bool
+    table: UnitTable,
+    name: str,
+    item: int | None,
+    mask: Leaf,
+    data: Leaf,
+    *,
+    biased: bool,
+    these_only: bool,
 ) -> Finding:
     measured = _measured_in(table, data.touch.values)
     of_mask, of_data = mask.touch.values & measured, data.touch.values & measured
@@ -158,7 +172,7 @@ def _meet(
             "choose the region without the tested data (plan leave-one-subject-out, or a mask "
             "with another origin), or read it as exploratory: a value without interval and p"
         )
-    elif choosers & tested and not (len(choosers) == 1 and choosers == tested):
+    elif _several(choosers, tested) and not these_only:
         verdict, level = LEAK, "subject"
         shared = sum(1 << n for n in table.numbers(of_mask) if table.people_of(1 << n) & tested)
         reason = (
@@ -167,7 +181,8 @@ def _meet(
         )
         cure = (
             "leave the tested subject out of the selection, or choose each subject's own "
-            "mask from their own other runs"
+            "mask from their own other runs; or declare the narrower claim, about these subjects "
+            'only (claim = "these-subjects", these_subjects=True)'
         )
         if not _subs(table, of_mask) & _subs(table, of_data):
             alike = ", ".join(sorted(choosers & tested))
@@ -189,6 +204,8 @@ def _meet(
     elif not mask.touch.values and not mask.touch.origins:
         verdict, reason = UNPROVEN, "nothing says where the mask comes from"
         cure = _DECLARE
+    elif _several(choosers, tested):
+        level, reason = "run", "the mask was chosen on other runs of the tested subjects"
     elif choosers & tested:
         level, reason = "run", "the mask was chosen on other runs of this one subject"
     else:
@@ -215,6 +232,11 @@ def _meet(
         reason,
         cure,
     )
+
+
+def _several(choosers: frozenset[str], tested: frozenset[str]) -> bool:
+    """Whether a tested subject is one of several that a mask was chosen on."""
+    return bool(choosers & tested) and not (len(choosers) == 1 and choosers == tested)
 
 
 def _place(leaf: Leaf) -> str:
@@ -263,6 +285,18 @@ def _statistic(ancestry: Ancestry, node: object, statistic: Statistic) -> Findin
             ),
         )
         cure = statistic.cure
+    elif not _these(statistic, ancestry.inputs[name].settings) and any(
+        _several(table.people_of(mark.mask), table.people_of(mark.data)) for mark in marks
+    ):
+        verdict = LEAK
+        reason = (
+            "its region was chosen on other runs of the tested subjects, which does not protect "
+            "a claim about those they were drawn from"
+        )
+        cure = (
+            'declare that it speaks of these subjects only (claim = "these-subjects", '
+            "these_subjects=True), or choose the region on other subjects"
+        )
     elif whole.touch.unknown:
         unknown = ", ".join(sorted(whole.touch.unknown)[:3])
         verdict, reason = UNPROVEN, f"nobody has declared what {unknown} derives from"

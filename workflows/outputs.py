@@ -6,14 +6,12 @@ a run that fails or is killed leaves no half-written results and loses none of t
 
 from __future__ import annotations
 
-import json
 import math
 import os
 import platform
 import shutil
 from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
-from dataclasses import dataclass
 from importlib.metadata import version
 from pathlib import Path
 from typing import Any
@@ -21,14 +19,13 @@ from typing import Any
 from filelock import FileLock, Timeout
 
 from ..nodes.errors import InputError
-from ..nodes.folds import LeaveOneOut
 from ..nodes.images import write_bytes
 from ..nodes.interfaces.base import write_json
-from .ancestry import node_name
+from .collect import RoiOutput
 from .digests import digest
 from .judge import Finding
-from .settings import CROSS_FITTED, EXPLORATORY, OWN_MASKS, Roi, Settings
-from .study import Study
+from .settings import Settings
+from .study import CELLS, Row, Study
 
 MANIFEST = "manifest.json"
 _DEPENDENCIES = ("nipype", "nibabel", "numpy", "scipy", "networkx")
@@ -36,10 +33,11 @@ _DEPENDENCIES = ("nipype", "nibabel", "numpy", "scipy", "networkx")
 VALUE_COLUMNS = {
     "roi": "Region of interest, as named in STUDY.toml.",
     "plan": "How the region was chosen.",
+    "parcel": "Label number, when every label of an atlas is a region; else n/a.",
     "sub": "Subject label.",
     "run": "Run, when each run has a mask of its own; n/a when runs were averaged.",
-    "value": "Mean effect of the subject in its mask, in the units of the effect maps; 0 when the "
-    "mask is empty.",
+    "value": "Effect of the subject in its mask (summary, scale and null value: see roi_tests); 0 "
+    "when the mask is empty.",
     "mask": "Mask the value was read in.",
     "mask_voxels": "Voxels in that mask.",
     "mask_mm3": "Volume of that mask in mm3.",
@@ -49,10 +47,16 @@ VALUE_COLUMNS = {
 TEST_COLUMNS = {
     "roi": "Region of interest, as named in STUDY.toml.",
     "plan": "How the region was chosen.",
+    "parcel": "Label number, when every label of an atlas is a region; else n/a.",
+    "parcel_name": "Its name in the atlas's label table.",
     "rule": "The mask rule in words.",
+    "value": "How a map is summarised in its mask: mean, median, weighted or component.",
+    "scale": "What values are measured in: the units of the effect maps, or percent of baseline.",
+    "null_value": "Subtracted from the maps: estimates are differences from it.",
+    "claim": "Who the test speaks of: the population, or these subjects only (as declared).",
     "search": "The search region that the null hypothesis covers.",
     "n_subjects": "Independent subjects tested: rows that share an exchange value are one.",
-    "estimate": "Mean of the values, in the units of the effect maps.",
+    "estimate": "Mean of the values.",
     "target": "What the estimate estimates.",
     "biased": "true for exploratory values: no interval, no p, no error bar.",
     "interval_low": "Lower end of the 95 % interval.",
@@ -62,7 +66,8 @@ TEST_COLUMNS = {
     "t": "Studentised mean, positive in the direction of selection.",
     "p": "p-value; p_kind and sided say how it was made.",
     "p_error": "Monte Carlo standard error of p; n/a when exact.",
-    "p_holm": "Holm-adjusted over the tested regions; n/a when their search regions overlap.",
+    "p_holm": "Holm-adjusted over the tested regions (n/a when their search regions overlap), or "
+    "over the labels of an atlas.",
     "p_kind": "The test.",
     "sided": "greater, less or two-sided.",
     "null": "The null hypothesis.",
@@ -78,6 +83,15 @@ TEST_COLUMNS = {
     "verdict": "The guard's verdict: apart, or leak (allowed for exploratory values alone).",
     "sentence": "The result in a sentence.",
 }
+CELL_COLUMNS = {
+    "roi": "Region of interest.",
+    "side": "tested, subtracted (minus), baseline, or chosen on (where other maps choose).",
+    **{name: f"The maps' {name}, as in the study table." for name in CELLS},
+    "n_subjects": "Subjects.",
+    "n_independent": "Subjects that count as one for exchange counted once.",
+    "n_maps": "Maps.",
+    "n_left_out": "Maps of this cell left out; the reasons are in manifest.json.",
+}
 TOUCH_COLUMNS = {
     "mask": "Where the mask comes from in the graph.",
     "extraction": "The node (and element) that reads data inside it.",
@@ -89,38 +103,6 @@ TOUCH_COLUMNS = {
     "verdict": "apart, leak (exploratory values only) or unproven.",
     "level": "subject or run.",
 }
-
-
-@dataclass(frozen=True)
-class RoiOutput:
-    """What one region's plan produced.
-
-    Parameters
-    ----------
-    roi : Roi
-    record : dict
-        The result, as `RoiResult.as_dict`.
-    values, coverage : sequence of float, one per row
-    sizes : sequence of int, one per row
-        Voxels in each row's mask.
-    masks : sequence of (name, Path)
-        Mask files, by what they are called in the folder.
-    mask_of_row : sequence of str
-        Per row, the name of its mask.
-    rows : sequence of (subject, run)
-        What a row is; the run is "" when runs were averaged.
-    overlap : Path or None
-    """
-
-    roi: Roi
-    record: dict[str, Any]
-    values: Sequence[float]
-    coverage: Sequence[float]
-    sizes: Sequence[int]
-    masks: Sequence[tuple[str, Path]]
-    mask_of_row: Sequence[str]
-    rows: Sequence[tuple[str, str]]
-    overlap: Path | None
 
 
 @contextmanager
@@ -216,15 +198,11 @@ def write_all(
     """
     masks = stage / "masks"
     masks.mkdir()
-    uri = "bids:study:{}".format
     for output in outputs:
-        files = list(output.masks)
-        search = [output.roi.region.mask] if output.roi.region.mask else []
-        for (name, source), selection in zip(files, _sources(settings, output), strict=True):
-            shutil.copyfile(source, masks / name)
-            # A 4-D file is one source, however many of its volumes are used.
-            sources = dict.fromkeys([*selection, *search])
-            _sidecar(masks / name, {"Type": "ROI", "Sources": [uri(p) for p in sources]})
+        for mask in output.masks:
+            shutil.copyfile(mask.path, masks / mask.name)
+            uris = [f"bids:study:{path}" for path in mask.sources]
+            _sidecar(masks / mask.name, {"Type": "ROI", "Sources": uris})
         if output.overlap is not None:
             name = f"label-{output.roi.name}_desc-foldoverlap_probseg.nii.gz"
             shutil.copyfile(output.overlap, masks / name)
@@ -232,10 +210,12 @@ def write_all(
                 masks / name,
                 {
                     "Description": "Share of the folds whose mask holds the voxel.",
-                    "Sources": [f"bids::masks/{mask}" for mask, _ in output.masks],
+                    "Sources": [f"bids::masks/{mask.name}" for mask in output.masks],
                 },
             )
     _table(stage / "roi_values.tsv", VALUE_COLUMNS, _value_rows(outputs))
+    _write_wide(stage / "roi_values_wide.tsv", outputs)
+    _table(stage / "cells.tsv", CELL_COLUMNS, _cell_rows(settings))
     tests = _test_rows(settings, outputs, findings)
     _table(stage / "roi_tests.tsv", TEST_COLUMNS, tests)
     _table(stage / "touches.tsv", TOUCH_COLUMNS, _touch_rows(settings.study, findings))
@@ -253,53 +233,65 @@ def write_all(
     return tests
 
 
-def _sources(settings: Settings, output: RoiOutput) -> Iterator[list[str]]:
-    """For each mask, the study's files whose values it derives from."""
-    chosen_on = output.roi.choosing or settings.rows
-    every = [row for _, runs in chosen_on for row in runs]
-    tested = [runs for _, runs in settings.rows]
-    if output.roi.plan in OWN_MASKS:
-        scheme = output.roi.procedure.scheme if output.roi.procedure else LeaveOneOut(2)
-        for runs in tested:
-            of_run: dict[int, list[str]] = {}
-            for fold in scheme.folds([row.unit.run for row in runs]):
-                for held in fold.held_out:
-                    of_run[held] = [runs[i].path for i in fold.selection]
-            yield from (of_run[i] for i in range(len(runs)))
-        return
-    for name, _ in output.masks:
-        if output.roi.plan in CROSS_FITTED:
-            people = {
-                runs[0].person
-                for runs, mask in zip(tested, output.mask_of_row, strict=True)
-                if mask == name
-            }
-            yield [row.path for row in every if row.person not in people]
-        elif output.roi.plan == EXPLORATORY:
-            yield [row.path for row in every]
-        else:
-            yield []
-
-
 def _sidecar(path: Path, content: dict[str, Any]) -> None:
     write_json(path.with_name(path.name.removesuffix(".nii.gz") + ".json"), content)
 
 
 def _value_rows(outputs: Sequence[RoiOutput]) -> Iterator[dict[str, Any]]:
     for output in outputs:
-        for i, (label, run) in enumerate(output.rows):
+        biased = output.records[0]["biased"]
+        for value in output.values:
             yield {
                 "roi": output.roi.name,
                 "plan": output.roi.plan,
-                "sub": label,
-                "run": run,
-                "value": output.values[i],
-                "mask": output.mask_of_row[i],
-                "mask_voxels": output.sizes[i],
-                "mask_mm3": output.sizes[i] * output.record["voxel_mm3"],
-                "coverage": output.coverage[i],
-                "biased": output.record["biased"],
+                "parcel": value.parcel,
+                "sub": value.sub,
+                "run": value.run,
+                "value": value.value,
+                "mask": value.mask,
+                "mask_voxels": value.size,
+                "mask_mm3": value.mm3,
+                "coverage": value.coverage,
+                "biased": biased,
             }
+
+
+def _write_wide(path: Path, outputs: Sequence[RoiOutput]) -> None:
+    """A row per subject (and run), a column per region: for spreadsheets."""
+    columns = {name: VALUE_COLUMNS[name] for name in ("sub", "run")}
+    rows: dict[tuple[str, str], dict[str, Any]] = {}
+    for output in outputs:
+        biased = ", BIASED (exploratory)" if output.records[0]["biased"] else ""
+        for value in output.values:
+            name = output.roi.name + (f"_{value.parcel}" if value.parcel else "")
+            columns[name] = f"Value in {name}, plan {output.roi.plan}{biased}."
+            row = rows.setdefault((value.sub, value.run), {"sub": value.sub, "run": value.run})
+            row[name] = value.value
+    blank = dict.fromkeys(columns)
+    _table(path, columns, (blank | rows[key] for key in sorted(rows)))
+
+
+def _cell_rows(settings: Settings) -> Iterator[dict[str, Any]]:
+    """How many subjects and maps each region has, per cell of the study."""
+    for roi in settings.rois:
+        sides = {"tested": roi.tested.subjects, "subtracted": roi.tested.minus}
+        sides |= {"baseline": roi.tested.baseline}
+        sides |= {"chosen on": roi.choosing.subjects if roi.choosing is not None else ()}
+        left = [*roi.tested.left_out, *(roi.choosing.left_out if roi.choosing else ())]
+        for side, subjects in sides.items():
+            cells: dict[tuple[str, ...], list[Row]] = {}
+            for row in (row for _, rows in subjects for row in rows):
+                cells.setdefault(tuple(row.cell), []).append(row)
+            for cell, rows in sorted(cells.items()):
+                yield {
+                    "roi": roi.name,
+                    "side": side,
+                    **dict(zip(CELLS, cell, strict=True)),
+                    "n_subjects": len({row.unit.sub for row in rows}),
+                    "n_independent": len({row.person for row in rows}),
+                    "n_maps": len(rows),
+                    "n_left_out": sum(tuple(row.cell) == cell for row in left),
+                }
 
 
 def _test_rows(
@@ -307,21 +299,27 @@ def _test_rows(
 ) -> list[dict[str, Any]]:
     rows = []
     for output in outputs:
-        record, interval = output.record, output.record["interval"] or {}
-        met = [f for f in findings if f.node == f"{settings.name}.{output.roi.name}.extract"]
+        roi = output.roi
+        met = [f for f in findings if f.node == f"{settings.name}.{roi.name}.extract"]
         worst = [f for f in met if f.verdict != "apart"] or met
         levels = {f.level for f in met}
-        row = {name: record.get(name) for name in TEST_COLUMNS}
-        row |= {
-            "interval_low": interval.get("low"),
-            "interval_high": interval.get("high"),
-            "interval_kind": interval.get("kind"),
-            "interval_method": interval.get("method"),
-            "n_replaced": None if record["n_folds"] is None else len(record["replaced"]),
-            "level": "run" if "run" in levels else "subject" if "subject" in levels else None,
-            "verdict": worst[0].verdict if worst else None,
-        }
-        rows.append(row)
+        for record in output.records:
+            interval = record["interval"] or {}
+            row = {name: record.get(name) for name in TEST_COLUMNS}
+            row |= {
+                "value": roi.summary,
+                "null_value": settings.maps.null_value,
+                "scale": "percent of baseline" if roi.tested.baseline else "effect maps",
+                "claim": "these subjects" if roi.these_subjects else "population",
+                "interval_low": interval.get("low"),
+                "interval_high": interval.get("high"),
+                "interval_kind": interval.get("kind"),
+                "interval_method": interval.get("method"),
+                "n_replaced": None if record["n_folds"] is None else len(record["replaced"]),
+                "level": "run" if "run" in levels else "subject" if "subject" in levels else None,
+                "verdict": worst[0].verdict if worst else None,
+            }
+            rows.append(row)
     return rows
 
 
@@ -372,7 +370,9 @@ def _manifest(stage: Path, settings: Settings) -> None:
     """What went in and what came out, with digests: enough to repeat the run and compare."""
     study = settings.study
     outside = [f for origin in study.origins for f in origin.files]
-    inputs = [row.path for row in settings.used] + outside
+    used = [row.path for row in settings.used]
+    if settings.maps.by_variance:
+        used += [row.variance for row in settings.used if row.variance]
     files = sorted(p for p in stage.rglob("*") if p.is_file())
     write_json(
         stage / MANIFEST,
@@ -386,7 +386,7 @@ def _manifest(stage: Path, settings: Settings) -> None:
                 "python": platform.python_version(),
                 **{name: version(name) for name in _DEPENDENCIES},
             },
-            "inputs": {path: digest(settings.root / path) for path in sorted(set(inputs))},
+            "inputs": {path: digest(settings.root / path) for path in sorted({*used, *outside})},
             "left_out": {row.name: row.exclude_reason for row in settings.left_out},
             "origins": [
                 {
@@ -399,14 +399,3 @@ def _manifest(stage: Path, settings: Settings) -> None:
             "outputs": {str(p.relative_to(stage)): digest(p) for p in files},
         },
     )
-
-
-def find_nodes(graph: Any) -> dict[str, Any]:
-    """The nodes of a finished graph, by name."""
-    return {node_name(node): node for node in graph.nodes()}
-
-
-def read_record(path: str | Path) -> dict[str, Any]:
-    """A result that a test node wrote."""
-    record: dict[str, Any] = json.loads(Path(path).read_text())
-    return record

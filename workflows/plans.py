@@ -1,4 +1,4 @@
-"""Each plan as a ready-made workflow, and a whole study as one.
+"""Each plan as a ready-made workflow.
 
 Every plan has an ``inputnode`` with ``effects`` (a list with one map per row) and an
 ``outputnode``; nest it in a workflow of your own and run that under the guard.
@@ -8,36 +8,36 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import replace
-from pathlib import Path
 from typing import Any
 
 from nipype import IdentityInterface, Node, Workflow
 
 from ..nodes.folds import LeaveOneOut
+from ..nodes.groupmaps import Missing
 from ..nodes.interfaces import (
     ChooseByFold,
+    ChooseEach,
     ChooseMask,
     ChooseWithin,
     Extract,
+    ExtractParcels,
+    FamilyTest,
     FixedRegionTest,
     FlipTest,
-    GivenMask,
     GroupMap,
-    SphereMask,
-    SubjectMaps,
 )
 from ..nodes.procedure import Procedure
-from .settings import (
-    A_PRIORI,
-    EXPLORATORY,
-    LEAVE_ONE_OUT,
-    LEAVE_RUN_OUT,
-    OWN_MASKS,
-    Region,
-    Roi,
-    Settings,
-    Subjects,
-)
+from .regions import mask_of
+
+LEAVE_ONE_OUT, A_PRIORI, EXPLORATORY = "leave-one-subject-out", "a-priori", "exploratory"
+K_FOLD, SPLIT_HALF, GIVEN_FOLDS = "k-fold", "split-half", "given-folds"
+# The plans in which subjects take turns at choosing and being tested.
+CROSS_FITTED = (LEAVE_ONE_OUT, K_FOLD, SPLIT_HALF, GIVEN_FOLDS)
+LEAVE_RUN_OUT, SPLIT_RUNS = "leave-one-run-out", "split-half-runs"
+# The plans in which each subject has masks of their own, from their other runs.
+OTHER_RUNS = (LEAVE_RUN_OUT, SPLIT_RUNS)
+LOCALIZER = "localizer"
+PLANS = (*CROSS_FITTED, *OTHER_RUNS, LOCALIZER, A_PRIORI, EXPLORATORY)
 
 
 def node(interface: Any, name: str, mem_gb: float = 0.5, **inputs: Any) -> Node:
@@ -60,28 +60,11 @@ def _ends(
     return start, end
 
 
-def region_node(region: Region, name: str, reference: str, root: Path) -> Node | None:
-    """The node that makes a given region's mask; None for the whole map."""
-    if region.mask:
-        path = str(root / region.mask)
-        return node(GivenMask(), name, in_file=path, reference=reference, regrid=region.regrid)
-    if region.centre is not None:
-        return node(
-            SphereMask(),
-            name,
-            reference=reference,
-            centre=region.centre,
-            radius=region.radius,
-            origin=region.origin,
-        )
-    return None
-
-
 def cross_fitted(
     name: str,
     procedure: Procedure,
     labels: Sequence[str],
-    search: Node | None = None,
+    search: Node | Workflow | None = None,
     search_name: str = "whole map",
     n_flips: int = 4999,
     seed: int = 0,
@@ -89,6 +72,7 @@ def cross_fitted(
     test: str = "whole-procedure",
     plan: str = "folds over subjects",
     other_maps: bool = False,
+    min_coverage: float = 0.0,
     mem_gb: float = 1.0,
 ) -> Workflow:
     """Choose a region without each fold's subjects, read it there, test the whole procedure.
@@ -101,8 +85,8 @@ def cross_fitted(
         Mask rule, folds (its ``scheme``), what happens when a fold finds nothing.
     labels : sequence of str
         Per map of ``inputnode.effects``: who it belongs to.
-    search : Node, optional
-        With an output ``mask_file``: the search region.
+    search : Node or Workflow, optional
+        With an output ``mask_file`` (of a workflow's ``outputnode``): the search region.
     search_name : str
         What the search region is called in the p sentence.
     n_flips, seed : int
@@ -115,6 +99,8 @@ def cross_fitted(
     other_maps : bool
         Choose on ``inputnode.choosing`` (another contrast of the same subjects) and test
         ``inputnode.effects``; both are held out and flipped together.
+    min_coverage : float
+        The least share of its mask in which a map must have data.
     mem_gb : float
         Needed by the nodes that hold the whole stack.
 
@@ -139,7 +125,7 @@ def cross_fitted(
     chooser = fields[-1]
     labels = list(labels)
     choose = node(ChooseByFold(), "choose", mem_gb, labels=labels, procedure=procedure)
-    extract = node(Extract(), "extract", labels=labels, missing=procedure.missing)
+    extract = _reading(labels, procedure.missing, procedure.summary, min_coverage)
     workflow.connect(
         [
             (start, choose, [(chooser, "in_files")]),
@@ -150,7 +136,7 @@ def cross_fitted(
         ]
     )
     if search is not None:
-        workflow.connect(search, "mask_file", choose, "search_file")
+        workflow.connect(*mask_of(search), choose, "search_file")
     names = (name, plan, search_name)
     if test == "whole-procedure":
         flips = node(
@@ -174,7 +160,7 @@ def cross_fitted(
         if other_maps:
             workflow.connect(start, "effects", flips, "tested_files")
         if search is not None:
-            workflow.connect(search, "mask_file", flips, "search_file")
+            workflow.connect(*mask_of(search), flips, "search_file")
     elif test == "t":
         _fixed_test(workflow, extract, end, names)
     return workflow
@@ -184,7 +170,7 @@ def leave_one_subject_out(
     name: str,
     procedure: Procedure,
     labels: Sequence[str],
-    search: Node | None = None,
+    search: Node | Workflow | None = None,
     **settings: Any,
 ) -> Workflow:
     """`cross_fitted`, each subject held out once; further settings are those of `cross_fitted`.
@@ -200,21 +186,31 @@ def leave_one_subject_out(
     return cross_fitted(name, procedure, labels, search, plan=LEAVE_ONE_OUT, **settings)
 
 
-def _fixed_test(
-    workflow: Workflow,
-    extract: Node,
-    end: Node,
-    names: tuple[str, str, str],
-    *,
-    own_masks: bool = False,
-) -> None:
-    test = node(
-        FixedRegionTest(),
-        "test",
-        names=names,
-        labels=extract.inputs.labels,
-        own_masks=own_masks,
+def _reading(
+    labels: Sequence[str],
+    missing: Missing | None,
+    summary: str,
+    min_coverage: float,
+    **more: Any,
+) -> Node:
+    """The extraction of a plan."""
+    return node(
+        Extract(),
+        "extract",
+        labels=list(labels),
+        missing=missing,
+        summary=summary,
+        min_coverage=min_coverage,
+        **more,
     )
+
+
+def _fixed_test(
+    workflow: Workflow, extract: Node, end: Node, names: tuple[str, str, str], **more: Any
+) -> None:
+    """Student's t of the values of an extraction."""
+    labels = extract.inputs.labels
+    test = node(FixedRegionTest(), "test", names=names, labels=labels, **more)
     workflow.connect(
         [
             (extract, test, [(f, f) for f in ("values", "coverage", "sizes")]),
@@ -228,12 +224,15 @@ def own_masks(
     procedure: Procedure,
     labels: Sequence[str],
     runs: Sequence[str],
-    search: Node | None = None,
+    search: Node | Workflow | None = None,
     search_name: str = "whole map",
     plan: str = LEAVE_RUN_OUT,
+    min_coverage: float = 0.0,
     mem_gb: float = 0.5,
 ) -> Workflow:
     """Each subject's own mask from their other runs; runs averaged, then t across subjects.
+
+    Each subject's maps may be on a grid of their own; then `search` gives a list, a mask per row.
 
     Parameters
     ----------
@@ -243,10 +242,19 @@ def own_masks(
         over runs (`LeaveOneOut(2)`, `Halves`).
     labels, runs : sequence of str
         Per map of ``inputnode.effects``: the subject and the run.
-    search : Node, optional
+    search : Node or Workflow, optional
         With an output ``mask_file``: the region in which each subject's mask lies.
     search_name, plan : str
+    min_coverage : float
     mem_gb : float
+
+    Examples
+    --------
+    >>> from sequester.nodes.masks import Strongest
+    >>> rule = Procedure(Strongest(50, "mean"), scheme=LeaveOneOut(2))
+    >>> plan = own_masks("arbor", rule, ["01", "01", "02", "02"], ["1", "2", "1", "2"])
+    >>> sorted(plan.list_node_names())
+    ['choose', 'extract', 'inputnode', 'outputnode', 'test']
     """
     workflow = Workflow(name=name)
     start, end = _ends(workflow, ["mask_files", "values", "record_file"])
@@ -254,7 +262,7 @@ def own_masks(
     choose = node(
         ChooseWithin(), "choose", mem_gb, labels=labels, runs=list(runs), procedure=procedure
     )
-    extract = node(Extract(), "extract", labels=labels, missing=procedure.missing)
+    extract = _reading(labels, procedure.missing, procedure.summary, min_coverage)
     workflow.connect(
         [
             (start, choose, [("effects", "in_files")]),
@@ -265,18 +273,108 @@ def own_masks(
         ]
     )
     if search is not None:
-        workflow.connect(search, "mask_file", choose, "search_file")
-    _fixed_test(workflow, extract, end, (name, plan, search_name), own_masks=True)
+        workflow.connect(*mask_of(search), choose, "search_files")
+    _fixed_test(workflow, extract, end, (name, plan, search_name), chosen_on="other runs")
+    return workflow
+
+
+def localizer(
+    name: str,
+    procedure: Procedure,
+    labels: Sequence[str],
+    search: Node | Workflow | None = None,
+    search_name: str = "whole map",
+    group_mask: bool = False,
+    these_subjects: bool = False,
+    min_coverage: float = 0.0,
+    mem_gb: float = 0.5,
+) -> Workflow:
+    """Choose on other data (another task, run, session, other people), then t across subjects.
+
+    Parameters
+    ----------
+    name : str
+    procedure : Procedure
+        Its mask rule is used on each subject's localizer map, or on the group's.
+    labels : sequence of str
+        Per map of ``inputnode.effects``.
+    search : Node or Workflow, optional
+        With an output ``mask_file``: the region in which a mask lies.
+    search_name : str
+    group_mask : bool
+        One mask for all from the group map of ``inputnode.choosing``, instead of one per row
+        of it. When these are maps of the tested subjects the guard refuses it, unless
+    these_subjects : bool
+        declares that the claim is about these subjects only.
+    min_coverage : float
+    mem_gb : float
+        Needed by the group map.
+
+    Returns
+    -------
+    nipype.Workflow
+        With ``inputnode.{effects, choosing}``: the maps that are tested and those that choose.
+
+    Examples
+    --------
+    >>> from sequester.nodes.masks import Strongest
+    >>> plan = localizer("arbor", Procedure(Strongest(50)), ["01", "02"])
+    >>> sorted(plan.list_node_names())
+    ['choose', 'extract', 'inputnode', 'outputnode', 'test']
+    """
+    workflow = Workflow(name=name)
+    start, end = _ends(workflow, ["mask_files", "values", "record_file"], ["effects", "choosing"])
+    rule: dict[str, Any] = {
+        "rule": procedure.rule,
+        "k": procedure.k,
+        "on_empty": procedure.on_empty,
+        "negative": procedure.tail == "negative",
+    }
+    extract = _reading(
+        labels, procedure.missing, procedure.summary, min_coverage, these_subjects=these_subjects
+    )
+    if group_mask:
+        choose, masks, regions = node(ChooseMask(), "choose", **rule), "mask_file", "search_file"
+        group = node(GroupMap(), "group", mem_gb, missing=procedure.missing)
+        workflow.connect(
+            [
+                (start, group, [("choosing", "in_files")]),
+                (group, choose, [("out_file", "in_file"), ("count_file", "count_file")]),
+            ]
+        )
+    else:
+        choose, masks, regions = node(ChooseEach(), "choose", **rule), "row_masks", "search_files"
+        workflow.connect(start, "choosing", choose, "in_files")
+    workflow.connect(
+        [
+            (start, extract, [("effects", "in_files")]),
+            (choose, extract, [(masks, "mask_files")]),
+            (choose, end, [(masks, "mask_files")]),
+            (extract, end, [("values", "values")]),
+        ]
+    )
+    if search is not None:
+        workflow.connect(*mask_of(search), choose, regions)
+    _fixed_test(
+        workflow,
+        extract,
+        end,
+        (name, LOCALIZER, search_name),
+        chosen_on="group" if group_mask else "localizer",
+        these_subjects=these_subjects,
+    )
     return workflow
 
 
 def a_priori(
     name: str,
     labels: Sequence[str],
-    region: Node,
+    region: Node | Workflow,
     region_name: str,
-    missing: Any = None,
+    missing: Missing | None = None,
     test: str = "t",
+    summary: str = "mean",
+    min_coverage: float = 0.0,
 ) -> Workflow:
     """Read a region that was fixed beforehand, and test its mean.
 
@@ -285,20 +383,32 @@ def a_priori(
     name : str
     labels : sequence of str
         Per map of ``inputnode.effects``.
-    region : Node
-        With an output ``mask_file``: a `GivenMask` or `SphereMask` whose origin is declared.
+    region : Node or Workflow
+        With an output ``mask_file`` (one, or one per map): a `GivenMask`, `SphereMask` or
+        `LabelMask` whose origin is declared, or what is made of such.
     region_name : str
     missing : Missing, optional
     test : {"t", "none"}
+    summary : {"mean", "median", "weighted", "component"}
+    min_coverage : float
+
+    Examples
+    --------
+    >>> from sequester.nodes.interfaces import SphereMask
+    >>> sphere = Node(SphereMask(centre=(0, 0, 0), radius=6, origin="a paper"), "sphere")
+    >>> plan = a_priori("beacon", ["01", "02"], sphere, "6 mm sphere")
+    >>> sorted(plan.list_node_names())
+    ['extract', 'inputnode', 'outputnode', 'sphere', 'test']
     """
     workflow = Workflow(name=name)
     start, end = _ends(workflow, ["mask_files", "values", "record_file"])
-    extract = node(Extract(), "extract", labels=list(labels), missing=missing)
+    extract = _reading(labels, missing, summary, min_coverage)
+    made, field = mask_of(region)
     workflow.connect(
         [
             (start, extract, [("effects", "in_files")]),
-            (region, extract, [("mask_file", "mask_files")]),
-            (region, end, [("mask_file", "mask_files")]),
+            (made, extract, [(field, "mask_files")]),
+            (made, end, [(field, "mask_files")]),
             (extract, end, [("values", "values")]),
         ]
     )
@@ -307,13 +417,90 @@ def a_priori(
     return workflow
 
 
+def parcels(
+    name: str,
+    labels: Sequence[str],
+    atlas: Node | str | list[str],
+    atlas_name: str,
+    numbers: Sequence[int] = (),
+    table_file: str | None = None,
+    missing: Missing | None = None,
+    min_coverage: float = 0.0,
+    own_labels: bool = False,
+) -> Workflow:
+    """Read every label of an atlas that was fixed beforehand: one extraction, one family of tests.
+
+    Parameters
+    ----------
+    name : str
+    labels : sequence of str
+        Per map of ``inputnode.effects``.
+    atlas : str, list of str, or Node
+        A label image on the maps' grid (or one per map), with a declared origin; or a node with
+        an output ``label_file``, such as `RegridLabels`.
+    atlas_name : str
+    numbers : sequence of int
+        The labels to read; none for all.
+    table_file : str, optional
+        A BIDS ``dseg.tsv`` with the labels' names.
+    missing : Missing, optional
+    min_coverage : float
+        A map that covers less of a label than this does not count there.
+    own_labels : bool
+        The label images were made from each subject's own other data.
+
+    Examples
+    --------
+    >>> from sequester.nodes.interfaces import RegridLabels
+    >>> on_grid = Node(RegridLabels(), "atlas")
+    >>> plan = parcels("garden", ["01", "02"], on_grid, "atlas X")
+    >>> sorted(plan.list_node_names())
+    ['atlas', 'extract', 'inputnode', 'outputnode', 'test']
+    """
+    workflow = Workflow(name=name)
+    start, end = _ends(workflow, ["values_file", "record_file"])
+    labels = list(labels)
+    extract = node(
+        ExtractParcels(),
+        "extract",
+        labels=labels,
+        parcels=list(numbers) or None,
+        missing=missing,
+        min_coverage=min_coverage,
+    )
+    test = node(
+        FamilyTest(),
+        "test",
+        labels=labels,
+        names=(name, A_PRIORI, atlas_name),
+        table_file=table_file,
+        min_coverage=min_coverage,
+        own_labels=own_labels,
+    )
+    passed = ("values_file", "coverage_file", "parcels", "sizes")
+    workflow.connect(
+        [
+            (start, extract, [("effects", "in_files")]),
+            (extract, test, [(field, field) for field in passed]),
+            (extract, end, [("values_file", "values_file")]),
+            (test, end, [("record_file", "record_file")]),
+        ]
+    )
+    if isinstance(atlas, Node):
+        workflow.connect(atlas, "label_file", extract, "label_files")
+    else:
+        extract.inputs.label_files = atlas
+    return workflow
+
+
 def exploratory(
     name: str,
     procedure: Procedure,
     labels: Sequence[str],
-    search: Node | None = None,
+    search: Node | Workflow | None = None,
     search_name: str = "whole map",
     test: str = "none",
+    min_coverage: float = 0.0,
     mem_gb: float = 1.0,
 ) -> Workflow:
     """Choose a region on all data and read it on the same data: a value marked biased.
@@ -324,15 +511,17 @@ def exploratory(
     procedure : Procedure
         Its mask rule is used once, on the group map of everybody.
     labels : sequence of str
-    search : Node, optional
+    search : Node or Workflow, optional
     search_name : str
     test : {"none", "t"}
         With "t" the values are not marked, and the guard refuses the run: the circular analysis.
+    min_coverage : float
     mem_gb : float
     """
     workflow = Workflow(name=name)
     start, end = _ends(workflow, ["mask_files", "values", "record_file"])
-    group = node(GroupMap(), "group", mem_gb, missing=procedure.missing)
+    kind = procedure.rule.map_kind
+    group = node(GroupMap(), "group", mem_gb, missing=procedure.missing, kind=kind)
     choose = node(
         ChooseMask(),
         "choose",
@@ -341,12 +530,8 @@ def exploratory(
         on_empty=procedure.on_empty,
         negative=procedure.tail == "negative",
     )
-    extract = node(
-        Extract(),
-        "extract",
-        labels=list(labels),
-        missing=procedure.missing,
-        exploratory=test == "none",
+    extract = _reading(
+        labels, procedure.missing, procedure.summary, min_coverage, exploratory=test == "none"
     )
     workflow.connect(
         [
@@ -359,81 +544,7 @@ def exploratory(
         ]
     )
     if search is not None:
-        workflow.connect(search, "mask_file", choose, "search_file")
+        workflow.connect(*mask_of(search), choose, "search_file")
     if test == "t":
         _fixed_test(workflow, extract, end, (name, EXPLORATORY, search_name))
     return workflow
-
-
-def study_workflow(settings: Settings, base_dir: Path) -> Workflow:
-    """The workflow of a whole STUDY.toml: maps of each subject, then every region's plan.
-
-    Parameters
-    ----------
-    settings : Settings
-    base_dir : Path
-        The engine's working folder; not an output.
-    """
-    workflow = Workflow(name=settings.name, base_dir=str(base_dir))
-    workflow.config["execution"] = {
-        "crashdump_dir": str(base_dir),
-        "create_report": "false",
-        "stop_on_first_crash": "true",
-        "remove_unnecessary_outputs": "false",
-        "poll_sleep_duration": "0.05",  # the default of 2 s would be most of a run
-    }
-    root = settings.root
-    maps = _subject_maps(settings, settings.rows, "maps")
-    by_run = tuple((label, (row,)) for label, runs in settings.rows for row in runs)
-    single = None
-    if any(roi.plan in OWN_MASKS for roi in settings.rois):
-        single = _subject_maps(settings, by_run, "runs")
-    people = [runs[0].person for _, runs in settings.rows]
-    reference = str(root / settings.rows[0][1][0].path)
-    for roi in settings.rois:
-        where = region_node(roi.region, "region", reference, root)
-        plan = _plan(roi, people, where, settings)
-        source = single if roi.plan in OWN_MASKS else maps
-        workflow.connect(source, "out_files", plan, "inputnode.effects")
-        if roi.choosing is not None:
-            choosing = _subject_maps(settings, roi.choosing, f"{roi.name}Choosing")
-            workflow.connect(choosing, "out_files", plan, "inputnode.choosing")
-    return workflow
-
-
-def _subject_maps(settings: Settings, rows: Subjects, name: str) -> Node:
-    return node(
-        SubjectMaps(),
-        name,
-        in_files=[[str(settings.root / row.path) for row in runs] for _, runs in rows],
-        labels=[label for label, _ in rows],
-        volumes=[[-1 if r.volume is None else r.volume for r in runs] for _, runs in rows],
-        missing=settings.missing,
-    )
-
-
-def _plan(roi: Roi, people: list[str], where: Node | None, settings: Settings) -> Workflow:
-    name, plan, search = roi.names
-    if plan == A_PRIORI:
-        assert where is not None, "an a-priori region is a mask or a sphere"
-        return a_priori(name, people, where, search, settings.missing, roi.test)
-    assert roi.procedure is not None
-    if plan in OWN_MASKS:
-        rows = [row for _, runs in settings.rows for row in runs]
-        subjects, runs = [row.person for row in rows], [row.unit.run for row in rows]
-        return own_masks(name, roi.procedure, subjects, runs, where, search, plan)
-    if plan == EXPLORATORY:
-        return exploratory(name, roi.procedure, people, where, search, roi.test)
-    return cross_fitted(
-        name,
-        roi.procedure,
-        people,
-        where,
-        search,
-        roi.n_flips,
-        settings.seed,
-        roi.interval,
-        roi.test,
-        plan,
-        roi.choosing is not None,
-    )

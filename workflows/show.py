@@ -17,6 +17,8 @@ from .judge import LEAK, Finding
 from .settings import Settings
 from .study import Study
 
+# Of a large family of labels, so many are shown in the table, and told in sentences.
+_ROWS, _SENTENCES = 10, 3
 CAUTION = "For research use, not for diagnosis. Follow your ethics board and local rules."
 
 
@@ -87,9 +89,11 @@ def print_tests(settings: Settings, tests: Sequence[Mapping[str, Any]]) -> None:
     """The results of a run: a line per region, then its sentence."""
     left = len(settings.left_out)
     note = f", {left} of the selected maps left out (reasons in the table)" if left else ""
-    people = {runs[0].person for _, runs in settings.rows}
-    alike = "" if len(people) == len(settings.rows) else f", {len(people)} of them independent"
-    click.echo(f"{settings.name}: {len(settings.rows)} subjects{alike}{note}\n")
+    subjects = {row.unit.sub: row.person for roi in settings.rois for row in roi.tested.rows}
+    people = set(subjects.values())
+    alike = "" if len(people) == len(subjects) else f", {len(people)} of them independent"
+    click.echo(f"{settings.name}: {len(subjects)} subjects{alike}{note}\n")
+    families = [[row for row in tests if row["roi"] == roi.name] for roi in settings.rois]
     rows = [
         [
             "roi",
@@ -103,26 +107,52 @@ def print_tests(settings: Settings, tests: Sequence[Mapping[str, Any]]) -> None:
             "Dice (noise)",
         ]
     ]
-    for row in tests:
-        head = [row["roi"], row["plan"]]
+    for row in (row for family in families for row in _strongest(family)):
+        head = [_called(row), row["plan"]]
         if row["biased"]:
             value = "-" if math.isnan(row["estimate"]) else f"{row['estimate']:.3g}"
             rows.append([*head, f"{value} BIASED", *["-"] * 6])
+            continue
+        if row["p"] is None:
+            rows.append([*head, f"{row['estimate']:.3g}", *["-"] * 6])
             continue
         mean, low, high = estimate_texts(row["estimate"], row["interval_low"], row["interval_high"])
         interval = f"{low} to {high} ({row['interval_kind']})"
         folds, dice = "-", "-"
         if row["n_folds"] is not None:
             found = row["n_folds"] - row["n_empty"] - row["n_replaced"]
-            folds = f"{found}/{row['n_folds']} folds"
-            dice = f"{_two_digits(row['dice'])} ({_two_digits(row['noise_dice'])})"
+            folded = row["dice"] is not None or row["noise_dice"] is not None
+            folds = f"{found}/{row['n_folds']} {'folds' if folded else 'masks'}"
+            if folded:
+                dice = f"{_two_digits(row['dice'])} ({_two_digits(row['noise_dice'])})"
         numbers = [_two_digits(row["dz"]), p_value(row["p"]), p_value(row["p_holm"])]
         rows.append([*head, mean, interval, *numbers, folds, dice])
     print_table(rows)
     if any(row["p"] is not None and row["p_holm"] is None for row in tests):
-        click.echo("\np Holm is not given: the search regions overlap (or one is the whole map).")
-    for row in tests:
-        click.echo("\n" + textwrap.fill(row["sentence"], 96))
+        click.echo("\np Holm is not given where search regions overlap (or are the whole map).")
+    for family in families:
+        shown = _strongest(family, _SENTENCES)
+        for row in shown:
+            click.echo("\n" + textwrap.fill(row["sentence"], 96))
+        if len(shown) < len(family):
+            told = sum(row["p_holm"] is not None and row["p_holm"] < 0.05 for row in family)
+            click.echo(
+                f"\n{family[0]['roi']}: {len(family)} labels, {told} with Holm-adjusted p < .05; "
+                "all of them are in roi_tests.tsv."
+            )
+
+
+def _strongest(
+    family: Sequence[Mapping[str, Any]], most: int = _ROWS
+) -> Sequence[Mapping[str, Any]]:
+    """The tests of one region, or the labels of its atlas with the smallest p."""
+    if len(family) <= most:
+        return family
+    return sorted(family, key=lambda row: math.inf if row["p"] is None else row["p"])[:most]
+
+
+def _called(row: Mapping[str, Any]) -> str:
+    return f"{row['roi']} {row['parcel_name']}" if row["parcel_name"] else str(row["roi"])
 
 
 def print_table(rows: Sequence[Sequence[str]]) -> None:

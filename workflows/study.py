@@ -2,13 +2,15 @@
 
 The table is a TSV with a row per effect map: ``path`` and ``volume`` (of a 4-D file, from 0),
 the BIDS entities of the unit, the ``suffix`` of what was acquired, ``contrast``,
-``exclude_reason``, ``exchange`` (rows that share it count as one subject), and any covariates.
+``exclude_reason``, ``exchange`` (rows that share it count as one subject), ``variance`` (the path
+of the map's variance map), ``space``, and any covariates.
 """
 
 from __future__ import annotations
 
 import csv
 import os
+import re
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
@@ -33,6 +35,13 @@ COLUMNS = (
     "exchange",
 )
 _BLANK = ("", "n/a")
+# Columns that are there when a row needs them, beside COLUMNS and the entities.
+_MORE = ("variance", "space")
+_TEXTS = ("contrast", "exclude_reason", "exchange", *_MORE)
+
+
+# What tells the cells of a design apart; `group` is a column of the table if there is one.
+CELLS = ("contrast", "ses", "task", "acq", "group")
 
 
 @dataclass(frozen=True)
@@ -47,6 +56,10 @@ class Row:
         Which volume of a 4-D file.
     unit : Unit
     contrast, exclude_reason, exchange : str
+    variance : str
+        The map's variance map, relative to the root; at the same volume of a 4-D file.
+    space : str
+        The named space the map is in, as stated or by the ``space`` entity of its name.
     extra : tuple of (column, value)
         Covariates, as text.
     line : int
@@ -59,6 +72,8 @@ class Row:
     contrast: str = ""
     exclude_reason: str = ""
     exchange: str = ""
+    variance: str = ""
+    space: str = ""
     extra: tuple[tuple[str, str], ...] = ()
     line: int = 0
 
@@ -66,9 +81,17 @@ class Row:
         """The value in a column, as text."""
         if name in ENTITIES or name == "suffix":
             return str(getattr(self.unit, name))
-        if name in ("path", "contrast", "exclude_reason", "exchange"):
+        if name in ("path", *_TEXTS):
             return str(getattr(self, name))
         return dict(self.extra)[name]
+
+    @property
+    def cell(self) -> list[str]:
+        """Its contrast, session, task, acquisition and group."""
+        return [
+            dict(self.extra).get(name, "") if name == "group" else self.column(name)
+            for name in CELLS
+        ]
 
     @property
     def person(self) -> str:
@@ -152,8 +175,9 @@ class Study:
         }
         self._by_path: dict[str, list[Row]] = {}
         for row in self.rows:
-            for key in self._keys(row.path):
-                self._by_path.setdefault(key, []).append(row)
+            for path in (row.path, *([row.variance] if row.variance else [])):
+                for key in self._keys(path):
+                    self._by_path.setdefault(key, []).append(row)
         self._origin_of: dict[str, Origin] = {}
         for origin in self.origins:
             for name in origin.files:
@@ -311,14 +335,15 @@ def read_table(path: str | Path, root: Path | None = None, origins: Sequence[Ori
     ]
     seen: dict[tuple[str, int | None], int] = {}
     for row in rows:
-        before = seen.setdefault((row.path, row.volume), row.line)
-        if before != row.line:
-            raise InputError(
-                "the same map on two rows",
-                where=f"{path}, lines {before} and {row.line}",
-                got=row.name,
-                remedy="each map of a subject needs a file (or volume) of its own",
-            )
+        for name in filter(None, (row.path, row.variance)):
+            before = seen.setdefault((name, row.volume), row.line)
+            if before != row.line or row.path == row.variance:
+                raise InputError(
+                    "the same map on two rows",
+                    where=f"{path}, lines {before} and {row.line}",
+                    got=name if row.volume is None else f"{name} volume {row.volume}",
+                    remedy="each map of a subject needs a file (or volume) of its own",
+                )
     return Study(root or path.parent, rows, tuple(origins), header)
 
 
@@ -340,28 +365,41 @@ def _row(cells: dict[str, str], where: str, line: int) -> Row:
     volume = value.get("volume", "")
     if volume and not volume.isdecimal():
         raise InputError("volume is no number", where=where, expected="0, 1, ...", got=volume)
-    known = {*COLUMNS, *ENTITIES}
+    known = {*COLUMNS, *ENTITIES, *_MORE}
     return Row(
         path=value["path"],
         volume=int(volume) if volume else None,
         unit=Unit(**{e: value.get(e, "") for e in ENTITIES}, suffix=value.get("suffix", "")),
-        contrast=value.get("contrast", ""),
-        exclude_reason=value.get("exclude_reason", ""),
-        exchange=value.get("exchange", ""),
+        **{name: value.get(name, "") for name in _TEXTS if name != "space"},
+        space=value.get("space", "") or space_in_name(value["path"]),
         extra=tuple((name, cell) for name, cell in value.items() if name not in known),
         line=line,
     )
 
 
+def space_in_name(path: str) -> str:
+    """The BIDS ``space`` entity of a file name; "" when it has none.
+
+    Examples
+    --------
+    >>> space_in_name("sub-01/sub-01_space-garden_stat-effect_statmap.nii.gz"), space_in_name("a")
+    ('garden', '')
+    """
+    match = re.search(r"(?:^|_)space-([A-Za-z0-9]+)(?:_|\.|$)", Path(path).name)
+    return match[1] if match else ""
+
+
 def table_text(rows: Iterable[Row]) -> str:
     """A study table as TSV, blank cells as n/a, sorted by path and volume.
 
-    A column ``ce`` (contrast agent, after ``acq``) is added when a row has one.
+    The columns ``ce`` (contrast agent, after ``acq``), ``variance`` and ``space`` are added when
+    a row has one.
     """
     listed = sorted(rows, key=lambda r: (r.path, -1 if r.volume is None else r.volume))
     columns = list(COLUMNS)
     if any(row.unit.ce for row in listed):
         columns.insert(columns.index("dir"), "ce")
+    columns += [name for name in _MORE if any(row.column(name) for row in listed)]
     lines = ["\t".join(columns)]
     for row in listed:
         volume = "" if row.volume is None else str(row.volume)

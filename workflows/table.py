@@ -11,6 +11,7 @@ import os
 import re
 from collections.abc import Iterator
 from pathlib import Path
+from typing import Any
 
 from ..nodes.errors import InputError
 from ..nodes.images import n_volumes, open_image
@@ -98,10 +99,21 @@ def _rows(path: Path, fields: dict[str, str], suffix: str, base: Path) -> list[R
     unit = Unit(**{e: fields.get(e, "") for e in ENTITIES}, suffix=suffix)
     # A broken link stays in the table: the run says that it is not fetched.
     total = n_volumes(path, open_image(path)) if path.exists() else 1
-    contrast = fields.get("contrast", "")
+    more: dict[str, Any] = {
+        "contrast": fields.get("contrast", ""),
+        "variance": _variance_of(path, relative) if fields.get("stat") == "effect" else "",
+        "space": fields.get("space", ""),
+    }
     if total == 1:
-        return [Row(relative, None, unit, contrast)]
-    return [Row(relative, volume, unit, contrast) for volume in range(total)]
+        return [Row(relative, None, unit, **more)]
+    return [Row(relative, volume, unit, **more) for volume in range(total)]
+
+
+def _variance_of(path: Path, relative: str) -> str:
+    """The variance map of the same name beside an effect map; "" when there is none."""
+    name = path.name.replace("_stat-effect_", "_stat-variance_")
+    beside = path.with_name(name)
+    return os.path.join(os.path.dirname(relative), name) if beside.is_file() else ""
 
 
 def _entities(stem: str) -> dict[str, str] | None:

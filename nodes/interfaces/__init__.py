@@ -4,22 +4,36 @@ Beside its ports, each class declares its touch rules (which input elements each
 derives from) and, where it has one, its meeting or its statistic.
 """
 
+from .foldlists import FoldLists, HeldOutSummary, MasksByRow
 from .groupmaps import GroupMap, LeaveOutMaps
 from .images import SubjectMaps
-from .masks import ChooseMask, GivenMask, SphereMask
+from .masks import ChooseEach, ChooseMask, GivenMask, SphereMask
+from .parcels import ExtractParcels, FamilyTest
 from .procedure import ChooseByFold, ChooseWithin, FlipTest
+from .regions import CombineMasks, ErodeMask, LabelMask, MirrorMask, RegridLabels
 from .roi import Extract, FixedRegionTest
 
 __all__ = [
     "ChooseByFold",
+    "ChooseEach",
     "ChooseMask",
     "ChooseWithin",
+    "CombineMasks",
+    "ErodeMask",
     "Extract",
+    "ExtractParcels",
+    "FamilyTest",
     "FixedRegionTest",
     "FlipTest",
+    "FoldLists",
     "GivenMask",
     "GroupMap",
+    "HeldOutSummary",
+    "LabelMask",
     "LeaveOutMaps",
+    "MasksByRow",
+    "MirrorMask",
+    "RegridLabels",
     "SphereMask",
     "SubjectMaps",
 ]

@@ -78,6 +78,25 @@ class SequesterInterface(SimpleInterface, ABC):
         return value if isdefined(value) else None
 
 
+def one_or_each(field: str, items: list[Any] | None, n_rows: int) -> list[Any]:
+    """An input that holds one item for all rows, or one per row: one per row.
+
+    Raises
+    ------
+    InputError
+        For any other number of items.
+    """
+    if not items:
+        return [None] * n_rows
+    if len(items) not in (1, n_rows):
+        raise InputError(
+            f"{field} do not pair up with the rows",
+            expected=f"one for all, or one for each of {n_rows} rows",
+            got=str(len(items)),
+        )
+    return list(items) * (n_rows if len(items) == 1 else 1)
+
+
 def kept_error(folder: Path) -> SequesterError | None:
     """The error a node of ours (or an element of it) left in its working folder, as raised."""
     elements = folder.glob(f"mapflow/*/{ERROR_FILE}")  # where a MapNode runs its elements
@@ -109,6 +128,12 @@ def write_json(path: Path, content: dict[str, Any]) -> str:
     return str(path)
 
 
+def read_json(path: str | Path) -> dict[str, Any]:
+    """A record that a node wrote."""
+    record: dict[str, Any] = json.loads(Path(path).read_text())
+    return record
+
+
 def _finite(value: Any) -> Any:
     if isinstance(value, dict):
         return {key: _finite(item) for key, item in value.items()}
@@ -124,6 +149,8 @@ __all__ = [
     "TraitedSpec",
     "isdefined",
     "kept_error",
+    "one_or_each",
+    "read_json",
     "traits",
     "write_json",
 ]

@@ -6,16 +6,18 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
-from nipype.interfaces.base import File
+from nipype.interfaces.base import File, InputMultiObject
 
 from ..errors import EmptyFoldError, InputError
 from ..images import geometry_of, open_image, read_map, read_mask, write_map
-from ..masks import Cluster, Strongest, Threshold, choose, sphere, strongest
+from ..masks import Cluster, PeakSphere, Strongest, Threshold, choose, sphere, strongest
 from ..procedure import ON_EMPTY
-from ..rules import Branch, Inputs, Leaf, Rule, Tree, joined, leaves, only
+from ..rules import Branch, Inputs, Leaf, Rule, Tree, each, joined, leaves, only
 from ..space import Grid
 from ..touch import Touch
-from .base import InputSpec, SequesterInterface, TraitedSpec, traits
+from .base import InputSpec, SequesterInterface, TraitedSpec, one_or_each, traits
+
+RULES = (Threshold, Cluster, Strongest, PeakSphere)
 
 
 class _MaskOutput(TraitedSpec):
@@ -26,14 +28,47 @@ class _ChooseOutput(_MaskOutput):
     replaced = traits.Bool(desc="the rule found nothing, and the strongest features stand in")
 
 
-class _ChooseInput(InputSpec):
-    in_file = File(exists=True, mandatory=True, desc="group map")
-    rule = traits.Instance(object, mandatory=True, desc="Threshold, Cluster or Strongest")
-    search_file = File(exists=True, desc="search region; default the whole map")
-    count_file = File(exists=True, desc="maps with data, when the rule's threshold is a p")
+class _RuleInput(InputSpec):
+    rule = traits.Instance(object, mandatory=True, desc="how a region is read off a map")
     negative = traits.Bool(False, usedefault=True, desc="look for low values instead of high")
     on_empty = traits.Enum(*ON_EMPTY, usedefault=True, desc="when the rule finds nothing")
     k = traits.Int(0, usedefault=True, desc='features for on_empty = "strongest"')
+
+
+def _write_chosen(
+    inputs: Any, map_file: str, search_file: str | None, count_file: str | None, target: Path
+) -> bool:
+    """Write the region a rule reads off one map; whether the strongest features stood in."""
+    rule = inputs.rule
+    if not isinstance(rule, RULES):
+        raise InputError("no mask rule", got=repr(rule))
+    values, geometry = read_map(map_file)
+    if inputs.negative:
+        values = -values
+    inside = np.ones(geometry.shape, bool)
+    if search_file is not None:
+        inside, _ = read_mask(search_file, (map_file, geometry))
+    n = None if count_file is None else read_map(count_file)[0][inside]
+    grid = Grid(geometry.shape, geometry.affine, inside)
+    chosen = choose(values[inside], rule, grid, n)
+    replaced = bool(not chosen.any() and inputs.on_empty == "strongest")
+    if replaced:
+        chosen = strongest(values[inside], inputs.k)
+    if not chosen.any() and inputs.on_empty == "stop":
+        raise EmptyFoldError(
+            "the rule found nothing",
+            where=f"{map_file}, search region {search_file or 'whole map'}",
+            expected=rule.describe("negative" if inputs.negative else "positive"),
+            remedy="relax the rule, or report that nothing was found",
+        )
+    write_map(target, grid.filled(chosen), geometry)
+    return replaced
+
+
+class _ChooseInput(_RuleInput):
+    in_file = File(exists=True, mandatory=True, desc="group map")
+    search_file = File(exists=True, desc="search region; default the whole map")
+    count_file = File(exists=True, desc="maps with data, when the rule's threshold is a p")
 
 
 class ChooseMask(SequesterInterface):
@@ -47,31 +82,46 @@ class ChooseMask(SequesterInterface):
     }
 
     def _work(self, cwd: Path) -> dict[str, Any]:
-        rule = self.inputs.rule
-        if not isinstance(rule, Threshold | Cluster | Strongest):
-            raise InputError("no mask rule", got=repr(rule))
-        values, geometry = read_map(self.inputs.in_file)
-        if self.inputs.negative:
-            values = -values
+        mask = cwd / "mask.nii.gz"
         search, count = self._value("search_file"), self._value("count_file")
-        inside = np.ones(geometry.shape, bool)
-        if search is not None:
-            inside, _ = read_mask(search, (self.inputs.in_file, geometry))
-        n = None if count is None else read_map(count)[0][inside]
-        grid = Grid(geometry.shape, geometry.affine, inside)
-        chosen = choose(values[inside], rule, grid, n)
-        replaced = not chosen.any() and self.inputs.on_empty == "strongest"
-        if replaced:
-            chosen = strongest(values[inside], self.inputs.k)
-        if not chosen.any() and self.inputs.on_empty == "stop":
-            raise EmptyFoldError(
-                "the rule found nothing",
-                where=f"search region {search or 'whole map'}",
-                expected=rule.describe(),
-                remedy="relax the rule, or report that nothing was found",
-            )
-        path = write_map(cwd / "mask.nii.gz", grid.filled(chosen), geometry)
-        return {"mask_file": str(path), "replaced": replaced}
+        replaced = _write_chosen(self.inputs, self.inputs.in_file, search, count, mask)
+        return {"mask_file": str(mask), "replaced": replaced}
+
+
+class _ChooseEachInput(_RuleInput):
+    in_files = traits.List(File(exists=True), mandatory=True, desc="per row: the map that chooses")
+    search_files = InputMultiObject(
+        File(exists=True), desc="one search region for all, or one per row; default the whole map"
+    )
+
+
+class _ChooseEachOutput(TraitedSpec):
+    row_masks = traits.List(File(exists=True), desc="per row: the region chosen on its map")
+    replaced = traits.List(traits.Bool, desc="per row: the strongest features stand in")
+
+
+class ChooseEach(SequesterInterface):
+    """Per row, the region a rule reads off that row's own map: localizers.
+
+    A height is a threshold on the map's own values (t, say, when it is a t map).
+    """
+
+    input_spec = _ChooseEachInput
+    output_spec = _ChooseEachOutput
+    touch_rules = {
+        "row_masks": each("in_files", one_or_each=("search_files",)),
+        "replaced": each("in_files", one_or_each=("search_files",)),
+    }
+
+    def _work(self, cwd: Path) -> dict[str, Any]:
+        maps = self.inputs.in_files
+        searches = one_or_each("search_files", self._value("search_files"), len(maps))
+        masks = [cwd / f"row{row:05d}.nii.gz" for row in range(len(maps))]
+        replaced = [
+            _write_chosen(self.inputs, path, search, None, mask)
+            for path, search, mask in zip(maps, searches, masks, strict=True)
+        ]
+        return {"row_masks": [str(mask) for mask in masks], "replaced": replaced}
 
 
 def _placed(inputs: Inputs) -> Tree:
@@ -119,10 +169,20 @@ class _GivenInput(InputSpec):
     regrid = traits.Bool(
         False, usedefault=True, desc="bring a mask on another grid to that of the reference"
     )
+    weights = traits.Bool(
+        False, usedefault=True, desc="keep the mask's own values, as weights of a weighted mean"
+    )
 
 
 class GivenMask(SequesterInterface):
-    """A mask from outside, on the data's grid (or brought to it) and made 0 and 1."""
+    """A mask from outside, on the data's grid (or brought to it); 0 and 1 unless its values count.
+
+    Raises
+    ------
+    InputError
+        For an empty mask, one on another grid (unless `regrid`), and weights to be regridded:
+        a weight has no nearest value.
+    """
 
     input_spec = _GivenInput
     output_spec = _MaskOutput
@@ -130,5 +190,7 @@ class GivenMask(SequesterInterface):
 
     def _work(self, cwd: Path) -> dict[str, Any]:
         like = (self.inputs.reference, geometry_of(open_image(self.inputs.reference)))
-        mask, geometry = read_mask(self.inputs.in_file, like, regrid=self.inputs.regrid)
-        return {"mask_file": str(write_map(cwd / "mask.nii.gz", mask, geometry))}
+        regrid = self.inputs.regrid and not self.inputs.weights
+        mask, geometry = read_mask(self.inputs.in_file, like, regrid=regrid)
+        values = read_map(self.inputs.in_file)[0] if self.inputs.weights else mask
+        return {"mask_file": str(write_map(cwd / "mask.nii.gz", values, geometry))}

@@ -7,10 +7,11 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
-from nipype.interfaces.base import File
+from nipype.interfaces.base import File, InputMultiObject
 
 from .. import progress
 from ..errors import SequesterError
+from ..heldout import INTERVALS, cross_fitted_result
 from ..images import (
     Bools,
     Geometry,
@@ -22,10 +23,9 @@ from ..images import (
     write_map,
 )
 from ..procedure import Prepared, Procedure, held_out_rows
-from ..results import INTERVALS, cross_fitted_result
 from ..rules import Statistic, all_but_held_out, chosen_on
 from ..space import Grid
-from .base import InputSpec, SequesterInterface, TraitedSpec, traits, write_json
+from .base import InputSpec, SequesterInterface, TraitedSpec, one_or_each, traits, write_json
 
 
 class _ProcedureInput(InputSpec):
@@ -38,7 +38,7 @@ class _ProcedureInput(InputSpec):
 
 def _prepared(inputs: Any) -> tuple[Prepared, Grid, Geometry]:
     """The procedure on the files of a node."""
-    inside = _search(inputs, inputs.in_files[0])
+    inside = _inside(inputs.search_file or None, inputs.in_files[0])
     effects, grid, geometry = stack(inputs.in_files, inside)
     names = inputs.row_names or inputs.in_files
     tested = None
@@ -53,11 +53,11 @@ def _prepared(inputs: Any) -> tuple[Prepared, Grid, Geometry]:
     return ready, grid, geometry
 
 
-def _search(inputs: Any, reference: str) -> Bools | None:
+def _inside(search_file: str | None, reference: str) -> Bools | None:
     """The search region on the grid of a map; None for the whole of it."""
-    if not inputs.search_file:
+    if not search_file:
         return None
-    return read_mask(inputs.search_file, (reference, geometry_of(open_image(reference))))[0]
+    return read_mask(search_file, (reference, geometry_of(open_image(reference))))[0]
 
 
 def _per_fold(settings: Any) -> list[tuple[int, ...]]:
@@ -114,7 +114,13 @@ class ChooseByFold(SequesterInterface):
         }
 
 
-class _WithinInput(_ProcedureInput):
+class _WithinInput(InputSpec):
+    in_files = traits.List(File(exists=True), mandatory=True, desc="per row: an effect map")
+    labels = traits.List(traits.Str, mandatory=True, desc="per row: the subject")
+    search_files = InputMultiObject(
+        File(exists=True), desc="one search region for all, or one per row; default the whole map"
+    )
+    procedure = traits.Instance(Procedure, mandatory=True, desc="folds over runs, map, rule")
     runs = traits.List(traits.Str, mandatory=True, desc="per row: the run, distinct in a subject")
 
 
@@ -147,25 +153,35 @@ class ChooseWithin(SequesterInterface):
     output_spec = _WithinOutput
     touch_rules = {
         "row_masks": chosen_on(
-            "in_files", _own_rows, ("labels", "runs", "procedure"), ("search_file",)
+            "in_files",
+            _own_rows,
+            ("labels", "runs", "procedure"),
+            one_or_each=("search_files",),
         )
     }
 
     def _work(self, cwd: Path) -> dict[str, Any]:
-        labels, runs = self.inputs.labels, self.inputs.runs
+        labels, maps = self.inputs.labels, self.inputs.in_files
+        searches = one_or_each("search_files", self._value("search_files"), len(maps))
         files: dict[int, str] = {}
         for rows in _rows_of(labels).values():
-            paths = [self.inputs.in_files[row] for row in rows]
-            effects, grid, geometry = stack(paths, _search(self.inputs, paths[0]))
-            own = [runs[row] for row in rows]
-            ready = self.inputs.procedure.prepare(effects, own, grid)
-            masks = ready.masks()
-            for fold, mask in zip(ready.folds, masks, strict=True):
-                for held in fold.held_out:
-                    row = rows[held]
-                    path = cwd / f"row{row:05d}.nii.gz"
-                    files[row] = str(write_map(path, grid.filled(mask), geometry))
+            # A subject's rows share one search region unless each has its own.
+            for search in dict.fromkeys(searches[row] for row in rows):
+                ready, grid, geometry = self._subject([maps[row] for row in rows], search, rows)
+                for fold, mask in zip(ready.folds, ready.masks(), strict=True):
+                    for row in (rows[held] for held in fold.held_out):
+                        if searches[row] == search:
+                            path = cwd / f"row{row:05d}.nii.gz"
+                            files[row] = str(write_map(path, grid.filled(mask), geometry))
         return {"row_masks": [files[row] for row in range(len(labels))]}
+
+    def _subject(
+        self, paths: list[str], search: str | None, rows: list[int]
+    ) -> tuple[Prepared, Grid, Geometry]:
+        """The procedure on one subject's runs."""
+        effects, grid, geometry = stack(paths, _inside(search, paths[0]))
+        runs = [self.inputs.runs[row] for row in rows]
+        return self.inputs.procedure.prepare(effects, runs, grid), grid, geometry
 
 
 class _FlipInput(_ProcedureInput):

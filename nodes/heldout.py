@@ -1,0 +1,278 @@
+"""What may be said of held-out values: estimate, interval and the test that matches, or why none.
+
+The cross-fitted plans have the whole-procedure flip test. Where the procedure cannot be repeated
+(group maps made by other software) there is an estimate and no p.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Sequence
+from typing import Any
+
+import numpy as np
+
+from .errors import InputError
+from .procedure import FlipTest, Outcome, Prepared
+from .results import RoiResult, estimate_texts, known, least, p_text
+from .roi import flip_interval, fold_interval, jackknife_interval, per_person
+
+INTERVALS = ("flips", "jackknife", "folds")
+
+FLIP_NULL = (
+    "the subjects' maps are independent and jointly symmetric about zero over the search region"
+)
+
+
+def cross_fitted_result(
+    ready: Prepared,
+    names: tuple[str, str, str],
+    n_flips: int,
+    seed: int,
+    interval: str = "flips",
+    progress: Callable[[int, int], None] | None = None,
+) -> tuple[RoiResult, Outcome, FlipTest]:
+    """Everything the cross-fitted plans may say: estimate, interval, whole-procedure p.
+
+    Parameters
+    ----------
+    ready : Prepared
+        The procedure on the study's effects.
+    names : (roi, plan, search region)
+    n_flips, seed : int
+    interval : {"flips", "jackknife", "folds"}
+    progress : callable, optional
+    """
+    if interval not in INTERVALS:
+        raise InputError(
+            "unknown interval", expected=f"one of {', '.join(INTERVALS)}", got=repr(interval)
+        )
+    outcome = ready.outcome()
+    test = ready.flip_test(n_flips, seed, progress)
+    people = ready.per_person(outcome.values)
+    if interval == "flips":
+        made = flip_interval(people, test.abs_t_quantile)
+    elif interval == "folds":
+        made = fold_interval(people, len(ready.folds))
+    else:
+        made = jackknife_interval(outcome.estimate, ready.without_each_person())
+    roi, plan, search = names
+    procedure = ready.procedure
+    kind = (
+        f"whole-procedure sign flip, all {test.n_flips} flips"
+        if test.exact
+        else f"whole-procedure sign flip, {test.n_flips} random flips"
+    )
+    sided = "greater" if procedure.tail == "positive" else "less"
+    sign = 1 if procedure.tail == "positive" else -1
+    where = f"in the search region '{search}'"
+    folds = len(ready.folds)
+    notes = [
+        f" In {len(names)} of {folds} folds the rule found nothing; there {what}."
+        for names, what in (
+            (outcome.replaced, "the strongest features stood in"),
+            (outcome.empty, "the value counts as 0"),
+        )
+        if names
+    ]
+    mean, low, high = estimate_texts(outcome.estimate, made.low, made.high)
+    sentence = (
+        f"{roi}: {procedure.describe()} {where}, chosen in {folds} folds "
+        f"({plan}); held-out mean {mean} "
+        f"({made.kind} 95 % interval {low} to {high}), {p_text(test.p)} "
+        f"({kind}, one-sided: {sided}). Null: {FLIP_NULL} '{search}'; a rejection says that there "
+        f"is a replicable effect somewhere {where}, not at any one voxel.{''.join(notes)}"
+    )
+    result = RoiResult(
+        roi=roi,
+        plan=plan,
+        rule=procedure.describe(),
+        search=search,
+        n_subjects=len(ready.people),
+        estimate=outcome.estimate,
+        target="mean true effect over the fold masks actually used",
+        biased=False,
+        interval=made,
+        t=test.t,
+        p=test.p,
+        p_kind=kind,
+        sided=sided,
+        null=FLIP_NULL,
+        dz=sign * test.t / float(np.sqrt(len(people))) if np.isfinite(test.t) and test.t else None,
+        n_flips=test.n_flips,
+        p_error=None if test.exact else float(np.sqrt(test.p * (1 - test.p) / test.n_flips)),
+        n_folds=folds,
+        n_empty=len(outcome.empty),
+        empty=outcome.empty,
+        replaced=outcome.replaced,
+        dice=known(outcome.dice),
+        noise_dice=known(test.noise_dice),
+        mask_sizes=outcome.sizes,
+        coverage=least(outcome.coverage),
+        sentence=sentence,
+    )
+    return result, outcome, test
+
+
+def held_out_result(
+    values: Sequence[float],
+    labels: Sequence[str],
+    names: tuple[str, str, str],
+    n_folds: int,
+    sizes: Sequence[int],
+    coverage: Sequence[float],
+    rule: str,
+) -> RoiResult:
+    """Held-out values whose group maps came from outside: their mean, and no test of it.
+
+    Parameters
+    ----------
+    values : sequence of float, one per row
+        Each read in a mask chosen without it.
+    labels : sequence of str, one per row
+        A label's rows are averaged first.
+    names : (roi, plan, search region)
+    n_folds : int
+        With at most half as many folds as subjects the mean has an approximate interval
+        (Nadeau & Bengio 2003), otherwise none.
+    sizes, coverage : sequence, one per row
+    rule : str
+        The mask rule in words.
+
+    Examples
+    --------
+    >>> names = ("Arbor", "2 folds", "brain")
+    >>> made = held_out_result([1.0, 2.0, 4.0, 5.0], list("abcd"), names, 2, [9] * 4, [1] * 4, "x")
+    >>> made.estimate, made.p, made.interval.kind
+    (3.0, None, 'approximate')
+    """
+    people = np.asarray(per_person(values, labels))
+    mean = float(people.mean())
+    made = fold_interval(people, n_folds) if 2 * n_folds <= len(people) else None
+    if made is None:
+        told = f"{mean:.3g}; no interval, for which the folds are too many"
+    else:
+        text, low, high = estimate_texts(mean, made.low, made.high)
+        told = f"{text} ({made.kind} 95 % interval {low} to {high})"
+    return _untested(
+        names,
+        n_folds,
+        sizes,
+        coverage,
+        rule,
+        f"held-out mean of {len(people)} subjects {told}",
+        "the group maps were made outside the procedure (by other software, or a model of their "
+        "own), so it cannot be repeated under flips; and held-out values are correlated across "
+        "folds, so no test is made of them",
+        n_subjects=len(people),
+        estimate=mean,
+        target="mean true effect over the fold masks actually used",
+        interval=made,
+    )
+
+
+def held_out_difference(
+    values: Sequence[float],
+    labels: Sequence[str],
+    groups: Sequence[str],
+    compared: tuple[str, str],
+    names: tuple[str, str, str],
+    n_folds: int,
+    sizes: Sequence[int],
+    coverage: Sequence[float],
+    rule: str,
+) -> RoiResult:
+    """Held-out values of two groups: the difference of their means, and no test of it.
+
+    Parameters
+    ----------
+    values : sequence of float, one per row
+        Each read in a mask chosen without it.
+    labels, groups : sequence of str, one per row
+        The subject, and the group that all rows of the subject belong to.
+    compared : (first, second)
+        The difference is the first group's mean minus the second's; other groups do not count.
+    names : (roi, plan, search region)
+    n_folds : int
+    sizes, coverage : sequence, one per row
+    rule : str
+        The mask rule in words.
+
+    Raises
+    ------
+    InputError
+        When a subject is in two groups, or nobody is in one of those compared.
+
+    Examples
+    --------
+    >>> names, groups = ("Arbor", "2 folds", "brain"), ["hill", "hill", "pond", "pond"]
+    >>> made = held_out_difference(
+    ...     [1.0, 2.0, 4.0, 5.0], list("abcd"), groups, ("pond", "hill"), names, 2, [9], [1], "x"
+    ... )
+    >>> made.estimate, made.p, made.interval
+    (3.0, None, None)
+    """
+    of_label: dict[str, str] = {}
+    for label, group in zip(labels, groups, strict=True):
+        if of_label.setdefault(label, group) != group:
+            raise InputError(
+                "a subject in two groups", where=label, got=f"{of_label[label]} and {group}"
+            )
+    people = dict(zip(sorted(of_label), per_person(values, labels), strict=True))
+    means, counts = [], []
+    for group in compared:
+        own = [people[label] for label in people if of_label[label] == group]
+        if not own:
+            raise InputError(
+                "a group without subjects",
+                where=group,
+                expected=f"one of {', '.join(sorted(set(groups)))}",
+            )
+        means.append(float(np.mean(own)))
+        counts.append(len(own))
+    difference = means[0] - means[1]
+    first, second = (f"{group} (n = {n})" for group, n in zip(compared, counts, strict=True))
+    return _untested(
+        names,
+        n_folds,
+        sizes,
+        coverage,
+        rule,
+        f"held-out mean of {first} minus that of {second} {difference:.3g}",
+        "held-out values are correlated across folds; the test that matches exchanges the group "
+        "labels of the whole procedure, and is not made here",
+        n_subjects=sum(counts),
+        estimate=difference,
+        target=f"{compared[0]} minus {compared[1]}: difference of the groups' mean true effects "
+        "over the fold masks actually used",
+    )
+
+
+def _untested(
+    names: tuple[str, str, str],
+    n_folds: int,
+    sizes: Sequence[int],
+    coverage: Sequence[float],
+    rule: str,
+    told: str,
+    why: str,
+    **more: Any,
+) -> RoiResult:
+    """What every record of held-out values without a test holds."""
+    roi, plan, search = names
+    empty = sum(size == 0 for size in sizes)
+    note = f" {empty} of {len(sizes)} masks are empty; their value counts as 0." if empty else ""
+    return RoiResult(
+        roi=roi,
+        plan=plan,
+        rule=rule,
+        search=search,
+        biased=False,
+        n_folds=n_folds,
+        mask_sizes=tuple(sizes),
+        coverage=least(coverage),
+        sentence=(
+            f"{roi}: {rule} in the search region '{search}', chosen in {n_folds} folds ({plan}); "
+            f"{told}. No p-value: {why}.{note}"
+        ),
+        **more,
+    )

@@ -1,0 +1,406 @@
+"""Whole studies on the data that labs have: tasks, sessions, groups, runs, grids of one's own.
+
+Every value is compared with plain numpy on the files; every study runs through the engine.
+"""
+
+from __future__ import annotations
+
+import csv
+import json
+import shutil
+from pathlib import Path
+
+import nibabel as nib
+import numpy as np
+import pytest
+from sequester import read_settings, run_study
+from sequester.nodes.errors import InputError
+from sequester.workflows.guard import GuardRefused
+from sequester.workflows.run import check_study
+
+SHAPE, LABELS = (8, 8, 6), {1: "Arbor", 2: "Brook", 3: "Cinder"}
+SUBJECTS = [f"{i:02d}" for i in range(1, 7)]
+HEAD = '[study]\nname = "garden"\ntable = "table.tsv"\nseed = 3\n[data]\n'
+COLUMNS = ("path", "sub", "ses", "task", "run", "suffix", "contrast", "exclude_reason", "group",
+           "variance")  # fmt: skip
+
+
+def affine(shift: float = 0.0, flip: bool = False) -> np.ndarray:
+    made = np.diag([3.0, 3.0, 3.0, 1.0])
+    made[:3, 3] = [-10.5 + shift, -12 - shift, -9 + shift]
+    if flip:  # left-handed: voxels run from right to left
+        made[0] *= -1
+    return made
+
+
+def coordinates(grid: np.ndarray) -> np.ndarray:
+    index = np.stack(np.meshgrid(*map(np.arange, SHAPE), indexing="ij"), axis=-1)
+    return index @ grid[:3, :3].T + grid[:3, 3]
+
+
+def save(path: Path, data: np.ndarray, grid: np.ndarray) -> None:
+    path.parent.mkdir(parents=True, exist_ok=True)
+    nib.save(nib.Nifti1Image(data, grid), path)
+
+
+def plant(root: Path, *, own_grids: bool = False) -> Path:
+    """Six subjects, two sessions, two tasks, up to three runs, two groups, an atlas, a ball."""
+    rng, rows = np.random.default_rng(5), []
+    for i, sub in enumerate(SUBJECTS):
+        grid = affine(i / 2, flip=i % 2 == 1) if own_grids else affine()
+        inside = np.linalg.norm(coordinates(grid), axis=-1) < 7
+        for ses in ("planting", "harvest"):
+            for task in ("lanterns", "paths"):
+                for run in "123":
+                    if sub == "02" and run == "3":
+                        continue
+                    stem = f"maps/sub-{sub}_ses-{ses}_task-{task}_run-{run}"
+                    data = rng.normal(0, 1, SHAPE) + 2 * inside
+                    save(root / f"{stem}_effect.nii.gz", data.astype(np.float32), grid)
+                    spread = 0.5 + rng.random(SHAPE)
+                    save(root / f"{stem}_variance.nii.gz", spread.astype(np.float32), grid)
+                    row = [f"{stem}_effect.nii.gz", sub, ses, task, run, "bold", "glow", "n/a"]
+                    rows.append([*row, "hill" if i < 3 else "pond", f"{stem}_variance.nii.gz"])
+    lines = ["\t".join(COLUMNS), *("\t".join(row) for row in rows)]
+    (root / "table.tsv").write_text("\n".join(lines) + "\n")
+    x = coordinates(affine())[..., 0]
+    save(root / "garden_dseg.nii.gz", (1 + (x > -4) + (x > 4)).astype(np.int16), affine())
+    names = "".join(f"{number}\t{name}\n" for number, name in LABELS.items())
+    (root / "garden_dseg.tsv").write_text(f"index\tname\n{names}")
+    ball = np.linalg.norm(coordinates(affine()), axis=-1) < 10
+    save(root / "ball.nii.gz", ball.astype(np.uint8), affine())
+    save(root / "weights.nii.gz", (rng.random(SHAPE) * ball).astype(np.float32), affine())
+    return root
+
+
+@pytest.fixture(scope="module")
+def garden(tmp_path_factory):
+    return plant(tmp_path_factory.mktemp("garden"))
+
+
+@pytest.fixture(scope="module")
+def wild(tmp_path_factory):
+    return plant(tmp_path_factory.mktemp("wild"), own_grids=True)
+
+
+def write(folder: Path, text: str, name: str = "STUDY") -> Path:
+    path = folder / f"{name}.toml"
+    path.write_text(HEAD + text.replace("results", f"results-{name}"))
+    return path
+
+
+def ran(folder: Path, text: str, name: str, **more) -> Path:
+    study = read_settings(write(folder, f"{text}\n", name))
+    run_study(study, **more)
+    return study.output
+
+
+def table(path: Path) -> list[dict[str, str]]:
+    with path.open() as stream:
+        return list(csv.DictReader(stream, delimiter="\t"))
+
+
+def values(output: Path, roi: str) -> dict[str, float]:
+    rows = table(output / "roi_values.tsv")
+    return {row["sub"]: float(row["value"]) for row in rows if row["roi"] == roi}
+
+
+def runs_of(folder: Path, sub: str, kind: str = "effect", **entities: str) -> list[np.ndarray]:
+    wanted = {"sub": sub, "ses": "harvest", "task": "lanterns", "run": "*"} | entities
+    pattern = "_".join(f"{key}-{value}" for key, value in wanted.items())
+    paths = sorted((folder / "maps").glob(f"{pattern}_{kind}.nii.gz"))
+    assert paths
+    return [nib.load(path).get_fdata() for path in paths]
+
+
+def ball(folder: Path) -> np.ndarray:
+    return nib.load(folder / "ball.nii.gz").get_fdata() > 0
+
+
+# -- values ---------------------------------------------------------------------------------
+
+BALL = 'region = { mask = "ball.nii.gz", origin = "drawn for this test" }\n'
+HERE = 'select = { ses = "harvest", task = "lanterns" }\n'
+
+
+def roi(name: str, plan: str, text: str) -> str:
+    return f'[[roi]]\nname = "{name}"\nplan = "{plan}"\n{text}\n'
+
+
+def test_paired_difference_is_of_each_subjects_maps(garden):
+    text = HERE + 'minus = { ses = "planting" }\n' + roi("Ball", "a-priori", BALL)
+    output = ran(garden, text, "paired")
+    expected = {
+        sub: (
+            np.mean(runs_of(garden, sub), axis=0)
+            - np.mean(runs_of(garden, sub, ses="planting"), axis=0)
+        )[ball(garden)].mean()
+        for sub in SUBJECTS
+    }
+    assert values(output, "Ball") == pytest.approx(expected, abs=1e-5)
+
+
+def test_percent_of_baseline_and_null_value(garden):
+    text = HERE + 'baseline = { task = "paths" }\nnull_value = 10\n'
+    output = ran(garden, text + roi("Ball", "a-priori", BALL), "percent")
+    expected = {}
+    for sub in SUBJECTS:
+        effect = np.mean(runs_of(garden, sub), axis=0)
+        base = np.mean(runs_of(garden, sub, task="paths"), axis=0)
+        with np.errstate(divide="ignore"):
+            percent = np.where(base > 0, 100 * effect / base - 10, np.nan)
+        expected[sub] = np.nanmean(percent[ball(garden)])
+    assert values(output, "Ball") == pytest.approx(expected, rel=1e-4)
+    (test,) = table(output / "roi_tests.tsv")
+    assert (test["scale"], test["null_value"]) == ("percent of baseline", "10.0")
+
+
+def test_runs_weighted_by_their_variance_maps(garden):
+    """Fixed effects: sum(e / v) / sum(1 / v) (Hedges & Olkin 1985, chapter 6)."""
+    text = HERE + 'run_weights = "variance"\n' + roi("Ball", "a-priori", BALL)
+    output = ran(garden, text, "variance")
+    expected = {}
+    for sub in SUBJECTS:
+        effects, weights = runs_of(garden, sub), 1 / np.array(runs_of(garden, sub, "variance"))
+        mean = (effects * weights).sum(axis=0) / weights.sum(axis=0)
+        expected[sub] = mean[ball(garden)].mean()
+    assert values(output, "Ball") == pytest.approx(expected, abs=1e-5)
+    sources = json.loads((output / "manifest.json").read_text())["inputs"]
+    assert "maps/sub-01_ses-harvest_task-lanterns_run-1_variance.nii.gz" in sources
+
+
+@pytest.mark.parametrize("how", ["median", "weighted", "component"])
+def test_value_summaries(garden, how):
+    mask = "weights" if how == "weighted" else "ball"
+    region = f'value = "{how}"\nregion = {{ mask = "{mask}.nii.gz", origin = "drawn" }}\n'
+    output = ran(garden, HERE + roi("Ball", "a-priori", region), how)
+    found = {}
+    for sub in SUBJECTS:
+        mean = np.mean(runs_of(garden, sub), axis=0)
+        if how == "weighted":
+            weights = nib.load(garden / "weights.nii.gz").get_fdata()
+            found[sub] = (mean * weights).sum() / weights.sum()
+        else:
+            inside = mean[ball(garden)]
+            size = np.sqrt(np.mean(np.square(inside))) * np.sign(inside.mean())
+            found[sub] = np.median(inside) if how == "median" else size
+    assert values(output, "Ball") == pytest.approx(found, abs=1e-5)
+
+
+def test_masks_of_what_is_combined_eroded_and_mirrored(garden):
+    text = HERE + roi(
+        "Mixed",
+        "a-priori",
+        'region = { union = [{ difference = [{ mask = "ball.nii.gz" }, { centre = [0, 0, 0], '
+        'radius = 5 }] }, { atlas = "garden_dseg.nii.gz", labels = ["Cinder"], erode = 3.1 }], '
+        'mirror = "both", origin = "three sources" }\n',
+    )
+    output = ran(garden, text, "mixed")
+    mm = coordinates(affine())
+    x = mm[..., 0]
+    inner = np.zeros(SHAPE, bool)
+    inner[:, 1:-1, 1:-1] = True
+    # Cinder holds x = 4.5, 7.5 and 10.5; a voxel of 3 mm goes on every side.
+    cinder = (x > 7) & (x < 10) & inner
+    hollow = ball(garden) & ~(np.linalg.norm(mm, axis=-1) <= 5)
+    either = hollow | cinder
+    assert np.array_equal(x[::-1], -x), "the grid is symmetric about x = 0"
+    made = nib.load(output / "masks" / "label-Mixed_mask.nii.gz").get_fdata() > 0
+    assert np.array_equal(made, either | either[::-1])
+
+
+# -- which data chooses ---------------------------------------------------------------------
+
+PEAK = 'rule = { kind = "strongest", k = 12 }\n'
+OTHER = 'choose_on = { task = "paths" }\n'
+
+
+def verdicts(folder: Path, text: str, name: str) -> set[tuple[str, str]]:
+    settings = read_settings(write(folder, text, name))
+    return {(f.verdict, f.level) for f in check_study(settings) if f.kind == "extraction"}
+
+
+def refused(folder: Path, text: str, name: str) -> str:
+    with pytest.raises(GuardRefused) as told:
+        check_study(read_settings(write(folder, text, name)))
+    return str(told.value)
+
+
+def test_localizer_of_another_task_is_apart_at_run_level(garden):
+    text = HERE + roi("Own", "localizer", OTHER + PEAK)
+    assert verdicts(garden, text, "own") == {("apart", "run")}
+    output = ran(garden, text, "own")
+    for sub, value in values(output, "Own").items():
+        chooses = np.mean(runs_of(garden, sub, task="paths"), axis=0).astype(np.float32)
+        mask = np.zeros(chooses.size, bool)
+        mask[np.argsort(-chooses.ravel(), kind="stable")[:12]] = True
+        name = f"sub-{sub}_label-Own_desc-localizer_mask"
+        saved = nib.load(output / "masks" / f"{name}.nii.gz").get_fdata().ravel()
+        assert np.array_equal(saved > 0, mask)
+        read = np.mean(runs_of(garden, sub), axis=0).ravel()[mask].mean()
+        assert value == pytest.approx(read, abs=1e-5)
+        sources = json.loads((output / "masks" / f"{name}.json").read_text())["Sources"]
+        assert all(f"sub-{sub}_ses-harvest_task-paths" in source for source in sources)
+        assert len(sources) == len(runs_of(garden, sub, task="paths"))
+
+
+def test_group_mask_of_the_same_people_needs_the_narrower_claim(garden):
+    text = HERE + roi("Group", "localizer", OTHER + 'mask_of = "group"\n' + PEAK)
+    assert 'claim = "these-subjects"' in refused(garden, text, "samepeople")
+    text += 'claim = "these-subjects"\n'
+    assert verdicts(garden, text, "claimed") == {("apart", "run")}
+    (test,) = table(ran(garden, text, "claimed") / "roi_tests.tsv")
+    assert (test["claim"], test["level"]) == ("these subjects", "run")
+    assert test["null"] == "none of these subjects has an effect in the region"
+
+
+def test_group_mask_of_other_people_is_apart_at_subject_level(garden):
+    text = 'mask_of = "group"\nselect = { group = "hill" }\nchoose_on = { group = "pond" }\n'
+    text = HERE + roi("Others", "localizer", text + PEAK)
+    assert verdicts(garden, text, "others") == {("apart", "subject")}
+    (test,) = table(ran(garden, text, "others") / "roi_tests.tsv")
+    assert (test["n_subjects"], test["null"]) == ("3", "the population mean in this region is zero")
+
+
+def test_region_of_baseline_is_not_tested_on_followup_minus_baseline(garden):
+    """Regression to the mean: what chance raised at baseline falls afterwards."""
+    text = HERE + roi(
+        "Change",
+        "localizer",
+        'minus = { ses = "planting" }\nchoose_on = { ses = "planting" }\n' + PEAK,
+    )
+    told = refused(garden, text, "change")
+    assert "leak" in told and "ses-planting" in told
+    apart = text.replace('choose_on = { ses = "planting" }', 'choose_on = { task = "paths" }')
+    assert verdicts(garden, apart, "unchanged") == {("apart", "run")}
+
+
+def test_another_contrast_of_the_same_runs_is_a_leak(garden, tmp_path):
+    folder = Path(shutil.copytree(garden, tmp_path / "garden"))
+    lines = (folder / "table.tsv").read_text().splitlines()
+    for line in lines[1:]:
+        if "harvest_task-paths" in line:
+            dim = line.replace("\tglow\t", "\tdim\t").replace("\tpaths\t", "\tlanterns\t")
+            lines[lines.index(line)] = dim
+    (folder / "table.tsv").write_text("\n".join(lines) + "\n")
+    text = 'select = { ses = "harvest", task = "lanterns", contrast = "glow" }\n'
+    text += roi("Own", "localizer", 'choose_on = { contrast = "dim" }\n' + PEAK)
+    assert "the mask was chosen on the data it would be tested on" in refused(folder, text, "dim")
+
+
+OWN_MASK = '"own/sub-{{sub}}_mask.nii.gz", origin = "drawn on the {0} run", '
+OWN_MASK += 'derived_from = [{{ sub = "{{sub}}", ses = "harvest", task = "{0}" }}] }}\n'
+
+
+def test_mask_files_of_each_subject_derive_from_that_subject(garden):
+    for sub in SUBJECTS:
+        chosen = runs_of(garden, sub, task="paths")[0] > 1
+        save(garden / "own" / f"sub-{sub}_mask.nii.gz", chosen.astype(np.uint8), affine())
+    text = HERE + roi("Drawn", "a-priori", "region = { mask = " + OWN_MASK.format("paths"))
+    assert verdicts(garden, text, "drawn") == {("apart", "run")}
+    output = ran(garden, text, "drawn")
+    for sub, value in values(output, "Drawn").items():
+        mask = runs_of(garden, sub, task="paths")[0] > 1
+        read = np.mean(runs_of(garden, sub), axis=0)[mask].mean()
+        assert value == pytest.approx(read, abs=1e-5)
+    leaky = text.replace('task = "paths" }]', 'task = "lanterns" }]')
+    assert "the mask was chosen on the data it would be tested on" in refused(garden, leaky, "leak")
+
+
+# -- spaces and grids -----------------------------------------------------------------------
+
+
+def test_region_of_another_named_space_is_refused(garden, tmp_path):
+    folder = Path(shutil.copytree(garden, tmp_path / "garden"))
+    lines = (folder / "table.tsv").read_text().splitlines()
+    lines = [f"{lines[0]}\tspace", *(f"{line}\torchard" for line in lines[1:])]
+    (folder / "table.tsv").write_text("\n".join(lines) + "\n")
+    shutil.copy(folder / "ball.nii.gz", folder / "ball_space-orchard_mask.nii.gz")
+    shutil.copy(folder / "ball.nii.gz", folder / "ball_space-meadow_mask.nii.gz")
+    fits = HERE + roi("Ball", "a-priori", BALL.replace("ball.nii", "ball_space-orchard_mask.nii"))
+    assert read_settings(write(folder, fits, "fits")).rois[0].name == "Ball"
+    other = fits.replace("space-orchard", "space-meadow")
+    with pytest.raises(InputError, match=r"another space than the maps.*orchard.*meadow"):
+        read_settings(write(folder, other, "other"))
+    stated = HERE + roi("Ball", "a-priori", BALL.replace(" }", ', space = "meadow" }'))
+    with pytest.raises(InputError, match="another space"):
+        read_settings(write(folder, stated, "stated"))
+
+
+def test_own_grids_are_read_in_mm(wild):
+    text = 'grids = "own"\n' + HERE
+    sphere = 'region = { centre = [0, 0, 0], radius = 6, origin = "drawn" }\n'
+    label = 'search = { atlas = "garden_dseg.nii.gz", labels = ["Brook"], origin = "an atlas", '
+    label += "regrid = true }\n"
+    text += roi("Ball", "a-priori", sphere) + roi("Own", "localizer", OTHER + label + PEAK)
+    output = ran(wild, text, "grids")
+    for i, sub in enumerate(SUBJECTS):
+        mm = coordinates(affine(i / 2, flip=i % 2 == 1))
+        mean = np.mean(runs_of(wild, sub), axis=0)
+        inside = np.linalg.norm(mm, axis=-1) <= 6
+        assert values(output, "Ball")[sub] == pytest.approx(mean[inside].mean(), abs=1e-5)
+        saved = output / "masks" / f"sub-{sub}_label-Own_desc-localizer_mask.nii.gz"
+        chosen = nib.load(saved).get_fdata() > 0
+        assert (np.abs(mm[..., 0][chosen]) < 4.5).all()
+        assert values(output, "Own")[sub] == pytest.approx(mean[chosen].mean(), abs=1e-5)
+
+
+@pytest.mark.parametrize("plan", ["k-fold", "exploratory"])
+def test_group_plans_need_one_grid(wild, plan):
+    text = 'grids = "own"\n' + HERE + roi("Found", plan, PEAK)
+    with pytest.raises(InputError, match=f"grids = \"own\" does not go with plan '{plan}'"):
+        read_settings(write(wild, text, "group"))
+    undeclared = text.replace('grids = "own"\n', "")
+    with pytest.raises(InputError, match="grids differ"):
+        check_study(read_settings(write(wild, undeclared, "undeclared")))
+
+
+# -- everything at once ---------------------------------------------------------------------
+
+FOLDS = 'search = { mask = "ball.nii.gz", origin = "drawn" }\nflips = 9\n'
+EVERY = HERE + "".join(
+    [
+        roi("Loso", "leave-one-subject-out", FOLDS + 'rule = { kind = "threshold", p = 0.05 }\n'),
+        roi("Five", "k-fold", FOLDS + 'folds = 3\nrule = { kind = "peak-sphere", radius = 5 }\n'),
+        roi("Half", "split-half", FOLDS + 'rule = { kind = "strongest", fraction = 0.1 }\n'),
+        roi("Site", "given-folds", FOLDS + PEAK + 'fold_column = "group"\n' + OTHER),
+        roi("Runs", "leave-one-run-out", PEAK.replace("12", '12, map = "mean"')),
+        roi("Odd", "split-half-runs", PEAK.replace("12", '12, map = "mean"')),
+        roi("Own", "localizer", OTHER + PEAK),
+        roi("Given", "a-priori", BALL),
+        roi("Labels", "a-priori", "each_label = true\nregion = { atlas = "
+            '"garden_dseg.nii.gz", origin = "an atlas" }\n'),
+        roi("Look", "exploratory", PEAK),
+    ]
+)  # fmt: skip
+
+
+def content(folder: Path) -> dict[str, bytes]:
+    return {str(p.relative_to(folder)): p.read_bytes() for p in folder.rglob("*") if p.is_file()}
+
+
+def test_every_plan_gives_the_same_bytes_on_both_engines_cold_and_warm(garden, tmp_path):
+    work = tmp_path / "work"
+    first = content(ran(garden, EVERY, "every"))
+    assert content(ran(garden, EVERY, "every", processes=2, work=work)) == first
+    assert content(ran(garden, EVERY, "every", work=work)) == first, "on a warm cache"
+    shutil.rmtree(work)
+    assert content(ran(garden, EVERY, "every", work=work)) == first, "after deleting the folder"
+
+
+def test_wide_table_and_cells(garden):
+    output = read_settings(write(garden, EVERY, "every")).output
+    long = table(output / "roi_values.tsv")
+    wide = {(row["sub"], row["run"]): row for row in table(output / "roi_values_wide.tsv")}
+    for row in long:
+        column = row["roi"] + ("" if row["parcel"] == "n/a" else f"_{row['parcel']}")
+        assert wide[row["sub"], row["run"]][column] == row["value"]
+    cells = table(output / "cells.tsv")
+    loso = [row for row in cells if row["roi"] == "Loso"]
+    assert [(r["group"], r["n_subjects"], r["n_maps"]) for r in loso] == [
+        ("hill", "3", "8"),  # one subject lacks a run
+        ("pond", "3", "9"),
+    ]
+    assert {r["side"] for r in cells if r["roi"] == "Own"} == {"tested", "chosen on"}
+    labels = [r["parcel_name"] for r in table(output / "roi_tests.tsv") if r["roi"] == "Labels"]
+    assert labels == list(LABELS.values())

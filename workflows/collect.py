@@ -1,0 +1,304 @@
+"""What one region's nodes produced, gathered from a finished graph: values, masks, records."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from ..nodes.errors import InputError
+from ..nodes.images import geometry_of, open_image, read_mask
+from ..nodes.interfaces.base import read_json
+from ..nodes.results import exploratory_result
+from ..nodes.roi import holm
+from .ancestry import node_name
+from .build import tested_rows
+from .plans import A_PRIORI, CROSS_FITTED, LEAVE_ONE_OUT, LOCALIZER, OTHER_RUNS
+from .selection import Selection
+from .settings import Roi, Settings
+from .study import Row
+
+
+@dataclass(frozen=True)
+class Value:
+    """One value of one region.
+
+    Parameters
+    ----------
+    sub, run : str
+        The run is "" when runs were averaged.
+    value, coverage : float
+    mask : str
+        The name of the mask it was read in.
+    size : int
+        Voxels in that mask.
+    mm3 : float
+    parcel : str
+        The label's number, when a region is one of the labels of an atlas.
+    """
+
+    sub: str
+    run: str
+    value: float
+    coverage: float
+    mask: str
+    size: int
+    mm3: float
+    parcel: str = ""
+
+
+@dataclass(frozen=True)
+class MaskOutput:
+    """A mask (or label image) for the output folder.
+
+    Parameters
+    ----------
+    name : str
+        What it is called there.
+    path : Path
+    sources : tuple of str
+        The study's files whose values it derives from.
+    """
+
+    name: str
+    path: Path
+    sources: tuple[str, ...]
+
+
+@dataclass(frozen=True)
+class RoiOutput:
+    """What one region's plan produced.
+
+    Parameters
+    ----------
+    roi : Roi
+    records : tuple of dict
+        The results, as `RoiResult.as_dict`: one, or one per parcel.
+    values : tuple of Value
+    masks : tuple of MaskOutput
+    overlap : Path or None
+        Per voxel, the share of the folds that chose it.
+    searched : tuple of Path
+        The masks of the search region, one or one per row; empty for the whole map.
+    """
+
+    roi: Roi
+    records: tuple[dict[str, Any], ...]
+    values: tuple[Value, ...]
+    masks: tuple[MaskOutput, ...]
+    overlap: Path | None
+    searched: tuple[Path, ...]
+
+
+def find_nodes(graph: Any) -> dict[str, Any]:
+    """The nodes of a finished graph, by name."""
+    return {node_name(node): node for node in graph.nodes()}
+
+
+def collect(roi: Roi, settings: Settings, nodes: dict[str, Any]) -> RoiOutput:
+    """What one region's nodes produced."""
+    start = f"{settings.name}.{roi.name}."
+    mine = {name.removeprefix(start): n for name, n in nodes.items() if name.startswith(start)}
+    rows = tested_rows(roi)
+    if roi.each_label:
+        return _family(roi, rows, mine, settings)
+    extract, choose = mine["extract"], mine.get("choose")
+    read = extract.result.outputs
+    given = [Path(path) for path in extract.inputs.mask_files]
+    names = _names(roi, rows, given, choose)
+    of_row = [names[path] for path in (given if len(given) > 1 else given * len(rows.subjects))]
+    overlap = getattr(choose.result.outputs, "overlap_file", None) if choose is not None else None
+    mm3 = {name: _voxel_mm3(path) for path, name in names.items()}
+    return RoiOutput(
+        roi,
+        (_record(roi, mine),),
+        tuple(
+            Value(label, _run(roi, listed[0]), value, share, name, size, size * mm3[name])
+            for (label, listed), value, share, size, name in zip(
+                rows.subjects, read.values, read.coverage, read.sizes, of_row, strict=True
+            )
+        ),
+        tuple(
+            MaskOutput(name, path, _sources(roi, rows, of_row, name, settings))
+            for path, name in names.items()
+        ),
+        None if overlap is None else Path(overlap),
+        _searched(given if roi.plan == A_PRIORI else None, choose),
+    )
+
+
+def _family(roi: Roi, rows: Selection, mine: dict[str, Any], settings: Settings) -> RoiOutput:
+    """What a parcellation produced: a value per parcel and subject, a test per parcel."""
+    extract = mine["extract"]
+    read = extract.result.outputs
+    given = [Path(path) for path in extract.inputs.label_files]
+    names = _names(roi, rows, given, None)
+    of_row = [names[path] for path in (given if len(given) > 1 else given * len(rows.subjects))]
+    mm3 = [_voxel_mm3(path) for path in given]
+    table, coverage = np.load(read.values_file), np.load(read.coverage_file)
+    values = []
+    for i, (label, _) in enumerate(rows.subjects):
+        image = min(i, len(given) - 1)
+        for j, parcel in enumerate(read.parcels):
+            size = read.sizes[image][j]
+            values.append(
+                Value(
+                    label,
+                    "",
+                    float(table[i, j]),
+                    float(coverage[i, j]),
+                    of_row[i],
+                    size,
+                    size * mm3[image],
+                    str(parcel),
+                )
+            )
+    return RoiOutput(
+        roi,
+        tuple(read_json(mine["test"].result.outputs.record_file)["tests"]),
+        tuple(values),
+        tuple(
+            MaskOutput(name, path, _sources(roi, rows, of_row, name, settings))
+            for path, name in names.items()
+        ),
+        None,
+        (),
+    )
+
+
+def _run(roi: Roi, row: Row) -> str:
+    return row.unit.run if roi.plan in OTHER_RUNS else ""
+
+
+def _names(roi: Roi, rows: Selection, given: Sequence[Path], choose: Any) -> dict[Path, str]:
+    """What each mask is called in the output folder."""
+    suffix = "dseg" if roi.each_label else "probseg" if roi.summary == "weighted" else "mask"
+    if roi.plan in CROSS_FITTED:
+        chosen = choose.result.outputs
+        word = "without" if roi.plan == LEAVE_ONE_OUT else "fold"
+        names = [f"label-{roi.name}_desc-{word}{_alnum(f)}_mask" for f in chosen.fold_names]
+        paths = [Path(path) for path in chosen.mask_files]
+    elif len(given) == 1:
+        names, paths = [f"label-{roi.name}_{suffix}"], list(given)
+    else:
+        desc = "_desc-otherruns" if roi.plan in OTHER_RUNS else ""
+        desc = "_desc-localizer" if roi.plan == LOCALIZER else desc
+        names = []
+        for label, listed in rows.subjects:
+            run = f"_run-{_alnum(listed[0].unit.run)}" if roi.plan in OTHER_RUNS else ""
+            names.append(f"sub-{_alnum(label)}{run}_label-{roi.name}{desc}_{suffix}")
+        paths = list(given)
+    if len(set(names)) != len(names):
+        raise InputError(
+            "subject labels that differ only in punctuation",
+            got=", ".join(sorted({name for name in names if names.count(name) > 1})),
+            remedy="BIDS labels are letters and digits; rename them in the table",
+        )
+    return {path: f"{name}.nii.gz" for path, name in zip(paths, names, strict=True)}
+
+
+def _alnum(label: str) -> str:
+    return "".join(c for c in label if c.isalnum())
+
+
+def _record(roi: Roi, mine: dict[str, Any]) -> dict[str, Any]:
+    """The result of a region's test; of an exploratory look, the value alone."""
+    if "test" in mine:
+        return read_json(mine["test"].result.outputs.record_file)
+    assert roi.procedure is not None, "only the exploratory plan goes without a test"
+    read = mine["extract"].result.outputs
+    return exploratory_result(
+        read.values,
+        roi.names,
+        roi.procedure.describe(),
+        read.sizes[0],
+        read.coverage,
+        replaced=bool(mine["choose"].result.outputs.replaced),
+    ).as_dict()
+
+
+def _voxel_mm3(path: Path) -> float:
+    return float(abs(np.linalg.det(open_image(path).affine[:3, :3])))
+
+
+def _sources(
+    roi: Roi, rows: Selection, of_row: Sequence[str], name: str, settings: Settings
+) -> tuple[str, ...]:
+    """The study's files whose values a mask derives from, and those of its search region."""
+    here = [i for i, mask in enumerate(of_row) if mask == name]
+    found: list[str] = []
+    for row in _chosen_on(roi, rows, here):
+        found += [row.path, *([row.variance] if settings.maps.by_variance else [])]
+    subs = [rows.subjects[i][0] for i in here]
+    for leaf in roi.region.leaves():
+        found += [file.replace("{sub}", sub) for sub in subs for file in leaf.files]
+    return tuple(dict.fromkeys(filter(None, found)))
+
+
+def _chosen_on(roi: Roi, rows: Selection, here: Sequence[int]) -> Iterator[Row]:
+    """The rows that chose the mask which is read in the rows numbered `here`."""
+    chosen = roi.choosing or rows
+    if roi.plan == A_PRIORI:
+        return
+    if roi.plan in OTHER_RUNS:
+        assert roi.procedure is not None, "own masks are chosen"
+        label = rows.subjects[here[0]][0]
+        mine = [i for i, (sub, _) in enumerate(rows.subjects) if sub == label]
+        runs = [rows.subjects[i][1][0].unit.run for i in mine]
+        for fold in roi.procedure.scheme.folds(runs):
+            if mine.index(here[0]) in fold.held_out:
+                for i in fold.selection:
+                    yield from rows.rows_of(mine[i])
+        return
+    held = {rows.people[i] for i in here} if roi.plan in CROSS_FITTED else set()
+    only = {rows.subjects[i][0] for i in here} if roi.own_masks else None
+    for i, (label, listed) in enumerate(chosen.subjects):
+        if listed[0].person not in held and (only is None or label in only):
+            yield from chosen.rows_of(i)
+
+
+def _searched(given: Sequence[Path] | None, choose: Any) -> tuple[Path, ...]:
+    """The masks of the region that a null covers; none for the whole map."""
+    if given is not None:
+        return tuple(given)
+    settings = choose.inputs.get()
+    found = settings.get("search_files") or settings.get("search_file")
+    listed = found if isinstance(found, list) else [found] if isinstance(found, str) else []
+    return tuple(map(Path, listed))
+
+
+def adjust(outputs: Sequence[RoiOutput]) -> None:
+    """Holm over the tested regions, when their search regions share no voxel.
+
+    The labels of an atlas are a family of their own, adjusted in their test.
+    """
+    tested = [o for o in outputs if not o.roi.each_label and o.records[0]["p"] is not None]
+    disjoint = all(_apart(one, other) for i, one in enumerate(tested) for other in tested[:i])
+    p = [output.records[0]["p"] for output in tested]
+    for output, adjusted in zip(tested, holm(p) if disjoint else [None] * len(p), strict=True):
+        output.records[0]["p_holm"] = adjusted
+
+
+def _apart(one: RoiOutput, other: RoiOutput) -> bool:
+    """Whether two search regions share no voxel; on grids of their own, in no subject."""
+    if not one.searched or not other.searched:
+        return False  # a whole map overlaps everything
+    for mine, theirs in {(a, b) for _, a, b in _pairs(one, other)}:
+        like = (str(mine), geometry_of(open_image(mine)))
+        if (read_mask(mine)[0] & read_mask(theirs, like)[0]).any():
+            return False
+    return True
+
+
+def _pairs(one: RoiOutput, other: RoiOutput) -> Iterator[tuple[str, Path, Path]]:
+    """The search masks of the same subject."""
+    mine, theirs = ({v.sub: _at(o, i) for i, v in enumerate(o.values)} for o in (one, other))
+    for sub in mine.keys() & theirs.keys():
+        yield sub, mine[sub], theirs[sub]
+
+
+def _at(output: RoiOutput, row: int) -> Path:
+    return output.searched[row if len(output.searched) > 1 else 0]

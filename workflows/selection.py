@@ -1,0 +1,204 @@
+"""Which rows of the study table make one map per subject.
+
+A selection names rows by the values of their columns. Per subject, the maps of its rows (runs)
+are averaged; those of `minus` are averaged and subtracted (paired differences); the difference
+is given in percent of the average of `baseline`.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import dataclass
+from typing import Any
+
+from ..nodes.errors import InputError
+from ..nodes.touch import ENTITIES
+from .keys import Reader
+from .study import Row, Study
+
+# Per subject, sorted by label: the rows whose maps are averaged.
+Subjects = tuple[tuple[str, tuple[Row, ...]], ...]
+
+
+@dataclass(frozen=True)
+class Selection:
+    """One map per subject, in the order of the labels.
+
+    Parameters
+    ----------
+    subjects : tuple of (label, tuple of Row)
+    minus, baseline : tuple of (label, tuple of Row)
+        Of the same labels; empty when nothing is subtracted, or nothing divided by.
+    left_out : tuple of Row
+        Selected, but with an exclude_reason.
+    """
+
+    subjects: Subjects
+    minus: Subjects = ()
+    baseline: Subjects = ()
+    left_out: tuple[Row, ...] = ()
+
+    @property
+    def rows(self) -> Iterator[Row]:
+        """All rows that are read, subject by subject."""
+        for subjects in (self.subjects, self.minus, self.baseline):
+            for _, rows in subjects:
+                yield from rows
+
+    @property
+    def people(self) -> list[str]:
+        """Per subject: who it counts as."""
+        return [rows[0].person for _, rows in self.subjects]
+
+    def rows_of(self, number: int) -> tuple[Row, ...]:
+        """All rows behind the map of subject `number`."""
+        listed = (s for s in (self.subjects, self.minus, self.baseline) if s)
+        return tuple(row for subjects in listed for row in subjects[number][1])
+
+    @property
+    def variance_rows(self) -> Iterator[Row]:
+        """The rows whose runs are combined with weights."""
+        for subjects in (self.subjects, self.minus):
+            for _, rows in subjects:
+                yield from rows
+
+    def by_run(self) -> Selection:
+        """A map per run instead: only plain maps have runs of their own."""
+        return Selection(tuple((label, (row,)) for label, rows in self.subjects for row in rows))
+
+
+def select(
+    read: Reader,
+    study: Study,
+    wanted: dict[str, Any],
+    minus: dict[str, Any] | None = None,
+    baseline: dict[str, Any] | None = None,
+) -> Selection:
+    """The maps that some tables of the study file ask for.
+
+    Parameters
+    ----------
+    read : Reader
+    study : Study
+    wanted : dict
+        Column to value, or list of values.
+    minus, baseline : dict, optional
+        The columns in which the maps to subtract, or to divide by, differ from `wanted`.
+
+    Raises
+    ------
+    InputError
+        For unknown columns, nothing selected, or maps that cannot be averaged.
+    """
+    subjects, left_out = _subjects(read, study, wanted)
+    others: list[Subjects] = []
+    for key, asked in (("minus", minus), ("baseline", baseline)):
+        if asked is None:
+            others.append(())
+            continue
+        found, more = _subjects(read, study, {**wanted, **asked})
+        _same_subjects(read, key, subjects, found)
+        left_out += more
+        others.append(found)
+    made = Selection(subjects, others[0], others[1], tuple(dict.fromkeys(left_out)))
+    if made.minus and set(made.subjects) & set(made.minus):
+        raise InputError(
+            "minus selects the very maps it is subtracted from",
+            where=read.where("minus"),
+            remedy="name the column in which they differ",
+        )
+    return made
+
+
+def _same_subjects(read: Reader, key: str, subjects: Subjects, found: Subjects) -> None:
+    here, there = {label for label, _ in subjects}, {label for label, _ in found}
+    if here != there:
+        raise InputError(
+            f"{key} selects other subjects than [data] select",
+            where=read.where(key),
+            got="sub-" + ", sub-".join(sorted(here ^ there)) + " in one of them only",
+            remedy="give every subject a map of both, or an exclude_reason on both",
+        )
+
+
+def chosen_elsewhere(
+    read: Reader, study: Study, wanted: dict[str, Any], tested: Selection, *, same: bool = True
+) -> Selection | None:
+    """The maps a region is chosen on; None when they are those that are tested.
+
+    Parameters
+    ----------
+    read : Reader
+    study : Study
+    wanted : dict
+        Column to value.
+    tested : Selection
+    same : bool
+        Whether it must be the same subjects.
+    """
+    chosen = select(read, study, wanted)
+    if same:
+        _same_subjects(read, "choose_on", tested.subjects, chosen.subjects)
+    return None if chosen.subjects == tested.subjects and not tested.minus else chosen
+
+
+def _subjects(
+    read: Reader, study: Study, select: dict[str, Any]
+) -> tuple[Subjects, tuple[Row, ...]]:
+    """The rows to analyse, per subject, and those left out with a reason."""
+    wanted: dict[str, set[str]] = {}
+    for column, value in select.items():
+        if column not in study.columns:
+            raise InputError(
+                f"unknown column {column!r}",
+                where=read.where(column),
+                expected="a column of the study table: " + ", ".join(study.columns),
+            )
+        wanted[column] = {str(v) for v in (value if isinstance(value, list) else [value])}
+    rows = [r for r in study.rows if all(r.column(c) in v for c, v in wanted.items())]
+    left_out = tuple(row for row in rows if row.exclude_reason)
+    kept = [row for row in rows if not row.exclude_reason]
+    if not kept:
+        raise InputError(
+            "no subject left",
+            where=str(read.path),
+            got=f"{len(study.rows)} rows in the table, {len(left_out)} of the selected excluded",
+            remedy="check [data] select and the exclude_reason column",
+        )
+    contrasts = sorted({row.contrast for row in kept})
+    if len(contrasts) > 1:
+        raise InputError(
+            "several contrasts selected",
+            where=read.where("data"),
+            got=", ".join(contrasts),
+            remedy='name one: [data] select = { contrast = "..." }',
+        )
+    of_sub: dict[str, list[Row]] = {}
+    for row in kept:
+        of_sub.setdefault(row.unit.sub, []).append(row)
+    for label, runs in of_sub.items():
+        _only_runs_differ(read, label, runs)
+    ordered = tuple(
+        (label, tuple(sorted(of_sub[label], key=lambda row: row.unit))) for label in sorted(of_sub)
+    )
+    return ordered, left_out
+
+
+def _only_runs_differ(read: Reader, label: str, runs: list[Row]) -> None:
+    for row in runs:
+        for entity in (*ENTITIES, "suffix"):
+            if entity != "run" and row.column(entity) != runs[0].column(entity):
+                raise InputError(
+                    f"maps of sub-{label} differ in {entity}",
+                    where=str(read.path),
+                    got=f"{runs[0].column(entity)!r} and {row.column(entity)!r}",
+                    remedy=f"only runs are averaged: select one {entity}",
+                )
+    numbers = [row.unit.run for row in runs]
+    if len(set(numbers)) != len(numbers):
+        raise InputError(
+            f"sub-{label} has several maps of one run",
+            where=str(read.path),
+            got=", ".join(row.name for row in runs),
+            remedy="select one, or fill the run column",
+        )
