@@ -53,6 +53,12 @@ class InputError(SequesterError):
         fields = {**self.fields, "where": self.fields["where"] or where}
         return type(self)(fields.pop("what"), **fields)
 
+    def within(self, place: str) -> InputError:
+        """The same error, its own place followed by a wider one: the region it befell, say."""
+        where = ", ".join(part for part in (self.fields["where"], place) if part)
+        fields = {**self.fields, "where": where}
+        return type(self)(fields.pop("what"), **fields)
+
 
 class EmptyFoldError(InputError):
     """A fold found no region and the plan said to stop."""

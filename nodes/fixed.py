@@ -9,6 +9,7 @@ import numpy as np
 import numpy.typing as npt
 
 from .errors import InputError
+from .orthogonality import Certificate
 from .parcels import family_t, person_means
 from .results import RoiResult, distinct, estimate_texts, least, of_t, p_text
 from .roi import one_sample_t
@@ -16,8 +17,8 @@ from .roi import one_sample_t
 Floats = npt.NDArray[np.floating]
 
 # What the mask of a test without folds was chosen on: nothing of the study, each subject's own
-# other runs or localizer, or a group map.
-CHOSEN_ON = ("nothing", "other runs", "localizer", "group")
+# other runs, localizer or other data, or a group map.
+CHOSEN_ON = ("nothing", "other runs", "localizer", "other data", "group")
 
 
 def fixed_region_result(
@@ -72,7 +73,7 @@ def own_mask_result(
         Averaged over the subject's runs.
     names : (roi, plan, search region)
     sizes, coverage : sequence, one per mask
-    chosen_on : {"other runs", "localizer"}
+    chosen_on : {"other runs", "localizer", "other data"}
 
     Examples
     --------
@@ -115,7 +116,8 @@ def group_mask_result(
     sizes: Sequence[int],
     coverage: Sequence[float],
     *,
-    these_subjects: bool,
+    these_subjects: bool = False,
+    certificate: Certificate | None = None,
 ) -> RoiResult:
     """One mask chosen on a group map of other data, read in the tested subjects: Student's t.
 
@@ -127,6 +129,8 @@ def group_mask_result(
     these_subjects : bool
         Whether the mask was chosen on other data of the tested subjects, so that the claim is
         about them only; otherwise it was chosen on other people.
+    certificate : Certificate, optional
+        Shows that the contrast which chose, on the same data, cannot bias the tested one.
 
     Examples
     --------
@@ -143,17 +147,26 @@ def group_mask_result(
         if these_subjects
         else "the population mean in this region is zero"
     )
-    claim = (
-        "It speaks of these subjects only: the region was chosen on other data of theirs, so what "
-        "persists in each of them is in both, and the mean overstates that of their population."
-        if these_subjects
-        else "The region was chosen on other people (near-normal values)."
-    )
+    data = "other data"
+    if certificate is not None:
+        data = "another contrast of the same data"
+        claim = (
+            f"Certified: {certificate.describe()}; taken for granted: "
+            f"{', '.join(certificate.assumptions)}."
+        )
+    elif these_subjects:
+        claim = (
+            "It speaks of these subjects only: the region was chosen on other data of theirs, so "
+            "what persists in each of them is in both, and the mean overstates that of their "
+            "population."
+        )
+    else:
+        claim = "The region was chosen on other people (near-normal values)."
     return of_t(
         test,
         names,
         len(values),
-        rule="one mask for all, from a group map of other data",
+        rule=f"one mask for all, from a group map of {data}",
         target="mean of these subjects in this region"
         if these_subjects
         else "population mean in this region",
@@ -163,7 +176,7 @@ def group_mask_result(
         coverage=least(coverage),
         sentence=(
             f"{roi}: mean {mean} in one region for all, chosen in the search region '{search}' on "
-            f"the group map of other data (95 % interval {low} to {high}), t({test.df}) = "
+            f"the group map of {data} (95 % interval {low} to {high}), t({test.df}) = "
             f"{test.t:.2f}, {p_text(test.p)}, two-sided. Null: {null}. {claim}"
         ),
     )

@@ -320,12 +320,16 @@ class Meeting:
     these_only : str
         The setting that, when true, declares that the claim is about the tested subjects only,
         not about those they were drawn from.
+    certificate : str
+        The setting with an orthogonality certificate (see `orthogonality`): mask and data may
+        share units when it holds.
     """
 
     mask: str
     data: str
     biased: str = ""
     these_only: str = ""
+    certificate: str = ""
 
     def pairs(self, inputs: Inputs) -> list[tuple[Leaf, Leaf]]:
         """Every mask element with the data element it is judged on."""
@@ -363,11 +367,13 @@ class Meeting:
 
     def _values(self, inputs: Inputs) -> Tree:
         biased = bool(self.biased and inputs.settings.get(self.biased))
+        certified = getattr(inputs.settings.get(self.certificate), "holds", False) is True
         data = inputs.trees.get(self.data)
         made: list[Tree] = []
         for i, (mask, read) in enumerate(self.pairs(inputs)):
             value = joined([mask, read])
-            mark = Extraction(f"{inputs.where}[{i}]", mask.touch.values, read.touch.values)
+            where = f"{inputs.where}[{i}]"
+            mark = Extraction(where, mask.touch.values, read.touch.values, certified)
             value.touch = value.touch.marked(mark, biased=biased)
             made.append(value)
         if len(made) == 1 and isinstance(made[0], Leaf) and not isinstance(data, Branch):

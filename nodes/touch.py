@@ -188,11 +188,14 @@ class Extraction:
         The extraction node (and its element).
     mask, data : int
         The units the mask was chosen on, and the units the value was read from.
+    certified : bool
+        Whether a certificate shows that what chose cannot bias what was read.
     """
 
     where: str
     mask: int
     data: int
+    certified: bool = False
 
 
 @dataclass(frozen=True)
@@ -258,6 +261,8 @@ def cross_fitted(
 ) -> bool:
     """Whether the mask behind one of these values was chosen on the data behind another.
 
+    A certified mask does not count: what chose it cannot bias any of the values.
+
     Parameters
     ----------
     extractions : iterable of Extraction
@@ -272,7 +277,7 @@ def cross_fitted(
     >>> cross_fitted(turns, table), cross_fitted(turns[:1], table)
     (True, False)
     """
-    marks = list(extractions)
+    marks = [mark for mark in extractions if not mark.certified]
     people = [table.people_of(mark.data) for mark in marks] if averaged else []
     for i, one in enumerate(marks):
         reach = table.overlapping(one.mask)

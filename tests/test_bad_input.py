@@ -163,7 +163,7 @@ def broken_link(path):
             "effect map without data (PATH): got only zeros, NaN and infinities",
         ),
         (broken_link, "file not fetched (PATH): got a link to annex/7f3a, which is not there"),
-        (Path.unlink, "no such file (PATH): check the path in the table"),
+        (Path.unlink, "no such file (PATH): check the path in the study table or"),
     ],
 )
 def test_map_that_is_no_map(study, spoil, message):
@@ -198,7 +198,8 @@ def test_identical_maps_recompressed_under_two_names(study):
 def test_mask_on_another_grid(study):
     save(study / "ridge.nii.gz", np.ones((9, 10, 10), np.uint8))
     told = refused(study)
-    assert f"grids differ ({study / 'ridge.nii.gz'})" in told
+    assert f"grids differ ({study / 'ridge.nii.gz'}, roi Ridge)" in told
+    assert "have it done: regrid = true" in told
     assert GRID in told and "got 9 x 10 x 10 voxels" in told
 
 
@@ -208,7 +209,7 @@ def test_mask_on_another_grid(study):
         ("sub-03.nii.gz", noise(9, 10, 10), "grids differ (PATH)"),
         ("sub-03.nii.gz", noise(10, 10, 10, 2), "4-D file without a volume number (PATH)"),
         ("sub-03.nii.gz", noise(10, 10, 10, 2, 2), "too many dimensions (PATH)"),
-        ("ridge.nii.gz", noise(9, 10, 10), "grids differ (PATH)"),
+        ("ridge.nii.gz", noise(9, 10, 10), "grids differ (PATH, roi Ridge)"),
     ],
 )
 def test_check_alone_sees_what_headers_tell(study, name, data, message):
@@ -224,7 +225,7 @@ def test_check_alone_sees_a_volume_out_of_range(study):
 
 def test_mask_without_a_voxel(study):
     save(study / "ridge.nii.gz", np.zeros((10, 10, 10), np.uint8))
-    assert f"empty mask ({study / 'ridge.nii.gz'})" in refused(study)
+    assert f"empty mask ({study / 'ridge.nii.gz'}, roi Ridge)" in refused(study)
 
 
 # -- table and study file -------------------------------------------------------------------
@@ -250,15 +251,15 @@ def repeat_a_row(study):
     [
         (
             exclude_everybody,
-            "no subject left (STUDY): got 8 rows in the table, 8 of the selected excluded",
+            "no subject left (STUDY, line 7): got 8 rows in the table, 8 of them with contrast gust, 8",
         ),
         (
             lambda study: swap(study / "STUDY.toml", '"gust"', '"lull"'),
-            "no subject left (STUDY): got 8 rows in the table, 0 of the selected excluded",
+            "no subject left (STUDY, line 7): expected in column contrast: 'gust', got 8 rows in",
         ),
         (
             keep_two,
-            "too few subjects for leave-one-subject-out: expected at least 3, got 2 (01, 02)",
+            "too few subjects for leave-one-subject-out (STUDY, line 11, roi Ridge): expected at least",
         ),
         (
             lambda study: swap(study / "STUDY.toml", "contrast =", "kontrast ="),

@@ -48,6 +48,15 @@ def noise(seed: int) -> Any:
     return np.where(rng.random(GRID.shape) < 0.05, np.float32(0), data)
 
 
+def squared(seed: int) -> Any:
+    """A variance map; a voxel outside the field of view has none."""
+    return noise(seed) ** 2
+
+
+def brightness(seed: int) -> Any:
+    return 100 + noise(seed)
+
+
 def t_map(seed: int) -> Any:
     return 4 * noise(seed)
 
@@ -142,6 +151,18 @@ CASES = {
         {"in_files": [maps(2), [image(noise, 2), image(noise, 3)], [image(noise, 4)]]},
         {"missing": (Missing(zeros=True), Missing(zeros=False))},
         {"labels": ["a", "b", "c"]},
+    ),
+    "SubjectMaps, with all that is optional": Case(
+        interfaces.SubjectMaps,
+        {
+            "in_files": [maps(2), [image(noise, 2), image(noise, 3)]],
+            "variance_files": [[image(squared, i), image(squared, i + 1)] for i in (0, 2)],
+            "minus_files": [[image(noise, 10), image(noise, 11)], image(noise, 12)],
+            "minus_variance_files": [[image(squared, 10), image(squared, 11)], image(squared, 12)],
+            "baseline_files": [image(brightness, 0), [image(brightness, 1), image(brightness, 2)]],
+        },
+        {"null_value": (0.0, 0.5)},
+        {"labels": ["a", "b"]},
     ),
     "GroupMap": Case(
         interfaces.GroupMap,

@@ -153,6 +153,8 @@ def test_percent_of_baseline_and_null_value(garden):
     assert values(output, "Ball") == pytest.approx(expected, rel=1e-4)
     (test,) = table(output / "roi_tests.tsv")
     assert (test["scale"], test["null_value"]) == ("percent of baseline", "10.0")
+    said = "Maps are in percent of contrast glow; ses harvest; task paths; run 1, 2, 3."
+    assert f"{said} Values are differences from 10, which is the null." in test["sentence"]
 
 
 def test_runs_weighted_by_their_variance_maps(garden):
@@ -275,7 +277,9 @@ def test_region_of_baseline_is_not_tested_on_followup_minus_baseline(garden):
     assert verdicts(garden, apart, "unchanged") == {("apart", "run")}
 
 
-def test_another_contrast_of_the_same_runs_is_a_leak(garden, tmp_path):
+@pytest.fixture
+def two_contrasts(garden, tmp_path):
+    """The maps of the second task as another contrast of the same runs, and a design."""
     folder = Path(shutil.copytree(garden, tmp_path / "garden"))
     lines = (folder / "table.tsv").read_text().splitlines()
     for line in lines[1:]:
@@ -283,9 +287,63 @@ def test_another_contrast_of_the_same_runs_is_a_leak(garden, tmp_path):
             dim = line.replace("\tglow\t", "\tdim\t").replace("\tpaths\t", "\tlanterns\t")
             lines[lines.index(line)] = dim
     (folder / "table.tsv").write_text("\n".join(lines) + "\n")
+    (folder / "design.tsv").write_text("amber\tteal\n" + "1\t0\n" * 6 + "0\t1\n" * 6)
+    (folder / "uneven.tsv").write_text("amber\tteal\n" + "1\t0\n" * 6 + "0\t1\n" * 3)
+    return folder
+
+
+def test_another_contrast_of_the_same_runs_is_a_leak(two_contrasts):
     text = 'select = { ses = "harvest", task = "lanterns", contrast = "glow" }\n'
     text += roi("Own", "localizer", 'choose_on = { contrast = "dim" }\n' + PEAK)
-    assert "the mask was chosen on the data it would be tested on" in refused(folder, text, "dim")
+    told = refused(two_contrasts, text, "dim")
+    assert "the mask was chosen on the data it would be tested on" in told
+
+
+CERTIFIED = 'select = { ses = "harvest", task = "lanterns", contrast = "glow" }\n' + roi(
+    "Sum",
+    "orthogonal-contrast",
+    'choose_on = { contrast = "dim" }\n'
+    + PEAK
+    + 'certificate = { design = "design.tsv", noise = "white", chosen = { amber = 1, teal = 1 }, '
+    'tested = { amber = 1, teal = -1 }, between = [[1, 0.2], [0.2, 1]], source = "a pilot" }\n',
+)
+
+
+def test_orthogonal_contrast_with_its_certificate(two_contrasts):
+    assert verdicts(two_contrasts, CERTIFIED, "sum") == {("certified", "subject")}
+    (test,) = table(ran(two_contrasts, CERTIFIED, "sum") / "roi_tests.tsv")
+    assert (test["verdict"], test["level"]) == ("certified", "subject")
+    assert "amber + teal and amber - teal: correlation of the errors 0 (run" in test["sentence"]
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "told"),
+    [
+        ("design.tsv", "uneven.tsv", "-0.333 (run: white noise, ordinary least squares), 0 (subj"),
+        ("0.2, 1]]", "0.2, 4]]", "0 (run: white noise, ordinary least squares), -0.6"),
+        ('contrast = "dim" }', 'contrast = ["glow"], run = ["1", "2"] }', "which chose and is tes"),
+    ],
+)
+def test_certificate_that_does_not_hold_is_refused_with_the_numbers(two_contrasts, old, new, told):
+    assert old in CERTIFIED
+    said = " ".join(refused(two_contrasts, CERTIFIED.replace(old, new), "sum").split())
+    assert "the mask was chosen on the data it would be tested on" in said
+    assert told in said
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "told"),
+    [
+        ("[0.2, 1]]", "[0.3, 1]]", "between is no covariance.*symmetric"),
+        ("[[1, 0.2], [0.2, 1]]", "[1, 1]", "between is no covariance.*2 x 2 numbers"),
+        ("teal = -1", "rose = -1", "unknown key 'rose'.*one of amber, teal"),
+        ("design.tsv", "nowhere.tsv", "no such design"),
+        (', source = "a pilot"', "", "missing key 'source'"),
+    ],
+)
+def test_certificate_that_cannot_be_read(two_contrasts, old, new, told):
+    with pytest.raises(InputError, match=told):
+        read_settings(write(two_contrasts, CERTIFIED.replace(old, new), "sum"))
 
 
 OWN_MASK = '"own/sub-{{sub}}_mask.nii.gz", origin = "drawn on the {0} run", '
@@ -299,6 +357,9 @@ def test_mask_files_of_each_subject_derive_from_that_subject(garden):
     text = HERE + roi("Drawn", "a-priori", "region = { mask = " + OWN_MASK.format("paths"))
     assert verdicts(garden, text, "drawn") == {("apart", "run")}
     output = ran(garden, text, "drawn")
+    (test,) = table(output / "roi_tests.tsv")
+    assert test["null"] == "no subject has a replicable effect in the search region"
+    assert test["claim"] == "single subjects"
     for sub, value in values(output, "Drawn").items():
         mask = runs_of(garden, sub, task="paths")[0] > 1
         read = np.mean(runs_of(garden, sub), axis=0)[mask].mean()
@@ -404,3 +465,41 @@ def test_wide_table_and_cells(garden):
     assert {r["side"] for r in cells if r["roi"] == "Own"} == {"tested", "chosen on"}
     labels = [r["parcel_name"] for r in table(output / "roi_tests.tsv") if r["roi"] == "Labels"]
     assert labels == list(LABELS.values())
+
+
+# -- sensitivity ----------------------------------------------------------------------------
+
+VARIED = roi(
+    "Five",
+    "k-fold",
+    FOLDS + 'folds = 3\nrule = { kind = "threshold", p = 0.01 }\n'
+    "sensitivity = { p = [0.05, 0.001], folds = [2, 3] }\n",
+)
+
+
+def test_declared_variants_are_one_table_beside_the_stated_analysis(garden):
+    output = ran(garden, HERE + VARIED, "varied")
+    assert [row["roi"] for row in table(output / "roi_tests.tsv")] == ["Five"]
+    stated, *others = table(output / "sensitivity.tsv")
+    assert stated["setting"] == "as stated"
+    assert [row["setting"] for row in others] == [
+        "p = 0.05, folds = 2", "p = 0.05, folds = 3", "p = 0.001, folds = 2", "p = 0.001, folds = 3"
+    ]  # fmt: skip
+    alone = VARIED.replace("sensitivity = { p = [0.05, 0.001], folds = [2, 3] }\n", "")
+    alone = alone.replace("p = 0.01", "p = 0.001").replace("folds = 3", "folds = 2")
+    (single,) = table(ran(garden, HERE + alone, "alone") / "roi_tests.tsv")
+    assert [others[2][k] for k in ("estimate", "p")] == [single["estimate"], single["p"]]
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "told"),
+    [
+        ("p = [0.05, 0.001]", "p = []", "sensitivity with too many or no combinations"),
+        ("p = [0.05, 0.001]", f"p = {[0.01] * 60}", "expected 1 to 100, got 120"),
+        ("p = [0.05, 0.001]", "radius = [3, 4]", "unknown key 'radius' in sensitivity"),
+        ("p = [0.05, 0.001]", "p = [0.05, 0.7]", "p out of range"),
+    ],
+)
+def test_sensitivity_that_does_not_do(garden, old, new, told):
+    with pytest.raises(InputError, match=told):
+        read_settings(write(garden, HERE + VARIED.replace(old, new), "varied"))

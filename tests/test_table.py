@@ -123,7 +123,7 @@ def test_nothing_found(tmp_path):
     assert done.exit_code == 2
     assert done.stderr == (
         f"sequester: no effect map found ({tmp_path}): expected names such as "
-        "sub-01_task-x_contrast-y_stat-effect_statmap.nii.gz, got 2 NIfTI files; "
+        "sub-01_task-x_contrast-y_stat-effect_statmap.nii.gz, got 2 NIfTI files, such as one.nii; "
         'give --pattern, such as "sub-{sub}/map.nii.gz"\n'
     )
 
@@ -295,7 +295,8 @@ def test_json(tmp_path):
     done = table(tmp_path / "none", "--json")
     assert done.exit_code == 2
     assert json.loads(done.stdout) == {
-        "error": f"no such folder ({tmp_path / 'none'})",
+        "error": f"no such folder ({tmp_path / 'none'}): "
+        "name the folder that holds the effect maps",
         "exit_code": 2,
     }
 
@@ -338,7 +339,7 @@ def test_columns_of_our_own_are_covariates(tmp_path):
         ("path\tsub\tvolume\na\t1\t²\n", "volume is no number (TABLE, line 2): expected 0, 1"),
         (
             "path\tsub\texchange\na\t1\tx\nb\t1\ty\n",
-            "sub-1 has two exchange values (lines 2, 3): got 'x' and 'y'",
+            "sub-1 has two exchange values (TABLE): got 'x' (line 2) and 'y' (line 3)",
         ),
         ("path\tsub\na\t1\na\t2\n", "the same map on two rows (TABLE, lines 2 and 3): got a"),
         (b"path\tsub\n\xff\xfe\t1\n", "TABLE"),

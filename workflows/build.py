@@ -16,6 +16,7 @@ from .plans import (
     A_PRIORI,
     EXPLORATORY,
     LOCALIZER,
+    ORTHOGONAL,
     OTHER_RUNS,
     a_priori,
     cross_fitted,
@@ -144,14 +145,24 @@ def _plan(roi: Roi, rows: Selection, settings: Settings) -> Workflow:
     least = maps.min_coverage
     if plan == A_PRIORI:
         assert where is not None, "an a-priori region is given"
-        return a_priori(name, people, where, search, maps.missing, roi.test, roi.summary, least)
+        return a_priori(
+            name,
+            people,
+            where,
+            search,
+            maps.missing,
+            roi.test,
+            roi.summary,
+            least,
+            roi.own_region,
+        )
     assert roi.procedure is not None, "every other plan chooses"
     if plan in OTHER_RUNS:
         runs = [listed[0].unit.run for _, listed in rows.subjects]
         return own_masks(name, roi.procedure, people, runs, where, search, plan, least)
     chosen = roi.choosing or rows
     stack = 0.3 + _gb(settings, 4 * len(chosen.subjects))
-    if plan == LOCALIZER:
+    if plan in (LOCALIZER, ORTHOGONAL):
         return localizer(
             name,
             roi.procedure,
@@ -162,6 +173,8 @@ def _plan(roi: Roi, rows: Selection, settings: Settings) -> Workflow:
             roi.these_subjects,
             least,
             stack if roi.group_mask else 0.5,
+            roi.certificate,
+            plan,
         )
     if plan == EXPLORATORY:
         return exploratory(
@@ -201,7 +214,7 @@ def _parcels(
         table,
         settings.maps.missing,
         settings.maps.min_coverage,
-        bool(region.derived_from),
+        roi.own_region,
     )
 
 

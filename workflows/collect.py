@@ -275,7 +275,8 @@ def adjust(outputs: Sequence[RoiOutput]) -> None:
 
     The labels of an atlas are a family of their own, adjusted in their test.
     """
-    tested = [o for o in outputs if not o.roi.each_label and o.records[0]["p"] is not None]
+    stated = [o for o in outputs if not (o.roi.each_label or o.roi.variant_of)]
+    tested = [o for o in stated if o.records[0]["p"] is not None]
     disjoint = all(_apart(one, other) for i, one in enumerate(tested) for other in tested[:i])
     p = [output.records[0]["p"] for output in tested]
     for output, adjusted in zip(tested, holm(p) if disjoint else [None] * len(p), strict=True):

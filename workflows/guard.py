@@ -72,6 +72,15 @@ def check(ancestry: Ancestry) -> tuple[list[Finding], list[Finding]]:
     return findings, [f for f in findings if not f.allowed]
 
 
+def _placed(error: SequesterError, node: Any) -> SequesterError:
+    """An error with a place that is there when the run is over: the node for its own folder."""
+    if not isinstance(error, InputError):
+        return error
+    inside = str(node.base_dir) in error.fields["where"]
+    fields = {**error.fields, "where": "" if inside else error.fields["where"]}
+    return type(error)(fields.pop("what"), **fields).at(f"node {node_name(node)}")
+
+
 class GuardPlugin(PluginBase):
     """Judges, hands out clearances, and runs the workflow.
 
@@ -159,7 +168,7 @@ class GuardPlugin(PluginBase):
             if what == "exception":
                 error = kept_error(Path(node.output_dir()))
                 if error is not None:
-                    self._errors.append(error)
+                    self._errors.append(_placed(error, node))
 
         try:
             engine(self.processes, before, after).run(graph, config, updatehash=False)

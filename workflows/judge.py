@@ -8,6 +8,8 @@ Levels, at a meeting of mask M with data D, both restricted to values of the tes
    declared to be about these subjects only: then apart at run level.
 3. No shared subject: apart at subject level.
 
+A certificate that holds (orthogonal contrasts) makes a shared unit harmless: certified.
+
 An unknown file on either side, or a mask nobody declared, leaves the meeting unproven. A leak
 may run only into values marked biased, which no statistic accepts.
 """
@@ -19,12 +21,13 @@ from collections.abc import Mapping
 from dataclasses import dataclass, replace
 
 from ..nodes.foldnull import plain_t_false_positives
+from ..nodes.orthogonality import Certificate
 from ..nodes.rules import Leaf, Meeting, Statistic, joined, leaves, path_to
 from ..nodes.touch import Extraction, Touch, UnitTable, cross_fitted
 from .ancestry import Ancestry, flat, iterations, meetings_of, node_name
 
 _WIDTH = 84  # of a line of a refusal's reason and cure
-APART, LEAK, UNPROVEN = "apart", "leak", "unproven"
+APART, CERTIFIED, LEAK, UNPROVEN = "apart", "certified", "leak", "unproven"
 
 
 @dataclass(frozen=True)
@@ -38,7 +41,7 @@ class Finding:
         Where they meet.
     item : int or None
         Which element of a list.
-    verdict : {"apart", "leak", "unproven"}
+    verdict : {"apart", "certified", "leak", "unproven"}
     level : {"subject", "run", ""}
         What independence is shown about.
     allowed : bool
@@ -112,11 +115,7 @@ def judge(ancestry: Ancestry) -> list[Finding]:
 def _extractions(ancestry: Ancestry, node: object, meeting: Meeting) -> list[Finding]:
     name = node_name(node)
     given = list(flat(iterations(node, ancestry.inputs[name])))
-    met = [
-        (mask, data, one.settings.get(meeting.biased) is True, _these(meeting, one.settings))
-        for one in given
-        for mask, data in meeting.pairs(one)
-    ]
+    met = [(mask, data, one) for one in given for mask, data in meeting.pairs(one)]
     table = ancestry.study.table
     unpaired = [lengths for one in given if (lengths := meeting.lengths(one)) is not None]
     if unpaired:
@@ -134,8 +133,17 @@ def _extractions(ancestry: Ancestry, node: object, meeting: Meeting) -> list[Fin
             )
         ]
     return [
-        _meet(table, name, i if len(met) > 1 else None, mask, data, biased=biased, these_only=these)
-        for i, (mask, data, biased, these) in enumerate(met)
+        _meet(
+            table,
+            name,
+            i if len(met) > 1 else None,
+            mask,
+            data,
+            biased=one.settings.get(meeting.biased) is True,
+            these_only=_these(meeting, one.settings),
+            certificate=one.settings.get(meeting.certificate),
+        )
+        for i, (mask, data, one) in enumerate(met)
     ]
 
 
@@ -158,6 +166,7 @@ def _meet(
     *,
     biased: bool,
     these_only: bool,
+    certificate: object,
 ) -> Finding:
     measured = _measured_in(table, data.touch.values)
     of_mask, of_data = mask.touch.values & measured, data.touch.values & measured
@@ -166,8 +175,21 @@ def _meet(
     choosers = table.people_of(of_mask)
     shared = table.overlapping(of_mask) & of_data
     verdict, level, reason, cure = APART, "", "", ""
-    if shared:
+    both = _files(mask) & _files(data) if isinstance(certificate, Certificate) else set()
+    if (
+        isinstance(certificate, Certificate)
+        and certificate.holds
+        and choosers & tested
+        and not (both or unknown)
+    ):
+        verdict, level = CERTIFIED, "subject"
+        reason = f"chosen on the tested data by an orthogonal contrast: {certificate.describe()}"
+    elif shared:
         verdict, reason = LEAK, "the mask was chosen on the data it would be tested on"
+        if both:
+            reason += f"; no certificate covers {min(both)}, which chose and is tested"
+        elif isinstance(certificate, Certificate):
+            reason += f", and the certificate does not hold: {certificate.describe()}"
         cure = (
             "choose the region without the tested data (plan leave-one-subject-out, or a mask "
             "with another origin), or read it as exploratory: a value without interval and p"
@@ -220,7 +242,7 @@ def _meet(
         item,
         verdict,
         level,
-        verdict == APART or (leak and biased),
+        verdict in (APART, CERTIFIED) or (leak and biased),
         of_mask,
         of_data,
         mask.touch.geometry,
@@ -232,6 +254,20 @@ def _meet(
         reason,
         cure,
     )
+
+
+def _files(leaf: Leaf) -> set[str]:
+    """The files whose values an element derives from."""
+    found, seen, waiting = set(), set(), [leaf]
+    while waiting:
+        here = waiting.pop()
+        if id(here) in seen or not here.touch.values:
+            continue
+        seen.add(id(here))
+        waiting += here.parents
+        if not here.parents:
+            found.add(here.place)
+    return found
 
 
 def _several(choosers: frozenset[str], tested: frozenset[str]) -> bool:
@@ -251,12 +287,13 @@ def _statistic(ancestry: Ancestry, node: object, statistic: Statistic) -> Findin
     tree = ancestry.inputs[name].trees.get(statistic.values) or Leaf(Touch())
     table = ancestry.study.table
     whole = joined(leaves(tree))
-    marks = [
+    every = [
         replace(mark, mask=mark.mask & _measured_in(table, mark.data))
         for mark in whole.touch.extractions
     ]
+    marks = [mark for mark in every if not mark.certified]
     mask_units = data_units = 0
-    for mark in marks:
+    for mark in every:
         mask_units |= mark.mask
         data_units |= mark.data
     verdict, reason, cure = APART, "", ""
@@ -301,7 +338,7 @@ def _statistic(ancestry: Ancestry, node: object, statistic: Statistic) -> Findin
         unknown = ", ".join(sorted(whole.touch.unknown)[:3])
         verdict, reason = UNPROVEN, f"nobody has declared what {unknown} derives from"
         cure = _DECLARE
-    elif not marks:
+    elif not every:
         verdict, reason = UNPROVEN, "nothing says in which region its values were read"
         cure = "read them with Extract, so that the region and the data are judged"
     return Finding(

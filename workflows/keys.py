@@ -11,6 +11,18 @@ from typing import Any
 
 from ..nodes.errors import InputError
 
+_NUMBER = (int, float)
+# What a user calls a type of TOML's.
+_WORDS: dict[type | tuple[type, ...], str] = {
+    str: "text in quotes",
+    bool: "true or false, without quotes",
+    int: "a whole number, without quotes",
+    _NUMBER: "a number, without quotes",
+    list: "a list [ ... ]",
+    dict: "a table { key = value, ... }",
+}
+_LONG = 60
+
 
 class Reader:
     """Reads keys of the tables of one TOML file.
@@ -20,30 +32,38 @@ class Reader:
     path : Path
     text : str
         The file's text.
-    start : int
-        The line (from 0) from which keys are looked for in messages.
+    start, end : int
+        The lines (from 0, the last one excluded) in which keys are looked for first in messages.
     """
 
-    def __init__(self, path: Path, text: str, start: int = 0) -> None:
-        self.path, self.text, self.start = path, text, start
+    def __init__(self, path: Path, text: str, start: int = 0, end: int | None = None) -> None:
+        self.path, self.text, self.start, self.end = path, text, start, end
 
     def within(self, section: str, number: int) -> Reader:
-        """The same file, looking for lines from the header of table `number` of an array on."""
+        """The same file, looking for lines in table `number` of an array first."""
         headers = [
             i
             for i, line in enumerate(self.text.splitlines())
             if re.match(rf"\s*\[\[\s*{section}\s*\]\]", line)
         ]
-        return Reader(self.path, self.text, headers[number] if number < len(headers) else 0)
+        if number >= len(headers):  # not written with headers, but inline
+            return self
+        end = headers[number + 1] if number + 1 < len(headers) else None
+        return Reader(self.path, self.text, headers[number], end)
 
     def where(self, key: str) -> str:
-        """The file, and the first line (from `start` on, or at all) on which a key stands."""
+        """The file, and the first line (of this table, or at all) on which a key stands."""
         pattern = re.compile(rf'(^|[\s{{,\["]){re.escape(key)}["\]]*\s*[=\]]')
         lines = list(enumerate(self.text.splitlines(), 1))
-        for number, line in [*lines[self.start :], *lines[: self.start]]:
+        for number, line in [*lines[self.start : self.end], *lines]:
             if pattern.search(line):
                 return f"{self.path}, line {number}"
-        return str(self.path)
+        return self.here
+
+    @property
+    def here(self) -> str:
+        """The file, and the line of the table's own header if it has one."""
+        return f"{self.path}, line {self.start + 1}" if self.start else str(self.path)
 
     def known(self, table: dict[str, Any], keys: Iterable[str], section: str = "") -> None:
         """Refuse keys that do not exist."""
@@ -57,45 +77,66 @@ class Reader:
 
     def tables(self, table: dict[str, Any], key: str, default: Any) -> list[dict[str, Any]]:
         """A list of tables, such as ``[[roi]]``."""
-        listed = self.get(table, key, list, default)
-        for item in listed:
-            if not isinstance(item, dict):
-                raise InputError(
-                    f"{key} is no list of tables", where=self.where(key), got=repr(item)
-                )
+        listed = self.get(table, key, object, default)
+        wrong = [x for x in listed if not isinstance(x, dict)] if isinstance(listed, list) else [1]
+        if wrong:
+            raise InputError(
+                f"{key} is no list of tables",
+                where=self.where(key),
+                expected=f"{key} = [{{ ... }}, ...], or [[{key}]] above each",
+                got=_shown(wrong[0] if isinstance(listed, list) else listed),
+            )
         return list(listed)
 
     def get(
-        self, table: dict[str, Any], key: str, kind: type | tuple[type, ...], default: Any
+        self,
+        table: dict[str, Any],
+        key: str,
+        kind: type | tuple[type, ...],
+        default: Any,
+        of: str = "",
     ) -> Any:
-        """A value of a type, or the default; `...` as default makes it mandatory."""
+        """A value of a type, or the default; `...` as default makes it mandatory.
+
+        `of` is the key of which `table` is the value, for messages.
+        """
         if key not in table:
             if default is ...:
-                raise InputError(f"missing key {key!r}", where=str(self.path))
+                raise InputError(
+                    f"missing key {key!r}" + (f" in {of}" if of else ""),
+                    where=self.where(of) if of else self.here,
+                    remedy=f"add it: {key} = ...",
+                )
             return default
         value = table[key]
-        if not isinstance(value, kind) or (isinstance(value, bool) and kind is not bool):
-            names = (
-                kind.__name__ if isinstance(kind, type) else " or ".join(k.__name__ for k in kind)
-            )
+        if not isinstance(value, kind) or (isinstance(value, bool) and kind in (int, _NUMBER)):
             raise InputError(
                 f"{key} has the wrong type",
                 where=self.where(key),
-                expected=names,
-                got=f"{type(value).__name__} {value!r}",
+                expected=_WORDS[kind],
+                got=_shown(value),
+            )
+        if isinstance(value, str) and "\0" in value:
+            raise InputError(
+                f"{key} with a NUL character",
+                where=self.where(key),
+                got=repr(value),
+                remedy="take the character out",
             )
         return value
 
-    def number(self, table: dict[str, Any], key: str, default: Any) -> float:
+    def number(self, table: dict[str, Any], key: str, default: Any, of: str = "") -> float:
         """A finite number."""
-        value = float(self.get(table, key, (int, float), default))
+        value = float(self.get(table, key, _NUMBER, default, of))
         if not math.isfinite(value):
             raise InputError(f"{key} is no finite number", where=self.where(key), got=f"{value}")
         return value
 
-    def one_of(self, table: dict[str, Any], key: str, allowed: Iterable[str], default: Any) -> str:
+    def one_of(
+        self, table: dict[str, Any], key: str, allowed: Iterable[str], default: Any, of: str = ""
+    ) -> str:
         """A word out of a list."""
-        value = self.get(table, key, str, default)
+        value = self.get(table, key, str, default, of)
         if value not in allowed:
             raise InputError(
                 f"unknown {key}",
@@ -133,6 +174,12 @@ class Reader:
         return str(value)
 
 
+def _shown(value: Any) -> str:
+    """A value as it may be written, cut when long."""
+    text = str(value).lower() if isinstance(value, bool) else repr(value)
+    return text if len(text) <= _LONG else text[:_LONG] + " ..."
+
+
 def read_toml(path: Path) -> tuple[dict[str, Any], Reader]:
     """A TOML file's tables, and the reader of its keys.
 
@@ -142,11 +189,25 @@ def read_toml(path: Path) -> tuple[dict[str, Any], Reader]:
         When there is no such file, or it is malformed.
     """
     if not path.is_file():
-        raise InputError("no such study file", where=str(path), remedy="give a STUDY.toml")
+        raise InputError(
+            "no such study file",
+            where=str(path),
+            got="a folder" if path.is_dir() else "",
+            remedy="give a STUDY.toml",
+        )
     try:
         text = path.read_text(encoding="utf-8")
+    except UnicodeDecodeError as error:
+        raise InputError(
+            "unreadable study file",
+            where=str(path),
+            expected="TOML, which is text in UTF-8",
+            got=str(error),
+            remedy="save it as UTF-8",
+        ) from error
+    try:
         return tomllib.loads(text), Reader(path, text)
-    except (tomllib.TOMLDecodeError, UnicodeDecodeError) as error:
+    except tomllib.TOMLDecodeError as error:
         raise InputError(
             "malformed TOML", where=str(path), got=str(error), remedy="correct that line"
         ) from error

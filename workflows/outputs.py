@@ -16,6 +16,7 @@ from importlib.metadata import version
 from pathlib import Path
 from typing import Any
 
+import numpy as np
 from filelock import FileLock, Timeout
 
 from ..nodes.errors import InputError
@@ -24,7 +25,9 @@ from ..nodes.interfaces.base import write_json
 from .collect import RoiOutput
 from .digests import digest
 from .judge import Finding
-from .settings import Settings
+from .plans import CROSS_FITTED
+from .selection import Subjects
+from .settings import Roi, Settings
 from .study import CELLS, Row, Study
 
 MANIFEST = "manifest.json"
@@ -53,7 +56,8 @@ TEST_COLUMNS = {
     "value": "How a map is summarised in its mask: mean, median, weighted or component.",
     "scale": "What values are measured in: the units of the effect maps, or percent of baseline.",
     "null_value": "Subtracted from the maps: estimates are differences from it.",
-    "claim": "Who the test speaks of: the population, or these subjects only (as declared).",
+    "claim": "Who the test speaks of: the population, these subjects only (as declared), or single "
+    "subjects (regions of their own).",
     "search": "The search region that the null hypothesis covers.",
     "n_subjects": "Independent subjects tested: rows that share an exchange value are one.",
     "estimate": "Mean of the values.",
@@ -80,7 +84,8 @@ TEST_COLUMNS = {
     "noise_dice": "The same under sign flips: what noise alone gives.",
     "coverage": "Least coverage over subjects; empty masks do not count.",
     "level": "What independence of mask and data is shown about: subject or run.",
-    "verdict": "The guard's verdict: apart, or leak (allowed for exploratory values alone).",
+    "verdict": "The guard's verdict: apart, certified (orthogonal contrast), or leak (allowed for "
+    "exploratory values alone).",
     "sentence": "The result in a sentence.",
 }
 CELL_COLUMNS = {
@@ -92,6 +97,18 @@ CELL_COLUMNS = {
     "n_maps": "Maps.",
     "n_left_out": "Maps of this cell left out; the reasons are in manifest.json.",
 }
+SENSITIVITY_COLUMNS = {
+    "roi": "Region of interest.",
+    "setting": "What is varied, as declared in STUDY.toml beforehand; the stated analysis first.",
+    "rule": "The mask rule in words.",
+    "estimate": "Mean of the values.",
+    "interval_low": "Lower end of the 95 % interval.",
+    "interval_high": "Upper end of the 95 % interval.",
+    "p": "p-value of this variant by itself: the variants are one look, none is to be picked.",
+    "n_folds": "Folds, or masks.",
+    "n_empty": "Of which empty.",
+    "mask_voxels": "Median number of voxels of its masks.",
+}
 TOUCH_COLUMNS = {
     "mask": "Where the mask comes from in the graph.",
     "extraction": "The node (and element) that reads data inside it.",
@@ -100,8 +117,15 @@ TOUCH_COLUMNS = {
     "touched": "Units, separated by spaces.",
     "tested": "Units read inside the mask, separated by spaces.",
     "origin": "Declared source of a mask from outside.",
-    "verdict": "apart, leak (exploratory values only) or unproven.",
+    "verdict": "apart, certified, leak (exploratory values only) or unproven.",
     "level": "subject or run.",
+}
+
+
+_SUMMARY_WORDS = {
+    "median": "median",
+    "weighted": "weighted mean",
+    "component": "first principal component",
 }
 
 
@@ -196,6 +220,8 @@ def write_all(
     findings : sequence of Finding
         The guard's verdicts.
     """
+    variants = [output for output in outputs if output.roi.variant_of]
+    outputs = [output for output in outputs if not output.roi.variant_of]
     masks = stage / "masks"
     masks.mkdir()
     for output in outputs:
@@ -217,6 +243,8 @@ def write_all(
     _write_wide(stage / "roi_values_wide.tsv", outputs)
     _table(stage / "cells.tsv", CELL_COLUMNS, _cell_rows(settings))
     tests = _test_rows(settings, outputs, findings)
+    if variants:
+        _table(stage / "sensitivity.tsv", SENSITIVITY_COLUMNS, _varied(outputs, variants))
     _table(stage / "roi_tests.tsv", TEST_COLUMNS, tests)
     _table(stage / "touches.tsv", TOUCH_COLUMNS, _touch_rows(settings.study, findings))
     write_json(
@@ -274,6 +302,8 @@ def _write_wide(path: Path, outputs: Sequence[RoiOutput]) -> None:
 def _cell_rows(settings: Settings) -> Iterator[dict[str, Any]]:
     """How many subjects and maps each region has, per cell of the study."""
     for roi in settings.rois:
+        if roi.variant_of:
+            continue
         sides = {"tested": roi.tested.subjects, "subtracted": roi.tested.minus}
         sides |= {"baseline": roi.tested.baseline}
         sides |= {"chosen on": roi.choosing.subjects if roi.choosing is not None else ()}
@@ -294,6 +324,28 @@ def _cell_rows(settings: Settings) -> Iterator[dict[str, Any]]:
                 }
 
 
+def _varied(
+    outputs: Sequence[RoiOutput], variants: Sequence[RoiOutput]
+) -> Iterator[dict[str, Any]]:
+    """The stated analysis of a region, then its variants: one look, whatever their number."""
+    for output in outputs:
+        mine = [one for one in variants if one.roi.variant_of == output.roi.name]
+        for one in [output, *mine] if mine else []:
+            record, interval = one.records[0], one.records[0]["interval"] or {}
+            yield {
+                "roi": output.roi.name,
+                "setting": ", ".join(f"{k} = {v}" for k, v in one.roi.setting) or "as stated",
+                "rule": one.roi.procedure.describe() if one.roi.procedure else record["rule"],
+                "estimate": record["estimate"],
+                "interval_low": interval.get("low"),
+                "interval_high": interval.get("high"),
+                "p": record["p"],
+                "n_folds": record["n_folds"],
+                "n_empty": record["n_empty"],
+                "mask_voxels": float(np.median(record["mask_sizes"])),
+            }
+
+
 def _test_rows(
     settings: Settings, outputs: Sequence[RoiOutput], findings: Sequence[Finding]
 ) -> list[dict[str, Any]]:
@@ -310,7 +362,8 @@ def _test_rows(
                 "value": roi.summary,
                 "null_value": settings.maps.null_value,
                 "scale": "percent of baseline" if roi.tested.baseline else "effect maps",
-                "claim": "these subjects" if roi.these_subjects else "population",
+                "claim": _claim(roi),
+                "sentence": " ".join([record["sentence"], *_about(roi, settings)]),
                 "interval_low": interval.get("low"),
                 "interval_high": interval.get("high"),
                 "interval_kind": interval.get("kind"),
@@ -321,6 +374,40 @@ def _test_rows(
             }
             rows.append(row)
     return rows
+
+
+def _claim(roi: Roi) -> str:
+    if roi.these_subjects:
+        return "these subjects"
+    return "single subjects" if roi.own_masks or roi.own_region else "population"
+
+
+def _about(roi: Roi, settings: Settings) -> Iterator[str]:
+    """What a value is, where it is not the plain mean of the effect maps; and what chose."""
+    told = []
+    if roi.summary != "mean":
+        told.append(f"Each subject's value is the {_SUMMARY_WORDS[roi.summary]} of the region.")
+    if roi.tested.minus:
+        told.append(f"Maps are differences: {_cells(roi.tested.minus)} is subtracted.")
+    if roi.tested.baseline:
+        told.append(f"Maps are in percent of {_cells(roi.tested.baseline)}.")
+    if settings.maps.null_value:
+        told.append(f"Values are differences from {settings.maps.null_value:g}, which is the null.")
+    if roi.choosing is not None and roi.plan in CROSS_FITTED:
+        chose = _cells(roi.choosing.subjects)
+        told.append(f"Regions were chosen on {chose}, held out and flipped together.")
+    yield from told
+
+
+def _cells(subjects: Subjects) -> str:
+    """The contrasts, sessions, tasks and runs of some maps, in words."""
+    rows = [row for _, listed in subjects for row in listed]
+    told = []
+    for name in ("contrast", "ses", "task", "acq", "run"):
+        values = sorted({row.column(name) for row in rows} - {""})
+        if values and len(values) <= 4:
+            told.append(f"{name} {', '.join(values)}")
+    return "; ".join(told) or "other maps"
 
 
 def _touch_rows(study: Study, findings: Sequence[Finding]) -> Iterator[dict[str, Any]]:

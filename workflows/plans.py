@@ -26,6 +26,7 @@ from ..nodes.interfaces import (
     FlipTest,
     GroupMap,
 )
+from ..nodes.orthogonality import Certificate
 from ..nodes.procedure import Procedure
 from .regions import mask_of
 
@@ -36,8 +37,8 @@ CROSS_FITTED = (LEAVE_ONE_OUT, K_FOLD, SPLIT_HALF, GIVEN_FOLDS)
 LEAVE_RUN_OUT, SPLIT_RUNS = "leave-one-run-out", "split-half-runs"
 # The plans in which each subject has masks of their own, from their other runs.
 OTHER_RUNS = (LEAVE_RUN_OUT, SPLIT_RUNS)
-LOCALIZER = "localizer"
-PLANS = (*CROSS_FITTED, *OTHER_RUNS, LOCALIZER, A_PRIORI, EXPLORATORY)
+LOCALIZER, ORTHOGONAL = "localizer", "orthogonal-contrast"
+PLANS = (*CROSS_FITTED, *OTHER_RUNS, LOCALIZER, ORTHOGONAL, A_PRIORI, EXPLORATORY)
 
 
 def node(interface: Any, name: str, mem_gb: float = 0.5, **inputs: Any) -> Node:
@@ -288,6 +289,8 @@ def localizer(
     these_subjects: bool = False,
     min_coverage: float = 0.0,
     mem_gb: float = 0.5,
+    certificate: Certificate | None = None,
+    plan: str = LOCALIZER,
 ) -> Workflow:
     """Choose on other data (another task, run, session, other people), then t across subjects.
 
@@ -309,6 +312,9 @@ def localizer(
     min_coverage : float
     mem_gb : float
         Needed by the group map.
+    certificate : Certificate, optional
+        With it, ``inputnode.choosing`` may hold another contrast of the tested data.
+    plan : str
 
     Returns
     -------
@@ -331,7 +337,12 @@ def localizer(
         "negative": procedure.tail == "negative",
     }
     extract = _reading(
-        labels, procedure.missing, procedure.summary, min_coverage, these_subjects=these_subjects
+        labels,
+        procedure.missing,
+        procedure.summary,
+        min_coverage,
+        these_subjects=these_subjects,
+        certificate=certificate,
     )
     if group_mask:
         choose, masks, regions = node(ChooseMask(), "choose", **rule), "mask_file", "search_file"
@@ -359,9 +370,10 @@ def localizer(
         workflow,
         extract,
         end,
-        (name, LOCALIZER, search_name),
+        (name, plan, search_name),
         chosen_on="group" if group_mask else "localizer",
         these_subjects=these_subjects,
+        certificate=certificate,
     )
     return workflow
 
@@ -375,6 +387,7 @@ def a_priori(
     test: str = "t",
     summary: str = "mean",
     min_coverage: float = 0.0,
+    own_region: bool = False,
 ) -> Workflow:
     """Read a region that was fixed beforehand, and test its mean.
 
@@ -391,6 +404,8 @@ def a_priori(
     test : {"t", "none"}
     summary : {"mean", "median", "weighted", "component"}
     min_coverage : float
+    own_region : bool
+        Each subject has a region of their own, made from other data of theirs.
 
     Examples
     --------
@@ -413,7 +428,8 @@ def a_priori(
         ]
     )
     if test == "t":
-        _fixed_test(workflow, extract, end, (name, A_PRIORI, region_name))
+        chosen_on = "other data" if own_region else "nothing"
+        _fixed_test(workflow, extract, end, (name, A_PRIORI, region_name), chosen_on=chosen_on)
     return workflow
 
 

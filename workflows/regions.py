@@ -255,14 +255,25 @@ def read_region(
     kind = kinds[0]
     for name in table:
         if name not in {kind, "origin", "derived_from", "erode", "mirror", *_GOES_WITH[kind]}:
-            raise InputError(f"key {name!r} does not go with {kind}", where=read.where(name))
+            raise InputError(
+                f"key {name!r} does not go with {kind}",
+                where=read.where(name),
+                expected=f"{kind} alone, or with one of "
+                + ", ".join(
+                    sorted({"origin", "derived_from", "erode", "mirror", *_GOES_WITH[kind]})
+                ),
+            )
     origin = read.get(table, "origin", str, "").strip() or outer
     region: Region
     if kind in COMBINED:
         listed = read.tables(table, kind, ...)
         if len(listed) < 2:
             raise InputError(
-                f"{kind} of {len(listed)}", where=read.where(kind), expected="two or more regions"
+                f"{kind} of {len(listed)}",
+                where=read.where(kind),
+                expected="two or more regions",
+                got=str(len(listed)),
+                remedy="add a region, or give the one without " + kind,
             )
         region = Combined(kind, tuple(read_region(read, t, kind, origin) for t in listed))
     else:
@@ -296,7 +307,7 @@ def _given(read: Reader, table: dict[str, Any], kind: str, origin: str) -> Given
     if kind == "centre":
         centre = read.point(table, "centre")
         assert centre is not None, "the kind is the key that is there"
-        return Ball(origin, derived, space, centre, _positive(read, table, "radius"))
+        return Ball(origin, derived, space, centre, _positive(read, table, "radius", "centre"))
     path = _inside(read, table, kind)
     space = space or space_in_name(path)
     regrid = read.get(table, "regrid", bool, False)
@@ -306,7 +317,10 @@ def _given(read: Reader, table: dict[str, Any], kind: str, origin: str) -> Given
     for label in labels:
         if not isinstance(label, str | int) or isinstance(label, bool):
             raise InputError(
-                "label is neither a name nor a number", where=read.where("labels"), got=repr(label)
+                "label is neither a name nor a number",
+                where=read.where("labels"),
+                expected="text in quotes, or a whole number",
+                got=repr(label),
             )
     names = _inside(read, table, "names") if "names" in table else _beside(read, path)
     return Labels(origin, derived, space, path, tuple(labels), names, regrid)
@@ -329,8 +343,8 @@ def _inside(read: Reader, table: dict[str, Any], key: str) -> str:
     return str(path)
 
 
-def _positive(read: Reader, table: dict[str, Any], key: str) -> float:
-    value = float(read.get(table, key, (int, float), ...))
+def _positive(read: Reader, table: dict[str, Any], key: str, of: str = "") -> float:
+    value = float(read.get(table, key, (int, float), ..., of))
     if not 0 < value < math.inf:
         raise InputError(
             f"{key} out of range", where=read.where(key), expected="> 0 mm", got=f"{value:g}"

@@ -7,7 +7,7 @@ is given in percent of the average of `baseline`.
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Iterable, Iterator
 from dataclasses import dataclass
 from typing import Any
 
@@ -16,6 +16,7 @@ from ..nodes.touch import ENTITIES
 from .keys import Reader
 from .study import Row, Study
 
+_MANY = 8
 # Per subject, sorted by label: the rows whose maps are averaged.
 Subjects = tuple[tuple[str, tuple[Row, ...]], ...]
 
@@ -73,6 +74,7 @@ def select(
     wanted: dict[str, Any],
     minus: dict[str, Any] | None = None,
     baseline: dict[str, Any] | None = None,
+    key: str = "select",
 ) -> Selection:
     """The maps that some tables of the study file ask for.
 
@@ -84,20 +86,22 @@ def select(
         Column to value, or list of values.
     minus, baseline : dict, optional
         The columns in which the maps to subtract, or to divide by, differ from `wanted`.
+    key : str
+        What `wanted` is the value of, for messages.
 
     Raises
     ------
     InputError
         For unknown columns, nothing selected, or maps that cannot be averaged.
     """
-    subjects, left_out = _subjects(read, study, wanted)
+    subjects, left_out = _subjects(read, study, wanted, key)
     others: list[Subjects] = []
-    for key, asked in (("minus", minus), ("baseline", baseline)):
+    for other, asked in (("minus", minus), ("baseline", baseline)):
         if asked is None:
             others.append(())
             continue
-        found, more = _subjects(read, study, {**wanted, **asked})
-        _same_subjects(read, key, subjects, found)
+        found, more = _subjects(read, study, {**wanted, **asked}, other)
+        _same_subjects(read, other, subjects, found)
         left_out += more
         others.append(found)
     made = Selection(subjects, others[0], others[1], tuple(dict.fromkeys(left_out)))
@@ -105,6 +109,12 @@ def select(
         raise InputError(
             "minus selects the very maps it is subtracted from",
             where=read.where("minus"),
+            remedy="name the column in which they differ",
+        )
+    if made.baseline == made.subjects and not made.minus:
+        raise InputError(
+            "baseline selects the very maps that are given in percent of it",
+            where=read.where("baseline"),
             remedy="name the column in which they differ",
         )
     return made
@@ -136,14 +146,14 @@ def chosen_elsewhere(
     same : bool
         Whether it must be the same subjects.
     """
-    chosen = select(read, study, wanted)
+    chosen = select(read, study, wanted, key="choose_on")
     if same:
         _same_subjects(read, "choose_on", tested.subjects, chosen.subjects)
     return None if chosen.subjects == tested.subjects and not tested.minus else chosen
 
 
 def _subjects(
-    read: Reader, study: Study, select: dict[str, Any]
+    read: Reader, study: Study, select: dict[str, Any], key: str
 ) -> tuple[Subjects, tuple[Row, ...]]:
     """The rows to analyse, per subject, and those left out with a reason."""
     wanted: dict[str, set[str]] = {}
@@ -154,16 +164,27 @@ def _subjects(
                 where=read.where(column),
                 expected="a column of the study table: " + ", ".join(study.columns),
             )
-        wanted[column] = {str(v) for v in (value if isinstance(value, list) else [value])}
+        values = value if isinstance(value, list) else [value]
+        if not values or not all(isinstance(v, str | int | float) for v in values):
+            raise InputError(
+                f"{key} asks for no value of {column}",
+                where=read.where(key),
+                expected=f'{column} = "value", or {column} = ["one", "another"]',
+                got=repr(value),
+            )
+        wanted[column] = {str(v) for v in values}
     rows = [r for r in study.rows if all(r.column(c) in v for c, v in wanted.items())]
     left_out = tuple(row for row in rows if row.exclude_reason)
     kept = [row for row in rows if not row.exclude_reason]
     if not kept:
+        asked = [f"{column} {' or '.join(sorted(values))}" for column, values in wanted.items()]
         raise InputError(
             "no subject left",
-            where=str(read.path),
-            got=f"{len(study.rows)} rows in the table, {len(left_out)} of the selected excluded",
-            remedy="check [data] select and the exclude_reason column",
+            where=read.where(key),
+            expected=_there(study, wanted),
+            got=f"{len(study.rows)} rows in the table, {len(rows)} of them with "
+            f"{' and '.join(asked) or 'anything'}, {len(left_out)} of those excluded",
+            remedy="check the values asked for and the exclude_reason column",
         )
     contrasts = sorted({row.contrast for row in kept})
     if len(contrasts) > 1:
@@ -177,28 +198,56 @@ def _subjects(
     for row in kept:
         of_sub.setdefault(row.unit.sub, []).append(row)
     for label, runs in of_sub.items():
-        _only_runs_differ(read, label, runs)
+        _only_runs_differ(read, label, runs, key)
+    _distinct_names(read, of_sub, key)
     ordered = tuple(
         (label, tuple(sorted(of_sub[label], key=lambda row: row.unit))) for label in sorted(of_sub)
     )
     return ordered, left_out
 
 
-def _only_runs_differ(read: Reader, label: str, runs: list[Row]) -> None:
+def _there(study: Study, wanted: dict[str, set[str]]) -> str:
+    """The values that the first column in which nothing was found does have."""
+    for column, values in wanted.items():
+        there = sorted({row.column(column) for row in study.rows})
+        if there and not values & set(there):
+            more = f" and {len(there) - _MANY} more" if len(there) > _MANY else ""
+            return f"in column {column}: {', '.join(map(repr, there[:_MANY]))}{more}"
+    return ""
+
+
+def _distinct_names(read: Reader, labels: Iterable[str], key: str) -> None:
+    """Refuse labels that would name one file."""
+    of_plain: dict[str, str] = {}
+    for label in labels:
+        plain = "".join(c for c in label if c.isalnum())
+        other = of_plain.setdefault(plain, label)
+        if other != label:
+            raise InputError(
+                "subject labels that differ only in punctuation",
+                where=read.where(key),
+                expected="letters and digits, as in BIDS",
+                got=f"{other!r} and {label!r}",
+                remedy="rename them in the study table",
+            )
+
+
+def _only_runs_differ(read: Reader, label: str, runs: list[Row], key: str) -> None:
     for row in runs:
         for entity in (*ENTITIES, "suffix"):
             if entity != "run" and row.column(entity) != runs[0].column(entity):
                 raise InputError(
                     f"maps of sub-{label} differ in {entity}",
-                    where=str(read.path),
+                    where=read.where(key),
                     got=f"{runs[0].column(entity)!r} and {row.column(entity)!r}",
                     remedy=f"only runs are averaged: select one {entity}",
                 )
     numbers = [row.unit.run for row in runs]
-    if len(set(numbers)) != len(numbers):
+    again = [row for row in runs if numbers.count(row.unit.run) > 1]
+    if again:
         raise InputError(
             f"sub-{label} has several maps of one run",
-            where=str(read.path),
-            got=", ".join(row.name for row in runs),
+            where=read.where(key),
+            got=", ".join(f"{row.name} (line {row.line} of the table)" for row in again),
             remedy="select one, or fill the run column",
         )

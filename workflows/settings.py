@@ -5,7 +5,9 @@ Every key is checked; an unknown one is an error that names its line and the kno
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+import itertools
+import math
+from collections.abc import Iterable, Iterator
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
@@ -15,8 +17,11 @@ from ..nodes.folds import Given, Halves, KFold, LeaveOneOut, Scheme
 from ..nodes.groupmaps import Missing
 from ..nodes.heldout import INTERVALS
 from ..nodes.masks import Cluster, MaskRule, PeakSphere, Strongest, Threshold
+from ..nodes.orthogonality import Certificate
 from ..nodes.procedure import ON_EMPTY, TAILS, Procedure
 from ..nodes.roi import SUMMARIES
+from ..nodes.touch import Unit
+from .certificates import read_certificate
 from .digests import digest_text
 from .keys import Reader, read_toml
 from .plans import (
@@ -28,6 +33,7 @@ from .plans import (
     LEAVE_ONE_OUT,
     LEAVE_RUN_OUT,
     LOCALIZER,
+    ORTHOGONAL,
     OTHER_RUNS,
     PLANS,
     SPLIT_HALF,
@@ -38,15 +44,17 @@ from .selection import Selection, chosen_elsewhere, select
 from .study import Origin, Row, Study, read_table
 
 # The plans that need one group map, and so one grid.
-_ONE_GRID = (*CROSS_FITTED, EXPLORATORY)
+_ONE_GRID = (*CROSS_FITTED, ORTHOGONAL, EXPLORATORY)
 # The tests that may be asked for, the default first. The plain t of cross-fitted or circular
 # values can be asked for, and is refused by the guard with the reason.
 TESTS = {
     **dict.fromkeys(CROSS_FITTED, ("whole-procedure", "t")),
-    **dict.fromkeys((*OTHER_RUNS, LOCALIZER, A_PRIORI), ("t",)),
+    **dict.fromkeys((*OTHER_RUNS, LOCALIZER, ORTHOGONAL, A_PRIORI), ("t",)),
     EXPLORATORY: ("none", "t"),
 }
 THESE_SUBJECTS = "these-subjects"
+_MOST_VARIANTS = 100  # of one region's sensitivity
+_JACKKNIFE = 4  # the fewest people
 
 _KEYS = {
     "": {"study", "data", "roi", "origin"},
@@ -63,7 +71,7 @@ _KEYS = {
         "min_coverage",
     },
     "origin": {"source", "files", "derived_from"},
-    "roi": {"name", "plan", "test", "value", "select", "minus"},
+    "roi": {"name", "plan", "test", "value", "select", "minus", "sensitivity"},
 }
 _RULES = {
     "threshold": {"height", "p"},
@@ -83,6 +91,7 @@ _PLAN_KEYS = {
     LEAVE_RUN_OUT: _CHOOSING,
     SPLIT_RUNS: _CHOOSING | {"halves"},
     LOCALIZER: _CHOOSING | {"choose_on", "mask_of", "claim"},
+    ORTHOGONAL: _CHOOSING | {"choose_on", "certificate"},
     A_PRIORI: {"region", "each_label"},
     EXPLORATORY: _CHOOSING,
 }
@@ -111,6 +120,12 @@ class Roi:
         A localizer's one mask for all, from a group map.
     these_subjects : bool
         The declared claim is about the tested subjects only.
+    certificate : Certificate or None
+        Of an orthogonal contrast.
+    variant_of : str
+        The region whose rule it varies, declared beforehand; "" for a region of its own.
+    setting : tuple of (key, value)
+        What the variant varies.
     """
 
     name: str
@@ -126,11 +141,21 @@ class Roi:
     each_label: bool = False
     group_mask: bool = False
     these_subjects: bool = False
+    certificate: Certificate | None = None
+    variant_of: str = ""
+    setting: tuple[tuple[str, Any], ...] = ()
 
     @property
     def names(self) -> tuple[str, str, str]:
         """(roi, plan, search region), as results carry them."""
         return self.name, self.plan, self.region.describe()
+
+    @property
+    def own_region(self) -> bool:
+        """Whether the region given for each subject was made from that subject's other data."""
+        return any(
+            unit.sub == "{sub}" for leaf in self.region.leaves() for unit in leaf.derived_from
+        )
 
     @property
     def own_masks(self) -> bool:
@@ -228,11 +253,12 @@ def read_settings(path: str | Path) -> Settings:
     plain = read_table(root / read.get(head, "table", str, ...), root)
     seed = read.get(head, "seed", int, 0)
     rois = tuple(
-        _Roi(read.within("roi", i), table, data, maps, plain, seed).made()
+        roi
         for i, table in enumerate(tables)
+        for roi in _with_variants(read.within("roi", i), table, data, maps, plain, seed)
     )
-    _distinct(read, [roi.name for roi in rois])
-    origins = tuple(_origins(read, toml, rois, root))
+    _distinct(read, rois)
+    origins = tuple(_origins(read, toml, rois, plain))
     return Settings(
         name=read.label(head, "name"),
         root=root,
@@ -252,7 +278,7 @@ def _maps(read: Reader, data: dict[str, Any]) -> Maps:
         raise InputError(
             "min_coverage out of range",
             where=read.where("min_coverage"),
-            expected="0 to 1",
+            expected="0 to 1, a share of the region",
             got=f"{coverage:g}",
         )
     zeros = read.get(data, "zeros_are_missing", bool, True)
@@ -269,13 +295,51 @@ def _maps(read: Reader, data: dict[str, Any]) -> Maps:
     )
 
 
-def _distinct(read: Reader, names: list[str]) -> None:
-    if not names:
+def _distinct(read: Reader, rois: tuple[Roi, ...]) -> None:
+    if not rois:
         raise InputError("no [[roi]]", where=str(read.path), remedy="state at least one")
-    folded = [name.lower() for name in names]  # one file name each, on any file system
-    for name in names:
-        if folded.count(name.lower()) > 1:
-            raise InputError("two [[roi]] of one name", where=str(read.path), got=repr(name))
+    first: dict[str, Roi] = {}
+    number = -1
+    for roi in rois:
+        number += not roi.variant_of
+        other = first.setdefault(roi.name.lower(), roi)
+        if other is not roi:
+            raise InputError(
+                "two [[roi]] of one name",
+                where=read.within("roi", number).where("name"),
+                expected="one file name each, on any file system",
+                got=f"{other.name!r} and {roi.name!r}",
+                remedy="rename one",
+            )
+
+
+def _with_variants(
+    read: Reader, table: dict[str, Any], data: dict[str, Any], maps: Maps, study: Study, seed: int
+) -> Iterator[Roi]:
+    """A region, and its declared variants: one for every combination of the listed values."""
+    own = {key: value for key, value in table.items() if key != "sensitivity"}
+    stated = _Roi(read, own, data, maps, study, seed, "sensitivity" in table).made()
+    yield stated
+    grid = read.get(table, "sensitivity", dict, {})
+    rule = own.get("rule", {})
+    known = _RULES[rule["kind"]] | {"folds"} if "kind" in rule else set()
+    read.known(grid, known, "sensitivity")
+    lists = [read.get(grid, key, list, ...) for key in grid]
+    n = math.prod(map(len, lists)) if lists else 0
+    if n > _MOST_VARIANTS or ("sensitivity" in table and n == 0):
+        raise InputError(
+            "sensitivity with too many or no combinations",
+            where=read.where("sensitivity"),
+            expected=f"1 to {_MOST_VARIANTS}",
+            got=str(n),
+        )
+    for i, values in enumerate(itertools.product(*lists) if lists else (), 1):
+        setting = tuple(zip(grid, values, strict=True))
+        changed = {key: value for key, value in setting if key != "folds"}
+        variant = {**own, "rule": {**rule, **changed}}
+        variant |= {key: value for key, value in setting if key == "folds"}
+        made = _Roi(read, variant, data, maps, study, seed, True).made()
+        yield replace(made, name=f"{made.name}Variant{i}", variant_of=made.name, setting=setting)
 
 
 class _Roi:
@@ -290,6 +354,8 @@ class _Roi:
     maps : Maps
     study : Study
     seed : int
+    varied : bool
+        Whether variants of it are asked for.
     """
 
     def __init__(
@@ -300,6 +366,7 @@ class _Roi:
         maps: Maps,
         study: Study,
         seed: int,
+        varied: bool = False,
     ) -> None:
         self.read, self.table, self.maps, self.study, self.seed = read, table, maps, study, seed
         self.data = data
@@ -307,12 +374,21 @@ class _Roi:
         read.known(table, known, "roi")
         self.name = read.label(table, "name")
         self.plan = read.one_of(table, "plan", PLANS, ...)
+        if varied and self.plan in (A_PRIORI, EXPLORATORY):
+            raise InputError(
+                f"sensitivity does not go with plan {self.plan!r}",
+                where=read.where("sensitivity"),
+                expected="a plan that chooses and tests",
+            )
         for key in table:
             if key not in _KEYS["roi"] | _PLAN_KEYS[self.plan]:
                 raise InputError(
-                    f"key {key!r} does not go with plan {self.plan!r}", where=read.where(key)
+                    f"key {key!r} does not go with plan {self.plan!r}",
+                    where=read.where(key),
+                    expected="one of " + ", ".join(sorted(_KEYS["roi"] | _PLAN_KEYS[self.plan])),
                 )
-        self.group_mask = read.one_of(table, "mask_of", ("own", "group"), "own") == "group"
+        mask_of = read.one_of(table, "mask_of", ("own", "group"), "own")
+        self.group_mask = mask_of == "group" or self.plan == ORTHOGONAL
 
     def made(self) -> Roi:
         """The region, checked."""
@@ -325,6 +401,7 @@ class _Roi:
         self.tested = self._tested()
         choosing = self._choosing()
         self._enough_runs()
+        self._enough_subjects()
         self._one_grid(choosing)
         each_label = read.get(table, "each_label", bool, False)
         if each_label and (not isinstance(region, Labels) or summary != "mean"):
@@ -341,23 +418,30 @@ class _Roi:
                 remedy="labels = [...]; or, in plan a-priori, each_label = true for all of them",
             )
         _same_space(read, key, region, self.tested)
+        for leaf in region.leaves():
+            _in_table(read, leaf.derived_from, self.study)
         of_folds = plan in (K_FOLD, SPLIT_HALF, GIVEN_FOLDS)
         intervals = INTERVALS if of_folds else tuple(i for i in INTERVALS if i != "folds")
+        procedure = None if plan == A_PRIORI else self._procedure(summary)
+        interval = read.one_of(table, "interval", intervals, "folds" if of_folds else "flips")
+        if procedure is not None and plan in CROSS_FITTED:
+            self._check_folds(procedure.scheme, interval)
         return Roi(
             self.name,
             plan,
             region,
-            None if plan == A_PRIORI else self._procedure(summary),
+            procedure,
             self.tested,
             choosing,
-            read.get(table, "flips", int, 4999),
-            read.one_of(table, "interval", intervals, "folds" if of_folds else "flips"),
+            self._flips(),
+            interval,
             read.one_of(table, "test", TESTS[plan], TESTS[plan][0]),
             summary,
             each_label,
             self.group_mask,
             read.one_of(table, "claim", ("population", THESE_SUBJECTS), "population")
             == THESE_SUBJECTS,
+            self._certificate(),
         )
 
     def _summary(self) -> str:
@@ -369,6 +453,40 @@ class _Roi:
                 expected="plan a-priori, whose mask file holds the weights",
             )
         return summary
+
+    def _flips(self) -> int:
+        flips: int = self.read.get(self.table, "flips", int, 4999)
+        if flips < 1:
+            raise InputError(
+                "too few flips",
+                where=self.read.where("flips"),
+                expected="at least 1",
+                got=str(flips),
+                remedy="leave flips out for the usual number",
+            )
+        return flips
+
+    def _check_folds(self, scheme: Scheme, interval: str) -> None:
+        """Have the folds made once: who is lacking is known now."""
+        people = sorted(set(self.tested.people))
+        try:
+            scheme.folds(people)
+        except InputError as error:
+            raise error.at(f"{self.read.where('plan')}, roi {self.name}") from error
+        if interval == "jackknife" and len(people) < _JACKKNIFE:
+            raise InputError(
+                "too few subjects for the jackknife",
+                where=f"{self.read.where('interval')}, roi {self.name}",
+                expected=f"at least {_JACKKNIFE}",
+                got=f"{len(people)} ({', '.join(people)})",
+                remedy='use interval = "flips"',
+            )
+
+    def _certificate(self) -> Certificate | None:
+        if self.plan != ORTHOGONAL:
+            return None
+        stated = self.read.get(self.table, "certificate", dict, ...)
+        return read_certificate(self.read, stated, self.tested)
 
     # -- maps -------------------------------------------------------------------------------
 
@@ -399,11 +517,15 @@ class _Roi:
         if own is None:
             return None
         made = chosen_elsewhere(
-            self.read, self.study, {**self._wanted(), **own}, self.tested, same=not self.group_mask
+            self.read,
+            self.study,
+            {**self._wanted(), **own},
+            self.tested,
+            same=not self.group_mask or self.plan == ORTHOGONAL,
         )
-        if made is None and self.plan == LOCALIZER:
+        if made is None and self.plan in (LOCALIZER, ORTHOGONAL):
             raise InputError(
-                "the localizer selects the very maps that are tested",
+                "choose_on selects the very maps that are tested",
                 where=self.read.where("choose_on"),
                 remedy='name another task, run or session: choose_on = { task = "..." }',
             )
@@ -416,7 +538,7 @@ class _Roi:
         if few:
             raise InputError(
                 f"too few runs for {self.plan}",
-                where=str(self.read.path),
+                where=f"{self.read.where('plan')}, roi {self.name}",
                 expected="at least 2 runs (the run column) of every subject",
                 got="one for sub-" + ", sub-".join(few),
                 remedy="leave these subjects out with an exclude_reason, or choose another plan",
@@ -426,6 +548,17 @@ class _Roi:
                 f"minus and baseline do not go with plan {self.plan!r}",
                 where=self.read.where("minus" if self.tested.minus else "baseline"),
                 remedy="make the difference (or the percentage) per run beforehand",
+            )
+
+    def _enough_subjects(self) -> None:
+        people = sorted(set(self.tested.people))
+        if len(people) < 2:
+            raise InputError(
+                "too few subjects",
+                where=f"{self.read.where('plan')}, roi {self.name}",
+                expected="at least 2 (rows of one exchange value count as one)",
+                got=f"{len(people)} ({', '.join(people)})",
+                remedy="check the study table and the rows it leaves out",
             )
 
     def _one_grid(self, choosing: Selection | None) -> None:
@@ -459,7 +592,7 @@ class _Roi:
     def _rule(self, table: dict[str, Any]) -> MaskRule:
         read = self.read
         read.known(table, {"kind"}.union(*_RULES.values()), "rule")
-        kind = read.one_of(table, "kind", _RULES, ...)
+        kind = read.one_of(table, "kind", _RULES, ..., "rule")
         for key in table:
             if key not in {*_RULES[kind], "kind"}:
                 raise InputError(
@@ -471,7 +604,7 @@ class _Roi:
         if kind == "strongest":
             return Strongest(read.get(table, "k", int, 0), which, read.number(table, "fraction", 0))
         if kind == "peak-sphere":
-            return PeakSphere(read.number(table, "radius", ...), which)
+            return PeakSphere(read.number(table, "radius", ..., "rule"), which)
         height = read.get(table, "height", (int, float), None)
         p = read.get(table, "p", (int, float), None)
         if self.plan == LOCALIZER and not self.group_mask and p is not None:
@@ -527,11 +660,25 @@ class _Roi:
                 if found.setdefault(row.person, value) != value:
                     raise InputError(
                         f"{row.person} has two values of {column}",
-                        where=str(self.read.path),
+                        where=self.read.where(key),
                         got=f"{found[row.person]!r} and {value!r}",
                         remedy="give all rows that count as one subject the same value",
                     )
         return tuple(sorted(found.items()))
+
+
+def _in_table(read: Reader, derived_from: Iterable[Unit], study: Study) -> None:
+    """Refuse a subject that the study does not have: what was meant would not be seen."""
+    subs = {row.unit.sub for row in study.rows}
+    for unit in derived_from:
+        if unit.sub not in {"", "{sub}", *subs}:
+            raise InputError(
+                "derived_from names a subject who is not in the study table",
+                where=read.where("derived_from"),
+                expected=f"a label such as {', '.join(sorted(subs)[:3])}",
+                got=repr(unit.sub),
+                remedy="write the label as in the table: 01 is not 1",
+            )
 
 
 def _same_space(read: Reader, key: str, region: Region, tested: Selection) -> None:
@@ -550,8 +697,9 @@ def _same_space(read: Reader, key: str, region: Region, tested: Selection) -> No
 
 
 def _origins(
-    read: Reader, toml: dict[str, Any], rois: tuple[Roi, ...], root: Path
+    whole: Reader, toml: dict[str, Any], rois: tuple[Roi, ...], study: Study
 ) -> Iterable[Origin]:
+    root = study.root
     for roi in rois:
         subs = [label for label, _ in roi.tested.subjects]
         for leaf in roi.region.leaves():
@@ -565,7 +713,8 @@ def _origins(
             else:
                 listed = dict.fromkeys(f.replace("{sub}", sub) for f in leaf.files for sub in subs)
                 yield Origin(leaf.origin, tuple(listed), leaf.derived_from)
-    for table in read.tables(toml, "origin", []):
+    for i, table in enumerate(whole.tables(toml, "origin", [])):
+        read = whole.within("origin", i)
         read.known(table, _KEYS["origin"], "origin")
         found: list[str] = []
         for pattern in read.get(table, "files", list, ...):
@@ -576,10 +725,24 @@ def _origins(
                     expected="a pattern relative to the study file",
                     got=repr(pattern),
                 )
-            matched = sorted(str(p.relative_to(root)) for p in root.glob(str(pattern)))
+            try:
+                matched = sorted(str(p.relative_to(root)) for p in root.glob(str(pattern)))
+            except ValueError as error:
+                raise InputError(
+                    "pattern of files that cannot be used",
+                    where=read.where("files"),
+                    got=f"{pattern!r}: {error}",
+                    remedy="* matches within a name, ** alone stands for any folders",
+                ) from error
             if not matched:
                 raise InputError(
-                    "origin names no file", where=read.where("files"), got=repr(pattern)
+                    "origin names no file",
+                    where=read.where("files"),
+                    expected=f"files below {root}",
+                    got=repr(pattern),
+                    remedy="check the pattern, and that the files are there",
                 )
             found += matched
-        yield Origin(read.get(table, "source", str, ...), tuple(found), units(read, table))
+        derived = units(read, table)
+        _in_table(read, derived, study)
+        yield Origin(read.get(table, "source", str, ..., "origin"), tuple(found), derived)

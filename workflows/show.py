@@ -93,7 +93,11 @@ def print_tests(settings: Settings, tests: Sequence[Mapping[str, Any]]) -> None:
     people = set(subjects.values())
     alike = "" if len(people) == len(subjects) else f", {len(people)} of them independent"
     click.echo(f"{settings.name}: {len(subjects)} subjects{alike}{note}\n")
-    families = [[row for row in tests if row["roi"] == roi.name] for roi in settings.rois]
+    families = [
+        [row for row in tests if row["roi"] == roi.name]
+        for roi in settings.rois
+        if not roi.variant_of
+    ]
     rows = [
         [
             "roi",
@@ -140,6 +144,12 @@ def print_tests(settings: Settings, tests: Sequence[Mapping[str, Any]]) -> None:
                 f"\n{family[0]['roi']}: {len(family)} labels, {told} with Holm-adjusted p < .05; "
                 "all of them are in roi_tests.tsv."
             )
+    varied = [roi for roi in settings.rois if roi.variant_of]
+    if varied:
+        click.echo(
+            f"\nSensitivity: {len(varied)} declared variants in sensitivity.tsv, one look at the "
+            "stated analysis, none to be picked."
+        )
 
 
 def _strongest(

@@ -160,8 +160,7 @@ class Study:
             if person != row.person:
                 raise InputError(
                     f"sub-{row.unit.sub} has two exchange values",
-                    where=f"lines {line}, {row.line}",
-                    got=f"{person!r} and {row.person!r}",
+                    got=f"{person!r} (line {line}) and {row.person!r} (line {row.line})",
                     remedy="give all rows of a subject the same value",
                 )
         self.table = UnitTable((row.unit for row in self.rows), people)
@@ -310,10 +309,16 @@ def read_table(path: str | Path, root: Path | None = None, origins: Sequence[Ori
             lines = list(csv.reader(stream, delimiter="\t", quoting=csv.QUOTE_NONE))
     except (OSError, UnicodeDecodeError, csv.Error) as error:
         raise InputError(
-            "unreadable study table", where=str(path), expected="a TSV in UTF-8", got=str(error)
+            "unreadable study table",
+            where=str(path),
+            expected="a TSV in UTF-8",
+            got=str(error),
+            remedy="save it as tab-separated text in UTF-8",
         ) from error
     if not lines:
-        raise InputError("empty study table", where=str(path))
+        raise InputError(
+            "empty study table", where=str(path), remedy="make one: sequester table FOLDER"
+        )
     header = lines[0]
     for needed in ("path", "sub"):
         if needed not in header:
@@ -322,10 +327,16 @@ def read_table(path: str | Path, root: Path | None = None, origins: Sequence[Ori
                 where=str(path),
                 expected="tab-separated columns " + " ".join(COLUMNS),
                 got=" ".join(header),
+                remedy="name the columns so in the first line, a tab between any two",
             )
     repeated = {name for name in header if header.count(name) > 1}
     if repeated:
-        raise InputError("column named twice", where=str(path), got=", ".join(sorted(repeated)))
+        raise InputError(
+            "column named twice",
+            where=str(path),
+            got=", ".join(sorted(repeated)),
+            remedy="rename or remove one of the two",
+        )
     rows = [
         _row(dict(zip(header, cells, strict=True)), f"{path}, line {number}", number)
         if len(cells) == len(header)
@@ -337,14 +348,24 @@ def read_table(path: str | Path, root: Path | None = None, origins: Sequence[Ori
     for row in rows:
         for name in filter(None, (row.path, row.variance)):
             before = seen.setdefault((name, row.volume), row.line)
-            if before != row.line or row.path == row.variance:
+            if row.path == row.variance:
+                raise InputError(
+                    "a map is named as its own variance map",
+                    where=f"{path}, line {row.line}",
+                    got=name,
+                    remedy="correct the variance column, or leave it blank (n/a)",
+                )
+            if before != row.line:
                 raise InputError(
                     "the same map on two rows",
                     where=f"{path}, lines {before} and {row.line}",
                     got=name if row.volume is None else f"{name} volume {row.volume}",
                     remedy="each map of a subject needs a file (or volume) of its own",
                 )
-    return Study(root or path.parent, rows, tuple(origins), header)
+    try:
+        return Study(root or path.parent, rows, tuple(origins), header)
+    except InputError as error:
+        raise error.at(str(path)) from error
 
 
 def _ragged(path: Path, number: int, expected: int, got: int) -> Row:
@@ -353,18 +374,36 @@ def _ragged(path: Path, number: int, expected: int, got: int) -> Row:
         where=f"{path}, line {number}",
         expected=f"{expected} tab-separated cells",
         got=str(got),
+        remedy="write n/a into blank cells, and no tab at the end",
     )
 
 
 def _row(cells: dict[str, str], where: str, line: int) -> Row:
     value = {name: "" if cell.strip() in _BLANK else cell.strip() for name, cell in cells.items()}
-    if "\0" in value["path"]:
-        raise InputError("path with a NUL character", where=where)
+    for name, cell in value.items():
+        if "\0" in cell:
+            raise InputError(
+                f"{name} with a NUL character",
+                where=where,
+                got=repr(cell),
+                remedy="take the character out",
+            )
     if not value["path"] or not value["sub"]:
-        raise InputError("row without a path or a sub", where=where, got=str(cells))
+        raise InputError(
+            "row without a path or a sub",
+            where=where,
+            got=f"path {value['path'] or 'n/a'}, sub {value['sub'] or 'n/a'}",
+            remedy="fill both cells, or remove the row",
+        )
     volume = value.get("volume", "")
     if volume and not volume.isdecimal():
-        raise InputError("volume is no number", where=where, expected="0, 1, ...", got=volume)
+        raise InputError(
+            "volume is no number",
+            where=where,
+            expected="0, 1, ...",
+            got=volume,
+            remedy="volumes of a 4-D file count from 0; write n/a for a 3-D file",
+        )
     known = {*COLUMNS, *ENTITIES, *_MORE}
     return Row(
         path=value["path"],

@@ -51,7 +51,12 @@ def rows_from(
     '2'
     """
     if not folder.is_dir():
-        raise InputError("no such folder", where=str(folder))
+        raise InputError(
+            "no such folder",
+            where=str(folder),
+            got="a file" if folder.is_file() else "",
+            remedy="name the folder that holds the effect maps",
+        )
     base = base or folder
     files = sorted(_images_below(folder))
     found: list[tuple[Path, dict[str, str]]] = []
@@ -71,7 +76,8 @@ def rows_from(
             "no effect map found",
             where=str(folder),
             expected=pattern or "names such as sub-01_task-x_contrast-y_stat-effect_statmap.nii.gz",
-            got=f"{len(files)} NIfTI files",
+            got=f"{len(files)} NIfTI files"
+            + (f", such as {files[0].relative_to(folder)}" if files else ""),
             remedy='give --pattern, such as "sub-{sub}/map.nii.gz"',
         )
     return [row for path, fields in found for row in _rows(path, fields, suffix, base)]
@@ -147,5 +153,10 @@ def _matcher(pattern: str) -> re.Pattern[str]:
         else:
             pieces.append(re.escape(piece))
     if "sub" not in seen:
-        raise InputError("pattern without {sub}", where=pattern)
+        raise InputError(
+            "pattern without {sub}",
+            where=pattern,
+            expected="{sub} where the subject's label stands",
+            remedy='write it so: "sub-{sub}/map.nii.gz"',
+        )
     return re.compile("".join(pieces))

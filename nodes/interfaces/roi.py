@@ -17,12 +17,17 @@ from ..fixed import (
 )
 from ..groupmaps import Missing
 from ..images import check_same_grid, read_map
+from ..orthogonality import Certificate
 from ..roi import SUMMARIES, Floats, block_values, per_person
 from ..rules import Branch, Inputs, Leaf, Meeting, Rule, Statistic, Tree, joined, leaves, only
 from .base import InputSpec, SequesterInterface, TraitedSpec, traits, write_json
 
 _MEETING = Meeting(
-    mask="mask_files", data="in_files", biased="exploratory", these_only="these_subjects"
+    mask="mask_files",
+    data="in_files",
+    biased="exploratory",
+    these_only="these_subjects",
+    certificate="certificate",
 )
 
 
@@ -65,6 +70,9 @@ class _ExtractInput(InputSpec):
     )
     these_subjects = traits.Bool(
         False, usedefault=True, desc="the claim is about the tested subjects only"
+    )
+    certificate = traits.Instance(
+        Certificate, desc="shows that the contrast which chose cannot bias the one that is read"
     )
     clearance = traits.Str(nohash=True, desc="handed out by the guard, by nobody else")
 
@@ -191,6 +199,7 @@ class _FixedInput(InputSpec):
     these_subjects = traits.Bool(
         False, usedefault=True, desc="the claim is about the tested subjects only"
     )
+    certificate = traits.Instance(Certificate, desc="that of the extraction, for the result")
 
 
 class _RecordOutput(TraitedSpec):
@@ -220,8 +229,14 @@ class FixedRegionTest(SequesterInterface):
         if chosen_on == "nothing":
             result = fixed_region_result(people, names, sizes, coverage)
         elif chosen_on == "group":
-            these = self.inputs.these_subjects
-            result = group_mask_result(people, names, sizes, coverage, these_subjects=these)
+            result = group_mask_result(
+                people,
+                names,
+                sizes,
+                coverage,
+                these_subjects=self.inputs.these_subjects,
+                certificate=self._value("certificate"),
+            )
         else:
             result = own_mask_result(people, names, sizes, coverage, chosen_on)
         return {"record_file": write_json(cwd / "result.json", result.as_dict())}
