@@ -32,6 +32,8 @@ Bools = npt.NDArray[np.bool_]
 # Affines that differ by less than this (mm, and mm per voxel) are the same grid: headers store
 # float32, and programs round-trip them through quaternions.
 _SAME_MM = 1e-3
+# What to do about a region on another grid than the maps.
+TO_GRID = "resample it to that grid, or have it done: regrid = true"
 # Masks are long runs of one value: the quickest level already packs them to a hundredth.
 _PACK_LEVEL = 1
 
@@ -67,7 +69,7 @@ def open_image(path: str | Path) -> Any:
     Raises
     ------
     InputError
-        When there is no such file, or it is no NIfTI image.
+        When there is no such file, it is no NIfTI image, or its header describes no grid.
     """
     path = Path(path)
     if not path.exists():
@@ -78,7 +80,13 @@ def open_image(path: str | Path) -> Any:
                 got=f"a link to {os.readlink(path)}, which is not there",
                 remedy="fetch the file's content, or leave the row out with an exclude_reason",
             )
-        raise InputError("no such file", where=str(path), remedy="check the path in the table")
+        raise InputError(
+            "no such file",
+            where=str(path),
+            remedy="check the path in the study table or the study file",
+        )
+    if path.is_dir():
+        raise InputError("not a file", where=str(path), got="a folder", remedy="name a file in it")
     try:
         # Not mapped into memory: for whole volumes, page by page takes longer than reading.
         image = nib.load(path, mmap=False)
@@ -90,6 +98,16 @@ def open_image(path: str | Path) -> Any:
             where=str(path),
             got=type(image).__name__,
             remedy="convert the map to NIfTI (.nii or .nii.gz)",
+        )
+    axes = np.asarray(image.affine)[:3, :3]
+    if min(image.shape) < 1 or not np.isfinite(image.affine).all() or not np.linalg.det(axes):
+        size = " x ".join(f"{mm:.4g}" for mm in np.sqrt((axes**2).sum(axis=0)))
+        raise InputError(
+            "header without a grid",
+            where=str(path),
+            expected="voxels along every axis, and an affine of finite numbers with an inverse",
+            got=f"{' x '.join(map(str, image.shape))} voxels of {size} mm",
+            remedy="copy or make the file again, with its sform or qform",
         )
     return image
 
@@ -150,12 +168,25 @@ def read_map(path: str | Path, volume: int | None = None) -> tuple[Floats, Geome
             "4-D file without a volume number",
             where=str(path),
             got=f"{total} volumes",
-            remedy="fill the table's volume column (counting from 0)",
+            remedy="fill the table's volume column (counting from 0), or give a 3-D file",
         )
     if volume is not None and not 0 <= volume < total:
         raise InputError(
             "no such volume", where=str(path), expected=f"0 to {total - 1}", got=str(volume)
         )
+    check_real(path, image)
+    try:
+        stored = image.dataobj
+        # One volume is sliced from the file, not from the whole file's data.
+        data = np.asarray(stored if total == 1 else stored[:, :, :, volume])
+        data = data.reshape(geometry.shape)
+    except (EOFError, zlib.error, OSError, ValueError, MemoryError) as error:
+        raise _unreadable(Path(path), error) from error
+    return data.astype(_read_as(image), copy=False), geometry
+
+
+def check_real(path: str | Path, image: Any) -> None:
+    """Raise an `InputError` when an image's values are no real numbers; reads the header alone."""
     stored_as = image.get_data_dtype()
     if stored_as.kind not in "fiu":
         raise InputError(
@@ -163,15 +194,8 @@ def read_map(path: str | Path, volume: int | None = None) -> tuple[Floats, Geome
             where=str(path),
             expected="integers or floating point",
             got="complex numbers" if stored_as.kind == "c" else f"values of {stored_as}",
+            remedy="give an image with one real number per voxel",
         )
-    try:
-        stored = image.dataobj
-        # One volume is sliced from the file, not from the whole file's data.
-        data = np.asarray(stored if total == 1 else stored[:, :, :, volume])
-        data = data.reshape(geometry.shape)
-    except (EOFError, zlib.error, OSError, ValueError) as error:
-        raise _unreadable(Path(path), error) from error
-    return data.astype(_read_as(image), copy=False), geometry
 
 
 def _read_as(image: Any) -> type[np.float32 | np.float64]:
@@ -194,7 +218,9 @@ def _unreadable(path: Path, error: Exception) -> InputError:
 
 
 def check_same_grid(
-    reference: tuple[str, Geometry], others: Sequence[tuple[str, Geometry]]
+    reference: tuple[str, Geometry],
+    others: Sequence[tuple[str, Geometry]],
+    remedy: str = "resample it to that grid, or leave it out of the study table",
 ) -> None:
     """Raise an `InputError` naming both grids when an image is not on the reference's grid."""
     name, grid = reference
@@ -205,7 +231,7 @@ def check_same_grid(
                 where=other_name,
                 expected=f"the grid of {name}: {grid}",
                 got=str(other),
-                remedy="resample it to that grid, or leave it out of the study table",
+                remedy=remedy,
             )
 
 
@@ -234,7 +260,7 @@ def read_mask(
     if like is None or geometry.same_as(like[1]):
         return mask, geometry
     if not regrid:
-        check_same_grid(like, [(str(path), geometry)])
+        check_same_grid(like, [(str(path), geometry)], TO_GRID)
     target = Grid(like[1].shape, like[1].affine)
     brought: Bools = covered_fraction(mask, Grid(geometry.shape, geometry.affine), target) >= 0.5
     if not brought.any():
@@ -319,9 +345,20 @@ def read_label_table(path: str | Path) -> list[tuple[int, str]]:
         with Path(path).open(newline="", encoding="utf-8-sig") as stream:
             # BIDS tables know no quoting: a quotation mark is a character.
             lines = list(csv.reader(stream, delimiter="\t", quoting=csv.QUOTE_NONE))
-    except (OSError, UnicodeDecodeError, csv.Error) as error:
+    except OSError as error:
         raise InputError(
-            "unreadable label table", where=str(path), expected="a TSV in UTF-8", got=str(error)
+            "unreadable label table",
+            where=str(path),
+            got=error.strerror or str(error),
+            remedy="check the path",
+        ) from error
+    except (UnicodeDecodeError, csv.Error) as error:
+        raise InputError(
+            "unreadable label table",
+            where=str(path),
+            expected="a TSV in UTF-8",
+            got=str(error),
+            remedy="save it as tab-separated text in UTF-8",
         ) from error
     header = [cell.strip() for cell in lines[0]] if lines else []
     if not {"index", "name"} <= set(header):
@@ -330,8 +367,10 @@ def read_label_table(path: str | Path) -> list[tuple[int, str]]:
             where=str(path),
             expected="tab-separated columns index and name, and any others",
             got=" ".join(header) or "an empty file",
+            remedy="name the two columns so in the first line",
         )
-    table = []
+    table: list[tuple[int, str]] = []
+    lines_of: dict[int, int] = {}
     for number, cells in enumerate(lines[1:], 2):
         if not any(cell.strip() for cell in cells):
             continue
@@ -342,14 +381,28 @@ def read_label_table(path: str | Path) -> list[tuple[int, str]]:
                 where=where,
                 expected=f"{len(header)} tab-separated cells",
                 got=str(len(cells)),
+                remedy="write n/a into blank cells, and no tab at the end",
             )
         row = dict(zip(header, (cell.strip() for cell in cells), strict=True))
         if not row["index"].removeprefix("-").isdecimal():
             raise InputError(
-                "index is no whole number", where=where, expected="0, 1, ...", got=row["index"]
+                "index is no whole number",
+                where=where,
+                expected="0, 1, ...",
+                got=row["index"] or "a blank cell",
+                remedy="give the number that the label has in the image",
+            )
+        index = int(row["index"])
+        before = lines_of.setdefault(index, number)
+        if before != number:
+            raise InputError(
+                "the same index on two rows",
+                where=f"{path}, lines {before} and {number}",
+                got=str(index),
+                remedy="give each label one row",
             )
         if row["name"] not in ("", "n/a"):
-            table.append((int(row["index"]), row["name"]))
+            table.append((index, row["name"]))
     return table
 
 

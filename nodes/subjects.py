@@ -7,6 +7,7 @@ subject's map is missing in it: what a subject lacks is not made up from the oth
 from __future__ import annotations
 
 from collections.abc import Sequence
+from functools import reduce
 
 import numpy as np
 import numpy.typing as npt
@@ -52,7 +53,7 @@ def combine_runs(maps: Sequence[Floats], variances: Sequence[Floats] | None = No
     if variances is None:
         if len(maps) == 1:
             return maps[0]
-        return _as(np.result_type(*maps), sum(_double(e) for e in maps) / len(maps))
+        return _as(np.result_type(*maps), reduce(np.add, map(_double, maps)) / len(maps))
     if len(variances) != len(maps):
         raise ValueError(f"{len(variances)} variance maps for {len(maps)} effect maps")
     known = [np.where((v > 0) & np.isfinite(v), _double(v), np.nan) for v in variances]

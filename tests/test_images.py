@@ -2,6 +2,7 @@
 
 import errno
 import gzip
+import io
 import os
 import shutil
 import subprocess
@@ -82,6 +83,20 @@ def test_mask_is_stored_as_bytes_of_0_and_1(tmp_path):
     np.testing.assert_array_equal(read_mask(path)[0], mask)
 
 
+@pytest.mark.parametrize("dtype", [bool, np.uint8, np.int16, np.float32, np.float64, ">f4", ">i2"])
+def test_bytes_are_those_of_an_image_that_nibabel_writes(tmp_path, dtype):
+    data = (10 * values()).astype(dtype)
+    native = np.uint8 if dtype is bool else np.dtype(dtype).newbyteorder("=")
+    image = nib.Nifti1Image(data.astype(native), AFFINE)
+    image.header.set_xyzt_units("mm")
+    image.header.set_slope_inter(1, 0)
+    for order in "CF":
+        path = write_map(tmp_path / "map.nii", np.asarray(data, order=order), geometry())
+        assert path.read_bytes() == image.to_bytes()
+        packed = write_map(tmp_path / "map.nii.gz", np.asarray(data, order=order), geometry())
+        assert gzip.decompress(packed.read_bytes()) == image.to_bytes()
+
+
 def test_two_writes_give_the_same_bytes(tmp_path, monkeypatch):
     data = values()
     one = write_map(tmp_path / "one.nii.gz", data, geometry()).read_bytes()
@@ -108,6 +123,22 @@ def test_file_appears_whole_or_not_at_all(tmp_path, monkeypatch):
         write_bytes(tmp_path / "new.tsv", b"a table")
     assert [p.name for p in tmp_path.iterdir()] == ["map.nii.gz"]
     assert path.read_bytes() == before
+
+
+def test_map_that_the_disk_has_no_room_for_leaves_nothing(tmp_path, monkeypatch):
+    class Full(io.BytesIO):
+        def write(self, piece):
+            raise OSError(errno.ENOSPC, os.strerror(errno.ENOSPC))
+
+    plain = Path.open
+
+    def opened(self, mode="r", *rest, **more):
+        return Full() if mode == "ab" else plain(self, mode, *rest, **more)
+
+    monkeypatch.setattr(Path, "open", opened)
+    with pytest.raises(OSError, match="No space left on device"):
+        write_map(tmp_path / "map.nii", values(), geometry())
+    assert list(tmp_path.iterdir()) == []
 
 
 def test_file_takes_its_name_when_its_bytes_are_there(tmp_path, monkeypatch):

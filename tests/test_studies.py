@@ -503,3 +503,18 @@ def test_declared_variants_are_one_table_beside_the_stated_analysis(garden):
 def test_sensitivity_that_does_not_do(garden, old, new, told):
     with pytest.raises(InputError, match=told):
         read_settings(write(garden, HERE + VARIED.replace(old, new), "varied"))
+
+
+def test_a_difference_of_exactly_nothing_is_data(garden, tmp_path):
+    """Accuracy maps at chance: 0.5 - 0.5 is an effect of zero, not a voxel without data."""
+    folder = Path(shutil.copytree(garden, tmp_path / "garden"))
+    for i, path in enumerate(sorted((folder / "maps").glob("*ses-harvest_task-lanterns*effect*"))):
+        data = np.random.default_rng(i).choice([0.25, 0.5, 1.0], SHAPE)
+        save(path, data.astype(np.float32), affine())
+    text = HERE + "null_value = 0.5\n" + roi("Ball", "a-priori", BALL)
+    output = ran(folder, text, "chance")
+    expected = {
+        sub: np.mean(runs_of(folder, sub), axis=0)[ball(folder)].mean() - 0.5 for sub in SUBJECTS
+    }
+    assert values(output, "Ball") == pytest.approx(expected, abs=1e-6)
+    assert {row["coverage"] for row in table(output / "roi_values.tsv")} == {"1.0"}

@@ -150,7 +150,7 @@ def _plan(roi: Roi, rows: Selection, settings: Settings) -> Workflow:
             people,
             where,
             search,
-            maps.missing,
+            maps.marked,
             roi.test,
             roi.summary,
             least,
@@ -212,7 +212,7 @@ def _parcels(
         region.describe(),
         numbers,
         table,
-        settings.maps.missing,
+        settings.maps.marked,
         settings.maps.min_coverage,
         roi.own_region,
     )

@@ -186,6 +186,11 @@ class Maps:
     own_grids: bool = False
     min_coverage: float = 0.0
 
+    @property
+    def marked(self) -> Missing:
+        """What is missing once there is one map per subject: marked by NaN, and a zero is one."""
+        return replace(self.missing, zeros=False)
+
 
 @dataclass(frozen=True)
 class Settings:
@@ -582,7 +587,7 @@ class _Roi:
                 tail=read.one_of(table, "tail", TAILS, "positive"),
                 on_empty=read.one_of(table, "on_empty", ON_EMPTY, "empty"),
                 k=read.get(table, "k", int, 0),
-                missing=self.maps.missing,
+                missing=self.maps.marked,
                 summary=summary,
             )
         except InputError as error:

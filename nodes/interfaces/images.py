@@ -191,6 +191,15 @@ class _Row:
                 got="only zeros, NaN and infinities",
                 remedy="make the map again, or leave it out with an exclude_reason",
             )
+        largest = float(np.abs(data, where=~absent, out=np.zeros_like(data)).max())
+        if largest > float(np.finfo(np.float32).max):  # sums of squares would overflow
+            raise InputError(
+                "values too large for a map",
+                where=_name(source),
+                expected="what float32 holds",
+                got=f"{largest:.3g}",
+                remedy="make the map again: a division by almost zero, or a wrong scale",
+            )
         if field in _EFFECTS:
             self._check_new(data, field, source)
         if not data.flags.writeable:
@@ -217,7 +226,7 @@ class _Row:
 
 def _bits(data: Floats) -> memoryview:
     """The bytes of a map, x fastest, as they came from the file."""
-    return memoryview(np.ascontiguousarray(data.T).reshape(-1).view(np.uint8))
+    return np.ascontiguousarray(data.T).reshape(-1).view(np.uint8).data
 
 
 def _name(source: Source) -> str:
