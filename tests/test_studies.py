@@ -85,7 +85,7 @@ def wild(tmp_path_factory):
 
 def write(folder: Path, text: str, name: str = "STUDY") -> Path:
     path = folder / f"{name}.toml"
-    path.write_text(HEAD + text.replace("results", f"results-{name}"))
+    path.write_text(HEAD + text)
     return path
 
 
@@ -213,6 +213,7 @@ def test_masks_of_what_is_combined_eroded_and_mirrored(garden):
 
 # -- which data chooses ---------------------------------------------------------------------
 
+FOLDS = 'search = { mask = "ball.nii.gz", origin = "drawn" }\nflips = 9\n'
 PEAK = 'rule = { kind = "strongest", k = 12 }\n'
 OTHER = 'choose_on = { task = "paths" }\n'
 
@@ -368,6 +369,42 @@ def test_mask_files_of_each_subject_derive_from_that_subject(garden):
     assert "the mask was chosen on the data it would be tested on" in refused(garden, leaky, "leak")
 
 
+def test_mask_that_a_run_wrote_is_known_by_its_record_and_by_its_bytes(garden, tmp_path):
+    """Look first, then give the region out as one from elsewhere: the likeliest accident."""
+    folder = Path(shutil.copytree(garden, tmp_path / "garden"))
+    output = ran(folder, HERE + roi("Look", "exploratory", PEAK), "look")
+    mask = output / "masks" / "label-Look_mask.nii.gz"
+    shutil.copy(mask, folder / "copied.nii.gz")
+    for path in (mask.relative_to(folder), "copied.nii.gz"):
+        given = BALL.replace("ball.nii.gz", str(path)).replace("drawn for this test", "a pilot")
+        told = refused(folder, HERE + roi("Pilot", "a-priori", given), "look")
+        assert "the mask was chosen on the data it would be tested on" in told
+        other = HERE.replace("lanterns", "paths") + roi("Pilot", "a-priori", given)
+        assert "leak" in refused(folder, other, "look"), "other runs of the same people"
+    fold = ran(folder, HERE + roi("Loso", "leave-one-subject-out", FOLDS + PEAK), "folds")
+    without = fold.relative_to(folder) / "masks" / "label-Loso_desc-without01_mask.nii.gz"
+    given = f'select = {{ sub = ["01", "02"] }}\nregion = {{ mask = "{without}", origin = "x" }}\n'
+    told = refused(folder, HERE + roi("One", "a-priori", given), "one")
+    assert "garden.One.extract, element 1" in told
+    assert "element 0" not in told, "the first subject did not choose that mask"
+
+
+def test_derived_from_each_subject_needs_a_file_of_each(garden):
+    given = BALL.replace(" }", ', derived_from = [{ sub = "{sub}", task = "lanterns" }] }')
+    with pytest.raises(InputError, match="for a region that all subjects share"):
+        read_settings(write(garden, HERE + roi("Ball", "a-priori", given), "shared"))
+
+
+def test_declarations_of_one_file_add_up(garden):
+    """The honest declaration of one region is not undone by a later one that leaves it out."""
+    honest = BALL.replace(" }", ', derived_from = [{ task = "lanterns" }] }')
+    vague = BALL.replace("drawn for this test", "an atlas")
+    text = HERE + roi("A", "a-priori", honest) + roi("B", "a-priori", vague)
+    assert refused(garden, text, "both").count("leak: garden.B.extract") == 1
+    text = HERE + roi("B", "a-priori", vague) + roi("A", "a-priori", honest)
+    assert refused(garden, text, "both").count("leak: garden.B.extract") == 1
+
+
 # -- spaces and grids -----------------------------------------------------------------------
 
 
@@ -418,7 +455,6 @@ def test_group_plans_need_one_grid(wild, plan):
 
 # -- everything at once ---------------------------------------------------------------------
 
-FOLDS = 'search = { mask = "ball.nii.gz", origin = "drawn" }\nflips = 9\n'
 EVERY = HERE + "".join(
     [
         roi("Loso", "leave-one-subject-out", FOLDS + 'rule = { kind = "threshold", p = 0.05 }\n'),

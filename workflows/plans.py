@@ -83,7 +83,8 @@ def cross_fitted(
     name : str
         Of the region and of the workflow.
     procedure : Procedure
-        Mask rule, folds (its ``scheme``), what happens when a fold finds nothing.
+        Mask rule, folds (its ``scheme``), what happens when a fold finds nothing; with a
+        ``model`` (`Groups` or `Score`) scores are exchanged instead of signs flipped.
     labels : sequence of str
         Per map of ``inputnode.effects``: who it belongs to.
     search : Node or Workflow, optional
@@ -91,6 +92,7 @@ def cross_fitted(
     search_name : str
         What the search region is called in the p sentence.
     n_flips, seed : int
+        Of flips, or of exchanges.
     interval : {"flips", "jackknife", "folds"}
         "folds" is for few folds, not for leave-one-subject-out.
     test : {"whole-procedure", "t"}
@@ -109,7 +111,7 @@ def cross_fitted(
     -------
     nipype.Workflow
         With ``inputnode.effects`` and ``outputnode.{mask_files, overlap_file, values,
-        record_file}``.
+        record_file, flips_file}``.
 
     Examples
     --------
@@ -122,7 +124,8 @@ def cross_fitted(
     """
     workflow = Workflow(name=name)
     fields = ["effects", "choosing"] if other_maps else ["effects"]
-    start, end = _ends(workflow, ["mask_files", "overlap_file", "values", "record_file"], fields)
+    given = ["mask_files", "overlap_file", "values", "record_file", "flips_file"]
+    start, end = _ends(workflow, given, fields)
     chooser = fields[-1]
     labels = list(labels)
     choose = node(ChooseByFold(), "choose", mem_gb, labels=labels, procedure=procedure)
@@ -155,7 +158,7 @@ def cross_fitted(
             [
                 (start, flips, [(chooser, "in_files")]),
                 (extract, flips, [("values", "values")]),
-                (flips, end, [("record_file", "record_file")]),
+                (flips, end, [("record_file", "record_file"), ("flips_file", "flips_file")]),
             ]
         )
         if other_maps:

@@ -284,6 +284,8 @@ def read_region(
                 remedy='state where it comes from, with a source: origin = "..."',
             )
         region = _given(read, table, kind, origin)
+    if isinstance(region, Given):
+        _each_has_a_file(read, region)
     if weights:
         if not isinstance(region, MaskFile) or region.regrid or "erode" in table:
             raise InputError(
@@ -324,6 +326,20 @@ def _given(read: Reader, table: dict[str, Any], kind: str, origin: str) -> Given
             )
     names = _inside(read, table, "names") if "names" in table else _beside(read, path)
     return Labels(origin, derived, space, path, tuple(labels), names, regrid)
+
+
+def _each_has_a_file(read: Reader, region: Given) -> None:
+    """A region derived from each subject's data is a file of each subject's."""
+    each = any(unit.sub == "{sub}" for unit in region.derived_from)
+    if each and not any("{sub}" in name for name in region.files):
+        raise InputError(
+            'derived_from with "{sub}" for a region that all subjects share',
+            where=read.where("derived_from"),
+            expected="{sub} in the path too, or the subjects' labels here",
+            got=region.describe(),
+            remedy='name whom it was made from: derived_from = [{ sub = "01" }, ...], or leave '
+            "sub out for everybody",
+        )
 
 
 def _beside(read: Reader, atlas: str) -> str:

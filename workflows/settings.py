@@ -24,6 +24,7 @@ from ..nodes.touch import Unit
 from .certificates import read_certificate
 from .digests import digest_text
 from .keys import Reader, read_toml
+from .lineage import recorded_units
 from .plans import (
     A_PRIORI,
     CROSS_FITTED,
@@ -39,6 +40,7 @@ from .plans import (
     SPLIT_HALF,
     SPLIT_RUNS,
 )
+from .regions import Given as GivenRegion
 from .regions import Labels, Region, Whole, read_region, units
 from .selection import Selection, chosen_elsewhere, select
 from .study import Origin, Row, Study, read_table
@@ -263,11 +265,12 @@ def read_settings(path: str | Path) -> Settings:
         for roi in _with_variants(read.within("roi", i), table, data, maps, plain, seed)
     )
     _distinct(read, rois)
-    origins = tuple(_origins(read, toml, rois, plain))
+    output = root / read.get(head, "output", str, "results")
+    origins = tuple(_origins(read, toml, rois, plain, output))
     return Settings(
         name=read.label(head, "name"),
         root=root,
-        output=root / read.get(head, "output", str, "results"),
+        output=output,
         seed=seed,
         maps=maps,
         study=Study(root, plain.rows, origins, plain.columns),
@@ -701,23 +704,33 @@ def _same_space(read: Reader, key: str, region: Region, tested: Selection) -> No
             )
 
 
+def _of_leaf(leaf: GivenRegion, subs: list[str], study: Study, output: Path) -> Iterator[Origin]:
+    """What is declared, and what runs have recorded, of the files of one region."""
+    own = [name for name in leaf.files if "{sub}" in name]
+    of_each = any(unit.sub == "{sub}" for unit in leaf.derived_from)
+    for sub in subs if own else ():
+        files = tuple(name.replace("{sub}", sub) for name in own)
+        stated = tuple(replace(u, sub=sub) if u.sub == "{sub}" else u for u in leaf.derived_from)
+        recorded = recorded_units(study.root / files[0], study, output)
+        # Each subject's file derives from that subject alone.
+        source = f"{leaf.origin} (sub-{sub})" if of_each or recorded else leaf.origin
+        yield Origin(source, files, (*stated, *recorded))
+    shared = tuple(name for name in leaf.files if name not in own)
+    if own:
+        yield Origin(leaf.origin, shared)
+    else:
+        recorded = recorded_units(study.root / shared[0], study, output) if shared else ()
+        yield Origin(leaf.origin, shared, (*leaf.derived_from, *recorded))
+
+
 def _origins(
-    whole: Reader, toml: dict[str, Any], rois: tuple[Roi, ...], study: Study
+    whole: Reader, toml: dict[str, Any], rois: tuple[Roi, ...], study: Study, output: Path
 ) -> Iterable[Origin]:
     root = study.root
     for roi in rois:
         subs = [label for label, _ in roi.tested.subjects]
         for leaf in roi.region.leaves():
-            if any(unit.sub == "{sub}" for unit in leaf.derived_from):
-                for sub in subs:  # each subject's file derives from that subject alone
-                    files = tuple(name.replace("{sub}", sub) for name in leaf.files)
-                    of_sub = tuple(
-                        replace(u, sub=sub) if u.sub == "{sub}" else u for u in leaf.derived_from
-                    )
-                    yield Origin(f"{leaf.origin} (sub-{sub})", files, of_sub)
-            else:
-                listed = dict.fromkeys(f.replace("{sub}", sub) for f in leaf.files for sub in subs)
-                yield Origin(leaf.origin, tuple(listed), leaf.derived_from)
+            yield from _of_leaf(leaf, subs, study, output)
     for i, table in enumerate(whole.tables(toml, "origin", [])):
         read = whole.within("origin", i)
         read.known(table, _KEYS["origin"], "origin")

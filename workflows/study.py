@@ -177,11 +177,11 @@ class Study:
             for path in (row.path, *([row.variance] if row.variance else [])):
                 for key in self._keys(path):
                     self._by_path.setdefault(key, []).append(row)
-        self._origin_of: dict[str, Origin] = {}
+        self._origins_of: dict[str, list[Origin]] = {}
         for origin in self.origins:
             for name in origin.files:
                 for key in self._keys(name):
-                    self._origin_of[key] = origin
+                    self._origins_of.setdefault(key, []).append(origin)
         self._sizes: dict[int, list[str]] | None = None
         self._contents: dict[int, dict[str, list[str]]] = {}
 
@@ -211,12 +211,10 @@ class Study:
                     if row.exclude_reason:
                         unknown.append(f"{row.name} (left out of the study: {row.exclude_reason})")
             return Touch(values=bits, unknown=frozenset(unknown))
-        if key in self._origin_of:
-            return self._touch_of_origin(self._origin_of[key])
+        if key in self._origins_of:
+            # Whoever declares a file says what it derives from; all of it counts.
+            return union(self.declared[origin.source] for origin in self._origins_of[key])
         return None
-
-    def _touch_of_origin(self, origin: Origin) -> Touch:
-        return self.declared[origin.source]
 
     def touch_of(self, path: str, volume: int | None = None) -> Touch | None:
         """What a file touches: its unit, its origin, unknown; None when it is no file.
@@ -238,9 +236,14 @@ class Study:
             return Touch(unknown=frozenset({self.relative(path)}))
         return None
 
+    def units_of(self, path: str | Path) -> list[Unit]:
+        """The units of the rows that name a file."""
+        found = {row.unit for key in self._keys(str(path)) for row in self._by_path.get(key, [])}
+        return sorted(found)
+
     def is_declared(self, path: str) -> bool:
         """Whether the table or an origin names this path."""
-        return any(key in self._by_path or key in self._origin_of for key in self._keys(path))
+        return any(key in self._by_path or key in self._origins_of for key in self._keys(path))
 
     def recognise(self, path: str) -> Touch | None:
         """Like `touch_of` for a declared file, also by its content under another name."""
@@ -252,7 +255,7 @@ class Study:
             return None
         if self._sizes is None:
             self._sizes = {}
-            for key in [*self._by_path, *self._origin_of]:
+            for key in [*self._by_path, *self._origins_of]:
                 if os.path.isfile(key):
                     self._sizes.setdefault(os.path.getsize(key), []).append(key)
         # Only a file of the same size can have the same bytes, so only those are read.
