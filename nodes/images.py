@@ -9,6 +9,7 @@ from __future__ import annotations
 import csv
 import gzip
 import os
+import re
 import zlib
 from collections.abc import Sequence
 from dataclasses import dataclass
@@ -407,10 +408,23 @@ def read_label_table(path: str | Path) -> list[tuple[int, str]]:
 
 
 def table_beside(path: str | Path) -> Path | None:
-    """The label table of the same name beside a label image; None when there is none."""
+    """The label table beside a label image: of the same name, or of that without space and res.
+
+    A table serves an atlas in every space and at every resolution (BIDS inheritance). None when
+    there is none.
+
+    Examples
+    --------
+    >>> table_beside("no/such/atlas-garden_space-orchard_dseg.nii.gz") is None
+    True
+    """
     path = Path(path)
-    table = path.with_name(Path(path.name.removesuffix(".gz")).stem + ".tsv")
-    return table if table.is_file() else None
+    stem = path.name.removesuffix(".gz").removesuffix(".nii")
+    plain = re.sub(r"(?:^|_)(?:space|res)-[A-Za-z0-9]+", "", stem).removeprefix("_")
+    for name in dict.fromkeys((stem, plain)):
+        if (table := path.with_name(f"{name}.tsv")).is_file():
+            return table
+    return None
 
 
 def stack(

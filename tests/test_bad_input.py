@@ -432,8 +432,8 @@ rule = { kind = "threshold", p = 0.05 }
 
 def test_refused_study_ends_with_exit_code_3(study):
     (study / "STUDY.toml").write_text(STUDY + CIRCULAR)
-    assert "refused before anything ran: 9 findings" in refused(study, exit_code=3)
-    assert "refused before anything ran: 9 findings" in refused(study, ("check",), exit_code=3)
+    assert "refused before anything ran: 2 causes, 9 findings" in refused(study, exit_code=3)
+    assert "refused before anything ran: 2 causes, 9 findings" in refused(study, ("check",), exit_code=3)
     done = installed(study, "--json")
     told = json.loads(done.stdout)
     assert (done.returncode, told["exit_code"]) == (3, 3)

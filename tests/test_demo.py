@@ -42,7 +42,7 @@ def test_demo_prints_truth_circular_and_held_out_side_by_side(shown):
 
 def test_demo_refuses_the_circular_twin_with_the_way_and_the_cure(shown):
     _, done = shown
-    assert "refused before anything ran: 25 findings" in done.output
+    assert "refused before anything ran: 2 causes, 25 findings" in done.output
     assert "leak: lanterns.Cinder.extract, element 0" in done.output
     assert "-> lanterns.Cinder.group.out_file" in done.output
     assert "cure    choose the region without the tested data" in done.output

@@ -8,7 +8,8 @@ import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
-from sequester.nodes.flips import all_signs, random_signs
+from scipy import stats
+from sequester.nodes.flips import all_orders, all_signs, all_splits, random_orders, random_signs
 
 PEOPLE = [f"{i:02}" for i in range(12)]
 
@@ -70,3 +71,46 @@ def test_the_enumeration_holds_every_pattern_once_and_begins_with_nobody_flipped
     assert len(signs) == 2**n
     assert (signs[0] == 1).all()
     assert (all_signs(n, 1, 2**n) == signs[1:]).all()
+
+
+@given(st.integers(0, 2**40), st.integers(0, 300), st.integers(0, 200))
+def test_any_stretch_of_orders_is_the_same_stretch_of_the_whole(seed, start, length):
+    whole = random_orders(seed, PEOPLE, 0, 500)
+    assert (
+        random_orders(seed, PEOPLE, start, start + length) == whole[start : start + length]
+    ).all()
+    assert (np.sort(whole, axis=1) == np.arange(12)).all()
+
+
+def test_every_order_is_as_likely_and_seeds_differ():
+    orders = random_orders(3, PEOPLE[:4], 0, 24_000)
+    _, counts = np.unique(orders, axis=0, return_counts=True)
+    assert len(counts) == 24
+    assert stats.chisquare(counts).pvalue > 1e-4
+    # One exchange tells nothing of the next: the pairs of places are even too.
+    pairs = np.histogram2d(orders[:-1, 0], orders[1:, 1], bins=4)[0]
+    assert stats.chisquare(pairs.ravel()).pvalue > 1e-4
+    assert len({random_orders(seed, PEOPLE, 0, 20).tobytes() for seed in range(50)}) == 50
+
+
+def test_the_orders_are_those_they_have_always_been():
+    # Frozen from this code, as the signs above.
+    orders = random_orders(20, ["ember", "fern", "moth", "reed"], 1000, 1003)
+    assert orders.tolist() == [[1, 0, 3, 2], [2, 0, 1, 3], [1, 0, 3, 2]]
+
+
+@given(st.integers(1, 6))
+def test_all_orders_are_there_once(n):
+    orders = all_orders(n)
+    assert {tuple(row) for row in orders.tolist()} == set(itertools.permutations(range(n)))
+    assert orders[0].tolist() == list(range(n))
+
+
+@given(st.lists(st.booleans(), min_size=1, max_size=8))
+def test_all_splits_name_every_group_once(first):
+    first = np.array(first)
+    orders = all_splits(first)
+    assert (np.sort(orders, axis=1) == np.arange(len(first))).all()
+    groups = {tuple(row) for row in first[orders].tolist()}
+    assert groups == set(itertools.permutations(first.tolist()))
+    assert len(groups) == len(orders)

@@ -201,14 +201,14 @@ def test_a_map_of_everybody_is_refused(study: Study, maps: list[str]):
     folds, group = plan.get_node("folds"), plan.get_node("group")
     plan.disconnect(folds, "selection_files", group, "in_files")
     group.inputs.in_files = [maps] * 8
-    with pytest.raises(GuardRefused, match="before anything ran: 9 findings"):
+    with pytest.raises(GuardRefused, match="before anything ran: 2 causes, 9 findings"):
         plan.run(plugin=GuardPlugin(study, dry=True))
 
 
 def test_which_row_has_which_mask_must_be_a_literal(study: Study, maps: list[str]):
     plan = given(around(study), maps)
     plan.connect(plan.get_node("folds"), "fold_of_row", plan.get_node("rows"), "fold_of_row")
-    with pytest.raises(GuardRefused, match="before anything ran: 9 findings"):
+    with pytest.raises(GuardRefused, match="before anything ran: 2 causes, 9 findings"):
         plan.run(plugin=GuardPlugin(study, dry=True))
 
 

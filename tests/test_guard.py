@@ -129,7 +129,7 @@ class TestBefore:
         side = Node(called(f"def act(x):\n    open({str(trace)!r}, 'w')\n", x=1), name="side")
         graph.add_nodes([side])
         guard = GuardPlugin(study)
-        with pytest.raises(GuardRefused, match="refused before anything ran: 8 findings"):
+        with pytest.raises(GuardRefused, match="refused before anything ran: 1 cause, 8 findings"):
             graph.run(plugin=guard)
         assert not trace.exists()
         assert results_in(tmp_path) == []

@@ -26,6 +26,7 @@ from sequester.nodes.images import Geometry, read_map, write_map
 from sequester.nodes.interfaces.base import kept_error
 from sequester.nodes.interfaces.generic import settings_of
 from sequester.nodes.masks import Cluster, Strongest, Threshold
+from sequester.nodes.models import Groups, Score
 from sequester.nodes.procedure import Procedure
 from sequester.nodes.rules import Branch, Inputs, Leaf, Tree, everything
 from sequester.nodes.space import Grid
@@ -144,6 +145,10 @@ def maps(n: int = 5) -> list[Any]:
 
 
 PROCEDURES = (Procedure(Threshold(p=0.05)), Procedure(Strongest(3)))
+GROUPS = Groups(
+    tuple(zip(PEOPLE, ("hill", "pond", "hill", "pond", "hill"), strict=True)), "hill", "pond"
+)
+SCORE = Score(tuple(zip(PEOPLE, (3.0, 1.0, 4.0, 1.5, 9.0), strict=True)))
 NAMES = ("roi", "plan", "search")
 CASES = {
     "SubjectMaps": Case(
@@ -273,6 +278,16 @@ CASES = {
         {"procedure": PROCEDURES},
         {"labels": list(PEOPLE)},
     ),
+    "ChooseByFold, two groups": Case(
+        interfaces.ChooseByFold,
+        {"in_files": maps()},
+        {
+            "procedure": tuple(
+                Procedure(rule, model=GROUPS) for rule in (Threshold(p=0.1), Strongest(3))
+            )
+        },
+        {"labels": list(PEOPLE)},
+    ),
     "ChooseWithin": Case(
         interfaces.ChooseWithin,
         {"in_files": maps(7), "search_files": [image(box, 9)]},
@@ -335,6 +350,12 @@ CASES = {
         {"in_files": maps()},
         {"n_flips": (19, 7), "seed": (0, 1), "interval": ("flips", "jackknife")},
         {"labels": list(PEOPLE), "procedure": PROCEDURES[0], "names": NAMES},
+    ),
+    "FlipTest of a score": Case(
+        interfaces.FlipTest,
+        {"in_files": maps()},
+        {"n_flips": (19, 7), "seed": (0, 1)},
+        {"labels": list(PEOPLE), "procedure": Procedure(Strongest(3), model=SCORE), "names": NAMES},
     ),
     "FlipTest on other maps": Case(
         interfaces.FlipTest,

@@ -577,7 +577,7 @@ class TestRefusal:
 
     def test_names_meeting_element_units_both_paths_and_cure(self, study: Study):
         said = refusal(self.circular(study), study)
-        assert said.startswith("refused before anything ran: 4 findings")
+        assert said.startswith("refused before anything ran: 1 cause, 4 findings")
         assert "leak: w.extract, element 0: the mask was chosen on the data it would be" in said
         assert "shared sub-01_run-1_bold" in said
         mask, data = said.index("sub-01_run-1_bold.nii"), said.rindex("sub-01_run-1_bold.nii")

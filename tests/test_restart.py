@@ -85,7 +85,9 @@ def plain(tmp_path_factory):
 
 def test_two_runs_give_the_same_bytes(plain):
     study, expected = plain
-    assert len(expected) == 2 * 8 + 2 * 2 + 2 * 5 + 2  # masks, overlap and look, tables, records
+    assert (
+        len(expected) == 2 * 8 + 2 * 2 + 2 * 5 + 3
+    )  # masks, overlap and look, tables, records and the study file
     assert run(study) == expected
 
 

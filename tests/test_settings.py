@@ -359,7 +359,7 @@ def test_rows_left_out_are_recorded(analysed):
     subjects = ("01", "02", "03", "05", "06", "07")
     assert found == {(roi, sub) for roi in ("Ridge", "Vale") for sub in subjects}
     said = run(analysed / "STUDY.toml").stdout
-    assert "1 of the selected maps left out (reasons in the table)" in said
+    assert "1 map left out (sub-04; reasons in manifest.json)" in said
 
 
 def test_row_left_out_may_lack_its_file(analysed, tmp_path):

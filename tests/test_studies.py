@@ -153,8 +153,9 @@ def test_percent_of_baseline_and_null_value(garden):
     assert values(output, "Ball") == pytest.approx(expected, rel=1e-4)
     (test,) = table(output / "roi_tests.tsv")
     assert (test["scale"], test["null_value"]) == ("percent of baseline", "10.0")
-    said = "Maps are in percent of contrast glow; ses harvest; task paths; run 1, 2, 3."
+    said = "In percent of the baseline: contrast glow, session harvest, task paths, run 1 + 2 + 3."
     assert f"{said} Values are differences from 10, which is the null." in test["sentence"]
+    assert test["tested"] == "contrast glow, session harvest, task lanterns, run 1 + 2 + 3"
 
 
 def test_runs_weighted_by_their_variance_maps(garden):
@@ -226,7 +227,7 @@ def verdicts(folder: Path, text: str, name: str) -> set[tuple[str, str]]:
 def refused(folder: Path, text: str, name: str) -> str:
     with pytest.raises(GuardRefused) as told:
         check_study(read_settings(write(folder, text, name)))
-    return str(told.value)
+    return " ".join(str(told.value).split())
 
 
 def test_localizer_of_another_task_is_apart_at_run_level(garden):
@@ -297,7 +298,8 @@ def test_another_contrast_of_the_same_runs_is_a_leak(two_contrasts):
     text = 'select = { ses = "harvest", task = "lanterns", contrast = "glow" }\n'
     text += roi("Own", "localizer", 'choose_on = { contrast = "dim" }\n' + PEAK)
     told = refused(two_contrasts, text, "dim")
-    assert "the mask was chosen on the data it would be tested on" in told
+    assert "chosen on another map of the very data it would be tested on" in told
+    assert "k-fold with choose_on" in told
 
 
 CERTIFIED = 'select = { ses = "harvest", task = "lanterns", contrast = "glow" }\n' + roi(
@@ -327,8 +329,8 @@ def test_orthogonal_contrast_with_its_certificate(two_contrasts):
 )
 def test_certificate_that_does_not_hold_is_refused_with_the_numbers(two_contrasts, old, new, told):
     assert old in CERTIFIED
-    said = " ".join(refused(two_contrasts, CERTIFIED.replace(old, new), "sum").split())
-    assert "the mask was chosen on the data it would be tested on" in said
+    said = refused(two_contrasts, CERTIFIED.replace(old, new), "sum")
+    assert "leak: garden.Sum.extract, element 0: the mask was chosen on" in said
     assert told in said
 
 
@@ -366,7 +368,7 @@ def test_mask_files_of_each_subject_derive_from_that_subject(garden):
         read = np.mean(runs_of(garden, sub), axis=0)[mask].mean()
         assert value == pytest.approx(read, abs=1e-5)
     leaky = text.replace('task = "paths" }]', 'task = "lanterns" }]')
-    assert "the mask was chosen on the data it would be tested on" in refused(garden, leaky, "leak")
+    assert "the region was made from the data it would be tested on" in refused(garden, leaky, "a")
 
 
 def test_mask_that_a_run_wrote_is_known_by_its_record_and_by_its_bytes(garden, tmp_path):
@@ -378,7 +380,7 @@ def test_mask_that_a_run_wrote_is_known_by_its_record_and_by_its_bytes(garden, t
     for path in (mask.relative_to(folder), "copied.nii.gz"):
         given = BALL.replace("ball.nii.gz", str(path)).replace("drawn for this test", "a pilot")
         told = refused(folder, HERE + roi("Pilot", "a-priori", given), "look")
-        assert "the mask was chosen on the data it would be tested on" in told
+        assert "the region was made from the data it would be tested on" in told
         other = HERE.replace("lanterns", "paths") + roi("Pilot", "a-priori", given)
         assert "leak" in refused(folder, other, "look"), "other runs of the same people"
     fold = ran(folder, HERE + roi("Loso", "leave-one-subject-out", FOLDS + PEAK), "folds")
@@ -490,8 +492,10 @@ def test_wide_table_and_cells(garden):
     long = table(output / "roi_values.tsv")
     wide = {(row["sub"], row["run"]): row for row in table(output / "roi_values_wide.tsv")}
     for row in long:
-        column = row["roi"] + ("" if row["parcel"] == "n/a" else f"_{row['parcel']}")
+        column = row["roi"] + ("_BIASED" if row["biased"] == "true" else "")
+        column += "" if row["parcel"] == "n/a" else f"_{LABELS[int(row['parcel'])]}"
         assert wide[row["sub"], row["run"]][column] == row["value"]
+    assert wide["01", "n/a"]["group"] == "hill"
     cells = table(output / "cells.tsv")
     loso = [row for row in cells if row["roi"] == "Loso"]
     assert [(r["group"], r["n_subjects"], r["n_maps"]) for r in loso] == [

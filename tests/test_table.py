@@ -364,3 +364,24 @@ def test_rows_that_share_an_exchange_value_are_one_person(tmp_path):
     path = tmp_path / "table.tsv"
     path.write_text("path\tsub\texchange\na\t1\ttwins\nb\t2\ttwins\nc\t3\tn/a\n")
     assert [row.person for row in read_table(path).rows] == ["twins", "twins", "3"]
+
+
+def test_columns_of_a_participants_table(tmp_path):
+    names = [f"maps/sub-{sub}_stat-effect_statmap.nii.gz" for sub in ("01", "02")]
+    make(tmp_path, *names)
+    listed = tmp_path / "participants.tsv"
+    listed.write_text(
+        "participant_id\tgroup\texclude_reason\nsub-02\tpond\tmoved\nsub-01\thill\tn/a\n"
+        "sub-03\thill\tn/a\n"
+    )
+    output = tmp_path / "table.tsv"
+    done = table(tmp_path / "maps", "--participants", listed, "--output", output)
+    assert done.exit_code == 0, done.output
+    study = read_table(output)
+    found = [(r.unit.sub, r.column("group"), r.exclude_reason) for r in study.rows]
+    assert found == [("01", "hill", ""), ("02", "pond", "moved")]
+    listed.write_text("participant_id\tgroup\nsub-01\thill\n")
+    done = table(tmp_path / "maps", "--participants", listed)
+    assert done.exit_code == 2
+    assert "subjects without a line in the participants table" in done.stderr
+    assert "sub-02" in done.stderr

@@ -221,7 +221,8 @@ def _record(roi: Roi, mine: dict[str, Any]) -> dict[str, Any]:
 
 
 def _voxel_mm3(path: Path) -> float:
-    return float(abs(np.linalg.det(open_image(path).affine[:3, :3])))
+    # Headers hold float32: what is beyond their precision is not a volume.
+    return float(f"{abs(np.linalg.det(open_image(path).affine[:3, :3])):.6g}")
 
 
 def _sources(
@@ -270,17 +271,28 @@ def _searched(given: Sequence[Path] | None, choose: Any) -> tuple[Path, ...]:
     return tuple(map(Path, listed))
 
 
-def adjust(outputs: Sequence[RoiOutput]) -> None:
+def adjust(outputs: Sequence[RoiOutput]) -> list[tuple[str, str]]:
     """Holm over the tested regions, when their search regions share no voxel.
 
     The labels of an atlas are a family of their own, adjusted in their test.
+
+    Returns
+    -------
+    list of (name, name)
+        The regions that share voxels, and so stand in the way.
     """
     stated = [o for o in outputs if not (o.roi.each_label or o.roi.variant_of)]
     tested = [o for o in stated if o.records[0]["p"] is not None]
-    disjoint = all(_apart(one, other) for i, one in enumerate(tested) for other in tested[:i])
+    together = [
+        (other, one)
+        for i, one in enumerate(tested)
+        for other in tested[:i]
+        if not _apart(one, other)
+    ]
     p = [output.records[0]["p"] for output in tested]
-    for output, adjusted in zip(tested, holm(p) if disjoint else [None] * len(p), strict=True):
+    for output, adjusted in zip(tested, [None] * len(p) if together else holm(p), strict=True):
         output.records[0]["p_holm"] = adjusted
+    return [(one.roi.name, other.roi.name) for one, other in together]
 
 
 def _apart(one: RoiOutput, other: RoiOutput) -> bool:

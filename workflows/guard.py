@@ -58,7 +58,8 @@ class GuardRefused(Refused):
         for finding in findings:
             told.setdefault((finding.node, finding.reason), []).append(finding)
         when = "while running" if started else "before anything ran"
-        lines = [f"refused {when}: {len(findings)} finding{'s' if len(findings) > 1 else ''}"]
+        causes = f"{len(told)} cause{'s' if len(told) > 1 else ''}"
+        lines = [f"refused {when}: {causes}, {len(findings)} finding{'s' * (len(findings) > 1)}"]
         for number, group in enumerate(told.values(), 1):
             lines.append(f"\n{number}. {group[0].describe(study.table)}")
             if len(group) > 1:

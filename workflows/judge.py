@@ -175,7 +175,7 @@ def _meet(
     choosers = table.people_of(of_mask)
     shared = table.overlapping(of_mask) & of_data
     verdict, level, reason, cure = APART, "", "", ""
-    both = _files(mask) & _files(data) if isinstance(certificate, Certificate) else set()
+    both = _files(mask) & _files(data) if shared or certificate is not None else set()
     if (
         isinstance(certificate, Certificate)
         and certificate.holds
@@ -186,14 +186,28 @@ def _meet(
         reason = f"chosen on the tested data by an orthogonal contrast: {certificate.describe()}"
     elif shared:
         verdict, reason = LEAK, "the mask was chosen on the data it would be tested on"
-        if both:
-            reason += f"; no certificate covers {min(both)}, which chose and is tested"
-        elif isinstance(certificate, Certificate):
-            reason += f", and the certificate does not hold: {certificate.describe()}"
         cure = (
-            "choose the region without the tested data (plan leave-one-subject-out, or a mask "
-            "with another origin), or read it as exploratory: a value without interval and p"
+            "choose the region without the tested data (plan k-fold or leave-one-subject-out; a "
+            "region from outside the study), or read it as exploratory: a value without "
+            "interval and p"
         )
+        if not both and mask.touch.origins:
+            reason = (
+                "the region was made from the data it would be tested on, as its origin declares "
+                "or a run has recorded"
+            )
+        elif not both:
+            reason = "the mask was chosen on another map of the very data it would be tested on"
+            cure = (
+                "choose on that map in held-out subjects (plan k-fold with choose_on), or show "
+                "that the two contrasts are orthogonal (plan orthogonal-contrast)"
+            )
+        if isinstance(certificate, Certificate):
+            reason += (
+                f"; no certificate covers {min(both)}, which chose and is tested"
+                if both
+                else f", and the certificate does not hold: {certificate.describe()}"
+            )
     elif _several(choosers, tested) and not these_only:
         verdict, level = LEAK, "subject"
         shared = sum(1 << n for n in table.numbers(of_mask) if table.people_of(1 << n) & tested)

@@ -25,7 +25,7 @@ from ..nodes.interfaces.base import write_json
 from .collect import RoiOutput
 from .digests import digest
 from .judge import Finding
-from .plans import CROSS_FITTED
+from .plans import CROSS_FITTED, EXPLORATORY
 from .selection import Subjects
 from .settings import Roi, Settings
 from .study import CELLS, Row, Study
@@ -50,6 +50,8 @@ VALUE_COLUMNS = {
 TEST_COLUMNS = {
     "roi": "Region of interest, as named in STUDY.toml.",
     "plan": "How the region was chosen.",
+    "tested": "The maps that are tested: contrast, session, task, runs.",
+    "chosen_on": "The maps that chose, where they are others.",
     "parcel": "Label number, when every label of an atlas is a region; else n/a.",
     "parcel_name": "Its name in the atlas's label table.",
     "rule": "The mask rule in words.",
@@ -122,6 +124,13 @@ TOUCH_COLUMNS = {
 }
 
 
+_ENTITY_WORDS = {
+    "contrast": "contrast",
+    "ses": "session",
+    "task": "task",
+    "acq": "acquisition",
+    "run": "run",
+}
 _SUMMARY_WORDS = {
     "median": "median",
     "weighted": "weighted mean",
@@ -240,7 +249,7 @@ def write_all(
                 },
             )
     _table(stage / "roi_values.tsv", VALUE_COLUMNS, _value_rows(outputs))
-    _write_wide(stage / "roi_values_wide.tsv", outputs)
+    _write_wide(stage / "roi_values_wide.tsv", settings, outputs)
     _table(stage / "cells.tsv", CELL_COLUMNS, _cell_rows(settings))
     tests = _test_rows(settings, outputs, findings)
     if variants:
@@ -257,6 +266,7 @@ def write_all(
             "DatasetLinks": {"study": os.path.relpath(settings.root, settings.output)},
         },
     )
+    write_bytes(stage / "STUDY.toml", settings.text.encode())
     _manifest(stage, settings)
     return tests
 
@@ -284,19 +294,53 @@ def _value_rows(outputs: Sequence[RoiOutput]) -> Iterator[dict[str, Any]]:
             }
 
 
-def _write_wide(path: Path, outputs: Sequence[RoiOutput]) -> None:
+def _write_wide(path: Path, settings: Settings, outputs: Sequence[RoiOutput]) -> None:
     """A row per subject (and run), a column per region: for spreadsheets."""
     columns = {name: VALUE_COLUMNS[name] for name in ("sub", "run")}
+    covariates = _covariates(settings)
+    names = dict.fromkeys(name for of_sub in covariates.values() for name in of_sub)
+    columns |= {name: "Covariate, from the study table." for name in names}
     rows: dict[tuple[str, str], dict[str, Any]] = {}
     for output in outputs:
-        biased = ", BIASED (exploratory)" if output.records[0]["biased"] else ""
+        biased = bool(output.records[0]["biased"])
+        called = {str(r.get("parcel")): str(r.get("parcel_name")) for r in output.records}
         for value in output.values:
-            name = output.roi.name + (f"_{value.parcel}" if value.parcel else "")
-            columns[name] = f"Value in {name}, plan {output.roi.plan}{biased}."
-            row = rows.setdefault((value.sub, value.run), {"sub": value.sub, "run": value.run})
+            name = output.roi.name
+            if value.parcel:
+                label = "".join(c for c in called[value.parcel] if c.isalnum())
+                name += f"_{label or value.parcel}"
+                if name in columns and f"label {value.parcel} " not in columns[name]:
+                    name += f"_{value.parcel}"  # two labels of one name
+            if biased:
+                name += "_BIASED"
+            of = f"label {value.parcel} of " if value.parcel else ""
+            note = ": chosen on these data (exploratory)" if biased else ""
+            columns[name] = f"Value in {of}{output.roi.name}, plan {output.roi.plan}{note}."
+            row = rows.setdefault(
+                (value.sub, value.run),
+                {"sub": value.sub, "run": value.run, **covariates.get(value.sub, {})},
+            )
             row[name] = value.value
     blank = dict.fromkeys(columns)
     _table(path, columns, (blank | rows[key] for key in sorted(rows)))
+
+
+def _covariates(settings: Settings) -> dict[str, dict[str, str]]:
+    """Per subject, the columns of the study table that hold one value for the whole subject."""
+    found: dict[str, dict[str, set[str]]] = {}
+    for row in settings.used:
+        of_sub = found.setdefault(row.unit.sub, {})
+        for name, value in row.extra:
+            of_sub.setdefault(name, set()).add(value)
+    single = {
+        name
+        for name in dict.fromkeys(name for of_sub in found.values() for name in of_sub)
+        if all(len(of_sub.get(name, {""})) == 1 for of_sub in found.values())
+    }
+    return {
+        sub: {name: values.copy().pop() for name, values in of_sub.items() if name in single}
+        for sub, of_sub in found.items()
+    }
 
 
 def _cell_rows(settings: Settings) -> Iterator[dict[str, Any]]:
@@ -359,6 +403,9 @@ def _test_rows(
             interval = record["interval"] or {}
             row = {name: record.get(name) for name in TEST_COLUMNS}
             row |= {
+                "tested": _cells(roi.tested.subjects),
+                "chosen_on": _cells(roi.choosing.subjects) if roi.choosing else None,
+                "rule": _rule(roi, record),
                 "value": roi.summary,
                 "null_value": settings.maps.null_value,
                 "scale": "percent of baseline" if roi.tested.baseline else "effect maps",
@@ -376,6 +423,13 @@ def _test_rows(
     return rows
 
 
+def _rule(roi: Roi, record: dict[str, Any]) -> str:
+    """How the region was chosen: the rule as stated, where the record only says by whom."""
+    if roi.procedure is None or roi.plan in CROSS_FITTED or roi.plan == EXPLORATORY:
+        return str(record["rule"])
+    return f"{record['rule']}: {roi.procedure.describe()}"
+
+
 def _claim(roi: Roi) -> str:
     if roi.these_subjects:
         return "these subjects"
@@ -384,13 +438,20 @@ def _claim(roi: Roi) -> str:
 
 def _about(roi: Roi, settings: Settings) -> Iterator[str]:
     """What a value is, where it is not the plain mean of the effect maps; and what chose."""
-    told = []
+    told = [f"Tested maps: {_cells(roi.tested.subjects)}."]
+    if roi.own_masks or roi.group_mask:
+        assert roi.procedure is not None, "a mask is chosen"
+        told.append(f"Rule: {roi.procedure.describe()}.")
+    if roi.choosing is not None and roi.plan not in CROSS_FITTED:
+        told.append(f"Chosen on: {_cells(roi.choosing.subjects)}.")
+    if settings.maps.by_variance:
+        told.append("Runs are weighted by the inverse of their variance maps.")
     if roi.summary != "mean":
         told.append(f"Each subject's value is the {_SUMMARY_WORDS[roi.summary]} of the region.")
     if roi.tested.minus:
-        told.append(f"Maps are differences: {_cells(roi.tested.minus)} is subtracted.")
+        told.append(f"Subtracted from them: {_cells(roi.tested.minus)}.")
     if roi.tested.baseline:
-        told.append(f"Maps are in percent of {_cells(roi.tested.baseline)}.")
+        told.append(f"In percent of the baseline: {_cells(roi.tested.baseline)}.")
     if settings.maps.null_value:
         told.append(f"Values are differences from {settings.maps.null_value:g}, which is the null.")
     if roi.choosing is not None and roi.plan in CROSS_FITTED:
@@ -403,11 +464,11 @@ def _cells(subjects: Subjects) -> str:
     """The contrasts, sessions, tasks and runs of some maps, in words."""
     rows = [row for _, listed in subjects for row in listed]
     told = []
-    for name in ("contrast", "ses", "task", "acq", "run"):
+    for name, word in _ENTITY_WORDS.items():
         values = sorted({row.column(name) for row in rows} - {""})
         if values and len(values) <= 4:
-            told.append(f"{name} {', '.join(values)}")
-    return "; ".join(told) or "other maps"
+            told.append(f"{word} {' + '.join(values)}")
+    return ", ".join(told) or "all of the table"
 
 
 def _touch_rows(study: Study, findings: Sequence[Finding]) -> Iterator[dict[str, Any]]:

@@ -17,6 +17,7 @@ from typing import Any
 from nipype import IdentityInterface, MapNode, Merge, Node, Workflow
 
 from ..nodes.errors import InputError
+from ..nodes.images import table_beside
 from ..nodes.interfaces import (
     CombineMasks,
     ErodeMask,
@@ -343,9 +344,9 @@ def _each_has_a_file(read: Reader, region: Given) -> None:
 
 
 def _beside(read: Reader, atlas: str) -> str:
-    """The label table of the atlas's own name, if it lies there."""
-    table = atlas.removesuffix(".gz").removesuffix(".nii") + ".tsv"
-    return table if (read.path.parent / table).is_file() else ""
+    """The label table beside the atlas, if there is one (see `images.table_beside`)."""
+    found = table_beside(read.path.parent / atlas)
+    return "" if found is None else str(Path(atlas).with_name(found.name))
 
 
 def _inside(read: Reader, table: dict[str, Any], key: str) -> str:

@@ -34,11 +34,14 @@ class RunResult:
         The rows of roi_tests.tsv.
     findings : list of Finding
         The guard's verdicts.
+    overlaps : list of (name, name)
+        Tested regions whose search regions share voxels: then no Holm over regions.
     """
 
     output: Path
     tests: list[dict[str, Any]]
     findings: list[Finding]
+    overlaps: list[tuple[str, str]]
 
 
 @contextmanager
@@ -109,12 +112,12 @@ def run_study(
                 graph = _run(study_workflow(settings, engine.absolute()), guard)
             nodes = find_nodes(graph)
             outputs = [collect(roi, settings, nodes) for roi in settings.rois]
-            adjust(outputs)
+            overlaps = adjust(outputs)
             tests = write_all(stage, settings, outputs, guard.findings)
         finally:
             if work is None:
                 shutil.rmtree(engine, ignore_errors=True)
-    return RunResult(settings.output, tests, guard.findings)
+    return RunResult(settings.output, tests, guard.findings, overlaps)
 
 
 @contextmanager

@@ -127,7 +127,8 @@ def _same_subjects(read: Reader, key: str, subjects: Subjects, found: Subjects) 
             f"{key} selects other subjects than [data] select",
             where=read.where(key),
             got="sub-" + ", sub-".join(sorted(here ^ there)) + " in one of them only",
-            remedy="give every subject a map of both, or an exclude_reason on both",
+            remedy="give every subject a map of both; or narrow this region to those who have "
+            "both: select = { sub = [...] } in its [[roi]]",
         )
 
 

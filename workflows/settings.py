@@ -208,7 +208,7 @@ class Settings:
     study : Study
     rois : tuple of Roi
     digest : str
-        SHA-256 of the file.
+        SHA-256 of the file; `text` is what it holds.
     table_path : Path
     """
 
@@ -220,6 +220,7 @@ class Settings:
     study: Study
     rois: tuple[Roi, ...]
     digest: str
+    text: str
     table_path: Path
 
     @property
@@ -276,6 +277,7 @@ def read_settings(path: str | Path) -> Settings:
         study=Study(root, plain.rows, origins, plain.columns),
         rois=rois,
         digest=digest_text(read.text),
+        text=read.text,
         table_path=root / head["table"],
     )
 

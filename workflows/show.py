@@ -85,10 +85,19 @@ def print_findings(findings: Sequence[Finding]) -> None:
     print_table(rows)
 
 
-def print_tests(settings: Settings, tests: Sequence[Mapping[str, Any]]) -> None:
+def print_tests(
+    settings: Settings,
+    tests: Sequence[Mapping[str, Any]],
+    overlaps: Sequence[tuple[str, str]] = (),
+) -> None:
     """The results of a run: a line per region, then its sentence."""
-    left = len(settings.left_out)
-    note = f", {left} of the selected maps left out (reasons in the table)" if left else ""
+    left = settings.left_out
+    subs = ", ".join(f"sub-{sub}" for sub in sorted({row.unit.sub for row in left})[:5])
+    note = (
+        f", {len(left)} map{'s' * (len(left) > 1)} left out ({subs}; reasons in manifest.json)"
+        if left
+        else ""
+    )
     subjects = {row.unit.sub: row.person for roi in settings.rois for row in roi.tested.rows}
     people = set(subjects.values())
     alike = "" if len(people) == len(subjects) else f", {len(people)} of them independent"
@@ -102,6 +111,7 @@ def print_tests(settings: Settings, tests: Sequence[Mapping[str, Any]]) -> None:
         [
             "roi",
             "plan",
+            "speaks of",
             "estimate",
             "95 % interval",
             "dz",
@@ -112,7 +122,7 @@ def print_tests(settings: Settings, tests: Sequence[Mapping[str, Any]]) -> None:
         ]
     ]
     for row in (row for family in families for row in _strongest(family)):
-        head = [_called(row), row["plan"]]
+        head = [_called(row), row["plan"], "nobody" if row["biased"] else row["claim"]]
         if row["biased"]:
             value = "-" if math.isnan(row["estimate"]) else f"{row['estimate']:.3g}"
             rows.append([*head, f"{value} BIASED", *["-"] * 6])
@@ -132,8 +142,13 @@ def print_tests(settings: Settings, tests: Sequence[Mapping[str, Any]]) -> None:
         numbers = [_two_digits(row["dz"]), p_value(row["p"]), p_value(row["p_holm"])]
         rows.append([*head, mean, interval, *numbers, folds, dice])
     print_table(rows)
-    if any(row["p"] is not None and row["p_holm"] is None for row in tests):
-        click.echo("\np Holm is not given where search regions overlap (or are the whole map).")
+    if overlaps:
+        one, other = overlaps[0]
+        more = f" and {len(overlaps) - 1} more pairs" if len(overlaps) > 1 else ""
+        click.echo(
+            f"\nNo p Holm over the regions: the search regions of {one} and {other}{more} share "
+            "voxels (a whole map shares all)."
+        )
     for family in families:
         shown = _strongest(family, _SENTENCES)
         for row in shown:

@@ -34,7 +34,7 @@ COLUMNS = (
     "exclude_reason",
     "exchange",
 )
-_BLANK = ("", "n/a")
+BLANK = ("", "n/a")
 # Columns that are there when a row needs them, beside COLUMNS and the entities.
 _MORE = ("variance", "space")
 _TEXTS = ("contrast", "exclude_reason", "exchange", *_MORE)
@@ -83,7 +83,7 @@ class Row:
             return str(getattr(self.unit, name))
         if name in ("path", *_TEXTS):
             return str(getattr(self, name))
-        return dict(self.extra)[name]
+        return dict(self.extra).get(name, "")
 
     @property
     def cell(self) -> list[str]:
@@ -285,6 +285,27 @@ class Study:
         raise InputError("no such map in the study table", where=str(path))
 
 
+def read_cells(path: Path, what: str) -> list[list[str]]:
+    """The lines of a TSV, as BIDS has it: no quoting, a quotation mark is a character.
+
+    Raises
+    ------
+    InputError
+        When it cannot be read; says `what` it is.
+    """
+    try:
+        with path.open(newline="", encoding="utf-8-sig") as stream:
+            return list(csv.reader(stream, delimiter="\t", quoting=csv.QUOTE_NONE))
+    except (OSError, UnicodeDecodeError, csv.Error) as error:
+        raise InputError(
+            f"unreadable {what}",
+            where=str(path),
+            expected="a TSV in UTF-8",
+            got=str(error),
+            remedy="save it as tab-separated text in UTF-8",
+        ) from error
+
+
 def read_table(path: str | Path, root: Path | None = None, origins: Sequence[Origin] = ()) -> Study:
     """Read a study table.
 
@@ -306,18 +327,7 @@ def read_table(path: str | Path, root: Path | None = None, origins: Sequence[Ori
         raise InputError(
             "no such study table", where=str(path), remedy="make one: sequester table FOLDER"
         )
-    try:
-        with path.open(newline="", encoding="utf-8-sig") as stream:
-            # BIDS tables know no quoting: a quotation mark is a character.
-            lines = list(csv.reader(stream, delimiter="\t", quoting=csv.QUOTE_NONE))
-    except (OSError, UnicodeDecodeError, csv.Error) as error:
-        raise InputError(
-            "unreadable study table",
-            where=str(path),
-            expected="a TSV in UTF-8",
-            got=str(error),
-            remedy="save it as tab-separated text in UTF-8",
-        ) from error
+    lines = read_cells(path, "study table")
     if not lines:
         raise InputError(
             "empty study table", where=str(path), remedy="make one: sequester table FOLDER"
@@ -382,7 +392,7 @@ def _ragged(path: Path, number: int, expected: int, got: int) -> Row:
 
 
 def _row(cells: dict[str, str], where: str, line: int) -> Row:
-    value = {name: "" if cell.strip() in _BLANK else cell.strip() for name, cell in cells.items()}
+    value = {name: "" if cell.strip() in BLANK else cell.strip() for name, cell in cells.items()}
     for name, cell in value.items():
         if "\0" in cell:
             raise InputError(
@@ -435,13 +445,14 @@ def table_text(rows: Iterable[Row]) -> str:
     """A study table as TSV, blank cells as n/a, sorted by path and volume.
 
     The columns ``ce`` (contrast agent, after ``acq``), ``variance`` and ``space`` are added when
-    a row has one.
+    a row has one, and covariates at the end.
     """
     listed = sorted(rows, key=lambda r: (r.path, -1 if r.volume is None else r.volume))
     columns = list(COLUMNS)
     if any(row.unit.ce for row in listed):
         columns.insert(columns.index("dir"), "ce")
     columns += [name for name in _MORE if any(row.column(name) for row in listed)]
+    columns += dict.fromkeys(name for row in listed for name, _ in row.extra)
     lines = ["\t".join(columns)]
     for row in listed:
         volume = "" if row.volume is None else str(row.volume)

@@ -10,13 +10,14 @@ from __future__ import annotations
 import os
 import re
 from collections.abc import Iterator
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
 from ..nodes.errors import InputError
 from ..nodes.images import n_volumes, open_image
 from ..nodes.touch import ENTITIES, Unit
-from .study import Row
+from .study import BLANK, Row, read_cells
 
 _FIELDS = (*ENTITIES, "contrast")
 _ENDINGS = (".nii", ".nii.gz")
@@ -160,3 +161,47 @@ def _matcher(pattern: str) -> re.Pattern[str]:
             remedy='write it so: "sub-{sub}/map.nii.gz"',
         )
     return re.compile("".join(pieces))
+
+
+def with_participants(rows: list[Row], path: Path) -> list[Row]:
+    """The rows with the columns of a BIDS ``participants.tsv``, by subject.
+
+    Columns of the study table's own (``exclude_reason``, ``exchange``) are filled; any other
+    becomes a covariate.
+
+    Parameters
+    ----------
+    rows : list of Row
+    path : Path
+
+    Raises
+    ------
+    InputError
+        When the file cannot be read, or lacks a subject of the rows.
+    """
+    header, *lines = read_cells(path, "participants table")
+    if not header or header[0] != "participant_id":
+        raise InputError(
+            "participants table without participant_id",
+            where=str(path),
+            expected="participant_id as the first column, as BIDS has it",
+            got=header[0] if header else "an empty file",
+        )
+    of_sub = {line[0].removeprefix("sub-"): dict(zip(header, line, strict=False)) for line in lines}
+    lacking = sorted({row.unit.sub for row in rows} - of_sub.keys())
+    if lacking:
+        raise InputError(
+            "subjects without a line in the participants table",
+            where=str(path),
+            expected="participant_id sub-LABEL, or LABEL",
+            got="none for sub-" + ", sub-".join(lacking[:5]),
+        )
+    made = []
+    for row in rows:
+        cells = {
+            k: "" if v.strip() in BLANK else v.strip() for k, v in of_sub[row.unit.sub].items()
+        }
+        own = {k: v for k, v in cells.items() if k in ("exclude_reason", "exchange")}
+        extra = tuple((k, v) for k, v in cells.items() if k not in (*own, "participant_id"))
+        made.append(replace(row, **own, extra=(*row.extra, *extra)))
+    return made
