@@ -12,13 +12,17 @@ WORKFLOWS = Path(sequester.workflows.__file__).parent
 
 # Lowest first; a module imports from modules before it only.
 NODE_LAYERS = [
-    "errors", "progress", "touch", "rules", "space", "regrid", "folds", "flips", "subjects",
-    "groupmaps", "design", "masks", "regions", "roi", "parcels", "foldnull", "procedure",
-    "results", "heldout", "fixed", "images", "interfaces",
+    "errors", "power",
+    "progress", "touch", "rules", "space", "regrid", "folds", "flips", "subjects",
+    "groupmaps", "smoothness", "randomfield", "design", "orthogonality", "masks", "regions", "roi",
+    "reliability", "familywise", "parcels", "foldnull", "foldstack", "signed", "scored",
+    "adjusted", "choosing", "compared", "models", "exchange", "procedure", "simulated", "nullsets",
+    "results", "comparisons", "heldout", "fixed", "images", "interfaces",
 ]  # fmt: skip
 WORKFLOW_LAYERS = [
     "digests", "study", "ancestry", "judge", "engines", "guard", "keys", "selection", "regions",
-    "plans", "around", "settings", "build", "collect", "outputs", "verify", "run", "table", "demo",
+    "plans", "around", "certificates", "lineage", "settings", "build", "collect", "outputs", "verify", "run",
+    "curves", "planning", "trials", "kept", "measured", "calibrate", "table", "demo",
     "show", "cli",
 ]  # fmt: skip
 
