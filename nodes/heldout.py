@@ -1,20 +1,26 @@
 """What may be said of held-out values: estimate, interval and the test that matches, or why none.
 
-The cross-fitted plans have the whole-procedure flip test. Where the procedure cannot be repeated
-(group maps made by other software) there is an estimate and no p.
+The cross-fitted plans have the whole-procedure exchange test. Where the procedure cannot be
+repeated (group maps made by other software) there is an estimate and no p.
 """
 
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
+import numpy.typing as npt
 
 from .errors import InputError
-from .procedure import FlipTest, Outcome, Prepared
+from .exchange import FlipTest
+from .models import Groups, Model
+from .procedure import Outcome, Prepared
 from .results import RoiResult, estimate_texts, known, least, p_text
-from .roi import flip_interval, fold_interval, jackknife_interval, per_person
+from .roi import fold_interval, jackknife_interval, per_person, small_sample_factor
+
+Floats = npt.NDArray[np.floating]
 
 INTERVALS = ("flips", "jackknife", "folds")
 
@@ -40,30 +46,37 @@ def cross_fitted_result(
     names : (roi, plan, search region)
     n_flips, seed : int
     interval : {"flips", "jackknife", "folds"}
+        "flips" takes the quantile of |t| over the exchanges; "folds" is for one sample only.
     progress : callable, optional
     """
     if interval not in INTERVALS:
         raise InputError(
             "unknown interval", expected=f"one of {', '.join(INTERVALS)}", got=repr(interval)
         )
+    procedure = ready.procedure
+    if interval == "folds" and procedure.model is not None:
+        raise InputError(
+            "no interval by folds for groups and scores",
+            expected='interval = "flips" or "jackknife"',
+            got=repr(interval),
+        )
     outcome = ready.outcome()
     test = ready.flip_test(n_flips, seed, progress)
     people = ready.per_person(outcome.values)
     if interval == "flips":
-        made = flip_interval(people, test.abs_t_quantile)
+        made = ready.exchange_interval(people, test.abs_t_quantile)
     elif interval == "folds":
         made = fold_interval(people, len(ready.folds))
     else:
         made = jackknife_interval(outcome.estimate, ready.without_each_person())
     roi, plan, search = names
-    procedure = ready.procedure
+    words = _words(procedure.model, ready.people)
     kind = (
-        f"whole-procedure sign flip, all {test.n_flips} flips"
+        f"whole-procedure {words.exchange}, all {test.n_flips} {words.many}"
         if test.exact
-        else f"whole-procedure sign flip, {test.n_flips} random flips"
+        else f"whole-procedure {words.exchange}, {test.n_flips} random {words.many}"
     )
     sided = "greater" if procedure.tail == "positive" else "less"
-    sign = 1 if procedure.tail == "positive" else -1
     where = f"in the search region '{search}'"
     folds = len(ready.folds)
     notes = [
@@ -74,14 +87,16 @@ def cross_fitted_result(
         )
         if names
     ]
-    mean, low, high = estimate_texts(outcome.estimate, made.low, made.high)
+    told, low, high = estimate_texts(outcome.estimate, made.low, made.high)
     sentence = (
         f"{roi}: {procedure.describe()} {where}, chosen in {folds} folds "
-        f"({plan}); held-out mean {mean} "
+        f"({plan}); {words.estimate} {told} "
         f"({made.kind} 95 % interval {low} to {high}), {p_text(test.p)} "
-        f"({kind}, one-sided: {sided}). Null: {FLIP_NULL} '{search}'; a rejection says that there "
-        f"is a replicable effect somewhere {where}, not at any one voxel.{''.join(notes)}"
+        f"({kind}, one-sided: {sided}). Null: {words.null} '{search}'; a rejection says that there "
+        f"is {words.found} somewhere {where}, not at any one voxel.{''.join(notes)}"
     )
+    dz, g = _effect_sizes(ready, people, outcome)
+    influence = ready.without_each_value(people) - outcome.estimate
     result = RoiResult(
         roi=roi,
         plan=plan,
@@ -89,15 +104,15 @@ def cross_fitted_result(
         search=search,
         n_subjects=len(ready.people),
         estimate=outcome.estimate,
-        target="mean true effect over the fold masks actually used",
+        target=words.target,
         biased=False,
         interval=made,
         t=test.t,
         p=test.p,
         p_kind=kind,
         sided=sided,
-        null=FLIP_NULL,
-        dz=sign * test.t / float(np.sqrt(len(people))) if np.isfinite(test.t) and test.t else None,
+        null=words.null,
+        dz=dz,
         n_flips=test.n_flips,
         p_error=None if test.exact else float(np.sqrt(test.p * (1 - test.p) / test.n_flips)),
         n_folds=folds,
@@ -108,9 +123,97 @@ def cross_fitted_result(
         noise_dice=known(test.noise_dice),
         mask_sizes=outcome.sizes,
         coverage=least(outcome.coverage),
+        g=g,
+        influence=tuple(zip(ready.people, influence.tolist(), strict=True)),
+        most_influential=ready.people[int(np.argmax(np.abs(influence)))],
+        n_cells=words.n_cells,
         sentence=sentence,
     )
     return result, outcome, test
+
+
+@dataclass(frozen=True)
+class _Words:
+    """How a model is spoken of."""
+
+    exchange: str
+    many: str
+    estimate: str
+    target: str
+    null: str
+    found: str
+    n_cells: tuple[tuple[str, int], ...] = ()
+
+
+def _words(model: Model | None, people: Sequence[str]) -> _Words:
+    """What is exchanged, estimated and rejected, for one sample, two groups or a score."""
+    over = "over the fold masks actually used"
+    if model is None:
+        return _Words(
+            "sign flip",
+            "flips",
+            "held-out mean",
+            f"mean true effect {over}",
+            FLIP_NULL,
+            "a replicable effect",
+        )
+    null, exchanged, adjusted = "", "", ""
+    if model.covariates:
+        given = ", ".join(name for name, _ in model.covariates)
+        null = (
+            f"given {given} (linear effects, whose residuals are exchangeable: Freedman & Lane "
+            "1983), "
+        )
+        exchanged, adjusted = f" of residuals given {given}", f", adjusted for {given}"
+    if isinstance(model, Groups):
+        cells = tuple(zip((model.first, model.second), model.counts(people), strict=True))
+        first, second = (f"{group} (n = {n})" for group, n in cells)
+        return _Words(
+            f"exchange{exchanged or ' of group labels'}",
+            "exchanges",
+            f"held-out mean of {first} minus that of {second}{adjusted}",
+            f"{model.first} minus {model.second}: difference of the groups' mean true effects "
+            f"{over}{adjusted}",
+            f"{null}the maps are exchangeable over the subjects with respect to the group: those "
+            f"of {model.first} and {model.second} have one joint distribution over the search "
+            "region",
+            f"a difference between {model.first} and {model.second} (of their means, if their "
+            "maps differ in nothing else)",
+            cells,
+        )
+    return _Words(
+        f"exchange{exchanged or ' of scores'}",
+        "exchanges",
+        f"correlation of held-out values with {model.name}{adjusted}, r =",
+        f"correlation of {model.name} with the true effect {over}{adjusted}",
+        f"{null}the maps are exchangeable over the subjects with respect to {model.name}: the "
+        "score is independent of the maps over the search region",
+        f"an effect that goes with {model.name}",
+    )
+
+
+def _effect_sizes(
+    ready: Prepared, people: Floats, outcome: Outcome
+) -> tuple[float | None, float | None]:
+    """dz and g of one sample, g of two groups, none of a correlation, which is one itself."""
+    model = ready.procedure.model
+    if model is None:
+        if not (np.isfinite(outcome.t) and outcome.t):
+            return None, None
+        sign = 1 if ready.procedure.tail == "positive" else -1
+        dz = sign * outcome.t / float(np.sqrt(len(people)))
+        return dz, dz * small_sample_factor(len(people) - 1)
+    if not isinstance(model, Groups):
+        return None, None
+    group = dict(model.of)
+    first = np.array([group[person] == model.first for person in ready.people])
+    df = len(people) - 2
+    pooled = sum(
+        float(np.square(part - part.mean()).sum()) for part in (people[first], people[~first])
+    )
+    if not pooled:
+        return None, None
+    return None, outcome.estimate / float(np.sqrt(pooled / df)) * small_sample_factor(df)
 
 
 def held_out_result(

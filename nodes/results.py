@@ -42,6 +42,15 @@ class RoiResult:
         Features in each mask.
     coverage : float or None
         Least share of a mask in which its subject has data; empty masks do not count.
+    g : float or None
+        dz with Hedges' small-sample factor; of two groups, their difference over the pooled
+        standard deviation, with the factor.
+    influence : tuple of (label, float)
+        Per subject: the estimate without that subject's value, minus the estimate.
+    most_influential : str
+        The subject whose influence is largest in size.
+    n_cells : tuple of (group, int)
+        Subjects per group.
     sentence : str
         For the text of a paper.
     """
@@ -71,6 +80,10 @@ class RoiResult:
     noise_dice: float | None = None
     mask_sizes: tuple[int, ...] = ()
     coverage: float | None = None
+    g: float | None = None
+    influence: tuple[tuple[str, float], ...] = ()
+    most_influential: str = ""
+    n_cells: tuple[tuple[str, int], ...] = ()
     sentence: str = ""
 
     def as_dict(self) -> dict[str, object]:

@@ -16,7 +16,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy import ndimage, stats
-from sequester.nodes import groupmaps
+from sequester.nodes import foldstack, groupmaps, signed
 from sequester.nodes import procedure as procedure_module
 from sequester.nodes.errors import EmptyFoldError, InputError
 from sequester.nodes.flips import all_signs, random_signs
@@ -541,11 +541,12 @@ def test_neither_blocks_nor_batches_change_a_bit(monkeypatch, kind, rule):
     signs = random_signs(9, ready.people, 0, 45)
     expected = ready.flips(signs)
     for at_once in (1, 7, 1000):
-        monkeypatch.setattr(procedure_module, "_FLIPS_AT_ONCE", at_once)
+        monkeypatch.setattr(procedure_module, "_AT_ONCE", at_once)
         for one, other in zip(ready.flips(signs), expected, strict=True):
             assert one.tobytes() == other.tobytes()
     for block in (1, 13):
-        monkeypatch.setattr(procedure_module, "_BLOCK", block)
+        for module in (foldstack, signed):
+            monkeypatch.setattr(module, "BLOCK", block)
         monkeypatch.setattr(groupmaps, "_BLOCK", block)
         for one, other in zip(made.prepare(RULES[rule]).flips(signs), expected, strict=True):
             assert one.tobytes() == other.tobytes()

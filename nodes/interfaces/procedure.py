@@ -69,6 +69,9 @@ def _per_row(settings: Any) -> list[tuple[int, ...]]:
     return [of_row[row] for row in sorted(of_row)]
 
 
+# scores_from: scores and groups of a procedure's model are literal settings, which touch no data
+# unit. Scores that come from a file of the study would be an input of their own, and a touch of
+# every row but those held out.
 _rule = partial(
     all_but_held_out,
     "in_files",
@@ -199,12 +202,14 @@ class _FlipInput(_ProcedureInput):
 
 class _FlipOutput(TraitedSpec):
     record_file = File(exists=True, desc="the result, as JSON")
+    flips_file = File(exists=True, desc="float64 .npy: the statistic as observed, then each flip's")
 
 
 class FlipTest(SequesterInterface):
-    """The whole-procedure sign-flip test, with estimate, interval and stability.
+    """The whole-procedure exchange test, with estimate, interval and stability.
 
-    Valid for cross-fitted values: each flip chooses every fold's region again.
+    Signs are flipped, or with a model the scores exchanged. Valid for cross-fitted values: each
+    exchange chooses every fold's region again.
     """
 
     input_spec = _FlipInput
@@ -214,7 +219,7 @@ class FlipTest(SequesterInterface):
     def _work(self, cwd: Path) -> dict[str, Any]:
         ready, _, _ = _prepared(self.inputs)
         roi = self.inputs.names[0]
-        result, outcome, _ = cross_fitted_result(
+        result, outcome, test = cross_fitted_result(
             ready,
             self.inputs.names,
             self.inputs.n_flips,
@@ -227,4 +232,9 @@ class FlipTest(SequesterInterface):
                 f"{roi}: the extracted values are not those of the procedure that is tested; "
                 "the masks, the maps and the test must come from one procedure"
             )
-        return {"record_file": write_json(cwd / "result.json", result.as_dict())}
+        flips = cwd / "flips.npy"
+        np.save(flips, np.array([test.t, *test.statistics]))
+        return {
+            "record_file": write_json(cwd / "result.json", result.as_dict()),
+            "flips_file": str(flips),
+        }

@@ -1,0 +1,169 @@
+"""A stack of effects with its folds, made ready to be summed again and again under weights.
+
+A map of any fold is a function of sums over its selection side, and what an exchange changes is
+one weight per row: a sign, or a score. `FoldStack` holds the rows once and gives the folds'
+sums in float64 (from both ends, so that held-out rows never enter), the sums over all rows in
+float32 (for a screen), and how far the two can be apart.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+
+import numpy as np
+import numpy.typing as npt
+
+from .folds import Fold
+from .groupmaps import Missing, fold_sums, rows_with_data, without_each
+
+Floats = npt.NDArray[np.floating]
+Ints = npt.NDArray[np.integer]
+Bools = npt.NDArray[np.bool_]
+
+BLOCK = 8192
+# Small enough for a BLAS to stay on one thread and in its cache: the product is soon done, and
+# waiting for other threads is what would take long.
+_SCREEN_BLOCK = 1024
+
+
+class FoldStack:
+    """A stack of effects and its folds.
+
+    Parameters
+    ----------
+    x : (n_rows, n_features) float
+        Zero where data is missing; high in the direction of selection.
+    present : (n_rows, n_features) bool, or None for everywhere
+    folds : sequence of Fold
+        Their held-out rows partition the rows.
+    missing : Missing
+
+    Examples
+    --------
+    >>> from sequester.nodes.folds import LeaveOneOut
+    >>> x = np.array([[1.0, 4.0], [2.0, 5.0], [4.0, 6.0]])
+    >>> stack = FoldStack(x, None, LeaveOneOut().folds(list("abc")), Missing())
+    >>> stack.sums(np.array([1.0, 1.0, -1.0]), slice(None)).tolist()
+    [[-2.0, -1.0], [-3.0, -2.0], [3.0, 9.0]]
+    """
+
+    def __init__(
+        self, x: Floats, present: Bools | None, folds: Sequence[Fold], missing: Missing
+    ) -> None:
+        self.x, self.present, self.folds, self.missing = x, present, folds, missing
+        self.n_rows, self.n_features = x.shape
+        self._single: Floats | None = None
+        self._by_feature: Floats | None = None
+
+    @property
+    def turned(self) -> bool:
+        """Whether the stack was made ready for many exchanges (see `turn`)."""
+        return self._by_feature is not None
+
+    def turn(self) -> None:
+        """Make the stack ready for many exchanges; later calls do nothing."""
+        if self._by_feature is None:
+            with np.errstate(over="ignore"):
+                self._single = self.x.astype(np.float32, copy=False)
+            self._by_feature = np.ascontiguousarray(self.x.T)
+
+    def pieces(self) -> list[slice]:
+        """The features in blocks."""
+        return [
+            slice(start, min(start + BLOCK, self.n_features))
+            for start in range(0, self.n_features, BLOCK)
+        ]
+
+    def columns(self, features: Ints | slice) -> Floats:
+        """(n_rows, n_some_features) of the stack."""
+        if self._by_feature is None or isinstance(features, slice):
+            return self.x[:, features]
+        # Gathered by feature: whole cache lines.
+        return np.take(self._by_feature, features, axis=0).T
+
+    def there(self, features: Ints | slice) -> Bools | None:
+        """(n_rows, n_some_features) where there is data, or None for everywhere."""
+        return None if self.present is None else self.present[:, features]
+
+    def rows(self, features: Ints | slice) -> Floats:
+        """(n_folds, n_some_features or 1): rows of each fold's selection side with data."""
+        return rows_with_data(self.there(features), self.folds)
+
+    def least(self, kind: str = "t") -> Ints:
+        """(n_folds, 1): how many rows of each fold's selection side must have data."""
+        return np.array([[self.missing.least(len(fold.selection), kind)] for fold in self.folds])
+
+    def sums(self, weights: Floats, features: Ints | slice) -> Floats:
+        """(n_folds, n_some_features) weighted sums over each fold's selection side."""
+        x = self.columns(features)
+        with np.errstate(over="ignore", invalid="ignore"):
+            weighted = np.multiply(x, weights[:, None], order="C")
+            return without_each(fold_sums(weighted, self.folds))
+
+    def squares(self, features: Ints | slice) -> Floats:
+        """(n_folds, n_some_features) sums of squares over each fold's selection side."""
+        with np.errstate(over="ignore", invalid="ignore"):
+            return without_each(fold_sums(self.columns(features), self.folds, square=True))
+
+    def most_off(self, block: slice) -> tuple[Floats, Floats, Bools]:
+        """How far fold sums and the float32 sum over all rows can be apart, for weights of +-1.
+
+        Returns
+        -------
+        reach : (n_folds, n_features)
+            The most that leaving out a fold can change the sum.
+        slack : (n_features,)
+            Rounding and underflow of a float32 sum, generously.
+        known : (n_features,) bool
+            False where float32 may overflow, and no bound holds.
+        """
+        single = np.finfo(np.float32)
+        size = np.abs(self.x[:, block].astype(np.float64))
+        with np.errstate(over="ignore", invalid="ignore"):
+            reach = fold_sums(size, self.folds)
+            total = size.sum(axis=0)
+            slack = 4 * (len(size) + 2) * (single.eps * total + single.tiny)
+            return reach, slack, total < single.max / 2
+
+    def all_sums(self, weights: Floats) -> Iterator[tuple[slice, Floats]]:
+        """Blocks of features with their (n_exchanges, n_features) float32 sums over all rows.
+
+        Parameters
+        ----------
+        weights : (n_exchanges, n_rows)
+        """
+        self.turn()
+        assert self._single is not None
+        yield from blocked_products(weights.astype(np.float32), self._single)
+
+
+def blocked_products(weights: Floats, rows: Floats) -> Iterator[tuple[slice, Floats]]:
+    """Blocks of features with weights @ rows there; both float32."""
+    for start in range(0, rows.shape[1], _SCREEN_BLOCK):
+        block = slice(start, start + _SCREEN_BLOCK)
+        with np.errstate(over="ignore", invalid="ignore"):
+            yield block, weights @ rows[:, block]
+
+
+def by_exchange(products: Iterator[tuple[slice, Floats]], lowest: Floats, n: int) -> list[Ints]:
+    """For each of n exchanges the features, ascending, whose product is not below the lowest.
+
+    Parameters
+    ----------
+    products : blocks of features with their (n, n_features) products
+    lowest : (n_features,) float32
+        NaN keeps a feature in.
+    n : int
+    """
+    exchanges, features = [], []
+    for block, sums in products:
+        # Negated, so that what is not a number stays in.
+        may = ~(sums <= lowest[block])
+        exchange, feature = np.divmod(np.flatnonzero(may), may.shape[1])
+        exchanges.append(exchange)
+        features.append(feature + block.start)
+    of_exchange = np.concatenate(exchanges)
+    # Blocks come in order, so a stable sort by exchange leaves the features ascending.
+    order = np.argsort(of_exchange, kind="stable")
+    ends = np.cumsum(np.bincount(of_exchange, minlength=n))
+    return np.split(np.concatenate(features)[order], ends[:-1])

@@ -1,0 +1,207 @@
+"""The folds' one-sample maps under signs of the rows, and a screen for those that matter.
+
+How a flip is fast. The sums of squares of a fold do not change when signs are flipped, so the
+bound that the fold's sum must exceed is computed once. A flip is one float32 matrix product
+for the sums over all rows, one comparison of each feature with a bound that is low enough for
+every fold and every rounding, and float64 work on the few features left: there the folds' own
+sums are formed as `groupmaps.without_each` forms them, without the held-out rows, and decide.
+A rule that ranks features has no such bound beforehand. The folds' exact maps at some features
+that look strong give one for this flip: what does not reach the k-th value of these is not
+among the k strongest.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from .foldstack import BLOCK, FoldStack, by_exchange
+from .groupmaps import bound_on_sum, leave_out_maps
+
+Floats = npt.NDArray[np.floating]
+Ints = npt.NDArray[np.integer]
+Bools = npt.NDArray[np.bool_]
+
+# Relative rounding of a few float32 operations, generously.
+_SINGLE = 1e-5
+
+
+@dataclass(frozen=True)
+class _Bounds:
+    """What makes flips of a threshold fast.
+
+    Parameters
+    ----------
+    each : (n_features, n_folds) float64
+        What each fold's sum must exceed.
+    lowest : (n_features,) float32
+        What the sum over all rows must exceed for any fold to pass; NaN where unknown.
+    """
+
+    each: Floats
+    lowest: Floats
+
+
+@dataclass(frozen=True)
+class _Ranks:
+    """What makes flips of a rank fast: no fold can give a feature more than sum x scale + reach.
+
+    Here the sum is that over all rows, in float32, and what a fold gives is S / sqrt(n Q), which
+    is t / sqrt(n - 1 + t^2), or the mean, according to the map.
+
+    Parameters
+    ----------
+    scale, reach : (n_features,) float32
+        Reach is NaN where unknown; both are 0 where no fold's map can be above 0.
+    most : float
+        The most degrees of freedom of any fold; infinite for the mean.
+    """
+
+    scale: Floats
+    reach: Floats
+    most: float
+
+    def least(self, value: float) -> float:
+        """The least of sum x scale + reach with which a map can reach a value above 0."""
+        reached = value if np.isinf(self.most) else value / np.sqrt(self.most + value * value)
+        return float(reached * (1 - _SINGLE))
+
+
+class SignedMaps:
+    """One-sample maps of every fold, under signs; see `choosing.FoldMaps`.
+
+    Parameters
+    ----------
+    stack : FoldStack
+    critical : callable, optional
+        The value t must exceed, for numbers of rows with data; for rules with a threshold.
+    """
+
+    def __init__(self, stack: FoldStack, critical: Callable[[Floats], Floats] | None) -> None:
+        self.stack = stack
+        self._critical = critical
+        self._bounds: _Bounds | None = None
+        self._ranks: dict[str, _Ranks] = {}
+
+    def counts(self, kind: str) -> Ints:
+        """(n_folds,) features with a value in each fold's map; no signs change it."""
+        found = np.zeros(len(self.stack.folds), dtype=np.intp)
+        for block in self.stack.pieces():
+            found += np.count_nonzero(self._usable(block, kind)[0], axis=1)
+        return found
+
+    def _usable(self, block: slice, kind: str) -> tuple[Bools, Floats]:
+        """(n_folds, n_features) whether enough rows have data, and how many have."""
+        n = self.stack.rows(block)
+        n = np.broadcast_to(n, (len(n), block.stop - block.start))
+        return n >= self.stack.least(kind), n
+
+    def _bound_of(self, features: Ints | slice) -> Floats:
+        """(n_folds, n_features) what each fold's sum must exceed; no signs change it."""
+        assert self._critical is not None
+        n = self.stack.rows(features)
+        with np.errstate(over="ignore", invalid="ignore"):
+            Q = self.stack.squares(features)
+            bound = bound_on_sum(self._critical(n), n, Q)
+        # A feature of zeros alone never passes; nor one where too few rows have data.
+        bound[(Q == 0) | np.isnan(bound) | (n < self.stack.least())] = np.inf
+        return bound
+
+    def _thresholds(self) -> _Bounds:
+        """What makes flips of a threshold fast, built when the first flip asks for it."""
+        if self._bounds is None:
+            each = np.empty((self.stack.n_features, len(self.stack.folds)))
+            lowest = np.empty(len(each), np.float32)
+            for block in self.stack.pieces():
+                bound = self._bound_of(block)
+                reach, slack, known = self.stack.most_off(block)
+                with np.errstate(over="ignore", invalid="ignore"):
+                    # NaN keeps a feature in.
+                    lowest[block] = np.where(known, (bound - reach).min(axis=0) - slack, np.nan)
+                each[block] = bound.T
+            self._bounds = _Bounds(each, lowest)
+        return self._bounds
+
+    def _ranking(self, kind: str) -> _Ranks:
+        """What makes flips of a rank fast, built when the first flip asks for it."""
+        if kind not in self._ranks:
+            scale, reach = np.empty((2, self.stack.n_features), np.float32)
+            for block in self.stack.pieces():
+                enough, n = self._usable(block, kind)
+                off, slack, known = self.stack.most_off(block)
+                with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
+                    width = np.sqrt(n * self.stack.squares(block)) if kind == "t" else n
+                    by = 1 / np.where(enough, width, np.inf).min(axis=0)
+                    far = (off.max(axis=0) + slack) * by * (1 + _SINGLE)
+                    known &= np.isfinite(by.astype(np.float32)) & np.isfinite(far)
+                    far[~known] = np.nan
+                nothing = ~enough.any(axis=0) | (off == 0).all(axis=0)
+                scale[block] = np.where(known & ~nothing, by, 0)
+                reach[block] = np.where(nothing, 0, far)
+            most = max(len(fold.selection) for fold in self.stack.folds) - 1
+            self._ranks[kind] = _Ranks(scale, reach, most if kind == "t" else np.inf)
+        return self._ranks[kind]
+
+    def may_pass(self, signs: Floats) -> list[Ints]:
+        """For each row of signs, the features that may be above the threshold in some fold."""
+        lowest = self._thresholds().lowest
+        return by_exchange(self.stack.all_sums(signs), lowest, len(signs))
+
+    def may_lead(self, signs: Floats, k: int, kind: str) -> list[Ints]:
+        """For each row of signs, the features that may be among the k strongest of some fold."""
+        n_features = self.stack.n_features
+        everything: Ints = np.arange(n_features)
+        looked_at = 2 * k + 50
+        if 2 * looked_at > n_features:
+            return [everything] * len(signs)
+        ranks, scores = self._ranking(kind), np.empty((len(signs), n_features), np.float32)
+        with np.errstate(over="ignore", invalid="ignore"):
+            for block, sums in self.stack.all_sums(signs):
+                np.multiply(sums, ranks.scale[block], out=scores[:, block])
+        found: list[Ints] = []
+        for row, score in zip(signs, scores, strict=True):
+            strong = np.sort(np.argpartition(score, -looked_at)[-looked_at:])
+            value = least_leader(self.maps(row, strong, kind), k)
+            if 0 < value < np.inf:
+                # Negated, so that what is not a number stays in.
+                found.append(np.flatnonzero(~(score + ranks.reach < ranks.least(value))))
+            else:
+                found.append(everything)
+        return found
+
+    def above(self, signs: Floats, features: Ints | slice) -> Bools:
+        """(n_some_features, n_folds) whether t exceeds the critical value."""
+        if self._bounds is None or isinstance(features, slice):
+            bounds = self._bound_of(features).T
+        else:
+            bounds = np.take(self._bounds.each, features, axis=0)
+        above: Bools = bounds < self.stack.sums(signs, features).T
+        return above
+
+    def maps(self, signs: Floats, features: Ints, kind: str) -> Floats:
+        """(n_folds, n_some_features) the folds' maps; NaN where too few rows have data."""
+        maps = np.empty((len(self.stack.folds), len(features)))
+        for start in range(0, len(features), BLOCK):
+            some = features[start : start + BLOCK]
+            x = self.stack.columns(some) * signs[:, None]
+            there = self.stack.there(some)
+            if there is not None:
+                x[~there] = np.nan
+            missing = self.stack.missing
+            maps[:, start : start + BLOCK] = leave_out_maps(x, self.stack.folds, missing, kind)
+        return maps
+
+
+def least_leader(maps: Floats, k: int) -> float:
+    """The least over folds of the k-th highest value of some features; NaN counts as lowest.
+
+    Examples
+    --------
+    >>> least_leader(np.array([[1.0, 5.0, 3.0], [4.0, np.nan, 2.0]]), 2)
+    2.0
+    """
+    maps[np.isnan(maps)] = -np.inf
+    return float(np.partition(maps, -k, axis=1)[:, -k].min())
