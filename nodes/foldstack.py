@@ -20,7 +20,9 @@ Floats = npt.NDArray[np.floating]
 Ints = npt.NDArray[np.integer]
 Bools = npt.NDArray[np.bool_]
 
-BLOCK = 8192
+# Features a block: enough to hide the cost of a call, and fewer when the numbers of many rows
+# would not fit a cache.
+BLOCK, _SMALL_BLOCK, _BLOCK_NUMBERS = 8192, 1024, 2**19
 # Small enough for a BLAS to stay on one thread and in its cache: the product is soon done, and
 # waiting for other threads is what would take long.
 _SCREEN_BLOCK = 1024
@@ -52,6 +54,7 @@ class FoldStack:
     ) -> None:
         self.x, self.present, self.folds, self.missing = x, present, folds, missing
         self.n_rows, self.n_features = x.shape
+        self._least: dict[str, Ints] = {}
         self._single: Floats | None = None
         self._by_feature: Floats | None = None
 
@@ -69,9 +72,10 @@ class FoldStack:
 
     def pieces(self) -> list[slice]:
         """The features in blocks."""
+        size = min(BLOCK, max(_SMALL_BLOCK, _BLOCK_NUMBERS // self.n_rows))
         return [
-            slice(start, min(start + BLOCK, self.n_features))
-            for start in range(0, self.n_features, BLOCK)
+            slice(start, min(start + size, self.n_features))
+            for start in range(0, self.n_features, size)
         ]
 
     def columns(self, features: Ints | slice) -> Floats:
@@ -83,7 +87,9 @@ class FoldStack:
 
     def there(self, features: Ints | slice) -> Bools | None:
         """(n_rows, n_some_features) where there is data, or None for everywhere."""
-        return None if self.present is None else self.present[:, features]
+        present = None if self.present is None else self.present[:, features]
+        # One missing value anywhere must not make all features slow.
+        return None if present is None or present.all() else present
 
     def rows(self, features: Ints | slice) -> Floats:
         """(n_folds, n_some_features or 1): rows of each fold's selection side with data."""
@@ -91,7 +97,10 @@ class FoldStack:
 
     def least(self, kind: str = "t") -> Ints:
         """(n_folds, 1): how many rows of each fold's selection side must have data."""
-        return np.array([[self.missing.least(len(fold.selection), kind)] for fold in self.folds])
+        if kind not in self._least:
+            sizes = [len(fold.selection) for fold in self.folds]
+            self._least[kind] = np.array([[self.missing.least(n, kind)] for n in sizes])
+        return self._least[kind]
 
     def sums(self, weights: Floats, features: Ints | slice) -> Floats:
         """(n_folds, n_some_features) weighted sums over each fold's selection side."""

@@ -24,7 +24,7 @@ from .exchange import FlipTest, tested_by
 from .foldnull import mean_dice
 from .folds import LeaveOneOut, Scheme
 from .foldstack import FoldStack
-from .groupmaps import Missing, filled
+from .groupmaps import Missing
 from .masks import Cluster, MaskRule, Threshold
 from .models import Model, compared
 from .roi import Interval, block_values
@@ -32,6 +32,7 @@ from .space import Space
 
 Floats = npt.NDArray[np.floating]
 Ints = npt.NDArray[np.integer]
+Bools = npt.NDArray[np.bool_]
 
 ON_EMPTY = ("empty", "strongest", "stop")
 TAILS = ("positive", "negative")
@@ -167,7 +168,8 @@ class Procedure:
             The maps that are read and tested, when they are not those that choose (another
             contrast of the same rows, held out and exchanged together with it).
         copy : bool
-            Without a copy the stack must not change afterwards; it saves the memory of one.
+            Without a copy the stack is taken over, and may be changed; it saves the memory of
+            one.
         """
         return Prepared(self, effects, labels, space, names, tested, copy=copy)
 
@@ -219,7 +221,7 @@ class Prepared:
         self._sign = -1.0 if procedure.tail == "negative" else 1.0
 
         def ready(stack: Floats) -> FoldStack:
-            x, present = filled(_sorted(stack, self._order, copy), procedure.missing)
+            x, present = _taken(_sorted(stack, self._order, copy), procedure.missing)
             return FoldStack(-x if self._sign < 0 else x, present, folds, procedure.missing)
 
         if tested is not None and tested.shape != effects.shape:
@@ -474,6 +476,19 @@ class Prepared:
         if stack.present is not None:
             x[~stack.present[back]] = np.nan
         return x
+
+
+def _taken(stack: Floats, missing: Missing) -> tuple[Floats, Bools | None]:
+    """As `groupmaps.filled`, in place, row by row: a large study has no room for another."""
+    present = None
+    for row, effects in enumerate(stack):
+        has_data = missing.present(effects)
+        if not has_data.all():
+            if present is None:
+                present = np.ones(stack.shape, bool)
+            present[row] = has_data
+            effects[~has_data] = 0
+    return stack, present
 
 
 def _sorted(stack: Floats, order: Ints, copy: bool) -> Floats:

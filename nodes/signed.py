@@ -19,7 +19,7 @@ import numpy as np
 import numpy.typing as npt
 
 from .foldstack import BLOCK, FoldStack, by_exchange
-from .groupmaps import bound_on_sum, leave_out_maps
+from .groupmaps import bound_on_sum, fold_sums, leave_out_maps
 
 Floats = npt.NDArray[np.floating]
 Ints = npt.NDArray[np.integer]
@@ -27,6 +27,8 @@ Bools = npt.NDArray[np.bool_]
 
 # Relative rounding of a few float32 operations, generously.
 _SINGLE = 1e-5
+# The same of a float64 sum over rows.
+_DOUBLE = 1e-9
 
 
 @dataclass(frozen=True)
@@ -172,9 +174,34 @@ class SignedMaps:
                 found.append(everything)
         return found
 
+    def _may_pass_in(self, signs: Floats, block: slice) -> Ints:
+        """The features of a block that may be above the threshold, by the sums of all rows.
+
+        S_-k <= S - min s_k and Q_-k >= Q - max q_k, with s_k and q_k the folds' own sums.
+        """
+        assert self._critical is not None
+        stack, features = self.stack, np.arange(block.start, block.stop)
+        if stack.there(block) is not None:
+            return features
+        x, n = stack.x[:, block], stack.rows(block)
+        with np.errstate(over="ignore", invalid="ignore"):
+            least = bound_on_sum(self._critical(n), n, np.ones_like(n)).min()
+            parts = fold_sums(np.multiply(x, signs[:, None], order="C"), stack.folds)
+            squares = fold_sums(x, stack.folds, square=True)
+            Q = squares.sum(axis=0)
+            highest = parts.sum(axis=0) - parts.min(axis=0) + _DOUBLE * np.sqrt(len(x) * Q)
+            lowest = np.sqrt(np.maximum(Q * (1 - _DOUBLE) - squares.max(axis=0), 0))
+            # Negated, so that what is not a number stays in.
+            return features[~(highest <= least * lowest)]
+
     def above(self, signs: Floats, features: Ints | slice) -> Bools:
         """(n_some_features, n_folds) whether t exceeds the critical value."""
-        if self._bounds is None or isinstance(features, slice):
+        if isinstance(features, slice):
+            may = self._may_pass_in(signs, features)
+            out = np.zeros((features.stop - features.start, len(self.stack.folds)), bool)
+            out[may - features.start] = self._bound_of(may).T < self.stack.sums(signs, may).T
+            return out
+        if self._bounds is None:
             bounds = self._bound_of(features).T
         else:
             bounds = np.take(self._bounds.each, features, axis=0)

@@ -7,6 +7,7 @@ and ``feature_size`` (mm3 or mm2 per feature).
 
 from __future__ import annotations
 
+from functools import cached_property
 from typing import Any, Protocol
 
 import numpy as np
@@ -98,9 +99,16 @@ class Grid:
 
     def filled(self, values: npt.NDArray[Any]) -> npt.NDArray[Any]:
         """A volume holding one value per feature, zero elsewhere."""
-        volume = np.zeros(int(np.prod(self.shape)), dtype=values.dtype)
-        volume[self.voxels] = values
-        return volume.reshape(self.shape)
+        # x fastest, as files hold it, so that writing it needs no turning.
+        volume = np.zeros(self.shape, values.dtype, order="F")
+        volume.ravel(order="K")[self._places] = values
+        return volume
+
+    @cached_property
+    def _places(self) -> Ints:
+        """(n_features,) where the features lie when x is fastest."""
+        where = np.unravel_index(self.voxels, self.shape)
+        return np.ravel_multi_index(where, self.shape, order="F")
 
 
 def offsets(connectivity: int) -> npt.NDArray[np.int64]:
