@@ -211,8 +211,9 @@ class TwoGroups(Exchanged):
             b - error * quantile,
             b + error * quantile,
             "approximate",
-            "Welch's standard error x the 95 % quantile of |t| over whole-procedure exchanges; "
-            "two-sided, so it may include 0 when the one-sided p < .05",
+            "Welch's standard error x the 95 % quantile of |t| over whole-procedure exchanges that "
+            "find a region (at least Student's); two-sided, so it may include 0 when the one-sided "
+            "p < .05",
         )
 
     def _fit(self, values: Floats, exchange: Ints) -> tuple[float, float]:
@@ -262,7 +263,8 @@ class OneScore(Exchanged):
             float(np.tanh(low)),
             float(np.tanh(high)),
             "approximate",
-            "atanh r +- the 95 % quantile of |atanh r| over whole-procedure exchanges; "
+            "atanh r +- the 95 % quantile of |atanh r| over whole-procedure exchanges that find "
+            "a region (at least Student's); "
             "two-sided, so it may include 0 when the one-sided p < .05",
         )
 

@@ -24,7 +24,7 @@ class FlipTest:
     n_flips, n_at_least : int
         Exchanges made, and those whose statistic reaches the observed one.
     abs_t_quantile : float
-        95 % quantile of |t| over the exchanges.
+        95 % quantile of |t| over the exchanges in which a fold found a region; 0 if none did.
     noise_dice : float
         Mean over exchanges of the mean pairwise Dice of the fold masks: what noise alone gives.
     noise_empty : float
@@ -101,6 +101,8 @@ def tested_by(
 ) -> FlipTest:
     """The record of a test from the statistic, mean Dice and empty folds under each exchange."""
     usable = overlap[~np.isnan(overlap)]
+    # An exchange in which nothing is found has t = 0: it says nothing of how far t varies.
+    found = np.abs(t[t != 0])
     return FlipTest(
         t=observed,
         p=exchange_p(observed, t, exact=exact),
@@ -108,7 +110,7 @@ def tested_by(
         n_flips=len(t),
         n_at_least=count_at_least(observed, t),
         # "higher" takes one of the values, and so needs no arithmetic with infinities.
-        abs_t_quantile=float(np.quantile(np.abs(t), 0.95, method="higher")),
+        abs_t_quantile=float(np.quantile(found, 0.95, method="higher")) if len(found) else 0.0,
         noise_dice=float(usable.mean()) if len(usable) else float("nan"),
         noise_empty=float(n_empty.mean()),
         statistics=tuple(t.tolist()),

@@ -12,6 +12,7 @@ from typing import Any
 
 import numpy as np
 import numpy.typing as npt
+from scipy import stats
 
 from .errors import InputError
 from .exchange import FlipTest
@@ -46,7 +47,8 @@ def cross_fitted_result(
     names : (roi, plan, search region)
     n_flips, seed : int
     interval : {"flips", "jackknife", "folds"}
-        "flips" takes the quantile of |t| over the exchanges; "folds" is for one sample only.
+        "flips" takes the quantile of |t| over the exchanges in which a fold found a region, and
+        at least that of Student's t; "folds" is for one sample only.
     progress : callable, optional
     """
     if interval not in INTERVALS:
@@ -64,7 +66,9 @@ def cross_fitted_result(
     test = ready.flip_test(n_flips, seed, progress)
     people = ready.per_person(outcome.values)
     if interval == "flips":
-        made = ready.exchange_interval(people, test.abs_t_quantile)
+        # Never narrower than the ordinary interval: where exchanges find little, few are left.
+        least_t = student(len(people) - 1 - (procedure.model is not None))
+        made = ready.exchange_interval(people, max(test.abs_t_quantile, least_t))
     elif interval == "folds":
         made = fold_interval(people, len(ready.folds))
     else:
@@ -130,6 +134,11 @@ def cross_fitted_result(
         sentence=sentence,
     )
     return result, outcome, test
+
+
+def student(df: int, level: float = 0.95) -> float:
+    """The two-sided quantile of Student's t."""
+    return float(stats.t.ppf((1 + level) / 2, df))
 
 
 @dataclass(frozen=True)

@@ -107,12 +107,12 @@ def estimate_texts(estimate: float, low: float, high: float) -> tuple[str, str, 
 
     Examples
     --------
-    >>> estimate_texts(1.23607, 0.78208, 1.69006)
-    ('1.24', '0.78', '1.69')
+    >>> estimate_texts(1.23607, 0.78208, 1.69006), estimate_texts(0.24, -0.001, 0.48)
+    (('1.24', '0.78', '1.69'), ('0.24', '0.00', '0.48'))
     """
     half = (high - low) / 2
     digits = max(0, 1 - int(np.floor(np.log10(half)))) if np.isfinite(half) and half > 0 else 3
-    return f"{estimate:.{digits}f}", f"{low:.{digits}f}", f"{high:.{digits}f}"
+    return f"{estimate:z.{digits}f}", f"{low:z.{digits}f}", f"{high:z.{digits}f}"
 
 
 def exploratory_result(
@@ -179,6 +179,7 @@ def of_t(test: TTest, names: tuple[str, str, str], n: int, **more: Any) -> RoiRe
         p=test.p,
         sided="two-sided",
         dz=test.dz,
+        g=test.g,
         **more,
     )
 

@@ -352,8 +352,9 @@ def flip_interval(values: Floats, abs_t_quantile: float, level: float = 0.95) ->
         mean - half,
         mean + half,
         "approximate",
-        f"standard error x the {level:.0%} quantile of |t| over whole-procedure sign flips; "
-        "two-sided, so it may include 0 when the one-sided p < .05",
+        f"standard error x the {level:.0%} quantile of |t| over whole-procedure sign flips that "
+        "find a region (at least Student's); two-sided, so it may include 0 when the one-sided "
+        "p < .05",
     )
 
 

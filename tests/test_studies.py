@@ -22,7 +22,7 @@ SHAPE, LABELS = (8, 8, 6), {1: "Arbor", 2: "Brook", 3: "Cinder"}
 SUBJECTS = [f"{i:02d}" for i in range(1, 7)]
 HEAD = '[study]\nname = "garden"\ntable = "table.tsv"\nseed = 3\n[data]\n'
 COLUMNS = ("path", "sub", "ses", "task", "run", "suffix", "contrast", "exclude_reason", "group",
-           "variance")  # fmt: skip
+           "variance", "age")  # fmt: skip
 
 
 def affine(shift: float = 0.0, flip: bool = False) -> np.ndarray:
@@ -60,7 +60,14 @@ def plant(root: Path, *, own_grids: bool = False) -> Path:
                     spread = 0.5 + rng.random(SHAPE)
                     save(root / f"{stem}_variance.nii.gz", spread.astype(np.float32), grid)
                     row = [f"{stem}_effect.nii.gz", sub, ses, task, run, "bold", "glow", "n/a"]
-                    rows.append([*row, "hill" if i < 3 else "pond", f"{stem}_variance.nii.gz"])
+                    rows.append(
+                        [
+                            *row,
+                            "hill" if i < 3 else "pond",
+                            f"{stem}_variance.nii.gz",
+                            str(30 + i * i),
+                        ]
+                    )
     lines = ["\t".join(COLUMNS), *("\t".join(row) for row in rows)]
     (root / "table.tsv").write_text("\n".join(lines) + "\n")
     x = coordinates(affine())[..., 0]
@@ -558,3 +565,63 @@ def test_a_difference_of_exactly_nothing_is_data(garden, tmp_path):
     }
     assert values(output, "Ball") == pytest.approx(expected, abs=1e-6)
     assert {row["coverage"] for row in table(output / "roi_values.tsv")} == {"1.0"}
+
+
+# -- groups and scores ----------------------------------------------------------------------
+
+COMPARED = FOLDS.replace("9", "99") + 'rule = { kind = "strongest", k = 8 }\n'
+GROUPS = 'compare = { column = "group", first = "hill", second = "pond" }\n'
+
+
+def test_groups_are_exchanged_through_the_whole_procedure(garden):
+    text = HERE + roi("Hill", "leave-one-subject-out", COMPARED + GROUPS)
+    output = ran(garden, text, "groups")
+    (test,) = table(output / "roi_tests.tsv")
+    found = values(output, "Hill")
+    hill = [found[sub] for sub in SUBJECTS[:3]]
+    pond = [found[sub] for sub in SUBJECTS[3:]]
+    assert float(test["estimate"]) == pytest.approx(np.mean(hill) - np.mean(pond))
+    assert test["n_flips"] == "20", "all ways to call three of six subjects hill"
+    assert float(test["p"]) * 20 == pytest.approx(round(float(test["p"]) * 20))
+    assert test["n_cells"] == "hill 3, pond 3"
+    assert "exchangeable over the subjects with respect to the group" in test["null"]
+
+
+def test_score_with_its_ceiling(garden):
+    text = COMPARED + 'score = "age"\nreliability = { values = 0.8, score = 0.7 }\n'
+    output = ran(garden, HERE + roi("Aged", "leave-one-subject-out", text), "score")
+    (test,) = table(output / "roi_tests.tsv")
+    found, ages = values(output, "Aged"), [30 + i * i for i in range(6)]
+    r = np.corrcoef([found[sub] for sub in SUBJECTS], ages)[0, 1]
+    assert float(test["estimate"]) == pytest.approx(r)
+    # Spearman 1904: sqrt(.8 x .7); Vul et al. 2009 print .74.
+    assert float(test["ceiling"]) == pytest.approx(0.7483315, abs=1e-7)
+    rows = [r for r in table(output / "roi_values.tsv") if r["roi"] == "Aged"]
+    influence = {row["sub"]: float(row["influence"]) for row in rows}
+    without = {
+        sub: np.corrcoef(
+            [found[s] for s in SUBJECTS if s != sub],
+            [age for s, age in zip(SUBJECTS, ages, strict=True) if s != sub],
+        )[0, 1]
+        for sub in SUBJECTS
+    }
+    assert influence == pytest.approx({sub: without[sub] - r for sub in SUBJECTS})
+    assert test["most_influential"] == max(influence, key=lambda sub: abs(influence[sub]))
+
+
+@pytest.mark.parametrize(
+    ("text", "told"),
+    [
+        ('score = "group"\n', "has no number in column 'group'"),
+        ('score = "height"\n', "unknown column 'height'"),
+        (GROUPS + 'score = "age"\n', "do not go together"),
+        ('covariates = ["age"]\n', "do not go together"),
+        (GROUPS.replace("pond", "lake"), "lake"),
+        ("reliability = { values = 0.8, score = 0.7 }\n", "reliability without a score"),
+        ('score = "age"\nreliability = { values = 8, score = 0.7 }\n', "reliability out of range"),
+    ],
+)
+def test_comparison_that_does_not_do(garden, text, told):
+    with pytest.raises(InputError, match=told):
+        study = HERE + roi("Hill", "leave-one-subject-out", COMPARED + text)
+        check_study(read_settings(write(garden, study, "no")))

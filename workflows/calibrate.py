@@ -8,15 +8,20 @@ their order, nor a stop on the way changes a byte.
 
 from __future__ import annotations
 
+import contextlib
 import functools
 import hashlib
 import math
+import multiprocessing
+import os
+import threading
 import time
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Generator, Iterator, Sequence
 from concurrent.futures import ProcessPoolExecutor
 from concurrent.futures.process import BrokenProcessPool
 from dataclasses import dataclass
 from importlib.metadata import version
+from multiprocessing import connection
 from pathlib import Path
 from typing import Any
 
@@ -425,9 +430,11 @@ def _simulate(
     for row, done in zip(rows, kept, strict=True):
         todo = done.lacking(asked.sets)
         n_before = asked.sets - len(todo)
-        for i, (number, found) in enumerate(_each(row, seed, todo, asked.processes), 1):
-            done.add(number, found)
-            progress.tell(f"{row.name}: data sets", n_before + i, asked.sets)
+        # Closed also when interrupted here, so that no process goes on with the rest.
+        with contextlib.closing(_each(row, seed, todo, asked.processes)) as made:
+            for i, (number, found) in enumerate(made, 1):
+                done.add(number, found)
+                progress.tell(f"{row.name}: data sets", n_before + i, asked.sets)
 
 
 def _one(row: _Row, seed: int, number: int) -> Found:
@@ -437,7 +444,7 @@ def _one(row: _Row, seed: int, number: int) -> Found:
 
 def _each(
     row: _Row, seed: int, numbers: Sequence[int], processes: int
-) -> Iterator[tuple[int, Found]]:
+) -> Generator[tuple[int, Found], None, None]:
     """Data sets by number, in as many processes as there is work for."""
     processes = min(processes, len(numbers))
     if processes < 2:
@@ -460,7 +467,16 @@ _in_this_process: dict[str, Callable[[int], Found]] = {}
 
 
 def _begin(row: _Row, seed: int) -> None:
+    threading.Thread(target=_end_with_parent, daemon=True).start()
     _in_this_process["draw"] = functools.partial(_one, row, seed)
+
+
+def _end_with_parent() -> None:
+    """End this process when the one that started it is killed: nobody else would."""
+    parent = multiprocessing.parent_process()
+    assert parent is not None, "a worker has a parent"
+    connection.wait([parent.sentinel])
+    os._exit(1)
 
 
 def _in_worker(number: int) -> Found:

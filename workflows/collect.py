@@ -13,7 +13,7 @@ from ..nodes.errors import InputError
 from ..nodes.images import geometry_of, open_image, read_mask
 from ..nodes.interfaces.base import read_json
 from ..nodes.results import exploratory_result
-from ..nodes.roi import holm
+from ..nodes.roi import holm, per_person
 from .ancestry import node_name
 from .build import tested_rows
 from .plans import A_PRIORI, CROSS_FITTED, LEAVE_ONE_OUT, LOCALIZER, OTHER_RUNS
@@ -211,7 +211,7 @@ def _record(roi: Roi, mine: dict[str, Any]) -> dict[str, Any]:
     assert roi.procedure is not None, "only the exploratory plan goes without a test"
     read = mine["extract"].result.outputs
     return exploratory_result(
-        read.values,
+        per_person(read.values, roi.tested.people),
         roi.names,
         roi.procedure.describe(),
         read.sizes[0],

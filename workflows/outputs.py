@@ -22,6 +22,7 @@ from filelock import FileLock, Timeout
 from ..nodes.errors import InputError
 from ..nodes.images import write_bytes
 from ..nodes.interfaces.base import write_json
+from ..nodes.reliability import ceiling, ceiling_sentence
 from .collect import RoiOutput
 from .digests import digest
 from .judge import Finding
@@ -45,6 +46,7 @@ VALUE_COLUMNS = {
     "mask_voxels": "Voxels in that mask.",
     "mask_mm3": "Volume of that mask in mm3.",
     "coverage": "Share of the mask in which the subject has data.",
+    "influence": "Estimate without this subject's value, minus the estimate (folded plans).",
     "biased": "true when the mask was chosen on this subject's data (exploratory).",
 }
 TEST_COLUMNS = {
@@ -62,7 +64,8 @@ TEST_COLUMNS = {
     "subjects (regions of their own).",
     "search": "The search region that the null hypothesis covers.",
     "n_subjects": "Independent subjects tested: rows that share an exchange value are one.",
-    "estimate": "Mean of the values.",
+    "estimate": "Mean of the values; of compare, the difference of the groups' means; of score, "
+    "the correlation of values and scores.",
     "target": "What the estimate estimates.",
     "biased": "true for exploratory values: no interval, no p, no error bar.",
     "interval_low": "Lower end of the 95 % interval.",
@@ -78,6 +81,11 @@ TEST_COLUMNS = {
     "sided": "greater, less or two-sided.",
     "null": "The null hypothesis.",
     "dz": "Mean of the values over their standard deviation.",
+    "g": "Standardised effect with Hedges' factor for small samples: of the mean, or of a "
+    "difference of two groups.",
+    "most_influential": "The subject without whose value the estimate changes most.",
+    "n_cells": "Subjects per group that is compared.",
+    "ceiling": "Largest correlation that the stated reliabilities allow (Spearman 1904).",
     "n_flips": "Sign flips made.",
     "n_folds": "Folds.",
     "n_empty": "Folds in which the rule found nothing and the value counts as 0.",
@@ -278,6 +286,8 @@ def _sidecar(path: Path, content: dict[str, Any]) -> None:
 def _value_rows(outputs: Sequence[RoiOutput]) -> Iterator[dict[str, Any]]:
     for output in outputs:
         biased = output.records[0]["biased"]
+        influence = dict(output.records[0].get("influence") or ())
+        people = {sub: rows[0].person for sub, rows in output.roi.tested.subjects}
         for value in output.values:
             yield {
                 "roi": output.roi.name,
@@ -290,6 +300,7 @@ def _value_rows(outputs: Sequence[RoiOutput]) -> Iterator[dict[str, Any]]:
                 "mask_voxels": value.size,
                 "mask_mm3": value.mm3,
                 "coverage": value.coverage,
+                "influence": influence.get(people[value.sub]),
                 "biased": biased,
             }
 
@@ -407,10 +418,14 @@ def _test_rows(
                 "chosen_on": _cells(roi.choosing.subjects) if roi.choosing else None,
                 "rule": _rule(roi, record),
                 "value": roi.summary,
+                "n_cells": ", ".join(f"{name} {n}" for name, n in record.get("n_cells") or ()),
+                "ceiling": None if roi.reliability is None else ceiling(*roi.reliability),
                 "null_value": settings.maps.null_value,
                 "scale": "percent of baseline" if roi.tested.baseline else "effect maps",
                 "claim": _claim(roi),
-                "sentence": " ".join([record["sentence"], *_about(roi, settings)]),
+                "sentence": " ".join(
+                    [record["sentence"], *_about(roi, settings, record["estimate"])]
+                ),
                 "interval_low": interval.get("low"),
                 "interval_high": interval.get("high"),
                 "interval_kind": interval.get("kind"),
@@ -436,7 +451,7 @@ def _claim(roi: Roi) -> str:
     return "single subjects" if roi.own_masks or roi.own_region else "population"
 
 
-def _about(roi: Roi, settings: Settings) -> Iterator[str]:
+def _about(roi: Roi, settings: Settings, estimate: float) -> Iterator[str]:
     """What a value is, where it is not the plain mean of the effect maps; and what chose."""
     told = [f"Tested maps: {_cells(roi.tested.subjects)}."]
     if roi.own_masks or roi.group_mask:
@@ -458,6 +473,8 @@ def _about(roi: Roi, settings: Settings) -> Iterator[str]:
         chose = _cells(roi.choosing.subjects)
         told.append(f"Regions were chosen on {chose}, held out and flipped together.")
     yield from told
+    if roi.reliability is not None:
+        yield ceiling_sentence(estimate, ceiling(*roi.reliability))
 
 
 def _cells(subjects: Subjects) -> str:

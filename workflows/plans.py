@@ -349,7 +349,8 @@ def localizer(
     )
     if group_mask:
         choose, masks, regions = node(ChooseMask(), "choose", **rule), "mask_file", "search_file"
-        group = node(GroupMap(), "group", mem_gb, missing=procedure.missing)
+        kind = procedure.rule.map_kind
+        group = node(GroupMap(), "group", mem_gb, missing=procedure.missing, kind=kind)
         workflow.connect(
             [
                 (start, group, [("choosing", "in_files")]),

@@ -17,6 +17,7 @@ from ..nodes.folds import Given, Halves, KFold, LeaveOneOut, Scheme
 from ..nodes.groupmaps import Missing
 from ..nodes.heldout import INTERVALS
 from ..nodes.masks import Cluster, MaskRule, PeakSphere, Strongest, Threshold
+from ..nodes.models import Groups, Model, Score
 from ..nodes.orthogonality import Certificate
 from ..nodes.procedure import ON_EMPTY, TAILS, Procedure
 from ..nodes.roi import SUMMARIES
@@ -84,6 +85,7 @@ _RULES = {
 
 _CHOOSING = {"search", "rule", "tail", "on_empty", "k"}
 _FOLDED = _CHOOSING | {"flips", "interval", "choose_on"}
+_FOLDED |= {"compare", "score", "covariates", "reliability"}
 # The keys of each plan, beside those of every [[roi]].
 _PLAN_KEYS = {
     LEAVE_ONE_OUT: _FOLDED,
@@ -124,6 +126,8 @@ class Roi:
         The declared claim is about the tested subjects only.
     certificate : Certificate or None
         Of an orthogonal contrast.
+    reliability : (float, float) or None
+        Of the held-out values and of the score, as stated: for the ceiling of a correlation.
     variant_of : str
         The region whose rule it varies, declared beforehand; "" for a region of its own.
     setting : tuple of (key, value)
@@ -144,6 +148,7 @@ class Roi:
     group_mask: bool = False
     these_subjects: bool = False
     certificate: Certificate | None = None
+    reliability: tuple[float, float] | None = None
     variant_of: str = ""
     setting: tuple[tuple[str, Any], ...] = ()
 
@@ -431,11 +436,13 @@ class _Roi:
         for leaf in region.leaves():
             _in_table(read, leaf.derived_from, self.study)
         of_folds = plan in (K_FOLD, SPLIT_HALF, GIVEN_FOLDS)
+        of_folds = of_folds and not table.keys() & {"compare", "score"}
         intervals = INTERVALS if of_folds else tuple(i for i in INTERVALS if i != "folds")
         procedure = None if plan == A_PRIORI else self._procedure(summary)
         interval = read.one_of(table, "interval", intervals, "folds" if of_folds else "flips")
         if procedure is not None and plan in CROSS_FITTED:
             self._check_folds(procedure.scheme, interval)
+            self._check_model(procedure.model)
         return Roi(
             self.name,
             plan,
@@ -452,6 +459,7 @@ class _Roi:
             read.one_of(table, "claim", ("population", THESE_SUBJECTS), "population")
             == THESE_SUBJECTS,
             self._certificate(),
+            self._reliability(),
         )
 
     def _summary(self) -> str:
@@ -594,10 +602,92 @@ class _Roi:
                 k=read.get(table, "k", int, 0),
                 missing=self.maps.marked,
                 summary=summary,
+                model=self._model(),
             )
         except InputError as error:
             # The numerics know no file; here is where it was asked for.
             raise error.at(f"{read.where('rule')}, roi {self.name}") from error
+
+    def _model(self) -> Model | None:
+        """What is compared: two groups, or the values of a score; None for one sample."""
+        read, table = self.read, self.table
+        groups = read.get(table, "compare", dict, None)
+        column = read.get(table, "score", str, "")
+        covariates = tuple(
+            (name, self._numbers(str(name), "covariates"))
+            for name in read.get(table, "covariates", list, [])
+        )
+        if (groups is not None) + bool(column) > 1 or (covariates and not (groups or column)):
+            raise InputError(
+                "compare, score and covariates do not go together like this",
+                where=read.where("covariates" if covariates else "compare"),
+                expected="compare or score, one of them, and covariates with either",
+            )
+        if "reliability" in table and not column:
+            raise InputError(
+                "reliability without a score", where=read.where("reliability"), expected="score"
+            )
+        if groups is not None:
+            read.known(groups, {"column", "first", "second"}, "compare")
+            name = read.get(groups, "column", str, ..., of="compare")
+            first, second = (
+                read.get(groups, key, str, ..., of="compare") for key in ("first", "second")
+            )
+            return Groups(self._of_people(name, "column"), first, second, covariates)
+        return Score(self._numbers(column, "score"), covariates, column) if column else None
+
+    def _check_model(self, model: Model | None) -> None:
+        """Refuse groups and scores that the people of the study do not have."""
+        if model is None:
+            return
+        people = self.tested.people
+        if len(set(people)) < len(people):
+            raise InputError(
+                "compare and score need one map per independent subject",
+                where=self.read.where("compare" if isinstance(model, Groups) else "score"),
+                expected="no exchange value that several subjects share",
+                got=f"{len(people)} subjects, {len(set(people))} of them independent",
+            )
+        try:
+            model.comparison(sorted(people))
+        except InputError as error:
+            key = "compare" if isinstance(model, Groups) else "score"
+            raise error.at(self.read.where(key)) from error
+
+    def _numbers(self, column: str, key: str) -> tuple[tuple[str, float], ...]:
+        """Each person's number in a column."""
+        found = []
+        for person, cell in self._of_people(column, key):
+            try:
+                value = float(cell)
+            except ValueError:
+                value = math.nan
+            if not math.isfinite(value):
+                raise InputError(
+                    f"{person} has no number in column {column!r}",
+                    where=self.read.where(key),
+                    expected="a finite number for every subject",
+                    got=repr(cell) if cell else "an empty cell",
+                    remedy="fill it, or leave the subject out with an exclude_reason",
+                )
+            found.append((person, value))
+        return tuple(found)
+
+    def _reliability(self) -> tuple[float, float] | None:
+        """The stated reliabilities of the held-out values and of the score."""
+        stated = self.read.get(self.table, "reliability", dict, None)
+        if stated is None:
+            return None
+        self.read.known(stated, {"values", "score"}, "reliability")
+        one, other = (self.read.number(stated, key, ...) for key in ("values", "score"))
+        if not (-1 <= one <= 1 and -1 <= other <= 1):
+            raise InputError(
+                "reliability out of range",
+                where=self.read.where("reliability"),
+                expected="-1 to 1",
+                got=f"{one:g} and {other:g}",
+            )
+        return one, other
 
     def _rule(self, table: dict[str, Any]) -> MaskRule:
         read = self.read
@@ -655,8 +745,10 @@ class _Roi:
     def _per_person(self, key: str) -> tuple[tuple[str, str], ...]:
         """Each person's value in the column that a key names; nothing when it is absent."""
         column = self.read.get(self.table, key, str, "")
-        if not column:
-            return ()
+        return self._of_people(column, key) if column else ()
+
+    def _of_people(self, column: str, key: str) -> tuple[tuple[str, str], ...]:
+        """Each person's value in a column."""
         if column not in self.study.columns:
             raise InputError(
                 f"unknown column {column!r}",

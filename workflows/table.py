@@ -201,7 +201,9 @@ def with_participants(rows: list[Row], path: Path) -> list[Row]:
         cells = {
             k: "" if v.strip() in BLANK else v.strip() for k, v in of_sub[row.unit.sub].items()
         }
-        own = {k: v for k, v in cells.items() if k in ("exclude_reason", "exchange")}
+        own: dict[str, Any] = {
+            k: v for k, v in cells.items() if k in ("exclude_reason", "exchange")
+        }
         extra = tuple((k, v) for k, v in cells.items() if k not in (*own, "participant_id"))
         made.append(replace(row, **own, extra=(*row.extra, *extra)))
     return made
