@@ -136,6 +136,17 @@ def table(number: int) -> Callable[[Path, int], str]:
     return write
 
 
+def flipped(number: int) -> Callable[[Path, int], str]:
+    """The values of five people as observed and under seven flips."""
+
+    def write(folder: Path, variant: int) -> str:
+        path = folder / f"flipped{number}-{variant}.npy"
+        np.save(path, np.random.default_rng(1000 * variant + number).normal(1, 1, (8, 5)))
+        return str(path)
+
+    return write
+
+
 def value(*variants: Any) -> Callable[[Path, int], Any]:
     return lambda _folder, variant: variants[variant]
 
@@ -144,6 +155,7 @@ def maps(n: int = 5) -> list[Any]:
     return [image(noise, i) for i in range(n)]
 
 
+RECORD = "a record"  # stands for a file with one, made where a case is built
 PROCEDURES = (Procedure(Threshold(p=0.05)), Procedure(Strongest(3)))
 GROUPS = Groups(
     tuple(zip(PEOPLE, ("hill", "pond", "hill", "pond", "hill"), strict=True)), "hill", "pond"
@@ -349,13 +361,18 @@ CASES = {
         interfaces.FlipTest,
         {"in_files": maps()},
         {"n_flips": (19, 7), "seed": (0, 1), "interval": ("flips", "jackknife")},
-        {"labels": list(PEOPLE), "procedure": PROCEDURES[0], "names": NAMES},
+        {"labels": list(PEOPLE), "procedure": PROCEDURES[0], "names": NAMES, "keep_values": True},
     ),
     "FlipTest of a score": Case(
         interfaces.FlipTest,
         {"in_files": maps()},
         {"n_flips": (19, 7), "seed": (0, 1)},
-        {"labels": list(PEOPLE), "procedure": Procedure(Strongest(3), model=SCORE), "names": NAMES},
+        {
+            "labels": list(PEOPLE),
+            "procedure": Procedure(Strongest(3), model=SCORE),
+            "names": NAMES,
+            "keep_values": True,
+        },
     ),
     "FlipTest on other maps": Case(
         interfaces.FlipTest,
@@ -365,6 +382,41 @@ CASES = {
             "procedure": PROCEDURES[0],
             "names": NAMES,
             "n_flips": 19,
+            "keep_values": True,
+        },
+    ),
+    "CompareHeldOut": Case(
+        interfaces.CompareHeldOut,
+        {"values_files": [flipped(i) for i in range(2)]},
+        {"kind": ("difference", "anova")},
+        {"record_files": [RECORD, RECORD], "names": ["Arbor", "Brook"]},
+    ),
+    "CompareFixed": Case(
+        interfaces.CompareFixed,
+        {"values": [[value(0.5 + i * i + 2 * k, 9.0 + i) for i in range(4)] for k in range(2)]},
+        {"kind": ("difference", "anova")},
+        {"labels": list("abcd"), "row_labels": [list("abcd")] * 2, "names": ["Arbor", "Brook"]},
+    ),
+    "CompareFixed, whether alike": Case(
+        interfaces.CompareFixed,
+        {"values": [[value(0.5 + i * i, 9.0 + i) for i in range(4)]]},
+        {"smallest": (1.0, 2.0)},
+        {
+            "kind": "equivalence",
+            "labels": list("abcd"),
+            "row_labels": [list("abcd")],
+            "names": ["Arbor"],
+        },
+    ),
+    "CompareFixed in two ways": Case(
+        interfaces.CompareFixed,
+        {"values": [[value(i * k + i + k + 0.5, 9.0 + i * i) for i in range(4)] for k in range(4)]},
+        {"factors": ([["a", "b"], ["c", "d"]], [["a", "b"], ["c", "e"]])},
+        {
+            "kind": "interaction",
+            "labels": list("abcd"),
+            "row_labels": [list("abcd")] * 4,
+            "names": ["Arbor", "Brook", "Cinder", "Dell"],
         },
     ),
     "FixedRegionTest": Case(
@@ -428,6 +480,9 @@ def built(case: Case, folder: Path, changed: tuple[Any, ...] = ()) -> dict[str, 
     made = {name: at(item, (name,)) for name, item in case.data.items()}
     made |= {name: both[int((name,) == changed)] for name, both in case.choices.items()}
     made |= case.fixed
+    if "record_files" in made:
+        (folder / "record.json").write_text('{"p_error": 0.1}')
+        made["record_files"] = [str(folder / "record.json")] * len(made["record_files"])
     if case.interface is interfaces.FlipTest:  # it insists on the values of its own procedure
         made["values"] = held_out_values(made, folder)
     return made

@@ -18,6 +18,8 @@ from sequester.nodes.folds import KFold, LeaveOneOut, Scheme
 from sequester.nodes.interfaces import (
     ChooseByFold,
     ChooseMask,
+    CompareFixed,
+    CompareHeldOut,
     Extract,
     FamilyTest,
     FixedRegionTest,
@@ -398,6 +400,8 @@ def statistics() -> list[type]:
 
 def statistic(kind: type, study: Study, labels: Sequence[str]) -> Node:
     inputs: dict[str, Any] = {"names": NAMES}
+    if kind in (CompareFixed, CompareHeldOut):
+        inputs["names"] = list(NAMES[:2])
     if kind is FlipTest:
         inputs |= {
             "procedure": Procedure(Strongest(1)),
@@ -443,7 +447,14 @@ def of_statistic(graph: Workflow, study: Study) -> Finding:
 
 class TestStatistics:
     def test_these_are_the_kinds(self):
-        assert set(statistics()) == {FamilyTest, FixedRegionTest, FlipTest, HeldOutSummary}
+        assert set(statistics()) == {
+            CompareFixed,
+            CompareHeldOut,
+            FamilyTest,
+            FixedRegionTest,
+            FlipTest,
+            HeldOutSummary,
+        }
 
     @pytest.mark.parametrize("scheme", [LeaveOneOut(), KFold(2)])
     def test_a_t_test_of_cross_fitted_values_is_refused(self, scheme: Scheme, study: Study):

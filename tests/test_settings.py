@@ -149,7 +149,7 @@ def test_selection_of_rows(study):
         ("roi = []\n" + HEAD, "no [[roi]] (STUDY): state at least one"),
         ("roi = [1]\n" + HEAD, "roi"),
         ("origin = [1]\n" + HEAD + FOUND, "origin"),
-        (HEAD + FOUND + "\n[rio]\n", "unknown key 'rio' (STUDY, line 10): expected one of data, "),
+        (HEAD + FOUND + "\n[rio]\n", "unknown key 'rio' (STUDY, line 10): expected one of comparison, da"),
         (
             HEAD + 'seed = "3"\n' + FOUND,
             "seed has the wrong type (STUDY, line 4): expected a whole number, without quotes, ",
@@ -187,7 +187,7 @@ def test_selection_of_rows(study):
         ),
         (
             HEAD + FOUND.replace("p = 0.01", "p = 0.01, height = 3"),
-            "a threshold needs exactly one of height and p",
+            "a threshold needs exactly one of height, p and control",
         ),
         (HEAD + FOUND.replace("0.01", "0.6"), "p out of range"),
         (HEAD + FOUND.replace("p = 0.01", "hight = 3"), "unknown key 'hight' in rule (STUDY, line"),

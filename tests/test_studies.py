@@ -13,6 +13,7 @@ from pathlib import Path
 import nibabel as nib
 import numpy as np
 import pytest
+from scipy import stats
 from sequester import read_settings, run_study
 from sequester.nodes.errors import InputError
 from sequester.workflows.guard import GuardRefused
@@ -625,3 +626,70 @@ def test_comparison_that_does_not_do(garden, text, told):
     with pytest.raises(InputError, match=told):
         study = HERE + roi("Hill", "leave-one-subject-out", COMPARED + text)
         check_study(read_settings(write(garden, study, "no")))
+
+
+# -- comparisons of regions -----------------------------------------------------------------
+
+TWO = "".join(
+    roi(name, "leave-one-subject-out", COMPARED.replace("ball", name.lower())) for name in "AB"
+)
+DIFFER = '[[comparison]]\nname = "Differ"\nkind = "difference"\nrois = ["A", "B"]\n'
+
+
+@pytest.fixture(scope="module")
+def halves(garden):
+    """The ball's two sides as search regions."""
+    x = coordinates(affine())[..., 0]
+    for name, side in (("a", x < 0), ("b", x > 0)):
+        save(garden / f"{name}.nii.gz", (ball(garden) & side).astype(np.uint8), affine())
+    return garden
+
+
+def test_difference_of_two_folded_regions_is_flipped_together(halves):
+    output = ran(halves, HERE + TWO + DIFFER, "differ")
+    (row,) = table(output / "comparisons.tsv")
+    a, b = (values(output, name) for name in "AB")
+    difference = [a[sub] - b[sub] for sub in SUBJECTS]
+    assert float(row["estimate"]) == pytest.approx(np.mean(difference))
+    t = np.mean(difference) / (np.std(difference, ddof=1) / np.sqrt(6))
+    assert float(row["statistic"]) == pytest.approx(t)
+    assert row["df"] == "n/a", "p is by flips"
+    assert "flip" in row["p_kind"]
+
+
+def test_comparisons_of_regions_given_beforehand(halves):
+    given = "".join(roi(n, "a-priori", BALL.replace("ball", n.lower())) for n in "AB")
+    given += roi("Ball", "a-priori", BALL)
+    text = HERE + given + DIFFER
+    text += DIFFER.replace("Differ", "Alike").replace('"difference"', '"equivalence"\nsmallest = 3')
+    text += (
+        DIFFER.replace("Differ", "Any").replace("difference", "anova").replace('"B"', '"B", "Ball"')
+    )
+    output = ran(halves, text, "fixed")
+    differ, alike, anova = table(output / "comparisons.tsv")
+    a, b = (values(output, name) for name in "AB")
+    found = stats.ttest_rel([a[s] for s in SUBJECTS], [b[s] for s in SUBJECTS])
+    assert float(differ["p"]) == pytest.approx(found.pvalue)
+    assert (alike["equivalent"], float(alike["smallest"])) == ("true", 3)
+    assert 0.5 - 1e-9 <= float(anova["epsilon"]) <= 1, "two differences, or one"
+
+
+@pytest.mark.parametrize(
+    ("old", "new", "told"),
+    [
+        ('["A", "B"]', '["A", "C"]', "comparison of an unknown region 'C'.*A, B"),
+        ('["A", "B"]', '["A"]', "difference of 1 regions.*expected 2"),
+        ('"difference"', '"equivalence"', "missing key 'smallest'"),
+        ('"Differ"', '"A"', r"two \[\[comparison\]\] or \[\[roi\]\] of one name"),
+        (
+            DIFFER,
+            roi("C", "a-priori", BALL) + DIFFER.replace('"B"', '"C"'),
+            "folds and one without",
+        ),
+        (DIFFER, roi("C", "exploratory", PEAK) + DIFFER.replace('"B"', '"C"'), "no single tested"),
+    ],
+)
+def test_comparison_of_regions_that_does_not_do(halves, old, new, told):
+    text = (HERE + TWO + DIFFER).replace(old, new)
+    with pytest.raises(InputError, match=told):
+        read_settings(write(halves, text, "no"))

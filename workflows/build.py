@@ -12,6 +12,7 @@ from nipype import MapNode, Node, Workflow
 from ..nodes.images import geometry_of, open_image, read_label_table
 from ..nodes.interfaces import RegridLabels, SubjectMaps
 from ..nodes.regions import numbers_of
+from .comparisons import add_comparison
 from .plans import (
     A_PRIORI,
     EXPLORATORY,
@@ -27,8 +28,9 @@ from .plans import (
     parcels,
 )
 from .regions import Labels, Places, region_node
+from .rois import Roi
 from .selection import Selection, Subjects
-from .settings import Roi, Settings
+from .settings import Settings
 from .study import Row
 
 
@@ -59,13 +61,18 @@ def study_workflow(settings: Settings, base_dir: Path) -> Workflow:
             made[key] = subject_maps(settings, selection, name, null_value=key[1])
         return made[key]
 
+    compared = {name for one in settings.comparisons for name in one.rois}
+    plans: dict[str, Workflow] = {}
     for roi in settings.rois:
         rows = tested_rows(roi)
-        plan = _plan(roi, rows, settings)
+        plan = _plan(roi, rows, settings, keep_values=roi.name in compared)
+        plans[roi.name] = plan
         workflow.connect(maps_of(rows, tested=True), "out_files", plan, "inputnode.effects")
         if roi.choosing is not None:
             chosen = maps_of(roi.choosing, tested=False)
             workflow.connect(chosen, "out_files", plan, "inputnode.choosing")
+    for one in settings.comparisons:
+        add_comparison(workflow, one, plans, {roi.name: roi for roi in settings.rois})
     return workflow
 
 
@@ -134,7 +141,7 @@ def _places(roi: Roi, rows: Selection, settings: Settings) -> Places:
     return Places(settings.root, references, tuple(label for label, _ in first))
 
 
-def _plan(roi: Roi, rows: Selection, settings: Settings) -> Workflow:
+def _plan(roi: Roi, rows: Selection, settings: Settings, *, keep_values: bool) -> Workflow:
     name, plan, search = roi.names
     maps, people = settings.maps, rows.people
     at = _places(roi, rows, settings)
@@ -194,6 +201,7 @@ def _plan(roi: Roi, rows: Selection, settings: Settings) -> Workflow:
         roi.choosing is not None,
         least,
         stack,
+        keep_values,
     )
 
 

@@ -47,7 +47,8 @@ from ..nodes.simulated import Noise
 from .kept import Kept, kept_folder
 from .measured import Measured, measure
 from .plans import A_PRIORI, CROSS_FITTED, EXPLORATORY, LOCALIZER, ORTHOGONAL, OTHER_RUNS
-from .settings import Roi, Settings
+from .rois import Roi
+from .settings import Settings
 from .verify import verify
 
 Draw = Callable[[np.random.Generator], Found]

@@ -120,7 +120,7 @@ def run(
     result = run_study(settings, show.node, work, processes)
     show.clear()
     if not as_json:
-        print_tests(settings, result.tests, result.overlaps)
+        print_tests(settings, result.tests, result.comparisons, result.overlaps)
         click.echo(f"\nWritten to {result.output}\n{CAUTION}")
     return {"output": str(result.output), "tests": result.tests}
 

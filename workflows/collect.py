@@ -17,8 +17,9 @@ from ..nodes.roi import holm, per_person
 from .ancestry import node_name
 from .build import tested_rows
 from .plans import A_PRIORI, CROSS_FITTED, LEAVE_ONE_OUT, LOCALIZER, OTHER_RUNS
+from .rois import Roi
 from .selection import Selection
-from .settings import Roi, Settings
+from .settings import Settings
 from .study import Row
 
 
@@ -269,6 +270,15 @@ def _searched(given: Sequence[Path] | None, choose: Any) -> tuple[Path, ...]:
     found = settings.get("search_files") or settings.get("search_file")
     listed = found if isinstance(found, list) else [found] if isinstance(found, str) else []
     return tuple(map(Path, listed))
+
+
+def collect_comparisons(settings: Settings, nodes: dict[str, Any]) -> list[dict[str, Any]]:
+    """The records of the comparisons of regions, each with its name."""
+    return [
+        {"name": one.name}
+        | read_json(nodes[f"{settings.name}.{one.name}"].result.outputs.record_file)
+        for one in settings.comparisons
+    ]
 
 
 def adjust(outputs: Sequence[RoiOutput]) -> list[tuple[str, str]]:

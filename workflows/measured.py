@@ -37,9 +37,10 @@ from .collect import find_nodes
 from .guard import GuardPlugin
 from .plans import LOCALIZER, OTHER_RUNS
 from .regions import Labels, Places, mask_of, region_node
+from .rois import Roi
 from .run import engine_quiet
 from .selection import Selection
-from .settings import Roi, Settings
+from .settings import Settings
 
 Floats = npt.NDArray[np.floating]
 Ints = npt.NDArray[np.integer]

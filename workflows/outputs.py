@@ -27,8 +27,9 @@ from .collect import RoiOutput
 from .digests import digest
 from .judge import Finding
 from .plans import CROSS_FITTED, EXPLORATORY
+from .rois import Roi
 from .selection import Subjects
-from .settings import Roi, Settings
+from .settings import Settings
 from .study import CELLS, Row, Study
 
 MANIFEST = "manifest.json"
@@ -106,6 +107,27 @@ CELL_COLUMNS = {
     "n_independent": "Subjects that count as one for exchange counted once.",
     "n_maps": "Maps.",
     "n_left_out": "Maps of this cell left out; the reasons are in manifest.json.",
+}
+COMPARISON_COLUMNS = {
+    "name": "The comparison, as named in STUDY.toml; a simple effect of an interaction below it.",
+    "kind": "difference, equivalence, anova or interaction; simple effect.",
+    "regions": "The regions, in order.",
+    "what": "What is estimated.",
+    "n": "Subjects with a value in every region.",
+    "estimate": "In the units of the values; of anova, partial eta squared.",
+    "interval_low": "Lower end of the interval (95 %; of equivalence 90 %).",
+    "interval_high": "Upper end.",
+    "interval_kind": "exact or approximate.",
+    "statistic": "t; of anova, F.",
+    "df": "Degrees of freedom; n/a when p is by exchanges.",
+    "epsilon": "Of anova: Greenhouse & Geisser's.",
+    "smallest": "Of equivalence: the smallest effect of interest.",
+    "equivalent": "Of equivalence: whether the interval lies within it.",
+    "p": "p-value; of a simple effect, Holm-adjusted over the simple effects.",
+    "p_kind": "The test.",
+    "null": "The null hypothesis.",
+    "assumption": "What the test takes for granted.",
+    "sentence": "The result in a sentence.",
 }
 SENSITIVITY_COLUMNS = {
     "roi": "Region of interest.",
@@ -224,7 +246,11 @@ def _take_place(stage: Path, target: Path, old: Path) -> None:
 
 
 def write_all(
-    stage: Path, settings: Settings, outputs: Sequence[RoiOutput], findings: Sequence[Finding]
+    stage: Path,
+    settings: Settings,
+    outputs: Sequence[RoiOutput],
+    comparisons: Sequence[dict[str, Any]],
+    findings: Sequence[Finding],
 ) -> list[dict[str, Any]]:
     """Write the whole output folder; returns the rows of roi_tests.tsv.
 
@@ -234,6 +260,8 @@ def write_all(
         An empty folder.
     settings : Settings
     outputs : sequence of RoiOutput
+    comparisons : sequence of dict
+        Records of the comparisons of regions.
     findings : sequence of Finding
         The guard's verdicts.
     """
@@ -260,6 +288,8 @@ def write_all(
     _write_wide(stage / "roi_values_wide.tsv", settings, outputs)
     _table(stage / "cells.tsv", CELL_COLUMNS, _cell_rows(settings))
     tests = _test_rows(settings, outputs, findings)
+    if comparisons:
+        _table(stage / "comparisons.tsv", COMPARISON_COLUMNS, _compared_rows(comparisons))
     if variants:
         _table(stage / "sensitivity.tsv", SENSITIVITY_COLUMNS, _varied(outputs, variants))
     _table(stage / "roi_tests.tsv", TEST_COLUMNS, tests)
@@ -377,6 +407,25 @@ def _cell_rows(settings: Settings) -> Iterator[dict[str, Any]]:
                     "n_maps": len(rows),
                     "n_left_out": sum(tuple(row.cell) == cell for row in left),
                 }
+
+
+def _compared_rows(comparisons: Sequence[dict[str, Any]]) -> Iterator[dict[str, Any]]:
+    for record in comparisons:
+        yield _compared_row(record)
+        for effect in record.get("simple", []):
+            head = {"name": record["name"], "kind": "simple effect", "regions": record["regions"]}
+            yield _compared_row({**effect, **head, "p": effect["p_holm"]})
+
+
+def _compared_row(record: dict[str, Any]) -> dict[str, Any]:
+    interval, df = record.get("interval") or {}, record.get("df")
+    return {name: record.get(name) for name in COMPARISON_COLUMNS} | {
+        "regions": " ".join(record["regions"]),
+        "df": " ".join(f"{x:g}" for x in df) if isinstance(df, list) else df,
+        "interval_low": interval.get("low"),
+        "interval_high": interval.get("high"),
+        "interval_kind": interval.get("kind"),
+    }
 
 
 def _varied(

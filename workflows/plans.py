@@ -75,6 +75,7 @@ def cross_fitted(
     other_maps: bool = False,
     min_coverage: float = 0.0,
     mem_gb: float = 1.0,
+    keep_values: bool = False,
 ) -> Workflow:
     """Choose a region without each fold's subjects, read it there, test the whole procedure.
 
@@ -106,6 +107,8 @@ def cross_fitted(
         The least share of its mask in which a map must have data.
     mem_gb : float
         Needed by the nodes that hold the whole stack.
+    keep_values : bool
+        Keep everybody's values under each flip (``outputnode.values_file``), for comparisons.
 
     Returns
     -------
@@ -124,7 +127,7 @@ def cross_fitted(
     """
     workflow = Workflow(name=name)
     fields = ["effects", "choosing"] if other_maps else ["effects"]
-    given = ["mask_files", "overlap_file", "values", "record_file", "flips_file"]
+    given = ["mask_files", "overlap_file", "values", "record_file", "flips_file", "values_file"]
     start, end = _ends(workflow, given, fields)
     chooser = fields[-1]
     labels = list(labels)
@@ -153,12 +156,14 @@ def cross_fitted(
             seed=seed,
             interval=interval,
             names=names,
+            keep_values=keep_values,
         )
+        outputs = ["record_file", "flips_file", *(["values_file"] if keep_values else [])]
         workflow.connect(
             [
                 (start, flips, [(chooser, "in_files")]),
                 (extract, flips, [("values", "values")]),
-                (flips, end, [("record_file", "record_file"), ("flips_file", "flips_file")]),
+                (flips, end, [(name, name) for name in outputs]),
             ]
         )
         if other_maps:

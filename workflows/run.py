@@ -15,7 +15,7 @@ from typing import Any
 
 from ..nodes.errors import InputError
 from .build import study_workflow
-from .collect import adjust, collect, find_nodes
+from .collect import adjust, collect, collect_comparisons, find_nodes
 from .guard import GuardPlugin, Listener
 from .judge import Finding
 from .outputs import claimed, write_all
@@ -32,6 +32,8 @@ class RunResult:
     output : Path
     tests : list of dict
         The rows of roi_tests.tsv.
+    comparisons : list of dict
+        The rows of comparisons.tsv.
     findings : list of Finding
         The guard's verdicts.
     overlaps : list of (name, name)
@@ -40,6 +42,7 @@ class RunResult:
 
     output: Path
     tests: list[dict[str, Any]]
+    comparisons: list[dict[str, Any]]
     findings: list[Finding]
     overlaps: list[tuple[str, str]]
 
@@ -113,11 +116,12 @@ def run_study(
             nodes = find_nodes(graph)
             outputs = [collect(roi, settings, nodes) for roi in settings.rois]
             overlaps = adjust(outputs)
-            tests = write_all(stage, settings, outputs, guard.findings)
+            compared = collect_comparisons(settings, nodes)
+            tests = write_all(stage, settings, outputs, compared, guard.findings)
         finally:
             if work is None:
                 shutil.rmtree(engine, ignore_errors=True)
-    return RunResult(settings.output, tests, guard.findings, overlaps)
+    return RunResult(settings.output, tests, compared, guard.findings, overlaps)
 
 
 @contextmanager

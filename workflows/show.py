@@ -88,6 +88,7 @@ def print_findings(findings: Sequence[Finding]) -> None:
 def print_tests(
     settings: Settings,
     tests: Sequence[Mapping[str, Any]],
+    comparisons: Sequence[Mapping[str, Any]] = (),
     overlaps: Sequence[tuple[str, str]] = (),
 ) -> None:
     """The results of a run: a line per region, then its sentence."""
@@ -159,6 +160,8 @@ def print_tests(
                 f"\n{family[0]['roi']}: {len(family)} labels, {told} with Holm-adjusted p < .05; "
                 "all of them are in roi_tests.tsv."
             )
+    for record in comparisons:
+        click.echo("\n" + textwrap.fill(f"{record['name']}: {record['sentence']}", 96))
     varied = [roi for roi in settings.rois if roi.variant_of]
     if varied:
         click.echo(

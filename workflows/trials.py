@@ -46,9 +46,10 @@ from .guard import GuardPlugin
 from .planning import Planned, errors_of, said_errors
 from .plans import A_PRIORI, CROSS_FITTED, EXPLORATORY, LOCALIZER, ORTHOGONAL, OTHER_RUNS
 from .regions import Places, mask_of, region_node
+from .rois import Roi
 from .run import engine_quiet
 from .selection import Selection
-from .settings import Roi, Settings
+from .settings import Settings
 from .verify import verify
 
 Floats = npt.NDArray[np.floating]

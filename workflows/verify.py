@@ -23,7 +23,8 @@ from ..nodes.regions import labelled, numbers_of
 from ..nodes.space import Grid
 from .digests import digest
 from .regions import Ball, Given, Labels, MaskFile
-from .settings import Roi, Settings
+from .rois import Roi
+from .settings import Settings
 from .study import Row
 
 Named = tuple[str, Geometry]

@@ -4,6 +4,7 @@ Beside its ports, each class declares its touch rules (which input elements each
 derives from) and, where it has one, its meeting or its statistic.
 """
 
+from .comparisons import CompareFixed, CompareHeldOut
 from .foldlists import FoldLists, HeldOutSummary, MasksByRow
 from .groupmaps import GroupMap, LeaveOutMaps
 from .images import SubjectMaps
@@ -19,6 +20,8 @@ __all__ = [
     "ChooseMask",
     "ChooseWithin",
     "CombineMasks",
+    "CompareFixed",
+    "CompareHeldOut",
     "ErodeMask",
     "Extract",
     "ExtractParcels",

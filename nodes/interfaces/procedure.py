@@ -198,11 +198,15 @@ class _FlipInput(_ProcedureInput):
     names = traits.Tuple(
         traits.Str, traits.Str, traits.Str, mandatory=True, desc="roi, plan, search region"
     )
+    keep_values = traits.Bool(
+        False, usedefault=True, desc="keep everybody's values under each flip, for comparisons"
+    )
 
 
 class _FlipOutput(TraitedSpec):
     record_file = File(exists=True, desc="the result, as JSON")
     flips_file = File(exists=True, desc="float64 .npy: the statistic as observed, then each flip's")
+    values_file = File(desc="float64 .npy, (1 + flips, people), if kept: as observed, then flipped")
 
 
 class FlipTest(SequesterInterface):
@@ -234,7 +238,14 @@ class FlipTest(SequesterInterface):
             )
         flips = cwd / "flips.npy"
         np.save(flips, np.array([test.t, *test.statistics]))
-        return {
+        made = {
             "record_file": write_json(cwd / "result.json", result.as_dict()),
             "flips_file": str(flips),
         }
+        if self.inputs.keep_values:
+            exchanges, _ = ready.exchanges(self.inputs.n_flips, self.inputs.seed)
+            observed = ready.per_person(outcome.values)[None]
+            kept = cwd / "values.npy"
+            np.save(kept, np.concatenate([observed, ready.values_under(exchanges)]))
+            made["values_file"] = str(kept)
+        return made
