@@ -495,6 +495,22 @@ def test_every_plan_gives_the_same_bytes_on_both_engines_cold_and_warm(garden, t
     assert content(ran(garden, EVERY, "every", work=work)) == first, "after deleting the folder"
 
 
+def test_where_masks_lie(garden):
+    output = read_settings(write(garden, EVERY, "every")).output
+    rows = {row["mask"]: row for row in table(output / "masks.tsv")}
+    files = {p.name for p in (output / "masks").glob("*.nii.gz") if "dseg" not in p.name}
+    assert set(rows) == files
+    row = rows["label-Given_mask.nii.gz"]
+    mm = coordinates(affine())[ball(garden)]
+    assert (int(row["voxels"]), float(row["mm3"])) == (len(mm), 27.0 * len(mm))
+    centre = [float(row[f"centre_{axis}"]) for axis in "xyz"]
+    assert centre == pytest.approx(mm.mean(axis=0), abs=1e-4)
+    overlap = rows["label-Loso_desc-foldoverlap_probseg.nii.gz"]
+    share = nib.load(output / "masks" / overlap["mask"]).get_fdata()
+    top = coordinates(affine())[share == share.max()]
+    assert any(np.allclose([float(overlap[f"top_{axis}"]) for axis in "xyz"], at) for at in top)
+
+
 def test_wide_table_and_cells(garden):
     output = read_settings(write(garden, EVERY, "every")).output
     long = table(output / "roi_values.tsv")
@@ -654,6 +670,9 @@ def test_difference_of_two_folded_regions_is_flipped_together(halves):
     t = np.mean(difference) / (np.std(difference, ddof=1) / np.sqrt(6))
     assert float(row["statistic"]) == pytest.approx(t)
     assert row["df"] == "n/a", "p is by flips"
+    tests = table(output / "roi_tests.tsv")
+    for test in tests:
+        assert float(test["p"]) <= float(test["p_max"]) <= min(1, float(test["p"]) * 2 + 1e-9)
     assert "flip" in row["p_kind"]
 
 

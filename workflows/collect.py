@@ -13,7 +13,7 @@ from ..nodes.errors import InputError
 from ..nodes.images import geometry_of, open_image, read_mask
 from ..nodes.interfaces.base import read_json
 from ..nodes.results import exploratory_result
-from ..nodes.roi import holm, per_person
+from ..nodes.roi import exchange_p, holm, per_person
 from .ancestry import node_name
 from .build import tested_rows
 from .plans import A_PRIORI, CROSS_FITTED, LEAVE_ONE_OUT, LOCALIZER, OTHER_RUNS
@@ -84,6 +84,8 @@ class RoiOutput:
         Per voxel, the share of the folds that chose it.
     searched : tuple of Path
         The masks of the search region, one or one per row; empty for the whole map.
+    flips : Path or None
+        The statistic as observed, then under each exchange of the whole procedure.
     """
 
     roi: Roi
@@ -92,6 +94,7 @@ class RoiOutput:
     masks: tuple[MaskOutput, ...]
     overlap: Path | None
     searched: tuple[Path, ...]
+    flips: Path | None = None
 
 
 def find_nodes(graph: Any) -> dict[str, Any]:
@@ -128,7 +131,13 @@ def collect(roi: Roi, settings: Settings, nodes: dict[str, Any]) -> RoiOutput:
         ),
         None if overlap is None else Path(overlap),
         _searched(given if roi.plan == A_PRIORI else None, choose),
+        _flips(mine.get("test")),
     )
+
+
+def _flips(test: Any) -> Path | None:
+    found = getattr(test.result.outputs, "flips_file", None) if test is not None else None
+    return Path(found) if isinstance(found, str) else None
 
 
 def _family(roi: Roi, rows: Selection, mine: dict[str, Any], settings: Settings) -> RoiOutput:
@@ -299,10 +308,32 @@ def adjust(outputs: Sequence[RoiOutput]) -> list[tuple[str, str]]:
         for other in tested[:i]
         if not _apart(one, other)
     ]
+    _over_the_largest(tested)
     p = [output.records[0]["p"] for output in tested]
     for output, adjusted in zip(tested, [None] * len(p) if together else holm(p), strict=True):
         output.records[0]["p_holm"] = adjusted
     return [(one.roi.name, other.roi.name) for one, other in together]
+
+
+def _over_the_largest(tested: Sequence[RoiOutput]) -> None:
+    """Single-step p over the regions that were exchanged together (Westfall & Young 1993).
+
+    The largest statistic of each exchange is compared, so that overlapping search regions do not
+    matter: the chance of any false finding when none of the regions has an effect.
+    """
+    families: dict[tuple[object, ...], list[RoiOutput]] = {}
+    for output in tested:
+        if output.flips is not None:
+            roi = output.roi
+            model = None if roi.procedure is None else roi.procedure.model
+            key = (tuple(roi.tested.people), roi.n_flips, model)
+            families.setdefault(key, []).append(output)
+    for family in families.values():
+        tables = [np.load(one.flips) for one in family if one.flips is not None]
+        largest = np.max([table[1:] for table in tables], axis=0)
+        for output, table in zip(family, tables, strict=True):
+            exact = output.records[0]["p_error"] is None
+            output.records[0]["p_max"] = exchange_p(float(table[0]), largest, exact=exact)
 
 
 def _apart(one: RoiOutput, other: RoiOutput) -> bool:

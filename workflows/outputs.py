@@ -20,9 +20,10 @@ import numpy as np
 from filelock import FileLock, Timeout
 
 from ..nodes.errors import InputError
-from ..nodes.images import write_bytes
+from ..nodes.images import read_map, write_bytes
 from ..nodes.interfaces.base import write_json
 from ..nodes.reliability import ceiling, ceiling_sentence
+from ..nodes.space import Grid
 from .collect import RoiOutput
 from .digests import digest
 from .judge import Finding
@@ -78,6 +79,8 @@ TEST_COLUMNS = {
     "p_error": "Monte Carlo standard error of p; n/a when exact.",
     "p_holm": "Holm-adjusted over the tested regions (n/a when their search regions overlap), or "
     "over the labels of an atlas.",
+    "p_max": "Single-step p over all regions exchanged together: the chance of any finding as "
+    "large when none of them has an effect; search regions may overlap (folded plans).",
     "p_kind": "The test.",
     "sided": "greater, less or two-sided.",
     "null": "The null hypothesis.",
@@ -128,6 +131,21 @@ COMPARISON_COLUMNS = {
     "null": "The null hypothesis.",
     "assumption": "What the test takes for granted.",
     "sentence": "The result in a sentence.",
+}
+MASK_COLUMNS = {
+    "roi": "Region of interest.",
+    "mask": "File in masks/.",
+    "voxels": "Voxels in it; of a fold overlap, those that any fold chose.",
+    "mm3": "Their volume in mm3.",
+    **{
+        f"centre_{axis}": f"Centre of gravity, {axis} in mm (weighted, where values are weights)."
+        for axis in "xyz"
+    },
+    **{
+        f"top_{axis}": f"Voxel with the highest value, {axis} in mm (of a fold overlap: chosen most "
+        "often; the first of several)."
+        for axis in "xyz"
+    },
 }
 SENSITIVITY_COLUMNS = {
     "roi": "Region of interest.",
@@ -275,7 +293,7 @@ def write_all(
             uris = [f"bids:study:{path}" for path in mask.sources]
             _sidecar(masks / mask.name, {"Type": "ROI", "Sources": uris})
         if output.overlap is not None:
-            name = f"label-{output.roi.name}_desc-foldoverlap_probseg.nii.gz"
+            name = _overlap_name(output)
             shutil.copyfile(output.overlap, masks / name)
             _sidecar(
                 masks / name,
@@ -285,6 +303,7 @@ def write_all(
                 },
             )
     _table(stage / "roi_values.tsv", VALUE_COLUMNS, _value_rows(outputs))
+    _table(stage / "masks.tsv", MASK_COLUMNS, _mask_rows(masks, outputs))
     _write_wide(stage / "roi_values_wide.tsv", settings, outputs)
     _table(stage / "cells.tsv", CELL_COLUMNS, _cell_rows(settings))
     tests = _test_rows(settings, outputs, findings)
@@ -333,6 +352,38 @@ def _value_rows(outputs: Sequence[RoiOutput]) -> Iterator[dict[str, Any]]:
                 "influence": influence.get(people[value.sub]),
                 "biased": biased,
             }
+
+
+def _mask_rows(folder: Path, outputs: Sequence[RoiOutput]) -> Iterator[dict[str, Any]]:
+    """Where every mask lies: size, centre, and where a fold overlap is densest."""
+    for output in outputs:
+        if output.roi.each_label:
+            continue  # an image of many labels; their sizes are with the values
+        names = [mask.name for mask in output.masks]
+        names += [_overlap_name(output)] if output.overlap is not None else []
+        for name in names:
+            yield {"roi": output.roi.name, "mask": name, **_lie(folder / name)}
+
+
+def _lie(path: Path) -> dict[str, Any]:
+    """The size, the centre and the top of a mask or of weights."""
+    data, geometry = read_map(path)
+    grid = Grid(geometry.shape, geometry.affine, data > 0)
+    row: dict[str, Any] = dict.fromkeys(MASK_COLUMNS)
+    row |= {"voxels": grid.n_features, "mm3": grid.n_features * float(f"{grid.feature_size:.6g}")}
+    if grid.n_features:
+        weights, mm = data[data > 0].astype(float), grid.coordinates()
+        centre = (weights[:, None] * mm).sum(axis=0) / weights.sum()
+        plain = weights.min() == weights.max()
+        for i, axis in enumerate("xyz"):
+            row[f"centre_{axis}"] = float(f"{centre[i]:.6g}")
+            row[f"top_{axis}"] = None if plain else float(f"{mm[weights.argmax()][i]:.6g}")
+    del row["roi"], row["mask"]
+    return row
+
+
+def _overlap_name(output: RoiOutput) -> str:
+    return f"label-{output.roi.name}_desc-foldoverlap_probseg.nii.gz"
 
 
 def _write_wide(path: Path, settings: Settings, outputs: Sequence[RoiOutput]) -> None:

@@ -8,6 +8,7 @@ from collections.abc import Iterable, Iterator
 from dataclasses import dataclass, replace
 from typing import Any
 
+from ..nodes.controlled import BY_P, Controlled
 from ..nodes.errors import InputError
 from ..nodes.folds import Given, Halves, KFold, LeaveOneOut, Scheme
 from ..nodes.groupmaps import Missing
@@ -591,14 +592,17 @@ class _Roi:
         control = read.get(table, key, str, "")
         if not control:
             return None
-        one_map = self.plan in (LOCALIZER, ORTHOGONAL, EXPLORATORY)
-        if one_map and (control not in BY_P or not (self.group_mask or self.plan == EXPLORATORY)):
-            possible = ", ".join(BY_P) if self.group_mask or self.plan == EXPLORATORY else ""
+        if self.plan == LOCALIZER and not self.group_mask:
             raise InputError(
-                f"{control} does not go with the one map that {self.plan} chooses on",
+                f"{key} does not go with a localizer's own maps",
                 where=read.where(key),
-                expected=f"control = {possible.replace(', ', ' or ')}" if possible else "",
-                remedy="or a height or p" if possible else "give height",
+                expected="height, on the localizer map's own values",
+            )
+        if (self.group_mask or self.plan == EXPLORATORY) and control not in BY_P:
+            raise InputError(
+                f"{control} does not go with the one group map that {self.plan} chooses on",
+                where=read.where(key),
+                expected=f"control = {' or '.join(BY_P)}, or a height or p",
             )
         return Controlled(
             control,

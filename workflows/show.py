@@ -118,6 +118,7 @@ def print_tests(
             "dz",
             "p",
             "p Holm",
+            "p max",
             "found in",
             "Dice (noise)",
         ]
@@ -126,10 +127,10 @@ def print_tests(
         head = [_called(row), row["plan"], "nobody" if row["biased"] else row["claim"]]
         if row["biased"]:
             value = "-" if math.isnan(row["estimate"]) else f"{row['estimate']:.3g}"
-            rows.append([*head, f"{value} BIASED", *["-"] * 6])
+            rows.append([*head, f"{value} BIASED", *["-"] * 7])
             continue
         if row["p"] is None:
-            rows.append([*head, f"{row['estimate']:.3g}", *["-"] * 6])
+            rows.append([*head, f"{row['estimate']:.3g}", *["-"] * 7])
             continue
         mean, low, high = estimate_texts(row["estimate"], row["interval_low"], row["interval_high"])
         interval = f"{low} to {high} ({row['interval_kind']})"
@@ -140,7 +141,7 @@ def print_tests(
             folds = f"{found}/{row['n_folds']} {'folds' if folded else 'masks'}"
             if folded:
                 dice = f"{_two_digits(row['dice'])} ({_two_digits(row['noise_dice'])})"
-        numbers = [_two_digits(row["dz"]), p_value(row["p"]), p_value(row["p_holm"])]
+        numbers = [_two_digits(row["dz"]), *(p_value(row[k]) for k in ("p", "p_holm", "p_max"))]
         rows.append([*head, mean, interval, *numbers, folds, dice])
     print_table(rows)
     if overlaps:
