@@ -142,8 +142,8 @@ MASK_COLUMNS = {
         for axis in "xyz"
     },
     **{
-        f"top_{axis}": f"Voxel with the highest value, {axis} in mm (of a fold overlap: chosen most "
-        "often; the first of several)."
+        f"top_{axis}": f"Voxel with the highest value, {axis} in mm (of a fold overlap: chosen "
+        "most often; the first of several)."
         for axis in "xyz"
     },
 }
