@@ -3,11 +3,15 @@
 from __future__ import annotations
 
 import json
+import sys
 from pathlib import Path
 from typing import Any
 
 import hypothesis
 import pytest
+
+# Modules that several test modules share, such as worlds.py, lie beside them.
+sys.path.append(str(Path(__file__).parent))
 
 # The same examples on every machine, and no time limit on a busy one.
 hypothesis.settings.register_profile("sequester", deadline=None, derandomize=True)
