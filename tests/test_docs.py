@@ -12,14 +12,18 @@ from pathlib import Path
 import numpy as np
 import pytest
 from sequester.nodes.images import write_map
-from sequester.workflows import demo, regions, settings, study
+from sequester.workflows import comparisons, demo, plans, regions, rois, settings, study
+from sequester.workflows.guard import GuardRefused
 from sequester.workflows.outputs import (
     CELL_COLUMNS,
+    COMPARISON_COLUMNS,
+    MASK_COLUMNS,
     SENSITIVITY_COLUMNS,
     TEST_COLUMNS,
     TOUCH_COLUMNS,
     VALUE_COLUMNS,
 )
+from sequester.workflows.run import check_study
 from sequester.workflows.study import COLUMNS
 
 DOCS = Path(__file__).parent.parent / "docs"
@@ -75,7 +79,7 @@ def test_a_circular_mask_is_drawn_as_one(figures):
 
 
 def test_every_plan_has_its_page_and_every_page_is_linked():
-    assert set(settings.PLANS) | {"group-software"} == {page.stem for page in PAGES}
+    assert set(plans.PLANS) | {"group-software"} == {page.stem for page in PAGES}
     for page in PAGES:
         assert f"(plans/{page.name})" in (DOCS / "choosing.md").read_text()
         assert f"(docs/plans/{page.name})" in (DOCS.parent / "README.md").read_text()
@@ -104,6 +108,13 @@ def test_the_snippet_of_the_readme_runs_as_printed(tmp_path, monkeypatch):
     assert json.loads(record.read_text())["p"] == 1 / 1000
 
 
+def test_the_refusal_in_the_readme_is_what_the_demo_says(garden):
+    (shown,) = re.findall(r"```\n(refused .*?)```", (DOCS.parent / "README.md").read_text(), re.S)
+    with pytest.raises(GuardRefused) as refusal:
+        check_study(settings.read_settings(garden / "circular.toml"))
+    assert str(refusal.value).startswith(shown.rstrip())
+
+
 def toml_of(page: str) -> list[str]:
     """The TOML blocks of a page, the longest first."""
     text = (DOCS / page).read_text()
@@ -122,7 +133,7 @@ def two_visits(tmp_path_factory):
     write_map(folder / "parcels" / "one.nii.gz", inside, grid)
     table = "index\tname\n1\tArbor\n2\tBrook\n"
     (folder / "regions" / "garden_dseg.tsv").write_text(table)
-    lines = ["path\tsub\tses\ttask\trun\tsuffix\tcontrast\tvariance\tgroup\tsite"]
+    lines = ["path\tsub\tses\ttask\trun\tsuffix\tcontrast\tvariance\tgroup\tsite\tage\tskill"]
     number = 0
     for sub in ("01", "02", "03", "04", "05", "06"):
         for ses in ("before", "after"):
@@ -135,7 +146,8 @@ def two_visits(tmp_path_factory):
                         )
                     lines.append(
                         f"e{number}.nii\t{sub}\t{ses}\tlanterns\t{run}\tbold\t{contrast}\t"
-                        f"v{number}.nii\tday\tnorth"
+                        f"v{number}.nii\t{'day' if int(sub) % 2 else 'night'}\tnorth\t"
+                        f"3{sub}\t{int(sub) ** 2}"
                     )
     (folder / "table.tsv").write_text("\n".join(lines) + "\n")
     return folder
@@ -163,7 +175,7 @@ def whole(text: str) -> str:
     )
 
 
-@pytest.mark.parametrize("plan", settings.PLANS)
+@pytest.mark.parametrize("plan", plans.PLANS)
 def test_every_plan_is_on_both_pages(plan):
     for page in ("study-file.md", "choosing.md"):
         assert f"`{plan}`" in (DOCS / page).read_text()
@@ -171,8 +183,9 @@ def test_every_plan_is_on_both_pages(plan):
 
 def test_every_key_is_on_the_page():
     text = (DOCS / "study-file.md").read_text()
-    keys = set().union(*settings._KEYS.values(), *settings._PLAN_KEYS.values())
-    keys |= set(settings._RULES).union(*settings._RULES.values()) | set(regions._KEYS)
+    keys = set().union(*settings._KEYS.values(), *rois._PLAN_KEYS.values(), rois._ROI_KEYS)
+    keys |= comparisons._KEYS
+    keys |= set(rois._RULES).union(*rois._RULES.values()) | set(regions._KEYS)
     missing = [key for key in sorted(keys) if not re.search(rf"\b{key}\b", text)]
     assert missing == []
     columns = (*COLUMNS, *study._MORE, *study.CELLS)
@@ -181,14 +194,14 @@ def test_every_key_is_on_the_page():
 
 def test_every_word_that_a_key_takes_is_on_the_page():
     text = (DOCS / "study-file.md").read_text()
-    words = (*settings.SUMMARIES, *settings.INTERVALS, *settings.ON_EMPTY, *settings.TAILS)
+    words = (*rois.SUMMARIES, *rois.INTERVALS, *rois.ON_EMPTY, *rois.TAILS)
     assert [word for word in (*words, *regions.MIRRORED) if f"`{word}`" not in text] == []
 
 
 def test_every_column_is_on_the_outputs_page_and_those_it_explains_exist():
     text = (DOCS / "outputs.md").read_text()
     tables = (TEST_COLUMNS, VALUE_COLUMNS, CELL_COLUMNS, TOUCH_COLUMNS, SENSITIVITY_COLUMNS)
-    columns = set().union(*tables)
+    columns = set().union(*tables, COMPARISON_COLUMNS, MASK_COLUMNS)
     assert [name for name in sorted(columns) if not re.search(rf"\b{name}\b", text)] == []
     named = re.findall(r"^- \*\*(.*?)\.\*\*", text, re.M)
     explained = {name for item in named for name in item.split(", ")}

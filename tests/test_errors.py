@@ -53,6 +53,7 @@ region = { atlas = "garden_dseg.nii.gz", labels = ["Cinder"], origin = "atlas of
 MAP = "maps/sub-02_task-lanterns_run-1.nii.gz"  # line 6 of the table
 VARIANCE = MAP.replace("maps", "variances")
 CUT = "[...]"
+TABLE = ("table", "FOLDER/maps", "--pattern", "sub-{sub}_task-{task}_run-{run}.nii.gz")
 CHECK, RUN = ("check", "FOLDER/STUDY.toml", "--quiet"), ("run", "FOLDER/STUDY.toml", "--quiet")
 
 
@@ -558,8 +559,7 @@ SECTIONS = {
         Case(
             "A section is misspelt.",
             edit("[data]", "[date]"),
-            "unknown key 'date' (FOLDER/STUDY.toml, line 6): expected one of data, "
-            "origin, roi, [...]",
+            "unknown key 'date' (FOLDER/STUDY.toml, line 6): expected one of [...]data, [...]",
         ),
         Case(
             "A key is missing.",
@@ -668,8 +668,7 @@ SECTIONS = {
             "A key does not go with the plan.",
             edit('plan = "leave-one-subject-out"', 'plan = "leave-one-subject-out"\nfolds = 3'),
             "key 'folds' does not go with plan 'leave-one-subject-out' "
-            "(FOLDER/STUDY.toml, line 12): expected one of choose_on, flips, interval, "
-            "[...]",
+            "(FOLDER/STUDY.toml, line 12): expected one of choose_on, [...]",
         ),
         Case(
             "A plan that chooses has no rule.",
@@ -778,7 +777,50 @@ SECTIONS = {
             edit('{ task = "paths" }', '{ task = "paths", group = "a" }'),
             "choose_on selects other subjects than [data] select (FOLDER/STUDY.toml, "
             "line 19): got sub-02, sub-04 in one of them only; give every subject a map "
-            "of both, or an exclude_reason on both",
+            "of both; or narrow this region to those who have both: select = { sub = [...] } in "
+            "its [[roi]]",
+        ),
+        Case(
+            "Subjects of neither group.",
+            edit("flips = 19", 'compare = { column = "fold", first = "x", second = "y" }'),
+            "subjects of neither group (03[...]): expected x or y, got z; leave their maps out",
+        ),
+        Case(
+            "A score that is no number.",
+            edit("flips = 19", 'score = "group"'),
+            "01 has no number in column 'group' (FOLDER/STUDY.toml, line 14): expected a finite "
+            "number for every subject, got 'a'; fill it, or leave the subject out with an "
+            "exclude_reason",
+        ),
+        Case(
+            "Covariates of a mean.",
+            edit("flips = 19", 'covariates = ["sub"]'),
+            "compare, score and covariates do not go together like this (FOLDER/STUDY.toml, "
+            "line 14): expected compare or score, one of them, and covariates with either",
+        ),
+        Case(
+            "Groups of relatives.",
+            both(
+                *[
+                    edit_all(f"{row}\tbold\tglow\tn/a\tn/a", f"{row}\tbold\tglow\tn/a\tkin")
+                    for sub in ("01", "03")
+                    for row in (
+                        f"{sub}\tlanterns\t1",
+                        f"{sub}\tlanterns\t2",
+                        f"{sub}\tpaths\t1",
+                        f"{sub}\tpaths\t2",
+                    )
+                ],
+                edit("flips = 19", 'compare = { column = "group", first = "a", second = "b" }'),
+            ),
+            "compare and score need one map per independent subject (FOLDER/STUDY.toml, line "
+            "14): expected no exchange value that several subjects share, got 5 subjects, 4 "
+            "of them independent",
+        ),
+        Case(
+            "A reliability without a score.",
+            edit("flips = 19", "reliability = { values = 0.8, score = 0.7 }"),
+            "reliability without a score (FOLDER/STUDY.toml, line 14): expected score",
         ),
         Case(
             "Too few subjects for an interval.",
@@ -1014,6 +1056,22 @@ SECTIONS = {
             "write the label as in the table: 01 is not 1",
         ),
         Case(
+            "A file of each subject's own data, for all subjects.",
+            region(
+                '{ mask = "arbor.nii.gz", origin = "drawn", derived_from = [{ sub = "{sub}" }] }'
+            ),
+            'derived_from with "{sub}" for a region that all subjects share '
+            "(FOLDER/STUDY.toml, line 25): expected {sub} in the path too, or the subjects' "
+            "labels here, got arbor; name whom it was made from: derived_from = "
+            '[{ sub = "01" }, ...], or leave sub out for everybody',
+        ),
+        Case(
+            "The record of what a mask was chosen on is damaged.",
+            put("arbor.json", '{"Sources": ['),
+            "unreadable record of a mask's sources (FOLDER/arbor.json): expected JSON, got "
+            "[...]; correct the file, or move it away from the mask",
+        ),
+        Case(
             "Weights that are no mask's.",
             region('{ centre = [0, 0, 0], radius = 5, origin = "table 2" }\nvalue = "weighted"'),
             'value = "weighted" needs a plain mask whose values are the weights '
@@ -1123,8 +1181,8 @@ SECTIONS = {
                 edit_all("02\tpaths\t2\tbold\tglow\tn/a", "02\tpaths\t2\tbold\tglow\tmoved"),
             ),
             "minus selects other subjects than [data] select (FOLDER/STUDY.toml, line "
-            "7): got sub-02 in one of them only; give every subject a map of both, or an "
-            "exclude_reason on both",
+            "7): got sub-02 in one of them only; give every subject a map of both; or narrow this "
+            "region to those who have both: select = { sub = [...] } in its [[roi]]",
         ),
         Case(
             "A difference, and a plan over runs.",
@@ -1300,6 +1358,20 @@ SECTIONS = {
             ("table", "FOLDER/maps", "--pattern", "*.nii.gz"),
         ),
         Case(
+            "Participants without participant_id.",
+            put("participants.tsv", "sub\tage\n01\t30\n"),
+            "participants table without participant_id (FOLDER/participants.tsv): expected "
+            "participant_id as the first column, as BIDS has it, got sub",
+            (*TABLE, "--participants", "FOLDER/participants.tsv"),
+        ),
+        Case(
+            "A subject without a line among the participants.",
+            put("participants.tsv", "participant_id\tage\nsub-01\t30\nsub-02\t31\n"),
+            "subjects without a line in the participants table (FOLDER/participants.tsv): "
+            "expected participant_id sub-LABEL, or LABEL, got none for sub-03, sub-04, sub-05",
+            (*TABLE, "--participants", "FOLDER/participants.tsv"),
+        ),
+        Case(
             "A pattern with an unknown field.",
             nothing,
             "unknown field in the pattern (sub-{person}_*.nii.gz): expected one of "
@@ -1312,7 +1384,7 @@ SECTIONS = {
         Case(
             "A plain t-test of held-out values.",
             edit("flips = 19", 'test = "t"'),
-            "refused before anything ran: 1 finding\n"
+            "refused before anything ran: 1 cause, 1 finding\n"
             "\n"
             "1. leak: garden.Arbor.test: the 5 values are cross-fitted: each mask was "
             "chosen on the other\n"
@@ -1328,7 +1400,7 @@ SECTIONS = {
         Case(
             "A t-test where the region was chosen.",
             plan('plan = "exploratory"\ntest = "t"'),
-            "refused before anything ran: 6 findings\n"
+            "refused before anything ran: 2 causes, 6 findings\n"
             "\n"
             "1. leak: garden.Arbor.extract, element 0: the mask was chosen on the data "
             "it would be tested on\n"
@@ -1340,13 +1412,44 @@ SECTIONS = {
             "            -> garden.Arbor.choose.mask_file\n"
             "    data    maps/sub-01_task-lanterns_run-1.nii.gz\n"
             "            -> garden.maps.out_files[0]\n"
-            "    cure    choose the region without the tested data (plan "
-            "leave-one-subject-out, or a mask\n"
-            "            with another origin), or read it as exploratory: a value "
-            "without interval and p\n"
+            "    cure    choose the region without the tested data (plan k-fold or "
+            "leave-one-subject-out; a\n"
+            "            region from outside the study), or read it as exploratory: a value "
+            "without interval\n"
+            "            and p\n"
             "    also    4 more elements of this node\n"
             "\n"
             "2. leak: garden.Arbor.test: its values were read in a region chosen on "
+            "those very data\n"
+            "    cure    see the extraction that leaks",
+            exit_code=3,
+        ),
+        Case(
+            "A localizer on another map of the tested data.",
+            both(
+                edit_all("\tpaths\t1\tbold\tglow", "\tlanterns\t1\tbold\tglimmer"),
+                edit_all("\tpaths\t2\tbold\tglow", "\tlanterns\t2\tbold\tglimmer"),
+                edit('select = { task = "lanterns" }', 'select = { contrast = "glow" }'),
+                edit('choose_on = { task = "paths" }', 'choose_on = { contrast = "glimmer" }'),
+            ),
+            "refused before anything ran: 2 causes, 6 findings\n"
+            "\n"
+            "1. leak: garden.Brook.extract, element 0: the mask was chosen on another map "
+            "of the very data it\n"
+            "would be tested on\n"
+            "    shared  sub-01_task-lanterns_run-1_bold, "
+            "sub-01_task-lanterns_run-2_bold\n"
+            "    region  maps/sub-01_task-paths_run-1.nii.gz\n"
+            "            -> garden.maps1.out_files[0]\n"
+            "            -> garden.Brook.choose.row_masks[0]\n"
+            "    data    maps/sub-01_task-lanterns_run-1.nii.gz\n"
+            "            -> garden.maps.out_files[0]\n"
+            "    cure    choose on that map in held-out subjects (plan k-fold with "
+            "choose_on), or show that\n"
+            "            the two contrasts are orthogonal (plan orthogonal-contrast)\n"
+            "    also    4 more elements of this node\n"
+            "\n"
+            "2. leak: garden.Brook.test: its values were read in a region chosen on "
             "those very data\n"
             "    cure    see the extraction that leaks",
             exit_code=3,
@@ -1359,20 +1462,22 @@ SECTIONS = {
                 ),
                 region(f'{{ mask = "cinder.nii.gz", {DRAWN_ON} }}'),
             ),
-            "refused before anything ran: 6 findings\n"
+            "refused before anything ran: 2 causes, 6 findings\n"
             "\n"
-            "1. leak: garden.Cinder.extract, element 0: the mask was chosen on the data "
-            "it would be tested on\n"
+            "1. leak: garden.Cinder.extract, element 0: the region was made from the data "
+            "it would be tested\n"
+            "on, as its origin declares or a run has recorded\n"
             "    shared  sub-01_task-lanterns_run-1_bold, "
             "sub-01_task-lanterns_run-2_bold\n"
             "    region  cinder.nii.gz\n"
             "            -> garden.Cinder.region.mask_file\n"
             "    data    maps/sub-01_task-lanterns_run-1.nii.gz\n"
             "            -> garden.maps.out_files[0]\n"
-            "    cure    choose the region without the tested data (plan "
-            "leave-one-subject-out, or a mask\n"
-            "            with another origin), or read it as exploratory: a value "
-            "without interval and p\n"
+            "    cure    choose the region without the tested data (plan k-fold or "
+            "leave-one-subject-out; a\n"
+            "            region from outside the study), or read it as exploratory: a value "
+            "without interval\n"
+            "            and p\n"
             "    also    4 more elements of this node\n"
             "\n"
             "2. leak: garden.Cinder.test: its values were read in a region chosen on "
