@@ -283,11 +283,20 @@ def _searched(given: Sequence[Path] | None, choose: Any) -> tuple[Path, ...]:
 
 def collect_comparisons(settings: Settings, nodes: dict[str, Any]) -> list[dict[str, Any]]:
     """The records of the comparisons of regions, each with its name."""
-    return [
-        {"name": one.name}
-        | read_json(nodes[f"{settings.name}.{one.name}"].result.outputs.record_file)
-        for one in settings.comparisons
-    ]
+    rois = {roi.name: roi for roi in settings.rois}
+    made = []
+    for one in settings.comparisons:
+        node = nodes[f"{settings.name}.{one.name}"]
+        record = {"name": one.name} | read_json(node.result.outputs.record_file)
+        if any(rois[name].own_masks or rois[name].own_region for name in one.rois):
+            record["assumption"] += (
+                "; for a population, also that the effects that choose and those that are tested "
+                "are uncorrelated across subjects"
+            )
+        if any(rois[name].these_subjects for name in one.rois):
+            record["assumption"] += "; it speaks of these subjects only"
+        made.append(record)
+    return made
 
 
 def adjust(outputs: Sequence[RoiOutput]) -> list[tuple[str, str]]:

@@ -571,7 +571,7 @@ def _about(roi: Roi, settings: Settings, estimate: float) -> Iterator[str]:
         told.append(f"Values are differences from {settings.maps.null_value:g}, which is the null.")
     if roi.choosing is not None and roi.plan in CROSS_FITTED:
         chose = _cells(roi.choosing.subjects)
-        told.append(f"Regions were chosen on {chose}, held out and flipped together.")
+        told.append(f"Regions were chosen on {chose}, held out and exchanged together.")
     yield from told
     if roi.reliability is not None:
         yield ceiling_sentence(estimate, ceiling(*roi.reliability))

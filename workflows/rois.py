@@ -477,7 +477,10 @@ class _Roi:
             )
         if "reliability" in table and not column:
             raise InputError(
-                "reliability without a score", where=read.where("reliability"), expected="score"
+                "reliability without a score",
+                where=read.where("reliability"),
+                expected='score = "COLUMN" in the same [[roi]]',
+                remedy="the ceiling it gives is that of a correlation",
             )
         if groups is not None:
             read.known(groups, {"column", "first", "second"}, "compare")
@@ -504,7 +507,7 @@ class _Roi:
             model.comparison(sorted(people))
         except InputError as error:
             key = "compare" if isinstance(model, Groups) else "score"
-            raise error.at(self.read.where(key)) from error
+            raise error.within(self.read.where(key)) from error
 
     def _numbers(self, column: str, key: str) -> tuple[tuple[str, float], ...]:
         """Each person's number in a column."""

@@ -146,10 +146,10 @@ def print_tests(
     print_table(rows)
     if overlaps:
         one, other = overlaps[0]
-        more = f" and {len(overlaps) - 1} more pairs" if len(overlaps) > 1 else ""
+        more = f" (and of {len(overlaps) - 1} more)" if len(overlaps) > 1 else ""
         click.echo(
             f"\nNo p Holm over the regions: the search regions of {one} and {other}{more} share "
-            "voxels (a whole map shares all)."
+            "voxels (a whole map shares all). p max does not mind."
         )
     for family in families:
         shown = _strongest(family, _SENTENCES)
@@ -162,7 +162,8 @@ def print_tests(
                 "all of them are in roi_tests.tsv."
             )
     for record in comparisons:
-        click.echo("\n" + textwrap.fill(f"{record['name']}: {record['sentence']}", 96))
+        said = f"{record['name']}: {record['sentence']} Taken for granted: {record['assumption']}."
+        click.echo("\n" + textwrap.fill(said, 96))
     varied = [roi for roi in settings.rois if roi.variant_of]
     if varied:
         click.echo(
