@@ -820,7 +820,8 @@ SECTIONS = {
         Case(
             "A reliability without a score.",
             edit("flips = 19", "reliability = { values = 0.8, score = 0.7 }"),
-            "reliability without a score (FOLDER/STUDY.toml, line 14): expected score",
+            "reliability without a score (FOLDER/STUDY.toml, line 14): expected score = "
+            '"COLUMN" in the same [[roi]]; the ceiling it gives is that of a correlation',
         ),
         Case(
             "Too few subjects for an interval.",
