@@ -127,7 +127,7 @@ def main() -> None:
             small, large = (found[f"{scheme}, N = {n}"] for n in (few, chosen.most))
             ratio = (large["maps"] + large["masks"]) / (small["maps"] + small["masks"])
             print(
-                f"{scheme:22} {chosen.most} over {few}: {ratio:.2f} x (<= 4.6), of the program's own "
+                f"{scheme:22} {chosen.most} over {few}: {ratio:.2f} x (<= 4.6), of its own "
                 f"time {large['user'] / small['user']:.2f} x, "
                 f"peak {large['peak_mb']:.0f} MB (< 3000)"
             )
