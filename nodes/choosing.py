@@ -58,6 +58,19 @@ class FoldMaps(Protocol):
         """For each row of weights, features with all that are in the first k of a fold."""
 
 
+class Narrowing(Protocol):
+    """What a control decides on the maps of each exchange (see `foldcontrol`)."""
+
+    def passing(self, weights: Floats, features: Ints, above: Bools) -> Bools:
+        """(n_some_features, n_folds) what passes among features above the maps' threshold.
+
+        `features` are all that are above it in some fold.
+        """
+
+    def least_sizes(self, weights: Floats) -> Floats | None:
+        """(n_folds,) what the size of a cluster must be; None: anything."""
+
+
 class Chooser(Protocol):
     """A rule on the folds' maps."""
 
@@ -70,15 +83,21 @@ class Chooser(Protocol):
     def members(self, weights: Floats, candidates: Ints) -> tuple[Ints, Bools]:
         """The features in any fold's mask, ascending, and (n_features_found, n_folds) bool."""
 
-    def on(self, maps: FoldMaps) -> Chooser:
+    def on(self, maps: FoldMaps, narrowing: Narrowing | None) -> Chooser:
         """The same rule on the maps of another stack."""
 
 
 class ByThreshold:
     """What exceeds a threshold: all features, or clusters of them."""
 
-    def __init__(self, rule: Threshold | Cluster, maps: FoldMaps, space: Space) -> None:
-        self._rule, self._maps = rule, maps
+    def __init__(
+        self,
+        rule: Threshold | Cluster,
+        maps: FoldMaps,
+        space: Space,
+        narrowing: Narrowing | None = None,
+    ) -> None:
+        self._rule, self._maps, self._narrowing = rule, maps, narrowing
         self._hood: Neighbourhood | None = None
         self._distance: Floats | None = None
         if isinstance(rule, Cluster):
@@ -103,19 +122,31 @@ class ByThreshold:
         above = self._maps.above(weights, candidates)
         some = above.any(axis=1)
         found, members = candidates[some], np.ascontiguousarray(above[some])
+        least = None
+        if self._narrowing is not None:
+            members = self._narrowing.passing(weights, found, members)
+            found, members = _in_any(found, members)
+            least = self._narrowing.least_sizes(weights) if len(found) else None
         if isinstance(self._rule, Cluster):
             assert self._hood is not None
             t = self._maps.maps(weights, found, "t").T if self._rule.pick == "peak" else None
-            members = keep_clusters(members, found, self._rule, self._hood, t, self._distance)
-            some = members.any(axis=1)
-            found, members = found[some], members[some]
+            members = keep_clusters(
+                members, found, self._rule, self._hood, t, self._distance, least
+            )
+            found, members = _in_any(found, members)
         return found, members
 
-    def on(self, maps: FoldMaps) -> Chooser:
+    def on(self, maps: FoldMaps, narrowing: Narrowing | None) -> Chooser:
         """See `Chooser`."""
         other = copy(self)
-        other._maps = maps
+        other._maps, other._narrowing = maps, narrowing
         return other
+
+
+def _in_any(features: Ints, members: Bools) -> tuple[Ints, Bools]:
+    """The features that are in any fold's mask."""
+    some = members.any(axis=1)
+    return features[some], members[some]
 
 
 class ByRank:
@@ -145,7 +176,7 @@ class ByRank:
         found, members = leading(self._maps, weights, candidates, self._k, self._kind)
         return (found, members) if self._spheres is None else self._around(found, members)
 
-    def on(self, maps: FoldMaps) -> Chooser:
+    def on(self, maps: FoldMaps, narrowing: Narrowing | None) -> Chooser:
         """See `Chooser`."""
         other = copy(self)
         other._maps = maps
@@ -204,22 +235,31 @@ class Choosing:
     space : Space
     stand_ins : int
         How many of the strongest features stand in for an empty mask; 0: it stays empty.
+    narrowing : Narrowing, optional
+        What a control decides on each exchange's maps.
     """
 
-    def __init__(self, rule: MaskRule, maps: FoldMaps, space: Space, stand_ins: int) -> None:
+    def __init__(
+        self,
+        rule: MaskRule,
+        maps: FoldMaps,
+        space: Space,
+        stand_ins: int,
+        narrowing: Narrowing | None = None,
+    ) -> None:
         self._maps, self._stand_ins = maps, stand_ins
         self._chooser: Chooser
         if isinstance(rule, Threshold | Cluster):
-            self._chooser = ByThreshold(rule, maps, space)
+            self._chooser = ByThreshold(rule, maps, space, narrowing)
         elif isinstance(rule, Strongest | PeakSphere):
             self._chooser = ByRank(rule, maps, space)
         else:
             raise InputError("no rule that folds can choose by", got=repr(rule))
 
-    def on(self, maps: FoldMaps) -> Choosing:
+    def on(self, maps: FoldMaps, narrowing: Narrowing | None) -> Choosing:
         """The same on the maps of another stack, with the same people and features."""
         other = copy(self)
-        other._maps, other._chooser = maps, self._chooser.on(maps)
+        other._maps, other._chooser = maps, self._chooser.on(maps, narrowing)
         return other
 
     def candidates(self, weights: Floats) -> list[Ints]:

@@ -9,7 +9,7 @@ one map, all folds of a scheme, and every flip of a test. The other rules rank t
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Protocol
 
 import numpy as np
@@ -19,6 +19,7 @@ from scipy.sparse import coo_array
 from scipy.sparse.csgraph import connected_components
 from scipy.spatial import KDTree
 
+from .controlled import EXTENT_CONTROLS, HEIGHT_CONTROLS, Controlled, critical_of_map
 from .errors import InputError
 from .space import Space
 
@@ -45,7 +46,7 @@ class MaskRule(Protocol):
 
 @dataclass(frozen=True)
 class _Forming:
-    """A one-sided threshold on t, as a height or as the p-value that it stands for.
+    """A one-sided threshold on t: a height, the p-value that it stands for, or what it controls.
 
     Parameters
     ----------
@@ -53,17 +54,22 @@ class _Forming:
         Threshold on t itself.
     p : float, optional
         One-sided p of t with n - 1 degrees of freedom, n the rows with data at the feature.
+    control : Controlled, optional
+        What it controls over the search region; by keyword.
     """
 
     height: float | None = None
     p: float | None = None
+    control: Controlled | None = field(default=None, kw_only=True)
 
     def __post_init__(self) -> None:
-        if (self.height is None) == (self.p is None):
+        if sum(given is not None for given in (self.height, self.p, self.control)) != 1:
             raise InputError(
-                "a threshold needs exactly one of height and p",
-                got=f"height {self.height}, p {self.p}",
+                "a threshold needs exactly one of height, p and control",
+                got=f"height {self.height}, p {self.p}, control {self.control}",
             )
+        if self.control is not None:
+            _check_control("a threshold", self.control, HEIGHT_CONTROLS)
         if self.height is not None and not self.height > 0:
             raise InputError("height out of range", expected="height > 0", got=str(self.height))
         if self.p is not None and not 0 < self.p < 0.5:
@@ -74,7 +80,10 @@ class _Forming:
         return "t"
 
     def critical(self, n: npt.ArrayLike) -> Floats:
-        """The value t must exceed, for each number of rows with data (infinite below 2)."""
+        """The value t must exceed, for each number of rows with data (infinite below 2).
+
+        Not of a threshold by what it controls: that depends on the maps.
+        """
         rows = np.asarray(n, dtype=float)
         if self.height is not None:
             return np.where(rows >= 2, self.height, np.inf)
@@ -88,6 +97,8 @@ class _Forming:
 
     def _threshold(self, tail: str) -> str:
         below = tail == "negative"
+        if self.control is not None:
+            return self.control.height(tail)
         if self.height is not None:
             return f"t < -{self.height:g}" if below else f"t > {self.height:g}"
         return f"p < {self.p:g}" + (" for effects below zero" if below else "")
@@ -101,6 +112,8 @@ class Threshold(_Forming):
     --------
     >>> Threshold(p=0.01).critical(20).round(4).item()
     2.5395
+    >>> print(Threshold(control=Controlled("bonferroni", 0.05)).describe())
+    all features with t above Bonferroni's threshold, chance of any false feature at most 0.05
     """
 
     def describe(self, tail: str = "positive") -> str:
@@ -114,7 +127,7 @@ class Cluster(_Forming):
 
     Parameters
     ----------
-    height, p : float
+    height, p, control
         The forming threshold; exactly one.
     connectivity : {18, 6, 26}
         Which voxels touch: by a face, an edge or a corner.
@@ -125,12 +138,16 @@ class Cluster(_Forming):
         coordinate; or every cluster of sufficient size. Ties go to the lowest feature number.
     near : (3,) float, mm
         The coordinate for "nearest".
+    extent : Controlled, optional
+        What the size of a cluster controls over the search region, given a forming height or p;
+        `min_size` holds besides.
     """
 
     connectivity: int = 18
     min_size: int = 1
     pick: str = "largest"
     near: tuple[float, float, float] | None = None
+    extent: Controlled | None = None
 
     def __post_init__(self) -> None:
         super().__post_init__()
@@ -147,6 +164,14 @@ class Cluster(_Forming):
                 'pick = "nearest" and near = [x, y, z] go together',
                 got=f"pick {self.pick!r}, near {self.near}",
             )
+        if self.extent is not None:
+            _check_control("the size of clusters", self.extent, EXTENT_CONTROLS)
+            if self.control is not None:
+                raise InputError(
+                    "control of height and of size at once",
+                    expected="a forming height or p where the size is controlled",
+                    got=f"{self.control.control} and {self.extent.control}",
+                )
 
     def describe(self, tail: str = "positive") -> str:
         """The rule in words."""
@@ -157,9 +182,12 @@ class Cluster(_Forming):
             "nearest": f"the cluster nearest to {self.near} mm",
             "all": "every cluster",
         }[self.pick]
+        sizes = f"at least {self.min_size} features"
+        if self.extent is not None:
+            sizes += f", {self.extent.extent()}"
         return (
             f"{which} of features with {self._threshold(tail)} "
-            f"(connectivity {self.connectivity}, at least {self.min_size} features)"
+            f"(connectivity {self.connectivity}, {sizes})"
         )
 
 
@@ -237,6 +265,13 @@ class PeakSphere:
         return (
             f"the features within {self.radius:g} mm of the one with the {_extreme(tail)} "
             f"group {self.map_kind}"
+        )
+
+
+def _check_control(of: str, control: Controlled, known: tuple[str, ...]) -> None:
+    if control.control not in known:
+        raise InputError(
+            f"{control.control} does not control {of}", expected=f"one of {', '.join(known)}"
         )
 
 
@@ -334,6 +369,7 @@ def keep_clusters(
     hood: Neighbourhood,
     t: Floats | None,
     distance: Floats | None,
+    least: Floats | None = None,
 ) -> Bools:
     """Members that the cluster rule keeps.
 
@@ -350,6 +386,8 @@ def keep_clusters(
         Needed for ``pick = "peak"``.
     distance : (n_features,) float
         From the rule's coordinate, in mm; needed for ``pick = "nearest"``.
+    least : (n_maps,) float, optional
+        The size that a cluster of each map must have, besides the rule's `min_size`.
 
     Returns
     -------
@@ -363,6 +401,8 @@ def keep_clusters(
     owner = np.empty(n_clusters, dtype=np.intp)
     owner[cluster] = of_map
     big = size >= rule.min_size
+    if least is not None:
+        big &= size >= least[owner]
     if rule.pick == "all":
         kept = big
     else:
@@ -420,7 +460,7 @@ def choose(values: Floats, rule: MaskRule, space: Space, n: npt.ArrayLike | None
     rule : Threshold, Cluster, Strongest or PeakSphere
     space : Space
     n : int or (n_features,) int
-        Rows with data, when the threshold is given as p.
+        Rows with data, when the threshold is given as p or by what it controls.
 
     Returns
     -------
@@ -445,10 +485,26 @@ def choose(values: Floats, rule: MaskRule, space: Space, n: npt.ArrayLike | None
         return around
     if not isinstance(rule, _Forming):
         raise TypeError(f"no mask rule: {rule!r}")
-    if n is None and rule.p is not None:
-        raise InputError("a threshold given as p needs the number of rows", remedy="give n")
+    if n is None and rule.height is None:
+        raise InputError(
+            "a threshold given as p or by what it controls needs the number of rows",
+            remedy="give n",
+        )
+    if isinstance(rule, Cluster) and rule.extent is not None:
+        raise InputError(
+            "the size of clusters cannot be controlled on one group map",
+            expected="the subjects' maps that it was made of, as plans that fold over subjects "
+            "have them",
+            got=f"extent by {rule.extent.control}",
+            remedy="such a plan, or min_size",
+        )
+    if rule.control is not None:
+        rows = np.broadcast_to(np.asarray(n, dtype=float), values.shape)
+        critical = critical_of_map(rule.control, values, rows)
+    else:
+        critical = rule.critical(2 if n is None else n)
     with np.errstate(invalid="ignore"):
-        over: Bools = values > rule.critical(2 if n is None else n)
+        over: Bools = values > critical
     if not isinstance(rule, Cluster):
         return over
     features = np.flatnonzero(over)

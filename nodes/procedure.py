@@ -13,19 +13,21 @@ import hashlib
 from collections.abc import Callable, Iterator, Sequence
 from copy import copy as copied
 from dataclasses import dataclass, field
+from functools import partial
 
 import numpy as np
 import numpy.typing as npt
 
 from .adjusted import Residuals
-from .choosing import Choosing, Chosen
+from .choosing import Choosing, Chosen, FoldMaps, Narrowing
 from .errors import EmptyFoldError, InputError
 from .exchange import FlipTest, tested_by
+from .foldcontrol import check_with_model, controlled_maps
 from .foldnull import mean_dice
 from .folds import LeaveOneOut, Scheme
 from .foldstack import FoldStack
 from .groupmaps import Missing
-from .masks import Cluster, MaskRule, Threshold
+from .masks import MaskRule
 from .models import Model, compared
 from .roi import Interval, block_values
 from .space import Space
@@ -136,6 +138,8 @@ class Procedure:
                 'on_empty = "strongest" and k go together',
                 got=f"on_empty {self.on_empty!r}, k {self.k}",
             )
+        if self.model is not None:
+            check_with_model(self.rule)
 
     def describe(self) -> str:
         """How a region is chosen, in words."""
@@ -233,10 +237,8 @@ class Prepared:
             people = range(len(self.people))
             self._blocks = [np.flatnonzero(self._person == i).tolist() for i in people]
         self._compared = compared(procedure.model, [labels[i] for i in order], folds)
-        rule = procedure.rule
-        self._critical = rule.critical if isinstance(rule, Threshold | Cluster) else None
-        maps = self._compared.maps(self._stack, self._critical)
-        self._choosing = Choosing(rule, maps, space, procedure.k)
+        maps, narrowing = self._maps_of(self._stack)
+        self._choosing = Choosing(procedure.rule, maps, space, procedure.k, narrowing)
         self._residuals: list[Residuals] | None = None
 
     # -- one exchange -----------------------------------------------------------------------
@@ -283,8 +285,20 @@ class Prepared:
         ]
         other = copied(self)
         other._stack, other._read_stack = made[0], made[-1]
-        other._choosing = self._choosing.on(self._compared.maps(made[0], self._critical))
+        other._choosing = self._choosing.on(*self._maps_of(made[0]))
         return other
+
+    def _maps_of(self, stack: FoldStack) -> tuple[FoldMaps, Narrowing | None]:
+        """The folds' maps of a stack with the rule's threshold, and what its control decides."""
+        compared = self._compared
+        nuisance = 1 if compared.refitted is None else compared.refitted.shape[1]
+        return controlled_maps(
+            self.procedure.rule,
+            partial(compared.maps, stack),
+            [self.people[i] for i in self._person],
+            self.space,
+            n_parameters=1 if compared.signed else 1 + nuisance,
+        )
 
     def _each(self, exchanges: Ints) -> Iterator[tuple[Chosen, Floats]]:
         """What is chosen under each exchange, and the (n_people,) values in their orientation."""

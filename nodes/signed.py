@@ -192,7 +192,8 @@ class SignedMaps:
             highest = parts.sum(axis=0) - parts.min(axis=0) + _DOUBLE * np.sqrt(len(x) * Q)
             lowest = np.sqrt(np.maximum(Q * (1 - _DOUBLE) - squares.max(axis=0), 0))
             # Negated, so that what is not a number stays in.
-            return features[~(highest <= least * lowest)]
+            may: Ints = features[~(highest <= least * lowest)]
+            return may
 
     def above(self, signs: Floats, features: Ints | slice) -> Bools:
         """(n_some_features, n_folds) whether t exceeds the critical value."""

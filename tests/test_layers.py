@@ -14,16 +14,17 @@ WORKFLOWS = Path(sequester.workflows.__file__).parent
 NODE_LAYERS = [
     "errors", "power",
     "progress", "touch", "rules", "space", "regrid", "folds", "flips", "subjects",
-    "groupmaps", "smoothness", "randomfield", "design", "orthogonality", "masks", "regions", "roi",
+    "groupmaps", "smoothness", "randomfield", "design", "orthogonality",
+    "controlled", "masks", "regions", "roi",
     "reliability", "familywise", "parcels", "foldnull", "foldstack", "signed", "scored",
-    "adjusted", "choosing", "compared", "models", "exchange", "procedure", "simulated", "nullsets",
-    "results", "comparisons", "heldout", "fixed", "images", "interfaces",
+    "adjusted", "choosing", "foldcontrol", "compared", "models", "exchange", "procedure",
+    "simulated", "nullsets", "results", "comparisons", "heldout", "fixed", "images", "interfaces",
 ]  # fmt: skip
 WORKFLOW_LAYERS = [
     "digests", "study", "ancestry", "judge", "engines", "guard", "keys", "selection", "regions",
-    "plans", "around", "certificates", "lineage", "settings", "build", "collect", "outputs", "verify", "run",
-    "curves", "planning", "trials", "kept", "measured", "calibrate", "table", "demo",
-    "show", "cli",
+    "plans", "around", "certificates", "lineage", "rois", "comparisons", "settings", "build",
+    "collect", "outputs", "verify", "run", "curves", "planning", "trials", "kept", "measured",
+    "calibrate", "table", "demo", "show", "cli",
 ]  # fmt: skip
 
 

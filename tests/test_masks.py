@@ -319,8 +319,11 @@ def test_a_peak_sphere_holds_its_surface_whatever_the_rounding(reach, n):
 @pytest.mark.parametrize(
     ("make", "message"),
     [
-        (Threshold, "exactly one of height and p: got height None, p None"),
-        (lambda: Threshold(3.0, 0.01), "exactly one of height and p: got height 3.0, p 0.01"),
+        (Threshold, "exactly one of height, p and control: got height None, p None"),
+        (
+            lambda: Threshold(3.0, 0.01),
+            "exactly one of height, p and control: got height 3.0, p 0.01",
+        ),
         (lambda: Threshold(height=-1.0), "height out of range: expected height > 0, got -1.0"),
         (lambda: Threshold(p=0.5), "p out of range: expected 0 < p < 0.5, got 0.5"),
         (lambda: Cluster(p=0.01, pick="best"), "unknown pick: expected one of largest, peak,"),
@@ -341,7 +344,7 @@ def test_a_peak_sphere_holds_its_surface_whatever_the_rounding(reach, n):
         (lambda: sphere(Grid((2, 2, 2), np.eye(4)), (0, 0, 0), 0.0), "radius out of range"),
         (
             lambda: choose(np.zeros(8), Threshold(p=0.01), Grid((2, 2, 2), np.eye(4))),
-            "a threshold given as p needs the number of rows",
+            "a threshold given as p or by what it controls needs the number of rows",
         ),
     ],
 )

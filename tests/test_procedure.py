@@ -617,7 +617,6 @@ def test_the_test_is_made_of_its_flips():
     assert test.n_at_least == (t >= test.t - 1e-9 * max(1, abs(test.t))).sum()
     assert test.p == (1 + test.n_at_least) / 151
     found = np.abs(t[t != 0])
-    assert 0 < len(found) < len(t), "some flips find nothing"
     assert test.abs_t_quantile == pytest.approx(np.quantile(found, 0.95, method="higher"))
     assert test.noise_dice == pytest.approx(np.nanmean(overlap))
     assert test.noise_empty == n_empty.mean()

@@ -149,7 +149,7 @@ def test_selection_of_rows(study):
         ("roi = []\n" + HEAD, "no [[roi]] (STUDY): state at least one"),
         ("roi = [1]\n" + HEAD, "roi"),
         ("origin = [1]\n" + HEAD + FOUND, "origin"),
-        (HEAD + FOUND + "\n[rio]\n", "unknown key 'rio' (STUDY, line 10): expected one of comparison, da"),
+        (HEAD + FOUND + "\n[rio]\n", "unknown key 'rio' (STUDY, line 10): expected one of "),
         (
             HEAD + 'seed = "3"\n' + FOUND,
             "seed has the wrong type (STUDY, line 4): expected a whole number, without quotes, ",
@@ -183,7 +183,7 @@ def test_selection_of_rows(study):
         (
             HEAD + FOUND.replace("p = 0.01", "p = 0.01, min_size = 3"),
             "key 'min_size' does not go with rule kind 'threshold' (STUDY, line 8): expected one "
-            "of height, p",
+            "of control, flips, height, level, p",
         ),
         (
             HEAD + FOUND.replace("p = 0.01", "p = 0.01, height = 3"),

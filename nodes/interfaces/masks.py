@@ -68,7 +68,9 @@ def _write_chosen(
 class _ChooseInput(_RuleInput):
     in_file = File(exists=True, mandatory=True, desc="group map")
     search_file = File(exists=True, desc="search region; default the whole map")
-    count_file = File(exists=True, desc="maps with data, when the rule's threshold is a p")
+    count_file = File(
+        exists=True, desc="maps with data, when the rule's threshold is a p or a control"
+    )
 
 
 class ChooseMask(SequesterInterface):
