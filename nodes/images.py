@@ -419,7 +419,7 @@ def table_beside(path: str | Path) -> Path | None:
     True
     """
     path = Path(path)
-    stem = path.name.removesuffix(".gz").removesuffix(".nii")
+    stem = Path(path.name.removesuffix(".gz")).stem
     plain = re.sub(r"(?:^|_)(?:space|res)-[A-Za-z0-9]+", "", stem).removeprefix("_")
     for name in dict.fromkeys((stem, plain)):
         if (table := path.with_name(f"{name}.tsv")).is_file():

@@ -386,7 +386,7 @@ class Family:
 
 
 class Circular:
-    """Chosen and read on the same data: a value, the mean over maps, and no test.
+    """Chosen and read on the same data: a value, the mean over people, and no test.
 
     Where the rule finds nothing the value counts as 0.
 
@@ -405,8 +405,9 @@ class Circular:
         """What the plan finds in the next data set."""
         maps, _ = self._maps.draw(rng)
         inside = np.flatnonzero(group_mask(maps, self._procedure, self._grid))
-        values = read(maps, [inside], self._maps.tested.people, self._procedure.summary)
-        return Found(float(np.mean(values)), None, float(len(inside) == 0))
+        people = self._maps.tested.people
+        values = read(maps, [inside], people, self._procedure.summary)
+        return Found(float(np.mean(per_person(values, people))), None, float(len(inside) == 0))
 
 
 # -- what they share --------------------------------------------------------------------------

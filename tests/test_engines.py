@@ -170,7 +170,7 @@ def test_a_leak_is_refused_before_any_process_starts(folder, study):
     mark = Node(function(body, x=maps[0]), "mark")
     read = Node(Extract(in_files=[maps[0]], labels=LABELS[:1]), "read")
     made.connect(mark, "out", read, "mask_files")
-    with pytest.raises(GuardRefused, match="refused before anything ran: 1 finding"):
+    with pytest.raises(GuardRefused, match="refused before anything ran: 1 cause, 1 finding"):
         made.run(plugin=GuardPlugin(study, processes=2))
     assert not trace.exists()
 
