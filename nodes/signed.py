@@ -5,6 +5,8 @@ bound that the fold's sum must exceed is computed once. A flip is one float32 ma
 for the sums over all rows, one comparison of each feature with a bound that is low enough for
 every fold and every rounding, and float64 work on the few features left: there the folds' own
 sums are formed as `groupmaps.without_each` forms them, without the held-out rows, and decide.
+With few folds each has a product of its own: their bounds are then tight, however many rows a
+fold holds out.
 A rule that ranks features has no such bound beforehand. The folds' exact maps at some features
 that look strong give one for this flip: what does not reach the k-th value of these is not
 among the k strongest.
@@ -27,6 +29,8 @@ Bools = npt.NDArray[np.bool_]
 
 # Relative rounding of a few float32 operations, generously.
 _SINGLE = 1e-5
+# So many folds at the most have a screen of their own each: with more, one for all is as tight.
+_FEW_FOLDS = 12
 # The same of a float64 sum over rows.
 _DOUBLE = 1e-9
 
@@ -41,10 +45,13 @@ class _Bounds:
         What each fold's sum must exceed.
     lowest : (n_features,) float32
         What the sum over all rows must exceed for any fold to pass; NaN where unknown.
+    by_fold : (n_folds, n_features) float32, or None
+        With few folds: what each fold's own float32 sum must exceed; NaN where unknown.
     """
 
     each: Floats
     lowest: Floats
+    by_fold: Floats | None
 
 
 @dataclass(frozen=True)
@@ -117,14 +124,18 @@ class SignedMaps:
         if self._bounds is None:
             each = np.empty((self.stack.n_features, len(self.stack.folds)))
             lowest = np.empty(len(each), np.float32)
+            few = len(self.stack.folds) <= _FEW_FOLDS
+            by_fold = np.empty(each.shape[::-1], np.float32) if few else None
             for block in self.stack.pieces():
                 bound = self._bound_of(block)
                 reach, slack, known = self.stack.most_off(block)
                 with np.errstate(over="ignore", invalid="ignore"):
                     # NaN keeps a feature in.
                     lowest[block] = np.where(known, (bound - reach).min(axis=0) - slack, np.nan)
+                    if by_fold is not None:
+                        by_fold[:, block] = np.where(known, bound - slack, np.nan)
                 each[block] = bound.T
-            self._bounds = _Bounds(each, lowest)
+            self._bounds = _Bounds(each, lowest, by_fold)
         return self._bounds
 
     def _ranking(self, kind: str) -> _Ranks:
@@ -149,7 +160,10 @@ class SignedMaps:
 
     def may_pass(self, signs: Floats) -> list[Ints]:
         """For each row of signs, the features that may be above the threshold in some fold."""
-        lowest = self._thresholds().lowest
+        bounds = self._thresholds()
+        if bounds.by_fold is not None:
+            return self.stack.may_reach(signs, bounds.by_fold)
+        lowest = bounds.lowest
         return by_exchange(self.stack.all_sums(signs), lowest, len(signs))
 
     def may_lead(self, signs: Floats, k: int, kind: str) -> list[Ints]:
