@@ -11,6 +11,7 @@ deviation of a factor's cell means over that within a cell (Cohen 1988).
 
 from __future__ import annotations
 
+from abc import ABC, abstractmethod
 from dataclasses import dataclass
 from typing import Protocol
 
@@ -97,7 +98,7 @@ class _Significance:
 
 
 @dataclass(frozen=True)
-class _Means(_Significance):
+class _Means(_Significance, ABC):
     """Student's t of a mean or a difference: its noncentrality is d times sqrt(information)."""
 
     @property
@@ -110,9 +111,9 @@ class _Means(_Significance):
         """Any."""
         return np.inf
 
+    @abstractmethod
     def _information(self, n: float) -> tuple[float, float]:
         """(noncentrality squared for d = 1, degrees of freedom)."""
-        raise NotImplementedError
 
     def at(self, effect: float, n: float) -> Power:
         """Power and errors of the t-test.

@@ -111,10 +111,6 @@ class Given(Region):
         """Itself."""
         yield self
 
-    def describe(self) -> str:
-        """In words."""
-        raise NotImplementedError
-
 
 @dataclass(frozen=True)
 class MaskFile(Given):
