@@ -8,9 +8,10 @@ signs, a score under exchange ...) is behind `FoldMaps`; an exchange is one weig
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from copy import copy
 from dataclasses import dataclass
+from functools import lru_cache, partial
 from typing import Protocol
 
 import numpy as np
@@ -35,6 +36,9 @@ from .space import Space
 Floats = npt.NDArray[np.floating]
 Ints = npt.NDArray[np.integer]
 Bools = npt.NDArray[np.bool_]
+
+# Spheres kept.
+_SPHERES = 4096
 
 
 class FoldMaps(Protocol):
@@ -67,8 +71,12 @@ class Narrowing(Protocol):
         `features` are all that are above it in some fold.
         """
 
-    def least_sizes(self, weights: Floats) -> Floats | None:
-        """(n_folds,) what the size of a cluster must be; None: anything."""
+    def least_sizes(self, weights: Floats, largest: Ints) -> Floats:
+        """(n_folds,) what the size of a cluster must be.
+
+        `largest` are the sizes of the folds' largest clusters: where that is too small, any size
+        above it will do.
+        """
 
 
 class Chooser(Protocol):
@@ -126,7 +134,7 @@ class ByThreshold:
         if self._narrowing is not None:
             members = self._narrowing.passing(weights, found, members)
             found, members = _in_any(found, members)
-            least = self._narrowing.least_sizes(weights) if len(found) else None
+            least = partial(self._narrowing.least_sizes, weights)
         if isinstance(self._rule, Cluster):
             assert self._hood is not None
             t = self._maps.maps(weights, found, "t").T if self._rule.pick == "peak" else None
@@ -154,9 +162,11 @@ class ByRank:
 
     def __init__(self, rule: Strongest | PeakSphere, maps: FoldMaps, space: Space) -> None:
         self._kind, self._maps = rule.map_kind, maps
-        self._spheres = Spheres(space, rule.radius) if isinstance(rule, PeakSphere) else None
+        self._around: Callable[[int], Ints] | None = None
         n_folds = len(maps.stack.folds)
         if isinstance(rule, PeakSphere):
+            # Most folds of an exchange have one peak, and many exchanges have it again.
+            self._around = lru_cache(_SPHERES)(Spheres(space, rule.radius).around)
             self._k = [1] * n_folds
         elif rule.k:
             self._k = [rule.k] * n_folds
@@ -174,7 +184,7 @@ class ByRank:
     def members(self, weights: Floats, candidates: Ints) -> tuple[Ints, Bools]:
         """See `Chooser`."""
         found, members = leading(self._maps, weights, candidates, self._k, self._kind)
-        return (found, members) if self._spheres is None else self._around(found, members)
+        return (found, members) if self._around is None else self._spheres(found, members)
 
     def on(self, maps: FoldMaps, narrowing: Narrowing | None) -> Chooser:
         """See `Chooser`."""
@@ -182,14 +192,15 @@ class ByRank:
         other._maps = maps
         return other
 
-    def _around(self, peaks: Ints, members: Bools) -> tuple[Ints, Bools]:
+    def _spheres(self, peaks: Ints, members: Bools) -> tuple[Ints, Bools]:
         """The spheres around each fold's peak."""
-        assert self._spheres is not None
-        spheres = [self._spheres.around(peak) for peak in peaks.tolist()]
+        assert self._around is not None
+        spheres = [self._around(peak) for peak in peaks.tolist()]
         found = np.unique(np.concatenate([np.empty(0, np.intp), *spheres]))
         inside = np.zeros((len(found), members.shape[1]), bool)
-        for peak, fold in np.argwhere(members):
-            inside[np.searchsorted(found, spheres[peak]), fold] = True
+        for sphere, of_fold in zip(spheres, members, strict=True):
+            # A fold has one peak, and so one sphere.
+            inside[np.searchsorted(found, sphere)] |= of_fold
         return found, inside
 
 
@@ -197,13 +208,37 @@ def leading(
     maps: FoldMaps, weights: Floats, candidates: Ints, k: Sequence[int], kind: str
 ) -> tuple[Ints, Bools]:
     """The strongest of the candidates in each fold's map, so many as `k` says for the fold."""
-    values = maps.maps(weights, candidates, kind)
-    chosen = np.zeros((len(candidates), len(values)), bool)
-    for fold, many in enumerate(k):
-        if many:
-            chosen[:, fold] = strongest(values[fold], many)
-    some = chosen.any(axis=1)
-    return candidates[some], chosen[some]
+    chosen = strongest_of_each(maps.maps(weights, candidates, kind), k)
+    some = np.flatnonzero(chosen.any(axis=0))
+    return candidates[some], np.ascontiguousarray(chosen[:, some].T)
+
+
+def strongest_of_each(values: Floats, k: Sequence[int]) -> Bools:
+    """`masks.strongest` of each map: (n_maps, n_features) bool.
+
+    Parameters
+    ----------
+    values : (n_maps, n_features) float
+    k : sequence of int
+        How many of each map.
+
+    Examples
+    --------
+    >>> strongest_of_each(np.array([[3.0, 1.0, 2.0], [1.0, 1.0, np.nan]]), [2, 1]).tolist()
+    [[True, False, True], [True, False, False]]
+    """
+    chosen = np.zeros(values.shape, bool)
+    many = max(k)
+    alike = min(k) == many and 0 < many < values.shape[1]
+    if alike:
+        # All at once, where as many are at least the k-th value as are wanted.
+        ranked = np.where(np.isnan(values), -np.inf, values)
+        limit = np.partition(ranked, -many, axis=1)[:, -many, None]
+        np.greater_equal(ranked, limit, out=chosen)
+    for one, few in enumerate(k):
+        if few and not (alike and limit[one] > -np.inf and chosen[one].sum() == few):
+            chosen[one] = strongest(values[one], few)
+    return chosen
 
 
 @dataclass(frozen=True)
@@ -269,6 +304,10 @@ class Choosing:
     def everywhere(self, weights: Floats) -> Ints:
         """See `Chooser`."""
         return self._chooser.everywhere(weights)
+
+    def maps_at(self, weights: Floats, features: Ints, kind: str) -> Floats:
+        """(n_folds, n_some_features) the folds' maps; see `FoldMaps`."""
+        return self._maps.maps(weights, features, kind)
 
     def chosen(self, weights: Floats, candidates: Ints) -> Chosen:
         """Every fold's features, from candidates that hold all of them."""

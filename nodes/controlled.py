@@ -36,7 +36,7 @@ class Controlled:
         Of heights: "bonferroni", "benjamini-hochberg", "max-t" or "random-field"; of cluster
         sizes: "max-cluster" or "random-field". `familywise.CONTROLS` says what each rests on.
     level : float
-        Of the error: any false feature or cluster, or the share of false features; one-sided.
+        Of the error: any false voxel or cluster, or the share of false voxels; one-sided.
     n_flips, seed : int
         Of the two by sign flips: random ones, when all patterns of the people's signs are more
         than `n_flips` + 1.
@@ -44,7 +44,7 @@ class Controlled:
     Examples
     --------
     >>> Controlled("max-t").error
-    'chance of any false feature at most 0.05'
+    'chance of any false voxel at most 0.05'
     """
 
     control: str
@@ -66,9 +66,9 @@ class Controlled:
     @property
     def error(self) -> str:
         """What is held at the level, of a threshold on height."""
-        held = "chance of any false feature"
+        held = "chance of any false voxel"
         if self.control == BENJAMINI_HOCHBERG:
-            held = "expected share of false features"
+            held = "expected share of false voxels"
         return f"{held} at most {self.level:g}"
 
     def height(self, tail: str) -> str:
@@ -109,15 +109,19 @@ def critical_t(p: Floats, rows: Floats) -> Floats:
     >>> critical_t(np.array([0.01, 0.0]), np.array([[20.0, 1.0], [20.0, 20.0]])).round(4).tolist()
     [[2.5395, inf], [inf, inf]]
     """
+    if rows.shape[1] == 1:
+        some = (p > 0) & (rows[:, 0] >= 2)
+        made = np.full(rows.shape, np.inf)
+        made[some, 0] = -special.stdtrit(rows[some, 0] - 1, p[some])
+        return made
     least = int(rows.min()) if rows.size else 0
     # Few distinct counts occur, and the quantile is slow.
     counts = np.arange(least, int(rows.max()) + 1 if rows.size else 1)
     table = np.full((len(p), len(counts)), np.inf)
     enough = counts >= 2
-    some = np.ix_(p > 0, enough)
-    table[some] = -special.stdtrit(counts[enough] - 1.0, p[p > 0, None])
-    made: Floats = np.take_along_axis(table, rows.astype(np.intp) - least, axis=1)
-    return made
+    table[np.ix_(p > 0, enough)] = -special.stdtrit(counts[enough] - 1.0, p[p > 0, None])
+    found: Floats = np.take_along_axis(table, rows.astype(np.intp) - least, axis=1)
+    return found
 
 
 def step_up(t: Floats, rows: Floats, n_tests: Ints, q: float) -> Floats:

@@ -17,6 +17,7 @@ Nothing of the rows a fold holds out enters its threshold.
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
+from functools import lru_cache
 
 import numpy as np
 import numpy.typing as npt
@@ -35,18 +36,18 @@ from .controlled import (
 )
 from .errors import InputError
 from .familywise import FlipPlan
+from .foldsmooth import FoldSmoothness
 from .foldstack import FoldStack
-from .groupmaps import without_each
 from .masks import Cluster, MaskRule, Neighbourhood, Threshold, components
 from .randomfield import (
     ClusterSizes,
+    Lattice,
     corrected_p,
     height_threshold,
     lattice,
+    least_corrected_p,
     resels,
-    z_equivalent,
 )
-from .smoothness import axis_pairs, fwhm_from_sums, pair_products
 from .space import Grid, Space
 
 Floats = npt.NDArray[np.floating]
@@ -57,8 +58,8 @@ Critical = Callable[[Floats], Floats] | None
 _AT_ONCE = 32
 # Values of t nearer than this are a tie by rounding.
 _TIE = 1e-9
-# A t field in three dimensions has more than 3 degrees of freedom.
-_LEAST_ROWS = 5
+# Sizes kept.
+_SIZES = 1024
 # In place of an infinite t; no height is near it.
 _HIGHEST = 1e6
 
@@ -121,7 +122,7 @@ def controlled_maps(
         assert isinstance(rule, Cluster)
         if extent.control == MAX_CLUSTER:
             return maps, _FlippedExtent(_largest_clusters(maps, rule, extent, labels, space))
-        return maps, _FieldExtent(rule, extent, maps.stack, _voxels(space))
+        return maps, _FieldExtent(rule, extent, maps, _voxels(space))
     level = height.level
     if height.control == MAX_T:
         heights = _largest_t(made(None), height, labels)
@@ -215,7 +216,7 @@ class _FlippedExtent:
         """See `Narrowing`."""
         return above
 
-    def least_sizes(self, weights: Floats) -> Floats:
+    def least_sizes(self, weights: Floats, largest: Ints) -> Floats:
         """See `Narrowing`."""
         return self._sizes
 
@@ -237,8 +238,9 @@ class _StepUp:
         p = step_up(t, rows, self._n_tests, self._level)
         return np.ascontiguousarray((t > critical_t(p, rows)).T)
 
-    def least_sizes(self, weights: Floats) -> None:
+    def least_sizes(self, weights: Floats, largest: Ints) -> Floats:
         """See `Narrowing`."""
+        return np.zeros(len(largest))
 
 
 def _voxels(space: Space) -> Grid:
@@ -251,61 +253,22 @@ def _voxels(space: Space) -> Grid:
     return space
 
 
-class _Smoothness:
-    """How smooth the noise of each fold's selection side is, under any signs.
-
-    Products of neighbours are kept for all folds: 24 bytes a feature and fold.
-    """
-
-    def __init__(self, stack: FoldStack, space: Grid) -> None:
-        self.stack, self.rows = stack, [len(fold.selection) for fold in stack.folds]
-        if min(self.rows) < _LEAST_ROWS:
-            raise InputError(
-                "too few maps for a random field",
-                expected=f"at least {_LEAST_ROWS} on the side that chooses",
-                got=str(min(self.rows)),
-                remedy="more subjects, or folds that hold out fewer",
-            )
-        self._pairs = axis_pairs(space)
-        parts = [pair_products(stack.x[list(fold.held_out)], self._pairs) for fold in stack.folds]
-        self._products = [without_each(np.stack(along)) for along in zip(*parts, strict=True)]
-        self._squares = np.empty((len(self.rows), stack.n_features))
-        for block in stack.pieces():
-            # Without a square a feature counts for nothing.
-            complete = stack.rows(block) == np.array(self.rows)[:, None]
-            self._squares[:, block] = np.where(complete, stack.squares(block), 0)
-
-    def fwhm(self, weights: Floats) -> Floats:
-        """(n_folds, 3), in voxels."""
-        sums = np.empty(self._squares.shape)
-        for block in self.stack.pieces():
-            sums[:, block] = self.stack.sums(weights, block)
-        return np.stack(
-            [
-                fwhm_from_sums(
-                    n,
-                    sums[k],
-                    self._squares[k],
-                    [along[k] for along in self._products],
-                    self._pairs,
-                )
-                for k, n in enumerate(self.rows)
-            ]
-        )
-
-
 class _FieldHeight:
     """The random field's threshold on t (Worsley et al. 1996, HBM 4:58-73)."""
 
     def __init__(self, maps: FoldMaps, n_tests: Ints, level: float, space: Grid) -> None:
-        self._maps, self._n_tests, self._level = maps, n_tests.tolist(), level
+        self._maps, self._n_tests, self._level = maps, n_tests, level
         stack = maps.stack
-        self._smoothness = _Smoothness(stack, space)
-        if stack.present is None:
+        self._smoothness = FoldSmoothness(stack, space)
+        self._df = self._smoothness.rows - 1
+        if stack.presence is None:
             self._cells = [lattice(space)] * len(stack.folds)
         else:
             tested = stack.rows(slice(None)) >= stack.least()
             self._cells = [lattice(space.restricted(features)) for features in tested]
+        self._alike: dict[tuple[Lattice, int], list[int]] = {}
+        for k, of_fold in enumerate(zip(self._cells, self._df.tolist(), strict=True)):
+            self._alike.setdefault(of_fold, []).append(k)
 
     def passing(self, weights: Floats, features: Ints, above: Bools) -> Bools:
         """See `Narrowing`."""
@@ -313,48 +276,105 @@ class _FieldHeight:
             return above
         t = np.where(above.T, self._maps.maps(weights, features, "t"), -np.inf)
         peaks = np.minimum(t.max(axis=1), _HIGHEST)
-        fwhm = self._smoothness.fwhm(weights)
         p = np.zeros(len(peaks))
-        for k in np.flatnonzero(above.any(axis=0)).tolist():
-            df, n = self._smoothness.rows[k] - 1, self._n_tests[k]
-            region = resels(self._cells[k], fwhm[k])
+        some = np.flatnonzero(self._may_be_likely(weights, peaks) & above.any(axis=0))
+        fwhm = self._smoothness.fwhm(weights, some) if len(some) else np.empty((0, 3))
+        for k, widths in zip(some.tolist(), fwhm, strict=True):
+            df, n = int(self._df[k]), int(self._n_tests[k])
+            region = resels(self._cells[k], widths)
             # A peak that is too likely is below the height, which takes longer to find.
             if corrected_p(peaks[k], region, df, n) <= self._level * (1 + _TIE):
                 p[k] = special.stdtr(df, -height_threshold(region, df, self._level, n))
+        if not p.any():
+            return np.zeros_like(above)
         # As a p, for features where some rows lack data.
         return np.ascontiguousarray((t > critical_t(p, self._maps.stack.rows(features))).T)
 
-    def least_sizes(self, weights: Floats) -> None:
+    def _may_be_likely(self, weights: Floats, peaks: Floats) -> Bools:
+        """(n_folds,) whether a peak may reach the level: with the least resels there can be."""
+        if not self._maps.stack.turned:
+            return np.ones(len(peaks), bool)
+        p = np.zeros(len(peaks))
+        widths = self._smoothness.most(weights)
+        for (cells, df), folds in self._alike.items():
+            n_tests = self._n_tests[folds]
+            p[folds] = least_corrected_p(peaks[folds], cells, widths[folds], df, n_tests)
+        # Negated, so that what is not a number stays in.
+        return ~(p > self._level * (1 + _TIE))
+
+    def least_sizes(self, weights: Floats, largest: Ints) -> Floats:
         """See `Narrowing`."""
+        return np.zeros(len(largest))
 
 
 class _FieldExtent:
-    """Clusters of at least the random field's size (Friston et al. 1994, HBM 1:210-220)."""
+    """Clusters of at least the random field's size (see `randomfield`)."""
 
-    def __init__(self, rule: Cluster, control: Controlled, stack: FoldStack, space: Grid) -> None:
-        self._rule, self._level = rule, control.level
-        self._smoothness = _Smoothness(stack, space)
+    def __init__(self, rule: Cluster, control: Controlled, maps: FoldMaps, space: Grid) -> None:
+        stack = maps.stack
+        self._maps, self._level = maps, control.level
+        self._smoothness = FoldSmoothness(stack, space)
         n_tests = np.zeros(len(stack.folds), dtype=np.intp)
         for block in stack.pieces():
             tested = stack.rows(block) >= stack.least()
             shape = len(tested), block.stop - block.start
             n_tests += np.count_nonzero(np.broadcast_to(tested, shape), axis=1)
-        self._n_tests = n_tests.tolist()
-        if not any(len(one) for one, _ in axis_pairs(space)):
+        self._n_tests = n_tests
+        if not any(len(one) for one, _ in self._smoothness.pairs):
             raise InputError("no clusters in a region without neighbouring voxels")
+        self._df = self._smoothness.rows - 1
+        self._different = np.unique(self._df).tolist()
+        self._t = np.broadcast_to(rule.critical(self._df + 1), self._df.shape)
+        self._kept = lru_cache(_SIZES)(self._critical)
 
     def passing(self, weights: Floats, features: Ints, above: Bools) -> Bools:
         """See `Narrowing`."""
         return above
 
-    def least_sizes(self, weights: Floats) -> Floats:
+    def least_sizes(self, weights: Floats, largest: Ints) -> Floats:
         """See `Narrowing`."""
         sizes = np.full(len(self._n_tests), np.inf)
-        for k, fwhm in enumerate(self._smoothness.fwhm(weights)):
-            # Neighbours that never vary, or never differ, say nothing of sizes: none is found.
-            if self._n_tests[k] and np.isfinite(fwhm).any() and not np.isinf(fwhm).any():
-                t = float(self._rule.critical(self._smoothness.rows[k]))
-                z = z_equivalent(t, self._smoothness.rows[k] - 1)
-                widths = (float(fwhm[0]), float(fwhm[1]), float(fwhm[2]))
-                sizes[k] = ClusterSizes(self._n_tests[k], widths, z).critical_size(self._level)
+        some = np.flatnonzero(self._may_be_large(weights, largest))
+        if len(some):
+            for k, fwhm in zip(some.tolist(), self._smoothness.fwhm(weights, some), strict=True):
+                if self._n_tests[k] and _has_sizes(fwhm):
+                    sizes[k] = self._critical(k, (fwhm[0], fwhm[1], fwhm[2]))
         return sizes
+
+    def _critical(self, k: int, widths: tuple[float, float, float]) -> float:
+        """The size of a fold's clusters."""
+        n, t, df = int(self._n_tests[k]), float(self._t[k]), float(self._df[k])
+        return ClusterSizes(n, widths, t, df).critical_size(self._level)
+
+    def _may_be_large(self, weights: Floats, largest: Ints) -> Bools:
+        """(n_folds,) whether the largest cluster of a fold may be kept, by what the FWHM can be."""
+        may = largest > 0
+        if not self._maps.stack.turned or not may.any():
+            return may
+        low, high = self._smoothness.least(weights), self._smoothness.most(weights)
+        for df in self._different:
+            some = np.flatnonzero(may & (self._df == df))
+            if not len(some):
+                continue
+            # The fold with the least to search. Sizes rise with the FWHM, and then fall: they are
+            # least at an end of what it can be.
+            k = int(some[self._n_tests[some].argmin()])
+            ends = (
+                _rounded(low[some].min(axis=0), np.floor),
+                _rounded(high[some].max(axis=0), np.ceil),
+            )
+            if all(_has_sizes(fwhm) and np.nanprod(fwhm) > 0 for fwhm in ends):
+                may[some] = largest[some] >= min(self._kept(k, fwhm) for fwhm in ends)
+        return may
+
+
+def _rounded(fwhm: Floats, to: Callable[[Floats], Floats]) -> tuple[float, float, float]:
+    """Widths up or down to a hundredth of themselves, so that few differ from flip to flip."""
+    with np.errstate(divide="ignore"):
+        x, y, z = np.exp(to(np.log(fwhm) * 100) / 100).tolist()
+    return x, y, z
+
+
+def _has_sizes(fwhm: npt.ArrayLike) -> bool:
+    """Whether clusters have a size: not where neighbours never vary, or never differ."""
+    return bool(np.isfinite(fwhm).any() and not np.isinf(fwhm).any())

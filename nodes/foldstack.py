@@ -26,6 +26,44 @@ BLOCK, _SMALL_BLOCK, _BLOCK_NUMBERS = 8192, 1024, 2**19
 # Small enough for a BLAS to stay on one thread and in its cache: the product is soon done, and
 # waiting for other threads is what would take long.
 _SCREEN_BLOCK = 1024
+# With fewer exchanges than these, blocks are larger.
+_FULL = 16
+# Bytes of a stack of which copies are made that are quicker to read; of a larger one there is
+# no room for another.
+_COPIED = 2**27
+
+
+class Presence:
+    """Where a stack has data, a bit each: a large study has no room for bytes.
+
+    Examples
+    --------
+    >>> there = Presence(3, 2)
+    >>> there.put(1, np.array([True, False]))
+    >>> there.at(slice(None)).tolist()
+    [[True, True], [True, False], [True, True]]
+    """
+
+    def __init__(self, n_rows: int, n_features: int) -> None:
+        self._n_rows = n_rows
+        self._bits = np.full((-(-n_rows // 8), n_features), 255, np.uint8)
+
+    @classmethod
+    def of(cls, present: Bools) -> Presence:
+        """From (n_rows, n_features) bool."""
+        made = cls(*present.shape)
+        for row, there in enumerate(present):
+            made.put(row, there)
+        return made
+
+    def put(self, row: int, present: Bools) -> None:
+        """Say where a row has data: (n_features,). So far it has it everywhere."""
+        self._bits[row // 8] &= ~((~present).astype(np.uint8) << (7 - row % 8))
+
+    def at(self, features: Ints | slice, rows: slice = slice(None)) -> Bools:
+        """(n_some_rows, n_some_features) where there is data."""
+        bits = np.unpackbits(self._bits[:, features], axis=0, count=self._n_rows)
+        return bits.view(np.bool_)[rows]
 
 
 class FoldStack:
@@ -35,7 +73,7 @@ class FoldStack:
     ----------
     x : (n_rows, n_features) float
         Zero where data is missing; high in the direction of selection.
-    present : (n_rows, n_features) bool, or None for everywhere
+    presence : Presence, or None for data everywhere
     folds : sequence of Fold
         Their held-out rows partition the rows.
     missing : Missing
@@ -50,9 +88,9 @@ class FoldStack:
     """
 
     def __init__(
-        self, x: Floats, present: Bools | None, folds: Sequence[Fold], missing: Missing
+        self, x: Floats, presence: Presence | None, folds: Sequence[Fold], missing: Missing
     ) -> None:
-        self.x, self.present, self.folds, self.missing = x, present, folds, missing
+        self.x, self.presence, self.folds, self.missing = x, presence, folds, missing
         self.n_rows, self.n_features = x.shape
         self._least: dict[str, Ints] = {}
         self._single: Floats | None = None
@@ -61,33 +99,39 @@ class FoldStack:
     @property
     def turned(self) -> bool:
         """Whether the stack was made ready for many exchanges (see `turn`)."""
-        return self._by_feature is not None
+        return self._single is not None
 
     def turn(self) -> None:
         """Make the stack ready for many exchanges; later calls do nothing."""
-        if self._by_feature is None:
-            with np.errstate(over="ignore"):
-                self._single = self.x.astype(np.float32, copy=False)
-            self._by_feature = np.ascontiguousarray(self.x.T)
+        if self._single is None:
+            self._single = self.x
+            if self.x.nbytes <= _COPIED:
+                self._single = _as_single(self.x)
+                self._by_feature = np.ascontiguousarray(self.x.T)
+
+    @property
+    def piece(self) -> int:
+        """How many features a block has."""
+        fitting: int = max(_SMALL_BLOCK, _BLOCK_NUMBERS // self.n_rows)
+        return min(BLOCK, fitting)
 
     def pieces(self) -> list[slice]:
         """The features in blocks."""
-        size = min(BLOCK, max(_SMALL_BLOCK, _BLOCK_NUMBERS // self.n_rows))
         return [
-            slice(start, min(start + size, self.n_features))
-            for start in range(0, self.n_features, size)
+            slice(start, min(start + self.piece, self.n_features))
+            for start in range(0, self.n_features, self.piece)
         ]
 
-    def columns(self, features: Ints | slice) -> Floats:
-        """(n_rows, n_some_features) of the stack."""
+    def columns(self, features: Ints | slice, rows: slice = slice(None)) -> Floats:
+        """(n_some_rows, n_some_features) of the stack."""
         if self._by_feature is None or isinstance(features, slice):
-            return self.x[:, features]
+            return self.x[rows, features]
         # Gathered by feature: whole cache lines.
-        return np.take(self._by_feature, features, axis=0).T
+        return np.take(self._by_feature, features, axis=0).T[rows]
 
-    def there(self, features: Ints | slice) -> Bools | None:
-        """(n_rows, n_some_features) where there is data, or None for everywhere."""
-        present = None if self.present is None else self.present[:, features]
+    def there(self, features: Ints | slice, rows: slice = slice(None)) -> Bools | None:
+        """(n_some_rows, n_some_features) where there is data, or None for everywhere."""
+        present = None if self.presence is None else self.presence.at(features, rows)
         # One missing value anywhere must not make all features slow.
         return None if present is None or present.all() else present
 
@@ -145,11 +189,32 @@ class FoldStack:
         assert self._single is not None
         yield from blocked_products(weights.astype(np.float32), self._single)
 
+    def side_sums(self, weights: Floats) -> Iterator[tuple[slice, list[Floats]]]:
+        """Blocks of features with their float32 sums over each fold's selection side.
+
+        For few folds: a product for each fold's rows costs no more than one for all rows.
+
+        Parameters
+        ----------
+        weights : (n_exchanges, n_rows)
+
+        Yields
+        ------
+        the block, and for each fold (n_exchanges, n_features)
+        """
+        self.turn()
+        assert self._single is not None
+        rows = [list(fold.held_out) for fold in self.folds]
+        signs = [np.ascontiguousarray(weights[:, held], np.float32) for held in rows]
+        for block in _screen_blocks(self.n_features, len(weights)):
+            x = _as_single(self._single[:, block])
+            with np.errstate(over="ignore", invalid="ignore"):
+                held = [s @ x[some] for s, some in zip(signs, rows, strict=True)]
+                total = np.sum(held, axis=0, dtype=np.float32)
+                yield block, [total - part for part in held]
+
     def may_reach(self, weights: Floats, lowest: Floats) -> list[Ints]:
         """For each row of weights, features where some fold's sum is not below its lowest.
-
-        For few folds: a product for each fold's rows costs no more than one for all rows, and
-        leaves the sums of all selection sides, rounded to float32.
 
         Parameters
         ----------
@@ -157,33 +222,35 @@ class FoldStack:
         lowest : (n_folds, n_features) float32
             NaN keeps a feature in.
         """
-        self.turn()
-        assert self._single is not None
-        single, rows = self._single, [list(fold.held_out) for fold in self.folds]
-        signs = [np.ascontiguousarray(weights[:, held], np.float32) for held in rows]
-        of_fold = [np.ascontiguousarray(single[held]) for held in rows]
 
         def pieces() -> Iterator[tuple[slice, Bools]]:
-            for start in range(0, self.n_features, _SCREEN_BLOCK):
-                block = slice(start, start + _SCREEN_BLOCK)
-                with np.errstate(over="ignore", invalid="ignore"):
-                    held = [s @ x[:, block] for s, x in zip(signs, of_fold, strict=True)]
-                    total = np.sum(held, axis=0, dtype=np.float32)
-                    may = np.zeros(total.shape, bool)
-                    for k, part in enumerate(held):
-                        # Negated, so that what is not a number stays in.
-                        may |= ~(total - part <= lowest[k, block])
+            for block, sums in self.side_sums(weights):
+                may = np.zeros(sums[0].shape, bool)
+                for of_fold, least in zip(sums, lowest[:, block], strict=True):
+                    # Negated, so that what is not a number stays in.
+                    may |= ~(of_fold <= least)
                 yield block, may
 
         return gathered(pieces(), len(weights))
 
 
+def _as_single(x: Floats) -> Floats:
+    """In float32: what does not fit is infinite."""
+    with np.errstate(over="ignore"):
+        return x.astype(np.float32, copy=False)
+
+
+def _screen_blocks(n_features: int, n_exchanges: int) -> Iterator[slice]:
+    size = _SCREEN_BLOCK * max(1, _FULL // n_exchanges)
+    for start in range(0, n_features, size):
+        yield slice(start, start + size)
+
+
 def blocked_products(weights: Floats, rows: Floats) -> Iterator[tuple[slice, Floats]]:
-    """Blocks of features with weights @ rows there; both float32."""
-    for start in range(0, rows.shape[1], _SCREEN_BLOCK):
-        block = slice(start, start + _SCREEN_BLOCK)
+    """Blocks of features with weights @ rows there, in float32."""
+    for block in _screen_blocks(rows.shape[1], len(weights)):
         with np.errstate(over="ignore", invalid="ignore"):
-            yield block, weights @ rows[:, block]
+            yield block, weights @ _as_single(rows[:, block])
 
 
 def by_exchange(products: Iterator[tuple[slice, Floats]], lowest: Floats, n: int) -> list[Ints]:

@@ -127,11 +127,10 @@ def without_each(parts: Floats) -> Floats:
     >>> without_each(np.array([[1.0], [2.0], [np.inf]])).ravel().tolist()
     [inf, inf, 3.0]
     """
-    out = np.zeros_like(parts)
-    back = np.zeros_like(parts[0])
+    out = np.empty_like(parts)
+    out[-1] = 0
     for k in range(len(parts) - 2, -1, -1):
-        back += parts[k + 1]
-        out[k] = back
+        np.add(out[k + 1], parts[k + 1], out=out[k])
     front = np.zeros_like(parts[0])
     for k in range(1, len(parts)):
         front += parts[k - 1]

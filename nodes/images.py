@@ -37,6 +37,8 @@ _SAME_MM = 1e-3
 TO_GRID = "resample it to that grid, or have it done: regrid = true"
 # Masks are long runs of one value: the quickest level already packs them to a hundredth.
 _PACK_LEVEL = 1
+# A file is unpacked in pieces of so many bytes; zlib's word for a file with a gzip header.
+_PIECE, _GZIP = 2**16, zlib.MAX_WBITS | 16
 
 
 @dataclass(frozen=True)
@@ -177,13 +179,46 @@ def read_map(path: str | Path, volume: int | None = None) -> tuple[Floats, Geome
         )
     check_real(path, image)
     try:
-        stored = image.dataobj
         # One volume is sliced from the file, not from the whole file's data.
-        data = np.asarray(stored if total == 1 else stored[:, :, :, volume])
+        data = _whole(image.dataobj) if total == 1 else np.asarray(image.dataobj[:, :, :, volume])
         data = data.reshape(geometry.shape)
     except (EOFError, zlib.error, OSError, ValueError, MemoryError) as error:
         raise _unreadable(Path(path), error) from error
     return data.astype(_read_as(image), copy=False), geometry
+
+
+def _whole(stored: Any) -> npt.NDArray[Any]:
+    """All of an image's data."""
+    path = Path(stored.file_like)
+    if path.suffix != ".gz" or (stored.slope, stored.inter) != (1, 0):
+        return np.asarray(stored)
+    file = _unpacked(path, stored.offset + int(np.prod(stored.shape)) * stored.dtype.itemsize)
+    data: npt.NDArray[Any] = file[stored.offset :].view(stored.dtype)
+    return data.reshape(stored.shape, order="F")
+
+
+def _unpacked(path: Path, size: int) -> npt.NDArray[np.uint8]:
+    """The first bytes of what a file packs.
+
+    Piece by piece into the memory that is handed out: two large pieces of new memory for each
+    map would take as long as the unpacking.
+    """
+    made, done = np.empty(size, np.uint8), 0
+    unpacker = zlib.decompressobj(_GZIP)
+    with path.open("rb", buffering=0) as stream:
+        packed = stream.read(_PIECE)
+        # To the end, which compares the checksum.
+        while packed and not (done == size and unpacker.eof):
+            if unpacker.eof:  # a file may hold one packed part after another
+                unpacker = zlib.decompressobj(_GZIP)
+            piece = np.frombuffer(unpacker.decompress(packed, _PIECE), np.uint8)[: size - done]
+            made[done : done + len(piece)] = piece
+            done += len(piece)
+            packed = unpacker.unused_data if unpacker.eof else unpacker.unconsumed_tail
+            packed = packed or stream.read(_PIECE)
+    if done < size or not unpacker.eof:
+        raise EOFError(f"Expected {size} bytes and the end of the file, got {done} bytes")
+    return made
 
 
 def check_real(path: str | Path, image: Any) -> None:

@@ -9,6 +9,7 @@ one map, all folds of a scheme, and every flip of a test. The other rules rank t
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass, field
 from typing import Protocol
 
@@ -113,12 +114,12 @@ class Threshold(_Forming):
     >>> Threshold(p=0.01).critical(20).round(4).item()
     2.5395
     >>> print(Threshold(control=Controlled("bonferroni", 0.05)).describe())
-    all features with t above Bonferroni's threshold, chance of any false feature at most 0.05
+    all voxels with t above Bonferroni's threshold, chance of any false voxel at most 0.05
     """
 
     def describe(self, tail: str = "positive") -> str:
         """The rule in words."""
-        return f"all features with {self._threshold(tail)}"
+        return f"all voxels with {self._threshold(tail)}"
 
 
 @dataclass(frozen=True)
@@ -182,11 +183,11 @@ class Cluster(_Forming):
             "nearest": f"the cluster nearest to {self.near} mm",
             "all": "every cluster",
         }[self.pick]
-        sizes = f"at least {self.min_size} features"
+        sizes = f"at least {self.min_size} voxels"
         if self.extent is not None:
             sizes += f", {self.extent.extent()}"
         return (
-            f"{which} of features with {self._threshold(tail)} "
+            f"{which} of voxels with {self._threshold(tail)} "
             f"(connectivity {self.connectivity}, {sizes})"
         )
 
@@ -217,7 +218,7 @@ class Strongest:
     def __post_init__(self) -> None:
         if (self.k == 0) == (self.fraction == 0):
             raise InputError(
-                "the strongest features need exactly one of k and fraction",
+                "the strongest voxels need exactly one of k and fraction",
                 got=f"k {self.k}, fraction {self.fraction}",
             )
         if self.k < 0:
@@ -235,7 +236,7 @@ class Strongest:
 
     def describe(self, tail: str = "positive") -> str:
         """The rule in words."""
-        many = f"{self.k} features" if self.k else f"{100 * self.fraction:g} % of the features"
+        many = f"{self.k} voxels" if self.k else f"{100 * self.fraction:g} % of the voxels"
         return f"the {many} with the {_extreme(tail)} group {self.map_kind}"
 
 
@@ -263,7 +264,7 @@ class PeakSphere:
     def describe(self, tail: str = "positive") -> str:
         """The rule in words."""
         return (
-            f"the features within {self.radius:g} mm of the one with the {_extreme(tail)} "
+            f"the voxels within {self.radius:g} mm of the one with the {_extreme(tail)} "
             f"group {self.map_kind}"
         )
 
@@ -369,7 +370,7 @@ def keep_clusters(
     hood: Neighbourhood,
     t: Floats | None,
     distance: Floats | None,
-    least: Floats | None = None,
+    least: Callable[[Ints], Floats] | None = None,
 ) -> Bools:
     """Members that the cluster rule keeps.
 
@@ -386,8 +387,9 @@ def keep_clusters(
         Needed for ``pick = "peak"``.
     distance : (n_features,) float
         From the rule's coordinate, in mm; needed for ``pick = "nearest"``.
-    least : (n_maps,) float, optional
-        The size that a cluster of each map must have, besides the rule's `min_size`.
+    least : callable, optional
+        The sizes that a cluster of each map must have, besides the rule's `min_size`, given the
+        size of the largest in each; (n_maps,) both.
 
     Returns
     -------
@@ -402,7 +404,9 @@ def keep_clusters(
     owner[cluster] = of_map
     big = size >= rule.min_size
     if least is not None:
-        big &= size >= least[owner]
+        largest = np.zeros(members.shape[1], dtype=np.intp)
+        np.maximum.at(largest, owner, size)
+        big &= size >= least(largest)[owner]
     if rule.pick == "all":
         kept = big
     else:
@@ -448,6 +452,25 @@ def strongest(values: Floats, k: int) -> Bools:
     out[values > limit] = True
     out[np.flatnonzero(values == limit)[: k - np.count_nonzero(out)]] = True
     return out
+
+
+def highest(values: Floats, inside: Bools) -> int | None:
+    """The feature with the highest value in a mask, the first of equals; None without any value.
+
+    Parameters
+    ----------
+    values : (n_features,) float
+        NaN where undefined.
+    inside : (n_features,) bool
+
+    Examples
+    --------
+    >>> values = np.array([4.0, np.nan, 2.0, 3.0, 3.0])
+    >>> highest(values, values < 4), highest(values, np.isnan(values))
+    (3, None)
+    """
+    usable = np.flatnonzero(inside & ~np.isnan(values))
+    return int(usable[values[usable].argmax()]) if len(usable) else None
 
 
 def choose(values: Floats, rule: MaskRule, space: Space, n: npt.ArrayLike | None = None) -> Bools:

@@ -25,10 +25,10 @@ from .exchange import FlipTest, tested_by
 from .foldcontrol import check_with_model, controlled_maps
 from .foldnull import mean_dice
 from .folds import LeaveOneOut, Scheme
-from .foldstack import FoldStack
+from .foldstack import BLOCK, FoldStack, Presence
 from .groupmaps import Missing
-from .masks import MaskRule
-from .models import Model, compared
+from .masks import MaskRule, highest
+from .models import Labelled, Model, compared
 from .roi import Interval, block_values
 from .space import Space
 
@@ -41,6 +41,8 @@ TAILS = ("positive", "negative")
 # Summaries of a row that change their sign with it, and that need nothing but the row.
 READ_BY = ("mean", "median", "component")
 _AT_ONCE = 32
+# Numbers read together.
+_READ_AT_ONCE = 2**22
 
 
 @dataclass(frozen=True)
@@ -124,6 +126,10 @@ class Procedure:
     missing: Missing = field(default_factory=Missing)
     summary: str = "mean"
     model: Model | None = None
+
+    def score_columns(self, labels: Sequence[str]) -> list[tuple[str, Sequence[Labelled]]]:
+        """What the model was told of whom (see `scoreunits`); nothing without a model."""
+        return [] if self.model is None else self.model.score_columns(labels)
 
     def __post_init__(self) -> None:
         for name, allowed in (("tail", TAILS), ("on_empty", ON_EMPTY), ("summary", READ_BY)):
@@ -225,13 +231,16 @@ class Prepared:
         self._sign = -1.0 if procedure.tail == "negative" else 1.0
 
         def ready(stack: Floats) -> FoldStack:
-            x, present = _taken(_sorted(stack, self._order, copy), procedure.missing)
-            return FoldStack(-x if self._sign < 0 else x, present, folds, procedure.missing)
+            x, presence = _taken(_sorted(stack, self._order, copy), procedure.missing)
+            if self._sign < 0:
+                np.negative(x, out=x)
+            return FoldStack(x, presence, folds, procedure.missing)
 
         if tested is not None and tested.shape != effects.shape:
             raise ValueError(f"tested maps of {tested.shape} for effects of {effects.shape}")
         self._stack = ready(effects)
-        self._read_stack = self._stack if tested is None else ready(tested)
+        # The same array is made ready once: without a copy it has been changed.
+        self._read_stack = self._stack if tested is None or tested is effects else ready(tested)
         self._blocks = [[row] for row in range(len(order))]
         if procedure.summary == "component":
             people = range(len(self.people))
@@ -252,12 +261,23 @@ class Prepared:
         """Each sorted row's summary in its own fold's mask, and the coverage."""
         values, coverage = np.zeros(len(weights)), np.zeros(len(weights))
         of_fold = np.ascontiguousarray(chosen.members.T)
-        few, there = self._read_stack.columns(chosen.features), self._read_stack.present
+        if self.procedure.summary == "mean":
+            size = max(1, _READ_AT_ONCE // max(1, len(chosen.features)))
+            for start in range(0, len(weights), size):
+                part = slice(start, min(start + size, len(weights)))
+                values[part], coverage[part] = row_means(
+                    self._read_stack.columns(chosen.features, part),
+                    of_fold[self._fold_of_row[part]],
+                    self._read_stack.there(chosen.features, part),
+                )
+            return values * weights if self._compared.signed else values, coverage
+        few = self._read_stack.columns(chosen.features)
+        there = self._read_stack.there(chosen.features)
         for rows in self._blocks:
             inside = of_fold[self._fold_of_row[rows[0]]]
             present = None
             if there is not None:
-                present = np.stack([there[row][chosen.features[inside]] for row in rows])
+                present = np.stack([there[row][inside] for row in rows])
             values[rows], coverage[rows] = block_values(
                 np.stack([few[row][inside] for row in rows]), present, self.procedure.summary
             )
@@ -278,11 +298,12 @@ class Prepared:
         if self._read_stack is not self._stack:
             stacks.append(self._read_stack)
         if self._residuals is None:
-            self._residuals = [Residuals(s.x, s.present, nuisance) for s in stacks]
-        made = [
-            FoldStack(*rest.exchanged(exchange), stack.folds, stack.missing)
-            for rest, stack in zip(self._residuals, stacks, strict=True)
-        ]
+            self._residuals = [Residuals(s.x, s.there(slice(None)), nuisance) for s in stacks]
+        made = []
+        for rest, stack in zip(self._residuals, stacks, strict=True):
+            x, present = rest.exchanged(exchange)
+            presence = None if present is None else Presence.of(present)
+            made.append(FoldStack(x, presence, stack.folds, stack.missing))
         other = copied(self)
         other._stack, other._read_stack = made[0], made[-1]
         other._choosing = self._choosing.on(*self._maps_of(made[0]))
@@ -341,6 +362,34 @@ class Prepared:
             mask[chosen.features[chosen.members[:, fold]]] = True
             masks.append(mask)
         return masks
+
+    def peaks(self, masks: Sequence[Bools]) -> list[tuple[int, float] | None]:
+        """The highest feature of every fold's own map in its mask, and the value there.
+
+        The map is that of the side that chooses (t, or the mean where the rule reads means),
+        highest in the direction of selection; the first of equal features. None where a mask is
+        empty, or its map has no value in it.
+
+        Parameters
+        ----------
+        masks : sequence of (n_features,) bool
+            As of `masks`.
+        """
+        weights, kind = self._weights(self._compared.observed()), self.procedure.rule.map_kind
+        some = np.zeros(self.space.n_features, bool)
+        for mask in masks:
+            some |= mask
+        found: list[tuple[int, float] | None] = [None] * len(masks)
+        chosen = np.flatnonzero(some)
+        # A block at a time, so that no fold's whole map is ever held.
+        for start in range(0, len(chosen), BLOCK):
+            block = chosen[start : start + BLOCK]
+            maps = self._choosing.maps_at(weights, block, kind)
+            for k, mask in enumerate(masks):
+                best, there = found[k], highest(maps[k], mask[block])
+                if there is not None and (best is None or maps[k, there] > best[1]):
+                    found[k] = int(block[there]), float(maps[k, there])
+        return [None if one is None else (one[0], self._sign * one[1]) for one in found]
 
     def per_person(self, values: Sequence[float]) -> Floats:
         """Row values (rows in their given order) averaged over each person's rows."""
@@ -487,22 +536,56 @@ class Prepared:
         """A stack as it was given: rows in their order, signs as they were, NaN where missing."""
         back = np.argsort(self._order)
         x: Floats = self._sign * stack.x[back]
-        if stack.present is not None:
-            x[~stack.present[back]] = np.nan
+        there = stack.there(slice(None))
+        if there is not None:
+            x[~there[back]] = np.nan
         return x
 
 
-def _taken(stack: Floats, missing: Missing) -> tuple[Floats, Bools | None]:
+def row_means(maps: Floats, inside: Bools, present: Bools | None = None) -> tuple[Floats, Floats]:
+    """`roi.region_mean` of each row in a region of its own, to the last bit.
+
+    Parameters
+    ----------
+    maps : (n_rows, n_features) float
+    inside : (n_rows, n_features) bool
+        The region of each row.
+    present : (n_rows, n_features) bool, optional
+
+    Returns
+    -------
+    means, coverage : (n_rows,) float64
+
+    Examples
+    --------
+    >>> maps = np.array([[1.0, 3.0, 8.0], [2.0, 0.0, 4.0]])
+    >>> row_means(maps, np.array([[True, True, False], [False, False, False]]))[0].tolist()
+    [2.0, 0.0]
+    """
+    size = inside.sum(axis=1)
+    if present is not None:
+        inside = inside & present
+    # A zero before each row: its sum starts from it, as that of an array does, and none is empty.
+    padded = np.zeros((len(maps), maps.shape[1] + 1))
+    padded[:, 1:] = maps
+    which = np.ones(padded.shape, bool)
+    which[:, 1:] = inside
+    many = which.sum(axis=1)
+    sums = np.add.reduceat(padded[which], np.cumsum(many) - many)
+    return sums / np.maximum(many - 1, 1), (many - 1) / np.maximum(size, 1)
+
+
+def _taken(stack: Floats, missing: Missing) -> tuple[Floats, Presence | None]:
     """As `groupmaps.filled`, in place, row by row: a large study has no room for another."""
-    present = None
+    presence = None
     for row, effects in enumerate(stack):
         has_data = missing.present(effects)
         if not has_data.all():
-            if present is None:
-                present = np.ones(stack.shape, bool)
-            present[row] = has_data
+            if presence is None:
+                presence = Presence(*stack.shape)
+            presence.put(row, has_data)
             effects[~has_data] = 0
-    return stack, present
+    return stack, presence
 
 
 def _sorted(stack: Floats, order: Ints, copy: bool) -> Floats:
@@ -512,4 +595,4 @@ def _sorted(stack: Floats, order: Ints, copy: bool) -> Floats:
 
 def held_out_rows(scheme: Scheme, labels: Sequence[str]) -> list[tuple[int, ...]]:
     """The rows each fold holds out: the touch rule of every node that leaves some out."""
-    return [fold.held_out for fold in scheme.folds(labels)]
+    return [held for _, held in scheme.held_out(labels)]

@@ -347,7 +347,9 @@ def flip_interval(values: Floats, abs_t_quantile: float, level: float = 0.95) ->
         The `level` quantile of |t| under flips of the whole procedure.
     """
     mean = float(values.mean())
-    half = float(values.std(ddof=1)) / float(np.sqrt(len(values))) * abs_t_quantile
+    error = float(values.std(ddof=1)) / float(np.sqrt(len(values)))
+    # Values that do not vary say nothing where |t| has no bound.
+    half = error * abs_t_quantile if error or np.isfinite(abs_t_quantile) else np.inf
     return Interval(
         mean - half,
         mean + half,

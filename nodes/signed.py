@@ -20,8 +20,8 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from .foldstack import BLOCK, FoldStack, by_exchange
-from .groupmaps import bound_on_sum, fold_sums, leave_out_maps
+from .foldstack import FoldStack, by_exchange
+from .groupmaps import bound_on_sum, fold_sums, t_from_sums
 
 Floats = npt.NDArray[np.floating]
 Ints = npt.NDArray[np.integer]
@@ -31,6 +31,8 @@ Bools = npt.NDArray[np.bool_]
 _SINGLE = 1e-5
 # So many folds at the most have a screen of their own each: with more, one for all is as tight.
 _FEW_FOLDS = 12
+# So many numbers that flips need again are kept at the most; of more, each flip makes its own.
+_KEPT = 2**24
 # The same of a float64 sum over rows.
 _DOUBLE = 1e-9
 
@@ -41,15 +43,15 @@ class _Bounds:
 
     Parameters
     ----------
-    each : (n_features, n_folds) float64
-        What each fold's sum must exceed.
+    each : (n_features, n_folds) float64, or None
+        What each fold's sum must exceed; of many features and folds there is no room for it.
     lowest : (n_features,) float32
         What the sum over all rows must exceed for any fold to pass; NaN where unknown.
     by_fold : (n_folds, n_features) float32, or None
         With few folds: what each fold's own float32 sum must exceed; NaN where unknown.
     """
 
-    each: Floats
+    each: Floats | None
     lowest: Floats
     by_fold: Floats | None
 
@@ -58,13 +60,14 @@ class _Bounds:
 class _Ranks:
     """What makes flips of a rank fast: no fold can give a feature more than sum x scale + reach.
 
-    Here the sum is that over all rows, in float32, and what a fold gives is S / sqrt(n Q), which
-    is t / sqrt(n - 1 + t^2), or the mean, according to the map.
+    Here the sum is that over all rows, in float32, or with few folds the fold's own; and what a
+    fold gives is S / sqrt(n Q), which is t / sqrt(n - 1 + t^2), or the mean, according to the map.
 
     Parameters
     ----------
-    scale, reach : (n_features,) float32
-        Reach is NaN where unknown; both are 0 where no fold's map can be above 0.
+    scale : (1, n_features) float32, or (n_folds, n_features) with few folds
+    reach : (n_features,) float32
+        NaN where unknown; with the scale it is 0 where no fold's map can be above 0.
     most : float
         The most degrees of freedom of any fold; infinite for the mean.
     """
@@ -94,6 +97,7 @@ class SignedMaps:
         self._critical = critical
         self._bounds: _Bounds | None = None
         self._ranks: dict[str, _Ranks] = {}
+        self._kept_squares: Floats | None = None
 
     def counts(self, kind: str) -> Ints:
         """(n_folds,) features with a value in each fold's map; no signs change it."""
@@ -122,10 +126,11 @@ class SignedMaps:
     def _thresholds(self) -> _Bounds:
         """What makes flips of a threshold fast, built when the first flip asks for it."""
         if self._bounds is None:
-            each = np.empty((self.stack.n_features, len(self.stack.folds)))
-            lowest = np.empty(len(each), np.float32)
-            few = len(self.stack.folds) <= _FEW_FOLDS
-            by_fold = np.empty(each.shape[::-1], np.float32) if few else None
+            shape = self.stack.n_features, len(self.stack.folds)
+            each = np.empty(shape) if shape[0] * shape[1] <= _KEPT else None
+            lowest = np.empty(shape[0], np.float32)
+            few = shape[1] <= _FEW_FOLDS
+            by_fold = np.empty(shape[::-1], np.float32) if few else None
             for block in self.stack.pieces():
                 bound = self._bound_of(block)
                 reach, slack, known = self.stack.most_off(block)
@@ -134,25 +139,30 @@ class SignedMaps:
                     lowest[block] = np.where(known, (bound - reach).min(axis=0) - slack, np.nan)
                     if by_fold is not None:
                         by_fold[:, block] = np.where(known, bound - slack, np.nan)
-                each[block] = bound.T
+                if each is not None:
+                    each[block] = bound.T
             self._bounds = _Bounds(each, lowest, by_fold)
         return self._bounds
 
     def _ranking(self, kind: str) -> _Ranks:
         """What makes flips of a rank fast, built when the first flip asks for it."""
         if kind not in self._ranks:
-            scale, reach = np.empty((2, self.stack.n_features), np.float32)
+            few = len(self.stack.folds) <= _FEW_FOLDS
+            reach = np.empty(self.stack.n_features, np.float32)
+            scale = np.empty((len(self.stack.folds) if few else 1, len(reach)), np.float32)
             for block in self.stack.pieces():
                 enough, n = self._usable(block, kind)
                 off, slack, known = self.stack.most_off(block)
                 with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
                     width = np.sqrt(n * self.stack.squares(block)) if kind == "t" else n
-                    by = 1 / np.where(enough, width, np.inf).min(axis=0)
-                    far = (off.max(axis=0) + slack) * by * (1 + _SINGLE)
+                    each = 1 / np.where(enough, width, np.inf)
+                    by = each.max(axis=0)
+                    off_side = 0 if few else off.max(axis=0)
+                    far = (off_side + slack) * by * (1 + _SINGLE)
                     known &= np.isfinite(by.astype(np.float32)) & np.isfinite(far)
                     far[~known] = np.nan
                 nothing = ~enough.any(axis=0) | (off == 0).all(axis=0)
-                scale[block] = np.where(known & ~nothing, by, 0)
+                scale[:, block] = np.where(known & ~nothing, each if few else by, 0)
                 reach[block] = np.where(nothing, 0, far)
             most = max(len(fold.selection) for fold in self.stack.folds) - 1
             self._ranks[kind] = _Ranks(scale, reach, most if kind == "t" else np.inf)
@@ -175,8 +185,14 @@ class SignedMaps:
             return [everything] * len(signs)
         ranks, scores = self._ranking(kind), np.empty((len(signs), n_features), np.float32)
         with np.errstate(over="ignore", invalid="ignore"):
-            for block, sums in self.stack.all_sums(signs):
-                np.multiply(sums, ranks.scale[block], out=scores[:, block])
+            if len(ranks.scale) == 1:
+                for block, sums in self.stack.all_sums(signs):
+                    np.multiply(sums, ranks.scale[0, block], out=scores[:, block])
+            else:
+                for block, of_folds in self.stack.side_sums(signs):
+                    by = ranks.scale[:, block]
+                    products = [s * scale for s, scale in zip(of_folds, by, strict=True)]
+                    np.max(products, axis=0, out=scores[:, block])
         found: list[Ints] = []
         for row, score in zip(signs, scores, strict=True):
             strong = np.sort(np.argpartition(score, -looked_at)[-looked_at:])
@@ -216,25 +232,44 @@ class SignedMaps:
             out = np.zeros((features.stop - features.start, len(self.stack.folds)), bool)
             out[may - features.start] = self._bound_of(may).T < self.stack.sums(signs, may).T
             return out
-        if self._bounds is None:
-            bounds = self._bound_of(features).T
-        else:
-            bounds = np.take(self._bounds.each, features, axis=0)
-        above: Bools = bounds < self.stack.sums(signs, features).T
+        above = np.empty((len(features), len(self.stack.folds)), bool)
+        for start in range(0, len(features), self.stack.piece):
+            some = features[start : start + self.stack.piece]
+            if self._bounds is None or self._bounds.each is None:
+                bounds = self._bound_of(some).T
+            else:
+                bounds = np.take(self._bounds.each, some, axis=0)
+            np.less(bounds, self.stack.sums(signs, some).T, out=above[start : start + len(some)])
         return above
 
     def maps(self, signs: Floats, features: Ints, kind: str) -> Floats:
         """(n_folds, n_some_features) the folds' maps; NaN where too few rows have data."""
-        maps = np.empty((len(self.stack.folds), len(features)))
-        for start in range(0, len(features), BLOCK):
-            some = features[start : start + BLOCK]
-            x = self.stack.columns(some) * signs[:, None]
-            there = self.stack.there(some)
-            if there is not None:
-                x[~there] = np.nan
-            missing = self.stack.missing
-            maps[:, start : start + BLOCK] = leave_out_maps(x, self.stack.folds, missing, kind)
+        stack = self.stack
+        maps = np.empty((len(stack.folds), len(features)))
+        for start in range(0, len(features), stack.piece):
+            some = features[start : start + stack.piece]
+            n, S = stack.rows(some), stack.sums(signs, some)
+            if kind == "mean":
+                with np.errstate(invalid="ignore", divide="ignore"):
+                    values: Floats = S / n
+            else:
+                values = t_from_sums(n, S, self._squares(some))
+            lost = n < stack.least(kind)
+            if lost.any():
+                values = np.where(lost, np.nan, values)
+            maps[:, start : start + stack.piece] = values
         return maps
+
+    def _squares(self, features: Ints) -> Floats:
+        """(n_folds, n_some_features) sums of squares, which no signs change."""
+        stack = self.stack
+        if not stack.turned or stack.n_features * len(stack.folds) > _KEPT:
+            return stack.squares(features)
+        if self._kept_squares is None:
+            self._kept_squares = np.empty((len(stack.folds), stack.n_features))
+            for block in stack.pieces():
+                self._kept_squares[:, block] = stack.squares(block)
+        return np.take(self._kept_squares, features, axis=1)
 
 
 def least_leader(maps: Floats, k: int) -> float:

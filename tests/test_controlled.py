@@ -13,7 +13,7 @@ import itertools
 import numpy as np
 import pytest
 from scipy import ndimage, stats
-from sequester.nodes import foldcontrol, foldstack, signed
+from sequester.nodes import foldcontrol, foldstack
 from sequester.nodes.controlled import Controlled, critical_of_map, step_up
 from sequester.nodes.errors import InputError
 from sequester.nodes.familywise import (
@@ -24,6 +24,7 @@ from sequester.nodes.familywise import (
 )
 from sequester.nodes.flips import all_signs, random_signs
 from sequester.nodes.folds import KFold, LeaveOneOut
+from sequester.nodes.foldsmooth import FoldSmoothness
 from sequester.nodes.groupmaps import Missing, group_map
 from sequester.nodes.masks import Cluster, Strongest, Threshold, choose
 from sequester.nodes.models import Groups, Score
@@ -33,7 +34,6 @@ from sequester.nodes.randomfield import (
     height_threshold,
     lattice,
     resels,
-    z_equivalent,
 )
 from sequester.nodes.smoothness import fwhm_of_stack
 from sequester.nodes.space import Grid
@@ -135,8 +135,8 @@ def loop_mask(control, x, grid, level=LEVEL):
         ]
         least = fewest_beyond(largest, level) + 1
     else:
-        z = z_equivalent(float(stats.t.isf(0.05, len(x) - 1)), len(x) - 1)
-        least = ClusterSizes(int(tested.sum()), tuple(fwhm), z).critical_size(level)
+        t_all, df_all = float(stats.t.isf(0.05, len(x) - 1)), len(x) - 1
+        least = ClusterSizes(int(tested.sum()), tuple(fwhm), t_all, df_all).critical_size(level)
     kept = [c for c in clusters_of(exceeds(t, forming), grid) if len(c) >= least]
     return np.isin(np.arange(len(t)), np.concatenate([[], *kept]))
 
@@ -214,7 +214,7 @@ def test_smoothness_and_region_are_those_that_a_side_has_by_itself(zeros):
     procedure = Procedure(RULES["random-field"], KFold(5, 3), missing=missing)
     ready = procedure.prepare(x, list("abcdefghij"), GRID)
     signs = random_signs(1, list("abcdefghij"), 0, 1)[0].astype(float)
-    fwhm = foldcontrol._Smoothness(ready._stack, GRID).fwhm(signs)
+    fwhm = FoldSmoothness(ready._stack, GRID).fwhm(signs, np.arange(len(ready.folds)))
     cells = ready._choosing._chooser._narrowing._cells
     for k, fold in enumerate(ready.folds):
         side = signs[list(fold.selection), None] * x[list(fold.selection)]
@@ -308,8 +308,7 @@ def test_a_folds_own_numbers_have_the_same_bits_whatever_its_held_out_data_are(c
     for extra in (0.0, 1e5):
         x[4] += extra * rng.normal(size=x.shape[1])
         ready = Procedure(RULES[control]).prepare(x, list("abcdefghi"), GRID)
-        smoothness = foldcontrol._Smoothness(ready._stack, GRID)
-        bits.append(smoothness.fwhm(np.ones(9)))
+        bits.append(FoldSmoothness(ready._stack, GRID).fwhm(np.ones(9), np.arange(9)))
     assert np.array_equal(bits[0][4], bits[1][4])
     assert not np.array_equal(bits[0][3], bits[1][3])
 
@@ -325,7 +324,6 @@ def test_neither_order_nor_blocks_nor_batches_change_a_bit(control, monkeypatch)
     again = procedure.prepare(x[order], [people[i] for i in order], GRID)
     assert again.flip_test(60, 3) == test
     monkeypatch.setattr(foldstack, "BLOCK", 17)
-    monkeypatch.setattr(signed, "BLOCK", 13)
     monkeypatch.setattr(foldstack, "_SMALL_BLOCK", 11)
     monkeypatch.setattr(foldstack, "_BLOCK_NUMBERS", 20)
     monkeypatch.setattr(foldstack, "_SCREEN_BLOCK", 19)
@@ -445,20 +443,20 @@ def test_an_empty_map_has_no_threshold_to_exceed():
         (
             Threshold(control=Controlled("max-t", 0.01, 499)),
             "negative",
-            "all features with t below minus the largest-t (up to 499 sign flips) threshold, "
-            "chance of any false feature at most 0.01",
+            "all voxels with t below minus the largest-t (up to 499 sign flips) threshold, "
+            "chance of any false voxel at most 0.01",
         ),
         (
             Cluster(p=0.001, min_size=5, extent=Controlled("random-field")),
             "positive",
-            "the largest cluster of features with p < 0.001 (connectivity 18, at least 5 "
-            "features, of a size by random-field theory, chance of any false cluster at most 0.05)",
+            "the largest cluster of voxels with p < 0.001 (connectivity 18, at least 5 "
+            "voxels, of a size by random-field theory, chance of any false cluster at most 0.05)",
         ),
         (
             Cluster(pick="all", control=Controlled("benjamini-hochberg", 0.1)),
             "positive",
-            "every cluster of features with t above Benjamini and Hochberg's threshold, expected "
-            "share of false features at most 0.1 (connectivity 18, at least 1 features)",
+            "every cluster of voxels with t above Benjamini and Hochberg's threshold, expected "
+            "share of false voxels at most 0.1 (connectivity 18, at least 1 voxels)",
         ),
     ],
 )

@@ -251,6 +251,38 @@ def test_volumes_of_a_4d_file(tmp_path):
         read_map(path)
 
 
+def packed_noise(path):
+    """A map of noise that is longer than a piece of reading, its bytes, and its packed file."""
+    data = np.random.default_rng(3).standard_normal((40, 30, 31)).astype(np.float32)
+    image = nib.Nifti1Image(data, np.eye(4))
+    nib.save(image, path)
+    return data, image.to_bytes()
+
+
+def test_file_packed_in_several_parts_is_read_as_one(tmp_path):
+    path = tmp_path / "map.nii.gz"
+    data, blob = packed_noise(path)
+    for cuts in ((100,), (352, 90_000), (50_000, 50_000)):
+        parts = np.split(np.frombuffer(blob, np.uint8), cuts)
+        path.write_bytes(b"".join(gzip.compress(part.tobytes()) for part in parts))
+        assert np.array_equal(read_map(path)[0], data)
+
+
+def test_packed_file_of_which_a_byte_or_the_end_is_lost(tmp_path):
+    path = tmp_path / "map.nii.gz"
+    packed_noise(path)
+    whole = path.read_bytes()
+    flipped = bytearray(whole)
+    flipped[len(whole) // 2] ^= 1
+    cut = [whole[:-1], whole[:-8], whole[: len(whole) // 2]]
+    for content in (bytes(flipped), whole[:-8] + bytes(8), *cut):
+        path.write_bytes(content)
+        with pytest.raises(InputError, match="damaged or truncated file"):
+            read_map(path)
+    path.write_bytes(whole + b"what stands behind the map is not of the map")
+    read_map(path)
+
+
 @pytest.mark.parametrize("extra", [(1,), (1, 1), (1, 1, 1)])
 def test_trailing_dimensions_of_one_are_none(tmp_path, extra):
     data = values()
@@ -425,7 +457,8 @@ def test_other_reader_accepts_every_file_of_a_run(tmp_path, checker):
     done = CliRunner().invoke(main, arguments)
     assert done.exit_code == 0, done.output
     written = sorted((tmp_path / "results").rglob("*.nii*"))
-    assert len(written) == 6 + 1 + 1 + 1  # fold masks, their overlap, sphere, exploratory mask
+    # Fold masks, their overlap, sphere, exploratory mask, and what they are drawn on.
+    assert len(written) == 6 + 1 + 1 + 1 + 1
     # What the engine's working folder holds is written by the same function.
     inner = sorted((tmp_path / "work").rglob("*.nii*"))
     assert len(inner) > len(written)

@@ -355,21 +355,21 @@ def test_a_rule_that_makes_no_sense_is_refused_with_the_reason(make, message):
 
 
 def test_rules_describe_themselves():
-    assert Threshold(p=0.01).describe() == "all features with p < 0.01"
-    assert Threshold(height=3.1).describe() == "all features with t > 3.1"
+    assert Threshold(p=0.01).describe() == "all voxels with p < 0.01"
+    assert Threshold(height=3.1).describe() == "all voxels with t > 3.1"
     assert Cluster(p=0.001, connectivity=6, min_size=4).describe() == (
-        "the largest cluster of features with p < 0.001 (connectivity 6, at least 4 features)"
+        "the largest cluster of voxels with p < 0.001 (connectivity 6, at least 4 voxels)"
     )
     assert (
         "nearest to (1.0, 2.0, 3.0) mm"
         in Cluster(height=3.0, pick="nearest", near=(1.0, 2.0, 3.0)).describe()
     )
-    assert Strongest(5).describe() == "the 5 features with the highest group t"
+    assert Strongest(5).describe() == "the 5 voxels with the highest group t"
     share = Strongest(fraction=0.05, map_kind="mean")
-    assert share.describe() == "the 5 % of the features with the highest group mean"
-    assert share.describe("negative") == "the 5 % of the features with the lowest group mean"
+    assert share.describe() == "the 5 % of the voxels with the highest group mean"
+    assert share.describe("negative") == "the 5 % of the voxels with the lowest group mean"
     around = PeakSphere(7.5)
-    assert around.describe() == "the features within 7.5 mm of the one with the highest group t"
+    assert around.describe() == "the voxels within 7.5 mm of the one with the highest group t"
     assert around.describe("negative").endswith("of the one with the lowest group t")
 
 

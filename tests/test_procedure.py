@@ -16,7 +16,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy import ndimage, stats
-from sequester.nodes import foldstack, groupmaps, signed
+from sequester.nodes import foldstack, groupmaps
 from sequester.nodes import procedure as procedure_module
 from sequester.nodes.errors import EmptyFoldError, InputError
 from sequester.nodes.flips import all_signs, random_signs
@@ -545,8 +545,8 @@ def test_neither_blocks_nor_batches_change_a_bit(monkeypatch, kind, rule):
         for one, other in zip(ready.flips(signs), expected, strict=True):
             assert one.tobytes() == other.tobytes()
     for block in (1, 13):
-        for module in (foldstack, signed):
-            monkeypatch.setattr(module, "BLOCK", block)
+        monkeypatch.setattr(foldstack, "BLOCK", block)
+        monkeypatch.setattr(foldstack, "_SMALL_BLOCK", 1)
         monkeypatch.setattr(groupmaps, "_BLOCK", block)
         for one, other in zip(made.prepare(RULES[rule]).flips(signs), expected, strict=True):
             assert one.tobytes() == other.tobytes()
@@ -717,13 +717,16 @@ def test_too_few_flips_too_few_subjects_and_stacks_of_another_shape_are_refused(
         plan.prepare(made.effects[1:], made.labels, made.grid)
 
 
-def test_without_a_copy_the_result_is_the_same_and_the_stack_untouched():
+def test_without_a_copy_the_result_is_the_same():
     effects = np.random.default_rng(3).standard_normal((8, 40))
+    effects[2, :5] = np.nan
     before = effects.copy()
     procedure = Procedure(Threshold(p=0.1), tail="negative")
     space, labels = Grid((40, 1, 1), np.eye(4)), list("abcdefgh")
     with_copy = procedure.prepare(effects, labels, space)
-    without = procedure.prepare(effects, labels, space, copy=False)
-    assert without.outcome() == with_copy.outcome()
-    assert without.flip_test(63) == with_copy.flip_test(63)
     np.testing.assert_array_equal(effects, before)
+    for tested in (None, effects):
+        taken = before.copy() if tested is None else effects
+        without = procedure.prepare(taken, labels, space, tested=tested, copy=False)
+        assert without.outcome() == with_copy.outcome()
+        assert without.flip_test(63) == with_copy.flip_test(63)

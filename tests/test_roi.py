@@ -583,7 +583,7 @@ def test_the_rule_in_a_result_tells_the_direction_of_selection():
         rules.append(made.rule)
         assert made.rule in made.sentence
     # Features chosen in the negative tail do not have t > 3.
-    assert rules[0] == "all features with t > 3"
+    assert rules[0] == "all voxels with t > 3"
     assert "t > 3" not in rules[1]
 
 

@@ -191,7 +191,9 @@ class _Row:
                 got="only zeros, NaN and infinities",
                 remedy="make the map again, or leave it out with an exclude_reason",
             )
-        largest = float(np.abs(data, where=~absent, out=np.zeros_like(data)).max())
+        largest = 0.0
+        if data.dtype == np.float64:
+            largest = float(np.abs(data, where=~absent, out=np.zeros_like(data)).max())
         if largest > float(np.finfo(np.float32).max):  # sums of squares would overflow
             raise InputError(
                 "values too large for a map",
