@@ -207,9 +207,10 @@ class TwoGroups(Exchanged):
     def interval(self, values: Floats, quantile: float) -> Interval:
         """Difference +- standard error x quantile: approximate."""
         b, error = self._fit(values, self.observed())
+        half = error * quantile if error or np.isfinite(quantile) else np.inf
         return Interval(
-            b - error * quantile,
-            b + error * quantile,
+            b - half,
+            b + half,
             "approximate",
             "Welch's standard error x the 95 % quantile of |t| over whole-procedure exchanges that "
             "find a region (at least Student's); two-sided, so it may include 0 when the one-sided "

@@ -66,7 +66,7 @@ class Control:
         Examples
         --------
         >>> print(CONTROLS["bonferroni"].describe(0.05))
-        chance of any false feature at most 0.05, provided each p-value is right
+        chance of any false voxel at most 0.05, provided each p-value is right
         """
         return f"{self.error} at most {alpha:g}, provided {self.assumes}"
 
@@ -74,23 +74,21 @@ class Control:
 _SYMMETRY = "the maps are independent and jointly symmetric about zero where nothing is there"
 CONTROLS = {
     "bonferroni": Control(
-        "chance of any false feature", "each p-value is right", "Dunn 1961, JASA 56:52-64"
+        "chance of any false voxel", "each p-value is right", "Dunn 1961, JASA 56:52-64"
     ),
     "benjamini-hochberg": Control(
-        "expected share of false features among those found",
+        "expected share of false voxels among those found",
         "the p-values are right, and independent or positively dependent",
         "Benjamini & Hochberg 1995, JRSS-B 57:289-300",
     ),
-    "max-t": Control(
-        "chance of any false feature", _SYMMETRY, "Nichols & Holmes 2002, HBM 15:1-25"
-    ),
+    "max-t": Control("chance of any false voxel", _SYMMETRY, "Nichols & Holmes 2002, HBM 15:1-25"),
     "max-cluster": Control(
         "chance of any false cluster, of which no single feature is sure",
         _SYMMETRY,
         "Nichols & Holmes 2002, HBM 15:1-25",
     ),
     "random-field": Control(
-        "chance of any false feature",
+        "chance of any false voxel",
         "the noise is a stationary smooth Gaussian field, FWHM about three voxels or more",
         "Worsley et al. 1996, HBM 4:58-73",
     ),

@@ -18,8 +18,8 @@ from .errors import InputError
 from .exchange import FlipTest
 from .models import Groups, Model
 from .procedure import Outcome, Prepared
-from .results import RoiResult, estimate_texts, known, least, p_text
-from .roi import fold_interval, jackknife_interval, per_person, small_sample_factor
+from .results import RoiResult, corrected, estimate_texts, known, least, p_text
+from .roi import Interval, fold_interval, jackknife_interval, per_person, small_sample_factor
 
 Floats = npt.NDArray[np.floating]
 
@@ -65,7 +65,10 @@ def cross_fitted_result(
     outcome = ready.outcome()
     test = ready.flip_test(n_flips, seed, progress)
     people = ready.per_person(outcome.values)
-    if interval == "flips":
+    made: Interval | None
+    if len(outcome.empty) == len(ready.folds):
+        made = None  # of nothing: values of 0 that do not vary are no sign of precision
+    elif interval == "flips":
         # Never narrower than the ordinary interval: where exchanges find little, few are left.
         least_t = student(len(people) - 1 - (procedure.model is not None))
         made = ready.exchange_interval(people, max(test.abs_t_quantile, least_t))
@@ -86,16 +89,19 @@ def cross_fitted_result(
     notes = [
         f" In {len(names)} of {folds} folds the rule found nothing; there {what}."
         for names, what in (
-            (outcome.replaced, "the strongest features stood in"),
+            (outcome.replaced, "the strongest voxels stood in"),
             (outcome.empty, "the value counts as 0"),
         )
         if names
     ]
-    told, low, high = estimate_texts(outcome.estimate, made.low, made.high)
+    if made is None:
+        told = f"{outcome.estimate:.3g} (no fold found a region: no interval), "
+    else:
+        value, low, high = estimate_texts(outcome.estimate, made.low, made.high)
+        told = f"{value} ({made.kind} 95 % interval {low} to {high}), "
     sentence = (
         f"{roi}: {procedure.describe()} {where}, chosen in {folds} folds "
-        f"({plan}); {words.estimate} {told} "
-        f"({made.kind} 95 % interval {low} to {high}), {p_text(test.p)} "
+        f"({plan}); {words.estimate} {told}{p_text(test.p)} "
         f"({kind}, one-sided: {sided}). Null: {words.null} '{search}'; a rejection says that there "
         f"is {words.found} somewhere {where}, not at any one voxel.{''.join(notes)}"
     )
@@ -211,7 +217,7 @@ def _effect_sizes(
             return None, None
         sign = 1 if ready.procedure.tail == "positive" else -1
         dz = sign * outcome.t / float(np.sqrt(len(people)))
-        return dz, dz * small_sample_factor(len(people) - 1)
+        return dz, corrected(dz, len(people) - 1)
     if not isinstance(model, Groups):
         return None, None
     group = dict(model.of)

@@ -16,6 +16,22 @@ P(n >= k) = exp(-beta k^(2/D)), and the number of clusters is near Poisson, so t
 
     P(any of size k) = 1 - exp(-E[m] P(n >= k))           (Friston et al. 1994, HBM 1:210-220)
 
+A t field of few degrees of freedom has more clusters than a Gaussian one above the height that is
+as improbable, most of them smaller, and a few larger: near a peak it is Z / R with a curvature
+that varies, and the size of a cluster is distributed as
+
+    c B^(D/2) (U^D / (V_0 .. V_D-1))^(1/2)                (Cao 1999, Adv Appl Prob 31:579-595)
+
+with independent B ~ beta(1, (df - D)/2), U ~ chi2(df + 1 - D), V_i ~ chi2(df + 1 - i). In the
+limit of many it is the Gaussian's. Simulated, with the smoothness read from the maps: chance of
+any cluster at a level of .1 (p < .001, FWHM 2.8 voxels, 512 voxels), the Gaussian's sizes first:
+
+    maps            6             8             12            20
+               .206  .073    .153  .085    .130  .094    .108  .086
+
+In a small box with edges (12 voxels each way), whose clusters are cut, it was up to .13 at .1, and
+at .05 up to .06.
+
 Both take the noise for a good lattice sample of a stationary smooth field: FWHM of about three
 voxels at least (below, heights are too strict), the same everywhere (else clusters are too
 easily large where it is smooth), and a high forming threshold for clusters.
@@ -24,19 +40,24 @@ easily large where it is smooth), and a high forming threshold for clusters.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cache
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
-from scipy import special
+from scipy import optimize, special
 
 from .errors import InputError
 from .space import Grid
 
 Floats = npt.NDArray[np.floating]
+Ints = npt.NDArray[np.integer]
 
 _4LN2 = 4 * np.log(2)
 # Expected Euler characteristics that never fall below alpha: no height is high enough.
 _HIGHEST = 1e6
+# Below this the sizes of clusters are rounding.
+_LEAST_CHANCE = 1e-13
 
 
 @dataclass(frozen=True)
@@ -105,20 +126,26 @@ def resels(cells: Lattice, fwhm: Floats) -> Floats:
     fwhm = np.asarray(fwhm, dtype=float)
     rough = (fwhm == 0).any(axis=-1)
     r = np.where(np.isnan(fwhm) | (fwhm == 0), 0, 1 / np.where(fwhm == 0, 1, fwhm))
-    edges, faces, cubes = np.array(cells.edges), np.array(cells.faces), cells.cubes
-    # Along an axis lie the two kinds of faces that are not across it.
-    lines = edges - (faces.sum() - faces) + cubes
-    across = np.stack([r[..., 1] * r[..., 2], r[..., 0] * r[..., 2], r[..., 0] * r[..., 1]], -1)
+    lines, across, euler = _parts(cells)
+    r_across = np.stack([r[..., 1] * r[..., 2], r[..., 0] * r[..., 2], r[..., 0] * r[..., 1]], -1)
     made: Floats = np.stack(
         [
-            np.broadcast_to(cells.points - edges.sum() + faces.sum() - cubes, rough.shape),
+            np.broadcast_to(euler, rough.shape),
             np.where(rough, np.inf, (r * lines).sum(axis=-1)),
-            np.where(rough, np.inf, (across * (faces - cubes)).sum(axis=-1)),
-            np.where(rough, np.inf, r.prod(axis=-1) * cubes),
+            np.where(rough, np.inf, (r_across * across).sum(axis=-1)),
+            np.where(rough, np.inf, r.prod(axis=-1) * cells.cubes),
         ],
         axis=-1,
     )
     return made
+
+
+def _parts(cells: Lattice) -> tuple[Ints, Ints, int]:
+    """By what resels along and across each axis count, and the Euler characteristic."""
+    edges, faces, cubes = np.array(cells.edges), np.array(cells.faces), cells.cubes
+    # Along an axis lie the two kinds of faces that are not across it.
+    lines = edges - (faces.sum() - faces) + cubes
+    return lines, faces - cubes, int(cells.points - edges.sum() + faces.sum() - cubes)
 
 
 def ec_densities(height: npt.ArrayLike, df: float | None = None) -> Floats:
@@ -158,15 +185,11 @@ def ec_densities(height: npt.ArrayLike, df: float | None = None) -> Floats:
         scale = special.poch(df / 2, 0.5) / np.sqrt(df / 2)
         square = (df - 1) / df * h * h
     two_pi = 2 * np.pi
-    made: Floats = np.stack(
-        [
-            tail,
-            _4LN2**0.5 / two_pi * fall,
-            _4LN2 / two_pi**1.5 * scale * h * fall,
-            _4LN2**1.5 / two_pi**2 * (square - 1) * fall,
-        ],
-        axis=-1,
-    )
+    made = np.empty((*h.shape, 4))
+    made[..., 0] = tail
+    made[..., 1] = _4LN2**0.5 / two_pi * fall
+    made[..., 2] = _4LN2 / two_pi**1.5 * scale * h * fall
+    made[..., 3] = _4LN2**1.5 / two_pi**2 * (square - 1) * fall
     return made
 
 
@@ -217,15 +240,19 @@ def height_threshold(
         high *= 2
         if high > _HIGHEST:
             return ceiling
-    # Below its last turning point the expectation may cross alpha more than once: the last counts.
-    steps = np.linspace(low, high, 257)
-    above = np.flatnonzero(expected(steps) > alpha)
-    if not len(above):
-        return min(low, ceiling)
-    low, high = float(steps[above[-1]]), float(steps[above[-1] + 1])
-    while low < (middle := (low + high) / 2) < high:
-        low, high = (middle, high) if expected(middle) > alpha else (low, middle)
-    return min(high, ceiling)
+    turn = max(low, _turning_point(df))
+    if expected(turn) > alpha:
+        low = turn
+    else:
+        # Below its last turning point the expectation may cross alpha more than once: the last
+        # counts.
+        steps = np.linspace(low, high, 257)
+        above = np.flatnonzero(expected(steps) > alpha)
+        if not len(above):
+            return min(low, ceiling)
+        low, high = float(steps[above[-1]]), float(steps[above[-1] + 1])
+    exact = optimize.brentq(lambda height: float(expected(height)) - alpha, low, high, xtol=1e-13)
+    return min(float(exact), ceiling)
 
 
 def corrected_p(
@@ -266,23 +293,79 @@ def corrected_p(
     return made
 
 
-def z_equivalent(t: float, df: float) -> float:
-    """The z that is as improbable as a t.
+def least_corrected_p(
+    heights: Floats, cells: Lattice, most_fwhm: Floats, df: float, n_features: Ints
+) -> Floats:
+    """What `corrected_p` of several maps' peaks is not below, given what no FWHM is above.
+
+    Parameters
+    ----------
+    heights : (n_maps,) float
+        Of t.
+    cells : Lattice
+    most_fwhm : (n_maps, 3) float, voxels
+    df : float
+    n_features : (n_maps,) int
+
+    Returns
+    -------
+    (n_maps,) float64; 0 for a region so full of holes that more resels make peaks less likely.
 
     Examples
     --------
-    >>> round(z_equivalent(3.579400, 19), 5)
-    3.09023
+    >>> cells, df = lattice(Grid((31, 31, 31), np.eye(4))), 25
+    >>> peak, n = np.array([6.0]), np.array([29791])
+    >>> least = least_corrected_p(peak, cells, np.full((1, 3), 3.3), df, n)
+    >>> exact = corrected_p(peak, resels(cells, np.full(3, 3.0)), df, n[0])
+    >>> bool(0 < least[0] <= exact[0])
+    True
     """
-    return float(-special.ndtri(special.stdtr(df, -t)))
+    lines, across, _ = _parts(cells)
+    if (lines < 0).any() or (across < 0).any():
+        return np.zeros(len(heights))
+    # From the last turn on, lower heights are more likely and all densities are above zero.
+    h = np.maximum(heights, _turning_point(df))
+    ec = (ec_densities(h, df) * resels(cells, most_fwhm)).sum(axis=-1)
+    least: Floats = np.minimum(ec, n_features * special.stdtr(df, -h))
+    return least
+
+
+@cache
+def _unit_sizes(df: float, dimensions: int) -> tuple[Floats, Floats]:
+    """Log sizes over their mean, ascending, and the log chance of a cluster as large, of a t field.
+
+    E[S^z] of a product of powers of beta and chi-square variables is a product of gammas; the
+    chance is its Mellin transform turned back along Re z = 1, where the integrand falls
+    exponentially and the trapezoidal rule is exact to rounding.
+    """
+    D = dimensions
+
+    def log_moment(z: npt.ArrayLike) -> Any:
+        """Of S / c."""
+        z, last = np.asarray(z), (df - D) / 2 + 1
+        found = special.gammaln(last) + special.loggamma(1 + z * D / 2)
+        found = found - special.loggamma(last + z * D / 2)
+        powers = [(df + 1 - D, D / 2), *((df + 1 - i, -0.5) for i in range(D))]
+        for chi2, power in powers:
+            found = found + z * power * np.log(2) - special.gammaln(chi2 / 2)
+            found = found + special.loggamma(chi2 / 2 + z * power)
+        return found
+
+    along, step = 1 + 1j * np.linspace(0, 50, 501), 0.1
+    log_size = np.linspace(-9, 14, 4097)
+    moments = log_moment(along) - along * log_moment(1.0).real - np.log(along)
+    weight = np.full(len(along), step / np.pi)
+    weight[0] /= 2
+    chance = np.array([float((weight * np.exp(moments - along * x).real).sum()) for x in log_size])
+    kept = chance > _LEAST_CHANCE
+    kept &= np.logical_and.accumulate(kept)
+    falling = np.minimum.accumulate(np.minimum(chance[kept], 1))
+    return log_size[kept], np.log(falling)
 
 
 @dataclass(frozen=True)
 class ClusterSizes:
     """The sizes of clusters that noise alone has above a height; sizes in features.
-
-    A t map takes the z that is as improbable as its height (`z_equivalent`): the sizes are those
-    of a Gaussian field, near for some twenty degrees of freedom and more.
 
     Parameters
     ----------
@@ -291,11 +374,14 @@ class ClusterSizes:
     fwhm : (3,) float, voxels
         NaN along an axis without neighbours: the field has a dimension less.
     height : float
-        The forming threshold, a z above 0.
+        The forming threshold above 0, of z or of t.
+    df : float, optional
+        Degrees of freedom of a t field, above 3; none means a Gaussian field.
 
     References
     ----------
-    Friston et al. 1994, Human Brain Mapping 1:210-220.
+    Friston et al. 1994, Human Brain Mapping 1:210-220. Cao 1999, Advances in Applied Probability
+    31:579-595.
 
     Examples
     --------
@@ -304,17 +390,22 @@ class ClusterSizes:
     (17.4543, 2.8646, 0.5994)
     >>> round(sizes.corrected_p(50), 7), sizes.critical_size(0.05)
     (0.0051027, 31.0)
+    >>> ClusterSizes(50_000, (3.0, 3.0, 3.0), 4.024701, df=11).critical_size(0.05)
+    23.0
     """
 
     n_features: int
     fwhm: tuple[float, float, float]
     height: float
+    df: float | None = None
 
     def __post_init__(self) -> None:
         if not self.height > 0:
             raise InputError(
-                "a forming threshold too low", expected="a z above 0", got=f"{self.height:g}"
+                "a forming threshold too low", expected="above 0", got=f"{self.height:g}"
             )
+        if self.df is not None:
+            _check_df(self.df)
         if not self.dimensions:
             raise InputError(
                 "no axis along which features neighbour", got=f"FWHM {self.fwhm} voxels"
@@ -328,28 +419,36 @@ class ClusterSizes:
     @property
     def expected_clusters(self) -> float:
         """E[m], of any size; infinite when neighbours do not correlate."""
-        D, u = self.dimensions, self.height
-        W = float(np.nanprod(self.fwhm)) / _4LN2 ** (D / 2)
-        if W == 0:
+        D, ec = self.dimensions, ec_densities(self.height, self.df)
+        volume = float(np.nanprod(self.fwhm))
+        if volume == 0:
             return np.inf
-        density = (2 * np.pi) ** (-(D + 1) / 2) * u ** (D - 1) * np.exp(-u * u / 2)
-        return float(self.n_features * density / W)
+        # Clusters without their holes: in three dimensions these are what the -1 in it counts.
+        density = ec[D] + (_4LN2 / (2 * np.pi) * ec[1] if D == 3 else 0)
+        return float(self.n_features * density / volume)
 
     @property
     def expected_size(self) -> float:
         """E[n], features in a cluster."""
-        return float(self.n_features * special.ndtr(-self.height)) / self.expected_clusters
+        return self.n_features * _tail(self.height, self.df) / self.expected_clusters
 
     @property
     def beta(self) -> float:
-        """Of P(n >= k) = exp(-beta k^(2/D))."""
+        """Of P(n >= k) = exp(-beta k^(2/D)), in a Gaussian field."""
         D = self.dimensions
         with np.errstate(divide="ignore"):
             return float(np.divide(special.gamma(D / 2 + 1), self.expected_size) ** (2 / D))
 
     def p(self, size: float) -> float:
         """P(n >= size) of one cluster."""
-        return float(np.exp(-self.beta * size ** (2 / self.dimensions)))
+        if self.df is None:
+            return float(np.exp(-self.beta * size ** (2 / self.dimensions)))
+        if not self.expected_size:
+            return 0.0
+        log_size, log_chance = _unit_sizes(self.df, self.dimensions)
+        with np.errstate(divide="ignore"):
+            at = np.log(size / self.expected_size)
+        return float(np.exp(np.interp(at, log_size, log_chance, left=0.0, right=-np.inf)))
 
     def corrected_p(self, size: float) -> float:
         """The chance of any cluster of this size in the region: family-wise corrected p."""
@@ -363,9 +462,21 @@ class ClusterSizes:
         share = -np.log1p(-alpha) / self.expected_clusters
         if share == 0:
             return np.inf
-        exact = (max(0.0, -np.log(share)) / self.beta) ** (self.dimensions / 2)
+        if self.df is None:
+            exact = (max(0.0, -np.log(share)) / self.beta) ** (self.dimensions / 2)
+        else:
+            log_size, log_chance = _unit_sizes(self.df, self.dimensions)
+            # From large sizes to small, for the chance to rise.
+            at = np.interp(
+                np.log(share), log_chance[::-1], log_size[::-1], left=np.inf, right=-np.inf
+            )
+            exact = float(np.exp(at)) * self.expected_size
         # A whole number that rounding has lifted by a hair is that number.
         return max(1.0, float(np.ceil(exact - 1e-9)))
+
+
+def _tail(height: float, df: float | None) -> float:
+    return float(special.ndtr(-height) if df is None else special.stdtr(df, -height))
 
 
 def _quantile(p: float, df: float | None) -> float:

@@ -13,7 +13,7 @@ from typing import Any
 
 import numpy as np
 
-from .roi import Interval, TTest
+from .roi import Interval, TTest, small_sample_factor
 
 
 @dataclass(frozen=True)
@@ -136,7 +136,7 @@ def exploratory_result(
         Features in the mask.
     coverage : sequence of float
     replaced : bool
-        Whether the rule found nothing and the strongest features stood in.
+        Whether the rule found nothing and the strongest voxels stood in.
     """
     roi, plan, search = names
     estimate = float(np.mean(values)) if size else float("nan")
@@ -159,7 +159,7 @@ def exploratory_result(
         sentence=(
             f"{roi}: exploratory {said} on the data it is read from; "
             "no interval, no p-value and no error bar can be given."
-            + (" The rule found nothing; the strongest features stood in." if replaced else "")
+            + (" The rule found nothing; the strongest voxels stood in." if replaced else "")
         ),
     )
 
@@ -178,8 +178,8 @@ def of_t(test: TTest, names: tuple[str, str, str], n: int, **more: Any) -> RoiRe
         t=test.t,
         p=test.p,
         sided="two-sided",
-        dz=test.dz,
-        g=test.g,
+        dz=finite(test.dz),
+        g=corrected(test.dz, test.df),
         **more,
     )
 
@@ -192,6 +192,22 @@ def distinct(sizes: Sequence[int]) -> tuple[int, ...]:
 def least(coverage: Sequence[float]) -> float | None:
     """The least coverage of a mask that holds something of its subject."""
     return min((share for share in coverage if share > 0), default=None)
+
+
+def finite(value: float) -> float | None:
+    """A value, or None for one that is infinite or not there."""
+    return value if np.isfinite(value) else None
+
+
+def corrected(dz: float, df: int) -> float | None:
+    """dz with Hedges' factor for small samples; None of one degree of freedom, where that is 0.
+
+    Examples
+    --------
+    >>> round(corrected(1.2845576, 9), 4), corrected(2.1, 1)
+    (1.1739, None)
+    """
+    return finite(dz * small_sample_factor(df)) if df > 1 else None
 
 
 def known(value: float) -> float | None:

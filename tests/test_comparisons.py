@@ -17,7 +17,7 @@ from sequester.nodes.comparisons import (
 )
 from sequester.nodes.errors import InputError
 from sequester.nodes.flips import all_signs, random_orders, random_signs
-from sequester.nodes.masks import Threshold
+from sequester.nodes.masks import Strongest, Threshold
 from sequester.nodes.procedure import Procedure
 from sequester.nodes.roi import holm
 from sequester.nodes.space import Grid
@@ -461,7 +461,8 @@ def test_a_difference_of_cross_fitted_regions_keeps_its_level_and_the_paired_t_d
     """Two regions, each chosen without the subject in its own search region, nothing in either."""
     rng = np.random.default_rng(12)
     n, sets, people = 14, 300, [f"{i:02}" for i in range(14)]
-    grid, procedure = Grid((30, 1, 1), np.eye(4)), Procedure(Threshold(p=0.01))
+    grid = Grid((30, 1, 1), np.eye(4))
+    procedure = Procedure(Threshold(p=0.01), on_empty="strongest", k=2)
     rejected = one_sided = plain = 0
     for number in range(sets):
         signs = random_signs(number, people, 0, 19)
@@ -477,12 +478,52 @@ def test_a_difference_of_cross_fitted_regions_keeps_its_level_and_the_paired_t_d
     assert plain / sets > 0.15
 
 
+def left_out_values(x: np.ndarray, signs: np.ndarray, p: float, k: int = 0) -> np.ndarray:
+    """(n_flips, n): under each flip, everybody's mean where the others' t has a p below p.
+
+    Where none has: in the k features with the highest t.
+    """
+    n, others = len(x), len(x) - 1
+    t = stats.t.isf(p, others - 1)
+    S, Q = signs @ x, np.square(x).sum(axis=0)
+    values = np.zeros(signs.shape)
+    for i in range(n):
+        share = (S - signs[:, [i]] * x[i]) / np.sqrt(others * (Q - x[i] ** 2))
+        mask = share > t / np.sqrt(others - 1 + t * t)
+        if k:
+            kth = np.partition(share, -k, axis=1)[:, [-k]]
+            mask |= ~mask.any(axis=1, keepdims=True) & (share >= kth)
+        values[:, i] = signs[:, i] * (mask @ x[i]) / np.maximum(mask.sum(axis=1), 1)
+    return values
+
+
+def test_equal_small_effects_differ_as_seldom_as_stated_where_the_strongest_stand_in():
+    """Folds find more in the data than under flips, where a value of 0 makes t small."""
+    rng = np.random.default_rng(14)
+    sets, people = 250, [f"{i:02}" for i in range(16)]
+    rejected = with_empty = 0
+    for number in range(sets):
+        signs = np.concatenate([np.ones((1, 16)), random_signs(number, people, 0, 99)])
+        maps = [rng.normal(size=(16, 40)) + 0.3 for _ in range(2)]
+        values = np.stack([left_out_values(x, signs, 0.001, 3) for x in maps], -1)
+        rejected += difference(values[0], NAMES[:2], values[1:]).p <= 0.05
+        values = np.stack([left_out_values(x, signs, 0.001) for x in maps], -1)
+        gaps = values[..., 0] - values[..., 1]
+        t = np.abs(gaps.mean(axis=1)) / np.maximum(gaps.std(axis=1), 1e-12)
+        with_empty += np.mean(t >= t[0]) <= 0.05
+        with pytest.raises(InputError, match=r"regions that folds often do not find .* got \d+%"):
+            difference(values[0], NAMES[:2], values[1:])
+    error = np.sqrt(0.05 * 0.95 / sets)
+    assert rejected / sets < 0.05 + 4 * error
+    assert with_empty / sets > 0.05 + 10 * error
+
+
 def test_a_real_difference_between_cross_fitted_regions_is_found():
     rng = np.random.default_rng(13)
     people, grid = [f"{i:02}" for i in range(20)], Grid((30, 1, 1), np.eye(4))
     signs = random_signs(0, people, 0, 199)
     ready = [
-        Procedure(Threshold(p=0.01)).prepare(rng.normal(size=(20, 30)) + effect, people, grid)
+        Procedure(Strongest(3)).prepare(rng.normal(size=(20, 30)) + effect, people, grid)
         for effect in (1.5, 0.0)
     ]
     observed = np.stack([r.per_person(r.outcome().values) for r in ready], axis=-1)

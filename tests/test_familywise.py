@@ -27,7 +27,6 @@ from sequester.nodes.randomfield import (
     height_threshold,
     lattice,
     resels,
-    z_equivalent,
 )
 from sequester.nodes.smoothness import fwhm_of_stack
 from sequester.nodes.space import Grid
@@ -207,7 +206,7 @@ def test_every_control_says_what_it_rests_on():
     for control in CONTROLS.values():
         assert control.error in control.describe(0.05)
         assert "at most 0.05, provided " + control.assumes in control.describe(0.05)
-    assert "share of false features" in CONTROLS["benjamini-hochberg"].describe(0.1)
+    assert "share of false voxels" in CONTROLS["benjamini-hochberg"].describe(0.1)
 
 
 def test_false_discoveries_among_real_ones():
@@ -240,7 +239,7 @@ def test_error_rates_on_smooth_noise():
         t = group_map(x)
         fwhm = fwhm_of_stack(x, grid)
         largest = largest_cluster(grid.filled(t > forming), 18)
-        sizes = ClusterSizes(grid.n_features, tuple(fwhm), z_equivalent(forming, df))
+        sizes = ClusterSizes(grid.n_features, tuple(fwhm), forming, df)
         limits = {
             "plain": stats.t.isf(alpha, df),
             "bonferroni": stats.t.isf(bonferroni(alpha, t.size), df),

@@ -7,7 +7,7 @@ import itertools
 import numpy as np
 import pytest
 from scipy import stats
-from scipy.ndimage import gaussian_filter
+from scipy.ndimage import gaussian_filter, label
 from scipy.special import eval_hermitenorm
 from sequester.nodes.errors import InputError
 from sequester.nodes.randomfield import (
@@ -17,8 +17,8 @@ from sequester.nodes.randomfield import (
     height_threshold,
     lattice,
     resels,
-    z_equivalent,
 )
+from sequester.nodes.smoothness import fwhm_of_stack
 from sequester.nodes.space import Grid
 
 BOX = np.array([1.0, 30.0, 300.0, 1000.0])
@@ -196,15 +196,64 @@ def test_the_edges_of_cluster_sizes():
     rough = ClusterSizes(50, (1.0, 1.0, 0.0), 3.0)
     assert rough.critical_size() == np.inf
     assert rough.corrected_p(40) == 1
-    with pytest.raises(InputError, match=r"forming threshold too low: expected a z above 0"):
+    with pytest.raises(InputError, match=r"forming threshold too low: expected above 0"):
         ClusterSizes(50, (3.0, 3.0, 3.0), 0.0)
     with pytest.raises(InputError, match="no axis along which features neighbour"):
         ClusterSizes(1, (np.nan, np.nan, np.nan), 3.0)
 
 
-def test_the_z_of_a_t():
-    t = stats.t.isf(0.001, 19)
-    assert z_equivalent(t, 19) == pytest.approx(stats.norm.isf(0.001), rel=1e-9)
+def sizes_by_chance(df, D, n=200_000):
+    """Cluster sizes of a t field over their mean, drawn (Cao 1999)."""
+    rng = np.random.default_rng(2)
+    square = rng.beta(1, (df - D) / 2, n) ** D * rng.chisquare(df + 1 - D, n) ** D
+    for i in range(D):
+        square /= rng.chisquare(df + 1 - i, n)
+    return np.sqrt(square) / np.sqrt(square).mean()
+
+
+@pytest.mark.parametrize(
+    ("df", "fwhm"), [(5, (3.0,) * 3), (11, (3.0,) * 3), (11, (3.0, 3.0, np.nan))]
+)
+def test_sizes_of_clusters_of_a_t_field(df, fwhm):
+    field = ClusterSizes(9_000, fwhm, 3.5, df)
+    drawn = sizes_by_chance(df, field.dimensions)
+    for share in (0.2, 1.0, 3.0, 6.0):
+        seen = np.mean(drawn >= share)
+        error = 4 * np.sqrt(seen / len(drawn))
+        assert field.p(share * field.expected_size) == pytest.approx(seen, abs=error)
+    for alpha in (0.001, 0.05, 0.4):
+        critical = field.critical_size(alpha)
+        assert field.corrected_p(critical) <= alpha < field.corrected_p(critical - 1)
+
+
+def test_many_degrees_of_freedom_make_a_gaussian_field():
+    t = stats.t.isf(0.001, 1e5)
+    many = ClusterSizes(50_000, (3.0, 3.0, 3.0), t, 1e5)
+    gauss = ClusterSizes(50_000, (3.0, 3.0, 3.0), stats.norm.isf(0.001))
+    assert many.expected_clusters == pytest.approx(gauss.expected_clusters, rel=1e-3)
+    assert many.corrected_p(50) == pytest.approx(gauss.corrected_p(50), rel=1e-3)
+    # With few, clusters are more, smaller, and a few larger.
+    few = ClusterSizes(50_000, (3.0, 3.0, 3.0), stats.t.isf(0.001, 7), 7)
+    assert few.expected_clusters > 2 * gauss.expected_clusters
+    assert few.p(20 * few.expected_size) > 5 * gauss.p(20 * gauss.expected_size)
+
+
+def test_with_few_rows_clusters_of_noise_are_as_seldom_as_stated():
+    """Six rows: the sizes of a Gaussian field are found twice as often as they should be."""
+    rng, n, sets, alpha = np.random.default_rng(5), 6, 400, 0.1
+    grid, t = grid_of(np.ones((8, 8, 8), bool)), stats.t.isf(0.001, n - 1)
+    near = np.ones((3, 3, 3), bool)
+    near[::2, ::2, ::2] = False
+    few = gauss = 0
+    for _ in range(sets):
+        x = gaussian_filter(rng.normal(size=(n, 8, 8, 8)), (0, 1.2, 1.2, 1.2), mode="wrap")
+        above = stats.ttest_1samp(x, 0).statistic > t
+        largest = np.bincount(label(above, near)[0].ravel())[1:].max(initial=0)
+        fwhm = tuple(fwhm_of_stack(x.reshape(n, -1), grid))
+        few += largest >= ClusterSizes(512, fwhm, t, n - 1).critical_size(alpha)
+        gauss += largest >= ClusterSizes(512, fwhm, stats.norm.isf(0.001)).critical_size(alpha)
+    error = 4 * np.sqrt(alpha * (1 - alpha) / sets)
+    assert few / sets < alpha + error < gauss / sets
 
 
 def test_out_of_range_is_refused():

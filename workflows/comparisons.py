@@ -11,6 +11,7 @@ from nipype import Merge, Node, Workflow
 from ..nodes.errors import InputError
 from ..nodes.interfaces import CompareFixed, CompareHeldOut
 from ..nodes.interfaces.comparisons import KINDS
+from ..nodes.masks import Cluster, Threshold
 from .keys import Reader
 from .plans import CROSS_FITTED, EXPLORATORY, node
 from .rois import Roi
@@ -120,6 +121,22 @@ def _compatible(read: Reader, rois: Sequence[Roi]) -> None:
                 f"{roi.name} compares groups or goes with a score already",
                 where=where,
                 expected="regions whose mean is tested",
+            )
+        procedure = roi.procedure
+        if (
+            roi.plan in CROSS_FITTED
+            and procedure is not None
+            and isinstance(procedure.rule, Threshold | Cluster)
+            and procedure.on_empty != "strongest"
+        ):
+            raise InputError(
+                f"{roi.name} may find no region in a fold, and cannot be compared",
+                where=where,
+                expected="a rule that always finds something: where folds stay empty under flips, "
+                "equal effects differ too often (50 % at a nominal 5 %)",
+                got=f'{procedure.describe()}, on_empty = "{procedure.on_empty}"',
+                remedy=f'give {roi.name} on_empty = "strongest" with a k, or the rule strongest '
+                "or peak-sphere",
             )
         if (roi.plan in CROSS_FITTED) != (first.plan in CROSS_FITTED):
             raise InputError(

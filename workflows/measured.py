@@ -9,7 +9,7 @@ from __future__ import annotations
 import contextlib
 import os
 import tempfile
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -80,8 +80,20 @@ class Measured:
     spread: float
 
 
-def measure(settings: Settings, rois: Sequence[Roi]) -> list[Measured]:
-    """Regions, missing voxels and smoothness, from maps made as a run makes them."""
+@contextlib.contextmanager
+def maps_made(
+    settings: Settings, rois: Sequence[Roi]
+) -> Iterator[tuple[dict[Selection, list[str]], dict[str, list[str]]]]:
+    """The maps of some regions and their masks, made as a run makes them; gone with the block.
+
+    Yields
+    ------
+    files : dict of Selection to list of str
+        One map per subject (or run) of what is tested and of what chooses.
+    masks : dict of str to list of str
+        By the region's name: its mask, or one per row; none for a whole map, and for an atlas
+        whose every label is a region.
+    """
     with tempfile.TemporaryDirectory() as folder, engine_quiet(), contextlib.chdir(os.getcwd()):
         workflow = Workflow(name=settings.name, base_dir=folder)
         workflow.config["execution"] = {
@@ -108,16 +120,22 @@ def measure(settings: Settings, rois: Sequence[Roi]) -> list[Measured]:
         def output(name: str, field: str) -> Any:
             return getattr(nodes[f"{settings.name}.{name}"].result.outputs, field)
 
-        files = {rows: output(name, "out_files") for rows, name in names.items()}
-        found = []
+        masks = {}
+        for name, place in places.items():
+            last, field = mask_of(place)
+            *inner, field = field.split(".")
+            made = output(".".join([last.name, *inner]), field)
+            masks[name] = made if isinstance(made, list) else [made]
+        yield {rows: output(name, "out_files") for rows, name in names.items()}, masks
+
+
+def measure(settings: Settings, rois: Sequence[Roi]) -> list[Measured]:
+    """Regions, missing voxels and smoothness, from maps made as a run makes them."""
+    found = []
+    with maps_made(settings, rois) as (files, masks):
         for roi in rois:
-            masks = None
-            if roi.name in places:
-                last, field = mask_of(places[roi.name])
-                *inner, field = field.split(".")
-                masks = output(".".join([last.name, *inner]), field)
             try:
-                found.append(_measured_roi(settings, roi, files, masks))
+                found.append(_measured_roi(settings, roi, files, masks.get(roi.name)))
             except InputError as error:
                 raise error.within(f"roi {roi.name}") from error
     return found
@@ -135,15 +153,14 @@ def _measured_roi(
     settings: Settings,
     roi: Roi,
     files: dict[Selection, list[str]],
-    masks: str | list[str] | None,
+    masks: list[str] | None,
 ) -> Measured:
     rows = tested_rows(roi)
     volumes: npt.NDArray[Any] | None = None
     if roi.each_label:
         volumes = _label_volumes(settings, roi)
     elif masks is not None:
-        listed = masks if isinstance(masks, list) else [masks]
-        volumes = np.nan_to_num(np.stack([read_map(path)[0] for path in listed]))
+        volumes = np.nan_to_num(np.stack([read_map(path)[0] for path in masks]))
     inside = None if volumes is None else (volumes != 0).any(axis=0)
     effects, grid, _ = stack(files[rows], inside)
     chosen = None if roi.choosing is None else stack(files[roi.choosing], inside)[0]

@@ -236,7 +236,7 @@ def plan_inflation(ps: Sequence[float] = FORMING, ns: Sequence[int] = SIZES) -> 
             *([f"{p:g}", *(f"{values[p, n]:.2f}" for n in ns)] for p in ps),
         ],
         [
-            "The mean of noise alone in the features above a one-sided threshold p, chosen and "
+            "The mean of noise alone in the voxels above a one-sided threshold p, chosen and "
             "read on the same n subjects: h(u) / sqrt(n), in standard deviations between subjects."
         ],
         "What noise alone reads in a circular region",

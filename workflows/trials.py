@@ -6,19 +6,14 @@ go together, all from residuals about the mean. The means play no part.
 
 from __future__ import annotations
 
-import contextlib
 import hashlib
 import math
-import os
-import tempfile
 from collections.abc import Callable, Sequence
 from dataclasses import asdict, dataclass, replace
-from pathlib import Path
 from typing import Any
 
 import numpy as np
 import numpy.typing as npt
-from nipype import Workflow
 
 from ..nodes import progress
 from ..nodes.errors import InputError
@@ -39,16 +34,12 @@ from ..nodes.simulated import (
 )
 from ..nodes.smoothness import fwhm_of_stack
 from ..nodes.space import Grid
-from .build import subject_maps, tested_rows
-from .collect import find_nodes
+from .build import tested_rows
 from .curves import Curve
-from .guard import GuardPlugin
+from .measured import maps_made
 from .planning import Planned, errors_of, said_errors
 from .plans import A_PRIORI, CROSS_FITTED, EXPLORATORY, LOCALIZER, ORTHOGONAL, OTHER_RUNS
-from .regions import Places, mask_of, region_node
 from .rois import Roi
-from .run import engine_quiet
-from .selection import Selection
 from .settings import Settings
 from .verify import verify
 
@@ -357,11 +348,11 @@ def _folds_for(procedure: Procedure, labels: list[str], people: Sequence[str]) -
 def _measure(settings: Settings, roi: Roi) -> _Measured:
     """Grid, smoothness and how maps go together, from residuals."""
     rows = tested_rows(roi)
-    with tempfile.TemporaryDirectory() as folder, engine_quiet(), contextlib.chdir(os.getcwd()):
-        files = _made(settings, roi, rows, Path(folder))
-        inside = None if files["region"] is None else read_mask(files["region"])[0]
-        tested, grid, _ = stack(files["maps"], inside)
-        chosen = stack(files["choosing"], inside)[0] if files["choosing"] else None
+    with maps_made(settings, [roi]) as (files, masks):
+        # Where each subject has a region of their own, the first one's stands for all.
+        inside = read_mask(masks[roi.name][0])[0] if roi.name in masks else None
+        tested, grid, _ = stack(files[rows], inside)
+        chosen = None if roi.choosing is None else stack(files[roi.choosing], inside)[0]
     keep: Bools = np.asarray(np.isfinite(tested).all(axis=0))
     if chosen is not None:
         keep &= np.isfinite(chosen).all(axis=0)
@@ -383,42 +374,6 @@ def _measure(settings: Settings, roi: Roi) -> _Measured:
         return found
     of = roi.choosing.people
     return _with_choosing(found, maps, _by_person(chosen[:, keep], of), sorted(set(of)))
-
-
-def _made(settings: Settings, roi: Roi, rows: Selection, folder: Path) -> dict[str, Any]:
-    """The files of a region's maps and of its search region, made as a run makes them."""
-    workflow = Workflow(name=settings.name, base_dir=str(folder))
-    workflow.config["execution"] = {
-        "crashdump_dir": str(folder),
-        "create_report": "false",
-        "stop_on_first_crash": "true",
-        "remove_unnecessary_outputs": "false",
-        "poll_sleep_duration": "0.05",
-    }
-    workflow.add_nodes([subject_maps(settings, rows, "maps")])
-    if roi.choosing is not None:
-        workflow.add_nodes([subject_maps(settings, roi.choosing, "choosing")])
-    label, (row, *_) = rows.subjects[0]
-    region = region_node(
-        roi.region, Places(settings.root, (str(settings.root / row.path),), (label,))
-    )
-    if region is not None:
-        workflow.add_nodes([region])
-    nodes = find_nodes(workflow.run(plugin=GuardPlugin(settings.study)))
-
-    def output(name: str, field: str) -> Any:
-        return getattr(nodes[f"{settings.name}.{name}"].result.outputs, field)
-
-    place = None
-    if region is not None:
-        last, field = mask_of(region)
-        *inner, field = field.split(".")
-        place = output(".".join([last.name, *inner]), field)
-    return {
-        "maps": output("maps", "out_files"),
-        "choosing": None if roi.choosing is None else output("choosing", "out_files"),
-        "region": place,
-    }
 
 
 def _by_person(effects: Floats, people: Sequence[str]) -> Floats:

@@ -10,7 +10,16 @@ from nipype.interfaces.base import File, InputMultiObject
 
 from ..errors import EmptyFoldError, InputError
 from ..images import geometry_of, open_image, read_map, read_mask, write_map
-from ..masks import Cluster, PeakSphere, Strongest, Threshold, choose, sphere, strongest
+from ..masks import (
+    Cluster,
+    PeakSphere,
+    Strongest,
+    Threshold,
+    choose,
+    highest,
+    sphere,
+    strongest,
+)
 from ..procedure import ON_EMPTY
 from ..rules import Branch, Inputs, Leaf, Rule, Tree, each, joined, leaves, only
 from ..space import Grid
@@ -24,7 +33,20 @@ class _MaskOutput(TraitedSpec):
     mask_file = File(exists=True, desc="the region, 0 and 1")
 
 
+PEAK = "x, y, z in mm and value of the map's highest voxel in the mask; none without one"
+
+
+def peak_of(grid: Grid, there: int | None, value: float) -> list[float]:
+    """The `PEAK` at one feature, or none."""
+    if there is None:
+        return []
+    voxel = np.array(np.unravel_index(grid.voxels[there], grid.shape))
+    where = grid.affine[:3, :3] @ voxel + grid.affine[:3, 3]
+    return [*(float(f"{mm:.6g}") for mm in where + 0.0), value]
+
+
 class _ChooseOutput(_MaskOutput):
+    peak = traits.List(traits.Float, desc=PEAK)
     replaced = traits.Bool(desc="the rule found nothing, and the strongest features stand in")
 
 
@@ -37,8 +59,8 @@ class _RuleInput(InputSpec):
 
 def _write_chosen(
     inputs: Any, map_file: str, search_file: str | None, count_file: str | None, target: Path
-) -> bool:
-    """Write the region a rule reads off one map; whether the strongest features stood in."""
+) -> tuple[list[float], bool]:
+    """Write the region a rule reads off one map; its peak, whether the strongest stood in."""
     rule = inputs.rule
     if not isinstance(rule, RULES):
         raise InputError("no mask rule", got=repr(rule))
@@ -62,7 +84,9 @@ def _write_chosen(
             remedy="relax the rule, or report that nothing was found",
         )
     write_map(target, grid.filled(chosen), geometry)
-    return replaced
+    there = highest(values[inside], chosen)
+    value = 0.0 if there is None else float(values[inside][there])
+    return peak_of(grid, there, -value if inputs.negative else value), replaced
 
 
 class _ChooseInput(_RuleInput):
@@ -80,14 +104,15 @@ class ChooseMask(SequesterInterface):
     output_spec = _ChooseOutput
     touch_rules = {
         "mask_file": only("in_file", "search_file", "count_file"),
+        "peak": only("in_file", "search_file", "count_file", single=False),
         "replaced": only("in_file", "search_file", "count_file"),
     }
 
     def _work(self, cwd: Path) -> dict[str, Any]:
         mask = cwd / "mask.nii.gz"
         search, count = self._value("search_file"), self._value("count_file")
-        replaced = _write_chosen(self.inputs, self.inputs.in_file, search, count, mask)
-        return {"mask_file": str(mask), "replaced": replaced}
+        peak, replaced = _write_chosen(self.inputs, self.inputs.in_file, search, count, mask)
+        return {"mask_file": str(mask), "peak": peak, "replaced": replaced}
 
 
 class _ChooseEachInput(_RuleInput):
@@ -99,6 +124,7 @@ class _ChooseEachInput(_RuleInput):
 
 class _ChooseEachOutput(TraitedSpec):
     row_masks = traits.List(File(exists=True), desc="per row: the region chosen on its map")
+    peaks = traits.List(traits.List(traits.Float), desc=f"per row: {PEAK}")
     replaced = traits.List(traits.Bool, desc="per row: the strongest features stand in")
 
 
@@ -112,6 +138,7 @@ class ChooseEach(SequesterInterface):
     output_spec = _ChooseEachOutput
     touch_rules = {
         "row_masks": each("in_files", one_or_each=("search_files",)),
+        "peaks": each("in_files", one_or_each=("search_files",)),
         "replaced": each("in_files", one_or_each=("search_files",)),
     }
 
@@ -119,11 +146,15 @@ class ChooseEach(SequesterInterface):
         maps = self.inputs.in_files
         searches = one_or_each("search_files", self._value("search_files"), len(maps))
         masks = [cwd / f"row{row:05d}.nii.gz" for row in range(len(maps))]
-        replaced = [
+        made = [
             _write_chosen(self.inputs, path, search, None, mask)
             for path, search, mask in zip(maps, searches, masks, strict=True)
         ]
-        return {"row_masks": [str(mask) for mask in masks], "replaced": replaced}
+        return {
+            "row_masks": [str(mask) for mask in masks],
+            "peaks": [peak for peak, _ in made],
+            "replaced": [replaced for _, replaced in made],
+        }
 
 
 def _placed(inputs: Inputs) -> Tree:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from functools import partial
+from collections.abc import Callable
 from pathlib import Path
 from typing import Any
 
@@ -23,9 +23,11 @@ from ..images import (
     write_map,
 )
 from ..procedure import Prepared, Procedure, held_out_rows
-from ..rules import Statistic, all_but_held_out, chosen_on
+from ..rules import Rule, Statistic, all_but_held_out, chosen_on
+from ..scoreunits import also_scores
 from ..space import Grid
 from .base import InputSpec, SequesterInterface, TraitedSpec, one_or_each, traits, write_json
+from .masks import PEAK, peak_of
 
 
 class _ProcedureInput(InputSpec):
@@ -69,21 +71,17 @@ def _per_row(settings: Any) -> list[tuple[int, ...]]:
     return [of_row[row] for row in sorted(of_row)]
 
 
-# scores_from: scores and groups of a procedure's model are literal settings, which touch no data
-# unit. Scores that come from a file of the study would be an input of their own, and a touch of
-# every row but those held out.
-_rule = partial(
-    all_but_held_out,
-    "in_files",
-    known_by=("labels", "procedure"),
-    shared=("search_file",),
-)
+def _rule(held_out: Callable[[Any], list[tuple[int, ...]]]) -> Rule:
+    """A fold's mask touches the maps, and the scores of a model, of all rows but those held out."""
+    maps = all_but_held_out("in_files", held_out, ("labels", "procedure"), ("search_file",))
+    return also_scores(maps, "in_files", "procedure")
 
 
 class _ChooseOutput(TraitedSpec):
     mask_files = traits.List(File(exists=True), desc="per fold: the mask chosen without it")
     row_masks = traits.List(File(exists=True), desc="per row: the mask of the fold it is out of")
     fold_names = traits.List(traits.Str, desc="per fold: its name")
+    peaks = traits.List(traits.List(traits.Float), desc=f"per fold, of the map that chose: {PEAK}")
     overlap_file = File(exists=True, desc="per voxel: share of the folds that chose it")
 
 
@@ -93,8 +91,9 @@ class ChooseByFold(SequesterInterface):
     input_spec = _ProcedureInput
     output_spec = _ChooseOutput
     touch_rules = {
-        "mask_files": _rule(held_out=_per_fold),
-        "row_masks": _rule(held_out=_per_row),
+        "mask_files": _rule(_per_fold),
+        "peaks": _rule(_per_fold),
+        "row_masks": _rule(_per_row),
     }
 
     def _work(self, cwd: Path) -> dict[str, Any]:
@@ -113,8 +112,15 @@ class ChooseByFold(SequesterInterface):
             "mask_files": files,
             "row_masks": [of_row[row] for row in sorted(of_row)],
             "fold_names": [fold.name for fold in ready.folds],
+            "peaks": _peaks(ready, masks, grid),
             "overlap_file": str(write_map(cwd / "overlap.nii.gz", grid.filled(share), geometry)),
         }
+
+
+def _peaks(ready: Prepared, masks: list[Bools], grid: Grid) -> list[list[float]]:
+    """The `PEAK` of every fold."""
+    found = ready.peaks(masks)
+    return [[] if one is None else peak_of(grid, *one) for one in found]
 
 
 class _WithinInput(InputSpec):
@@ -145,8 +151,14 @@ def _rows_of(labels: list[str]) -> dict[str, list[int]]:
     return of_label
 
 
+_own = chosen_on(
+    "in_files", _own_rows, ("labels", "runs", "procedure"), one_or_each=("search_files",)
+)
+
+
 class _WithinOutput(TraitedSpec):
     row_masks = traits.List(File(exists=True), desc="per row: the subject's mask without that run")
+    peaks = traits.List(traits.List(traits.Float), desc=f"per row, of the map that chose: {PEAK}")
 
 
 class ChooseWithin(SequesterInterface):
@@ -154,29 +166,30 @@ class ChooseWithin(SequesterInterface):
 
     input_spec = _WithinInput
     output_spec = _WithinOutput
-    touch_rules = {
-        "row_masks": chosen_on(
-            "in_files",
-            _own_rows,
-            ("labels", "runs", "procedure"),
-            one_or_each=("search_files",),
-        )
-    }
+    touch_rules = {"row_masks": _own, "peaks": _own}
 
     def _work(self, cwd: Path) -> dict[str, Any]:
         labels, maps = self.inputs.labels, self.inputs.in_files
         searches = one_or_each("search_files", self._value("search_files"), len(maps))
         files: dict[int, str] = {}
+        peaks: dict[int, list[float]] = {}
         for rows in _rows_of(labels).values():
             # A subject's rows share one search region unless each has its own.
             for search in dict.fromkeys(searches[row] for row in rows):
                 ready, grid, geometry = self._subject([maps[row] for row in rows], search, rows)
-                for fold, mask in zip(ready.folds, ready.masks(), strict=True):
+                masks = ready.masks()
+                of_fold = _peaks(ready, masks, grid)
+                for fold, mask, peak in zip(ready.folds, masks, of_fold, strict=True):
                     for row in (rows[held] for held in fold.held_out):
                         if searches[row] == search:
                             path = cwd / f"row{row:05d}.nii.gz"
                             files[row] = str(write_map(path, grid.filled(mask), geometry))
-        return {"row_masks": [files[row] for row in range(len(labels))]}
+                            peaks[row] = peak
+        numbers = range(len(labels))
+        return {
+            "row_masks": [files[row] for row in numbers],
+            "peaks": [peaks[row] for row in numbers],
+        }
 
     def _subject(
         self, paths: list[str], search: str | None, rows: list[int]
@@ -218,7 +231,13 @@ class FlipTest(SequesterInterface):
 
     input_spec = _FlipInput
     output_spec = _FlipOutput
-    statistic = Statistic(values="values", cross_fitted=True)
+    statistic = Statistic(
+        values="values",
+        cross_fitted=True,
+        scores=("procedure",),
+        labels="labels",
+        search="search_file",
+    )
 
     def _work(self, cwd: Path) -> dict[str, Any]:
         ready, _, _ = _prepared(self.inputs)
