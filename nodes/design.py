@@ -133,6 +133,25 @@ class Design:
         columns = tuple((name, tuple(v[row] for row in rows)) for name, v in self.columns)
         return Design(columns, self.contrast, self.centred)
 
+    def score_columns(self, labels: Sequence[str]) -> list[tuple[str, list[tuple[str, float]]]]:
+        """The columns that differ between rows, with whose value is whose.
+
+        Parameters
+        ----------
+        labels : sequence of str
+            One per row.
+
+        Examples
+        --------
+        >>> regression([3, 1, 2], name="age").score_columns(["a", "b", "c"])
+        [('age', [('a', 3.0), ('b', 1.0), ('c', 2.0)])]
+        """
+        return [
+            (name, list(zip(labels, values, strict=False)))
+            for name, values in self.columns
+            if len(set(values)) > 1
+        ]
+
     def matrix(self) -> npt.NDArray[np.float64]:
         """(n_rows, n_columns) float64: the columns as given, not centred."""
         return np.array([values for _, values in self.columns], dtype=float).T

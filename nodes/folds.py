@@ -57,16 +57,38 @@ class Scheme(ABC):
         InputError
             When the labels do not suffice for the scheme.
         """
+        made = []
+        for name, held in self.held_out(labels):
+            away = set(held)
+            kept = tuple(row for row in range(len(labels)) if row not in away)
+            made.append(Fold(name, held, kept))
+        return made
+
+    def held_out(self, labels: Sequence[str]) -> list[tuple[str, tuple[int, ...]]]:
+        """The name of each fold and the rows it holds out: `folds` without their selections.
+
+        Parameters
+        ----------
+        labels : sequence of str
+            One label per row.
+
+        Raises
+        ------
+        InputError
+            When the labels do not suffice for the scheme.
+
+        Examples
+        --------
+        >>> LeaveOneOut().held_out(["b", "a", "a", "c"])
+        [('a', (1, 2)), ('b', (0,)), ('c', (3,))]
+        """
         rows: dict[str, list[int]] = {}
         for row, label in enumerate(labels):
             rows.setdefault(label, []).append(row)
-        made = []
-        for name, out in self._held_out(sorted(rows)):
-            held = sorted(row for label in out for row in rows[label])
-            away = set(held)
-            kept = tuple(row for row in range(len(labels)) if row not in away)
-            made.append(Fold(name, tuple(held), kept))
-        return made
+        return [
+            (name, tuple(sorted(row for label in out for row in rows[label])))
+            for name, out in self._held_out(sorted(rows))
+        ]
 
 
 @dataclass(frozen=True)

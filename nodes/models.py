@@ -21,6 +21,7 @@ from .folds import Fold
 Floats = npt.NDArray[np.floating]
 Scores = tuple[tuple[str, float], ...]
 Covariates = tuple[tuple[str, Scores], ...]
+Labelled = tuple[str, float] | tuple[str, str]
 Value = TypeVar("Value")
 
 
@@ -39,6 +40,8 @@ class Groups:
         Every map belongs to one of the two. The tail "negative" chooses where the first is lower.
     covariates : tuple of (name, ((label, value), ...))
         Nuisance in every fold's model and in the statistic; the test is then Freedman & Lane's.
+    name : str
+        The column of the study table that says who is in which group: the guard has to know.
 
     Examples
     --------
@@ -52,6 +55,7 @@ class Groups:
     first: str
     second: str
     covariates: Covariates = ()
+    name: str = "group"
 
     def __post_init__(self) -> None:
         _once("group", self.of)
@@ -110,6 +114,10 @@ class Groups:
         """What the map shows, in words."""
         return f"{self.first} minus {self.second}{_given(self.covariates)}"
 
+    def score_columns(self, labels: Sequence[str]) -> list[tuple[str, Sequence[Labelled]]]:
+        """What the model was told of whom: the groups' column, and the covariates."""
+        return [(self.name, self.of), *self.covariates]
+
     def counts(self, people: Sequence[str]) -> tuple[int, int]:
         """How many of the people are in the first group and in the second."""
         group = dict(self.of)
@@ -131,7 +139,8 @@ class Score:
     covariates : tuple of (name, ((label, value), ...))
         Nuisance in every fold's model and in the statistic; the test is then Freedman & Lane's.
     name : str
-        What the score is called in results.
+        What the score is called in results: the column of the study table that it is from, by
+        which the guard knows whose score has chosen.
 
     Examples
     --------
@@ -186,6 +195,10 @@ class Score:
     def describe(self) -> str:
         """What the map shows, in words."""
         return f"the correlation with {self.name}{_given(self.covariates)}"
+
+    def score_columns(self, labels: Sequence[str]) -> list[tuple[str, Sequence[Labelled]]]:
+        """What the model was told of whom: the score, and the covariates."""
+        return [(self.name, self.of), *self.covariates]
 
 
 Model = Groups | Score

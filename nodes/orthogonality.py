@@ -64,6 +64,7 @@ class Certificate:
     chosen, tested : str
         The two contrasts in words.
     conditions : tuple of Condition
+        It holds when all of them do, and one of them is between subjects.
     assumptions : tuple of str
         What was taken for granted, in words.
 
@@ -81,8 +82,9 @@ class Certificate:
 
     @property
     def holds(self) -> bool:
-        """Whether every condition holds, and there is one."""
-        return bool(self.conditions) and all(one.holds for one in self.conditions)
+        """Whether every condition holds, and one of them is between subjects."""
+        between = any(one.level.startswith("subject") for one in self.conditions)
+        return between and all(one.holds for one in self.conditions)
 
     def describe(self) -> str:
         """The correlations in words."""

@@ -7,12 +7,71 @@ subject's map is missing in it: what a subject lacks is not made up from the oth
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import dataclass
 from functools import reduce
 
 import numpy as np
 import numpy.typing as npt
 
+from .errors import InputError
+
 Floats = npt.NDArray[np.floating]
+
+
+@dataclass(frozen=True)
+class Keep:
+    """Who stays, by one number of each: a motion summary, a score, a response.
+
+    Parameters
+    ----------
+    at_least, at_most : float
+        The limits; both belong to those who stay.
+
+    Raises
+    ------
+    InputError
+        When no number could lie between them.
+
+    Examples
+    --------
+    >>> Keep(at_most=0.5).rows([0.2, 0.9, 0.5])
+    [0, 2]
+    >>> Keep(at_most=0.5).describe()
+    'at most 0.5'
+    """
+
+    at_least: float = -np.inf
+    at_most: float = np.inf
+
+    def __post_init__(self) -> None:
+        if not self.at_least <= self.at_most:
+            raise InputError(
+                "limits that nobody can keep", got=f"{self.at_least:g} to {self.at_most:g}"
+            )
+
+    def rows(self, measures: Sequence[float]) -> list[int]:
+        """The row numbers of those who stay, ascending.
+
+        Raises
+        ------
+        InputError
+            When a measure is no number: nobody can say whether its row should stay.
+        """
+        lost = [str(row) for row, measure in enumerate(measures) if np.isnan(measure)]
+        if lost:
+            raise InputError(
+                "measures that are no number",
+                where=f"rows {', '.join(lost[:5])}",
+                expected="a number for every row",
+                remedy="leave these out with an exclude_reason in the study table",
+            )
+        return [row for row, m in enumerate(measures) if self.at_least <= m <= self.at_most]
+
+    def describe(self) -> str:
+        """The limits in words."""
+        parts = [f"at least {self.at_least:g}"] * bool(np.isfinite(self.at_least))
+        parts += [f"at most {self.at_most:g}"] * bool(np.isfinite(self.at_most))
+        return " and ".join(parts) or "anything"
 
 
 def combine_runs(maps: Sequence[Floats], variances: Sequence[Floats] | None = None) -> Floats:

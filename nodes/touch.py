@@ -5,9 +5,13 @@ Definitions
 unit
     The smallest separately acquired datum, named by BIDS entities and the suffix of what was
     acquired. A blank entity is a wildcard: two units overlap when no entity contradicts.
+score
+    What a column of the study table says of a subject: a unit too, its suffix the column's name.
+    Scores count against scores of the same column, never against what was acquired.
 touch
     What ONE element (a scalar output, or one item of a list output) derives from: units in a
-    role, declared origins, and files nobody has declared (unknown).
+    role, declared origins, and files nobody has declared (unknown); and the units by which it was
+    selected, when it was kept or left out by what was measured.
 role
     ``values`` (what was measured) or ``geometry`` (grids, transforms, reference images). Only
     shared values make a result circular.
@@ -24,6 +28,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass, fields, replace
+from typing import Any
 
 ENTITIES = ("sub", "ses", "task", "acq", "ce", "dir", "rec", "run")
 
@@ -81,6 +86,13 @@ class UnitTable:
     people : mapping of unit to str, optional
         Who counts as one subject for levels and flips (the study table's ``exchange`` column);
         the default is the unit's ``sub``.
+    scores : iterable of Unit
+        The cells of the table's columns (``sub`` and, as suffix, the column); numbered last.
+
+    Attributes
+    ----------
+    scores : int
+        The set of all scores.
 
     Examples
     --------
@@ -90,26 +102,39 @@ class UnitTable:
     (['sub-01_run-2'], frozenset({'01'}))
     """
 
-    def __init__(self, units: Iterable[Unit], people: dict[Unit, str] | None = None) -> None:
-        self.units: tuple[Unit, ...] = tuple(dict.fromkeys(units))
+    def __init__(
+        self,
+        units: Iterable[Unit],
+        people: dict[Unit, str] | None = None,
+        scores: Iterable[Unit] = (),
+    ) -> None:
+        acquired = dict.fromkeys(units)
+        n_acquired = len(acquired)
+        self.units: tuple[Unit, ...] = (*acquired, *dict.fromkeys(scores))
+        self.scores = self.everything & ~((1 << n_acquired) - 1)
         self._number = {unit: i for i, unit in enumerate(self.units)}
         self._people = [(people or {}).get(u, u.sub) for u in self.units]
         by_sub: dict[str, list[int]] = {}
-        for i, unit in enumerate(self.units):
+        for i, unit in enumerate(acquired):
             by_sub.setdefault(unit.sub, []).append(i)
-        # Only units of the same subject, or with an open subject, can overlap.
+        # Only units of the same subject, or with an open subject, can overlap; a score only itself.
         self._overlap = [
             self._pack(
                 j
                 for j in (
-                    range(len(self.units))
-                    if not unit.sub
-                    else by_sub[unit.sub] + (by_sub.get("", []))
+                    range(n_acquired) if not unit.sub else by_sub[unit.sub] + by_sub.get("", [])
                 )
                 if unit.overlaps(self.units[j])
             )
-            for unit in self.units
+            for unit in acquired
         ]
+        self._overlap += [1 << i for i in range(n_acquired, len(self.units))]
+        # Most units overlap themselves alone: sets of those are done in one step.
+        self._wide = self._pack(i for i, o in enumerate(self._overlap) if o != 1 << i)
+        self._of_person: dict[str, int] = {}
+        for i, person in enumerate(self._people):
+            self._of_person[person] = self._of_person.get(person, 0) | 1 << i
+        self._measured: dict[frozenset[str], int] = {}
 
     @staticmethod
     def _pack(numbers: Iterable[int]) -> int:
@@ -128,8 +153,15 @@ class UnitTable:
         return self._pack(self._number[unit] for unit in units)
 
     def matching(self, pattern: Unit) -> int:
-        """The set of units that overlap a pattern (blank entities match anything)."""
-        return self._pack(i for i, unit in enumerate(self.units) if unit.overlaps(pattern))
+        """The set of units that overlap a pattern.
+
+        Blank entities match anything; scores are matched by the name of their column only.
+        """
+        return self._pack(
+            i
+            for i, unit in enumerate(self.units)
+            if unit.overlaps(pattern) and (pattern.suffix or not self.scores >> i & 1)
+        )
 
     def numbers(self, bits: int) -> Iterator[int]:
         """The row numbers in a set, ascending."""
@@ -148,22 +180,43 @@ class UnitTable:
 
     def overlapping(self, bits: int) -> int:
         """Every unit that overlaps a unit of the set."""
-        found = 0
-        for number in self.numbers(bits):
+        found = bits
+        for number in self.numbers(bits & self._wide):
             found |= self._overlap[number]
         return found
 
+    def company(self, bits: int) -> int:
+        """Every unit of the people whom the units of a set belong to."""
+        found = 0
+        for person in self.people_of(bits):
+            found |= self._of_person[person]
+        return found
+
     def measured(self, suffixes: frozenset[str]) -> int:
-        """The set of units whose suffix is one of these (or open); all, if one of these is open."""
-        if "" in suffixes:
-            return self.everything
-        return self._pack(
-            i for i, u in enumerate(self.units) if not u.suffix or u.suffix in suffixes
-        )
+        """The set of units whose suffix is one of these (or open); all, if one of these is open.
+
+        Scores are not among them: what was acquired is compared with what was acquired.
+        """
+        if suffixes not in self._measured:
+            self._measured[suffixes] = self._pack(
+                i
+                for i, unit in enumerate(self.units[: -self.scores.bit_count() or None])
+                if "" in suffixes or not unit.suffix or unit.suffix in suffixes
+            )
+        return self._measured[suffixes]
+
+    def column(self, names: Iterable[str]) -> int:
+        """The set of all scores in these columns."""
+        wanted = set(names)
+        return self._pack(n for n in self.numbers(self.scores) if self.units[n].suffix in wanted)
 
     def describe(self, bits: int, most: int = 4) -> str:
         """A set in words: listed when short, as a complement when that is shorter."""
-        inside, outside = self.units_of(bits), self.units_of(self.everything & ~bits)
+        if bits & self.scores and bits & ~self.scores:
+            parts = bits & ~self.scores, bits & self.scores
+            return ", ".join(self.describe(part, most) for part in parts)
+        like = self.scores if bits & self.scores else self.everything & ~self.scores
+        inside, outside = self.units_of(bits), self.units_of(like & ~bits)
         if not inside:
             return "no unit"
         if len(outside) < len(inside) and len(inside) > most:
@@ -214,6 +267,9 @@ class Touch:
         The extractions among its ancestors.
     biased : bool
         Whether a value read exploratively, on the data that chose its mask, is inside.
+    selected : int
+        The set of units by which it was decided that this element is there: nothing of them need
+        be inside, and yet they chose.
     """
 
     values: int = 0
@@ -222,6 +278,12 @@ class Touch:
     unknown: frozenset[str] = frozenset()
     extractions: frozenset[Extraction] = frozenset()
     biased: bool = False
+    selected: int = 0
+
+    @property
+    def choosers(self) -> int:
+        """The set of units that may have chosen: those inside, and those it was selected by."""
+        return self.values | self.selected
 
     def __or__(self, other: Touch) -> Touch:
         return union((self, other))
@@ -239,20 +301,25 @@ class Touch:
 
 def union(touches: Iterable[Touch]) -> Touch:
     """The touch of something computed from all of these."""
-    values = geometry = 0
-    origins: set[str] = set()
-    unknown: set[str] = set()
-    extractions: set[Extraction] = set()
+    values = geometry = selected = 0
     biased = False
+    named: list[Touch] = []  # few have more than units: sets are made for those alone
     for touch in touches:
         values |= touch.values
         geometry |= touch.geometry
-        origins |= touch.origins
-        unknown |= touch.unknown
-        extractions |= touch.extractions
-        biased = biased or touch.biased
+        selected |= touch.selected
+        if touch.origins or touch.unknown or touch.extractions or touch.biased:
+            named.append(touch)
+            biased = biased or touch.biased
+    none: frozenset[Any] = frozenset()
     return Touch(
-        values, geometry, frozenset(origins), frozenset(unknown), frozenset(extractions), biased
+        values,
+        geometry,
+        none.union(*(touch.origins for touch in named)),
+        none.union(*(touch.unknown for touch in named)),
+        none.union(*(touch.extractions for touch in named)),
+        biased,
+        selected,
     )
 
 
@@ -278,10 +345,16 @@ def cross_fitted(
     (True, False)
     """
     marks = [mark for mark in extractions if not mark.certified]
-    people = [table.people_of(mark.data) for mark in marks] if averaged else []
-    for i, one in enumerate(marks):
-        reach = table.overlapping(one.mask)
-        for j, other in enumerate(marks):
-            if i != j and reach & other.data and not (averaged and people[i] == people[j]):
-                return True
-    return False
+    # What is read for one value; when a person's values are averaged, for all of that person's.
+    read: dict[object, int] = {}
+    keys = [table.people_of(mark.data) if averaged else i for i, mark in enumerate(marks)]
+    for key, mark in zip(keys, marks, strict=True):
+        read[key] = read.get(key, 0) | mark.data
+    once = repeatedly = 0
+    for data in read.values():
+        repeatedly |= once & data
+        once |= data
+    return any(
+        table.overlapping(mark.mask) & (repeatedly | once & ~read[key])
+        for key, mark in zip(keys, marks, strict=True)
+    )

@@ -38,6 +38,7 @@ from sequester.workflows.study import Origin, Row, Study
 GRID = Geometry((6, 6, 6), tuple(map(tuple, np.diag([3.0, 3.0, 3.0, 1.0]).tolist())))
 LABELS = ["08", "01", "06", "03", "05", "02", "07", "04"]  # out of order: fold k is not row k
 GROUPS = ["hill", "pond", "pond", "hill", "pond", "hill", "hill", "pond"]
+AGES = [31.0, 45.0, 52.0, 28.0, 60.0, 39.0, 33.0, 41.0]
 NAMES = ("Arbor", "folds", "garden")
 # Somebody's group software: nibabel and a model of its own, no touch rule.
 OTHERS = """
@@ -67,11 +68,13 @@ def study(tmp_path: Path) -> Study:
     root = tmp_path / "study"
     root.mkdir()
     rows = []
-    for label in LABELS:
+    for label, group, age in zip(LABELS, GROUPS, AGES, strict=True):
         data = np.random.default_rng(int(label)).normal(0.8, 1, GRID.shape).astype(np.float32)
         data[0, :, :2] = 0  # outside the field of view
         write_map(root / f"sub-{label}.nii", data, GRID)
-        rows.append(Row(f"sub-{label}.nii", None, Unit(sub=label, suffix="bold")))
+        told = (("place", group), ("age", str(age)))
+        unit = Unit(sub=label, suffix="bold")
+        rows.append(Row(f"sub-{label}.nii", None, unit, extra=told))
     inside = np.ones(GRID.shape, bool)
     inside[5] = False
     write_map(root / "garden.nii", inside, GRID)
@@ -238,8 +241,7 @@ def test_what_cannot_be_wired_is_said_when_the_plan_is_built():
 
 @pytest.mark.parametrize("scheme", [None, KFold(3, strata=tuple(zip(LABELS, GROUPS, strict=True)))])
 def test_a_difference_of_two_groups_equals_a_plain_loop(study: Study, maps: list[str], scheme: Any):
-    ages = {"age": [31.0, 45, 52, 28, 60, 39, 33, 41]}
-    design = two_sample(GROUPS, "pond", "hill", ages)
+    design = two_sample(GROUPS, "pond", "hill", {"age": AGES})
     plan = compared("Arbor", design, Threshold(p=0.2), LABELS, GROUPS, scheme)
     guard, outputs = ran(given(plan, maps), study)
     assert [f.verdict for f in guard.findings] == ["apart"] * 9
@@ -262,7 +264,7 @@ def test_a_difference_of_two_groups_equals_a_plain_loop(study: Study, maps: list
     assert record["estimate"] == pytest.approx(values[pond].mean() - values[~pond].mean(), rel=1e-5)
     assert record["p"] is record["interval"] is None
     assert "exchanges the group labels of the whole procedure" in record["sentence"]
-    assert record["rule"] == "all features with p < 0.2"
+    assert record["rule"] == "all voxels with p < 0.2"
 
 
 def test_a_design_that_compares_no_groups_is_refused_when_the_plan_is_built():

@@ -30,6 +30,7 @@ from sequester.nodes.models import Groups, Score
 from sequester.nodes.procedure import Procedure
 from sequester.nodes.rules import Branch, Inputs, Leaf, Tree, everything
 from sequester.nodes.space import Grid
+from sequester.nodes.subjects import Keep
 from sequester.nodes.touch import Touch
 
 GRID = Geometry((6, 6, 6), tuple(map(tuple, np.diag([3.0, 3.0, 3.0, 1.0]).tolist())))
@@ -207,6 +208,15 @@ CASES = {
         interfaces.FoldLists,
         {"in_files": maps()},
         {"labels": (list(PEOPLE), list("xacbe")), "scheme": (KFold(2), LeaveOneOut())},
+    ),
+    "KeepSubjects": Case(
+        interfaces.KeepSubjects,
+        {
+            "in_files": maps(),
+            "measures": [lambda _, variant, i=i: 0.1 * i + 0.6 * variant for i in range(5)],
+        },
+        {"keep": (Keep(at_most=0.5), Keep(at_least=0.2))},
+        {"labels": list(PEOPLE)},
     ),
     "MasksByRow": Case(
         interfaces.MasksByRow,
@@ -582,7 +592,8 @@ class Seen:
     bit: dict[tuple[Any, ...], int]  # input element -> unit
 
     def values(self, element: tuple[Any, ...]) -> set[tuple[Any, ...]]:
-        return {place for place, i in self.bit.items() if self.touch[element].values >> i & 1}
+        # What has selected an element is in it as well as what was read.
+        return {place for place, i in self.bit.items() if self.touch[element].choosers >> i & 1}
 
     def geometry(self, element: tuple[Any, ...]) -> set[tuple[Any, ...]]:
         return {place for place, i in self.bit.items() if self.touch[element].geometry >> i & 1}

@@ -1,6 +1,6 @@
 """Every meeting judged: the levels of independence, and the statistics that fit or do not.
 
-Nothing runs here: the guard judges the expanded graph and stops. The files are empty.
+Nothing runs here: the guard judges the expanded graph and stops. The files are no images.
 """
 
 from __future__ import annotations
@@ -17,6 +17,7 @@ from sequester.nodes.foldnull import plain_t_false_positives
 from sequester.nodes.folds import KFold, LeaveOneOut, Scheme
 from sequester.nodes.interfaces import (
     ChooseByFold,
+    ChooseEach,
     ChooseMask,
     CompareFixed,
     CompareHeldOut,
@@ -69,7 +70,7 @@ def made(root: Path, exchange: dict[str, str] | None = None) -> Study:
         for unit in UNITS
     ]
     for name in (*(str(unit) for unit in UNITS), *OUTSIDE):
-        (root / f"{name}.nii").touch()
+        (root / f"{name}.nii").write_text(name)
     return Study(
         root,
         rows,
@@ -469,6 +470,37 @@ class TestStatistics:
         rate = plain_t_false_positives(4, 4, 0.01)
         assert f"about {rate:.0%} of the time at a nominal 5 %, for n = 4" in finding.reason
 
+    @pytest.mark.parametrize(
+        ("labels", "these_subjects", "expected"),
+        [
+            (None, False, LEAK),
+            ([*SUBJECTS, *SUBJECTS], False, SUBJECT),  # averaged by person
+            (None, True, SUBJECT),
+        ],
+    )
+    def test_several_values_of_one_person_are_averaged_or_the_claim_is_narrow(
+        self,
+        labels: list[str] | None,
+        these_subjects: bool,
+        expected: tuple[str, str, bool],
+        study: Study,
+    ):
+        graph = workflow()
+        both = paths(study, [*RUN_ONE, *RUN_TWO])
+        read = Extract(
+            in_files=both, labels=[*SUBJECTS, *SUBJECTS], mask_files=paths(study, ["atlas"])
+        )
+        test = FixedRegionTest(names=NAMES, these_subjects=these_subjects)
+        if labels:
+            test.inputs.labels = labels
+        fields = [(f, f) for f in ("values", "coverage", "sizes")]
+        graph.connect([(Node(read, name="extract"), Node(test, name="test"), fields)])
+        finding = of_statistic(graph, study)
+        assert verdict(finding) == expected
+        if expected is LEAK:
+            assert finding.reason.startswith("its 8 values are of 4 people")
+            assert finding.cure.startswith("average the values of each person first")
+
     @pytest.mark.parametrize("scheme", [LeaveOneOut(), KFold(2)])
     def test_the_whole_procedure_flip_takes_them(self, scheme: Scheme, study: Study):
         graph = analysis(study, by_fold(study, scheme), "row_masks", FlipTest)
@@ -613,6 +645,28 @@ class TestRefusal:
         assert "leak: w.extract, element 0" in said
         assert "unproven: w.second, element 0: nobody has declared what stranger.nii" in said
         assert "state where the region comes from: origin in STUDY.toml" in said
+
+    def test_where_precision_was_lost_is_told_with_what_brings_it_back(self, study: Study):
+        # Element by element this is clean; but nobody says that the foreign node works so.
+        graph = workflow()
+        masks = function("choose", a=paths(study, RUN_ONE))
+        read = Node(Extract(in_files=paths(study, RUN_TWO), labels=list(SUBJECTS)), name="extract")
+        graph.connect(masks, "out", read, "mask_files")
+        found = judged(graph, study)
+        assert [verdict(f) for f in found] == [OTHER_RUNS] * 4
+        assert [bool(f.lost) for f in found] == [True, False, False, False]
+        said = refusal(graph, study)
+        assert "lost or it only seems so, at w.choose: what Function does is not known" in said
+        assert "contract(NODE, rules={'out': each(INPUT)}" in said
+
+    def test_a_leak_that_is_seen_element_by_element_has_lost_nothing(self, study: Study):
+        (finding,) = meeting(study, [RUN_ONE[0]], [RUN_ONE[0]])
+        assert finding.verdict == "leak"
+        graph = workflow()
+        read = Node(Extract(in_files=paths(study, RUN_ONE), labels=list(SUBJECTS)), name="extract")
+        own = Node(ChooseEach(in_files=paths(study, RUN_ONE), rule=Strongest(1)), name="own")
+        graph.connect(own, "row_masks", read, "mask_files")
+        assert [(verdict(f), f.lost) for f in judged(graph, study)] == [(LEAK, ())] * 4
 
     def test_paths_of_a_leak_at_subject_level(self, study: Study):
         graph = workflow()

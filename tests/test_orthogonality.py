@@ -109,5 +109,6 @@ def test_a_design_of_lower_rank_is_refused():
 
 def test_a_certificate_without_conditions_does_not_hold():
     assert not Certificate("a", "b", (), ()).holds
-    assert Certificate("a", "b", (Condition("run", 1e-9),), ()).holds
+    assert Certificate("a", "b", (Condition("run", 0), Condition("subject", 1e-9)), ()).holds
+    assert not Certificate("a", "b", (Condition("run", 1e-9),), ()).holds  # nothing of the people
     assert not Certificate("a", "b", (Condition("run", 1e-3), Condition("subject", 0)), ()).holds

@@ -14,6 +14,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 from nipype.interfaces.utility import Function, IdentityInterface, Merge, Rename, Select, Split
 from sequester.nodes.folds import KFold, LeaveOneOut
+from sequester.nodes.interfaces.contracts import ruled
 from sequester.nodes.interfaces.generic import generic_rule, settings_of
 from sequester.nodes.procedure import held_out_rows
 from sequester.nodes.rules import (
@@ -243,9 +244,8 @@ def predicted(interface: Any, output: str, opaque: tuple[str, ...] = (), **more:
         if tokens(value):
             tree = tree_of(value)
             trees[name] = joined(leaves(tree), single=False) if name in opaque else tree
-    rule = generic_rule(interface, output)
-    assert rule is not None
-    return rule(Inputs(trees, settings, "node"))
+    assert generic_rule(interface, output) is not None
+    return ruled(interface, Inputs(trees, settings, "node"))[output]
 
 
 files = st.integers(0, 7).map(lambda n: f"file {n}")

@@ -479,7 +479,7 @@ def test_the_result_of_two_groups():
     assert dict(made.influence)[label] == pytest.approx(without - made.estimate)
     assert made.most_influential == max(made.influence, key=lambda pair: abs(pair[1]))[0]
     for words in (
-        "features with p < 0.05, of pond minus hill in the search region 'left bank'",
+        "voxels with p < 0.05, of pond minus hill in the search region 'left bank'",
         "held-out mean of pond (n = 6) minus that of hill (n = 6)",
         "whole-procedure exchange of group labels, 199 random exchanges, one-sided: greater",
         "exchangeable over the subjects with respect to the group",
@@ -530,11 +530,12 @@ def test_one_sample_results_have_g_and_influence():
 def test_a_plan_of_two_groups_or_a_score_runs_under_the_guard(kind, tmp_path, monkeypatch):
     monkeypatch.chdir(tmp_path)
     x, geometry = maps(kind), Geometry(SHAPE, tuple(map(tuple, GRID.affine.tolist())))
-    rows = []
-    for label, row in zip(PEOPLE, x, strict=True):
+    rows, made = [], model(kind)
+    for (label, told), row in zip(made.of, x, strict=True):
         write_map(tmp_path / f"{label}.nii", row.reshape(SHAPE), geometry)
-        rows.append(Row(f"{label}.nii", None, Unit(sub=label, suffix="bold")))
-    rule = Procedure(Cluster(p=0.05), KFold(4, seed=2), model=model(kind))
+        column = ((made.name, str(told)),)
+        rows.append(Row(f"{label}.nii", None, Unit(sub=label, suffix="bold"), extra=column))
+    rule = Procedure(Cluster(p=0.05), KFold(4, seed=2), model=made)
     plan = cross_fitted("hollow", rule, PEOPLE, n_flips=49, seed=6, plan="k-fold")
     plan.base_dir = "work"
     plan.config["execution"] = {"crashdump_dir": ".", "create_report": "false"}

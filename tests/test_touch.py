@@ -39,6 +39,7 @@ touches = st.builds(
     unknown=words,
     extractions=st.frozensets(extractions, max_size=3),
     biased=st.booleans(),
+    selected=sets,
 )
 
 
@@ -47,6 +48,7 @@ def contained(small: Touch, large: Touch) -> bool:
     return (
         small.values & ~large.values == 0
         and small.geometry & ~large.geometry == 0
+        and small.selected & ~large.selected == 0
         and small.origins <= large.origins
         and small.unknown <= large.unknown
         and small.extractions <= large.extractions
@@ -139,6 +141,53 @@ class TestTable:
         assert sisters.people_of(0b111) == {"family", "03"}
 
 
+class TestScores:
+    bold = (Unit(sub="01", suffix="bold"), Unit(sub="02"), Unit(sub="02", run="1", suffix="bold"))
+    ages = (Unit(sub="01", suffix="age"), Unit(sub="02", suffix="age"))
+    mood = Unit(sub="01", suffix="mood")
+    table = UnitTable(bold, dict.fromkeys((bold[0], ages[0], mood), "kin"), (*ages, mood))
+
+    def test_scores_are_units_of_the_table_and_stand_last(self):
+        assert self.table.units == (*self.bold, *self.ages, self.mood)
+        assert self.table.scores == 0b111000
+        assert UnitTable(self.bold).scores == 0
+
+    def test_a_score_overlaps_itself_alone(self):
+        # A map whose suffix is left open is still a map.
+        assert self.table.overlapping(0b010000) == 0b010000
+        assert self.table.overlapping(0b000010) == 0b000110
+
+    def test_what_is_measured_is_no_score(self):
+        assert self.table.measured(frozenset({""})) == 0b000111
+        assert self.table.measured(frozenset({"bold"})) == 0b000111
+        assert self.table.measured(frozenset({"age"})) == 0b000010  # of no stated suffix
+
+    def test_a_pattern_matches_scores_by_the_name_of_their_column_only(self):
+        assert self.table.matching(Unit(sub="01")) == 0b000001
+        assert self.table.matching(Unit(suffix="age")) == 0b011010
+
+    def test_a_column_is_all_that_it_says_of_anybody(self):
+        assert self.table.column(["age"]) == 0b011000
+        assert self.table.column(["bold", "mood"]) == 0b100000
+
+    def test_company_is_all_that_belongs_to_the_same_people(self):
+        assert self.table.company(0b100000) == 0b101001
+        assert self.table.company(0b010000) == 0b010110
+        assert self.table.company(0) == 0
+
+    def test_scores_and_maps_are_described_apart(self):
+        assert self.table.describe(0b001001) == "sub-01_bold, sub-01_age"
+        many = UnitTable(
+            [Unit(sub=f"{i}", suffix="bold") for i in range(6)],
+            scores=[Unit(sub=f"{i}", suffix="age") for i in range(6)],
+        )
+        assert many.describe(0b011111_111111) == "all 6 units, all but sub-5_age (5 units)"
+
+    @given(touches)
+    def test_what_chose_is_what_is_inside_and_what_selected(self, touch: Touch):
+        assert touch.choosers == touch.values | touch.selected
+
+
 class TestDescribe:
     table = UnitTable(Unit(sub=f"{i:02d}", suffix="bold") for i in range(1, 21))
 
@@ -184,7 +233,7 @@ class TestUnion:
         whole = union(parts)
         assert all(contained(part, whole) for part in parts)
         for bit in range(6):
-            for role in ("values", "geometry"):
+            for role in ("values", "geometry", "selected"):
                 there = bool(getattr(whole, role) >> bit & 1)
                 assert there is any(bool(getattr(p, role) >> bit & 1) for p in parts)
         for what in ("origins", "unknown", "extractions"):
@@ -223,6 +272,24 @@ class TestCrossFitted:
             meet(a.mask, b.data) for i, a in enumerate(marks) for j, b in enumerate(marks) if i != j
         )
         assert cross_fitted(marks, self.table) is expected
+
+    @given(st.lists(extractions, max_size=4, unique=True))
+    def test_turns_within_a_person_do_not_count_when_their_values_are_averaged(
+        self, marks: list[Extraction]
+    ):
+        people = [self.table.people_of(mark.data) for mark in marks]
+        expected = any(
+            self.table.overlapping(a.mask) & b.data and people[i] != people[j]
+            for i, a in enumerate(marks)
+            for j, b in enumerate(marks)
+        )
+        assert cross_fitted(marks, self.table, averaged=True) is expected
+
+    def test_any_of_a_persons_averaged_values_counts(self):
+        first, second = (self.mark([], [Unit(sub="b", run=run)]) for run in "12")
+        for run in "12":
+            other = self.mark([Unit(sub="b", run=run)], [Unit(sub="c", run="1")])
+            assert cross_fitted([first, second, other], self.table, averaged=True)
 
     def test_leave_one_out_values_are(self):
         data = {s: [Unit(sub=s, run="1"), Unit(sub=s, run="2")] for s in "abc"}

@@ -11,11 +11,12 @@ from __future__ import annotations
 import csv
 import os
 import re
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 
 from ..nodes.errors import InputError
+from ..nodes.scoreunits import Cell
 from ..nodes.touch import ENTITIES, Touch, Unit, UnitTable, union
 from .digests import digest
 
@@ -105,6 +106,22 @@ class Row:
 
 
 @dataclass(frozen=True)
+class Doubt:
+    """Why it is not known what a region derives from, although its source is declared.
+
+    Parameters
+    ----------
+    name : str
+        What stands among the unknown, short.
+    reason, cure : str
+    """
+
+    name: str
+    reason: str
+    cure: str
+
+
+@dataclass(frozen=True)
 class Origin:
     """A declared source of files (or coordinates) from outside the study.
 
@@ -116,11 +133,14 @@ class Origin:
         Paths relative to the study's root; empty for a coordinate.
     derived_from : tuple of Unit
         The study's own units it was made from, if any (blank entities match all).
+    doubts : tuple of Doubt
+        What must be explained first: what it touches is unknown until then.
     """
 
     source: str
     files: tuple[str, ...] = ()
     derived_from: tuple[Unit, ...] = ()
+    doubts: tuple[Doubt, ...] = ()
 
 
 @dataclass
@@ -135,6 +155,21 @@ class Study:
     origins : sequence of Origin
     columns : sequence of str
         Those of the table.
+    tables : sequence of str
+        Files that hold what the columns say of the subjects: the study table itself.
+    read_as : dict of str to str
+        Their digests when they were read.
+
+    Attributes
+    ----------
+    table : UnitTable
+        Of the rows' units, and of the scores: what further columns say of each subject.
+    declared : dict of str to Touch
+        What each origin touches, by its source.
+    scores : dict of (column, label) to Cell
+        What a column says of whom, by ``sub`` and by who counts as one.
+    doubts : dict of str to Doubt
+        By their names.
 
     Examples
     --------
@@ -148,8 +183,12 @@ class Study:
     rows: Sequence[Row]
     origins: Sequence[Origin] = ()
     columns: Sequence[str] = COLUMNS
+    tables: Sequence[str] = ()
+    read_as: Mapping[str, str] = field(default_factory=dict)
     table: UnitTable = field(init=False)
     declared: dict[str, Touch] = field(init=False)
+    scores: dict[tuple[str, str], Cell] = field(init=False)
+    doubts: dict[str, Doubt] = field(init=False)
 
     def __post_init__(self) -> None:
         people: dict[Unit, str] = {}
@@ -163,15 +202,36 @@ class Study:
                     got=f"{person!r} (line {line}) and {row.person!r} (line {row.line})",
                     remedy="give all rows of a subject the same value",
                 )
-        self.table = UnitTable((row.unit for row in self.rows), people)
+        acquired = dict(people)
+        cells = [
+            (row, column, text, Unit(sub=row.unit.sub, suffix=column))
+            for row in self.rows
+            for column, text in row.extra
+            if text
+        ]
+        for row, column, _, unit in cells:
+            if unit in acquired:
+                raise InputError(
+                    "a column is named as what was acquired",
+                    where=f"column {column}",
+                    got=f"suffix {column} of {row.name}",
+                    remedy="rename the column: it is about subjects, not about a measurement",
+                )
+            people[unit] = row.person
+        self.table = UnitTable(acquired, people, (unit for *_, unit in cells))
+        self.scores = {}
+        for row, column, text, unit in cells:
+            for label in {row.unit.sub, row.person}:
+                there = self.scores.get((column, label), Cell(frozenset(), 0))
+                bits = there.units | self.table.bits([unit])
+                self.scores[column, label] = Cell(there.texts | {text}, bits)
         self.declared = {
             origin.source: union(
-                Touch(values=self._derived(other), origins=frozenset({other.source}))
-                for other in self.origins
-                if other.source == origin.source
+                self.of_origin(other) for other in self.origins if other.source == origin.source
             )
             for origin in self.origins
         }
+        self.doubts = {doubt.name: doubt for origin in self.origins for doubt in origin.doubts}
         self._by_path: dict[str, list[Row]] = {}
         for row in self.rows:
             for path in (row.path, *([row.variance] if row.variance else [])):
@@ -182,18 +242,27 @@ class Study:
             for name in origin.files:
                 for key in self._keys(name):
                     self._origins_of.setdefault(key, []).append(origin)
+        if not self.read_as:
+            self.read_as = {path: digest(path) for path in self.tables if os.path.isfile(path)}
+        self._tables = {key for path in self.tables for key in self._keys(path)}
         self._sizes: dict[int, list[str]] | None = None
         self._contents: dict[int, dict[str, list[str]]] = {}
 
-    def _derived(self, origin: Origin) -> int:
+    def of_origin(self, origin: Origin) -> Touch:
+        """What comes from an origin touches."""
         bits = 0
         for pattern in origin.derived_from:
             bits |= self.table.matching(pattern)
-        return bits
+        doubts = frozenset(doubt.name for doubt in origin.doubts)
+        return Touch(bits, origins=frozenset({origin.source}), unknown=doubts)
 
     def _keys(self, path: str) -> set[str]:
         full = os.path.abspath(self.root / path)
         return {full, os.path.realpath(full)}
+
+    def full(self, path: str | Path) -> str:
+        """A path, absolute; links are not followed."""
+        return os.path.abspath(self.root / path)
 
     def relative(self, path: str | Path) -> str:
         """A path relative to the root, or as it is when elsewhere."""
@@ -214,6 +283,8 @@ class Study:
         if key in self._origins_of:
             # Whoever declares a file says what it derives from; all of it counts.
             return union(self.declared[origin.source] for origin in self._origins_of[key])
+        if key in self._tables:
+            return Touch(values=self.table.scores)
         return None
 
     def touch_of(self, path: str, volume: int | None = None) -> Touch | None:
@@ -243,7 +314,29 @@ class Study:
 
     def is_declared(self, path: str) -> bool:
         """Whether the table or an origin names this path."""
-        return any(key in self._by_path or key in self._origins_of for key in self._keys(path))
+        known = (self._by_path, self._origins_of, self._tables)
+        return any(key in names for key in self._keys(path) for names in known)
+
+    def paths(self) -> list[str]:
+        """The absolute paths of all declared files, and what their links lead to."""
+        return [*self._by_path, *self._origins_of, *self._tables]
+
+    def holds(self, folder: str) -> bool:
+        """Whether declared files lie in a folder, or the folder in the study's own."""
+        here = {os.path.abspath(folder), os.path.realpath(folder)}
+        roots = {os.path.abspath(self.root), os.path.realpath(self.root)}
+        if any(path == root or path.startswith(root + os.sep) for path in here for root in roots):
+            return True
+        return any(os.path.dirname(path) in here for path in self.paths())
+
+    def is_origin(self, path: str) -> bool:
+        """Whether an origin names this path."""
+        return bool(self.origins_of(path))
+
+    def origins_of(self, path: str) -> list[Origin]:
+        """The origins that name this path, or what it links to."""
+        named = (self._origins_of.get(key, []) for key in sorted(self._keys(path)))
+        return list(dict.fromkeys(origin for listed in named for origin in listed))
 
     def recognise(self, path: str) -> Touch | None:
         """Like `touch_of` for a declared file, also by its content under another name."""
@@ -255,7 +348,7 @@ class Study:
             return None
         if self._sizes is None:
             self._sizes = {}
-            for key in [*self._by_path, *self._origins_of]:
+            for key in [*self._by_path, *self._origins_of, *self._tables]:
                 if os.path.isfile(key):
                     self._sizes.setdefault(os.path.getsize(key), []).append(key)
         # Only a file of the same size can have the same bytes, so only those are read.
@@ -376,7 +469,8 @@ def read_table(path: str | Path, root: Path | None = None, origins: Sequence[Ori
                     remedy="each map of a subject needs a file (or volume) of its own",
                 )
     try:
-        return Study(root or path.parent, rows, tuple(origins), header)
+        tables = (str(path.absolute()),)
+        return Study(root or path.parent, rows, tuple(origins), header, tables)
     except InputError as error:
         raise error.at(str(path)) from error
 

@@ -13,6 +13,7 @@ from .parcels import ExtractParcels, FamilyTest
 from .procedure import ChooseByFold, ChooseWithin, FlipTest
 from .regions import CombineMasks, ErodeMask, LabelMask, MirrorMask, RegridLabels
 from .roi import Extract, FixedRegionTest
+from .subjects import KeepSubjects
 
 __all__ = [
     "ChooseByFold",
@@ -32,6 +33,7 @@ __all__ = [
     "GivenMask",
     "GroupMap",
     "HeldOutSummary",
+    "KeepSubjects",
     "LabelMask",
     "LeaveOutMaps",
     "MasksByRow",

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import hashlib
 import json
 import math
 from abc import ABC, abstractmethod
@@ -24,10 +25,18 @@ from ..rules import Meeting, Rule, Statistic
 ERROR_FILE = "sequester-error.json"
 
 
+def _release() -> str:
+    """The version, and what the nodes' source is: in a checkout it changes at one version."""
+    source = hashlib.sha256()
+    for path in sorted(Path(__file__).parents[1].rglob("*.py")):
+        source.update(path.read_bytes())
+    return f"{version('sequester')} {source.hexdigest()[:12]}"
+
+
 class InputSpec(BaseInterfaceInputSpec):
     """Adds the release to the hashed inputs: the engine does not notice a changed program."""
 
-    release = traits.Str(version("sequester"), usedefault=True, desc="sequester's version")
+    release = traits.Str(_release(), usedefault=True, desc="sequester's version and source")
 
 
 class SequesterInterface(SimpleInterface, ABC):
@@ -97,13 +106,18 @@ def one_or_each(field: str, items: list[Any] | None, n_rows: int) -> list[Any]:
     return list(items) * (n_rows if len(items) == 1 else 1)
 
 
+def notes_of(folder: Path) -> list[Path]:
+    """What a node of ours (or an element of it) left of an error in its working folder."""
+    elements = folder.glob(f"mapflow/*/{ERROR_FILE}")  # where a MapNode runs its elements
+    return [path for path in (folder / ERROR_FILE, *sorted(elements)) if path.is_file()]
+
+
 def kept_error(folder: Path) -> SequesterError | None:
     """The error a node of ours (or an element of it) left in its working folder, as raised."""
-    elements = folder.glob(f"mapflow/*/{ERROR_FILE}")  # where a MapNode runs its elements
-    path = next((p for p in [folder / ERROR_FILE, *sorted(elements)] if p.is_file()), None)
-    if path is None:
+    notes = notes_of(folder)
+    if not notes:
         return None
-    note = json.loads(path.read_text())
+    note = json.loads(notes[0].read_text())
     kind = _error_kinds(SequesterError)[note["kind"]]
     if "fields" in note:
         fields = dict(note["fields"])
@@ -149,6 +163,7 @@ __all__ = [
     "TraitedSpec",
     "isdefined",
     "kept_error",
+    "notes_of",
     "one_or_each",
     "read_json",
     "traits",

@@ -8,7 +8,6 @@ out, ready for `Extract`. `workflows.around` wires them.
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from functools import partial
 from pathlib import Path
 from typing import Any
 
@@ -17,8 +16,21 @@ from nipype.interfaces.base import File
 from ..errors import InputError
 from ..folds import Fold, LeaveOneOut, Scheme
 from ..heldout import held_out_difference, held_out_result
-from ..rules import Branch, Inputs, Leaf, Rule, Statistic, Tree, chosen_on, element, joined, leaves
-from ..touch import Touch
+from ..procedure import held_out_rows
+from ..rules import (
+    NOTHING,
+    Branch,
+    Inputs,
+    Leaf,
+    Rule,
+    Statistic,
+    Tree,
+    chosen_on,
+    complements,
+    element,
+    fold_loss,
+    joined,
+)
 from .base import InputSpec, SequesterInterface, TraitedSpec, traits, write_json
 
 
@@ -53,28 +65,35 @@ def fold_of_row(folds: Sequence[Fold]) -> list[int]:
     return [of_row[row] for row in sorted(of_row)]
 
 
-def _folds(settings: Any) -> list[Fold]:
-    folds: list[Fold] = (settings.get("scheme") or LeaveOneOut()).folds(settings["labels"])
-    return folds
+HeldOut = list[tuple[int, ...]]  # per fold, the rows it holds out
 
 
-def _by_fold(field: str, made: Callable[[list[Fold], list[Tree]], list[Tree]]) -> Rule:
+def _held_out(settings: Any) -> HeldOut:
+    return held_out_rows(settings.get("scheme") or LeaveOneOut(), settings["labels"])
+
+
+def _by_fold(field: str, made: Callable[[HeldOut, list[Tree]], Sequence[Tree]]) -> Rule:
     """A rule for an output with the structure of the folds, whose items are those of a field."""
 
     def derive(inputs: Inputs) -> Tree:
         tree = inputs.trees.get(field)
         if isinstance(tree, Leaf) or {"labels", "scheme"} & inputs.arriving:
-            return joined(leaves(tree or Branch()), single=False)  # no fold can be told
+            parts = [] if tree is None else [tree]
+            return joined(parts, single=False, lost=fold_loss(inputs, ("labels", "scheme")))
         n = len(inputs.settings["labels"])
-        items = [Leaf(Touch()) if tree is None else element(tree, row) for row in range(n)]
-        return Branch(made(_folds(inputs.settings), items))
+        items = [Leaf(NOTHING) if tree is None else element(tree, row) for row in range(n)]
+        return Branch(made(_held_out(inputs.settings), items))
 
     # What the maps hold cannot reach a list of labels.
     return Rule(frozenset({"in_files", field}), derive)
 
 
-def _side(side: str, folds: list[Fold], items: list[Tree]) -> list[Tree]:
-    return [Branch([items[row] for row in getattr(fold, side)]) for fold in folds]
+def _kept(folds: HeldOut, items: list[Tree]) -> Sequence[Tree]:
+    return complements(items, folds)
+
+
+def _away(folds: HeldOut, items: list[Tree]) -> Sequence[Tree]:
+    return [Branch([items[row] for row in out]) for out in folds]
 
 
 class FoldLists(SequesterInterface):
@@ -87,11 +106,11 @@ class FoldLists(SequesterInterface):
     input_spec = _ListsInput
     output_spec = _ListsOutput
     touch_rules = {
-        "selection_files": _by_fold("in_files", partial(_side, "selection")),
-        "held_out_files": _by_fold("in_files", partial(_side, "held_out")),
-        "selection_labels": _by_fold("labels", partial(_side, "selection")),
-        "held_out_labels": _by_fold("labels", partial(_side, "held_out")),
-        "fold_names": _by_fold("labels", lambda folds, _: [Leaf(Touch()) for _ in folds]),
+        "selection_files": _by_fold("in_files", _kept),
+        "held_out_files": _by_fold("in_files", _away),
+        "selection_labels": _by_fold("labels", _kept),
+        "held_out_labels": _by_fold("labels", _away),
+        "fold_names": _by_fold("labels", lambda folds, _: [Leaf(NOTHING) for _ in folds]),
         "fold_of_row": _by_fold("labels", lambda _, items: items),
     }
 
@@ -172,7 +191,7 @@ class HeldOutSummary(SequesterInterface):
     input_spec = _SummaryInput
     output_spec = _SummaryOutput
     # No p comes out of it, so that values whose masks took turns are accepted.
-    statistic = Statistic(values="values", labels="labels", cross_fitted=True)
+    statistic = Statistic(values="values", labels="labels", cross_fitted=True, scores=("groups",))
 
     def _work(self, cwd: Path) -> dict[str, Any]:
         given = self.inputs

@@ -15,6 +15,7 @@ from ..groupmaps import Floats, Missing, group_map, leave_out_maps
 from ..images import stack, write_map
 from ..procedure import held_out_rows
 from ..rules import all_but_held_out, only
+from ..scoreunits import also_scores
 from ..space import Grid
 from .base import InputSpec, SequesterInterface, TraitedSpec, traits
 
@@ -28,9 +29,18 @@ class _MapsInput(InputSpec):
     design = traits.Instance(Design, desc="a linear model, one row per map; default their mean")
 
 
+class _GroupMapInput(_MapsInput):
+    labels = traits.List(
+        traits.Str, desc="per map: the subject; with a design, whose scores its columns hold"
+    )
+
+
 class _GroupMapOutput(TraitedSpec):
     out_file = File(exists=True, desc="the group map; NaN where too few maps have data")
     count_file = File(exists=True, desc=_COUNT)
+
+
+_WHOLE = also_scores(only("in_files", "design", ignored=("labels",)), "in_files", "design")
 
 
 class GroupMap(SequesterInterface):
@@ -40,12 +50,9 @@ class GroupMap(SequesterInterface):
     than the degrees of freedom of t, which is what `ChooseMask` turns a p into a height by.
     """
 
-    input_spec = _MapsInput
+    input_spec = _GroupMapInput
     output_spec = _GroupMapOutput
-    touch_rules = {
-        "out_file": only("in_files", "design"),
-        "count_file": only("in_files", "design"),
-    }
+    touch_rules = {"out_file": _WHOLE, "count_file": _WHOLE}
 
     def _work(self, cwd: Path) -> dict[str, Any]:
         missing, design = self._value("missing") or Missing(), self._value("design")
@@ -86,7 +93,11 @@ def _folds_held_out(settings: Any) -> list[tuple[int, ...]]:
     return held_out_rows(settings.get("scheme") or LeaveOneOut(), settings["labels"])
 
 
-_RULE = all_but_held_out("in_files", _folds_held_out, ("labels", "scheme"), ("design",))
+_RULE = also_scores(
+    all_but_held_out("in_files", _folds_held_out, ("labels", "scheme"), ("design",)),
+    "in_files",
+    "design",
+)
 
 
 class LeaveOutMaps(SequesterInterface):

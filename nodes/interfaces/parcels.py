@@ -18,7 +18,7 @@ from ..parcels import Parcellation, aligned
 from ..rules import Meeting, Statistic, only
 from .base import InputSpec, SequesterInterface, TraitedSpec, traits, write_json
 
-_MEETING = Meeting(mask="label_files", data="in_files")
+_MEETING = Meeting(mask="label_files", data="in_files", aside=("labels",))
 _OF_LABELS = only("label_files", ignored=("in_files",), single=False)
 
 
@@ -164,6 +164,7 @@ class FamilyTest(SequesterInterface):
     statistic = Statistic(
         values="values_file",
         labels="labels",
+        in_file=True,
         cure="read a label image that was made without any of the tested data (a published one, "
         "or one from other people); or choose one region at a time and use the whole-procedure "
         "sign flip (FlipTest)",

@@ -80,7 +80,7 @@ class LabelMask(SequesterInterface):
     def _work(self, cwd: Path) -> dict[str, Any]:
         name, reference = self.inputs.in_file, self.inputs.reference
         volume, geometry = read_labels(name)
-        mask = labelled(volume, self._numbers(), name)
+        mask = labelled(volume, self.numbers(), name)
         target = geometry_of(open_image(reference))
         if self.inputs.regrid:
             brought = nearest_label(mask.astype(np.uint8), _grid(geometry), _grid(target))
@@ -98,7 +98,8 @@ class LabelMask(SequesterInterface):
             remedy="check that both are in the same space (mm)",
         )
 
-    def _numbers(self) -> tuple[int, ...]:
+    def numbers(self) -> tuple[int, ...]:
+        """The numbers of its labels."""
         labels = self.inputs.labels
         names = [label for label in labels if isinstance(label, str)]
         if not names:

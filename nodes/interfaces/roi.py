@@ -28,6 +28,7 @@ _MEETING = Meeting(
     biased="exploratory",
     these_only="these_subjects",
     certificate="certificate",
+    aside=("labels",),
 )
 
 
