@@ -110,6 +110,11 @@ def called(body: str, **inputs: Any) -> Function:
     return made
 
 
+def hidden(path: object) -> str:
+    """A path as an expression in which the graph does not see a file's name."""
+    return f"{str(path)[::-1]!r}[::-1]"
+
+
 def ran(graph: Workflow, study: Study) -> tuple[GuardPlugin, dict[str, Any]]:
     """The guard, and the nodes that ran, by name."""
     guard = GuardPlugin(study)
@@ -287,7 +292,7 @@ class TestWhileRunning:
         self, study: Study, maps: list[str], tmp_path: Path
     ):
         # It is given subject 2's map, and returns subject 1's.
-        hard = called(f"def mask(x):\n    return {maps[0]!r}\n", x=maps[1])
+        hard = called(f"def mask(x):\n    return {hidden(maps[0])}\n", x=maps[1])
         error = self.refused(self.extraction(hard, [maps[0]]), study, tmp_path)
         (finding,) = error.findings
         assert finding.verdict == "leak"
@@ -297,7 +302,7 @@ class TestWhileRunning:
     def test_a_path_written_into_a_data_function(
         self, study: Study, maps: list[str], tmp_path: Path
     ):
-        hard = called(f"def data(x):\n    return [{maps[1]!r}]\n", x=maps[0])
+        hard = called(f"def data(x):\n    return [{hidden(maps[1])}]\n", x=maps[0])
         region = called("def mask(x):\n    return x\n", x=maps[1])
         error = self.refused(self.extraction(region, hard), study, tmp_path)
         assert study.table.describe(error.findings[0].shared) == "sub-02_bold"
@@ -310,7 +315,7 @@ class TestWhileRunning:
         target = "'copy.nii'" if place == "in the working folder" else repr(str(tmp_path / "c.nii"))
         body = (
             "def mask(x):\n    import os, shutil\n"
-            f"    return os.path.abspath(shutil.copy({maps[0]!r}, {target}))\n"
+            f"    return os.path.abspath(shutil.copy({hidden(maps[0])}, {target}))\n"
         )
         error = self.refused(self.extraction(called(body, x=maps[1]), [maps[0]]), study, tmp_path)
         assert study.table.describe(error.findings[0].shared) == "sub-01_bold"
@@ -321,7 +326,7 @@ class TestWhileRunning:
         # The refusal comes at the first node that sees the file, before it is used.
         graph = workflow()
         slip = Node(
-            called(f"def more(x):\n    return x + [{maps[0]!r}]\n", x=maps[1:]), name="slip"
+            called(f"def more(x):\n    return x + [{hidden(maps[0])}]\n", x=maps[1:]), name="slip"
         )
         group, choose = (
             Node(GroupMap(), name="group"),
@@ -339,7 +344,7 @@ class TestWhileRunning:
         self, kind: str, study: Study, maps: list[str], tmp_path: Path
     ):
         # One step for each of subjects 2 and 3, and both return subject 1's map.
-        body = f"def hard(x):\n    return {maps[0]!r}\n"
+        body = f"def hard(x):\n    return {hidden(maps[0])}\n"
         step = Function(input_names=["x"], output_names=["out"])
         step.inputs.function_str = body
         graph = workflow()
@@ -371,7 +376,7 @@ class TestWhileRunning:
         assert nodes["hear"].result.outputs.out == "word " * 80
 
     def test_a_promise_that_is_kept_passes(self, study: Study, maps: list[str]):
-        hard = called(f"def mask(x):\n    return {maps[1]!r}\n", x=maps[1])
+        hard = called(f"def mask(x):\n    return {hidden(maps[1])}\n", x=maps[1])
         guard, nodes = ran(self.extraction(hard, [maps[0]]), study)
         assert len(nodes["extract"].result.outputs.values) == 1
         assert [(f.verdict, f.level) for f in guard.findings] == [("apart", "subject")]
@@ -380,14 +385,14 @@ class TestWhileRunning:
         self, study: Study, maps: list[str], tmp_path: Path
     ):
         graph = self.extraction(
-            called(f"def mask(x):\n    return {maps[0]!r}\n", x=maps[1]), [maps[0]]
+            called(f"def mask(x):\n    return {hidden(maps[0])}\n", x=maps[1]), [maps[0]]
         )
         self.refused(graph, study, tmp_path)
         self.refused(graph, study, tmp_path)
 
     def test_other_branches_finish(self, study: Study, maps: list[str], tmp_path: Path):
         graph = self.extraction(
-            called(f"def mask(x):\n    return {maps[0]!r}\n", x=maps[1]), [maps[0]]
+            called(f"def mask(x):\n    return {hidden(maps[0])}\n", x=maps[1]), [maps[0]]
         )
         trace = tmp_path / "trace"
         body = f"def act(x):\n    open({str(trace)!r}, 'w')\n    return x\n"
@@ -403,7 +408,7 @@ class TestWhileRunning:
         self, study: Study, maps: list[str], tmp_path: Path
     ):
         stranger = write_map(tmp_path / "stranger.nii", effects(50) > 1, GRID)
-        hard = called(f"def mask(x):\n    return {str(stranger)!r}\n", x=maps[1])
+        hard = called(f"def mask(x):\n    return {hidden(stranger)}\n", x=maps[1])
         self.refused(self.extraction(hard, [maps[0]]), study, tmp_path)
 
     @pytest.mark.parametrize("where", ["of an earlier run", "of another branch"])
@@ -413,7 +418,7 @@ class TestWhileRunning:
         # The mask of a circular look, by its path in the working folder.
         ran(circular(maps, exploratory=True), study)
         (mask,) = tmp_path.rglob("choose/mask.nii.gz")
-        hard = called(f"def mask(x):\n    return {str(mask)!r}\n", x=atlas)
+        hard = called(f"def mask(x):\n    return {hidden(mask)}\n", x=atlas)
         another = where == "of another branch"
         graph = circular(maps, exploratory=True) if another else workflow("second")
         read = Node(Extract(in_files=maps, labels=LABELS), name="read")
@@ -447,7 +452,7 @@ class TestWhileRunning:
 
     def test_several_refusals_arrive_as_one(self, study: Study, maps: list[str], tmp_path: Path):
         graph = self.extraction(
-            called(f"def mask(x):\n    return {maps[0]!r}\n", x=maps[1]), [maps[0]]
+            called(f"def mask(x):\n    return {hidden(maps[0])}\n", x=maps[1]), [maps[0]]
         )
         again = Node(Extract(in_files=[maps[0]], labels=["x"]), name="again")
         graph.connect(graph.get_node("mask"), "out", again, "mask_files")
@@ -459,7 +464,7 @@ class TestWhileRunning:
     def test_a_refusal_arrives_as_itself_when_the_engine_stops_at_the_first_fault(
         self, study: Study, maps: list[str], tmp_path: Path
     ):
-        hard = called(f"def mask(x):\n    return {maps[0]!r}\n", x=maps[1])
+        hard = called(f"def mask(x):\n    return {hidden(maps[0])}\n", x=maps[1])
         graph = self.extraction(hard, [maps[0]])
         graph.config["execution"]["stop_on_first_crash"] = "true"
         assert self.refused(graph, study, tmp_path).findings[0].verdict == "leak"
@@ -467,7 +472,7 @@ class TestWhileRunning:
     def test_the_refusal_says_whether_nodes_had_run(
         self, study: Study, maps: list[str], tmp_path: Path
     ):
-        hard = called(f"def mask(x):\n    return {maps[0]!r}\n", x=maps[1])
+        hard = called(f"def mask(x):\n    return {hidden(maps[0])}\n", x=maps[1])
         assert self.refused(self.extraction(hard, [maps[0]]), study, tmp_path).started
 
     def test_volumes_that_are_not_used_are_not_touched(self, study: Study, tmp_path: Path):

@@ -1,69 +1,179 @@
 """The engine's own plugins, with a look at every node just before it runs.
 
-`before` is called with each node, cached ones too, and may raise to stop it and what depends on
-it; `after` hears of its end ("end" or "exception"), also of the elements of a MapNode.
+`before` is called in the driver with each node, cached ones too, and may raise to stop it and
+what depends on it; `after` hears of its end ("end" or "exception"), also of the elements of a
+MapNode. A worker that dies ends the run with `WorkerLost`; jobs that are still queued when a run
+ends early are taken back.
 """
 
 from __future__ import annotations
 
 import gc
-from collections.abc import Callable
+import getpass
+import importlib.util
+import json
+import os
+import re
+import shutil
+import subprocess
+import sys
+from abc import ABC, abstractmethod
+from collections.abc import Callable, Iterable, Mapping
+from concurrent.futures.process import BrokenProcessPool
+from pathlib import Path
 from traceback import format_exception
 from typing import Any
 
+import numpy as np
+from nipype.pipeline.plugins.base import DistributedPluginBase
+from nipype.pipeline.plugins.ipython import IPythonPlugin
 from nipype.pipeline.plugins.linear import LinearPlugin
 from nipype.pipeline.plugins.multiproc import MultiProcPlugin
+from nipype.pipeline.plugins.slurm import SLURMPlugin
+
+from ..nodes.errors import InputError, SequesterError
 
 Before = Callable[[Any], None]
 After = Callable[[Any, str], None]
 
+_OF_THE_SHELL = re.compile(r"""[\s'"\\$`&;|<>()*?!\[\]{}#~]""")
+ENGINES = ("Linear", "MultiProc", "SLURM", "IPython")
 
-def engine(processes: int, before: Before, after: After) -> Any:
-    """A plugin of the engine: one node after another, or several at once.
+
+class WorkerLost(SequesterError):
+    """A worker ended without an answer: killed, out of memory, its job removed from the queue."""
+
+    def __init__(self, nodes: str, remedy: str) -> None:
+        super().__init__(
+            f"a worker ended without an answer ({nodes}): killed, or out of memory or time; "
+            f"{remedy}; what was finished is kept in the working folder, and a second run goes "
+            "on from there"
+        )
+
+
+def engine(
+    name: str, arguments: Mapping[str, Any], before: Before, after: After
+) -> LinearPlugin | DistributedPluginBase:
+    """A plugin of the engine that is looked at.
 
     Parameters
     ----------
-    processes : int
-        1 for Linear, more for MultiProc.
+    name : str
+        One of ``ENGINES``.
+    arguments : dict
+        The plugin's own ``plugin_args``.
     before, after : callable
+
+    Raises
+    ------
+    InputError
+        For an engine that cannot be looked at, or is not here.
     """
-    if processes > 1:
-        return WatchedMultiProc(processes, before, after)
+    _usable(name)
+    theirs = arguments.get("status_callback")
 
     def status(node: Any, what: str) -> None:
+        if theirs is not None:
+            theirs(node, what)
         if what == "start":
-            before(node)
+            if name == "Linear":
+                before(node)
         else:
             after(node, what)
 
-    return LinearPlugin(plugin_args={"status_callback": status})
+    told = {**arguments, "status_callback": status}
+    if name == "Linear":
+        return LinearPlugin(plugin_args=told)
+    made = {"MultiProc": _MultiProc, "SLURM": _SLURM, "IPython": _IPython}[name](plugin_args=told)
+    made.before = before
+    return made
 
 
-class WatchedMultiProc(MultiProcPlugin):
-    """MultiProc that looks at each node in the driver before it is split, skipped or sent."""
-
-    def __init__(self, processes: int, before: Before, after: After) -> None:
-        def status(node: Any, what: str) -> None:
-            if what != "start":
-                after(node, what)
-
-        super().__init__(
-            {"n_procs": processes, "status_callback": status, "raise_insufficient": False}
+def _usable(name: str) -> None:
+    if name not in ENGINES:
+        graph = name.endswith("Graph") or name in ("CondorDAGMan", "SomaFlow")
+        raise InputError(
+            "this engine sends the whole graph away, so that no node can be looked at before it "
+            "runs" if graph else "the guard does not know this engine",
+            where=f"engine {name}",
+            expected="one of " + ", ".join(ENGINES),
+            remedy=f"use {name.removesuffix('Graph')}" if name == "SLURMGraph" else "",
+        )  # fmt: skip
+    if name == "SLURM" and shutil.which("sbatch") is None:
+        raise InputError(
+            "SLURM is not here",
+            where="engine SLURM",
+            expected="the command sbatch",
+            remedy="run on a machine that submits jobs, or with MultiProc",
         )
-        self._before = before
-        self._graph: Any = None
+    if name == "IPython" and importlib.util.find_spec("ipyparallel") is None:
+        raise InputError(
+            "IPython's clusters are not here",
+            where="engine IPython",
+            expected="the package ipyparallel",
+            remedy="install it, or use MultiProc",
+        )
+
+
+def plugin_args(given: Iterable[str]) -> dict[str, Any]:
+    """A plugin's ``plugin_args`` from texts NAME=VALUE; numbers, true and false are what they say.
+
+    Raises
+    ------
+    InputError
+
+    Examples
+    --------
+    >>> plugin_args(["sbatch_args=--mem 8G --time=9", "max_jobs=20"])
+    {'sbatch_args': '--mem 8G --time=9', 'max_jobs': 20}
+    """
+    made = {}
+    for text in given:
+        name, equals, value = text.partition("=")
+        if not name.isidentifier() or not equals:
+            raise InputError(
+                "an engine's argument that is not NAME=VALUE",
+                expected="--engine-arg sbatch_args='--mem 8G'",
+                got=repr(text),
+            )
+        try:
+            found = json.loads(value)
+        except ValueError:
+            found = value
+        made[name] = found if isinstance(found, bool | int | float) else value
+    return made
+
+
+class _Watched(DistributedPluginBase, ABC):
+    """Looks at each node in the driver before it is split, skipped or sent."""
+
+    before: Before
+
+    def __init__(self, plugin_args: dict[str, Any]) -> None:
+        super().__init__(plugin_args=plugin_args)
+        self._lost: list[WorkerLost] = []
 
     def run(self, graph: Any, config: Any, updatehash: bool = False) -> None:
-        """Run a graph; its loop collects garbage again and again, so what is there is set aside."""
+        """Run a graph; whatever ends it, nothing stays queued.
+
+        Raises
+        ------
+        WorkerLost
+        """
         self._graph = graph
-        gc.freeze()
         try:
             super().run(graph, config, updatehash)
-        except BaseException:
-            self.pool.shutdown(cancel_futures=True)
+        except Exception as error:
+            # The engine's own error is that of the first node that failed, or a count of them.
+            if self._lost:
+                raise self._lost[0] from error
             raise
         finally:
-            gc.unfreeze()
+            self._take_back()
+
+    @abstractmethod
+    def _take_back(self) -> None:
+        """Cancel the jobs that are still queued, if any, and let the workers go."""
 
     def _submit_mapnode(self, jobid: int) -> bool:
         if jobid not in self.mapnodes and not self._passes(jobid):
@@ -78,12 +188,129 @@ class WatchedMultiProc(MultiProcPlugin):
 
     def _passes(self, jobid: int) -> bool:
         try:
-            self._before(self.procs[jobid])
+            self.before(self.procs[jobid])
         except Exception as error:
             self._run_errors.append(error)
-            # The engine's own default is a text, which its crash report then fails to extend.
-            fault = {"result": None, "traceback": format_exception(error)}
-            self._clean_queue(jobid, self._graph, result=fault)
+            self._clean_queue(jobid, self._graph)
             self.proc_done[jobid], self.proc_pending[jobid] = True, False
             return False
         return True
+
+    def _clean_queue(self, jobid: int, graph: Any, result: Any = None) -> Any:
+        # The engine's crash report extends a list of lines; its own default is a text.
+        if result is None:
+            result = {"result": None, "traceback": format_exception(*sys.exc_info())}
+        elif isinstance(result["traceback"], str):
+            result = {**result, "traceback": result["traceback"].splitlines(keepends=True)}
+        return super()._clean_queue(jobid, graph, result=result)
+
+    def _lose(self, remedy: str) -> WorkerLost:
+        """Note that a worker is gone; which of the running nodes it had, nobody can tell."""
+        running = np.flatnonzero(self.proc_done & self.proc_pending)
+        nodes = ", ".join(sorted(str(self.procs[jobid].fullname) for jobid in running))
+        self._lost.append(WorkerLost(nodes, remedy))
+        return self._lost[-1]
+
+
+class _MultiProc(_Watched, MultiProcPlugin):
+    def __init__(self, plugin_args: dict[str, Any]) -> None:
+        super().__init__({"raise_insufficient": False, **plugin_args})
+
+    def run(self, graph: Any, config: Any, updatehash: bool = False) -> None:
+        # The engine's loop collects garbage again and again; what is there already is set aside.
+        gc.freeze()
+        try:
+            super().run(graph, config, updatehash)
+        finally:
+            gc.unfreeze()
+
+    def _take_back(self) -> None:
+        self.pool.shutdown(cancel_futures=True)
+
+    def _async_callback(self, args: Any) -> None:
+        if not args.cancelled() and args.exception() is None:
+            super()._async_callback(args)
+
+    def _get_result(self, taskid: int) -> Any:
+        # The engine asks for answers only, and waits for ever for one that cannot come.
+        future = self._task_obj[taskid]
+        fault = future.exception() if future.done() else None
+        if isinstance(fault, BrokenProcessPool):
+            raise self._lose("run fewer processes, or state what memory the nodes need (mem_gb)")
+        if fault is not None:
+            raise fault
+        return super()._get_result(taskid)
+
+    def _send_procs_to_workers(self, updatehash: bool = False, graph: Any = None) -> None:
+        if self._lost:  # the pool is broken as a whole
+            raise self._lost[0]
+        super()._send_procs_to_workers(updatehash, graph)
+
+
+class _SLURM(_Watched, SLURMPlugin):
+    def __init__(self, plugin_args: dict[str, Any]) -> None:
+        super().__init__(plugin_args)
+        self._logs: dict[int, Path] = {}
+        os.environ.setdefault("LOGNAME", getpass.getuser())  # the engine names jobs by it
+
+    def run(self, graph: Any, config: Any, updatehash: bool = False) -> None:
+        # The engine puts paths into commands as they are.
+        for node in graph.nodes():
+            folder = str(node.output_dir())
+            if _OF_THE_SHELL.search(folder):
+                raise InputError(
+                    "SLURM's jobs cannot start in this working folder",
+                    where=folder,
+                    expected="a path without blanks, quotes and other signs of the shell",
+                    remedy="name another: base_dir of the workflow, or --work",
+                )
+        super().run(graph, config, updatehash)
+
+    def _take_back(self) -> None:
+        if self._pending:
+            subprocess.run(["scancel", *map(str, self._pending)], check=False, capture_output=True)
+
+    def _submit_batchtask(self, scriptfile: str, node: Any) -> int:
+        # The engine takes any result in the folder for the job's, an older one too.
+        for old in Path(node.output_dir()).glob("result_*.pklz"):
+            old.unlink()
+        taskid = int(super()._submit_batchtask(scriptfile, node))
+        self._logs[taskid] = Path(scriptfile).with_name(f"slurm-{taskid}.out")
+        return taskid
+
+    def _get_result(self, taskid: int) -> Any:
+        answer = super()._get_result(taskid)
+        if answer and answer.get("hostname") == "unknown":  # no result file came
+            raise self._lose(f"see its log, {self._logs[taskid]}")
+        return answer
+
+
+class _IPython(_Watched, IPythonPlugin):
+    def __init__(self, plugin_args: dict[str, Any]) -> None:
+        super().__init__(plugin_args)
+        # The engine passes it under a name that the cluster's client no longer heeds.
+        if "url_file" in self.client_args:
+            self.client_args["connection_info"] = self.client_args.pop("url_file")
+
+    def _take_back(self) -> None:
+        if self.taskclient is not None:
+            self.taskclient.close()
+
+    def _send_procs_to_workers(self, updatehash: bool = False, graph: Any = None) -> None:
+        # The cluster takes nothing back that it has queued, so it is given what it can begin.
+        most = self.plugin_args.get("max_jobs", np.inf)
+        self.max_jobs = min(most, max(1, len(self.taskclient.ids)))
+        super()._send_procs_to_workers(updatehash, graph)
+
+    def _get_result(self, taskid: int) -> Any:
+        try:
+            return super()._get_result(taskid)
+        except Exception as error:
+            if getattr(error, "ename", type(error).__name__) == "EngineError":
+                raise self._lose("look at the cluster's log") from error
+            raise
+
+    def _submit_job(self, node: Any, updatehash: bool = False) -> Any:
+        if not self.taskclient.ids:
+            raise self._lose("start engines: ipcluster start, or ipcluster engines")
+        return super()._submit_job(node, updatehash)
