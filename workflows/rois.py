@@ -75,7 +75,7 @@ _PLAN_KEYS = {
     GIVEN_FOLDS: _FOLDED | {"fold_column"},
     LEAVE_RUN_OUT: _CHOOSING,
     SPLIT_RUNS: _CHOOSING | {"halves"},
-    LOCALIZER: _CHOOSING | {"choose_on", "mask_of", "claim"},
+    LOCALIZER: _CHOOSING | {"choose_on", "mask_of", "claim", "claim_reason"},
     ORTHOGONAL: _CHOOSING | {"choose_on", "certificate"},
     A_PRIORI: {"region", "each_label"},
     EXPLORATORY: _CHOOSING,
@@ -105,6 +105,8 @@ class Roi:
         A localizer's one mask for all, from a group map.
     these_subjects : bool
         The declared claim is about the tested subjects only.
+    claim_reason : str
+        Why it is, as stated.
     certificate : Certificate or None
         Of an orthogonal contrast.
     reliability : (float, float) or None
@@ -132,6 +134,7 @@ class Roi:
     reliability: tuple[float, float] | None = None
     variant_of: str = ""
     setting: tuple[tuple[str, Any], ...] = ()
+    claim_reason: str = ""
 
     @property
     def names(self) -> tuple[str, str, str]:
@@ -312,7 +315,19 @@ class _Roi:
             == THESE_SUBJECTS,
             self._certificate(),
             self._reliability(),
+            claim_reason=self._claim_reason(),
         )
+
+    def _claim_reason(self) -> str:
+        reason = str(self.read.get(self.table, "claim_reason", str, "")).strip()
+        if reason and self.table.get("claim") != THESE_SUBJECTS:
+            raise InputError(
+                "a reason for a claim that is not narrowed",
+                where=self.read.where("claim_reason"),
+                expected=f'claim = "{THESE_SUBJECTS}" beside it',
+                got=f'claim = "{self.table.get("claim", "population")}"',
+            )
+        return reason
 
     def _summary(self) -> str:
         summary = self.read.one_of(self.table, "value", SUMMARIES, "mean")
@@ -488,7 +503,7 @@ class _Roi:
             first, second = (
                 read.get(groups, key, str, ..., of="compare") for key in ("first", "second")
             )
-            return Groups(self._of_people(name, "column"), first, second, covariates)
+            return Groups(self._of_people(name, "column"), first, second, covariates, name)
         return Score(self._numbers(column, "score"), covariates, column) if column else None
 
     def _check_model(self, model: Model | None) -> None:

@@ -12,9 +12,11 @@ from typing import Any
 
 from ..nodes.errors import InputError
 from ..nodes.groupmaps import Missing
+from ..nodes.images import geometry_of, open_image
 from .comparisons import Comparison, read_comparisons
-from .digests import digest_text
+from .digests import digest, digest_text
 from .keys import Reader, read_toml
+from .ledger import ledger_path
 from .lineage import recorded_units
 from .regions import Given as GivenRegion
 from .regions import units
@@ -23,7 +25,7 @@ from .selection import Selection
 from .study import Origin, Row, Study, read_table
 
 _KEYS = {
-    "": {"study", "data", "roi", "origin", "comparison"},
+    "": {"study", "data", "roi", "origin", "comparison", "report"},
     "study": {"name", "table", "output", "seed"},
     "data": {
         "select",
@@ -35,8 +37,10 @@ _KEYS = {
         "zeros_are_missing",
         "min_fraction",
         "min_coverage",
+        "fwhm",
     },
-    "origin": {"source", "files", "derived_from"},
+    "origin": {"source", "files", "sha256", "derived_from"},
+    "report": {"background"},
 }
 
 
@@ -57,6 +61,12 @@ class Settings:
     digest : str
         SHA-256 of the file; `text` is what it holds.
     table_path : Path
+    ledger : Path
+        Where the study's ledger lies; it need not exist.
+    fwhm : float or None
+        How smooth the maps are, in mm, where it is stated: how near a centre is to another.
+    background : Path or None
+        What the report's slices are drawn over, if not the study's mean map.
     """
 
     name: str
@@ -70,6 +80,9 @@ class Settings:
     digest: str
     text: str
     table_path: Path
+    ledger: Path
+    fwhm: float | None
+    background: Path | None = None
 
     @property
     def selections(self) -> tuple[Selection, ...]:
@@ -128,7 +141,23 @@ def read_settings(path: str | Path) -> Settings:
         digest=digest_text(read.text),
         text=read.text,
         table_path=root / head["table"],
+        ledger=ledger_path(root / path.name),
+        fwhm=_fwhm(read, data),
+        background=_background(read, toml, root),
     )
+
+
+def _background(read: Reader, toml: dict[str, Any], root: Path) -> Path | None:
+    report = read.get(toml, "report", dict, {})
+    read.known(report, _KEYS["report"], "report")
+    name = read.get(report, "background", str, "")
+    if not name:
+        return None
+    try:
+        geometry_of(open_image(root / str(name)))
+    except InputError as error:
+        raise error.within(read.where("background")) from error
+    return root / str(name)
 
 
 def _maps(read: Reader, data: dict[str, Any]) -> Maps:
@@ -152,6 +181,17 @@ def _maps(read: Reader, data: dict[str, Any]) -> Maps:
         read.one_of(data, "grids", ("one", "own"), "one") == "own",
         coverage,
     )
+
+
+def _fwhm(read: Reader, data: dict[str, Any]) -> float | None:
+    if "fwhm" not in data:
+        return None
+    width = read.number(data, "fwhm", ...)
+    if width <= 0:
+        raise InputError(
+            "fwhm out of range", where=read.where("fwhm"), expected="> 0 mm", got=f"{width:g}"
+        )
+    return width
 
 
 def _distinct(read: Reader, rois: tuple[Roi, ...]) -> None:
@@ -194,11 +234,21 @@ def _of_leaf(leaf: GivenRegion, subs: list[str], study: Study, output: Path) -> 
 def _origins(
     whole: Reader, toml: dict[str, Any], rois: tuple[Roi, ...], study: Study, output: Path
 ) -> Iterable[Origin]:
-    root = study.root
     for roi in rois:
         subs = [label for label, _ in roi.tested.subjects]
         for leaf in roi.region.leaves():
             yield from _of_leaf(leaf, subs, study, output)
+    yield from origin_tables(whole, toml, study)
+
+
+def origin_tables(whole: Reader, toml: dict[str, Any], study: Study) -> Iterator[Origin]:
+    """What the ``[[origin]]`` tables of a file declare; their patterns are relative to the study.
+
+    Raises
+    ------
+    InputError
+    """
+    root = study.root
     for i, table in enumerate(whole.tables(toml, "origin", [])):
         read = whole.within("origin", i)
         read.known(table, _KEYS["origin"], "origin")
@@ -229,6 +279,21 @@ def _origins(
                     remedy="check the pattern, and that the files are there",
                 )
             found += matched
+        _pinned(read, table, root, found)
         derived = units(read, table)
         in_table(read, derived, study)
         yield Origin(read.get(table, "source", str, ..., "origin"), tuple(found), derived)
+
+
+def _pinned(read: Reader, table: dict[str, Any], root: Path, files: Iterable[str]) -> None:
+    """Have every file of an origin be one of those whose digests it states, if it states any."""
+    stated = read.get(table, "sha256", list, None)
+    for name in files if stated is not None else ():
+        if (found := digest(root / name)) not in stated:
+            raise InputError(
+                "a file of an origin is not the one that was declared",
+                where=f"{root / name}, {read.where('sha256')}",
+                expected="a file whose SHA-256 is listed in sha256",
+                got=found,
+                remedy="take the file that was declared, or list the digest of this one",
+            )
