@@ -13,6 +13,8 @@ import pytest
 # Modules that several test modules share, such as worlds.py, lie beside them.
 sys.path.append(str(Path(__file__).parent))
 
+from engines_under_test import cluster, ipython, mortal, slurm  # noqa: F401 - fixtures for every module
+
 # The same examples on every machine, and no time limit on a busy one.
 hypothesis.settings.register_profile("sequester", deadline=None, derandomize=True)
 hypothesis.settings.load_profile("sequester")
@@ -24,3 +26,17 @@ def checks() -> dict[str, Any]:
     path = Path(__file__).with_name("data") / "checks.json"
     made: dict[str, Any] = json.loads(path.read_text(encoding="utf-8"))
     return made
+
+
+@pytest.fixture(scope="session")
+def garden(tmp_path_factory: pytest.TempPathFactory) -> Any:
+    """A study of 8 subjects and 2 runs that ran, with its page; not to be changed."""
+    from gardens import FLIPS, plant
+    from sequester.workflows.report.page import write_report
+    from sequester.workflows.run import run_study
+    from sequester.workflows.settings import read_settings
+
+    study = plant(tmp_path_factory.mktemp("garden"), 8, 2, flips=FLIPS)
+    result = run_study(read_settings(study), record=False)
+    write_report(result.output)
+    return result

@@ -55,6 +55,10 @@ VARIANCE = MAP.replace("maps", "variances")
 CUT = "[...]"
 TABLE = ("table", "FOLDER/maps", "--pattern", "sub-{sub}_task-{task}_run-{run}.nii.gz")
 CHECK, RUN = ("check", "FOLDER/STUDY.toml", "--quiet"), ("run", "FOLDER/STUDY.toml", "--quiet")
+LEDGER = "STUDY.ledger.jsonl"
+DECLARE, VERIFY = ("declare", "--study", "FOLDER/STUDY.toml"), ("verify", f"FOLDER/{LEDGER}")
+CONTOUR = ("contour", "FOLDER/arbor.nii.gz", "FOLDER/STUDY.toml", "--quiet")
+SCRIPT = ("check", "FOLDER/plan.py:make", "--study", "FOLDER/table.tsv")
 
 
 @dataclass(frozen=True)
@@ -656,6 +660,34 @@ SECTIONS = {
             "same bytes as maps/sub-01_task-lanterns_run-1.nii.gz; give the file its row "
             "in the study table, or the region another file",
         ),
+        Case(
+            "The smoothness of the maps is zero.",
+            in_data("fwhm = 0"),
+            "fwhm out of range (FOLDER/STUDY.toml, line 7): expected > 0 mm, got 0",
+        ),
+        Case(
+            "A file of an origin is not the one that was declared.",
+            more('[[origin]]\nsource = "an atlas"\nfiles = ["garden_dseg.tsv"]\nsha256 = ["0123"]'),
+            "a file of an origin is not the one that was declared "
+            "(FOLDER/garden_dseg.tsv, FOLDER/STUDY.toml, line 19): expected a file whose "
+            "SHA-256 is listed in sha256, got [...]; take the file that was declared, or "
+            "list the digest of this one",
+        ),
+        Case(
+            "The report's background does not exist.",
+            more('[report]\nbackground = "anatomy.nii.gz"'),
+            "no such file (FOLDER/anatomy.nii.gz, FOLDER/STUDY.toml, line 17): check the "
+            "path in the study table or the study file",
+        ),
+        Case(
+            "A narrower claim is explained and not made.",
+            edit(
+                'choose_on = { task = "paths" }',
+                'choose_on = { task = "paths" }\nclaim_reason = "they are all there are"',
+            ),
+            "a reason for a claim that is not narrowed (FOLDER/STUDY.toml, line 20): "
+            'expected claim = "these-subjects" beside it, got claim = "population"',
+        ),
     ],
     "Plans and rules": [
         Case(
@@ -695,7 +727,7 @@ SECTIONS = {
         Case(
             "A rule lacks its number.",
             edit(", k = 5", ""),
-            "the strongest features need exactly one of k and fraction "
+            "the strongest voxels need exactly one of k and fraction "
             "(FOLDER/STUDY.toml, line 13, roi Arbor): got k 0, fraction 0.0",
         ),
         Case(
@@ -1275,7 +1307,7 @@ SECTIONS = {
         Case(
             "No study file.",
             nothing,
-            "Usage: sequester [...]Error: Missing argument 'STUDY_TOML'.",
+            "Usage: sequester [...]Error: Missing argument 'STUDY.toml|FILE.py:FUNCTION'.",
             ("check",),
         ),
         Case(
@@ -1379,6 +1411,283 @@ SECTIONS = {
             "{sub}, {ses}, {task}, {acq}, {ce}, {dir}, {rec}, {run}, {contrast}, got "
             "{person}",
             ("table", "FOLDER/maps", "--pattern", "sub-{person}_*.nii.gz"),
+        ),
+        Case(
+            "An engine that the guard does not know.",
+            nothing,
+            "Usage: sequester [...]Error: Invalid value for '--engine': [...]",
+            (*RUN, "--engine", "PBS"),
+        ),
+        Case(
+            "An engine's argument without a name.",
+            nothing,
+            "an engine's argument that is not NAME=VALUE: expected --engine-arg "
+            "sbatch_args='--mem 8G', got '8G'",
+            (*RUN, "--engine-arg", "8G"),
+        ),
+    ],
+    "The ledger": [
+        Case(
+            "It was changed.",
+            put(LEDGER, "{}\n"),
+            "the ledger was changed (FOLDER/STUDY.ledger.jsonl): expected the lines as "
+            "sequester wrote them, and in their order, got line 1: not an entry of a "
+            "ledger; take it back from a copy or a commit",
+        ),
+        Case(
+            "It was changed, and is verified.",
+            put(LEDGER, "{}\n"),
+            "the ledger was changed (FOLDER/STUDY.ledger.jsonl)\nline 1: not an entry of a ledger",
+            VERIFY,
+            exit_code=1,
+        ),
+        Case(
+            "There is none yet.",
+            nothing,
+            "no such ledger (FOLDER/STUDY.ledger.jsonl): declare or run something first",
+            VERIFY,
+        ),
+        Case(
+            "An earlier head is not in it.",
+            put(LEDGER, ""),
+            "the ledger was changed (FOLDER/STUDY.ledger.jsonl)\n"
+            "no entry 0123456789ab: what was there then was written again",
+            (*VERIFY, "--deposited", "0123456789ab"),
+            exit_code=1,
+        ),
+        Case(
+            "A source without a region is declared.",
+            nothing,
+            "nothing to declare: expected MASK, or --centre and --radius",
+            (*DECLARE, "--source", "atlas X"),
+        ),
+        Case(
+            "A region without a source is declared.",
+            nothing,
+            'a region without a source: expected --source "where it comes from, with a reference"',
+            ("declare", "FOLDER/arbor.nii.gz", *DECLARE[1:]),
+        ),
+        Case(
+            "A centre without a radius is declared.",
+            nothing,
+            "declare needs one region: expected MASK, or --centre X Y Z with --radius R, "
+            "got no radius",
+            (*DECLARE, "--centre", "0", "0", "0", "--source", "a paper"),
+        ),
+        Case(
+            "A mask and a sphere are declared at once.",
+            nothing,
+            "declare needs one region: expected MASK, or --centre X Y Z with --radius R, got both",
+            (
+                "declare",
+                "FOLDER/arbor.nii.gz",
+                *DECLARE[1:],
+                "--centre",
+                "0",
+                "0",
+                "0",
+                "--radius",
+                "6",
+            ),
+        ),
+        Case(
+            "A label of a sphere is declared.",
+            nothing,
+            "labels do not go with a sphere: expected an atlas before --label",
+            (
+                *DECLARE,
+                "--centre",
+                "0",
+                "0",
+                "0",
+                "--radius",
+                "6",
+                "--label",
+                "3",
+                "--source",
+                "a paper",
+            ),
+        ),
+        Case(
+            "An atlas is declared with a label that it lacks.",
+            nothing,
+            "no label of this name (FOLDER/garden_dseg.tsv): expected one of 3 names, got"
+            " 'Moss'; take the name from the table, or give the label's number",
+            (
+                "declare",
+                "FOLDER/garden_dseg.nii.gz",
+                *DECLARE[1:],
+                "--label",
+                "Moss",
+                "--source",
+                "atlas X",
+            ),
+        ),
+        Case(
+            "A mask without a voxel is declared.",
+            image("empty.nii.gz", np.zeros(SHAPE, np.uint8)),
+            "empty mask (FOLDER/empty.nii.gz): give a mask with some voxels",
+            ("declare", "FOLDER/empty.nii.gz", *DECLARE[1:], "--source", "drawn"),
+        ),
+        Case(
+            "A region is derived from nobody's data.",
+            nothing,
+            "derived-from names no data of the study: expected such as "
+            "sub-01_task-lanterns_run-1_bold, got 'sub=2'; write the labels as in the "
+            "study table: 01 is not 1",
+            (
+                "declare",
+                "FOLDER/arbor.nii.gz",
+                *DECLARE[1:],
+                "--source",
+                "drawn",
+                "--derived-from",
+                "sub=2",
+            ),
+        ),
+        Case(
+            "A region is derived from an unknown entity.",
+            nothing,
+            "derived-from with an unknown entity: expected sub, ses, task, acq, ce, dir, "
+            "rec, run, suffix: sub=01,task=lanterns, got 'subject=02'",
+            (
+                "declare",
+                "FOLDER/arbor.nii.gz",
+                *DECLARE[1:],
+                "--source",
+                "drawn",
+                "--derived-from",
+                "subject=02",
+            ),
+        ),
+    ],
+    "The shape check": [
+        Case(
+            "No region of the study has this name.",
+            nothing,
+            "no such region in the study: expected one of Arbor, Brook, Cinder, got 'Moss'",
+            (*CONTOUR, "--roi", "Moss"),
+        ),
+        Case(
+            "Each subject's maps have a grid of their own.",
+            both(
+                ARBOR_ONLY,
+                in_data('grids = "own"'),
+                edit('plan = "leave-one-subject-out"', 'plan = "leave-one-run-out"'),
+                edit("flips = 19\n", ""),
+            ),
+            'the shape check needs maps on one grid, and grids = "own" says that they are'
+            " not: check the mask on maps that were brought to one space",
+            CONTOUR,
+        ),
+        Case(
+            "Too few subjects.",
+            both(
+                ARBOR_ONLY,
+                edit(
+                    STUDY[STUDY.index('plan = "leave') : STUDY.index('\n[[roi]]\nname = "Brook"')],
+                    'plan = "a-priori"\nregion = { mask = "arbor.nii.gz", origin = "drawn" }\n',
+                ),
+                exclude("01", "02"),
+            ),
+            "too few people for the shape check (FOLDER/arbor.nii.gz): expected at least "
+            "4 who count as independent, got 3",
+            CONTOUR,
+        ),
+        Case(
+            "The mask is on another grid.",
+            image("arbor.nii.gz", np.ones((7, 5, 4), np.uint8)),
+            "grids differ (FOLDER/arbor.nii.gz): expected the grid of "
+            "FOLDER/maps/sub-01_task-lanterns_run-1.nii.gz: 6 x 5 x 4 voxels of 3 x 3 x 3"
+            " mm, first at (-9, -6, -6) mm, got 7 x 5 x 4 voxels of 3 x 3 x 3 mm, first "
+            "at (-9, -6, -6) mm; resample it to that grid",
+            (*CONTOUR, "--roi", "Brook"),
+        ),
+    ],
+    "A workflow in a script": [
+        Case(
+            "There is no such script.",
+            nothing,
+            "no such script (FOLDER/plan.py): expected FILE.py:FUNCTION, a function that "
+            "returns a workflow",
+            SCRIPT,
+        ),
+        Case(
+            "The study table is not named.",
+            put("plan.py", ""),
+            "no study table (FOLDER/plan.py:make): expected sequester check "
+            "FILE.py:FUNCTION --study table.tsv; make one: sequester table FOLDER",
+            SCRIPT[:2],
+        ),
+        Case(
+            "There is no such ledger.",
+            put("plan.py", "from nipype import Workflow\ndef make():\n    return Workflow('w')\n"),
+            "no such ledger (FOLDER/own.ledger.jsonl): leave --ledger out before the first run "
+            "with GuardPlugin(..., ledger=...)",
+            (*SCRIPT, "--ledger", "FOLDER/own.ledger.jsonl"),
+        ),
+        Case(
+            "There is no such function.",
+            put("plan.py", "def build():\n    pass\n"),
+            "no function 'make' in the script (FOLDER/plan.py): expected one of build; "
+            "name the function that returns the workflow",
+            SCRIPT,
+        ),
+        Case(
+            "The script fails when it is loaded.",
+            put("plan.py", "import moss_of_the_garden\n"),
+            "the script fails on loading it (FOLDER/plan.py, line 1): got "
+            "ModuleNotFoundError: No module named 'moss_of_the_garden'",
+            SCRIPT,
+        ),
+        Case(
+            "The function fails.",
+            put("plan.py", "def make():\n    return 1 / 0\n"),
+            "make() fails (FOLDER/plan.py, line 2): got ZeroDivisionError: division by zero",
+            SCRIPT,
+        ),
+        Case(
+            "The function returns something else.",
+            put("plan.py", "def make():\n    return 7\n"),
+            "make() returns no workflow (FOLDER/plan.py): expected a nipype Workflow, got"
+            " int; end it with: return workflow",
+            SCRIPT,
+        ),
+        Case(
+            "The script runs its workflow.",
+            put("plan.py", "import nipype\nnipype.Workflow('w').run()\n"),
+            "the script runs a workflow when it is loaded (FOLDER/plan.py): expected a "
+            'function that returns it; put the run below: if __name__ == "__main__":',
+            SCRIPT,
+        ),
+        Case(
+            "The file of origins declares something else.",
+            both(put("plan.py", ""), put("origins.toml", "[region]\n")),
+            "unknown key 'region' (FOLDER/origins.toml, line 1): expected one of origin",
+            (*SCRIPT, "--origins", "FOLDER/origins.toml"),
+        ),
+        Case(
+            "An origin names no file.",
+            both(
+                put("plan.py", ""),
+                put("origins.toml", '[[origin]]\nsource = "an atlas"\nfiles = ["parts/*.nii"]\n'),
+            ),
+            "origin names no file (FOLDER/origins.toml, line 3): expected files below "
+            "FOLDER, got 'parts/*.nii'; check the pattern, and that the files are there",
+            (*SCRIPT, "--origins", "FOLDER/origins.toml"),
+        ),
+        Case(
+            "An origin's file is an absolute path.",
+            both(
+                put("plan.py", ""),
+                put(
+                    "origins.toml",
+                    '[[origin]]\nsource = "an atlas"\nfiles = ["/garden/parts/*.nii"]\n',
+                ),
+            ),
+            "pattern of files out of range (FOLDER/origins.toml, line 3): expected a "
+            "pattern relative to the study file, got '/garden/parts/*.nii'",
+            (*SCRIPT, "--origins", "FOLDER/origins.toml"),
         ),
     ],
     "Refused by the guard": [
@@ -1544,7 +1853,7 @@ def test_one_message_says_what_is_wrong(study, case):
         f"expected {case.message}\ngot      {message}"
     )
     assert "Traceback" not in message
-    assert "\n" not in message or case.exit_code == 3 or message.startswith("Usage: ")
+    assert "\n" not in message or case.exit_code in (1, 3) or message.startswith("Usage: ")
 
 
 @pytest.mark.parametrize("spoil", [cell("run", "2"), image(MAP, np.zeros(SHAPE, np.float32))])
@@ -1561,7 +1870,8 @@ INTRO = f"""\
 When a request or its data are wrong, `sequester` ends with exit code 2 and one message on
 standard error: what is wrong, where (the file, its line, the region), what was expected, what
 was there, and what can be done. Nothing is written then: there is no output folder, and earlier
-results are as they were. What the guard refuses ends with exit code 3 and the reasons. With
+results are as they were. What the guard refuses ends with exit code 3 and the reasons. A
+ledger that was changed ends `sequester verify` with exit code 1, and everything else with 2. With
 `--json` the same words are the value of `error`.
 
 The messages below are those of a small study in FOLDER, spoilt in one way at a time; {CUT}

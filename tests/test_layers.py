@@ -12,19 +12,26 @@ WORKFLOWS = Path(sequester.workflows.__file__).parent
 
 # Lowest first; a module imports from modules before it only.
 NODE_LAYERS = [
-    "errors", "power",
-    "progress", "touch", "rules", "space", "regrid", "folds", "flips", "subjects",
-    "groupmaps", "smoothness", "randomfield", "design", "orthogonality",
-    "controlled", "masks", "regions", "roi",
+    "errors", "power", "progress", "touch", "rules", "scoreunits", "space", "regrid",
+    "likeness", "folds", "flips", "subjects", "groupmaps", "smoothness", "randomfield",
+    "design", "orthogonality", "controlled", "contour", "masks", "regions", "roi",
     "reliability", "familywise", "parcels", "foldnull", "foldstack", "signed", "scored",
-    "adjusted", "choosing", "foldcontrol", "compared", "models", "exchange", "procedure",
-    "simulated", "nullsets", "results", "comparisons", "heldout", "fixed", "images", "interfaces",
+    "adjusted", "choosing", "foldsmooth", "foldcontrol", "compared", "models", "exchange",
+    "procedure", "simulated", "nullsets", "results", "comparisons", "heldout", "fixed",
+    "images", "interfaces",
 ]  # fmt: skip
 WORKFLOW_LAYERS = [
-    "digests", "study", "ancestry", "judge", "engines", "guard", "keys", "selection", "regions",
-    "plans", "around", "certificates", "lineage", "rois", "comparisons", "settings", "build",
-    "collect", "outputs", "verify", "run", "curves", "planning", "trials", "kept", "measured",
-    "calibrate", "table", "demo", "show", "cli",
+    "digests", "study", "twins", "states", "literals", "scorelists", "inlined", "ancestry",
+    "caches", "findings", "statistics", "judge", "unitsets", "prov", "record", "engines",
+    "keys", "selection", "regions", "plans", "around", "certificates", "ledger", "lineage",
+    "rois", "comparisons", "settings", "origins", "build", "collect", "looks", "graphledger",
+    "guard", "contours", "pictures", "outputs", "verify", "report", "run", "curves", "planning",
+    "measured", "trials", "kept", "calibrate", "table", "demo", "show", "scripts", "cli",
+]  # fmt: skip
+
+REPORT_LAYERS = [
+    "folder", "words", "methods", "notebook", "drawing", "effects", "slices", "touchmap",
+    "graphmap", "page", "refused",
 ]  # fmt: skip
 
 
@@ -44,7 +51,8 @@ def modules(folder):
 
 def test_every_module_has_its_layer():
     assert sorted(modules(NODES)) == sorted(set(NODE_LAYERS) - {"interfaces"})
-    assert sorted(modules(WORKFLOWS)) == sorted(WORKFLOW_LAYERS)
+    assert sorted(modules(WORKFLOWS)) == sorted(set(WORKFLOW_LAYERS) - {"report"})
+    assert sorted(modules(WORKFLOWS / "report")) == sorted(REPORT_LAYERS)
 
 
 @pytest.mark.parametrize(("folder", "layers"), [(NODES, NODE_LAYERS), (WORKFLOWS, WORKFLOW_LAYERS)])
@@ -53,6 +61,15 @@ def test_modules_import_downward_only(folder, layers):
         for level, module in imports_of(path):
             if level == 1:
                 assert layers.index(module) < layers.index(name), f"{name} imports {module}"
+
+
+def test_the_report_imports_from_below_it_only():
+    below = WORKFLOW_LAYERS[: WORKFLOW_LAYERS.index("report")]
+    for name, path in modules(WORKFLOWS / "report").items():
+        for level, module in imports_of(path):
+            if level == 1:
+                assert REPORT_LAYERS.index(module) < REPORT_LAYERS.index(name), f"{name}: {module}"
+            assert level != 2 or module in below, f"report/{name} imports {module}"
 
 
 def test_nodes_never_import_workflows_nor_the_installed_name():

@@ -65,7 +65,9 @@ def content(folder):
 
 
 def run(study, *arguments):
-    done = CliRunner().invoke(main, ["run", str(study / "STUDY.toml"), "-q", *arguments])
+    done = CliRunner().invoke(
+        main, ["run", str(study / "STUDY.toml"), "-q", "--no-page", *arguments]
+    )
     assert done.exit_code == 0, done.output
     return content(study / "results")
 
@@ -79,14 +81,15 @@ def plain(tmp_path_factory):
     """The study, and what an undisturbed run of the installed command writes."""
     study = write_study(tmp_path_factory.mktemp("plain") / "study")
     command = [str(Path(sys.executable).with_name("sequester")), "run", str(study / "STUDY.toml")]
-    subprocess.run(command, check=True, capture_output=True)
+    subprocess.run([*command, "--no-page"], check=True, capture_output=True)
     return study, content(study / "results")
 
 
 def test_two_runs_give_the_same_bytes(plain):
     study, expected = plain
-    # Masks, overlap and look, tables, each with a JSON; two records and the study file.
-    assert len(expected) == 2 * 8 + 2 * 2 + 2 * 6 + 3
+    # Masks, search region, overlap and look, tables, background, each with a JSON; the record
+    # as JSON, PROV and table, manifest, description and the study file.
+    assert len(expected) == 2 * 8 + 2 * 3 + 2 * 7 + 2 + 3 + 3
     assert run(study) == expected
 
 
@@ -122,7 +125,7 @@ for line in sys.stdin:
     child = os.fork()
     if not child:
         os.dup2(os.open(os.devnull, os.O_WRONLY), 1)
-        cli.main(["run", line.strip(), "--quiet"])
+        cli.main(["run", line.strip(), "--quiet", "--no-page"])
     os.setpgid(child, child)
     print(child, flush=True)
     print(os.waitpid(child, 0)[1], flush=True)

@@ -17,6 +17,8 @@ from scipy import stats
 from sequester import read_settings, run_study
 from sequester.nodes.errors import InputError
 from sequester.workflows.guard import GuardRefused
+from sequester.workflows.report.folder import read_table
+from sequester.workflows.report.words import notes
 from sequester.workflows.run import check_study
 
 SHAPE, LABELS = (8, 8, 6), {1: "Arbor", 2: "Brook", 3: "Cinder"}
@@ -259,9 +261,12 @@ def test_localizer_of_another_task_is_apart_at_run_level(garden):
 def test_group_mask_of_the_same_people_needs_the_narrower_claim(garden):
     text = HERE + roi("Group", "localizer", OTHER + 'mask_of = "group"\n' + PEAK)
     assert 'claim = "these-subjects"' in refused(garden, text, "samepeople")
-    text += 'claim = "these-subjects"\n'
+    text += 'claim = "these-subjects"\nclaim_reason = "they are all there are"\n'
     assert verdicts(garden, text, "claimed") == {("apart", "run")}
-    (test,) = table(ran(garden, text, "claimed") / "roi_tests.tsv")
+    path = ran(garden, text, "claimed") / "roi_tests.tsv"
+    (test,) = table(path)
+    waived = notes(read_table(path))[0]
+    assert waived.kind == "waiver" and "Group, as stated: they are all there are." in waived.text
     assert (test["claim"], test["level"]) == ("these subjects", "run")
     assert test["null"] == "none of these subjects has an effect in the region"
 
@@ -498,8 +503,9 @@ def test_every_plan_gives_the_same_bytes_on_both_engines_cold_and_warm(garden, t
 def test_where_masks_lie(garden):
     output = read_settings(write(garden, EVERY, "every")).output
     rows = {row["mask"]: row for row in table(output / "masks.tsv")}
-    files = {p.name for p in (output / "masks").glob("*.nii.gz") if "dseg" not in p.name}
-    assert set(rows) == files
+    files = {p.name for p in (output / "masks").glob("*.nii.gz")}
+    other = ("_dseg", "_desc-search_mask")
+    assert set(rows) == {name for name in files if not any(word in name for word in other)}
     row = rows["label-Given_mask.nii.gz"]
     mm = coordinates(affine())[ball(garden)]
     assert (int(row["voxels"]), float(row["mm3"])) == (len(mm), 27.0 * len(mm))
@@ -509,6 +515,15 @@ def test_where_masks_lie(garden):
     share = nib.load(output / "masks" / overlap["mask"]).get_fdata()
     top = coordinates(affine())[share == share.max()]
     assert any(np.allclose([float(overlap[f"top_{axis}"]) for axis in "xyz"], at) for at in top)
+    assert row["peak_x"] == overlap["peak_x"] == "n/a", "no map chose"
+    chosen = [row for row in rows.values() if row["peak_value"] != "n/a"]
+    assert {row["roi"] for row in chosen} == {
+        "Loso", "Five", "Half", "Site", "Runs", "Odd", "Own", "Look"
+    }  # fmt: skip
+    for row in chosen:
+        mask = nib.load(output / "masks" / row["mask"]).get_fdata() > 0
+        peak = [float(row[f"peak_{axis}"]) for axis in "xyz"]
+        assert any(np.allclose(peak, mm) for mm in coordinates(affine())[mask])
 
 
 def test_wide_table_and_cells(garden):
@@ -706,6 +721,12 @@ def test_comparisons_of_regions_given_beforehand(halves):
             "folds and one without",
         ),
         (DIFFER, roi("C", "exploratory", PEAK) + DIFFER.replace('"B"', '"C"'), "no single tested"),
+        (
+            DIFFER,
+            roi("C", "k-fold", FOLDS + 'folds = 3\nrule = { kind = "threshold", p = 0.05 }\n')
+            + DIFFER.replace('"B"', '"C"'),
+            'C may find no region in a fold.*give C on_empty = "strongest" with a k',
+        ),
     ],
 )
 def test_comparison_of_regions_that_does_not_do(halves, old, new, told):

@@ -1,4 +1,4 @@
-"""The command line: demo, run, check, power, calibrate, table."""
+"""The command line: demo, run, check, declare, verify, power, calibrate, table."""
 
 from __future__ import annotations
 
@@ -7,7 +7,7 @@ import os
 import sys
 import textwrap
 from collections.abc import Callable
-from functools import wraps
+from functools import partial, wraps
 from pathlib import Path
 from typing import Any
 
@@ -22,12 +22,18 @@ from ..nodes.errors import InputError, SequesterError
 from ..nodes.images import read_map, write_bytes
 from ..nodes.results import estimate_texts
 from .calibrate import Calibration, calibrate
+from .contours import TOO_SMALL, check_mask
 from .curves import curves_svg
 from .demo import PLACES, truth_in, write_demo
-from .guard import GuardRefused
+from .engines import ENGINES, plugin_args
+from .guard import NOTHING_JUDGED, GuardRefused
+from .ledger import Entry, Ledger, ledger_path
+from .origins import declare as declare_region
+from .origins import declare_in, given_by_hand, unit_of
 from .planning import FORMING, POWERS, SIZES, TESTS, Planned, plan_from, plan_inflation, plan_test
-from .run import check_study, run_study
-from .settings import read_settings
+from .run import RunResult, check_study, engine_quiet, run_study
+from .scripts import check_workflow, is_script, study_of, workflow_from
+from .settings import Settings, read_settings
 from .show import (
     CAUTION,
     Progress,
@@ -37,7 +43,7 @@ from .show import (
     print_table,
     print_tests,
 )
-from .study import table_text
+from .study import read_table, table_text
 from .table import rows_from, with_participants
 from .trials import Simulation, plan_study
 
@@ -111,33 +117,238 @@ def _print_json(told: dict[str, Any]) -> None:
     show_default=True,
     help="How many steps may run at once; the results have the same bytes.",
 )
+@click.option(
+    "--engine",
+    type=click.Choice(ENGINES),
+    help="What runs the steps; default: Linear, or MultiProc for more than one process.",
+)
+@click.option(
+    "--engine-arg",
+    "engine_args",
+    metavar="NAME=VALUE",
+    multiple=True,
+    help="What the engine is given, such as sbatch_args='--mem 8G'; may be repeated.",
+)
+@click.option("--no-page", is_flag=True, help="Make no page; `sequester report` makes it later.")
 @_command
 def run(
-    study_toml: Path, work: Path | None, processes: int, show: Progress, as_json: bool
+    study_toml: Path,
+    work: Path | None,
+    processes: int,
+    engine: str | None,
+    engine_args: tuple[str, ...],
+    no_page: bool,
+    show: Progress,
+    as_json: bool,
 ) -> dict[str, Any]:
-    """Analyse a study and write its output folder."""
+    """Analyse a study, write its output folder, and the page of it."""
+    how = {"engine": engine or "", "plugin_args": plugin_args(engine_args), "processes": processes}
     settings = read_settings(study_toml)
-    result = run_study(settings, show.node, work, processes)
+    result, page = _run(settings, show, page=not no_page, work=work, **how)
     show.clear()
     if not as_json:
         print_tests(settings, result.tests, result.comparisons, result.overlaps)
-        click.echo(f"\nWritten to {result.output}\n{CAUTION}")
-    return {"output": str(result.output), "tests": result.tests}
+        click.echo(f"\nWritten to {result.output}")
+        if page is not None:
+            click.echo(f"The page to read: {page}")
+        click.echo(CAUTION)
+    told = {"output": str(result.output), "report": page and str(page)}
+    return {**told, "tests": result.tests}
+
+
+def _run(
+    settings: Settings, show: Progress, *, page: bool = True, **more: Any
+) -> tuple[RunResult, Path | None]:
+    """Run a study and make its page; a refusal's page goes when a later run succeeds."""
+    from .report.page import PAGE, write_report  # draws, and so loads slowly
+    from .report.refused import refused_page, write_refused
+
+    def finish(folder: Path) -> None:
+        show.say("making the page")
+        write_report(folder)
+
+    try:
+        result = run_study(settings, show.node, finish=finish if page else None, **more)
+    except GuardRefused as error:
+        told = write_refused(error, settings.output, settings.name)
+        error.args = (f"{error}\n\nThe refusal as a page: {told}",)
+        raise
+    refused_page(settings.output).unlink(missing_ok=True)
+    return result, result.output / PAGE if page else None
 
 
 @main.command()
-@click.argument("study_toml", type=click.Path(path_type=Path))
+@click.argument("run_folder", type=click.Path(path_type=Path))
 @_command
-def check(study_toml: Path, show: Progress, as_json: bool) -> dict[str, Any]:
-    """Judge a study without running it: every meeting, its verdict and level."""
-    settings = read_settings(study_toml)
-    show.say("reading headers and digests")
-    findings = check_study(settings)
+def report(run_folder: Path, show: Progress, as_json: bool) -> dict[str, Any]:
+    """Make the page of a run again, from its output folder alone: report.html and its figures."""
+    from .report.page import write_report  # draws, and so loads slowly
+
+    page = write_report(run_folder)
+    if not as_json:
+        click.echo(f"The page to read: {page}")
+    return {"report": str(page)}
+
+
+@main.command()
+@click.argument("target", metavar="STUDY.toml|FILE.py:FUNCTION")
+@click.option(
+    "--study",
+    "table",
+    type=click.Path(path_type=Path),
+    help="The study table, when a function of a script makes the workflow.",
+)
+@click.option(
+    "--origins",
+    type=click.Path(path_type=Path),
+    help="A TOML file with [[origin]] tables, as in STUDY.toml.",
+)
+@click.option(
+    "--ledger",
+    type=click.Path(path_type=Path),
+    help="That of the script's runs: it is read, and not written.",
+)
+@_command
+def check(
+    target: str,
+    table: Path | None,
+    origins: Path | None,
+    ledger: Path | None,
+    show: Progress,
+    as_json: bool,
+) -> dict[str, Any]:
+    """Judge a study, or a workflow, without running it: every meeting, its verdict and level.
+
+    \b
+    sequester check STUDY.toml
+    sequester check FILE.py:FUNCTION --study table.tsv
+    """
+    if table is None:
+        if origins is not None or ledger is not None or is_script(target):
+            raise InputError(
+                "no study table",
+                where=target,
+                expected="sequester check FILE.py:FUNCTION --study table.tsv",
+                remedy="make one: sequester table FOLDER",
+            )
+        settings = read_settings(target)
+        show.say("reading headers and digests")
+        study, findings = settings.study, check_study(settings)
+        fine = "Nothing is refused; `sequester run` may run this study."
+    else:
+        study = study_of(table, origins)
+        findings = check_workflow(workflow_from(target), study, ledger)
+        fine = "Nothing is refused; the workflow may run under GuardPlugin."
+        if not findings:
+            fine = NOTHING_JUDGED
     show.clear()
     if not as_json:
-        print_findings(findings)
-        click.echo("\nNothing is refused; `sequester run` may run this study.")
-    return {"findings": [finding_record(f, settings.study) for f in findings]}
+        if findings:
+            print_findings(findings)
+            click.echo()
+        click.echo(textwrap.fill(fine, 96))
+    return {"findings": [finding_record(f, study) for f in findings]}
+
+
+@main.command()
+@click.argument("mask", required=False, type=click.Path(path_type=Path))
+@click.option(
+    "--study",
+    "study_toml",
+    type=click.Path(path_type=Path),
+    default=Path("STUDY.toml"),
+    show_default=True,
+    help="The study whose ledger it goes to; with --ledger, its table.",
+)
+@click.option(
+    "--ledger",
+    type=click.Path(path_type=Path),
+    help="That of a workflow of your own, run with GuardPlugin(..., ledger=...).",
+)
+@click.option("--source", default="", help="Where the region comes from, with a reference.")
+@click.option("--label", "labels", multiple=True, help="MASK is an atlas: number or name.")
+@click.option("--all-labels", is_flag=True, help="MASK is an atlas: all of it.")
+@click.option("--centre", type=float, nargs=3, help="A sphere instead of a MASK: x y z in mm.")
+@click.option("--radius", type=float, help="Of the sphere, in mm.")
+@click.option(
+    "--derived-from",
+    multiple=True,
+    help="Data of the study it was made from, such as sub=01,task=lanterns; may be repeated.",
+)
+@click.option("--explained", default="", help="Why it is like a mask that a run recorded.")
+@_command
+def declare(
+    mask: Path | None,
+    study_toml: Path,
+    ledger: Path | None,
+    source: str,
+    derived_from: tuple[str, ...],
+    explained: str,
+    show: Progress,
+    as_json: bool,
+    **place: Any,
+) -> dict[str, Any]:
+    """Write to the study's ledger where a region comes from, before data are looked at.
+
+    \b
+    sequester declare MASK --source TEXT                a mask
+    sequester declare ATLAS --label 12 --source TEXT    labels of an atlas
+    sequester declare --centre X Y Z --radius R --source TEXT
+    sequester declare                                   all that the study file states
+    """
+    stated: Callable[..., tuple[list[Entry], list[str]]]
+    if ledger is None:
+        settings = read_settings(study_toml)
+        study, path, stated = settings.study, settings.ledger, partial(declare_region, settings)
+    else:
+        study, path = read_table(study_toml), ledger
+        stated = partial(declare_in, path, study)
+    derived = tuple(unit_of(text, study) for text in derived_from)
+    region = given_by_hand(study, mask, source.strip(), derived, **place)
+    if region is None and (ledger is not None or source or derived or explained):
+        raise InputError("nothing to declare", expected="MASK, or --centre and --radius")
+    made, notes = stated(region, explained)
+    head = " ".join(Ledger(path).sound().heads)
+    if not as_json:
+        for entry in made:
+            told = entry.body.get("what") or f"{entry.body['field']}: {entry.body['says']}"
+            click.echo(f"{entry.kind}: {told}")
+        if not made:
+            click.echo("Nothing new: all of it is in the ledger.")
+        for note in notes:
+            click.echo("\n" + textwrap.fill(f"note: {note}", 96))
+        click.echo(f"head {head}")
+    return {"entries": [entry.digest for entry in made], "notes": notes, "head": head}
+
+
+@main.command()
+@click.argument("study_or_ledger", type=click.Path(path_type=Path))
+@click.option("--deposited", default="", help="A head that was noted earlier: it must be there.")
+@_command
+def verify(study_or_ledger: Path, deposited: str, show: Progress, as_json: bool) -> dict[str, Any]:
+    """See whether a ledger holds what was written, and print its head.
+
+    Exit codes: 0 when it does, 1 when it was changed.
+    """
+    given = study_or_ledger
+    path = ledger_path(given) if given.suffix == ".toml" else given
+    if not path.is_file():
+        raise InputError("no such ledger", where=str(path), remedy="declare or run something first")
+    chain = Ledger(path).chain()
+    faults = chain.problems(deposited)
+    if faults:
+        raise SequesterError(f"the ledger was changed ({path})\n" + "\n".join(faults))
+    head = " ".join(chain.heads)
+    if not as_json:
+        kinds = [entry.kind for entry in chain.entries]
+        counts = ", ".join(f"{kinds.count(kind)} {kind}" for kind in dict.fromkeys(kinds))
+        click.echo(f"{len(kinds)} entries: {counts or 'none'}")
+        if chain.torn:
+            click.echo(
+                f"A torn tail of {chain.torn} bytes: a write was cut off. The next one removes it."
+            )
+        click.echo(f"head {head}")
+    return {"entries": len(chain.entries), "torn": chain.torn, "head": head}
 
 
 @main.command()
@@ -324,6 +535,41 @@ def _planned(
     return plan_inflation(ps or FORMING, ns or SIZES)
 
 
+@main.command("contour")
+@click.argument("mask", type=click.Path(path_type=Path))
+@click.argument("study_toml", type=click.Path(path_type=Path))
+@click.option("--roi", default="", help="On the maps of this region; default: all sets of maps.")
+@_command
+def contour_command(
+    mask: Path, study_toml: Path, roi: str, show: Progress, as_json: bool
+) -> dict[str, Any]:
+    """Does a mask of unknown making follow the contour of a study's maps?
+
+    A mask that was thresholded from the data it is to be tested on shows it by its boundary.
+    It is a report: nothing is refused, and no effect in the mask is read.
+    """
+    settings = read_settings(study_toml)
+    show.say("reading maps")
+    with engine_quiet():
+        found = check_mask(mask.absolute(), settings, roi)
+    show.clear()
+    told = [
+        {
+            "maps_of": one.name,
+            "contour": made and made.share,
+            "p": made and made.p,
+            "p_placements": made and made.p_placements,
+            "p_steps": made and made.p_steps,
+            "flagged": made and made.flagged,
+            "sentence": made.describe() if made else TOO_SMALL,
+        }
+        for one, made in found
+    ]
+    for row in told if not as_json else []:
+        click.echo(textwrap.fill(f"On the maps of {row['maps_of']}. {row['sentence']}", 96))
+    return {"checked": told}
+
+
 @main.command("calibrate")
 @click.argument("study_toml", type=click.Path(path_type=Path))
 @click.option("--sets", type=int, default=500, show_default=True, help="Data sets per region.")
@@ -370,7 +616,7 @@ def demo(folder: Path, show: Progress, as_json: bool) -> dict[str, Any]:
     """Make a small study with known truth, analyse it, and have its circular twin refused."""
     show.say("making 24 subjects x 4 runs of effect maps")
     honest, circular = write_demo(folder)
-    result = run_study(read_settings(honest), show.node)
+    result, page = _run(read_settings(honest), show, record=False)
     tests = {row["roi"]: row for row in result.tests}
 
     def truth(pattern: str) -> float:
@@ -380,7 +626,7 @@ def demo(folder: Path, show: Progress, as_json: bool) -> dict[str, Any]:
     held_out = {name: truth(f"label-{name}_desc-without*_mask.nii.gz") for name in PLACES}
     looked = {name: truth(f"label-{name}Look_mask.nii.gz") for name in PLACES}
     try:
-        run_study(read_settings(circular), show.node)
+        _run(read_settings(circular), show, record=False)
     except GuardRefused as error:
         refusal = str(error)
     else:
@@ -426,11 +672,13 @@ def demo(folder: Path, show: Progress, as_json: bool) -> dict[str, Any]:
         )
         click.echo(textwrap.indent(refusal, "    "))
         click.echo(
-            f"\nResults are in {result.output}; start from {honest} for your own.\n{CAUTION}"
+            f"\nResults are in {result.output}, the page to read is {page};\n"
+            f"start from {honest} for your own.\n{CAUTION}"
         )
     return {
         "tests": result.tests,
         "truth": held_out,
         "truth_in_circular": looked,
         "refusal": refusal,
+        "report": str(page),
     }

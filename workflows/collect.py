@@ -62,11 +62,14 @@ class MaskOutput:
     path : Path
     sources : tuple of str
         The study's files whose values it derives from.
+    peak : tuple of float
+        Of the map that chose it, highest in it: x, y, z in mm and the value; () without one.
     """
 
     name: str
     path: Path
     sources: tuple[str, ...]
+    peak: tuple[float, ...] = ()
 
 
 @dataclass(frozen=True)
@@ -86,6 +89,8 @@ class RoiOutput:
         The masks of the search region, one or one per row; empty for the whole map.
     flips : Path or None
         The statistic as observed, then under each exchange of the whole procedure.
+    maps : tuple of Path
+        The maps it was read in.
     """
 
     roi: Roi
@@ -95,6 +100,7 @@ class RoiOutput:
     overlap: Path | None
     searched: tuple[Path, ...]
     flips: Path | None = None
+    maps: tuple[Path, ...] = ()
 
 
 def find_nodes(graph: Any) -> dict[str, Any]:
@@ -115,6 +121,7 @@ def collect(roi: Roi, settings: Settings, nodes: dict[str, Any]) -> RoiOutput:
     names = _names(roi, rows, given, choose)
     of_row = [names[path] for path in (given if len(given) > 1 else given * len(rows.subjects))]
     overlap = getattr(choose.result.outputs, "overlap_file", None) if choose is not None else None
+    peaks = {} if choose is None else peaks_of(choose.result.outputs)
     mm3 = {name: _voxel_mm3(path) for path, name in names.items()}
     return RoiOutput(
         roi,
@@ -126,13 +133,24 @@ def collect(roi: Roi, settings: Settings, nodes: dict[str, Any]) -> RoiOutput:
             )
         ),
         tuple(
-            MaskOutput(name, path, _sources(roi, rows, of_row, name, settings))
+            MaskOutput(name, path, _sources(roi, rows, of_row, name, settings), peaks.get(path, ()))
             for path, name in names.items()
         ),
         None if overlap is None else Path(overlap),
         _searched(given if roi.plan == A_PRIORI else None, choose),
         _flips(mine.get("test")),
+        tuple(map(Path, extract.inputs.in_files)),
     )
+
+
+def peaks_of(made: Any) -> dict[Path, tuple[float, ...]]:
+    """The peak of each mask that a node chose."""
+    if hasattr(made, "mask_file"):
+        listed = isinstance(made.mask_file, list)  # of a MapNode
+        masks, peaks = (made.mask_file, made.peak) if listed else ([made.mask_file], [made.peak])
+        return dict(zip(map(Path, masks), map(tuple, peaks), strict=True))
+    masks = made.mask_files if hasattr(made, "mask_files") else made.row_masks
+    return dict(zip(map(Path, masks), map(tuple, made.peaks), strict=True))
 
 
 def _flips(test: Any) -> Path | None:
@@ -176,6 +194,7 @@ def _family(roi: Roi, rows: Selection, mine: dict[str, Any], settings: Settings)
         ),
         None,
         (),
+        maps=tuple(map(Path, extract.inputs.in_files)),
     )
 
 

@@ -27,11 +27,13 @@ from ..nodes.space import Grid
 from .collect import RoiOutput
 from .digests import digest
 from .judge import Finding
+from .pictures import FLIP_COLUMNS, flip_rows, write_pictures
 from .plans import CROSS_FITTED, EXPLORATORY
 from .rois import Roi
 from .selection import Subjects
 from .settings import Settings
 from .study import CELLS, Row, Study
+from .unitsets import encoded
 
 MANIFEST = "manifest.json"
 _DEPENDENCIES = ("nipype", "nibabel", "numpy", "scipy", "networkx")
@@ -64,6 +66,7 @@ TEST_COLUMNS = {
     "null_value": "Subtracted from the maps: estimates are differences from it.",
     "claim": "Who the test speaks of: the population, these subjects only (as declared), or single "
     "subjects (regions of their own).",
+    "claim_reason": "Why it speaks of these subjects only, as stated.",
     "search": "The search region that the null hypothesis covers.",
     "n_subjects": "Independent subjects tested: rows that share an exchange value are one.",
     "estimate": "Mean of the values; of compare, the difference of the groups' means; of score, "
@@ -81,6 +84,8 @@ TEST_COLUMNS = {
     "over the labels of an atlas.",
     "p_max": "Single-step p over all regions exchanged together: the chance of any finding as "
     "large when none of them has an effect; search regions may overlap (folded plans).",
+    "looks": "Different looks that had read some of these voxels in some of these data when this "
+    "one was first made, itself included.",
     "p_kind": "The test.",
     "sided": "greater, less or two-sided.",
     "null": "The null hypothesis.",
@@ -88,15 +93,21 @@ TEST_COLUMNS = {
     "g": "Standardised effect with Hedges' factor for small samples: of the mean, or of a "
     "difference of two groups.",
     "most_influential": "The subject without whose value the estimate changes most.",
-    "n_cells": "Subjects per group that is compared.",
+    "n_cells": "Independent subjects per group that is compared; else per cell of the tested maps "
+    "(and of those subtracted, and of a baseline): named by what tells the cells apart.",
     "ceiling": "Largest correlation that the stated reliabilities allow (Spearman 1904).",
     "n_flips": "Sign flips made.",
     "n_folds": "Folds.",
     "n_empty": "Folds in which the rule found nothing and the value counts as 0.",
-    "n_replaced": "Folds in which the rule found nothing and the strongest features stood in.",
+    "n_replaced": "Folds in which the rule found nothing and the strongest voxels stood in.",
     "dice": "Mean Dice overlap of pairs of fold masks.",
     "noise_dice": "The same under sign flips: what noise alone gives.",
     "coverage": "Least coverage over subjects; empty masks do not count.",
+    "contour": "Share of pairs of voxels along the given region's boundary in which the inside has "
+    "the higher group t; about .5 for a region that has nothing to do with the map (shape check).",
+    "contour_p": "Of the shape check: the chance of so much for a region made without these data; "
+    "at or below .01 it is said in the sentence.",
+    "contour_step_p": "The same against an honest boundary with a step as high across it.",
     "level": "What independence of mask and data is shown about: subject or run.",
     "verdict": "The guard's verdict: apart, certified (orthogonal contrast), or leak (allowed for "
     "exploratory values alone).",
@@ -128,6 +139,8 @@ COMPARISON_COLUMNS = {
     "equivalent": "Of equivalence: whether the interval lies within it.",
     "p": "p-value; of a simple effect, Holm-adjusted over the simple effects.",
     "p_kind": "The test.",
+    "looks": "Different looks that had read some of these voxels in some of these data when this "
+    "one was first made, itself and those of its regions included.",
     "null": "The null hypothesis.",
     "assumption": "What the test takes for granted.",
     "sentence": "The result in a sentence.",
@@ -146,6 +159,12 @@ MASK_COLUMNS = {
         "most often; the first of several)."
         for axis in "xyz"
     },
+    **{
+        f"peak_{axis}": f"Highest voxel, in the direction of selection, of the map that chose the "
+        f"mask (of a fold: of its selection side) inside it, {axis} in mm; n/a where no map chose."
+        for axis in "xyz"
+    },
+    "peak_value": "The value there: t, or the mean where the rule reads means.",
 }
 SENSITIVITY_COLUMNS = {
     "roi": "Region of interest.",
@@ -164,6 +183,7 @@ TOUCH_COLUMNS = {
     "extraction": "The node (and element) that reads data inside it.",
     "role": "values or geometry: how the mask derives from the units.",
     "encoding": "units: the list names the units touched; all_but: it names the units NOT touched.",
+    "of": "Of all_but: all units with these suffixes; n/a: of all units.",
     "touched": "Units, separated by spaces.",
     "tested": "Units read inside the mask, separated by spaces.",
     "origin": "Declared source of a mask from outside.",
@@ -312,6 +332,10 @@ def write_all(
     if variants:
         _table(stage / "sensitivity.tsv", SENSITIVITY_COLUMNS, _varied(outputs, variants))
     _table(stage / "roi_tests.tsv", TEST_COLUMNS, tests)
+    write_pictures(stage, settings, outputs)
+    flips = list(flip_rows(outputs))
+    if flips:
+        _table(stage / "flips.tsv", FLIP_COLUMNS, flips)
     _table(stage / "touches.tsv", TOUCH_COLUMNS, _touch_rows(settings.study, findings))
     write_json(
         stage / "dataset_description.json",
@@ -354,15 +378,20 @@ def _value_rows(outputs: Sequence[RoiOutput]) -> Iterator[dict[str, Any]]:
             }
 
 
+_PEAK = ("peak_x", "peak_y", "peak_z", "peak_value")
+
+
 def _mask_rows(folder: Path, outputs: Sequence[RoiOutput]) -> Iterator[dict[str, Any]]:
     """Where every mask lies: size, centre, and where a fold overlap is densest."""
     for output in outputs:
         if output.roi.each_label:
             continue  # an image of many labels; their sizes are with the values
-        names = [mask.name for mask in output.masks]
-        names += [_overlap_name(output)] if output.overlap is not None else []
-        for name in names:
-            yield {"roi": output.roi.name, "mask": name, **_lie(folder / name)}
+        peaks = {mask.name: mask.peak for mask in output.masks}
+        if output.overlap is not None:
+            peaks[_overlap_name(output)] = ()
+        for name, peak in peaks.items():
+            row = {"roi": output.roi.name, "mask": name, **_lie(folder / name)}
+            yield row | dict(zip(_PEAK, peak, strict=False))
 
 
 def _lie(path: Path) -> dict[str, Any]:
@@ -445,10 +474,7 @@ def _cell_rows(settings: Settings) -> Iterator[dict[str, Any]]:
         sides |= {"chosen on": roi.choosing.subjects if roi.choosing is not None else ()}
         left = [*roi.tested.left_out, *(roi.choosing.left_out if roi.choosing else ())]
         for side, subjects in sides.items():
-            cells: dict[tuple[str, ...], list[Row]] = {}
-            for row in (row for _, rows in subjects for row in rows):
-                cells.setdefault(tuple(row.cell), []).append(row)
-            for cell, rows in sorted(cells.items()):
+            for cell, rows in _by_cell(subjects).items():
                 yield {
                     "roi": roi.name,
                     "side": side,
@@ -460,12 +486,41 @@ def _cell_rows(settings: Settings) -> Iterator[dict[str, Any]]:
                 }
 
 
+def _by_cell(subjects: Subjects) -> dict[tuple[str, ...], list[Row]]:
+    """The rows of each cell of the study, cells sorted."""
+    cells: dict[tuple[str, ...], list[Row]] = {}
+    for row in (row for _, rows in subjects for row in rows):
+        cells.setdefault(tuple(row.cell), []).append(row)
+    return dict(sorted(cells.items()))
+
+
+def _counted(roi: Roi, record: dict[str, Any]) -> str:
+    """Independent subjects per group that is compared, or per cell of the maps read, in short."""
+    if record.get("n_cells"):
+        return ", ".join(f"{name} {n}" for name, n in record["n_cells"])
+    sides = {"": roi.tested.subjects, "; minus ": roi.tested.minus}
+    sides |= {"; baseline ": roi.tested.baseline}
+    told = ""
+    for word, subjects in sides.items():
+        cells = _by_cell(subjects)
+        # What all cells share is not said, but for the contrast where it is all there is to say.
+        varied = [i for i in range(len(CELLS)) if len({cell[i] for cell in cells}) > 1]
+        shown = varied or [CELLS.index("contrast")]
+        names = [" ".join(cell[i] for i in shown if cell[i]) or "all" for cell in cells]
+        counts = [len({row.person for row in rows}) for rows in cells.values()]
+        if cells:
+            pairs = zip(names, counts, strict=True)
+            told += word + ", ".join(f"{name} {count}" for name, count in pairs)
+    return told
+
+
 def _compared_rows(comparisons: Sequence[dict[str, Any]]) -> Iterator[dict[str, Any]]:
     for record in comparisons:
         yield _compared_row(record)
         for effect in record.get("simple", []):
-            head = {"name": record["name"], "kind": "simple effect", "regions": record["regions"]}
-            yield _compared_row({**effect, **head, "p": effect["p_holm"]})
+            head = {name: record.get(name) for name in ("name", "regions", "looks")}
+            head |= {"kind": "simple effect", "p": effect["p_holm"]}
+            yield _compared_row({**effect, **head})
 
 
 def _compared_row(record: dict[str, Any]) -> dict[str, Any]:
@@ -518,11 +573,12 @@ def _test_rows(
                 "chosen_on": _cells(roi.choosing.subjects) if roi.choosing else None,
                 "rule": _rule(roi, record),
                 "value": roi.summary,
-                "n_cells": ", ".join(f"{name} {n}" for name, n in record.get("n_cells") or ()),
+                "n_cells": _counted(roi, record),
                 "ceiling": None if roi.reliability is None else ceiling(*roi.reliability),
                 "null_value": settings.maps.null_value,
                 "scale": "percent of baseline" if roi.tested.baseline else "effect maps",
                 "claim": _claim(roi),
+                "claim_reason": roi.claim_reason or None,
                 "sentence": " ".join(
                     [record["sentence"], *_about(roi, settings, record["estimate"])]
                 ),
@@ -554,6 +610,8 @@ def _claim(roi: Roi) -> str:
 def _about(roi: Roi, settings: Settings, estimate: float) -> Iterator[str]:
     """What a value is, where it is not the plain mean of the effect maps; and what chose."""
     told = [f"Tested maps: {_cells(roi.tested.subjects)}."]
+    if roi.claim_reason:
+        told.append(f"It speaks of these subjects only, because: {roi.claim_reason}.")
     if roi.own_masks or roi.group_mask:
         assert roi.procedure is not None, "a mask is chosen"
         told.append(f"Rule: {roi.procedure.describe()}.")
@@ -597,14 +655,15 @@ def _touch_rows(study: Study, findings: Sequence[Finding]) -> Iterator[dict[str,
         for role, bits in (("values", finding.mask_units), ("geometry", finding.geometry_units)):
             if not bits and role == "geometry":
                 continue
-            inside, outside = table.units_of(bits), table.units_of(table.everything & ~bits)
-            complement = len(outside) < len(inside)
+            listed = encoded(bits, table)
+            how = "units" if "units" in listed else "all_but"
             yield {
                 "mask": finding.mask_place,
                 "extraction": where,
                 "role": role,
-                "encoding": "all_but" if complement else "units",
-                "touched": " ".join(map(str, outside if complement else inside)),
+                "encoding": how,
+                "of": " ".join(listed.get("of", ())),
+                "touched": " ".join(str(table.units[i]) for i in listed[how]),
                 "tested": " ".join(map(str, table.units_of(finding.data_units))),
                 "origin": "; ".join(finding.origins),
                 "verdict": finding.verdict,

@@ -7,7 +7,7 @@ import logging
 import os
 import shutil
 import tempfile
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator, Mapping
 from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
@@ -16,9 +16,15 @@ from typing import Any
 from ..nodes.errors import InputError
 from .build import study_workflow
 from .collect import adjust, collect, collect_comparisons, find_nodes
+from .contours import check_masks
 from .guard import GuardPlugin, Listener
 from .judge import Finding
+from .ledger import Chain, Ledger
+from .looks import run_entries, seen
+from .origins import declarations, recognised
 from .outputs import claimed, write_all
+from .record import write_record
+from .report.notebook import table, tests_html
 from .settings import Settings
 from .verify import verify
 
@@ -46,6 +52,14 @@ class RunResult:
     findings: list[Finding]
     overlaps: list[tuple[str, str]]
 
+    def table(self, name: str = "roi_tests") -> Any:
+        """A table of the output folder: a pandas DataFrame where pandas is installed, else rows."""
+        return table(self.output, name)
+
+    def _repr_html_(self) -> str:
+        """The results, in a notebook."""
+        return tests_html(self.tests)
+
 
 @contextmanager
 def engine_quiet() -> Iterator[None]:
@@ -62,7 +76,7 @@ def engine_quiet() -> Iterator[None]:
 
 
 def check_study(settings: Settings) -> list[Finding]:
-    """Judge a study without executing anything.
+    """Judge a study without executing anything; its ledger is read and not written.
 
     Raises
     ------
@@ -70,6 +84,7 @@ def check_study(settings: Settings) -> list[Finding]:
         With all findings.
     """
     verify(settings)
+    settings = recognised(settings, Ledger(settings.ledger).sound())
     guard = GuardPlugin(settings.study, dry=True)
     with tempfile.TemporaryDirectory() as folder, engine_quiet():
         study_workflow(settings, Path(folder)).run(plugin=guard)
@@ -81,6 +96,11 @@ def run_study(
     listener: Listener | None = None,
     work: Path | None = None,
     processes: int = 1,
+    *,
+    engine: str = "",
+    plugin_args: Mapping[str, Any] | None = None,
+    record: bool = True,
+    finish: Callable[[Path], object] | None = None,
 ) -> RunResult:
     """Run a study under the guard and write its output folder.
 
@@ -94,6 +114,13 @@ def run_study(
         beside the output and is removed.
     processes : int
         How many nodes may run at once; the output has the same bytes.
+    engine, plugin_args : str, dict
+        What runs the nodes, and what it is given, as in `GuardPlugin`.
+    record : bool
+        Whether the study's ledger counts: it is read, and the run's declarations, masks and
+        looks are written to it. A demonstration does without.
+    finish : callable, optional
+        Given the whole output folder before it takes its name: the place to make the page.
 
     Raises
     ------
@@ -102,25 +129,49 @@ def run_study(
     InputError
     """
     verify(settings)
+    ledger = Ledger(settings.ledger) if record else None
+    if ledger is not None:
+        ledger.check_writable()
+    stated, settings = settings, recognised(settings, ledger.sound() if ledger else Chain())
     if work is not None and work.exists() and not work.is_dir():
         raise InputError("--work is a file", where=str(work), remedy="name a folder")
-    guard = GuardPlugin(settings.study, listener, processes=processes)
+    guard = GuardPlugin(
+        settings.study, listener, engine=engine, plugin_args=plugin_args, processes=processes
+    )
     with claimed(settings.output) as stage:
-        engine = work if work is not None else stage.with_name(f".{settings.output.name}.work")
+        folder = work if work is not None else stage.with_name(f".{settings.output.name}.work")
         if work is None:
-            shutil.rmtree(engine, ignore_errors=True)  # left by a run that was killed
-        engine.mkdir(parents=True, exist_ok=True)
+            shutil.rmtree(folder, ignore_errors=True)  # left by a run that was killed
+        folder.mkdir(parents=True, exist_ok=True)
         try:
+            workflow = study_workflow(settings, folder.absolute())
+            if engine == "SLURM":  # each look at the queue is a request to the cluster
+                workflow.config["execution"]["poll_sleep_duration"] = "1"
             with engine_quiet(), _here():
-                graph = _run(study_workflow(settings, engine.absolute()), guard)
+                graph = _run(workflow, guard)
             nodes = find_nodes(graph)
             outputs = [collect(roi, settings, nodes) for roi in settings.rois]
             overlaps = adjust(outputs)
+            check_masks(outputs, settings)
             compared = collect_comparisons(settings, nodes)
+            read = seen(outputs)
+
+            def entries(chain: Chain) -> list[dict[str, Any]]:
+                made = run_entries(settings, read, compared, guard.findings, chain)
+                return [*declarations(stated, chain), *made]
+
+            if ledger is None:
+                entries(Chain())
+            else:
+                ledger.extend(entries)
+            reasons = {roi.name: roi.claim_reason for roi in settings.rois}
+            write_record(stage, guard, reasons)
             tests = write_all(stage, settings, outputs, compared, guard.findings)
+            if finish is not None:
+                finish(stage)
         finally:
             if work is None:
-                shutil.rmtree(engine, ignore_errors=True)
+                shutil.rmtree(folder, ignore_errors=True)
     return RunResult(settings.output, tests, compared, guard.findings, overlaps)
 
 

@@ -132,8 +132,13 @@ def print_tests(
         if row["p"] is None:
             rows.append([*head, f"{row['estimate']:.3g}", *["-"] * 7])
             continue
-        mean, low, high = estimate_texts(row["estimate"], row["interval_low"], row["interval_high"])
-        interval = f"{low} to {high} ({row['interval_kind']})"
+        mean, interval = f"{row['estimate']:.3g}", "-"
+        if row["interval_low"] is not None:
+            ends = row["interval_low"], row["interval_high"]
+            mean, low, high = estimate_texts(row["estimate"], *ends)
+            interval = f"{low} to {high} ({row['interval_kind']})"
+        elif row["interval_kind"] is not None:
+            interval = f"without bounds ({row['interval_kind']})"
         folds, dice = "-", "-"
         if row["n_folds"] is not None:
             found = row["n_folds"] - row["n_empty"] - row["n_replaced"]
@@ -146,10 +151,11 @@ def print_tests(
     print_table(rows)
     if overlaps:
         one, other = overlaps[0]
-        more = f" (and of {len(overlaps) - 1} more)" if len(overlaps) > 1 else ""
+        rest = len(overlaps) - 1
+        more = f" (and of {rest} more pair{'s' * (rest > 1)})" if rest else ""
         click.echo(
             f"\nNo p Holm over the regions: the search regions of {one} and {other}{more} share "
-            "voxels (a whole map shares all). p max does not mind."
+            "voxels (a whole map shares all). p max, where given, holds all the same."
         )
     for family in families:
         shown = _strongest(family, _SENTENCES)

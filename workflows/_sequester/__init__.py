@@ -13,6 +13,8 @@ __version__ = "0.1.0"
 
 _STARTERS = {
     "GuardPlugin": "sequester.workflows.guard",
+    "GuardRefused": "sequester.workflows.guard",
+    "write_record": "sequester.workflows.record",
     "read_table": "sequester.workflows.study",
     "Origin": "sequester.workflows.study",
     "read_settings": "sequester.workflows.settings",
@@ -28,6 +30,12 @@ _STARTERS = {
     "Cluster": "sequester.nodes.masks",
     "Threshold": "sequester.nodes.masks",
     "Procedure": "sequester.nodes.procedure",
+    "contract": "sequester.nodes.interfaces.contracts",
+    "Meeting": "sequester.nodes.rules",
+    "Statistic": "sequester.nodes.rules",
+    "each": "sequester.nodes.rules",
+    "only": "sequester.nodes.rules",
+    "everything": "sequester.nodes.rules",
 }
 
 __all__ = [  # noqa: PLE0604 - the names are strings, checked by a test
