@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import logging
 import sys
 from pathlib import Path
 from typing import Any
@@ -18,6 +19,15 @@ from engines_under_test import cluster, ipython, mortal, slurm  # noqa: F401 - f
 # The same examples on every machine, and no time limit on a busy one.
 hypothesis.settings.register_profile("sequester", deadline=None, derandomize=True)
 hypothesis.settings.load_profile("sequester")
+
+
+@pytest.fixture
+def quiet_engine(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
+    """The engine in a folder of its own, without its log."""
+    monkeypatch.setenv("NO_ET", "1")  # it would ask the network for its latest version
+    monkeypatch.chdir(tmp_path)
+    for name in ("nipype.workflow", "nipype.utils", "nipype.interface"):
+        monkeypatch.setattr(logging.getLogger(name), "level", logging.CRITICAL + 1)
 
 
 @pytest.fixture(scope="session")

@@ -7,7 +7,6 @@ and what its outputs really contain is compared with what the graph said beforeh
 
 from __future__ import annotations
 
-import logging
 import random
 from pathlib import Path
 from typing import Any
@@ -39,13 +38,7 @@ from sequester.nodes.touch import Touch, Unit
 from sequester.workflows.ancestry import Ancestry, files_in
 from sequester.workflows.study import Origin, Row, Study
 
-
-@pytest.fixture(autouse=True)
-def _quiet(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
-    monkeypatch.setenv("NO_ET", "1")  # the engine would ask the network for its latest version
-    monkeypatch.chdir(tmp_path)
-    for name in ("nipype.workflow", "nipype.utils", "nipype.interface"):
-        monkeypatch.setattr(logging.getLogger(name), "level", logging.CRITICAL + 1)
+pytestmark = pytest.mark.usefixtures("quiet_engine")
 
 
 @pytest.fixture

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import logging
 import pickle
 import re
 from pathlib import Path
@@ -32,13 +31,7 @@ from sequester.workflows.guard import GuardRefused
 from sequester.workflows.judge import judge
 from sequester.workflows.study import Study
 
-
-@pytest.fixture(autouse=True)
-def _quiet(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
-    monkeypatch.setenv("NO_ET", "1")  # the engine would ask the network for its latest version
-    monkeypatch.chdir(tmp_path)
-    for name in ("nipype.workflow", "nipype.utils", "nipype.interface"):
-        monkeypatch.setattr(logging.getLogger(name), "level", logging.CRITICAL + 1)
+pytestmark = pytest.mark.usefixtures("quiet_engine")
 
 
 @pytest.fixture

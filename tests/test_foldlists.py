@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import json
-import logging
 from dataclasses import replace
 from pathlib import Path
 from typing import Any
@@ -54,12 +53,7 @@ def group(in_files, weight):
 """
 
 
-@pytest.fixture(autouse=True)
-def _quiet(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
-    monkeypatch.setenv("NO_ET", "1")  # the engine would ask the network for its latest version
-    monkeypatch.chdir(tmp_path)
-    for name in ("nipype.workflow", "nipype.utils", "nipype.interface"):
-        monkeypatch.setattr(logging.getLogger(name), "level", logging.CRITICAL + 1)
+pytestmark = pytest.mark.usefixtures("quiet_engine")
 
 
 @pytest.fixture

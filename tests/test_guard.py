@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import json
-import logging
 import os
 from collections.abc import Callable
 from pathlib import Path
@@ -39,12 +38,7 @@ LABELS = [f"{i:02d}" for i in range(1, 9)]
 PROCEDURE = Procedure(Threshold(p=0.05))
 
 
-@pytest.fixture(autouse=True)
-def _quiet(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
-    monkeypatch.setenv("NO_ET", "1")  # the engine would ask the network for its latest version
-    monkeypatch.chdir(tmp_path)
-    for name in ("nipype.workflow", "nipype.utils", "nipype.interface"):
-        monkeypatch.setattr(logging.getLogger(name), "level", logging.CRITICAL + 1)
+pytestmark = pytest.mark.usefixtures("quiet_engine")
 
 
 def effects(seed: int) -> Any:

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import json
-import logging
 import shutil
 from dataclasses import replace
 from pathlib import Path
@@ -44,12 +43,7 @@ GRID = Geometry(SHAPE, tuple(map(tuple, AFFINE.tolist())))
 PROCEDURE = Procedure(Strongest(20))
 
 
-@pytest.fixture(autouse=True)
-def _quiet(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
-    monkeypatch.setenv("NO_ET", "1")
-    monkeypatch.chdir(tmp_path)
-    for name in ("nipype.workflow", "nipype.utils", "nipype.interface"):
-        monkeypatch.setattr(logging.getLogger(name), "level", logging.CRITICAL + 1)
+pytestmark = pytest.mark.usefixtures("quiet_engine")
 
 
 @pytest.fixture

@@ -37,10 +37,7 @@ GRID = Geometry((6, 6, 6), tuple(map(tuple, np.diag([3.0, 3.0, 3.0, 1.0]).tolist
 PEOPLE = ("d", "a", "c", "b", "e")  # out of order: fold k is not row k
 
 
-@pytest.fixture(autouse=True)
-def _quiet(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
-    monkeypatch.setenv("NO_ET", "1")  # the engine would ask the network for its latest version
-    monkeypatch.chdir(tmp_path)
+pytestmark = pytest.mark.usefixtures("quiet_engine")
 
 
 def noise(seed: int) -> Any:

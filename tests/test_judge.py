@@ -5,7 +5,6 @@ Nothing runs here: the guard judges the expanded graph and stops. The files are 
 
 from __future__ import annotations
 
-import logging
 from collections.abc import Sequence
 from pathlib import Path
 from typing import Any
@@ -43,12 +42,7 @@ RUN_ONE = [f"sub-{s}_run-1_bold" for s in SUBJECTS]
 RUN_TWO = [f"sub-{s}_run-2_bold" for s in SUBJECTS]
 
 
-@pytest.fixture(autouse=True)
-def _quiet(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
-    monkeypatch.setenv("NO_ET", "1")  # the engine would ask the network for its latest version
-    monkeypatch.chdir(tmp_path)
-    for name in ("nipype.workflow", "nipype.utils", "nipype.interface"):
-        monkeypatch.setattr(logging.getLogger(name), "level", logging.CRITICAL + 1)
+pytestmark = pytest.mark.usefixtures("quiet_engine")
 
 
 UNITS = [

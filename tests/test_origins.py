@@ -376,6 +376,18 @@ def test_an_explanation_on_another_branch_knew_nothing_of_the_mask(ran, fresh):
     assert refused(ran, 'mask = "near.nii.gz"') == []
 
 
+def test_an_explanation_is_told_beside_the_result(ran):
+    near = recorded(ran)
+    near[tuple(np.argwhere(near)[0])] = False
+    save(ran / "near.nii.gz", near.astype(np.uint8))
+    call = ["declare", str(ran / "near.nii.gz"), "--study", str(study(ran))]
+    call += ["--source", "a map in the hut", "--explained", "printed in 1987, by the gate"]
+    assert CliRunner().invoke(main, call).exit_code == 0
+    made = run(ran, ARBOR.format(k=20), BEACON.format(region='mask = "near.nii.gz"'))
+    assert '"printed in 1987, by the gate"' in made["Beacon"]["history"]
+    assert "printed" not in (made["Arbor"]["history"] or "")
+
+
 def test_an_explanation_does_not_cover_the_very_same_voxels(ran):
     save(ran / "beacon.nii", recorded(ran).astype(np.uint8))
     call = ["declare", str(ran / "beacon.nii"), "--study", str(ran / "STUDY.toml")]
@@ -470,6 +482,7 @@ def test_looks_at_other_voxels_or_other_people_do_not_count(fresh):
     both = 'union = [{ mask = "corner.nii.gz" }, { mask = "opposite.nii.gz" }]'
     row = run(fresh, BEACON.format(region=both))["Beacon"]
     assert "Beacon was another region (corner) in 1 look before." in row["sentence"]
+    assert row["history"] and row["history"] in row["sentence"]
     assert row["looks"] == 3
 
 

@@ -28,12 +28,7 @@ ON_EVERY_ENGINE = [  # a MapNode with contracts of foreign nodes; and some that 
 ]
 
 
-@pytest.fixture(autouse=True)
-def _quiet(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
-    monkeypatch.setenv("NO_ET", "1")
-    monkeypatch.chdir(tmp_path)
-    for name in LOGGERS:
-        monkeypatch.setattr(logging.getLogger(name), "level", logging.CRITICAL + 1)
+pytestmark = pytest.mark.usefixtures("quiet_engine")
 
 
 def judged(case: Case, folder: Path, **how: Any) -> tuple[GuardPlugin, str]:

@@ -41,10 +41,7 @@ from sequester.workflows.study import Origin, Row, Study
 SEEDS = st.integers(0, 2**32 - 1)
 
 
-@pytest.fixture(autouse=True)
-def _quiet(monkeypatch, tmp_path):
-    monkeypatch.setenv("NO_ET", "1")  # the engine would ask the network for its latest version
-    monkeypatch.chdir(tmp_path)
+pytestmark = pytest.mark.usefixtures("quiet_engine")
 
 
 def turned(sizes, origin=(0.0, 0.0, 0.0), *, oblique=False, flip=False):

@@ -196,6 +196,8 @@ def test_levels_claims_certificates_and_looks_are_said_before_any_number():
     assert [note.kind for note in notes([shaped, row | {"contour_p": "0.2"}])] == ["shape"]
     assert "Brook" in notes([waived])[0].head and "these subjects only" in notes([waived])[0].text
     assert "Arbor (3 looks)" in notes([again])[0].head
+    late = row | {"history": "The region was declared after 1 look at these data."}
+    assert "Arbor" in notes([late])[0].head and "after 1 look" in notes([late])[0].text
     assert headline([row, row]).startswith("All 2 tests: the region was chosen without any data")
     assert "1 value is exploratory and biased" in headline([row, biased])
     assert headline([row, waived]).startswith("2 tests: 1 \N{MULTIPLICATION SIGN} the region was")

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import contextlib
 import json
-import logging
 from collections.abc import Sequence
 from pathlib import Path
 from typing import Any
@@ -53,13 +52,7 @@ from sequester.workflows.guard import GuardPlugin, GuardRefused
 from sequester.workflows.scorelists import touches_of_list
 from sequester.workflows.study import Origin, Row, Study
 
-
-@pytest.fixture(autouse=True)
-def _quiet(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
-    monkeypatch.setenv("NO_ET", "1")
-    monkeypatch.chdir(tmp_path)
-    for name in ("nipype.workflow", "nipype.utils", "nipype.interface"):
-        monkeypatch.setattr(logging.getLogger(name), "level", logging.CRITICAL + 1)
+pytestmark = pytest.mark.usefixtures("quiet_engine")
 
 
 @pytest.fixture

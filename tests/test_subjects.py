@@ -27,9 +27,7 @@ GRID = Geometry((4, 5, 3), tuple(map(tuple, np.diag([3.0, 3.0, 3.0, 1.0]).tolist
 FINER = Geometry((5, 5, 3), tuple(map(tuple, np.diag([2.0, 2.0, 2.0, 1.0]).tolist())))
 
 
-@pytest.fixture(autouse=True)
-def _quiet(monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setenv("NO_ET", "1")  # the engine would ask the network for its latest version
+pytestmark = pytest.mark.usefixtures("quiet_engine")
 
 
 def noise(seed: int, shape: tuple[int, ...] = GRID.shape, dtype: type = np.float32) -> np.ndarray:

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import ast
-import logging
 import os
 import pickle
 import shutil
@@ -31,12 +30,7 @@ CHART = Origin("a chart of moss", ("moss.nii",))
 SAME = "def same(x):\n    return x\n"
 
 
-@pytest.fixture(autouse=True)
-def _quiet(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
-    monkeypatch.chdir(tmp_path)
-    monkeypatch.setenv("NO_ET", "1")
-    for name in ("nipype.workflow", "nipype.utils", "nipype.interface"):
-        monkeypatch.setattr(logging.getLogger(name), "level", logging.CRITICAL + 1)
+pytestmark = pytest.mark.usefixtures("quiet_engine")
 
 
 def effects(seed: int) -> Any:

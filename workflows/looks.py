@@ -31,8 +31,16 @@ from .collect import RoiOutput
 from .comparisons import Comparison
 from .digests import digest, digest_text
 from .judge import Finding
-from .ledger import ARTEFACT, LOOK, UNITS, Chain, Entry
-from .origins import Recorded, Selected, given_regions, set_record, tested_units, units_body
+from .ledger import ARTEFACT, LOOK, UNITS, WAIVER, Chain, Entry
+from .origins import (
+    EXPLAINED,
+    Recorded,
+    Selected,
+    given_regions,
+    set_record,
+    tested_units,
+    units_body,
+)
 from .plans import A_PRIORI
 from .rois import Roi
 from .settings import Settings
@@ -375,6 +383,10 @@ def _notes(
     earlier = earlier_looks(look, recorded, first)
     regions = [chosen for chosen, _ in given_regions(settings, roi)]
     yield from declared_late(regions, earlier, recorded)
+    selected = {chosen.selects for chosen in regions}
+    for entry in recorded.chain.of_kind(WAIVER):
+        if entry.body["field"] == EXPLAINED and entry.body["selects"] in selected:
+            yield f'Why it is like a recorded mask was stated as: "{entry.body["says"]}".'
     moved = [
         one
         for one in earlier
@@ -403,6 +415,7 @@ def tell(
             said.insert(0, f"Looks at these voxels in these data so far: {known['looks']}.")
         for record in records:
             record["looks"] = known["looks"]
+            record["history"] = " ".join(known["notes"]) or None
             record["sentence"] = " ".join([record["sentence"], *said])
 
 

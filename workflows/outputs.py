@@ -86,6 +86,8 @@ TEST_COLUMNS = {
     "large when none of them has an effect; search regions may overlap (folded plans).",
     "looks": "Different looks that had read some of these voxels in some of these data when this "
     "one was first made, itself included.",
+    "history": "What the ledger says against taking it as stated beforehand: declared after looks, "
+    "another region of that name before, like a recorded mask for a reason that was stated.",
     "p_kind": "The test.",
     "sided": "greater, less or two-sided.",
     "null": "The null hypothesis.",

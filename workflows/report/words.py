@@ -16,7 +16,7 @@ class Note:
 
     Parameters
     ----------
-    kind : {"waiver", "certificate", "look", "shape", "verdict"}
+    kind : {"waiver", "certificate", "look", "history", "shape", "verdict"}
     head, text : str
     """
 
@@ -135,6 +135,15 @@ def notes(tests: Sequence[Row]) -> list[Note]:
                 "Other regions of this run (exploratory ones count), or earlier runs, read some "
                 "of these voxels in some of these data. Each p-value is that of its own look and "
                 "is not adjusted for the others.",
+            )
+        )
+    late = [(called(row), row["history"]) for row in tested if row.get("history")]
+    if late:
+        made.append(
+            Note(
+                "history",
+                f"Not settled before looking: {listed([name for name, _ in late])}",
+                " ".join(dict.fromkeys(f"{name}: {said}" for name, said in late)),
             )
         )
     follows = [
