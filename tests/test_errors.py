@@ -1613,6 +1613,13 @@ SECTIONS = {
             SCRIPT,
         ),
         Case(
+            "No function is named.",
+            put("plan.py", ""),
+            "no function is named (FOLDER/plan.py): expected FILE.py:FUNCTION, a function that "
+            "returns a workflow",
+            ("check", "FOLDER/plan.py", *SCRIPT[2:]),
+        ),
+        Case(
             "The study table is not named.",
             put("plan.py", ""),
             "no study table (FOLDER/plan.py:make): expected sequester check "
@@ -1779,6 +1786,7 @@ SECTIONS = {
             "on, as its origin declares or a run has recorded\n"
             "    shared  sub-01_task-lanterns_run-1_bold, "
             "sub-01_task-lanterns_run-2_bold\n"
+            "    origin  drawn\n"
             "    region  cinder.nii.gz\n"
             "            -> garden.Cinder.region.mask_file\n"
             "    data    maps/sub-01_task-lanterns_run-1.nii.gz\n"

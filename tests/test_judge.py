@@ -212,6 +212,17 @@ def test_only_units_of_the_measured_kind_are_compared(study: Study):
     assert study.table.describe(finding.data_units) == "sub-01_run-1_bold"
 
 
+def test_a_leak_names_the_origin_that_is_made_of_the_tested_data_and_no_other(study: Study):
+    (finding,) = meeting(study, ["pilot01", "pilot02", "atlas"], ["sub-01_run-1_bold"])
+    assert finding.made_of == ("our pilot",)
+    assert "as its origin declares" in finding.reason
+    assert "\n    origin  our pilot\n" in finding.describe(study.table)
+    (finding,) = meeting(study, ["sub-05_bold", "atlas"], ["sub-05_run-1_bold"])
+    assert finding.verdict == "leak" and finding.origins == ("an atlas of 1909",)
+    assert finding.made_of == ()
+    assert "on another map of the very data" in finding.reason
+
+
 def test_a_declared_origin_is_kept_with_the_finding(study: Study):
     (finding,) = meeting(study, ["atlas"], ["sub-01_run-1_bold"])
     assert finding.origins == ("an atlas of 1909",)

@@ -179,6 +179,31 @@ def test_a_folder_that_no_run_wrote_is_refused_with_what_is_missing(tmp_path, co
 # -- believing ------------------------------------------------------------------------------------
 
 
+def test_a_region_says_in_how_many_folds_its_rule_found_something(garden, copy):
+    def told(path):
+        row = table(path / "roi_tests.tsv")[0]
+        page = write_report(path).read_text(encoding="utf-8")
+        first = page[: page.index("<h2><span>2")]
+        assert '<th scope="col">Region or search region</th>' in first
+        return re.findall(rf'<th scope="row">{row["roi"]} <small>(found in .*?)</small>', first)
+
+    n = int(table(garden.output / "roi_tests.tsv")[0]["n_folds"])
+    for empty, replaced, said in (
+        ("0", "0", []),
+        ("2", "0", [f"found in {n - 2} of {n} folds; the value counts as 0 in the others"]),
+        (
+            "0",
+            "3",
+            [f"found in {n - 3} of {n} folds; the strongest voxels stood in for the others"],
+        ),
+    ):
+        rows = table(copy / "roi_tests.tsv")
+        rows[0] |= {"n_empty": empty, "n_replaced": replaced}
+        lines = ["\t".join(rows[0]), *("\t".join(row.values()) for row in rows)]
+        (copy / "roi_tests.tsv").write_text("\n".join(lines) + "\n")
+        assert told(copy) == said
+
+
 def test_levels_claims_certificates_and_looks_are_said_before_any_number():
     row = {"roi": "Arbor", "plan": "k-fold", "p": "0.01", "verdict": "apart", "level": "subject"}
     row |= {"claim": "population", "biased": "false"}

@@ -126,7 +126,8 @@ def test_json_is_one_object_whatever_the_script_prints(folder):
     ("target", "told"),
     [
         ("absent.py:make", "no such script (absent.py): expected FILE.py:FUNCTION"),
-        ("mine.py", "no such script (mine.py): expected FILE.py:FUNCTION"),
+        ("absent.py", "no such script (absent.py): expected FILE.py:FUNCTION"),
+        ("mine.py", "no function is named (mine.py): expected FILE.py:FUNCTION, a function that "),
         ("mine.py:absent", "no function 'absent' in the script (mine.py): expected one of act, "),
         ("mine.py:HERE", "no function 'HERE' in the script (mine.py): expected one of act, "),
         ("mine.py:nothing", "nothing() returns no workflow (mine.py): expected a nipype Workflow"),

@@ -46,6 +46,9 @@ class Finding:
     lost : tuple of (node, reason, cure)
         Of a leak, where elements could not be told apart on the way: the overlap may be less
         than it seems. Told at the first leaking element of a node.
+    made_of : tuple of str
+        Of a leak, the origins by which the mask touches a shared unit: declared, or added by what
+        a run has recorded.
     """
 
     kind: str
@@ -65,11 +68,13 @@ class Finding:
     reason: str = ""
     cure: str = ""
     lost: tuple[tuple[str, str, str], ...] = ()
+    made_of: tuple[str, ...] = ()
 
     def describe(self, table: UnitTable) -> str:
-        """The finding in words: meeting, fold, shared units, both paths, cure."""
+        """The finding in words: meeting, fold, shared units, origins, both paths, cure."""
         fold = "" if self.item is None else f", element {self.item}"
         parts = [("shared", [table.describe(self.shared, most=2)] if self.shared else [])]
+        parts += [("origin", _wrapped("; ".join(self.made_of)))]
         parts += [("region", list(self.mask_path)), ("data", list(self.data_path))]
         parts += [("cure", _wrapped(self.cure))]
         nodes_of: dict[tuple[str, str], list[str]] = {}
@@ -111,8 +116,9 @@ class Findings(list[Finding]):
 
 
 DECLARE = (
-    "state where the region comes from: origin in STUDY.toml, or read_table(..., origins=[Origin("
-    "source, files)]); if it was made from this study's data, say so with derived_from"
+    "state where the region comes from: origin in STUDY.toml; for a script, sequester check ... "
+    "--origins FILE.toml or read_table(..., origins=[Origin(source, files)]); if it was made from "
+    "this study's data, say so with derived_from"
 )
 _NAME_COLUMN = (
     "give them as they stand in a column of the study table, and name it (Score(..., name=COLUMN), "

@@ -21,6 +21,7 @@ others are cross-fitted.
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import replace
 from typing import Any
 
@@ -131,6 +132,7 @@ def _meet(
     own = table.company(of_data)
     shared = table.overlapping(of_mask) & of_data
     verdict, level, reason, cure = APART, "", "", ""
+    made_of: tuple[str, ...] = ()
     both = source_files(mask) & source_files(data) if shared or certificate is not None else set()
     if (
         isinstance(certificate, Certificate)
@@ -142,7 +144,8 @@ def _meet(
         reason = f"chosen on the tested data by an orthogonal contrast: {certificate.describe()}"
     elif shared:
         verdict = LEAK
-        reason, cure = _circular(table, mask, shared, both, certificate)
+        made_of = () if both else _made_of(study, mask, shared)
+        reason, cure = _circular(table, mask, shared, both, made_of, certificate)
     elif several(table, of_mask, of_data) and not these_only:
         verdict, level, shared = LEAK, "subject", of_mask & own
         reason, cure = _same_people(table, mask, of_mask, of_data)
@@ -188,11 +191,29 @@ def _meet(
         place_of(mask),
         reason,
         cure,
+        made_of=made_of,
     )
 
 
+def _made_of(study: Study, mask: Leaf, shared: int) -> tuple[str, ...]:
+    """The origins of a mask that touch shared units: as declared, or as seen while running."""
+    touching, known = study.table.overlapping(shared), study.declared
+    made_of = {
+        source for source in mask.touch.origins & known.keys() if known[source].choosers & touching
+    }
+    for leaf in () if made_of else _sources(mask):
+        if leaf.touch.choosers & touching:
+            made_of |= leaf.touch.origins
+    return tuple(sorted(made_of))
+
+
 def _circular(
-    table: UnitTable, mask: Leaf, shared: int, both: set[str], certificate: object
+    table: UnitTable,
+    mask: Leaf,
+    shared: int,
+    both: set[str],
+    made_of: tuple[str, ...],
+    certificate: object,
 ) -> tuple[str, str]:
     """Reason and cure, when the tested data have chosen; `both` are files of either side."""
     reason = "the mask was chosen on the data it would be tested on"
@@ -204,7 +225,7 @@ def _circular(
     if not mask.touch.choosers & table.overlapping(shared):
         reason = "subjects were kept or left out by the very data that is tested"
         cure = "keep them by other data, or leave them out with an exclude_reason beforehand"
-    elif not both and mask.touch.origins:
+    elif made_of:
         reason = (
             "the region was made from the data it would be tested on, as its origin declares "
             "or a run has recorded"
@@ -254,7 +275,12 @@ def _same_people(table: UnitTable, mask: Leaf, of_mask: int, of_data: int) -> tu
 
 def source_files(leaf: Tree) -> set[str]:
     """The files whose values an element derives from."""
-    found, seen, waiting = set(), set(), [leaf]
+    return {source.place for source in _sources(leaf)}
+
+
+def _sources(leaf: Tree) -> Iterator[Tree]:
+    """Where the values of an element come into the graph."""
+    seen, waiting = set(), [leaf]
     while waiting:
         here = waiting.pop()
         if id(here) in seen or not here.touch.values:
@@ -262,8 +288,7 @@ def source_files(leaf: Tree) -> set[str]:
         seen.add(id(here))
         waiting += here.parents
         if not here.parents:
-            found.add(here.place)
-    return found
+            yield here
 
 
 def place_of(leaf: Tree) -> str:

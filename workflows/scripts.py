@@ -46,8 +46,15 @@ def workflow_from(target: str) -> Workflow:
     Raises
     ------
     InputError
-        When there is no such file or function, it fails, runs something, or returns no workflow.
+        When there is no such file or function, none is named, it fails, runs something, or
+        returns no workflow.
     """
+    if Path(target).is_file():
+        raise InputError(
+            "no function is named",
+            where=target,
+            expected="FILE.py:FUNCTION, a function that returns a workflow",
+        )
     name, _, function = target.rpartition(":")
     path = Path(name)
     if not path.is_file():

@@ -25,7 +25,7 @@ from .folder import Row, RunFolder, called, is_biased, number, read_folder
 from .graphmap import graph_map
 from .methods import methods_text
 from .touchmap import TouchMap, touch_map
-from .words import estimate_cells, headline, independence, minus, notes, p_cell
+from .words import estimate_cells, found_in, headline, independence, minus, notes, p_cell
 
 PAGE, METHODS, FIGURES = "report.html", "methods.txt", "figures"
 _MOST_OPEN = 6  # regions whose figures stand open
@@ -111,6 +111,7 @@ def rendered(template: str, record: Mapping[str, Any], **given: Any) -> str:
     environment.globals |= {
         "number": number,
         "estimate": estimate_cells,
+        "found_in": found_in,
         "independence": independence,
         "two": _two_digits,
     }

@@ -58,6 +58,24 @@ def independence(row: Row) -> str:
     return "Not stated by this run."
 
 
+def found_in(row: Row) -> str:
+    """In how many folds (or own masks) the rule found something, unless it did in all.
+
+    Examples
+    --------
+    >>> found_in({"n_folds": "24", "n_empty": "0", "n_replaced": "22", "dice": "0.1"})
+    'found in 2 of 24 folds; the strongest voxels stood in for the others'
+    >>> found_in({"n_folds": "24", "n_empty": "0", "n_replaced": "0"})
+    ''
+    """
+    n, empty, replaced = (number(row, k) or 0 for k in ("n_folds", "n_empty", "n_replaced"))
+    if not empty + replaced:
+        return ""
+    of = "folds" if row.get("dice") or row.get("noise_dice") else "masks"
+    filled = "the strongest voxels stood in for" if replaced else "the value counts as 0 in"
+    return f"found in {n - empty - replaced:.0f} of {n:.0f} {of}; {filled} the others"
+
+
 def headline(tests: Sequence[Row]) -> str:
     """The first sentence of the page.
 
