@@ -31,7 +31,7 @@ def kept_folder(folder: Path | None) -> Iterator[Path | None]:
     folder.mkdir(parents=True, exist_ok=True)
     lock = FileLock(folder / ".lock")
     try:
-        lock.acquire(timeout=0)
+        lock.acquire(timeout=0.2)  # held a moment longer by a run that was killed just now
     except Timeout:
         raise InputError(
             "--keep folder in use",

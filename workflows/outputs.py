@@ -234,7 +234,8 @@ def claimed(target: Path) -> Iterator[Path]:
     try:
         target.parent.mkdir(parents=True, exist_ok=True)
         lock = FileLock(target.parent / f".{target.name}.lock")
-        lock.acquire(timeout=0)
+        # A run that was killed just now holds it a moment longer, through a process it had begun.
+        lock.acquire(timeout=0.2)
     except Timeout:
         raise InputError(
             "output folder in use",
