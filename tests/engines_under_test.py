@@ -6,8 +6,6 @@ A real SLURM of one machine and an IPython cluster are brought up once for the s
     @pytest.mark.parametrize("engine", ENGINES)
     def test_it(engine, request):
         guard = GuardPlugin(study, **arguments(engine, request))
-
-    for name, kwargs in available_engines(request): ...
 """
 
 from __future__ import annotations
@@ -32,15 +30,6 @@ def arguments(engine: str, request: pytest.FixtureRequest) -> dict[str, Any]:
     if engine in given:
         return {"engine": engine, "plugin_args": given[engine]}
     return {"engine": engine, "plugin_args": request.getfixturevalue(engine.lower())}
-
-
-def available_engines(request: pytest.FixtureRequest) -> Iterator[tuple[str, dict[str, Any]]]:
-    """Every engine that is up here, and what GuardPlugin is given for it."""
-    for engine in ENGINES:
-        try:
-            yield engine, arguments(engine, request)
-        except pytest.skip.Exception:
-            continue
 
 
 @pytest.fixture(scope="session")

@@ -54,7 +54,7 @@ def _expand_and_judge(graph_in: Any) -> Any:
     found: dict[str, Any] = {"test": os.environ.get("PYTEST_CURRENT_TEST", ""), "nodes": len(graph)}
     try:
         found |= faults_of(graph)
-    except Exception:
+    except Exception:  # what any graph raises is what this is here to find: a fault of it
         found["faults"] = [traceback.format_exc()]
     judged.append(found)
     return graph

@@ -190,6 +190,7 @@ class _Watched(DistributedPluginBase, ABC):
         try:
             self.before(self.procs[jobid])
         except Exception as error:
+            # Told by the engine when the other branches are done.
             self._run_errors.append(error)
             self._clean_queue(jobid, self._graph)
             self.proc_done[jobid], self.proc_pending[jobid] = True, False
