@@ -8,14 +8,13 @@ import subprocess
 import sys
 from pathlib import Path
 
-import nibabel as nib
 import numpy as np
 import pytest
 from click.testing import CliRunner
+from planting import content, save
 from sequester.workflows.cli import main
 
 SEQUESTER = str(Path(sys.executable).with_name("sequester"))
-AFFINE = np.diag([3.0, 3.0, 3.0, 1.0])
 GRID = "10 x 10 x 10 voxels of 3 x 3 x 3 mm, first at (0, 0, 0) mm"
 STUDY = """\
 [study]
@@ -39,22 +38,10 @@ def noise(*shape):
     return np.random.default_rng(len(shape)).standard_normal(shape).astype(np.float32)
 
 
-def save(path, data, affine=AFFINE):
-    nib.save(nib.Nifti1Image(data, affine), path)
-
-
 def swap(path, old, new):
     text = path.read_text()
     assert old in text
     path.write_text(text.replace(old, new, 1))
-
-
-def content(folder):
-    """Every path below a folder, with its bytes."""
-    return {
-        str(p.relative_to(folder)): p.read_bytes() if p.is_file() else None
-        for p in folder.rglob("*")
-    }
 
 
 @pytest.fixture(scope="module")
@@ -380,10 +367,10 @@ def test_full_disk(study, disk):
         # The ledger, which is on another disk, says that this run has looked.
         assert (
             f"output cannot be written ({disk / 'results'}): got No space left on device; make room"
-            in refused(study, writes=["STUDY.ledger.jsonl"])
+            in refused(study, writes=["STUDY.ledger.jsonl", "disk/.results.lock"])
         )
     assert 10 < step < 99
-    assert sorted(p.name for p in disk.iterdir()) == ["results"]
+    assert sorted(p.name for p in disk.iterdir()) == [".results.lock", "results"]
 
 
 # -- the program itself ---------------------------------------------------------------------

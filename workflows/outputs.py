@@ -11,15 +11,12 @@ import os
 import platform
 import shutil
 from collections.abc import Iterator, Sequence
-from contextlib import contextmanager
 from importlib.metadata import version
 from pathlib import Path
 from typing import Any
 
 import numpy as np
-from filelock import FileLock, Timeout
 
-from ..nodes.errors import InputError
 from ..nodes.images import read_map, write_bytes
 from ..nodes.interfaces.base import write_json
 from ..nodes.reliability import ceiling, ceiling_sentence
@@ -32,10 +29,10 @@ from .plans import CROSS_FITTED, EXPLORATORY
 from .rois import Roi
 from .selection import Subjects
 from .settings import Settings
+from .staging import MANIFEST
 from .study import CELLS, Row, Study
 from .unitsets import encoded
 
-MANIFEST = "manifest.json"
 _DEPENDENCIES = ("nipype", "nibabel", "numpy", "scipy", "networkx")
 
 VALUE_COLUMNS = {
@@ -64,8 +61,8 @@ TEST_COLUMNS = {
     "value": "How a map is summarised in its mask: mean, median, weighted or component.",
     "scale": "What values are measured in: the units of the effect maps, or percent of baseline.",
     "null_value": "Subtracted from the maps: estimates are differences from it.",
-    "claim": "Who the test speaks of: the population, these subjects only (as declared), or single "
-    "subjects (regions of their own).",
+    "claim": "Who the test speaks of: the population, these subjects only (as declared), single "
+    "subjects (regions of their own), or, of an exploratory value, nobody.",
     "claim_reason": "Why it speaks of these subjects only, as stated.",
     "search": "The search region that the null hypothesis covers.",
     "n_subjects": "Independent subjects tested: rows that share an exchange value are one.",
@@ -80,12 +77,13 @@ TEST_COLUMNS = {
     "t": "Studentised mean, positive in the direction of selection.",
     "p": "p-value; p_kind and sided say how it was made.",
     "p_error": "Monte Carlo standard error of p; n/a when exact.",
-    "p_holm": "Holm-adjusted over the tested regions (n/a when their search regions overlap), or "
-    "over the labels of an atlas.",
+    "p_holm": "Holm-adjusted over the tested regions, each with its own null hypothesis (search "
+    "regions may overlap), or over the labels of an atlas.",
     "p_max": "Single-step p over all regions exchanged together: the chance of any finding as "
     "large when none of them has an effect; search regions may overlap (folded plans).",
     "looks": "Different looks that had read some of these voxels in some of these data when this "
     "one was first made, itself included.",
+    "looks_of_run": "Of these, the looks of the run in which it was first made, itself included.",
     "history": "What the ledger says against taking it as stated beforehand: declared after looks, "
     "another region of that name before, like a recorded mask for a reason that was stated.",
     "p_kind": "The test.",
@@ -99,9 +97,11 @@ TEST_COLUMNS = {
     "(and of those subtracted, and of a baseline): named by what tells the cells apart.",
     "ceiling": "Largest correlation that the stated reliabilities allow (Spearman 1904).",
     "n_flips": "Sign flips made.",
-    "n_folds": "Folds.",
-    "n_empty": "Folds in which the rule found nothing and the value counts as 0.",
-    "n_replaced": "Folds in which the rule found nothing and the strongest voxels stood in.",
+    "n_folds": "Folds; of masks of the subjects' own, masks.",
+    "n_empty": "Of these, in which the rule found nothing and the value counts as 0: then the "
+    "estimate is not the size of an effect.",
+    "n_replaced": "Of these (1 where there is one mask for all), in which the rule found nothing "
+    "and the strongest voxels stood in.",
     "dice": "Mean Dice overlap of pairs of fold masks.",
     "noise_dice": "The same under sign flips: what noise alone gives.",
     "coverage": "Least coverage over subjects; empty masks do not count.",
@@ -208,84 +208,6 @@ _SUMMARY_WORDS = {
 }
 
 
-@contextmanager
-def claimed(target: Path) -> Iterator[Path]:
-    """A staging folder that becomes `target` when the block ends well.
-
-    Raises
-    ------
-    InputError
-        When the target is a file, a folder of something else, or in use by another run.
-    """
-    if target.exists() and not target.is_dir():
-        raise InputError(
-            "output is a file",
-            where=str(target),
-            expected="a folder, or nothing yet",
-            remedy="name another output folder",
-        )
-    if target.is_dir() and any(target.iterdir()) and not (target / MANIFEST).is_file():
-        raise InputError(
-            "output folder holds something else",
-            where=str(target),
-            expected=f"nothing, or an earlier run ({MANIFEST})",
-            remedy="name another output folder; nothing was changed",
-        )
-    try:
-        target.parent.mkdir(parents=True, exist_ok=True)
-        lock = FileLock(target.parent / f".{target.name}.lock")
-        # A run that was killed just now holds it a moment longer, through a process it had begun.
-        lock.acquire(timeout=0.2)
-    except Timeout:
-        raise InputError(
-            "output folder in use",
-            where=str(target),
-            got="another run is writing to it",
-            remedy="wait for it, or name another output folder",
-        ) from None
-    except OSError as error:
-        raise InputError(
-            "output folder cannot be made",
-            where=str(target),
-            got=str(error),
-            remedy="check the path and its permissions",
-        ) from error
-    # The lock is held, so whatever lies here was left by a run that was killed.
-    stage, old = (target.parent / f".{target.name}.{word}" for word in ("new", "old"))
-    try:
-        if old.exists() and not target.exists():
-            old.rename(target)  # killed between the two renames below
-        for leftover in (stage, old):
-            shutil.rmtree(leftover, ignore_errors=True)
-        stage.mkdir()
-        yield stage
-        _take_place(stage, target, old)
-    except OSError as error:
-        raise InputError(
-            "output cannot be written",
-            where=str(target),
-            got=os.strerror(error.errno or 0),
-            remedy="make room, or name another output folder; earlier results are untouched",
-        ) from error
-    finally:
-        for leftover in (stage, old):
-            shutil.rmtree(leftover, ignore_errors=True)
-        lock.release()
-        Path(lock.lock_file).unlink(missing_ok=True)
-
-
-def _take_place(stage: Path, target: Path, old: Path) -> None:
-    """Give the new results their name; the earlier ones come back if that fails."""
-    if target.exists():
-        target.rename(old)
-    try:
-        stage.rename(target)
-    except BaseException:
-        if old.exists():
-            old.rename(target)
-        raise
-
-
 def write_all(
     stage: Path,
     settings: Settings,
@@ -351,7 +273,7 @@ def write_all(
         },
     )
     write_bytes(stage / "STUDY.toml", settings.text.encode())
-    _manifest(stage, settings)
+    _manifest(stage, settings, outputs)
     return tests
 
 
@@ -548,7 +470,7 @@ def _varied(
             yield {
                 "roi": output.roi.name,
                 "setting": ", ".join(f"{k} = {v}" for k, v in one.roi.setting) or "as stated",
-                "rule": one.roi.procedure.describe() if one.roi.procedure else record["rule"],
+                "rule": one.roi.rule,
                 "estimate": record["estimate"],
                 "interval_low": interval.get("low"),
                 "interval_high": interval.get("high"),
@@ -589,7 +511,9 @@ def _test_rows(
                 "interval_high": interval.get("high"),
                 "interval_kind": interval.get("kind"),
                 "interval_method": interval.get("method"),
-                "n_replaced": None if record["n_folds"] is None else len(record["replaced"]),
+                "n_replaced": len(record["replaced"])
+                if record["replaced"] or record["n_folds"] is not None
+                else None,
                 "level": "run" if "run" in levels else "subject" if "subject" in levels else None,
                 "verdict": worst[0].verdict if worst else None,
             }
@@ -601,10 +525,12 @@ def _rule(roi: Roi, record: dict[str, Any]) -> str:
     """How the region was chosen: the rule as stated, where the record only says by whom."""
     if roi.procedure is None or roi.plan in CROSS_FITTED or roi.plan == EXPLORATORY:
         return str(record["rule"])
-    return f"{record['rule']}: {roi.procedure.describe()}"
+    return f"{record['rule']}: {roi.rule}"
 
 
 def _claim(roi: Roi) -> str:
+    if roi.plan == EXPLORATORY:
+        return "nobody"
     if roi.these_subjects:
         return "these subjects"
     return "single subjects" if roi.own_masks or roi.own_region else "population"
@@ -616,8 +542,7 @@ def _about(roi: Roi, settings: Settings, estimate: float) -> Iterator[str]:
     if roi.claim_reason:
         told.append(f"It speaks of these subjects only, because: {roi.claim_reason}.")
     if roi.own_masks or roi.group_mask:
-        assert roi.procedure is not None, "a mask is chosen"
-        told.append(f"Rule: {roi.procedure.describe()}.")
+        told.append(f"Rule: {roi.rule}.")
     if roi.choosing is not None and roi.plan not in CROSS_FITTED:
         told.append(f"Chosen on: {_cells(roi.choosing.subjects)}.")
     if settings.maps.by_variance:
@@ -693,8 +618,9 @@ def _cell(value: Any) -> str:
     return " ".join(str(value).split())
 
 
-def _manifest(stage: Path, settings: Settings) -> None:
+def _manifest(stage: Path, settings: Settings, outputs: Sequence[RoiOutput]) -> None:
     """What went in and what came out, with digests: enough to repeat the run and compare."""
+    records = [record for output in outputs for record in output.records]
     study = settings.study
     outside = [f for origin in study.origins for f in origin.files]
     used = [row.path for row in settings.used]
@@ -715,6 +641,7 @@ def _manifest(stage: Path, settings: Settings) -> None:
             },
             "inputs": {path: digest(settings.root / path) for path in sorted({*used, *outside})},
             "left_out": {row.name: row.exclude_reason for row in settings.left_out},
+            "ledgers_beside": sorted({name for one in records for name in one.get("beside", ())}),
             "origins": [
                 {
                     "source": o.source,

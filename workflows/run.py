@@ -17,15 +17,17 @@ from ..nodes.errors import InputError
 from .build import study_workflow
 from .collect import adjust, collect, collect_comparisons, find_nodes
 from .contours import check_masks
+from .findings import Findings
 from .guard import GuardPlugin, Listener
 from .judge import Finding
-from .ledger import Chain, Ledger
+from .ledger import Chain, Ledger, Shelf, shelf_of
 from .looks import run_entries, seen
 from .origins import declarations, recognised
-from .outputs import claimed, write_all
+from .outputs import write_all
 from .record import write_record
 from .report.notebook import table, tests_html
 from .settings import Settings
+from .staging import claimed
 from .verify import verify
 
 
@@ -43,7 +45,7 @@ class RunResult:
     findings : list of Finding
         The guard's verdicts.
     overlaps : list of (name, name)
-        Tested regions whose search regions share voxels: then no Holm over regions.
+        Tested regions whose search regions share voxels.
     """
 
     output: Path
@@ -75,7 +77,7 @@ def engine_quiet() -> Iterator[None]:
             logger.setLevel(level)
 
 
-def check_study(settings: Settings) -> list[Finding]:
+def check_study(settings: Settings) -> Findings:
     """Judge a study without executing anything; its ledger is read and not written.
 
     Raises
@@ -84,7 +86,7 @@ def check_study(settings: Settings) -> list[Finding]:
         With all findings.
     """
     verify(settings)
-    settings = recognised(settings, Ledger(settings.ledger).sound())
+    settings = recognised(settings, shelf_of(settings.ledger, Ledger(settings.ledger).sound()))
     guard = GuardPlugin(settings.study, dry=True)
     with tempfile.TemporaryDirectory() as folder, engine_quiet():
         study_workflow(settings, Path(folder)).run(plugin=guard)
@@ -132,13 +134,14 @@ def run_study(
     ledger = Ledger(settings.ledger) if record else None
     if ledger is not None:
         ledger.check_writable()
-    stated, settings = settings, recognised(settings, ledger.sound() if ledger else Chain())
+    known = shelf_of(ledger.path, ledger.sound()) if ledger else Shelf(Chain())
+    stated, settings = settings, recognised(settings, known)
     if work is not None and work.exists() and not work.is_dir():
         raise InputError("--work is a file", where=str(work), remedy="name a folder")
     guard = GuardPlugin(
         settings.study, listener, engine=engine, plugin_args=plugin_args, processes=processes
     )
-    with claimed(settings.output) as stage:
+    with claimed(settings.output, settings.name, settings.inputs) as stage:
         folder = work if work is not None else stage.with_name(f".{settings.output.name}.work")
         if work is None:
             shutil.rmtree(folder, ignore_errors=True)  # left by a run that was killed
@@ -157,7 +160,8 @@ def run_study(
             read = seen(outputs)
 
             def entries(chain: Chain) -> list[dict[str, Any]]:
-                made = run_entries(settings, read, compared, guard.findings, chain)
+                there = shelf_of(ledger.path, chain) if ledger else Shelf(chain)
+                made = run_entries(settings, read, compared, guard.findings, there)
                 return [*declarations(stated, chain), *made]
 
             if ledger is None:
@@ -165,7 +169,7 @@ def run_study(
             else:
                 ledger.extend(entries)
             reasons = {roi.name: roi.claim_reason for roi in settings.rois}
-            write_record(stage, guard, reasons)
+            write_record(stage, guard, reasons, settings.variants)
             tests = write_all(stage, settings, outputs, compared, guard.findings)
             if finish is not None:
                 finish(stage)
