@@ -32,9 +32,9 @@ def arguments(engine: str, request: pytest.FixtureRequest) -> dict[str, Any]:
     return {"engine": engine, "plugin_args": request.getfixturevalue(engine.lower())}
 
 
-@pytest.fixture(scope="session")
-def slurm() -> Iterator[dict[str, Any]]:
-    """A SLURM that takes jobs; what its plugin is given."""
+@contextmanager
+def slurm_cluster() -> Iterator[Path]:
+    """A SLURM that takes jobs for as long as the block lasts; the folder in which all of it is."""
     missing = [name for name in ("munged", "slurmctld", "slurmd", "sbatch") if not which(name)]
     if missing:
         pytest.skip(f"no {', '.join(missing)}: apt-get install slurm-wlm munge")
@@ -43,16 +43,22 @@ def slurm() -> Iterator[dict[str, Any]]:
     script = str(Path(__file__).with_name("slurm.sh"))
     # Not below pytest's own folder: the path of a socket may have about 100 characters.
     folder = tempfile.mkdtemp(prefix="slurm")
-    path = os.environ["PATH"]
-    os.environ |= {"SLURM_CONF": f"{folder}/slurm.conf", "PATH": f"{path}:/usr/sbin"}
-    try:
-        subprocess.run([script, "up", folder], check=True, timeout=60)
+    with pytest.MonkeyPatch.context() as environment:
+        environment.setenv("SLURM_CONF", f"{folder}/slurm.conf")
+        environment.setenv("PATH", f"{os.environ['PATH']}:/usr/sbin")
+        try:
+            subprocess.run([script, "up", folder], check=True, timeout=60)
+            yield Path(folder)
+        finally:
+            subprocess.run([script, "down", folder], check=True, timeout=60)
+            shutil.rmtree(folder)
+
+
+@pytest.fixture(scope="session")
+def slurm() -> Iterator[dict[str, Any]]:
+    """A SLURM that takes jobs; what its plugin is given."""
+    with slurm_cluster():
         yield {}
-    finally:
-        subprocess.run([script, "down", folder], check=True, timeout=60)
-        shutil.rmtree(folder)
-        del os.environ["SLURM_CONF"]
-        os.environ["PATH"] = path
 
 
 @contextmanager

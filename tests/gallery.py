@@ -1,4 +1,4 @@
-"""Fifty and more small pipelines: ordinary ones that are right, and ones that are subtly wrong.
+"""Eighty small pipelines: ordinary ones that are right, and ones that are subtly wrong.
 
 Each is a function from a garden of real files to a workflow; its docstring is the story. Whether
 the guard clears or refuses it is tested, and told in docs/refusals.md, by test_refusals.py.
@@ -10,6 +10,7 @@ import os
 from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
+from typing import TypedDict, Unpack
 
 from gallery_parts import (
     AGE,
@@ -25,6 +26,7 @@ from gallery_parts import (
     by_fold,
     called_by,
     centred,
+    copied,
     correlating,
     empty,
     extract,
@@ -36,6 +38,7 @@ from gallery_parts import (
     mean_of,
     minus,
     motion_of,
+    neighbour,
     own_test,
     peak_of,
     peak_of_first,
@@ -43,6 +46,7 @@ from gallery_parts import (
     reading,
     realigned,
     response_of,
+    reversed_list,
     scaled,
     second_half,
     strongest,
@@ -102,8 +106,6 @@ class Case:
         Its docstring is the story.
     said : str
         Words of the refusal; "" for a pipeline that is cleared.
-    runs : bool
-        Whether it is really run, not only judged.
     exchange, left_out : dict
         What the study table says of some subjects.
     """
@@ -111,7 +113,6 @@ class Case:
     title: str
     build: Build
     said: str = ""
-    runs: bool = False
     exchange: tuple[tuple[str, str], ...] = ()
     left_out: tuple[tuple[str, str], ...] = ()
 
@@ -125,25 +126,36 @@ class Case:
         return Garden(root, dict(self.exchange), dict(self.left_out))
 
 
+class Told(TypedDict, total=False):
+    """What the study table says of some subjects."""
+
+    exchange: tuple[tuple[str, str], ...]
+    left_out: tuple[tuple[str, str], ...]
+
+
 RIGHT: list[Case] = []
-WRONG: list[Case] = []
+WRONG: list[Case] = []  # the graph shows it
+HIDDEN: list[Case] = []  # only the run shows it
 
 
-def right(title: str, **more: object) -> Callable[[Build], Build]:
+def right(title: str, **told: Unpack[Told]) -> Callable[[Build], Build]:
     """A pipeline that the guard has to clear."""
+    return _into(RIGHT, title, "", told)
 
+
+def wrong(title: str, said: str, **told: Unpack[Told]) -> Callable[[Build], Build]:
+    """A pipeline that the guard has to refuse before it runs, in these words."""
+    return _into(WRONG, title, said, told)
+
+
+def hidden(title: str, said: str, **told: Unpack[Told]) -> Callable[[Build], Build]:
+    """A pipeline that the guard has to refuse while it runs, in these words."""
+    return _into(HIDDEN, title, said, told)
+
+
+def _into(cases: list[Case], title: str, said: str, told: Told) -> Callable[[Build], Build]:
     def add(build: Build) -> Build:
-        RIGHT.append(Case(title, build, **more))  # type: ignore[arg-type]
-        return build
-
-    return add
-
-
-def wrong(title: str, said: str, **more: object) -> Callable[[Build], Build]:
-    """A pipeline that the guard has to refuse, in these words."""
-
-    def add(build: Build) -> Build:
-        WRONG.append(Case(title, build, said, **more))  # type: ignore[arg-type]
+        cases.append(Case(title, build, said, **told))
         return build
 
     return add
@@ -192,7 +204,7 @@ def flips() -> Node:
 def planned(plan: Workflow, **inputs: list[str]) -> Workflow:
     """A ready-made plan with its maps."""
     plan.base_dir = "work"
-    plan.config["execution"] = {"crashdump_dir": ".", "create_report": "false"}
+    plan.config["execution"] = empty().config["execution"]
     plan.inputs.inputnode.trait_set(**inputs)
     return plan
 
@@ -216,16 +228,34 @@ def kept_by_response(garden: Garden, scan: str) -> Workflow:
     return kept_and_tested(graph, garden, keep)
 
 
+def stored(garden: Garden) -> list[str]:
+    """The first runs moved to a store, with links in their place; the files in the store."""
+    store = garden.root.parent / "store"
+    store.mkdir(exist_ok=True)
+    for path in garden.of("lanterns1"):
+        if not os.path.islink(path):
+            os.replace(path, store / Path(path).name)
+            os.symlink(store / Path(path).name, path)
+    garden.declare()
+    return [os.path.realpath(path) for path in garden.of("lanterns1")]
+
+
+# Of two contrasts whose errors are uncorrelated, within a run and between gardeners.
+UNRELATED = Certificate(
+    "amber + teal", "amber - teal", (Condition("run", 0.0), Condition("subject", 0.0)), ()
+)
+
+
 # -- right -------------------------------------------------------------------------------------
 
 
-@right("A declared atlas", runs=True)
+@right("A declared atlas")
 def _(garden: Garden) -> Workflow:
     """Arbor is a label of an atlas of 1909 that was declared before the maps were looked at."""
     return atlas_test(garden)
 
 
-@right("Leave one subject out, flipped as a whole", runs=True)
+@right("Leave one subject out, flipped as a whole")
 def _(garden: Garden) -> Workflow:
     """Every gardener's region is chosen on the others, and the test repeats all of it."""
     maps = garden.of("lanterns1")
@@ -241,7 +271,7 @@ def _(garden: Garden) -> Workflow:
     return read_and_test(empty(), choose, "row_masks", extract(maps), test)
 
 
-@right("Runs realigned to one reference", runs=True)
+@right("Runs realigned to one reference")
 def _(garden: Garden) -> Workflow:
     """All runs are moved to the grid of gardener 01's first run; only its header is used, as a
     contract of the node states."""
@@ -264,7 +294,7 @@ def _(garden: Garden) -> Workflow:
     return group_then_test(garden.of("T1w"), garden.of("lanterns1"))
 
 
-@right("Motion decides who stays", runs=True)
+@right("Motion decides who stays")
 def _(garden: Garden) -> Workflow:
     """Gardeners who moved more than 2 mm in the very run are left out; how much somebody moved
     says nothing of the response, as a contract of the node states."""
@@ -360,7 +390,7 @@ def _(garden: Garden) -> Workflow:
     return graph
 
 
-@right("A sphere from a paper", runs=True)
+@right("A sphere from a paper")
 def _(garden: Garden) -> Workflow:
     """The centre comes from a paper of 1911, which is declared as its origin."""
     maps = garden.of("lanterns1")
@@ -382,23 +412,16 @@ def _(garden: Garden) -> Workflow:
     return read_and_test(empty(), region, "mask_file", read, fixed_test())
 
 
-@right("A tree of symbolic links", runs=True)
+@right("A tree of symbolic links")
 def _(garden: Garden) -> Workflow:
     """The maps lie in a store and the study names links to them; the pipeline is given the
     files in the store."""
-    store = garden.root.parent / "store"
-    store.mkdir(exist_ok=True)
-    for path in garden.of("lanterns1"):
-        if not os.path.islink(path):
-            os.replace(path, store / Path(path).name)
-            os.symlink(store / Path(path).name, path)
-    garden.declare()
-    maps = [os.path.realpath(path) for path in garden.of("lanterns1")]
+    maps = stored(garden)
     choose, test = by_fold(maps, PLAIN), flip_test(maps, PLAIN)
     return read_and_test(empty(), choose, "row_masks", extract(maps), test)
 
 
-@right("The study seen from inside a container", runs=True)
+@right("The study seen from inside a container")
 def _(garden: Garden) -> Workflow:
     """The folder is mounted under another name; paths in the study are relative to it."""
     inside = garden.root.parent / "mounted"
@@ -423,7 +446,7 @@ def _(garden: Garden) -> Workflow:
     return read_and_test(graph, choose, "row_masks", read, test)
 
 
-@right("Iterated over gardeners and joined", runs=True)
+@right("Iterated over gardeners and joined")
 def _(garden: Garden) -> Workflow:
     """Smoothing is iterated over the gardeners, a JoinNode gathers them, and the folds are made
     after it."""
@@ -462,7 +485,7 @@ def _(garden: Garden) -> Workflow:
     return group_then_test(garden.of("rest", SUBS[:3]), [], read)
 
 
-@right("Any group software between the folds", runs=True)
+@right("Any group software between the folds")
 def _(garden: Garden) -> Workflow:
     """A lab's own group map is made once per fold, on the maps that choose there."""
     body = Function(function=average, output_names=["out"])
@@ -470,7 +493,7 @@ def _(garden: Garden) -> Workflow:
     return planned(plan, effects=garden.of("lanterns1"))
 
 
-@right("A region chosen by age, held out", runs=True)
+@right("A region chosen by age, held out")
 def _(garden: Garden) -> Workflow:
     """The correlation with age chooses without each gardener's map and age, and the exchange
     repeats all of it."""
@@ -494,7 +517,7 @@ def _(garden: Garden) -> Workflow:
     return read_and_test(graph, region, "out", extract(garden.of("lanterns1")), correlating(MOOD))
 
 
-@right("The atlas and a score", runs=True)
+@right("The atlas and a score")
 def _(garden: Garden) -> Workflow:
     """The response in a region of the atlas is correlated with age by a lab's own function."""
     region = foreign(strongest, in_file=garden.outside("atlas"))
@@ -502,7 +525,7 @@ def _(garden: Garden) -> Workflow:
     return read_and_test(empty(), region, "out", read, correlating(AGE))
 
 
-@right("A lab's own extraction and test, by contract", runs=True)
+@right("A lab's own extraction and test, by contract")
 def _(garden: Garden) -> Workflow:
     """A lab's own functions read and test; contracts name their inputs, and the region comes
     from the atlas."""
@@ -512,7 +535,7 @@ def _(garden: Garden) -> Workflow:
     return graph
 
 
-@right("Own runs averaged before a lab's own test", runs=True)
+@right("Own runs averaged before a lab's own test")
 def _(garden: Garden) -> Workflow:
     """Two runs of each gardener are read in the atlas, and averaged before the test."""
     graph, together = empty(), Node(Merge(2, axis="hstack"), "together")
@@ -526,7 +549,7 @@ def _(garden: Garden) -> Workflow:
     return graph
 
 
-@right("An exploratory look", runs=True)
+@right("An exploratory look")
 def _(garden: Garden) -> Workflow:
     """The strongest voxels of the group map are read on the same maps, declared exploratory; the
     values are marked biased and no test is made."""
@@ -560,7 +583,7 @@ def _(garden: Garden) -> Workflow:
     return read_and_test(graph, choose, "row_masks", read, test)
 
 
-@right("Halves taken by a function on a connection", runs=True)
+@right("Halves taken by a function on a connection")
 def _(garden: Garden) -> Workflow:
     """A function on a connection hands the first three maps to the group map and the last three
     to the extraction: it says by name which it hands on."""
@@ -864,7 +887,7 @@ def _(garden: Garden) -> Workflow:
     return kept_and_tested(graph, garden, keep)
 
 
-@wrong("The oldest gardeners, correlated with age", "chosen by age of the very subjects")
+@wrong("The oldest gardeners, correlated with age", "kept or left out by age, in the data")
 def _(garden: Garden) -> Workflow:
     """Only gardeners above 35 take part, and the response is compared with age."""
     graph, maps = empty(), garden.of("lanterns1")
@@ -1026,6 +1049,22 @@ def _(garden: Garden) -> Workflow:
     return group_then_test(garden.of("lanterns"), [], read, fixed_test(certificate=told))
 
 
+@wrong("One map under two names, and a certificate", "which chose and is tested")
+def _(garden: Garden) -> Workflow:
+    """A certificate covers one contrast that chooses and another that is tested, but the files in
+    the store that choose are those whose links are tested."""
+    read = extract(garden.of("lanterns1"), certificate=UNRELATED)
+    return group_then_test(stored(garden), [], read, fixed_test(certificate=UNRELATED))
+
+
+@wrong("A certificate, and other runs", "was not chosen on exactly these")
+def _(garden: Garden) -> Workflow:
+    """A certificate for two contrasts of the same runs is given to a region that the group's
+    second runs chose, to have the first ones speak of more than these gardeners."""
+    read = extract(garden.of("lanterns1"), certificate=UNRELATED)
+    return group_then_test(garden.of("lanterns2"), [], read, fixed_test(certificate=UNRELATED))
+
+
 @wrong("Our node, changed", CIRCULAR)
 def _(garden: Garden) -> Workflow:
     """A lab has derived a node of its own from ours; what ours promises of its folds, the new one
@@ -1034,3 +1073,46 @@ def _(garden: Garden) -> Workflow:
     choose = Node(OwnFolds(in_files=maps, labels=list(SUBS), procedure=PLAIN), "choose")
     read = extract(maps)
     return read_and_test(empty(), choose, "row_masks", read, flip_test(maps, PLAIN))
+
+
+# -- wrong, which only the run shows ----------------------------------------------------------
+
+
+@hidden("A map that lies beside the atlas", CIRCULAR)
+def _(garden: Garden) -> Workflow:
+    """A lab's own node is given the atlas, and hands on the tested map of gardener 01, which lies
+    in the same folder."""
+    graph, region = empty(), foreign(strongest)
+    other = foreign(neighbour, in_file=garden.outside("atlas"))
+    graph.connect(other, "out", region, "in_file")
+    return read_and_test(graph, region, "out", extract(garden.of("lanterns1")), fixed_test())
+
+
+@hidden("A copy of a map that lies beside the atlas", CIRCULAR)
+def _(garden: Garden) -> Workflow:
+    """The same with a copy of that map in the node's own folder; a copy is known by its bytes."""
+    graph, region = empty(), foreign(strongest)
+    other = foreign(copied, in_file=garden.outside("atlas"))
+    graph.connect(other, "out", region, "in_file")
+    return read_and_test(graph, region, "out", extract(garden.of("lanterns1")), fixed_test())
+
+
+@hidden("The map beside the atlas, and a certificate", "which chose and is tested")
+def _(garden: Garden) -> Workflow:
+    """The same copy, and a certificate for two contrasts that are not the ones."""
+    graph, region = empty(), foreign(strongest)
+    other = foreign(copied, in_file=garden.outside("atlas"))
+    graph.connect(other, "out", region, "in_file")
+    read = extract(garden.of("lanterns1"), certificate=UNRELATED)
+    return read_and_test(graph, region, "out", read, fixed_test(certificate=UNRELATED))
+
+
+@hidden("Maps in another order", CIRCULAR)
+def _(garden: Garden) -> Workflow:
+    """A contract says that a lab's own node hands on map for map, but it turns the list round, so
+    that gardeners are read in regions which they chose."""
+    graph, maps, read = empty(), garden.of("lanterns1"), extract()
+    turned = foreign(reversed_list, in_files=maps)
+    contract(turned, rules={"out": each("in_files")})
+    graph.connect(turned, "out", read, "in_files")
+    return read_and_test(graph, by_fold(maps, PLAIN), "row_masks", read, flip_test(maps, PLAIN))

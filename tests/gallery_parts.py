@@ -253,6 +253,27 @@ def called_by(mask_file, command):
     return mask_file
 
 
+def neighbour(in_file):
+    """A file in the same folder."""
+    import os
+
+    return os.path.join(os.path.dirname(in_file), "sub-01_lanterns1.nii")
+
+
+def copied(in_file):
+    """A copy of a file in the same folder."""
+    import os
+    import shutil
+
+    other = os.path.join(os.path.dirname(in_file), "sub-01_lanterns1.nii")
+    return shutil.copy(other, os.path.abspath("copy.nii"))
+
+
+def reversed_list(in_files):
+    """A list, from its end."""
+    return in_files[::-1]
+
+
 def first_half(maps):
     """The first three."""
     return maps[:3]

@@ -12,6 +12,7 @@ from collections.abc import Callable
 from dataclasses import dataclass
 from functools import cache
 from pathlib import Path
+from typing import Any
 
 import nibabel as nib
 import numpy as np
@@ -67,17 +68,20 @@ class StudyCase:
         """One sentence or two."""
         return " ".join((self.add.__doc__ or "").split())
 
-    def judged(self, folder: Path) -> str:
-        """What is said when the study with the region is refused."""
+    def judged(self, folder: Path, **how: Any) -> str:
+        """What is said when the study with the region is refused; with an engine it is run."""
         root = folder / "garden"
         shutil.copytree(planted() if self.before else run_once(), root)
         region = BROOK.replace("REGION", self.add(root))
         study = root / "STUDY.toml"
         study.write_text(HEAD + ARBOR + region)
         if self.before:
-            run_study(read_settings(study))
+            run_study(read_settings(study), **how)
         try:
-            check_study(read_settings(study))
+            if how:
+                run_study(read_settings(study), **how)
+            else:
+                check_study(read_settings(study))
         except GuardRefused as refused:
             return str(refused)
         return ""
@@ -123,6 +127,14 @@ def arbor(root: Path) -> np.ndarray:
     return np.asarray(nib.load(path).dataobj) != 0
 
 
+def atlas(root: Path) -> str:
+    """An atlas whose label 1 is that region, dilated; 2 is somewhere else."""
+    labels = binary_dilation(arbor(root)).astype(np.int16)
+    labels[:1, :1, :] = 2
+    save(root / "atlas.nii.gz", labels)
+    return 'atlas = "atlas.nii.gz"'
+
+
 def case(into: list[StudyCase], title: str, said: str = "", *, before: bool = False):
     """Add a case to a list."""
 
@@ -147,6 +159,13 @@ def _(root: Path) -> str:
     return "centre = [9, 8, 6], radius = 4"
 
 
+@case(RIGHT, "Another label of an atlas with a label like one's own cluster")
+def _(root: Path) -> str:
+    """One label of an atlas is like the region that a run chose; the study reads another one, of
+    which nothing is known."""
+    return f"{atlas(root)}, labels = [2]"
+
+
 @case(WRONG, "A region of one's own, saved anew", "a run has recorded")
 def _(root: Path) -> str:
     """The region that a run chose comes back under another name and data type, as "a map in the
@@ -164,6 +183,23 @@ def _(root: Path) -> str:
     """The region that a run chose is made one voxel larger all round, and declared as a map in
     the hut."""
     save(root / "hut.nii.gz", binary_dilation(arbor(root)).astype(np.uint8))
+    return 'mask = "hut.nii.gz"'
+
+
+@case(
+    WRONG, "A label of an atlas that is like one's own cluster", "is like a mask that was chosen on"
+)
+def _(root: Path) -> str:
+    """The label of the same atlas that is like the region that a run chose."""
+    return f"{atlas(root)}, labels = [1]"
+
+
+@case(WRONG, "A region of one's own, in the copy of a study file", "run recorded in COPY.ledger")
+def _(root: Path) -> str:
+    """The ledger of the first run lies beside under another name, as after copying STUDY.toml to
+    begin anew; it is consulted."""
+    (root / "STUDY.ledger.jsonl").rename(root / "COPY.ledger.jsonl")
+    save(root / "hut.nii.gz", arbor(root).astype(np.float32) * 7)
     return 'mask = "hut.nii.gz"'
 
 

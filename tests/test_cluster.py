@@ -3,34 +3,39 @@
 from __future__ import annotations
 
 import json
-import logging
 import os
 import shutil
 import signal
 import subprocess
 import time
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from functools import partial
 from pathlib import Path
+from threading import Event, Thread
 from typing import Any
 
 import nipype
 import numpy as np
+import psutil
 import pytest
+import running
 from click.testing import CliRunner
-from engines_under_test import ENGINES, arguments
-from nipype import Function, IdentityInterface, MapNode, Node, Workflow
+from engines_under_test import ENGINES, arguments, ipython_cluster, slurm_cluster
+from nipype import IdentityInterface, MapNode, Node, Workflow
+from planting import a_grid, plant
+from running import called
 from sequester.nodes.errors import InputError, Refused
-from sequester.nodes.images import Geometry, write_map
 from sequester.nodes.interfaces import Extract, SubjectMaps
 from sequester.nodes.interfaces.contracts import contract
 from sequester.nodes.rules import leaves, only
+from sequester.workflows import engines
 from sequester.workflows.cli import main
 from sequester.workflows.engines import WorkerLost
 from sequester.workflows.guard import GuardPlugin, GuardRefused
-from sequester.workflows.study import Origin, Study, read_table
+from sequester.workflows.study import Origin, Study
 
 SHAPE = (5, 5, 4)
-GRID = Geometry(SHAPE, ((2, 0, 0, 0), (0, 2, 0, 0), (0, 0, 2, 0), (0, 0, 0, 1)))
 LABELS = [f"{i:02d}" for i in range(3)]
 # What docs/guard.md states; on a busy machine a test may take as long again.
 SECONDS = 60
@@ -40,55 +45,24 @@ SECONDS = 60
 def _alone(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Iterator[None]:
     """In a folder of its own, quiet, and for two minutes at most."""
     monkeypatch.chdir(tmp_path)
-    monkeypatch.setenv("NO_ET", "1")
-    for name in ("nipype.workflow", "nipype.utils", "nipype.interface", "concurrent.futures"):
-        monkeypatch.setattr(logging.getLogger(name), "level", logging.CRITICAL + 1)
-
-    def late(*_: object) -> None:
-        raise TimeoutError("still running after two minutes")
-
-    before = signal.signal(signal.SIGALRM, late)
-    signal.alarm(120)
-    yield
-    signal.alarm(0)
-    signal.signal(signal.SIGALRM, before)
+    running.silence(monkeypatch, "concurrent.futures")
+    with running.two_minutes():
+        yield
 
 
 @pytest.fixture
 def study(tmp_path: Path) -> Study:
-    rng = np.random.default_rng(5)
-    lines = ["path\tsub\tsuffix"]
-    for label in LABELS:
-        noise = rng.standard_normal(SHAPE).astype(np.float32)
-        write_map(tmp_path / f"{label}.nii", noise + 1, GRID)
-        lines.append(f"{label}.nii\t{label}\tbold")
-    write_map(tmp_path / "moss.nii", np.arange(100).reshape(SHAPE) < 40, GRID)
-    (tmp_path / "table.tsv").write_text("\n".join(lines) + "\n")
-    return read_table(tmp_path / "table.tsv", origins=[Origin("a chart of moss", ("moss.nii",))])
-
-
-@pytest.fixture
-def maps(study: Study) -> list[str]:
-    return [str(study.root / row.path) for row in study.rows]
+    noise = np.random.default_rng(5).standard_normal((len(LABELS), *SHAPE)).astype(np.float32)
+    maps = dict(zip(LABELS, noise + 1, strict=True))
+    moss = np.arange(100).reshape(SHAPE) < 40
+    chart = Origin("a chart of moss", ("moss.nii",))
+    return plant(tmp_path, maps, a_grid(SHAPE, 2.0), {"moss": moss}, [chart], prefix="")
 
 
 def workflow(name: str, **execution: str) -> Workflow:
-    made = Workflow(name, base_dir=str(Path("work").absolute()))
-    made.config["execution"] = {
-        "crashdump_dir": str(Path("crashes").absolute()),
-        "create_report": "false",
-        "poll_sleep_duration": "0.1",
-        "job_finished_timeout": "2",
-        **execution,
-    }
-    return made
-
-
-def called(body: str, **inputs: Any) -> Function:
-    made = Function(input_names=list(inputs), output_names=["out"])
-    made.inputs.function_str = body
-    made.inputs.trait_set(**inputs)
-    return made
+    """One that asks a cluster less often, and waits less for its files."""
+    waits = {"poll_sleep_duration": "0.1", "job_finished_timeout": "2"}
+    return running.workflow(name, **waits, **execution)
 
 
 def results(name: str) -> list[str]:
@@ -398,6 +372,112 @@ def test_a_job_that_vanishes_from_the_queue_ends_the_run(slurm, study, tmp_path)
     with pytest.raises(WorkerLost, match=r"\(gone\.node\).*slurm-\d+\.out"):
         again.run(plugin=GuardPlugin(study, engine="SLURM", plugin_args=given))
     assert watcher.wait(10) == 0
+
+
+# -- controllers that die ----------------------------------------------------------------------
+
+WAITING = (  # tells that it runs, and ends when it is told to
+    "def waiting(x):\n"
+    "    import os, time\n"
+    "    open(x + '.runs', 'w').close()\n"
+    "    for _ in range(600):\n"
+    "        if os.path.exists(x):\n"
+    "            return 'done'\n"
+    "        time.sleep(0.1)\n"
+)
+
+
+def waiting(name: str) -> Workflow:
+    made = workflow(name)
+    made.add_nodes([Node(called(WAITING, x=str(Path(name).absolute())), "wait")])
+    return made
+
+
+@contextmanager
+def once_it_runs(name: str, act: Callable[[], object]) -> Iterator[None]:
+    """Do something when the node of a workflow has begun."""
+
+    def watch() -> None:
+        while not over.wait(0.1):
+            if Path(f"{root}/{name}.runs").exists():
+                act()
+                return
+
+    over, root = Event(), Path.cwd()
+    watcher = Thread(target=watch)
+    watcher.start()
+    try:
+        yield
+    finally:
+        over.set()
+        watcher.join()
+
+
+def test_a_controller_of_slurm_that_is_started_anew_and_one_that_is_gone(study, monkeypatch):
+    root = Path.cwd()
+    with slurm_cluster() as folder:
+        with (folder / "slurm.conf").open("a") as conf:
+            conf.write("MessageTimeout=2\n")  # how long squeue itself tries
+
+        def end(how: signal.Signals) -> None:
+            os.kill(int((folder / "slurmctld.pid").read_text()), how)
+
+        def start_anew() -> None:
+            end(signal.SIGTERM)
+            time.sleep(3)
+            (root / "anew").touch()
+            subprocess.run(["slurmctld"], check=True)
+
+        with once_it_runs("anew", start_anew):
+            done = waiting("anew").run(plugin=GuardPlugin(study, engine="SLURM"))
+        assert [node.result.outputs.out for node in done.nodes()] == ["done"]
+
+        monkeypatch.setattr(engines, "PATIENCE", 1.0)
+        lost = (
+            r"controller does not answer \(gone\.wait\): squeue says '.*look at squeue when it is"
+        )
+        with (
+            once_it_runs("gone", partial(end, signal.SIGKILL)),
+            pytest.raises(WorkerLost, match=lost),
+        ):
+            waiting("gone").run(plugin=GuardPlugin(study, engine="SLURM"))
+        (root / "gone").touch()
+
+
+def test_a_controller_of_ipython_that_is_gone(study, monkeypatch):
+    with ipython_cluster(engines=1) as (cluster, given):
+        hub = psutil.Process(cluster.controller.pid)
+        rest = hub.children(recursive=True)  # it survives the hub, and passes answers on
+        guard = GuardPlugin(study, engine="IPython", plugin_args=given)
+
+        def kill_the_hub() -> None:
+            hub.kill()
+            Path(root, "hub").touch()
+
+        root = Path.cwd()
+        try:
+            with once_it_runs("hub", kill_the_hub):
+                done = waiting("hub").run(plugin=guard)
+            assert [node.result.outputs.out for node in done.nodes()] == ["done"]
+        finally:
+            for process in rest:
+                process.kill()
+
+    monkeypatch.setattr(engines, "PATIENCE", 1.0)
+    monkeypatch.setattr(engines, "ASK_AGAIN", 0.1)
+    with ipython_cluster(engines=1) as (cluster, given):
+        hub = psutil.Process(cluster.controller.pid)
+
+        def kill_it_all() -> None:
+            for process in [hub, *hub.children(recursive=True)]:
+                process.kill()
+
+        lost = r"controller does not answer \(gone\.wait\): start the cluster anew"
+        with once_it_runs("gone", kill_it_all), pytest.raises(WorkerLost, match=lost):
+            waiting("gone").run(plugin=GuardPlugin(study, engine="IPython", plugin_args=given))
+
+
+# -- jobs that are left ------------------------------------------------------------------------
 
 
 @pytest.mark.parametrize("engine", ["MultiProc", "SLURM"])

@@ -2,8 +2,9 @@
 
 `before` is called in the driver with each node, cached ones too, and may raise to stop it and
 what depends on it; `after` hears of its end ("end" or "exception"), also of the elements of a
-MapNode. A worker that dies ends the run with `WorkerLost`; jobs that are still queued when a run
-ends early are taken back.
+MapNode. A worker that dies ends the run with `WorkerLost`, and so does a cluster whose controller
+has not answered for `PATIENCE` seconds; jobs that are still queued when a run ends early are
+taken back.
 """
 
 from __future__ import annotations
@@ -12,15 +13,18 @@ import gc
 import getpass
 import importlib.util
 import json
+import math
 import os
 import re
 import shutil
 import subprocess
 import sys
+import time
 from abc import ABC, abstractmethod
 from collections.abc import Callable, Iterable, Mapping
 from concurrent.futures.process import BrokenProcessPool
 from pathlib import Path
+from threading import Event, Thread
 from traceback import format_exception
 from typing import Any
 
@@ -38,16 +42,20 @@ After = Callable[[Any, str], None]
 
 _OF_THE_SHELL = re.compile(r"""[\s'"\\$`&;|<>()*?!\[\]{}#~]""")
 ENGINES = ("Linear", "MultiProc", "SLURM", "IPython")
+PATIENCE = 300.0  # seconds: a controller that is started anew is back by then
+ASK_AGAIN = 5.0  # seconds
+
+DIED = "a worker ended without an answer"
+SILENT = "the cluster's controller does not answer"
 
 
 class WorkerLost(SequesterError):
-    """A worker ended without an answer: killed, out of memory, its job removed from the queue."""
+    """No answer will come: a worker was killed, its job was removed, the controller is gone."""
 
-    def __init__(self, nodes: str, remedy: str) -> None:
+    def __init__(self, what: str, nodes: str, remedy: str) -> None:
         super().__init__(
-            f"a worker ended without an answer ({nodes}): killed, or out of memory or time; "
-            f"{remedy}; what was finished is kept in the working folder, and a second run goes "
-            "on from there"
+            f"{what} ({nodes}): {remedy}; what was finished is kept in the working folder, and a "
+            "second run goes on from there"
         )
 
 
@@ -161,6 +169,9 @@ class _Watched(DistributedPluginBase, ABC):
         WorkerLost
         """
         self._graph = graph
+        # The engine collects garbage at every poll and with every command; what is there already
+        # is set aside.
+        gc.freeze()
         try:
             super().run(graph, config, updatehash)
         except Exception as error:
@@ -169,6 +180,7 @@ class _Watched(DistributedPluginBase, ABC):
                 raise self._lost[0] from error
             raise
         finally:
+            gc.unfreeze()
             self._take_back()
 
     @abstractmethod
@@ -205,25 +217,17 @@ class _Watched(DistributedPluginBase, ABC):
             result = {**result, "traceback": result["traceback"].splitlines(keepends=True)}
         return super()._clean_queue(jobid, graph, result=result)
 
-    def _lose(self, remedy: str) -> WorkerLost:
+    def _lose(self, what: str, remedy: str) -> WorkerLost:
         """Note that a worker is gone; which of the running nodes it had, nobody can tell."""
         running = np.flatnonzero(self.proc_done & self.proc_pending)
         nodes = ", ".join(sorted(str(self.procs[jobid].fullname) for jobid in running))
-        self._lost.append(WorkerLost(nodes, remedy))
+        self._lost.append(WorkerLost(what, nodes, remedy))
         return self._lost[-1]
 
 
 class _MultiProc(_Watched, MultiProcPlugin):
     def __init__(self, plugin_args: dict[str, Any]) -> None:
         super().__init__({"raise_insufficient": False, **plugin_args})
-
-    def run(self, graph: Any, config: Any, updatehash: bool = False) -> None:
-        # The engine's loop collects garbage again and again; what is there already is set aside.
-        gc.freeze()
-        try:
-            super().run(graph, config, updatehash)
-        finally:
-            gc.unfreeze()
 
     def _take_back(self) -> None:
         self.pool.shutdown(cancel_futures=True)
@@ -237,7 +241,8 @@ class _MultiProc(_Watched, MultiProcPlugin):
         future = self._task_obj[taskid]
         fault = future.exception() if future.done() else None
         if isinstance(fault, BrokenProcessPool):
-            raise self._lose("run fewer processes, or state what memory the nodes need (mem_gb)")
+            cure = "run fewer processes, or state what memory the nodes need (mem_gb)"
+            raise self._lose(DIED, f"killed, or out of memory; {cure}")
         if fault is not None:
             raise fault
         return super()._get_result(taskid)
@@ -252,6 +257,8 @@ class _SLURM(_Watched, SLURMPlugin):
     def __init__(self, plugin_args: dict[str, Any]) -> None:
         super().__init__(plugin_args)
         self._logs: dict[int, Path] = {}
+        self._queued: dict[int, bool] = {}
+        self._silent_since, self._gone = math.inf, False
         os.environ.setdefault("LOGNAME", getpass.getuser())  # the engine names jobs by it
 
     def run(self, graph: Any, config: Any, updatehash: bool = False) -> None:
@@ -279,11 +286,42 @@ class _SLURM(_Watched, SLURMPlugin):
         self._logs[taskid] = Path(scriptfile).with_name(f"slurm-{taskid}.out")
         return taskid
 
+    def _send_procs_to_workers(self, updatehash: bool = False, graph: Any = None) -> None:
+        if self._gone:
+            raise self._lost[-1]
+        if math.isinf(self._silent_since):  # the engine gives up after two attempts
+            super()._send_procs_to_workers(updatehash, graph)
+
     def _get_result(self, taskid: int) -> Any:
         answer = super()._get_result(taskid)
         if answer and answer.get("hostname") == "unknown":  # no result file came
-            raise self._lose(f"see its log, {self._logs[taskid]}")
+            where = f"see its log, {self._logs[taskid]}"
+            raise self._lose(DIED, f"killed, or out of memory or time; {where}")
         return answer
+
+    def _is_pending(self, taskid: int) -> bool:
+        # The engine asks about every job by itself, at every poll. The queue is asked about all
+        # of them at once, and again when a job comes round that this answer was used for.
+        if self._gone:
+            raise self._lost[-1]
+        if taskid not in self._queued:
+            self._queued = self._look_at_queue()
+        return self._queued.pop(taskid)
+
+    def _look_at_queue(self) -> dict[int, bool]:
+        """Which jobs are still in the queue; all of them while its controller says nothing."""
+        call = ["squeue", "--noheader", "--all", "--format=%A", f"--user={os.getuid()}"]
+        told = subprocess.run(call, check=False, capture_output=True, text=True)
+        if told.returncode == 0:
+            self._silent_since = math.inf
+            here = set(told.stdout.split())
+            return {job: str(job) in here for job in self._pending}
+        self._silent_since = min(self._silent_since, time.monotonic())
+        if time.monotonic() - self._silent_since > PATIENCE:
+            self._gone = True
+            cure = "jobs that it was given may still run: look at squeue when it is back"
+            raise self._lose(SILENT, f"squeue says {told.stderr.strip()!r}; {cure}")
+        return dict.fromkeys(self._pending, True)
 
 
 class _IPython(_Watched, IPythonPlugin):
@@ -292,8 +330,24 @@ class _IPython(_Watched, IPythonPlugin):
         # The engine passes it under a name that the cluster's client no longer heeds.
         if "url_file" in self.client_args:
             self.client_args["connection_info"] = self.client_args.pop("url_file")
+        self._over = Event()
+        self._heard = math.inf
+
+    def _prerun_check(self, graph: Any) -> None:
+        self._heard = time.monotonic()
+        # A client of its own: whoever asks a controller that is gone waits for ever.
+        asking = self.iparallel.Client(**self.client_args)
+        Thread(target=self._keep_asking, args=(asking,), daemon=True).start()
+        super()._prerun_check(graph)
+
+    def _keep_asking(self, client: Any) -> None:
+        while not self._over.wait(ASK_AGAIN):
+            client.queue_status()
+            self._heard = time.monotonic()
+        client.close()
 
     def _take_back(self) -> None:
+        self._over.set()
         if self.taskclient is not None:
             self.taskclient.close()
 
@@ -305,13 +359,23 @@ class _IPython(_Watched, IPythonPlugin):
 
     def _get_result(self, taskid: int) -> Any:
         try:
-            return super()._get_result(taskid)
+            answer = super()._get_result(taskid)
         except Exception as error:
             if getattr(error, "ename", type(error).__name__) == "EngineError":
-                raise self._lose("look at the cluster's log") from error
+                cure = "look at the cluster's log"
+                raise self._lose(DIED, f"killed, or out of memory or time; {cure}") from error
             raise
+        if answer is None and time.monotonic() - self._heard > PATIENCE + ASK_AGAIN:
+            raise self._lose(SILENT, "start the cluster anew: ipcluster start")
+        return answer
 
     def _submit_job(self, node: Any, updatehash: bool = False) -> Any:
         if not self.taskclient.ids:
-            raise self._lose("start engines: ipcluster start, or ipcluster engines")
+            cure = "start engines: ipcluster start, or ipcluster engines"
+            raise self._lose(DIED, cure)
         return super()._submit_job(node, updatehash)
+
+    def _clear_task(self, taskid: int) -> None:
+        # The engine has the controller forget the result, too, and would wait for ever for one
+        # that is gone; a controller has a limit to what it keeps.
+        self.taskclient.purge_local_results(self.taskmap.pop(taskid))
