@@ -8,14 +8,15 @@ these data. Exact but for the fit of the covariates. Maps are made whole, withou
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Iterator, Sequence
 
 import numpy as np
 import numpy.typing as npt
 
 from .design import Design, design_maps
-from .foldstack import BLOCK, FoldStack
+from .foldstack import FoldStack
 from .groupmaps import Missing
+from .leading import leading
 
 Floats = npt.NDArray[np.floating]
 Ints = npt.NDArray[np.integer]
@@ -48,7 +49,7 @@ class AdjustedMaps:
     def counts(self, kind: str) -> Ints:
         """(n_folds,) features with a value in each fold's map."""
         found = np.zeros(len(self._n), dtype=np.intp)
-        for block in self.stack.pieces():
+        for block in self.stack.batches():
             found += np.count_nonzero(~np.isnan(self._maps(block, kind)), axis=1)
         return found
 
@@ -63,18 +64,18 @@ class AdjustedMaps:
     def maps(self, weights: Floats, features: Ints, kind: str) -> Floats:
         """(n_folds, n_some_features) t or the contrast; NaN where there is no value."""
         maps = np.empty((len(self._n), len(features)))
-        for start in range(0, len(features), BLOCK):
-            some = slice(start, start + BLOCK)
-            maps[:, some] = self._maps(features[some], kind)
+        for at in self.stack.batches(features):
+            maps[:, at] = self._maps(features[at], kind)
         return maps
 
     def may_pass(self, weights: Floats) -> list[Ints]:
         """Every feature, for each row of weights."""
         return [np.arange(self.stack.n_features)] * len(weights)
 
-    def may_lead(self, weights: Floats, k: int, kind: str) -> list[Ints]:
-        """Every feature, for each row of weights."""
-        return self.may_pass(weights)
+    def leaders(self, weights: Floats, k: Sequence[int], kind: str) -> Iterator[tuple[Ints, Bools]]:
+        """For each row of weights, the features in the first k (of each fold) of any fold."""
+        for row, every in zip(weights, self.may_pass(weights), strict=True):
+            yield leading(self.maps(row, every, kind), every, k)
 
     def _maps(self, features: Ints | slice, kind: str) -> Floats:
         x = self.stack.columns(features).astype(np.float64)

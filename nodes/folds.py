@@ -36,6 +36,11 @@ class Fold:
 class Scheme(ABC):
     """Base of the fold schemes; a scheme supplies the held-out labels of each fold."""
 
+    @property
+    def dealt_by(self) -> tuple[tuple[str, str], ...]:
+        """What was looked at of each label to deal the folds, as (label, what it says)."""
+        return ()
+
     @abstractmethod
     def _held_out(self, labels: list[str]) -> list[tuple[str, tuple[str, ...]]]:
         """The name of each fold and the labels it holds out, given the sorted labels."""
@@ -57,12 +62,11 @@ class Scheme(ABC):
         InputError
             When the labels do not suffice for the scheme.
         """
-        made = []
-        for name, held in self.held_out(labels):
-            away = set(held)
-            kept = tuple(row for row in range(len(labels)) if row not in away)
-            made.append(Fold(name, held, kept))
-        return made
+        rows = set(range(len(labels)))
+        return [
+            Fold(name, held, tuple(sorted(rows.difference(held))))
+            for name, held in self.held_out(labels)
+        ]
 
     def held_out(self, labels: Sequence[str]) -> list[tuple[str, tuple[int, ...]]]:
         """The name of each fold and the rows it holds out: `folds` without their selections.
@@ -142,6 +146,11 @@ class KFold(Scheme):
     seed: int = 0
     strata: tuple[tuple[str, str], ...] = ()
 
+    @property
+    def dealt_by(self) -> tuple[tuple[str, str], ...]:
+        """The strata."""
+        return self.strata
+
     def _held_out(self, labels: list[str]) -> list[tuple[str, tuple[str, ...]]]:
         if self.k < 2:
             raise InputError("too few folds", expected="k >= 2", got=str(self.k))
@@ -168,6 +177,11 @@ class Given(Scheme):
     """
 
     fold_of: tuple[tuple[str, str], ...]
+
+    @property
+    def dealt_by(self) -> tuple[tuple[str, str], ...]:
+        """The folds themselves."""
+        return self.fold_of
 
     def _held_out(self, labels: list[str]) -> list[tuple[str, tuple[str, ...]]]:
         of = dict(self.fold_of)

@@ -94,7 +94,7 @@ def open_image(path: str | Path) -> Any:
         # Not mapped into memory: for whole volumes, page by page takes longer than reading.
         image = nib.load(path, mmap=False)
     except (ImageFileError, HeaderDataError, EOFError, zlib.error, OSError, ValueError) as error:
-        raise _unreadable(path, error) from error
+        raise unreadable(path, error) from error
     if not isinstance(image, nib.Nifti1Image | nib.Nifti1Pair | nib.Nifti2Image):
         raise InputError(
             "not a NIfTI image",
@@ -183,7 +183,7 @@ def read_map(path: str | Path, volume: int | None = None) -> tuple[Floats, Geome
         data = _whole(image.dataobj) if total == 1 else np.asarray(image.dataobj[:, :, :, volume])
         data = data.reshape(geometry.shape)
     except (EOFError, zlib.error, OSError, ValueError, MemoryError) as error:
-        raise _unreadable(Path(path), error) from error
+        raise unreadable(Path(path), error) from error
     return data.astype(_read_as(image), copy=False), geometry
 
 
@@ -239,8 +239,16 @@ def _read_as(image: Any) -> type[np.float32 | np.float64]:
     return np.float64 if image.get_data_dtype() == np.float64 else np.float32
 
 
-def _unreadable(path: Path, error: Exception) -> InputError:
+def unreadable(path: Path, error: Exception) -> InputError:
+    """What to raise when a file cannot be read as an image."""
     kind = "unreadable image"
+    if path.exists() and not os.access(path, os.R_OK):
+        return InputError(
+            kind,
+            where=str(path),
+            got="no permission to read it",
+            remedy="change its permissions, or have its owner change them",
+        )
     if isinstance(error, EOFError | zlib.error) or "Expected" in str(error):
         kind = "damaged or truncated file"
     reason = " ".join(str(error).split()) or type(error).__name__
@@ -342,7 +350,7 @@ def read_labels(path: str | Path) -> tuple[npt.NDArray[np.integer], Geometry]:
     try:
         data = np.asarray(image.dataobj).reshape(geometry.shape)
     except (EOFError, zlib.error, OSError, ValueError) as error:
-        raise _unreadable(Path(path), error) from error
+        raise unreadable(Path(path), error) from error
     if data.dtype.kind in "iu" and data.dtype.itemsize <= 4:
         return data, geometry
     whole = np.zeros(data.shape, bool)

@@ -101,11 +101,11 @@ class Grid:
         """A volume holding one value per feature, zero elsewhere."""
         # x fastest, as files hold it, so that writing it needs no turning.
         volume = np.zeros(self.shape, values.dtype, order="F")
-        volume.ravel(order="K")[self._places] = values
+        volume.ravel(order="K")[self.places] = values
         return volume
 
     @cached_property
-    def _places(self) -> Ints:
+    def places(self) -> Ints:
         """(n_features,) where the features lie when x is fastest."""
         where = np.unravel_index(self.voxels, self.shape)
         return np.ravel_multi_index(where, self.shape, order="F")

@@ -15,9 +15,9 @@ from click.testing import CliRunner
 from hypothesis import given
 from hypothesis import strategies as st
 from hypothesis.extra import numpy as hnp
+from planting import a_grid
 from sequester.nodes.errors import InputError
 from sequester.nodes.images import (
-    Geometry,
     check_same_grid,
     n_volumes,
     open_image,
@@ -37,7 +37,7 @@ SHAPE = (4, 5, 3)
 
 
 def geometry(affine=AFFINE, shape=SHAPE):
-    return Geometry(shape, tuple(tuple(float(x) for x in row) for row in affine))
+    return a_grid(shape, affine)
 
 
 def values(*shape, dtype=np.float32):
@@ -465,3 +465,12 @@ def test_other_reader_accepts_every_file_of_a_run(tmp_path, checker):
     assert checker([*written, *inner]) == {*written, *inner}
     for path in written:
         assert gzip.decompress(path.read_bytes())[344:348] == b"n+1\0"
+
+
+def test_a_map_that_may_not_be_read_says_so(tmp_path, monkeypatch):
+    """It is no fault of the file's content, whatever the library makes of it."""
+    path = tmp_path / "map.nii"
+    path.write_bytes(b"")
+    monkeypatch.setattr(os, "access", lambda path, how: False)
+    with pytest.raises(InputError, match="no permission to read it; change its permissions"):
+        open_image(path)

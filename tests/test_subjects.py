@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import warnings
 from pathlib import Path
-from types import SimpleNamespace
 
 import nibabel as nib
 import numpy as np
@@ -13,6 +12,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 from hypothesis.extra import numpy as hnp
 from nipype.interfaces.base import isdefined
+from planting import a_grid
 from sequester.nodes.errors import InputError
 from sequester.nodes.groupmaps import Missing
 from sequester.nodes.images import Geometry, read_map, write_map
@@ -23,8 +23,7 @@ with warnings.catch_warnings():
     warnings.simplefilter("ignore")
     from statsmodels.stats.meta_analysis import combine_effects
 
-GRID = Geometry((4, 5, 3), tuple(map(tuple, np.diag([3.0, 3.0, 3.0, 1.0]).tolist())))
-FINER = Geometry((5, 5, 3), tuple(map(tuple, np.diag([2.0, 2.0, 2.0, 1.0]).tolist())))
+GRID, FINER = a_grid((4, 5, 3)), a_grid((5, 5, 3), 2.0)
 
 
 pytestmark = pytest.mark.usefixtures("quiet_engine")
@@ -250,9 +249,8 @@ def test_map_given_before_is_found_wherever_it_stands(tmp_path: Path, monkeypatc
         assert f"the same map under two names ({again}): got identical to {one}" in str(told.value)
     # One first visit may be taken from several rows, under its one name.
     made(tmp_path, in_files=[one, two], labels=["a", "a"], minus_files=[three, three])
-    # A checksum is no proof: with one that is always the same, other maps still pass.
-    same = SimpleNamespace(crc32=lambda data: 7)
-    monkeypatch.setattr("sequester.nodes.interfaces.images.zlib", same)
+    # A sum is no proof: with one that is always the same, other maps still pass.
+    monkeypatch.setattr("sequester.nodes.interfaces.images._sum", lambda bits: 7)
     made(tmp_path, in_files=[one, two, three], labels=["a", "b", "c"])
     with pytest.raises(InputError, match="the same map under two names"):
         made(tmp_path, in_files=[one, two, again], labels=["a", "b", "c"])
