@@ -71,15 +71,15 @@ class Controlled:
             held = "expected share of false voxels"
         return f"{held} at most {self.level:g}"
 
-    def height(self, tail: str) -> str:
-        """A threshold on t, in words."""
+    def height(self, tail: str, t: str = "t") -> str:
+        """A threshold on t, in words; `t` may say what it is over."""
         by = {
             BONFERRONI: "Bonferroni's",
             BENJAMINI_HOCHBERG: "Benjamini and Hochberg's",
             MAX_T: f"the largest-t (up to {self.n_flips} sign flips)",
             RANDOM_FIELD: "the random-field",
         }[self.control]
-        side = "t below minus" if tail == "negative" else "t above"
+        side = f"{t} below minus" if tail == "negative" else f"{t} above"
         return f"{side} {by} threshold, {self.error}"
 
     def extent(self) -> str:
@@ -124,18 +124,21 @@ def critical_t(p: Floats, rows: Floats) -> Floats:
     return found
 
 
-def step_up(t: Floats, rows: Floats, n_tests: Ints, q: float) -> Floats:
+def step_up(t: Floats, rows: Floats, n_tests: Ints, q: float, most: Ints | None = None) -> Floats:
     """The p that each map's features must be below for a false discovery rate of q.
 
     Parameters
     ----------
     t : (n_maps, n_features) float
-        Of all features with p < q; of others it does not matter, NaN and -inf included.
+        Of all features with p < q (q most / n_tests); of others it does not matter, NaN and -inf
+        included.
     rows : (n_maps, n_features or 1) float
         One more than the degrees of freedom.
     n_tests : (n_maps,) int
         Features tested.
     q : float
+    most : (n_maps,) int, optional
+        What the number found is known not to be above; else the features tested.
 
     Returns
     -------
@@ -151,7 +154,7 @@ def step_up(t: Floats, rows: Floats, n_tests: Ints, q: float) -> Floats:
     >>> step_up(t, np.full((1, 1), 20.0), np.array([3]), 0.05).round(4).tolist()
     [0.0333]
     """
-    n_found = n_tests
+    n_found = n_tests if most is None else most
     while True:
         # The largest k with k features below q k / m: from above, no k is passed over.
         p: Floats = q * n_found / np.maximum(n_tests, 1)

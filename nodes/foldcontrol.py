@@ -16,14 +16,14 @@ Nothing of the rows a fold holds out enters its threshold.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from functools import lru_cache
 
 import numpy as np
 import numpy.typing as npt
 from scipy import special
 
-from .choosing import FoldMaps, Narrowing
+from .choosing import FoldMaps, Narrowing, passed
 from .controlled import (
     BENJAMINI_HOCHBERG,
     BONFERRONI,
@@ -38,6 +38,7 @@ from .errors import InputError
 from .familywise import FlipPlan
 from .foldsmooth import FoldSmoothness
 from .foldstack import FoldStack
+from .leading import in_any
 from .masks import Cluster, MaskRule, Neighbourhood, Threshold, components
 from .randomfield import (
     ClusterSizes,
@@ -48,6 +49,7 @@ from .randomfield import (
     least_corrected_p,
     resels,
 )
+from .signed import SignedMaps
 from .space import Grid, Space
 
 Floats = npt.NDArray[np.floating]
@@ -62,6 +64,11 @@ _TIE = 1e-9
 _SIZES = 1024
 # In place of an infinite t; no height is near it.
 _HIGHEST = 1e6
+# Levels at which it is counted what may be above them, each half of the one before; and at how
+# many of these at all features.
+_RUNGS, _COUNTED = 16, 7
+# A floor is lower by as much than what thresholds may be, and each time that it was too high.
+_LOWER, _TRIES = 0.9, 6
 
 
 def controls_of(rule: MaskRule) -> tuple[Controlled | None, Controlled | None]:
@@ -121,7 +128,8 @@ def controlled_maps(
             return maps, None
         assert isinstance(rule, Cluster)
         if extent.control == MAX_CLUSTER:
-            return maps, _FlippedExtent(_largest_clusters(maps, rule, extent, labels, space))
+            sizes = _largest_clusters(maps, rule, extent, labels, space)
+            return maps, _FlippedExtent(maps, sizes)
         return maps, _FieldExtent(rule, extent, maps, _voxels(space))
     level = height.level
     if height.control == MAX_T:
@@ -133,7 +141,10 @@ def controlled_maps(
         return made(lambda n: critical_t(single, n)), None
     maps = made(Threshold(p=level).critical)
     if height.control == BENJAMINI_HOCHBERG:
+        if isinstance(maps, SignedMaps):
+            return maps, _ScreenedStepUp(maps, n_tests, level)
         return maps, _StepUp(maps, n_tests, level, n_parameters)
+    assert isinstance(maps, SignedMaps)  # `check_with_model` has seen to it
     return maps, _FieldHeight(maps, n_tests, level, _voxels(space))
 
 
@@ -172,9 +183,10 @@ def _largest_t(maps: FoldMaps, control: Controlled, labels: Sequence[str]) -> Fl
 
     def extremes(signs: Floats) -> list[Floats]:
         found: list[Floats] = []
-        for row, some in zip(signs, maps.may_lead(signs, 1, "t"), strict=True):
-            t = maps.maps(row, some, "t")
-            found.append(np.where(np.isnan(t), -np.inf, t).max(axis=1))
+        one = [1] * len(maps.stack.folds)
+        for row, (some, members) in zip(signs, maps.leaders(signs, one, "t"), strict=True):
+            t = np.where(members.T, maps.maps(row, some, "t"), -np.inf)
+            found.append(t.max(axis=1, initial=-np.inf))
         return found
 
     heights = _over_flips(maps.stack, control, labels, extremes)
@@ -192,13 +204,10 @@ def _largest_clusters(
 
     def extremes(signs: Floats) -> list[Floats]:
         found: list[Floats] = []
-        for row, some in zip(signs, maps.may_pass(signs), strict=True):
-            above = maps.above(row, some)
-            few = above.any(axis=1)
-            members = np.ascontiguousarray(above[few])
+        for some, members in passed(maps, signs):
             largest = np.zeros(members.shape[1])
             if len(members):
-                _, of_map, cluster = components(members, hood.pairs(some[few]))
+                _, of_map, cluster = components(members, hood.pairs(some))
                 np.maximum.at(largest, of_map, np.bincount(cluster)[cluster])
             found.append(largest)
         return found
@@ -209,8 +218,12 @@ def _largest_clusters(
 class _FlippedExtent:
     """Clusters of at least a size by flips, which no exchange changes."""
 
-    def __init__(self, sizes: Floats) -> None:
-        self._sizes = sizes
+    def __init__(self, maps: FoldMaps, sizes: Floats) -> None:
+        self._maps, self._sizes = maps, sizes
+
+    def each(self, weights: Floats) -> Iterator[tuple[Ints, Bools]]:
+        """See `Narrowing`."""
+        return passed(self._maps, weights)
 
     def passing(self, weights: Floats, features: Ints, above: Bools) -> Bools:
         """See `Narrowing`."""
@@ -231,16 +244,101 @@ class _StepUp:
         self._maps, self._n_tests, self._level = maps, n_tests, level
         self._off = n_parameters - 1
 
+    def each(self, weights: Floats) -> Iterator[tuple[Ints, Bools]]:
+        """See `Narrowing`."""
+        for row, (features, above) in zip(weights, passed(self._maps, weights), strict=True):
+            yield in_any(features, self.passing(row, features, above))
+
     def passing(self, weights: Floats, features: Ints, above: Bools) -> Bools:
         """See `Narrowing`."""
         t = np.where(above.T, self._maps.maps(weights, features, "t"), -np.inf)
+        return self._above(t, features, self._n_tests)
+
+    def _above(self, t: Floats, features: Ints, most: Ints) -> Bools:
+        """(n_some_features, n_folds) what passes, when no fold finds more than so many."""
         rows = self._maps.stack.rows(features) - self._off
-        p = step_up(t, rows, self._n_tests, self._level)
+        p = step_up(t, rows, self._n_tests, self._level, most)
         return np.ascontiguousarray((t > critical_t(p, rows)).T)
 
     def least_sizes(self, weights: Floats, largest: Ints) -> Floats:
         """See `Narrowing`."""
         return np.zeros(len(largest))
+
+
+class _ScreenedStepUp(_StepUp):
+    """The same for signed maps, without looking at all that the uncorrected level lets through.
+
+    With k features found of m the threshold is p = q k / m, and k of them are below it: so k is
+    not above the number below any p that is not below this one. From p = q on, where k could be
+    m, every such number bounds the next p. What may be below in any fold is counted first, and
+    then, at the few features left, what may be in each.
+    """
+
+    def __init__(self, maps: SignedMaps, n_tests: Ints, level: float) -> None:
+        super().__init__(maps, n_tests, level, 1)
+        self._signed = maps
+        self._ladder = level * 0.5 ** np.arange(_RUNGS)
+        rows = np.array([[len(fold.selection)] for fold in maps.stack.folds], dtype=float)
+        critical = [critical_t(np.full(len(rows), p), rows)[:, 0] for p in self._ladder]
+        # (n_rungs, n_folds), a little lower than the rungs.
+        self._heights = np.array(critical) * (1 - _TIE)
+
+    def each(self, weights: Floats) -> Iterator[tuple[Ints, Bools]]:
+        """See `Narrowing`."""
+        counts = self._signed.how_many(weights, self._heights[:_COUNTED])
+        fewest = np.full(1, max(1, int(self._n_tests.min())))
+        rungs = [int(self._rungs(most[:, None], fewest)[0]) for most in counts]
+        may: dict[int, Ints] = {}
+        for rung in sorted(set(rungs) - {_RUNGS}):
+            some = [i for i, one in enumerate(rungs) if one == rung]
+            found = self._signed.may_reach(weights[some], self._heights[rung])
+            may.update(zip(some, found, strict=True))
+        nothing: Ints = np.empty(0, np.intp)
+        for i, row in enumerate(weights):
+            yield self._found(row, may.get(i, nothing), rungs[i])
+
+    def _found(self, weights: Floats, features: Ints, rung: int) -> tuple[Ints, Bools]:
+        """What passes, of features with all that are above a rung in some fold."""
+        if len(features):
+            u, limits = self._signed.comparable(weights, features, self._heights)
+            counts = np.zeros((_RUNGS, len(u)))
+            for step in range(rung, _RUNGS):
+                counts[step] = np.count_nonzero(u > limits[step, :, None], axis=1)
+                if not counts[step].any():
+                    break
+            rungs = self._rungs(counts, np.maximum(self._n_tests, 1), rung)
+            # Past all rungs nothing is found.
+            limit = np.append(limits, np.full_like(limits[:1], np.inf), axis=0)
+            limit = limit[rungs, np.arange(len(rungs))]
+            features = features[(u > limit[:, None]).any(axis=0)]
+        if not len(features):
+            return features, np.zeros((0, len(self._n_tests)), bool)
+        t = self._signed.maps(weights, features, "t")
+        t[np.isnan(t)] = -np.inf
+        p = np.append(self._ladder, 0)[rungs]
+        most = np.minimum(self._n_tests, p * self._n_tests / self._level * (1 + _TIE))
+        return in_any(features, self._above(t, features, most.astype(np.intp)))
+
+    def _rungs(self, counts: Floats, n_tests: Ints, rung: int = 0) -> Ints:
+        """(n_folds,) the last rung that the threshold is not above; past all if nothing is found.
+
+        Parameters
+        ----------
+        counts : (n_rungs, n_folds) float
+            What the number below the first rungs is not above.
+        n_tests : (n_folds,) int
+        rung : int
+            That is known.
+        """
+        found = np.full(len(n_tests), rung)
+        while True:
+            most = counts[np.minimum(found, len(counts) - 1), np.arange(len(found))]
+            p = self._level * most / n_tests * (1 + _TIE)
+            further = (self._ladder[:, None] >= p).sum(axis=0) - 1
+            further = np.where(most == 0, _RUNGS, np.maximum(found, further))
+            if (further == found).all():
+                return found
+            found = further
 
 
 def _voxels(space: Space) -> Grid:
@@ -256,8 +354,9 @@ def _voxels(space: Space) -> Grid:
 class _FieldHeight:
     """The random field's threshold on t (Worsley et al. 1996, HBM 4:58-73)."""
 
-    def __init__(self, maps: FoldMaps, n_tests: Ints, level: float, space: Grid) -> None:
+    def __init__(self, maps: SignedMaps, n_tests: Ints, level: float, space: Grid) -> None:
         self._maps, self._n_tests, self._level = maps, n_tests, level
+        self._floor = 0.0
         stack = maps.stack
         self._smoothness = FoldSmoothness(stack, space)
         self._df = self._smoothness.rows - 1
@@ -270,25 +369,85 @@ class _FieldHeight:
         for k, of_fold in enumerate(zip(self._cells, self._df.tolist(), strict=True)):
             self._alike.setdefault(of_fold, []).append(k)
 
+    def each(self, weights: Floats) -> Iterator[tuple[Ints, Bools]]:
+        """See `Narrowing`.
+
+        Features are looked at above a floor that no threshold is likely to be below. Where one is,
+        the exchange is looked at again with a lower floor, and at last without.
+        """
+        self._maps.stack.turn()
+        found: dict[int, tuple[Ints, Bools]] = {}
+        left = list(range(len(weights)))
+        floor = self._floor or _LOWER * self._least_height(weights[0])
+        for _ in range(_TRIES):
+            if not left or not floor < np.inf:
+                break
+            heights = np.full(len(self._df), floor)
+            may = self._maps.may_reach(weights[left], heights)
+            for i, features in zip(left, may, strict=True):
+                t = self._maps.maps(weights[i], features, "t")
+                above = self._above(weights[i], features, t, floor)
+                if above is not None:
+                    found[i] = in_any(features, above)
+            left = [i for i in left if i not in found]
+            self._floor, floor = floor, _LOWER * floor
+        rest = passed(self._maps, weights[left]) if left else []
+        for i, (features, above) in zip(left, rest, strict=True):
+            found[i] = in_any(features, self.passing(weights[i], features, above))
+        return (found[i] for i in range(len(weights)))
+
     def passing(self, weights: Floats, features: Ints, above: Bools) -> Bools:
         """See `Narrowing`."""
         if not len(features):
             return above
         t = np.where(above.T, self._maps.maps(weights, features, "t"), -np.inf)
-        peaks = np.minimum(t.max(axis=1), _HIGHEST)
+        passing = self._above(weights, features, t, 0.0)
+        assert passing is not None
+        return passing
+
+    def _above(self, weights: Floats, features: Ints, t: Floats, floor: float) -> Bools | None:
+        """(n_some_features, n_folds) what passes, of all features whose t is above the floor.
+
+        None when the floor is not below every fold's threshold.
+        """
+        t = np.where(np.isnan(t), -np.inf, t)
+        peaks = np.clip(t.max(axis=1, initial=floor), floor, _HIGHEST)
         p = np.zeros(len(peaks))
-        some = np.flatnonzero(self._may_be_likely(weights, peaks) & above.any(axis=0))
+        likely = self._may_be_likely(weights, peaks)
+        if floor and (likely & ~(t > floor).any(axis=1)).any():
+            return None
+        rows = self._maps.stack.rows(features)
+        # Bonferroni's height is the most that a height can be. Where none of what is below it can
+        # be likely, it serves as well, and the smoothness is not needed.
+        highest = self._level / np.maximum(self._n_tests, 1)
+        below = np.where(t > critical_t(highest * (1 - _TIE), rows), floor, t)
+        below = np.clip(below.max(axis=1, initial=floor), floor, _HIGHEST)
+        unsure = self._may_be_likely(weights, below)
+        p[likely & ~unsure] = highest[likely & ~unsure]
+        some = np.flatnonzero(likely & unsure & (t > floor).any(axis=1))
         fwhm = self._smoothness.fwhm(weights, some) if len(some) else np.empty((0, 3))
         for k, widths in zip(some.tolist(), fwhm, strict=True):
             df, n = int(self._df[k]), int(self._n_tests[k])
             region = resels(self._cells[k], widths)
             # A peak that is too likely is below the height, which takes longer to find.
             if corrected_p(peaks[k], region, df, n) <= self._level * (1 + _TIE):
-                p[k] = special.stdtr(df, -height_threshold(region, df, self._level, n))
+                height = height_threshold(region, df, self._level, n)
+                if height <= floor:
+                    return None
+                p[k] = special.stdtr(df, -height)
         if not p.any():
-            return np.zeros_like(above)
+            return np.zeros(t.T.shape, bool)
         # As a p, for features where some rows lack data.
-        return np.ascontiguousarray((t > critical_t(p, self._maps.stack.rows(features))).T)
+        return np.ascontiguousarray((t > critical_t(p, rows)).T)
+
+    def _least_height(self, weights: Floats) -> float:
+        """What the threshold is not below in any fold, under one exchange."""
+        widths = self._smoothness.most(weights)
+        return min(
+            height_threshold(resels(cells, widths[k]), df, self._level, int(self._n_tests[k]))
+            for (cells, df), folds in self._alike.items()
+            for k in folds
+        )
 
     def _may_be_likely(self, weights: Floats, peaks: Floats) -> Bools:
         """(n_folds,) whether a peak may reach the level: with the least resels there can be."""
@@ -315,9 +474,9 @@ class _FieldExtent:
         self._maps, self._level = maps, control.level
         self._smoothness = FoldSmoothness(stack, space)
         n_tests = np.zeros(len(stack.folds), dtype=np.intp)
-        for block in stack.pieces():
+        for block in stack.batches():
             tested = stack.rows(block) >= stack.least()
-            shape = len(tested), block.stop - block.start
+            shape = len(tested), len(stack.numbers(block))
             n_tests += np.count_nonzero(np.broadcast_to(tested, shape), axis=1)
         self._n_tests = n_tests
         if not any(len(one) for one, _ in self._smoothness.pairs):
@@ -326,6 +485,10 @@ class _FieldExtent:
         self._different = np.unique(self._df).tolist()
         self._t = np.broadcast_to(rule.critical(self._df + 1), self._df.shape)
         self._kept = lru_cache(_SIZES)(self._critical)
+
+    def each(self, weights: Floats) -> Iterator[tuple[Ints, Bools]]:
+        """See `Narrowing`."""
+        return passed(self._maps, weights)
 
     def passing(self, weights: Floats, features: Ints, above: Bools) -> Bools:
         """See `Narrowing`."""

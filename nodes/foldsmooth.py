@@ -35,7 +35,8 @@ import numpy.typing as npt
 from .errors import InputError
 from .foldstack import FoldStack
 from .groupmaps import without_each
-from .smoothness import axis_pairs, fwhm_from_sums, fwhm_of_roughness, pair_products
+from .products import gram
+from .smoothness import axis_pairs, fwhm_of_roughness, pair_products
 from .space import Grid
 
 Floats = npt.NDArray[np.floating]
@@ -48,6 +49,8 @@ _LEAST_ROWS = 5
 _KEPT = 2**24
 # Rounding of a sum, generously.
 _ROUNDED = 1e-9
+# A sum of squares below this share of the whole is rounding.
+_FLAT = 64 * np.finfo(float).eps
 # In place of infinity, for a bound that says nothing.
 _ENDLESS = 1e30
 
@@ -61,15 +64,12 @@ class _Forms:
     plain : (n_folds, 4, n_rows, n_rows) float64
         Of the differences of neighbours along each axis, for E, whose diagonals sum to C; then of
         the features themselves, for G.
-    weighted : (n_folds, 3, n_rows, n_rows) float64
-        Of the features times h f, for H.
     total : (n_folds, 3) float64
         C.
     n_pairs : (n_folds, 3) int
     """
 
     plain: Floats
-    weighted: Floats
     total: Floats
     n_pairs: Ints
 
@@ -119,18 +119,34 @@ class FoldSmoothness:
             complete = stack.rows(block) == self.rows[:, None]
             self._squares[:, block] = np.where(complete, stack.squares(block), 0)
         self._made: _Forms | None = None
+        self._weighted: Floats | None = None
 
     def fwhm(self, weights: Floats, folds: Ints) -> Floats:
         """(n_some_folds, 3), in voxels."""
         sums = np.empty((len(folds), self.stack.n_features))
         for block in self.stack.pieces():
             sums[:, block] = self.stack.sums(weights, block)[folds]
-        widths = np.empty((len(folds), 3))
-        for i, k in enumerate(folds.tolist()):
-            products = [along[k] for along in self._products]
-            n = int(self.rows[k])
-            widths[i] = fwhm_from_sums(n, sums[i], self._squares[k], products, self.pairs)
-        return widths
+        return np.array(
+            [self._fwhm(k, of_fold) for k, of_fold in zip(folds.tolist(), sums, strict=True)]
+        ).reshape(-1, 3)
+
+    def _fwhm(self, k: int, S: Floats) -> Floats:
+        """(3,) as `smoothness.fwhm_from_sums` has it, with fewer passes over the features."""
+        n, Q = int(self.rows[k]), self._squares[k]
+        with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
+            spread = Q - S * S / n
+            weight = 1 / np.sqrt(np.where(spread > _FLAT * Q, spread, np.inf))
+        weight[~np.isfinite(weight)] = 0
+        a = S * weight / np.sqrt(n)
+        sums, n_pairs = np.empty(3), np.empty(3, np.intp)
+        for axis, (one, other) in enumerate(self.pairs):
+            both = weight[one] * weight[other]
+            n_pairs[axis] = np.count_nonzero(both)
+            # Not a product of BLAS, which may round otherwise on another number of threads.
+            alike = np.einsum("i,i", self._products[axis][k], both)
+            alike -= np.einsum("i,i", a[one], a[other])
+            sums[axis] = 2 * (n_pairs[axis] - alike)
+        return self._width(sums, n_pairs, n - 1)
 
     def most(self, weights: Floats) -> Floats:
         """(n_folds, 3) what no FWHM is above; infinite where there is no bound."""
@@ -141,71 +157,99 @@ class FoldSmoothness:
         E, G = found[:, :3], found[:, 3:]
         with np.errstate(invalid="ignore"):
             least = forms.total - E - np.sqrt(E * np.maximum(4 * G - E, 0))
-            return self._width(least - _ROUNDED * forms.total, forms.n_pairs)
+            least -= _ROUNDED * forms.total
+            return self._width(least, forms.n_pairs, self.rows[:, None] - 1)
 
     def least(self, weights: Floats) -> Floats:
         """(n_folds, 3) what no FWHM is below; 0 where there is no bound."""
         forms = self._forms()
         if forms is None:
             return np.zeros((len(self.rows), 3))
-        most = forms.total + self._form(forms.weighted, weights)
-        return self._width(most * (1 + _ROUNDED), forms.n_pairs)
+        if self._weighted is None:
+            self._weighted = self._weigh()
+        most = forms.total + self._form(self._weighted, weights)
+        return self._width(most * (1 + _ROUNDED), forms.n_pairs, self.rows[:, None] - 1)
 
     def _form(self, products: Floats, weights: Floats) -> Floats:
         """(n_folds, n_forms) weights' products weights / n."""
         form: Floats = ((products @ weights) @ weights) / self.rows[:, None]
         return form
 
-    def _width(self, sums: Floats, n_pairs: Ints) -> Floats:
+    @staticmethod
+    def _width(sums: Floats, n_pairs: Ints, nu: Ints | int) -> Floats:
         """The FWHM that goes with sums of d over pairs; NaN without pairs."""
-        nu = self.rows[:, None] - 1
         with np.errstate(invalid="ignore", divide="ignore"):
             return fwhm_of_roughness((nu - 2) / (nu - 1) * np.maximum(sums, 0) / n_pairs)
 
     def _forms(self) -> _Forms | None:
         """The forms, made when exchanges first ask; None when there is no room for them."""
         stack = self.stack
-        n_folds, square = len(self.rows), (stack.n_rows, stack.n_rows)
         if not stack.turned or 7 * len(self.rows) * stack.n_rows**2 > _KEPT:
             return None
         if self._made is None:
-            forms = _Forms(
-                np.zeros((n_folds, 4, *square)),
-                np.zeros((n_folds, 3, *square)),
-                np.zeros((n_folds, 3)),
-                np.zeros((n_folds, 3), np.intp),
-            )
-            for k, fold in enumerate(stack.folds):
-                rows = np.array(fold.selection)
-                self._add(forms, k, rows)
-            self._made = forms
+            self._made = self._formed()
         return self._made
 
-    def _add(self, forms: _Forms, k: int, rows: Ints) -> None:
-        """One fold's forms."""
-        stack, square = self.stack, np.ix_(rows, rows)
+    def _formed(self) -> _Forms:
+        """The forms: what is fetched serves all folds."""
+        stack, n_folds = self.stack, len(self.rows)
+        plain = np.zeros((n_folds, 4, stack.n_rows, stack.n_rows))
+        n_pairs = np.zeros((n_folds, 3), np.intp)
+        with np.errstate(over="ignore", invalid="ignore"):  # of held-out rows, which go
+            for axis, (one, other) in enumerate(self.pairs):
+                for start in range(0, len(one), stack.piece):
+                    some = slice(start, start + stack.piece)
+                    here, there = one[some], other[some]
+                    x, x_there = (stack.columns(at).astype(np.float64) for at in (here, there))
+                    for k in range(n_folds):
+                        by, by_there = self._by(k, here), self._by(k, there)
+                        both = (by > 0) & (by_there > 0)
+                        u = x * np.where(both, by, 0)
+                        u -= x_there * np.where(both, by_there, 0)
+                        plain[k, axis] += gram(u)
+                        n_pairs[k, axis] += np.count_nonzero(both)
+            for block in stack.pieces():
+                x = stack.columns(block).astype(np.float64)
+                for k in range(n_folds):
+                    u = x * self._by(k, block)
+                    plain[k, 3] += gram(u)
+        self._choose(plain)
+        return _Forms(plain, np.trace(plain[:, :3], axis1=2, axis2=3), n_pairs)
+
+    def _weigh(self) -> Floats:
+        """(n_folds, 3, n_rows, n_rows) products of the features times h f, for H."""
+        stack, n_folds = self.stack, len(self.rows)
+        weighted = np.zeros((n_folds, 3, stack.n_rows, stack.n_rows))
+        for k, fold in enumerate(stack.folds):
+            side = list(fold.selection)
+            half = np.zeros((3, stack.n_features))
+            for axis, (one, other) in enumerate(self.pairs):
+                by = self._by(k, one) * self._by(k, other)
+                # |u - u'|^2, half of it to either; never less than nothing.
+                c = np.where(by > 0, np.maximum(1 - self._products[axis][k] * by, 0), 0)
+                half[axis, one] += c + _ROUNDED
+                half[axis, other] += c + _ROUNDED
+            for block in stack.pieces():
+                with np.errstate(over="ignore", invalid="ignore"):  # of held-out rows, which go
+                    u = stack.columns(block) * self._by(k, block)
+                    left = 1 - np.square(np.abs(u[side]).sum(axis=0)) / len(side)
+                    # Rows that are all as large: nothing varies when their signs agree.
+                    by_left = half[:, block] / np.where(left > _ROUNDED, left, 1 / _ENDLESS)
+                    for axis in range(3):
+                        weighted[k, axis] += gram(u * by_left[axis], u)
+        self._choose(weighted)
+        return weighted
+
+    def _by(self, k: int, features: Ints | slice) -> Floats:
+        """By what effects are multiplied to be a fold's u; 0 where a feature counts for nothing."""
         with np.errstate(divide="ignore"):
-            by = 1 / np.sqrt(self._squares[k])
+            by: Floats = 1 / np.sqrt(self._squares[k, features])
         by[~np.isfinite(by)] = 0
-        half = np.zeros((3, stack.n_features))
-        for axis, (one, other) in enumerate(self.pairs):
-            both = np.flatnonzero((by[one] > 0) & (by[other] > 0))
-            forms.n_pairs[k, axis] = len(both)
-            for start in range(0, len(both), stack.piece):
-                some = both[start : start + stack.piece]
-                here, there = one[some], other[some]
-                u = stack.x[np.ix_(rows, here)] * by[here]
-                u -= stack.x[np.ix_(rows, there)] * by[there]
-                forms.plain[k, axis][square] += u @ u.T
-                c = np.square(u).sum(axis=0)
-                half[axis] += np.bincount(here, c / 2, stack.n_features)
-                half[axis] += np.bincount(there, c / 2, stack.n_features)
-            forms.total[k, axis] = np.trace(forms.plain[k, axis])
-        for block in stack.pieces():
-            u = stack.x[rows, block] * by[block]
-            forms.plain[k, 3][square] += u @ u.T
-            left = 1 - np.square(np.abs(u).sum(axis=0)) / len(rows)
-            # Rows that are all as large: nothing varies when their signs agree.
-            by_left = half[:, block] / np.where(left > _ROUNDED, left, 1 / _ENDLESS)
-            for axis in range(3):
-                forms.weighted[k, axis][square] += (u * by_left[axis]) @ u.T
+        return by
+
+    def _choose(self, products: Floats) -> None:
+        """Nothing of the rows that a fold holds out."""
+        for k, fold in enumerate(self.stack.folds):
+            held = list(fold.held_out)
+            products[k, :, held] = 0
+            products[k, :, :, held] = 0

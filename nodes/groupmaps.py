@@ -102,7 +102,7 @@ def fold_sums(stack: Floats | Bools, folds: Sequence[Fold], *, square: bool = Fa
     """
     with np.errstate(over="ignore"):  # an infinite square keeps its feature out of every mask
         x = np.square(stack, dtype=np.float64) if square else stack.astype(np.float64, copy=False)
-    if len(folds) == len(x) and all(f.held_out == (k,) for k, f in enumerate(folds)):
+    if len(folds) == len(x) and [f.held_out for f in folds] == [(k,) for k in range(len(x))]:
         return x
     out = np.zeros((len(folds), x.shape[1]))
     for k, fold in enumerate(folds):

@@ -30,8 +30,12 @@ Bools = npt.NDArray[np.bool_]
 
 PICKS = ("largest", "peak", "nearest", "all")
 MAP_KINDS = ("t", "mean")
+# Whose map a rule reads: a group's; one subject's other runs'; one subject's localizer's.
+GROUP, RUNS, LOCALIZER = CHOSEN_ON = ("group", "other runs", "localizer")
 # A nanometre of slack: an affine's rounding must not decide about voxels on a sphere's surface.
 _SURFACE_MM = 1e-6
+# Of so many members of maps it is worth seeing first which clusters may be picked.
+_MANY = 2**14
 
 
 class MaskRule(Protocol):
@@ -41,8 +45,11 @@ class MaskRule(Protocol):
     def map_kind(self) -> str:
         """Which group map it reads: "t" or "mean"."""
 
-    def describe(self, tail: str = "positive") -> str:
-        """The rule in words, for sentences about the result in a direction."""
+    def describe(self, tail: str = "positive", chosen_on: str = GROUP) -> str:
+        """The rule in words, for sentences about the result in a direction.
+
+        `chosen_on` says what the map is of that it reads: one of `CHOSEN_ON`.
+        """
 
 
 @dataclass(frozen=True)
@@ -96,13 +103,16 @@ class _Forming:
         out: Floats = heights[back].reshape(rows.shape)
         return out
 
-    def _threshold(self, tail: str) -> str:
+    def _threshold(self, tail: str, chosen_on: str) -> str:
         below = tail == "negative"
+        read = "t" if chosen_on == GROUP else _read("t", chosen_on)
+        read = f"a {read}" if chosen_on == LOCALIZER else read
         if self.control is not None:
-            return self.control.height(tail)
+            return self.control.height(tail, read)
         if self.height is not None:
-            return f"t < -{self.height:g}" if below else f"t > {self.height:g}"
-        return f"p < {self.p:g}" + (" for effects below zero" if below else "")
+            return f"{read} < -{self.height:g}" if below else f"{read} > {self.height:g}"
+        of = "" if chosen_on == GROUP else f" of {read}"
+        return f"p{of} < {self.p:g}" + (" for effects below zero" if below else "")
 
 
 @dataclass(frozen=True)
@@ -117,9 +127,9 @@ class Threshold(_Forming):
     all voxels with t above Bonferroni's threshold, chance of any false voxel at most 0.05
     """
 
-    def describe(self, tail: str = "positive") -> str:
+    def describe(self, tail: str = "positive", chosen_on: str = GROUP) -> str:
         """The rule in words."""
-        return f"all voxels with {self._threshold(tail)}"
+        return f"all voxels with {self._threshold(tail, chosen_on)}"
 
 
 @dataclass(frozen=True)
@@ -174,20 +184,20 @@ class Cluster(_Forming):
                     got=f"{self.control.control} and {self.extent.control}",
                 )
 
-    def describe(self, tail: str = "positive") -> str:
+    def describe(self, tail: str = "positive", chosen_on: str = GROUP) -> str:
         """The rule in words."""
         extreme = "lowest trough" if tail == "negative" else "highest peak"
         which = {
             "largest": "the largest cluster",
             "peak": f"the cluster with the {extreme}",
-            "nearest": f"the cluster nearest to {self.near} mm",
+            "nearest": f"the cluster nearest to {_point(self.near)} mm",
             "all": "every cluster",
         }[self.pick]
-        sizes = f"at least {self.min_size} voxels"
+        sizes = f"at least {self.min_size} voxel{'s' * (self.min_size > 1)}"
         if self.extent is not None:
             sizes += f", {self.extent.extent()}"
         return (
-            f"{which} of voxels with {self._threshold(tail)} "
+            f"{which} of voxels with {self._threshold(tail, chosen_on)} "
             f"(connectivity {self.connectivity}, {sizes})"
         )
 
@@ -234,10 +244,19 @@ class Strongest:
         # 7 % of 100 features are 7, though 0.07 x 100 is a little more in binary.
         return self.k or max(1, int(np.ceil(self.fraction * usable - 1e-9)))
 
-    def describe(self, tail: str = "positive") -> str:
-        """The rule in words."""
+    def describe(self, tail: str = "positive", chosen_on: str = GROUP) -> str:
+        """The rule in words.
+
+        Examples
+        --------
+        >>> Strongest(5).describe(), Strongest(5, "mean").describe(chosen_on="other runs")
+        ... # doctest: +NORMALIZE_WHITESPACE
+        ('the 5 voxels with the highest group t',
+         "the 5 voxels with the highest mean over the subject's other runs")
+        """
         many = f"{self.k} voxels" if self.k else f"{100 * self.fraction:g} % of the voxels"
-        return f"the {many} with the {_extreme(tail)} group {self.map_kind}"
+        many = "voxel" if self.k == 1 else many
+        return f"the {many} with the {_extreme(tail)} {_read(self.map_kind, chosen_on)}"
 
 
 @dataclass(frozen=True)
@@ -261,11 +280,11 @@ class PeakSphere:
             raise InputError("radius out of range", expected="> 0 mm", got=str(self.radius))
         _check_kind(self.map_kind)
 
-    def describe(self, tail: str = "positive") -> str:
+    def describe(self, tail: str = "positive", chosen_on: str = GROUP) -> str:
         """The rule in words."""
         return (
             f"the voxels within {self.radius:g} mm of the one with the {_extreme(tail)} "
-            f"group {self.map_kind}"
+            f"{_read(self.map_kind, chosen_on)}"
         )
 
 
@@ -279,6 +298,19 @@ def _check_control(of: str, control: Controlled, known: tuple[str, ...]) -> None
 def _check_kind(kind: str) -> None:
     if kind not in MAP_KINDS:
         raise InputError("unknown map", expected=" or ".join(MAP_KINDS), got=str(kind))
+
+
+def _read(kind: str, chosen_on: str) -> str:
+    """What a rule reads, in words: t or a mean, but of a localizer map whatever it holds."""
+    if chosen_on == GROUP:
+        return f"group {kind}"
+    if chosen_on == RUNS:
+        return f"{kind} over the subject's other runs"
+    return "value of the subject's own localizer map"
+
+
+def _point(mm: tuple[float, float, float] | None) -> str:
+    return "" if mm is None else f"({', '.join(f'{x:g}' for x in mm)})"
 
 
 def _extreme(tail: str) -> str:
@@ -397,7 +429,81 @@ def keep_clusters(
     """
     if not members.any():
         return members
-    candidate, of_map, cluster = components(members, hood.pairs(features))
+    merit: Floats | None = None
+    if rule.pick == "peak":
+        if t is None:
+            raise ValueError('pick = "peak" needs the t values')
+        merit = t
+    elif rule.pick == "nearest":
+        if distance is None:
+            raise ValueError('pick = "nearest" needs the distances')
+        merit = np.broadcast_to(-distance[features, None], members.shape)
+    pairs = hood.pairs(features)
+    if rule.pick == "all" or least is not None or np.count_nonzero(members) < _MANY:
+        return _kept(members, pairs, rule, merit, least)
+    some = _contenders(members, pairs, rule, merit)
+    few = np.flatnonzero(some.any(axis=1))
+    out = np.zeros_like(members)
+    merit = None if merit is None else merit[few]
+    out[few] = _kept(some[few], hood.pairs(features[few]), rule, merit)
+    return out
+
+
+def _contenders(
+    members: Bools, pairs: tuple[Ints, Ints], rule: Cluster, merit: Floats | None
+) -> Bools:
+    """Members without most of those whose cluster is not the one that its map's rule picks.
+
+    The clusters of a map lie within clusters of all maps' members together, which are found at
+    once; what a map has in one of these is a bound on the sizes and merits of its clusters there.
+    Every cluster is kept as a whole or not at all.
+    """
+    n = len(members)
+    _, _, joint = components(np.ones((n, 1), bool), pairs)
+    order = np.argsort(joint, kind="stable")
+    starts = np.searchsorted(joint[order], np.arange(joint.max() + 1))
+    size = np.add.reduceat(members[order].astype(np.float32), starts, axis=0)
+    most = size
+    if merit is not None:
+        most = np.maximum.reduceat(np.where(members, merit, -np.inf)[order], starts, axis=0)
+    most = np.where(size >= rule.min_size, most, -np.inf)
+    # What the likeliest has is reached at least: where there may be more is looked at as well.
+    likeliest = most == most.max(axis=0)
+    likeliest &= np.cumsum(likeliest, axis=0) == 1
+    some = members & likeliest[joint]
+    few = np.flatnonzero(some.any(axis=1))
+    position = np.full(n, -1)
+    position[few] = np.arange(len(few))
+    one, other = (position[end] for end in pairs)
+    inside = (one >= 0) & (other >= 0)
+    found = some[few]
+    kept = _kept(found, (one[inside], other[inside]), rule, None if merit is None else merit[few])
+    if merit is None:
+        reached = kept.sum(axis=0)
+    else:
+        reached = np.where(kept, merit[few], -np.inf).max(axis=0, initial=-np.inf)
+    worth = (most >= reached) & (most > -np.inf)
+    contending: Bools = members & worth[joint]
+    return contending
+
+
+def _kept(
+    members: Bools,
+    pairs: tuple[Ints, Ints],
+    rule: Cluster,
+    merit: Floats | None,
+    least: Callable[[Ints], Floats] | None = None,
+) -> Bools:
+    """`keep_clusters`, given the neighbours and what decides: None for the size.
+
+    Parameters
+    ----------
+    merit : (n_candidates, n_maps) float
+        A cluster's is that of its best member.
+    """
+    if not members.any():
+        return members
+    candidate, of_map, cluster = components(members, pairs)
     size = np.bincount(cluster)
     n_clusters = len(size)
     owner = np.empty(n_clusters, dtype=np.intp)
@@ -410,22 +516,14 @@ def keep_clusters(
     if rule.pick == "all":
         kept = big
     else:
-        if rule.pick == "largest":
-            merit = size.astype(float)
-        elif rule.pick == "peak":
-            if t is None:
-                raise ValueError('pick = "peak" needs the t values')
-            merit = np.full(n_clusters, -np.inf)
-            np.maximum.at(merit, cluster, t[candidate, of_map])
-        else:
-            if distance is None:
-                raise ValueError('pick = "nearest" needs the distances')
-            merit = np.full(n_clusters, -np.inf)
-            np.maximum.at(merit, cluster, -distance[features[candidate]])
-        first = np.full(n_clusters, len(features))
+        best = size.astype(float)
+        if merit is not None:
+            best = np.full(n_clusters, -np.inf)
+            np.maximum.at(best, cluster, merit[candidate, of_map])
+        first = np.full(n_clusters, len(members))
         np.minimum.at(first, cluster, candidate)
         # Per map: the best merit, then the lowest feature number.
-        order = np.lexsort((first, -merit, ~big, owner))
+        order = np.lexsort((first, -best, ~big, owner))
         heads = order[np.unique(owner[order], return_index=True)[1]]
         kept = np.zeros(n_clusters, bool)
         kept[heads[big[heads]]] = True
@@ -433,6 +531,22 @@ def keep_clusters(
     chosen = kept[cluster]
     out[candidate[chosen], of_map[chosen]] = True
     return out
+
+
+def check_k(k: int, n_features: int) -> None:
+    """Refuse to call more features the strongest than are searched.
+
+    Raises
+    ------
+    InputError
+    """
+    if k > n_features:
+        raise InputError(
+            "k is larger than the search region",
+            expected=f"at most its {n_features} voxels",
+            got=str(k),
+            remedy="state a smaller k, or a larger search region",
+        )
 
 
 def strongest(values: Floats, k: int) -> Bools:
@@ -500,6 +614,7 @@ def choose(values: Floats, rule: MaskRule, space: Space, n: npt.ArrayLike | None
     [False, False, False, True, False]
     """
     if isinstance(rule, Strongest):
+        check_k(rule.k, len(values))
         return strongest(values, rule.number(int(np.count_nonzero(~np.isnan(values)))))
     if isinstance(rule, PeakSphere):
         around = np.zeros(len(values), bool)

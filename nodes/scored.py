@@ -29,7 +29,7 @@ A feature counts in a fold when every row of the selection side has data there.
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
 from functools import cached_property
 
@@ -37,7 +37,7 @@ import numpy as np
 import numpy.typing as npt
 
 from .foldstack import BLOCK, FoldStack, blocked_products, by_exchange
-from .signed import least_leader
+from .leading import leading, least_leader
 
 Floats = npt.NDArray[np.floating]
 Ints = npt.NDArray[np.integer]
@@ -112,11 +112,9 @@ class ScoredMaps:
     def counts(self, kind: str) -> Ints:
         """(n_folds,) features with a value in each fold's map: the same for both kinds."""
         found = np.zeros(len(self.stack.folds), dtype=np.intp)
-        for block in self.stack.pieces():
-            whole = self._whole(block)
-            found += np.count_nonzero(
-                np.broadcast_to(whole, (len(whole), block.stop - block.start)), axis=1
-            )
+        for block in self.stack.batches():
+            whole, n_features = self._whole(block), len(self.stack.numbers(block))
+            found += np.count_nonzero(np.broadcast_to(whole, (len(whole), n_features)), axis=1)
         return found
 
     def above(self, weights: Floats, features: Ints | slice) -> Bools:
@@ -130,8 +128,8 @@ class ScoredMaps:
     def maps(self, weights: Floats, features: Ints, kind: str) -> Floats:
         """(n_folds, n_some_features) t or slope; NaN where there is no value."""
         maps = np.empty((len(self._sides), len(features)))
-        for start in range(0, len(features), BLOCK):
-            some = features[start : start + BLOCK]
+        for at in self.stack.batches(features):
+            some = features[at]
             Sxy, Sxx, Sww = self._products(weights, some)
             with np.errstate(invalid="ignore", divide="ignore", over="ignore"):
                 if kind == "mean":
@@ -142,7 +140,7 @@ class ScoredMaps:
                     values = Sxy * np.sqrt((self._n - 2) / left)
                     values[Sxx == 0] = 0
             lost = (Sww == 0) | ~self._whole(some)
-            maps[:, start : start + BLOCK] = np.where(lost, np.nan, values)
+            maps[:, at] = np.where(lost, np.nan, values)
         return maps
 
     def _whole(self, features: Ints | slice) -> Bools:
@@ -193,7 +191,12 @@ class ScoredMaps:
             for features, score in zip(found, scores, strict=True)
         ]
 
-    def may_lead(self, weights: Floats, k: int, kind: str) -> list[Ints]:
+    def leaders(self, weights: Floats, k: Sequence[int], kind: str) -> Iterator[tuple[Ints, Bools]]:
+        """For each row of weights, the features in the first k (of each fold) of any fold."""
+        for row, some in zip(weights, self._may_lead(weights, max(k), kind), strict=True):
+            yield leading(self.maps(row, some, kind), some, k)
+
+    def _may_lead(self, weights: Floats, k: int, kind: str) -> list[Ints]:
         """For each row of weights, the features that may be among the k strongest of some fold."""
         n_features = self.stack.n_features
         everything: Ints = np.arange(n_features)

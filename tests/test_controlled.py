@@ -13,7 +13,7 @@ import itertools
 import numpy as np
 import pytest
 from scipy import ndimage, stats
-from sequester.nodes import foldcontrol, foldstack
+from sequester.nodes import foldcontrol, foldstack, products
 from sequester.nodes.controlled import Controlled, critical_of_map, step_up
 from sequester.nodes.errors import InputError
 from sequester.nodes.familywise import (
@@ -326,7 +326,8 @@ def test_neither_order_nor_blocks_nor_batches_change_a_bit(control, monkeypatch)
     monkeypatch.setattr(foldstack, "BLOCK", 17)
     monkeypatch.setattr(foldstack, "_SMALL_BLOCK", 11)
     monkeypatch.setattr(foldstack, "_BLOCK_NUMBERS", 20)
-    monkeypatch.setattr(foldstack, "_SCREEN_BLOCK", 19)
+    monkeypatch.setattr(products, "_LEAST", 19)
+    monkeypatch.setattr(products, "_MOST", 19)
     monkeypatch.setattr(foldcontrol, "_AT_ONCE", 7)
     assert procedure.prepare(x, people, GRID).flip_test(60, 3) == test
 
@@ -456,7 +457,7 @@ def test_an_empty_map_has_no_threshold_to_exceed():
             Cluster(pick="all", control=Controlled("benjamini-hochberg", 0.1)),
             "positive",
             "every cluster of voxels with t above Benjamini and Hochberg's threshold, expected "
-            "share of false voxels at most 0.1 (connectivity 18, at least 1 voxels)",
+            "share of false voxels at most 0.1 (connectivity 18, at least 1 voxel)",
         ),
     ],
 )

@@ -13,6 +13,7 @@ from hypothesis.extra import numpy as hnp
 from nibabel.affines import apply_affine, from_matvec
 from scipy import ndimage, stats
 from scipy.spatial.transform import Rotation
+from sequester.nodes import masks
 from sequester.nodes.errors import InputError
 from sequester.nodes.groupmaps import Missing
 from sequester.nodes.masks import (
@@ -114,6 +115,35 @@ def test_the_nearest_cluster_has_the_nearest_voxel(shape, connectivity, min_size
     assert volume_of(grid, choose(t, rule, grid)) == expected
 
 
+@pytest.mark.parametrize("pick", ["largest", "peak", "nearest"])
+def test_many_maps_at_once_pick_what_each_does_by_itself(pick, monkeypatch):
+    """Which clusters cannot be picked is seen in all maps together."""
+    monkeypatch.setattr(masks, "_MANY", 0)
+    grid, near = Grid((9, 8, 7), np.eye(4)), (4.0, 3.0, 3.0) if pick == "nearest" else None
+    hood, seen = Neighbourhood(grid, 18), 0
+    for seed in range(60):
+        rng = np.random.default_rng(seed)
+        alike = rng.normal(0, 1, (grid.n_features, 1))
+        # Coarse: ties are the rule.
+        t = np.round(2 * (alike + 0.5 * rng.normal(0, 1, (grid.n_features, 6))))
+        members = t > 3
+        features = np.flatnonzero(members.any(axis=1))
+        members, t = members[features], t[features]
+        rule = Cluster(height=3.0, min_size=1 + seed % 4, pick=pick, near=near)
+        distance = np.round(masks.distances(grid, near)) if near else None
+        kept = masks.keep_clusters(members, features, rule, hood, t, distance)
+        merits = {
+            "largest": [None] * 6,
+            "peak": [t[:, [k]] for k in range(6)],
+            "nearest": [None if distance is None else -distance[features, None]] * 6,
+        }[pick]
+        each = zip(np.split(members, 6, axis=1), merits, strict=True)
+        alone = [masks._kept(one, hood.pairs(features), rule, merit) for one, merit in each]
+        assert np.array_equal(kept, np.concatenate(alone, axis=1))
+        seen += kept.any(axis=0).sum()
+    assert seen > 100
+
+
 @pytest.mark.parametrize(("connectivity", "sizes"), [(6, [2, 2, 1]), (18, [3, 2]), (26, [5])])
 def test_five_voxels_by_hand(connectivity, sizes):
     # The worked example of check-values (from memory; its sizes follow from the definitions).
@@ -158,6 +188,8 @@ def test_masks_lie_in_their_search_region_and_what_is_outside_does_not_matter(
     n_voxels = int(np.prod(shape))
     search = rng.uniform(size=n_voxels) < 0.5
     search[rng.integers(n_voxels)] = True
+    if rule == Strongest(k=3):
+        rule = Strongest(k=min(3, int(search.sum())))
     grid = Grid(shape, np.eye(4), search)
     maps = rng.normal(0, 1, (5, n_voxels))
     procedure = Procedure(rule, tail=tail)
@@ -208,7 +240,25 @@ def test_the_strongest_are_the_highest_with_ties_to_the_lowest_feature(values, k
     expected = sorted(usable, key=lambda i: (-values[i], i))[:k]
     assert np.flatnonzero(strongest(values, k)).tolist() == sorted(expected)
     grid = Grid((len(values), 1, 1), np.eye(4))
-    assert (choose(values, Strongest(k), grid) == strongest(values, k)).all()
+    if k <= len(values):
+        assert (choose(values, Strongest(k), grid) == strongest(values, k)).all()
+
+
+@pytest.mark.parametrize(
+    "procedure",
+    [
+        Procedure(Strongest(7)),
+        Procedure(Threshold(height=2.0), on_empty="strongest", k=7),
+    ],
+)
+def test_more_voxels_than_are_searched_cannot_be_the_strongest(procedure):
+    """The words of the result would say 7, and it would have 6."""
+    rng, grid = np.random.default_rng(1), Grid((6, 1, 1), np.eye(4))
+    told = "k is larger than the search region: expected at most its 6 voxels, got 7"
+    with pytest.raises(InputError, match=told):
+        procedure.prepare(rng.normal(0, 1, (5, 6)), list("abcde"), grid)
+    with pytest.raises(InputError, match=told):
+        choose(rng.normal(0, 1, 6), Strongest(7), grid)
 
 
 @pytest.mark.parametrize("usable", [0, 1, 99, 100, 300, 250_000])
@@ -361,7 +411,7 @@ def test_rules_describe_themselves():
         "the largest cluster of voxels with p < 0.001 (connectivity 6, at least 4 voxels)"
     )
     assert (
-        "nearest to (1.0, 2.0, 3.0) mm"
+        "nearest to (1, 2, 3) mm"
         in Cluster(height=3.0, pick="nearest", near=(1.0, 2.0, 3.0)).describe()
     )
     assert Strongest(5).describe() == "the 5 voxels with the highest group t"

@@ -2,10 +2,11 @@
 
 import numpy as np
 import pytest
-from sequester.nodes import interfaces, procedure
+from planting import a_grid
+from sequester.nodes import foldstack, interfaces
 from sequester.nodes.folds import KFold, LeaveOneOut
 from sequester.nodes.groupmaps import Missing, group_map
-from sequester.nodes.images import Geometry, read_map, write_map
+from sequester.nodes.images import read_map, write_map
 from sequester.nodes.masks import Cluster, PeakSphere, Strongest, Threshold
 from sequester.nodes.models import Score
 from sequester.nodes.procedure import Procedure
@@ -34,7 +35,7 @@ def effects_of(seed=1, holes=False):
 @pytest.mark.parametrize("tail", ["positive", "negative"])
 @pytest.mark.parametrize("rule", RULES)
 def test_it_is_the_highest_of_a_plain_loop(rule, tail, scheme, holes, monkeypatch):
-    monkeypatch.setattr(procedure, "BLOCK", 3)
+    monkeypatch.setattr(foldstack, "BLOCK", 3)
     x, missing = effects_of(holes=holes), Missing(min_fraction=0.5)
     ready = Procedure(rule, scheme, tail, missing=missing).prepare(x, PEOPLE, GRID)
     masks, sign = ready.masks(), 1 if tail == "positive" else -1
@@ -76,7 +77,7 @@ def test_nothing_of_those_held_out_is_in_it():
 
 def test_nodes_give_it_in_mm(tmp_path):
     x = effects_of()
-    geometry = Geometry(GRID.shape, tuple(map(tuple, AFFINE.tolist())))
+    geometry = a_grid(GRID.shape, AFFINE)
     paths = [
         str(write_map(tmp_path / f"{i}.nii", row.reshape(GRID.shape).astype(np.float32), geometry))
         for i, row in enumerate(x)
