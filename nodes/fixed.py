@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -11,8 +12,8 @@ import numpy.typing as npt
 from .errors import InputError
 from .orthogonality import Certificate
 from .parcels import family_t, person_means
-from .results import RoiResult, distinct, estimate_texts, least, of_t, p_text
-from .roi import one_sample_t
+from .results import ALL, RoiResult, distinct, estimate_texts, least, of_t, p_text
+from .roi import one_sample_t, without_spread
 
 Floats = npt.NDArray[np.floating]
 
@@ -29,12 +30,27 @@ def fixed_region_result(
 ) -> RoiResult:
     """A region fixed without the tested data: the t-test and its interval are right.
 
+    Equal values have no test: nothing is known of how far they would vary.
+
+    Raises
+    ------
+    InputError
+        As `least`, for a map without data in the region.
+
     Examples
     --------
     >>> made = fixed_region_result([1.0, 2.0, 3.0], ("a", "given", "a"), [8], [1, 1, 1])
     >>> made.p_kind, round(made.p, 4)
     ("Student's t, two-sided", 0.0742)
     """
+    said: dict[str, Any] = {
+        "rule": "the region as given",
+        "target": "population mean in this region",
+        "mask_sizes": distinct(sizes),
+        "coverage": least(coverage, sizes),
+    }
+    if why := _why_untested(values, sizes):
+        return _untested(values, names, why, **said)
     test = one_sample_t(np.asarray(values))
     roi, _, search = names
     interval = test.interval
@@ -43,12 +59,9 @@ def fixed_region_result(
         test,
         names,
         len(values),
-        rule="the region as given",
-        target="population mean in this region",
         p_kind="Student's t, two-sided",
         null="the population mean in the region is zero",
-        mask_sizes=distinct(sizes),
-        coverage=least(coverage),
+        **said,
         sentence=(
             f"{roi}: mean {mean} in the a-priori region '{search}' (95 % interval "
             f"{low} to {high}), t({test.df}) = {test.t:.2f}, "
@@ -64,8 +77,13 @@ def own_mask_result(
     sizes: Sequence[int],
     coverage: Sequence[float],
     chosen_on: str = "other runs",
+    replaced: Sequence[str] = (),
+    empty: Sequence[str] = (),
 ) -> RoiResult:
     """A mask of each subject's own, chosen on other data of theirs: t across subjects, run level.
+
+    Where some masks are empty, their value counts as 0, and there is no standardised effect.
+    Where all are, or all values are equal, there is no test.
 
     Parameters
     ----------
@@ -74,6 +92,14 @@ def own_mask_result(
     names : (roi, plan, search region)
     sizes, coverage : sequence, one per mask
     chosen_on : {"other runs", "localizer", "other data"}
+    replaced, empty : sequence of str
+        Whose masks hold the strongest features, or nothing, because the rule found nothing; a
+        name for each mask.
+
+    Raises
+    ------
+    InputError
+        As `least`, for a map without data in its mask.
 
     Examples
     --------
@@ -81,33 +107,52 @@ def own_mask_result(
     >>> made.null
     'no subject has a replicable effect in the search region'
     """
+    n_empty = sum(size == 0 for size in sizes)
+    target = "mean over these subjects of the effect in their own masks"
+    said: dict[str, Any] = {
+        "rule": f"each subject's own mask, from their {chosen_on}",
+        "target": f"{target}, 0 in the empty ones" if n_empty else target,
+        "n_folds": len(sizes),
+        "n_empty": n_empty,
+        "empty": tuple(empty),
+        "replaced": tuple(replaced),
+        "mask_sizes": tuple(sizes),
+        "coverage": least(coverage, sizes),
+    }
+    notes = ""
+    if replaced:
+        notes += (
+            f" In {len(replaced)} of {len(sizes)} masks the rule found nothing; there the "
+            "strongest voxels stood in."
+        )
+    if why := _why_untested(values, sizes):
+        return _untested(values, names, why, notes, **said)
+    if n_empty:
+        notes += (
+            f" {n_empty} of {len(sizes)} masks are empty; their value counts as 0, so the mean is "
+            "not the size of an effect."
+        )
     test = one_sample_t(np.asarray(values))
     roi, plan, search = names
     interval = test.interval
     mean, low, high = estimate_texts(test.mean, interval.low, interval.high)
-    empty = sum(size == 0 for size in sizes)
-    note = f" {empty} of {len(sizes)} masks are empty; their value counts as 0." if empty else ""
-    return of_t(
+    made = of_t(
         test,
         names,
         len(values),
-        rule=f"each subject's own mask, from their {chosen_on}",
-        target="mean over these subjects of the effect in their own masks",
         p_kind="Student's t across subjects, two-sided",
         null="no subject has a replicable effect in the search region",
-        n_folds=len(sizes),
-        n_empty=empty,
-        mask_sizes=tuple(sizes),
-        coverage=least(coverage),
+        **said,
         sentence=(
             f"{roi}: mean {mean} in each subject's own mask in the search region '{search}', "
             f"chosen on their {_worded(chosen_on, plan)}95 % interval {low} to {high}), "
             f"t({test.df}) = {test.t:.2f}, {p_text(test.p)}, two-sided. Null: no subject has a "
             "replicable effect there (run level: what protects is that run noise is independent). "
             "It speaks of a population mean only if the effects that choose and those that are "
-            f"tested are uncorrelated across subjects.{note}"
+            f"tested are uncorrelated across subjects.{notes}"
         ),
     )
+    return replace(made, dz=None, g=None) if n_empty else made
 
 
 def group_mask_result(
@@ -118,6 +163,7 @@ def group_mask_result(
     *,
     these_subjects: bool = False,
     certificate: Certificate | None = None,
+    replaced: bool = False,
 ) -> RoiResult:
     """One mask chosen on a group map of other data, read in the tested subjects: Student's t.
 
@@ -131,6 +177,13 @@ def group_mask_result(
         about them only; otherwise it was chosen on other people.
     certificate : Certificate, optional
         Shows that the contrast which chose, on the same data, cannot bias the tested one.
+    replaced : bool
+        Whether the rule found nothing and the strongest features stood in.
+
+    Raises
+    ------
+    InputError
+        As `least`, for a map without data in the region.
 
     Examples
     --------
@@ -138,6 +191,19 @@ def group_mask_result(
     >>> group_mask_result([1.0, 2.0, 3.0], names, [8], [1], these_subjects=True).null
     'none of these subjects has an effect in the region'
     """
+    data = "other data" if certificate is None else "another contrast of the same data"
+    said: dict[str, Any] = {
+        "rule": f"one mask for all, from a group map of {data}",
+        "target": "mean of these subjects in this region"
+        if these_subjects
+        else "population mean in this region",
+        "mask_sizes": distinct(sizes),
+        "coverage": least(coverage, sizes),
+        "replaced": (ALL,) if replaced else (),
+    }
+    note = " The rule found nothing; the strongest voxels stood in." if replaced else ""
+    if why := _why_untested(values, sizes):
+        return _untested(values, names, why, note, **said)
     test = one_sample_t(np.asarray(values))
     roi, _, search = names
     interval = test.interval
@@ -147,9 +213,7 @@ def group_mask_result(
         if these_subjects
         else "the population mean in this region is zero"
     )
-    data = "other data"
     if certificate is not None:
-        data = "another contrast of the same data"
         claim = (
             f"Certified: {certificate.describe()}; taken for granted: "
             f"{', '.join(certificate.assumptions)}."
@@ -166,18 +230,13 @@ def group_mask_result(
         test,
         names,
         len(values),
-        rule=f"one mask for all, from a group map of {data}",
-        target="mean of these subjects in this region"
-        if these_subjects
-        else "population mean in this region",
         p_kind="Student's t, two-sided",
         null=null,
-        mask_sizes=distinct(sizes),
-        coverage=least(coverage),
+        **said,
         sentence=(
             f"{roi}: mean {mean} in one region for all, chosen in the search region '{search}' on "
             f"the group map of {data} (95 % interval {low} to {high}), t({test.df}) = "
-            f"{test.t:.2f}, {p_text(test.p)}, two-sided. Null: {null}. {claim}"
+            f"{test.t:.2f}, {p_text(test.p)}, two-sided. Null: {null}. {claim}{note}"
         ),
     )
 
@@ -271,7 +330,7 @@ def family_results(
             "rule": "the parcel as given" + (", in each subject's own label image" if own else ""),
             "target": "population mean in this parcel",
             "mask_sizes": distinct([row[j] for row in sizes]),
-            "coverage": least(coverage[counted[:, j], j].tolist()),
+            "coverage": min(coverage[counted[:, j], j].tolist(), default=None),
         }
         head = f"{roi}, parcel {name}"
         if one.test is None or one.p_holm is None:
@@ -316,6 +375,33 @@ def family_results(
         }
         records.append(head_of_record | result.as_dict())
     return records
+
+
+def _why_untested(values: Sequence[float], sizes: Sequence[int]) -> str:
+    """Why there is no t-test of values read in masks of these sizes; "" where there is one."""
+    if not any(sizes):
+        return "no region was found"
+    return "all values are equal" if without_spread(np.asarray(values, dtype=float)) else ""
+
+
+def _untested(
+    values: Sequence[float], names: tuple[str, str, str], why: str, note: str = "", **said: Any
+) -> RoiResult:
+    """What is left without a test: the mean of the values, if a region was read at all."""
+    roi, plan, search = names
+    found = any(said["mask_sizes"])
+    mean = float(np.mean(values)) if found else float("nan")
+    told = f"mean {mean:.3g}, no test" if found else "no value and no test"
+    return RoiResult(
+        roi=roi,
+        plan=plan,
+        search=search,
+        n_subjects=len(values),
+        estimate=mean,
+        biased=False,
+        sentence=f"{roi} in '{search}' ({plan}): {told}: {why} (n = {len(values)}).{note}",
+        **said,
+    )
 
 
 def _worded(chosen_on: str, plan: str) -> str:

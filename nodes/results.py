@@ -13,7 +13,11 @@ from typing import Any
 
 import numpy as np
 
+from .errors import InputError
 from .roi import Interval, TTest, small_sample_factor
+
+# The name of the one mask for all, where results name masks.
+ALL = "all"
 
 
 @dataclass(frozen=True)
@@ -26,7 +30,8 @@ class RoiResult:
         Its name, the plan, the mask rule and the search region in words.
     n_subjects : int
     estimate : float
-        In the units of the effect maps; `target` says what it estimates.
+        In the units of the effect maps; `target` says what it estimates. NaN where no region was
+        found that could be read.
     biased : bool
         Whether the region was chosen on the tested data: then interval, t, p and dz are None.
     interval : Interval or None
@@ -35,7 +40,8 @@ class RoiResult:
         How p was made; `null` names the hypothesis and `sided` the direction.
     n_folds, n_empty : int or None
     empty, replaced : tuple of str
-        Folds in which the rule found nothing: left at 0, or replaced as planned.
+        Folds, or subjects with a mask of their own, in which the rule found nothing: left at 0,
+        or replaced as planned.
     dice, noise_dice : float or None
         Mean Dice over pairs of fold masks, and what it is under flips (noise alone).
     mask_sizes : tuple of int
@@ -155,7 +161,8 @@ def exploratory_result(
         target="none: chosen and read on the same data, so inflated by selection",
         biased=True,
         mask_sizes=(size,),
-        coverage=least(coverage),
+        coverage=least(coverage, [size]),
+        replaced=(ALL,) if replaced else (),
         sentence=(
             f"{roi}: exploratory {said} on the data it is read from; "
             "no interval, no p-value and no error bar can be given."
@@ -189,9 +196,36 @@ def distinct(sizes: Sequence[int]) -> tuple[int, ...]:
     return (sizes[0],) if len(set(sizes)) == 1 else tuple(sizes)
 
 
-def least(coverage: Sequence[float]) -> float | None:
-    """The least coverage of a mask that holds something of its subject."""
-    return min((share for share in coverage if share > 0), default=None)
+def least(coverage: Sequence[float], sizes: Sequence[int]) -> float | None:
+    """The least share of a mask in which its map has data; empty masks do not count.
+
+    Parameters
+    ----------
+    coverage : sequence of float, one per map
+    sizes : sequence of int, one per map or one for all
+        Features in the mask.
+
+    Raises
+    ------
+    InputError
+        When a map has no data in a mask that holds something: what was read there is no value.
+
+    Examples
+    --------
+    >>> least([1.0, 0.5, 0.0], [8, 9, 0]), least([0.0], [0])
+    (0.5, None)
+    """
+    sizes_of = list(sizes) * (len(coverage) if len(sizes) == 1 else 1)
+    shares = [share for share, size in zip(coverage, sizes_of, strict=True) if size]
+    lacking = sum(share <= 0 for share in shares)
+    if lacking:
+        raise InputError(
+            "values of maps without data in their masks",
+            expected="some data in every mask that is not empty",
+            got=f"none in {lacking} of {len(coverage)}",
+            remedy="leave these maps out",
+        )
+    return min(shares, default=None)
 
 
 def finite(value: float) -> float | None:

@@ -90,7 +90,9 @@ def region_value(
         return 0.0, 0.0
     coverage = len(x) / len(values)
     if summary == "mean":
-        return float(x.sum()) / len(x), coverage
+        # One after the other, so that zeros between the features cannot change a bit: so a flip
+        # may read many regions at once (`procedure.row_means`).
+        return float(np.add.accumulate(x)[-1]) / len(x), coverage
     if summary == "median":
         return float(np.median(x)), coverage
     if summary == "component":
@@ -206,6 +208,17 @@ def studentised(values: Floats) -> float:
     if deviation <= 1e-13 * abs(mean):
         return 0.0 if mean == 0 else float(np.copysign(np.inf, mean))
     return mean / (deviation / float(np.sqrt(len(values))))
+
+
+def without_spread(values: Floats) -> bool:
+    """Whether several values are equal, or differ by rounding only: there is no t of them.
+
+    Examples
+    --------
+    >>> without_spread(np.array([0.1 + 0.2, 0.3])), without_spread(np.array([1.0, 2.0]))
+    (True, False)
+    """
+    return len(values) > 1 and bool(np.ptp(values) <= 1e-13 * abs(float(values.mean())))
 
 
 @dataclass(frozen=True)

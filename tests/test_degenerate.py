@@ -46,8 +46,8 @@ def test_leaving_one_out_of_two_is_refused():
 
 
 def test_two_halves_of_one_subject_each_have_no_t_but_a_mean():
-    none = result(noise(2), scheme=KFold(2))
-    assert (none.n_empty, none.p, none.t, none.interval, none.dz) == (2, 1, 0, None, None)
+    with pytest.raises(InputError, match=r"there is no t of one map \(without 1of2, 2of2\)"):
+        result(noise(2), scheme=KFold(2))
     mean = result(noise(2), Strongest(2, "mean"), scheme=KFold(2))
     assert mean.n_flips == 4
     assert mean.p in (1 / 4, 2 / 4, 3 / 4, 1)
@@ -95,10 +95,11 @@ def test_values_that_are_all_equal_have_no_spread_to_speak_of():
     # Under flips that find a region t is infinite in more than one of twenty: no bound is known.
     open_ended = result(np.ones((6, 12)), Threshold(p=0.05))
     assert (open_ended.interval.low, open_ended.interval.high) == (-np.inf, np.inf)
-    fixed = fixed_region_result([1.0, 1.0, 1.0], NAMES, [8], [1] * 3)
-    assert (fixed.p, fixed.dz, fixed.g) == (0, None, None)
-    zeros = fixed_region_result([0.0, 0.0, 0.0], NAMES, [8], [1] * 3)
-    assert (zeros.t, zeros.p) == (0, 1)
+    for value in (1.0, 0.0):
+        fixed = fixed_region_result([value] * 3, NAMES, [8], [1] * 3)
+        assert fixed.estimate == value
+        assert (fixed.t, fixed.p, fixed.interval, fixed.dz, fixed.g) == (None,) * 5
+        assert "no test: all values are equal (n = 3)" in fixed.sentence
 
 
 # -- nothing found --------------------------------------------------------------------------
@@ -111,7 +112,9 @@ def test_when_no_fold_finds_a_region_there_is_no_interval(interval):
     assert (made.n_empty, made.t, made.p) == (3, 0, 1)
     assert (made.interval, made.dz, made.g, made.dice, made.coverage) == (None,) * 5
     assert "0 (no fold found a region: no interval), p = 1.000" in made.sentence
-    assert "In 3 of 3 folds the rule found nothing; there the value counts as 0." in made.sentence
+    assert "In 3 of 3 folds the rule found nothing; there the value counts as 0, so" in (
+        made.sentence
+    )
 
 
 # -- ties -----------------------------------------------------------------------------------

@@ -18,11 +18,12 @@ import numpy as np
 import pytest
 import sequester.nodes.interfaces as interfaces
 from nipype.interfaces.base import isdefined
+from planting import a_grid
 from sequester.nodes.design import regression, two_sample
 from sequester.nodes.errors import EmptyFoldError, InputError, Refused, SequesterError
 from sequester.nodes.folds import KFold, LeaveOneOut
 from sequester.nodes.groupmaps import Missing
-from sequester.nodes.images import Geometry, read_map, write_map
+from sequester.nodes.images import read_map, write_map
 from sequester.nodes.interfaces.base import kept_error
 from sequester.nodes.interfaces.generic import settings_of
 from sequester.nodes.masks import Cluster, Strongest, Threshold
@@ -33,7 +34,7 @@ from sequester.nodes.space import Grid
 from sequester.nodes.subjects import Keep
 from sequester.nodes.touch import Touch
 
-GRID = Geometry((6, 6, 6), tuple(map(tuple, np.diag([3.0, 3.0, 3.0, 1.0]).tolist())))
+GRID = a_grid((6, 6, 6))
 PEOPLE = ("d", "a", "c", "b", "e")  # out of order: fold k is not row k
 
 
@@ -386,7 +387,7 @@ CASES = {
         {"in_files": maps(), "tested_files": [image(noise, 50 + i) for i in range(5)]},
         fixed={
             "labels": list(PEOPLE),
-            "procedure": PROCEDURES[0],
+            "procedure": Procedure(Strongest(3)),
             "names": NAMES,
             "n_flips": 19,
             "keep_values": True,
@@ -439,12 +440,24 @@ CASES = {
             "chosen_on": ("nothing", "localizer"),
         },
     ),
+    "FixedRegionTest on own masks": Case(
+        interfaces.FixedRegionTest,
+        {
+            "values": [value(0.5 + i, 9.0 + i) for i in range(3)],
+            "coverage": [value(1.0, 0.25 + i / 8) for i in range(3)],
+            "sizes": [value(7, 8 + i) for i in range(3)],
+            "replaced": [value(False, True) for _ in range(3)],
+        },
+        {},
+        {"names": NAMES, "chosen_on": "other runs", "labels": list("abc")},
+    ),
     "FixedRegionTest on a group mask": Case(
         interfaces.FixedRegionTest,
         {
             "values": [value(0.5 + i, 9.0 + i) for i in range(3)],
             "coverage": [value(1.0, 0.25 + i / 8) for i in range(3)],
             "sizes": [value(7, 8)],
+            "replaced": [value(False, True)],
         },
         {"these_subjects": (False, True)},
         {"names": NAMES, "chosen_on": "group"},
@@ -667,7 +680,7 @@ def test_what_only_gives_the_grid_is_touched_as_geometry(
 
 
 def test_another_grid_reaches_the_sphere(tmp_path: Path):
-    moved = Geometry((6, 6, 6), tuple(map(tuple, np.diag([2.0, 2.0, 2.0, 1.0]).tolist())))
+    moved = a_grid((6, 6, 6), 2.0)
     sizes = []
     for number, grid in enumerate((GRID, moved)):
         reference = str(write_map(tmp_path / f"grid{number}.nii", noise(0), grid))
@@ -874,3 +887,19 @@ def test_a_stop_on_an_empty_fold_survives_as_what_it_is(tmp_path: Path):
         ran(interfaces.ChooseByFold, inputs, tmp_path)
     (folder,) = (p.parent for p in tmp_path.glob("run*/sequester-error.json"))
     assert type(kept_error(folder)) is EmptyFoldError
+
+
+@pytest.mark.parametrize(
+    ("row_labels", "said"),
+    [
+        ([list("abc"), list("ab")], "each region: 3, 3, got 3, 2"),
+        ([list("abc")], "each region: 3, 3, got 3"),
+        ([list("abc"), list("abd")], "regions of different people"),
+    ],
+)
+def test_labels_that_do_not_go_with_the_values_of_regions_are_told(row_labels, said, tmp_path):
+    node = interfaces.CompareFixed(kind="difference", names=["Arbor", "Brook"], labels=list("abc"))
+    node.inputs.values, node.inputs.row_labels = [[1.0, 2.0, 4.0], [2.0, 1.0, 0.5]], row_labels
+    with pytest.raises(InputError, match=said) as told:
+        node.run(cwd=tmp_path)
+    assert told.value.fields["where"] == "row_labels" and told.value.fields["remedy"]

@@ -13,6 +13,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 from nipype import Node, Workflow
 from nipype.pipeline.engine.nodes import NodeExecutionError
+from planting import a_grid, plant
 from scipy import stats
 from sequester.nodes.errors import InputError, Refused
 from sequester.nodes.fixed import family_results, fixed_region_result
@@ -30,13 +31,12 @@ from sequester.nodes.masks import Strongest, Threshold
 from sequester.nodes.parcels import Parcellation, family_t, label_means, person_means
 from sequester.nodes.procedure import Procedure
 from sequester.nodes.roi import one_sample_t, per_person
-from sequester.nodes.touch import Unit
 from sequester.workflows.guard import GuardPlugin, GuardRefused
-from sequester.workflows.study import Origin, Row, Study
+from sequester.workflows.plans import parcels
+from sequester.workflows.study import Origin, Study
 from statsmodels.stats.multitest import multipletests
 
-GRID = Geometry((6, 5, 7), tuple(map(tuple, np.diag([3.0, 3.0, 3.0, 1.0]).tolist())))
-OTHER = Geometry((4, 6, 5), tuple(map(tuple, np.diag([2.0, 2.0, 2.0, 1.0]).tolist())))
+GRID, OTHER = a_grid((6, 5, 7)), a_grid((4, 6, 5), 2.0)
 LABELS = [f"{i:02d}" for i in range(1, 9)]
 NAMES = ("lanterns", "given", "the atlas of 1909")
 NUMBERS = [2, 5, 9, 40]
@@ -338,26 +338,25 @@ def test_tables_that_do_not_belong_together_are_refused(tmp_path: Path):
         node.run(cwd=str(tmp_path))
 
 
+def test_a_plan_reads_and_tests_with_one_least_coverage(tmp_path: Path):
+    image = saved(tmp_path / "atlas.nii", atlas(99))
+    plan = parcels("lanterns", LABELS, image, "the atlas of 1909", min_coverage=0.6)
+    assert [plan.get_node(name).inputs.min_coverage for name in ("extract", "test")] == [0.6, 0.6]
+
+
 # -- under the guard ---------------------------------------------------------------------------
 
 
 @pytest.fixture
 def study(tmp_path: Path) -> Study:
     """Eight subjects with a map each, an atlas of declared origin, and one nobody declared."""
-    root = tmp_path / "study"
-    root.mkdir()
-    rows = []
-    for i, label in enumerate(LABELS):
-        write_map(root / f"sub-{label}.nii", effects(i), GRID)
-        rows.append(Row(f"sub-{label}.nii", None, Unit(sub=label, suffix="bold")))
-    write_map(root / "atlas.nii", atlas(99), GRID)
-    write_map(root / "found.nii", atlas(98), GRID)
-    return Study(root, rows, [Origin("an atlas of 1909", ("atlas.nii",))])
-
-
-@pytest.fixture
-def maps(study: Study) -> list[str]:
-    return [str(study.root / row.path) for row in study.rows]
+    return plant(
+        tmp_path / "study",
+        {label: effects(i) for i, label in enumerate(LABELS)},
+        GRID,
+        {"atlas": atlas(99), "found": atlas(98)},
+        [Origin("an atlas of 1909", ("atlas.nii",))],
+    )
 
 
 def family(maps: list[str], **inputs: Any) -> Workflow:

@@ -7,20 +7,22 @@ import numpy as np
 import pytest
 from click.testing import CliRunner
 from nipype import Node, Workflow
+from planting import a_grid
 from sequester.nodes.errors import InputError
 from sequester.nodes.folds import Halves, KFold, LeaveOneOut
-from sequester.nodes.images import Geometry, read_map, write_map
+from sequester.nodes.images import read_map, write_map
 from sequester.nodes.interfaces import ChooseWithin, Extract, FixedRegionTest
 from sequester.nodes.masks import Strongest, Threshold
 from sequester.nodes.procedure import Procedure
 from sequester.nodes.space import Grid
 from sequester.workflows.cli import main
 from sequester.workflows.guard import GuardPlugin, GuardRefused
+from sequester.workflows.plans import cross_fitted
 from sequester.workflows.settings import read_settings
 from sequester.workflows.study import read_table
 
 SHAPE = (6, 6, 5)
-GRID = Geometry(SHAPE, ((3, 0, 0, 0), (0, 3, 0, 0), (0, 0, 3, 0), (0, 0, 0, 1)))
+GRID = a_grid(SHAPE)
 N, RUNS = 9, ("1", "2", "3", "10")
 HEAD = """[study]
 name = "ferns"
@@ -227,17 +229,26 @@ def test_few_folds_are_unbiased_and_keep_their_level(k):
     assert within(rejected / SETS, 0.05)
 
 
-def test_chosen_on_a_real_contrast_and_tested_on_a_null_one():
+@pytest.mark.parametrize(
+    ("plan", "effect"),
+    [
+        ({"rule": Threshold(p=0.001), "on_empty": "strongest", "k": 5}, 1.0),
+        ({"rule": Strongest(5)}, 0.5),
+    ],
+)
+def test_chosen_on_a_real_contrast_and_tested_on_a_null_one(plan, effect):
     """Noise of the two correlates -.5: on the same data the circular test would be far off
     (rejections of .62 where 5 % are due, simulated for the project's inference notes)."""
-    procedure = Procedure(Threshold(p=0.01), KFold(5))
+    procedure = Procedure(scheme=KFold(5), **plan)
     estimates, circular, rejected = np.empty(SETS), np.empty(SETS), 0
     for seed in range(SETS):
         rng = np.random.default_rng([seed, 77])
         noise = rng.standard_normal((SUBJECTS, V))
         tested = -0.5 * noise + np.sqrt(0.75) * rng.standard_normal((SUBJECTS, V))
         choosing = noise.copy()
-        choosing[:, :20] += 0.5  # real, and marginal: noise decides which features pass
+        # Real: found in the data and, by a threshold, hardly ever under flips. Or marginal:
+        # noise decides which features lead.
+        choosing[:, :20] += effect
         ready = procedure.prepare(choosing, LABELS, LINE, tested=tested)
         estimates[seed] = ready.outcome().estimate
         rejected += ready.flip_test(n_flips=39, seed=seed).p <= 0.05
@@ -246,6 +257,33 @@ def test_chosen_on_a_real_contrast_and_tested_on_a_null_one():
     assert circular.mean() < -10 * circular.std(ddof=1) / np.sqrt(SETS)
     assert abs(estimates.mean()) < 4 * estimates.std(ddof=1) / np.sqrt(SETS)
     assert within(rejected / SETS, 0.05)
+
+
+@pytest.mark.parametrize("on_empty", ["empty", "stop"])
+def test_other_maps_are_not_tested_by_a_rule_that_may_find_nothing(on_empty, monkeypatch):
+    """Folds are empty under flips and not in the data: the level is lost, and so it is refused."""
+    procedure = Procedure(Threshold(p=0.001), KFold(5), on_empty=on_empty)
+
+    def rejections():
+        rejected = 0
+        for seed in range(100):
+            rng = np.random.default_rng([seed, 78])
+            choosing, tested = rng.standard_normal((2, SUBJECTS, V // 2))
+            choosing[:, :20] += 1.0
+            ready = procedure.prepare(
+                choosing, LABELS, Grid((V // 2, 1, 1), np.eye(4)), tested=tested
+            )
+            rejected += ready.flip_test(n_flips=39, seed=seed).p <= 0.05
+        return rejected / 100
+
+    for refused in (rejections, lambda: cross_fitted("w", procedure, LABELS, other_maps=True)):
+        with pytest.raises(
+            InputError, match=r"by a rule that may find nothing.*strongest"
+        ) as error:
+            refused()
+        assert f'on_empty = "{on_empty}"' in error.value.fields["got"]
+    monkeypatch.setattr(Procedure, "check_other_maps", lambda self: None)
+    assert rejections() > 0.05 + 3 * np.sqrt(0.05 * 0.95 / 100)
 
 
 @pytest.mark.parametrize("scheme", [LeaveOneOut(2), Halves()])

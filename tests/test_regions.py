@@ -12,11 +12,11 @@ from hypothesis import strategies as st
 from nibabel.affines import apply_affine
 from nipype import MapNode, Node, Workflow
 from nipype.interfaces.utility import Merge
+from planting import a_grid
 from scipy import ndimage
 from scipy.spatial.distance import cdist
 from sequester.nodes.errors import InputError
 from sequester.nodes.images import (
-    Geometry,
     read_label_table,
     read_labels,
     read_map,
@@ -415,13 +415,9 @@ def test_how_a_grid_is_stored_does_not_matter_in_mm():
 # -- the nodes ------------------------------------------------------------------------------
 
 
-def geometry(shape, affine):
-    return Geometry(shape, tuple(tuple(float(x) for x in row) for row in affine))
-
-
-FINE = geometry((12, 12, 12), turned((1, 1, 1), (-5.5, -5.5, -5.5)))
-COARSE = geometry((6, 6, 6), turned((2, 2, 2), (-4.8, -4.9, -5.2)))
-OWN = geometry((5, 7, 6), turned((2.1, 1.9, 2.3), (5.0, -6.0, -4.0), flip=True))
+FINE = a_grid((12, 12, 12), turned((1, 1, 1), (-5.5, -5.5, -5.5)))
+COARSE = a_grid((6, 6, 6), turned((2, 2, 2), (-4.8, -4.9, -5.2)))
+OWN = a_grid((5, 7, 6), turned((2.1, 1.9, 2.3), (5.0, -6.0, -4.0), flip=True))
 DSEG_TSV = """\
 index	name	abbreviation	color
 0	Path	P	#000000
@@ -498,12 +494,22 @@ def test_another_grid_is_refused_unless_asked_for(garden):
         LabelMask(**inputs).run()
     made = LabelMask(regrid=True, **inputs).run().outputs.mask_file
     assert read_map(made)[1].same_as(COARSE)
-    far = geometry((6, 6, 6), turned((2, 2, 2), (500, 0, 0)))
+    far = a_grid((6, 6, 6), turned((2, 2, 2), (500, 0, 0)))
     inputs["reference"] = str(write_map(garden / "far.nii", np.ones(far.shape), far))
     with pytest.raises(InputError, match=r"no voxel's centre is in the labels .*got labels \[4\]"):
         LabelMask(regrid=True, **inputs).run()
     with pytest.raises(InputError, match=r"no label on the reference's grid .*dseg.nii.gz"):
         RegridLabels(in_file=dseg(garden), reference=inputs["reference"]).run()
+
+
+def test_of_the_labels_that_are_named_no_other_reaches_the_new_grid(garden):
+    inputs = {"in_file": dseg(garden), "reference": at(garden, "coarse")}
+    whole, _ = read_labels(RegridLabels(**inputs).run().outputs.label_file)
+    some, _ = read_labels(RegridLabels(labels=[9, 77], **inputs).run().outputs.label_file)
+    assert set(np.unique(whole)) == {0, 4, 9}
+    np.testing.assert_array_equal(some, np.where(whole == 9, whole, 0))
+    with pytest.raises(InputError, match=r"no label on the reference's grid .*got labels \[77\]"):
+        RegridLabels(labels=[77], **inputs).run()
 
 
 def test_regridded_labels_and_regridded_masks_are_one_thing_for_each_subject(garden):
@@ -601,7 +607,7 @@ def test_an_empty_result_is_an_error_that_says_why(garden):
         CombineMasks(in_files=[one, at(garden, "fine")], how="union").run()
     with pytest.raises(InputError, match=r"nothing is left .*8 voxels eroded by 2 mm on 6 x 6 x 6"):
         ErodeMask(in_file=one, mm=2.0).run()
-    aside = geometry((6, 6, 6), turned((2, 2, 2), (40, 0, 0)))
+    aside = a_grid((6, 6, 6), turned((2, 2, 2), (40, 0, 0)))
     lone = str(write_map(garden / "lone.nii", left, aside))
     with pytest.raises(InputError, match=r"the mirror image lies outside the grid .*lone.nii"):
         MirrorMask(in_file=lone, how="other").run()

@@ -319,14 +319,17 @@ def collect_comparisons(settings: Settings, nodes: dict[str, Any]) -> list[dict[
 
 
 def adjust(outputs: Sequence[RoiOutput]) -> list[tuple[str, str]]:
-    """Holm over the tested regions, when their search regions share no voxel.
+    """Holm over the tested regions, and single-step p over those exchanged together.
 
-    The labels of an atlas are a family of their own, adjusted in their test.
+    What is controlled is the chance of any false "an effect somewhere in its search region" (of
+    regions fixed beforehand: "in the mean of it"). Each p holds for that by itself, and Holm needs
+    no more, so search regions may overlap; nothing is said of places within them. The labels of an
+    atlas are a family of their own, adjusted in their test.
 
     Returns
     -------
     list of (name, name)
-        The regions that share voxels, and so stand in the way.
+        The regions whose search regions share voxels.
     """
     stated = [o for o in outputs if not (o.roi.each_label or o.roi.variant_of)]
     tested = [o for o in stated if o.records[0]["p"] is not None]
@@ -338,7 +341,7 @@ def adjust(outputs: Sequence[RoiOutput]) -> list[tuple[str, str]]:
     ]
     _over_the_largest(tested)
     p = [output.records[0]["p"] for output in tested]
-    for output, adjusted in zip(tested, [None] * len(p) if together else holm(p), strict=True):
+    for output, adjusted in zip(tested, holm(p), strict=True):
         output.records[0]["p_holm"] = adjusted
     return [(one.roi.name, other.roi.name) for one, other in together]
 

@@ -11,7 +11,6 @@ from nipype import Merge, Node, Workflow
 from ..nodes.errors import InputError
 from ..nodes.interfaces import CompareFixed, CompareHeldOut
 from ..nodes.interfaces.comparisons import KINDS
-from ..nodes.masks import Cluster, Threshold
 from .keys import Reader
 from .plans import CROSS_FITTED, EXPLORATORY, node
 from .rois import Roi
@@ -123,12 +122,7 @@ def _compatible(read: Reader, rois: Sequence[Roi]) -> None:
                 expected="regions whose mean is tested",
             )
         procedure = roi.procedure
-        if (
-            roi.plan in CROSS_FITTED
-            and procedure is not None
-            and isinstance(procedure.rule, Threshold | Cluster)
-            and procedure.on_empty != "strongest"
-        ):
+        if roi.plan in CROSS_FITTED and procedure is not None and procedure.may_find_nothing:
             raise InputError(
                 f"{roi.name} may find no region in a fold, and cannot be compared",
                 where=where,

@@ -102,7 +102,8 @@ def cross_fitted(
         What the plan is called in results.
     other_maps : bool
         Choose on ``inputnode.choosing`` (another contrast of the same subjects) and test
-        ``inputnode.effects``; both are held out and flipped together.
+        ``inputnode.effects``; both are held out and flipped together. The rule must always find
+        something (`Procedure.check_other_maps`).
     min_coverage : float
         The least share of its mask in which a map must have data.
     mem_gb : float
@@ -125,6 +126,8 @@ def cross_fitted(
     >>> sorted(plan.list_node_names())
     ['choose', 'extract', 'inputnode', 'outputnode', 'test']
     """
+    if other_maps:
+        procedure.check_other_maps()
     workflow = Workflow(name=name)
     fields = ["effects", "choosing"] if other_maps else ["effects"]
     given = ["mask_files", "overlap_file", "values", "record_file", "flips_file", "values_file"]
@@ -215,11 +218,18 @@ def _reading(
 
 
 def _fixed_test(
-    workflow: Workflow, extract: Node, end: Node, names: tuple[str, str, str], **more: Any
+    workflow: Workflow,
+    extract: Node,
+    end: Node,
+    names: tuple[str, str, str],
+    choose: Node | None = None,
+    **more: Any,
 ) -> None:
-    """Student's t of the values of an extraction."""
+    """Student's t of the values of an extraction, in masks that a node chose or in given ones."""
     labels = extract.inputs.labels
     test = node(FixedRegionTest(), "test", names=names, labels=labels, **more)
+    if choose is not None:
+        workflow.connect(choose, "replaced", test, "replaced")
     workflow.connect(
         [
             (extract, test, [(f, f) for f in ("values", "coverage", "sizes")]),
@@ -283,7 +293,7 @@ def own_masks(
     )
     if search is not None:
         workflow.connect(*mask_of(search), choose, "search_files")
-    _fixed_test(workflow, extract, end, (name, plan, search_name), chosen_on="other runs")
+    _fixed_test(workflow, extract, end, (name, plan, search_name), choose, chosen_on="other runs")
     return workflow
 
 
@@ -380,6 +390,7 @@ def localizer(
         extract,
         end,
         (name, plan, search_name),
+        choose,
         chosen_on="group" if group_mask else "localizer",
         these_subjects=these_subjects,
         certificate=certificate,

@@ -12,8 +12,9 @@ from ..nodes.controlled import BY_P, Controlled
 from ..nodes.errors import InputError
 from ..nodes.folds import Given, Halves, KFold, LeaveOneOut, Scheme
 from ..nodes.groupmaps import Missing
-from ..nodes.heldout import INTERVALS
-from ..nodes.masks import Cluster, MaskRule, PeakSphere, Strongest, Threshold
+from ..nodes.heldout import INTERVALS, check_jackknife
+from ..nodes.masks import GROUP, RUNS, Cluster, MaskRule, PeakSphere, Strongest, Threshold
+from ..nodes.masks import LOCALIZER as OWN_MAPS
 from ..nodes.models import Groups, Model, Score
 from ..nodes.orthogonality import Certificate
 from ..nodes.procedure import ON_EMPTY, TAILS, Procedure
@@ -51,7 +52,6 @@ TESTS = {
 }
 THESE_SUBJECTS = "these-subjects"
 _MOST_VARIANTS = 100  # of one region's sensitivity
-_JACKKNIFE = 4  # the fewest people
 
 _ROI_KEYS = {"name", "plan", "test", "value", "select", "minus", "sensitivity"}
 _RULES = {
@@ -147,6 +147,14 @@ class Roi:
         return any(
             unit.sub == "{sub}" for leaf in self.region.leaves() for unit in leaf.derived_from
         )
+
+    @property
+    def rule(self) -> str:
+        """How it is chosen, in words; of a region fixed beforehand, what it is."""
+        if self.procedure is None:
+            return self.region.describe()
+        on = RUNS if self.plan in OTHER_RUNS else OWN_MAPS if self.own_masks else GROUP
+        return self.procedure.describe(on)
 
     @property
     def own_masks(self) -> bool:
@@ -296,8 +304,14 @@ class _Roi:
         procedure = None if plan == A_PRIORI else self._procedure(summary)
         interval = read.one_of(table, "interval", intervals, "folds" if of_folds else "flips")
         if procedure is not None and plan in CROSS_FITTED:
-            self._check_folds(procedure.scheme, interval)
+            self._check_folds(procedure, choosing)
             self._check_model(procedure.model)
+            if interval == "jackknife":
+                self._check_jackknife(procedure)
+        if procedure is not None and plan in OTHER_RUNS:
+            self._check_runs(procedure)
+        if procedure is not None and self.group_mask:
+            self._check_group(procedure, choosing)
         return Roi(
             self.name,
             plan,
@@ -351,20 +365,56 @@ class _Roi:
             )
         return flips
 
-    def _check_folds(self, scheme: Scheme, interval: str) -> None:
+    def _check_folds(self, procedure: Procedure, choosing: Selection | None) -> None:
         """Have the folds made once: who is lacking is known now."""
-        people = sorted(set(self.tested.people))
         try:
-            scheme.folds(people)
+            procedure.check_sides(procedure.scheme.folds(sorted(self.tested.people)))
         except InputError as error:
-            raise error.at(f"{self.read.where('plan')}, roi {self.name}") from error
-        if interval == "jackknife" and len(people) < _JACKKNIFE:
+            raise error.within(f"{self.read.where('plan')}, roi {self.name}") from error
+        if choosing is not None:
+            try:
+                procedure.check_other_maps()
+            except InputError as error:
+                raise error.at(f"{self.read.where('choose_on')}, roi {self.name}") from error
+
+    def _check_jackknife(self, procedure: Procedure) -> None:
+        try:
+            check_jackknife(procedure, self.tested.people)
+        except InputError as error:
+            raise error.within(f"{self.read.where('interval')}, roi {self.name}") from error
+
+    def _check_runs(self, procedure: Procedure) -> None:
+        """Refuse a rule that reads t where the runs that choose are a single one."""
+        rows = self.tested.by_run()
+        runs: dict[str, list[str]] = {}
+        for person, (_, listed) in zip(rows.people, rows.subjects, strict=True):
+            runs.setdefault(person, []).append(listed[0].unit.run)
+        few = []
+        for person, mine in runs.items():
+            try:
+                procedure.check_sides(procedure.scheme.folds(mine))
+            except InputError as error:
+                few.append((person, error))
+        if few:
+            first = few[0][1]
+            told = ", ".join(person for person, _ in few[:5])
             raise InputError(
-                "too few subjects for the jackknife",
-                where=f"{self.read.where('interval')}, roi {self.name}",
-                expected=f"at least {_JACKKNIFE}",
-                got=f"{len(people)} ({', '.join(people)})",
-                remedy='use interval = "flips"',
+                first.fields["what"],
+                where=f"{self.read.where('rule')}, roi {self.name}",
+                expected=first.fields["expected"],
+                got=f"one run in {told}" + (f" and {len(few) - 5} more" if len(few) > 5 else ""),
+                remedy='use the rule strongest or peak-sphere with map = "mean"',
+            )
+
+    def _check_group(self, procedure: Procedure, choosing: Selection | None) -> None:
+        """Refuse a rule that reads t where one person's map is the group's."""
+        if choosing is not None and procedure.rule.map_kind == "t" and len(choosing.subjects) < 2:
+            raise InputError(
+                "the rule reads t, and there is no t of one map",
+                where=f"{self.read.where('choose_on')}, roi {self.name}",
+                expected="maps of at least 2 subjects that choose",
+                got=f"sub-{choosing.subjects[0][0]} alone",
+                remedy='choose on more people, or use the rule strongest with map = "mean"',
             )
 
     def _certificate(self) -> Certificate | None:
@@ -384,6 +434,8 @@ class _Roi:
         minus = self.read.get(self.table, "minus", dict, None)
         if minus is None:
             minus = self.read.get(self.data, "minus", dict, None)
+        elif not minus:
+            minus = None  # of this region, whatever [data] subtracts
         baseline = self.read.get(self.data, "baseline", dict, None)
         made = select(self.read, self.study, self._wanted(), minus, baseline)
         if self.maps.by_variance:
@@ -395,16 +447,28 @@ class _Roi:
                     got=f"none for {lacking[0]}" + (" and others" if lacking[1:] else ""),
                     remedy="fill the variance column of the study table",
                 )
+        return self._asked(made, self._wanted())
+
+    def _asked(self, made: Selection, wanted: dict[str, Any]) -> Selection:
+        """A selection of both groups of a comparison is the question itself, and chose nobody."""
+        groups = self.table.get("compare")
+        if isinstance(groups, dict):
+            column = groups.get("column")
+            both = {groups.get("first"), groups.get("second")}
+            values = wanted.get(str(column))
+            if isinstance(values, list) and {str(value) for value in values} == both:
+                return replace(made, kept_by=tuple(c for c in made.kept_by if c != column))
         return made
 
     def _choosing(self) -> Selection | None:
         own = self.read.get(self.table, "choose_on", dict, ... if self.plan == LOCALIZER else None)
         if own is None:
             return None
+        wanted = {**self._wanted(), **own}
         made = chosen_elsewhere(
             self.read,
             self.study,
-            {**self._wanted(), **own},
+            wanted,
             self.tested,
             same=not self.group_mask or self.plan == ORTHOGONAL,
         )
@@ -414,7 +478,7 @@ class _Roi:
                 where=self.read.where("choose_on"),
                 remedy='name another task, run or session: choose_on = { task = "..." }',
             )
-        return made
+        return None if made is None else self._asked(made, wanted)
 
     def _enough_runs(self) -> None:
         if self.plan not in OTHER_RUNS:
@@ -503,7 +567,18 @@ class _Roi:
             first, second = (
                 read.get(groups, key, str, ..., of="compare") for key in ("first", "second")
             )
-            return Groups(self._of_people(name, "column"), first, second, covariates, name)
+            of = self._of_people(name, "column")
+            there = sorted({group for _, group in of})
+            for key, group in (("first", first), ("second", second)):
+                if group not in there:
+                    raise InputError(
+                        "compare names a group of nobody",
+                        where=read.where(key),
+                        expected=f"what stands in column {name}: {', '.join(map(repr, there))}",
+                        got=repr(group),
+                        remedy="write it as the table does: capitals count",
+                    )
+            return Groups(of, first, second, covariates, name)
         return Score(self._numbers(column, "score"), covariates, column) if column else None
 
     def _check_model(self, model: Model | None) -> None:

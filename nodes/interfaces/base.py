@@ -6,6 +6,7 @@ import hashlib
 import json
 import math
 from abc import ABC, abstractmethod
+from collections.abc import Callable, Mapping
 from importlib.metadata import version
 from pathlib import Path
 from typing import Any, ClassVar
@@ -50,6 +51,9 @@ class SequesterInterface(SimpleInterface, ABC):
         How each output's elements inherit touches; an output not named touches everything.
     volumes : dict of str to str
         For a field with image paths, the parallel field with volume numbers.
+    labels_read : dict of str to callable
+        For a field with label images, which labels are read: from the settings to the numbers, or
+        to None when they are not known before the run.
     meeting, statistic : Meeting, Statistic or None
     mem_gb : float
         What a node needs unless the plan knows better.
@@ -57,6 +61,7 @@ class SequesterInterface(SimpleInterface, ABC):
 
     touch_rules: ClassVar[dict[str, Rule]] = {}
     volumes: ClassVar[dict[str, str]] = {}
+    labels_read: ClassVar[dict[str, Callable[[Mapping[str, Any]], tuple[int, ...] | None]]] = {}
     meeting: ClassVar[Meeting | None] = None
     statistic: ClassVar[Statistic | None] = None
 
@@ -137,7 +142,7 @@ def write_json(path: Path, content: dict[str, Any]) -> str:
 
     Numbers that are not finite become null: JSON has no word for them.
     """
-    text = json.dumps(_finite(content), indent=2, ensure_ascii=False, allow_nan=False)
+    text = json.dumps(finite(content), indent=2, ensure_ascii=False, allow_nan=False)
     write_bytes(path, f"{text}\n".encode())
     return str(path)
 
@@ -148,11 +153,18 @@ def read_json(path: str | Path) -> dict[str, Any]:
     return record
 
 
-def _finite(value: Any) -> Any:
+def finite(value: Any) -> Any:
+    """Plain values for JSON, which has no word for numbers that are not finite: None for those.
+
+    Examples
+    --------
+    >>> finite({"p": float("nan"), "of": (1, float("inf"))})
+    {'p': None, 'of': [1, None]}
+    """
     if isinstance(value, dict):
-        return {key: _finite(item) for key, item in value.items()}
+        return {key: finite(item) for key, item in value.items()}
     if isinstance(value, list | tuple):
-        return [_finite(item) for item in value]
+        return [finite(item) for item in value]
     return None if isinstance(value, float) and not math.isfinite(value) else value
 
 
@@ -161,6 +173,7 @@ __all__ = [
     "InputSpec",
     "SequesterInterface",
     "TraitedSpec",
+    "finite",
     "isdefined",
     "kept_error",
     "notes_of",

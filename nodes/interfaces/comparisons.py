@@ -112,12 +112,25 @@ class CompareFixed(_Compare):
     )
 
     def _work(self, cwd: Path) -> dict[str, Any]:
-        rows = self.inputs.row_labels
+        rows, sizes = self.inputs.row_labels, [len(v) for v in self.inputs.values]
+        if [len(labels) for labels in rows] != sizes:
+            raise InputError(
+                "labels that do not go with the values",
+                where="row_labels",
+                expected=f"a label for every value of each region: {_numbers(sizes)}",
+                got=_numbers([len(labels) for labels in rows]),
+                remedy="give row_labels in the order of values: per region, whose each value is",
+            )
         if any(sorted(set(labels)) != self.inputs.labels for labels in rows):
             raise InputError(
                 "regions of different people",
+                where="row_labels",
                 expected=", ".join(self.inputs.labels[:5]),
                 remedy="compare regions that the same subjects were tested in",
             )
         columns = [per_person(v, r) for v, r in zip(self.inputs.values, rows, strict=True)]
         return self._record(cwd, np.array(columns).T, None, exact=False)
+
+
+def _numbers(sizes: list[int]) -> str:
+    return ", ".join(map(str, sizes)) or "none"

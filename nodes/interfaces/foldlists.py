@@ -31,6 +31,7 @@ from ..rules import (
     fold_loss,
     joined,
 )
+from ..scoreunits import dealt_by_scores
 from .base import InputSpec, SequesterInterface, TraitedSpec, traits, write_json
 
 
@@ -106,8 +107,8 @@ class FoldLists(SequesterInterface):
     input_spec = _ListsInput
     output_spec = _ListsOutput
     touch_rules = {
-        "selection_files": _by_fold("in_files", _kept),
-        "held_out_files": _by_fold("in_files", _away),
+        "selection_files": dealt_by_scores(_by_fold("in_files", _kept), "scheme"),
+        "held_out_files": dealt_by_scores(_by_fold("in_files", _away), "scheme"),
         "selection_labels": _by_fold("labels", _kept),
         "held_out_labels": _by_fold("labels", _away),
         "fold_names": _by_fold("labels", lambda folds, _: [Leaf(NOTHING) for _ in folds]),

@@ -15,7 +15,7 @@ from ..groupmaps import Floats, Missing, group_map, leave_out_maps
 from ..images import stack, write_map
 from ..procedure import held_out_rows
 from ..rules import all_but_held_out, only
-from ..scoreunits import also_scores
+from ..scoreunits import also_scores, dealt_by_scores
 from ..space import Grid
 from .base import InputSpec, SequesterInterface, TraitedSpec, traits
 
@@ -93,11 +93,8 @@ def _folds_held_out(settings: Any) -> list[tuple[int, ...]]:
     return held_out_rows(settings.get("scheme") or LeaveOneOut(), settings["labels"])
 
 
-_RULE = also_scores(
-    all_but_held_out("in_files", _folds_held_out, ("labels", "scheme"), ("design",)),
-    "in_files",
-    "design",
-)
+_MAPS = all_but_held_out("in_files", _folds_held_out, ("labels", "scheme"), ("design",))
+_RULE = dealt_by_scores(also_scores(_MAPS, "in_files", "design"), "scheme")
 
 
 class LeaveOutMaps(SequesterInterface):

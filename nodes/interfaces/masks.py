@@ -15,6 +15,7 @@ from ..masks import (
     PeakSphere,
     Strongest,
     Threshold,
+    check_k,
     choose,
     highest,
     sphere,
@@ -23,7 +24,7 @@ from ..masks import (
 from ..procedure import ON_EMPTY
 from ..rules import Branch, Inputs, Leaf, Rule, Tree, each, joined, leaves, only
 from ..space import Grid
-from ..touch import Touch
+from ..touch import Touch, of_sphere, union
 from .base import InputSpec, SequesterInterface, TraitedSpec, one_or_each, traits
 
 RULES = (Threshold, Cluster, Strongest, PeakSphere)
@@ -75,6 +76,7 @@ def _write_chosen(
     chosen = choose(values[inside], rule, grid, n)
     replaced = bool(not chosen.any() and inputs.on_empty == "strongest")
     if replaced:
+        check_k(inputs.k, int(inside.sum()))
         chosen = strongest(values[inside], inputs.k)
     if not chosen.any() and inputs.on_empty == "stop":
         raise EmptyFoldError(
@@ -163,9 +165,15 @@ def _placed(inputs: Inputs) -> Tree:
         Leaf(leaf.touch.as_geometry(), (leaf,))
         for leaf in leaves(inputs.trees.get("reference", Branch()))
     ]
-    origin = inputs.settings.get("origin")
+    origin, centre, radius = (inputs.settings.get(n) for n in ("origin", "centre", "radius"))
     if origin:
-        stated = inputs.declared.get(origin) or Touch(origins=frozenset({origin}))
+        named = [origin]
+        if isinstance(centre, tuple) and isinstance(
+            radius, float
+        ):  # what is declared of this sphere, and of no other with its source
+            named.append(of_sphere(origin, centre, radius))
+        declared = [inputs.declared[name] for name in named if name in inputs.declared]
+        stated = union(declared) if declared else Touch(origins=frozenset({origin}))
         parts.append(Leaf(stated, place=f"coordinate of {inputs.where}"))
     elif "centre" not in inputs.arriving:
         typed = frozenset({f"the coordinate given to {inputs.where}"})

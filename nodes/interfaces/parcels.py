@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import io
+from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
 
@@ -43,6 +44,13 @@ class _ExtractOutput(TraitedSpec):
     sizes = traits.List(traits.List(traits.Int), desc="per label image: voxels in each parcel")
 
 
+def _parcels_in(settings: Mapping[str, Any]) -> tuple[int, ...] | None:
+    """The labels that the settings of `ExtractParcels` name, where they do."""
+    parcels = settings.get("parcels")
+    whole = isinstance(parcels, list) and all(isinstance(one, int) for one in parcels)
+    return tuple(parcels) if parcels and whole else None
+
+
 class ExtractParcels(SequesterInterface):
     """The mean of each map in every parcel of a label image, in one reading of the map.
 
@@ -60,6 +68,7 @@ class ExtractParcels(SequesterInterface):
     output_spec = _ExtractOutput
     _always_run = True
     meeting = _MEETING
+    labels_read = {"label_files": _parcels_in}
     touch_rules = {
         "values_file": _MEETING.whole,
         "coverage_file": _MEETING.whole,

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from pathlib import Path
 from typing import Any
 
@@ -10,10 +10,11 @@ import numpy as np
 from nipype.interfaces.base import File, InputMultiObject
 
 from .. import progress
-from ..errors import SequesterError
+from ..errors import InputError, SequesterError
 from ..heldout import INTERVALS, cross_fitted_result
 from ..images import (
     Bools,
+    Floats,
     Geometry,
     check_same_grid,
     geometry_of,
@@ -22,12 +23,16 @@ from ..images import (
     stack,
     write_map,
 )
+from ..pages import Source
 from ..procedure import Prepared, Procedure, held_out_rows
 from ..rules import Rule, Statistic, all_but_held_out, chosen_on
-from ..scoreunits import also_scores
+from ..scoreunits import also_scores, dealt_by_scores
 from ..space import Grid
+from ..storedmaps import opened
 from .base import InputSpec, SequesterInterface, TraitedSpec, one_or_each, traits, write_json
 from .masks import PEAK, peak_of
+
+Reading = Callable[[list[str], Bools | None], tuple[Floats | Source, Grid, Geometry]]
 
 
 class _ProcedureInput(InputSpec):
@@ -38,10 +43,10 @@ class _ProcedureInput(InputSpec):
     procedure = traits.Instance(Procedure, mandatory=True, desc="folds, map, rule, summary")
 
 
-def _prepared(inputs: Any) -> tuple[Prepared, Grid, Geometry]:
+def _prepared(inputs: Any, reading: Reading = stack) -> tuple[Prepared, Grid, Geometry]:
     """The procedure on the files of a node."""
     inside = _inside(inputs.search_file or None, inputs.in_files[0])
-    effects, grid, geometry = stack(inputs.in_files, inside)
+    effects, grid, geometry = reading(inputs.in_files, inside)
     names = inputs.row_names or inputs.in_files
     tested = None
     if getattr(inputs, "tested_files", None):
@@ -74,7 +79,7 @@ def _per_row(settings: Any) -> list[tuple[int, ...]]:
 def _rule(held_out: Callable[[Any], list[tuple[int, ...]]]) -> Rule:
     """A fold's mask touches the maps, and the scores of a model, of all rows but those held out."""
     maps = all_but_held_out("in_files", held_out, ("labels", "procedure"), ("search_file",))
-    return also_scores(maps, "in_files", "procedure")
+    return dealt_by_scores(also_scores(maps, "in_files", "procedure"), "procedure")
 
 
 class _ChooseOutput(TraitedSpec):
@@ -97,7 +102,8 @@ class ChooseByFold(SequesterInterface):
     }
 
     def _work(self, cwd: Path) -> dict[str, Any]:
-        ready, grid, geometry = _prepared(self.inputs)
+        # The maps are gone through once or twice: they can stay in their files.
+        ready, grid, geometry = _prepared(self.inputs, opened)
         masks = ready.masks()
         files = [
             str(write_map(cwd / f"fold{k:05d}.nii.gz", grid.filled(mask), geometry))
@@ -117,7 +123,7 @@ class ChooseByFold(SequesterInterface):
         }
 
 
-def _peaks(ready: Prepared, masks: list[Bools], grid: Grid) -> list[list[float]]:
+def _peaks(ready: Prepared, masks: Sequence[Bools], grid: Grid) -> list[list[float]]:
     """The `PEAK` of every fold."""
     found = ready.peaks(masks)
     return [[] if one is None else peak_of(grid, *one) for one in found]
@@ -159,6 +165,7 @@ _own = chosen_on(
 class _WithinOutput(TraitedSpec):
     row_masks = traits.List(File(exists=True), desc="per row: the subject's mask without that run")
     peaks = traits.List(traits.List(traits.Float), desc=f"per row, of the map that chose: {PEAK}")
+    replaced = traits.List(traits.Bool, desc="per row: the strongest features stand in")
 
 
 class ChooseWithin(SequesterInterface):
@@ -166,29 +173,33 @@ class ChooseWithin(SequesterInterface):
 
     input_spec = _WithinInput
     output_spec = _WithinOutput
-    touch_rules = {"row_masks": _own, "peaks": _own}
+    touch_rules = {"row_masks": _own, "peaks": _own, "replaced": _own}
 
     def _work(self, cwd: Path) -> dict[str, Any]:
         labels, maps = self.inputs.labels, self.inputs.in_files
         searches = one_or_each("search_files", self._value("search_files"), len(maps))
         files: dict[int, str] = {}
         peaks: dict[int, list[float]] = {}
+        replaced: dict[int, bool] = {}
         for rows in _rows_of(labels).values():
             # A subject's rows share one search region unless each has its own.
             for search in dict.fromkeys(searches[row] for row in rows):
                 ready, grid, geometry = self._subject([maps[row] for row in rows], search, rows)
                 masks = ready.masks()
                 of_fold = _peaks(ready, masks, grid)
-                for fold, mask, peak in zip(ready.folds, masks, of_fold, strict=True):
+                for k, (fold, mask, peak) in enumerate(
+                    zip(ready.folds, masks, of_fold, strict=True)
+                ):
                     for row in (rows[held] for held in fold.held_out):
                         if searches[row] == search:
                             path = cwd / f"row{row:05d}.nii.gz"
                             files[row] = str(write_map(path, grid.filled(mask), geometry))
-                            peaks[row] = peak
+                            peaks[row], replaced[row] = peak, k in masks.replaced
         numbers = range(len(labels))
         return {
             "row_masks": [files[row] for row in numbers],
             "peaks": [peaks[row] for row in numbers],
+            "replaced": [replaced[row] for row in numbers],
         }
 
     def _subject(
@@ -197,7 +208,10 @@ class ChooseWithin(SequesterInterface):
         """The procedure on one subject's runs."""
         effects, grid, geometry = stack(paths, _inside(search, paths[0]))
         runs = [self.inputs.runs[row] for row in rows]
-        return self.inputs.procedure.prepare(effects, runs, grid), grid, geometry
+        try:
+            return self.inputs.procedure.prepare(effects, runs, grid), grid, geometry
+        except InputError as error:
+            raise error.within(self.inputs.labels[rows[0]]) from error
 
 
 class _FlipInput(_ProcedureInput):

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
 
@@ -43,6 +44,22 @@ def _grid(geometry: Geometry) -> Grid:
     return Grid(geometry.shape, geometry.affine)
 
 
+def _numbers_in(settings: Mapping[str, Any]) -> tuple[int, ...] | None:
+    """The numbers of the labels that the settings of a `LabelMask` name, where they all are there.
+
+    A MapNode's settings are lists: with a table for each image, a name means what each of them
+    says.
+    """
+    labels, image, table = (settings.get(name) for name in ("labels", "in_file", "table_file"))
+    if not isinstance(labels, list) or not all(isinstance(one, int | str) for one in labels):
+        return None
+    if all(isinstance(one, int) for one in labels):
+        return numbers_of(labels, ())
+    if not isinstance(image, str | Path) or not isinstance(table, str | Path | None):
+        return None
+    return _numbers(labels, str(image), table)
+
+
 class _LabelMaskInput(InputSpec):
     in_file = File(exists=True, mandatory=True, desc="label image (dseg), with a declared origin")
     labels = traits.List(
@@ -74,6 +91,7 @@ class LabelMask(SequesterInterface):
     input_spec = _LabelMaskInput
     output_spec = _MaskOutput
     touch_rules = {"mask_file": only("in_file", "table_file", geometry=("reference",))}
+    labels_read = {"in_file": _numbers_in}
     # The engine does not hash the table beside the image: a changed one must be noticed.
     _always_run = True
 
@@ -100,24 +118,35 @@ class LabelMask(SequesterInterface):
 
     def numbers(self) -> tuple[int, ...]:
         """The numbers of its labels."""
-        labels = self.inputs.labels
-        names = [label for label in labels if isinstance(label, str)]
-        if not names:
-            return numbers_of(labels, ())
-        table = self._value("table_file") or table_beside(self.inputs.in_file)
-        if table is None:
-            raise InputError(
-                "label names without a label table",
-                where=self.inputs.in_file,
-                expected="table_file, or a .tsv of the same name beside the image",
-                got=", ".join(names),
-                remedy="give the table (columns index and name), or numbers instead of names",
-            )
-        return numbers_of(labels, read_label_table(table), str(table))
+        return _numbers(self.inputs.labels, self.inputs.in_file, self._value("table_file"))
+
+
+def _numbers(labels: list[int | str], image: str, table: str | Path | None) -> tuple[int, ...]:
+    names = [label for label in labels if isinstance(label, str)]
+    if not names:
+        return numbers_of(labels, ())
+    table = table or table_beside(image)
+    if table is None:
+        raise InputError(
+            "label names without a label table",
+            where=image,
+            expected="table_file, or a .tsv of the same name beside the image",
+            got=", ".join(names),
+            remedy="give the table (columns index and name), or numbers instead of names",
+        )
+    return numbers_of(labels, read_label_table(table), str(table))
+
+
+def _kept(settings: Mapping[str, Any]) -> tuple[int, ...] | None:
+    """The labels that the settings of a `RegridLabels` keep; None for all."""
+    labels = settings.get("labels")
+    whole = isinstance(labels, list) and all(isinstance(one, int) for one in labels)
+    return tuple(labels) if labels and whole else None
 
 
 class _RegridLabelsInput(InputSpec):
     in_file = File(exists=True, mandatory=True, desc="label image (dseg), with a declared origin")
+    labels = traits.List(traits.Int, desc="numbers of those to keep; default: all")
     reference = File(exists=True, mandatory=True, desc="image that gives the grid")
 
 
@@ -126,22 +155,28 @@ class _RegridLabelsOutput(TraitedSpec):
 
 
 class RegridLabels(SequesterInterface):
-    """A label image on another grid: the label at each voxel's centre, 0 outside the image."""
+    """A label image on another grid: the label at each voxel's centre, 0 outside the image.
+
+    With `labels`, the others are 0 too: what is known of them is nothing that reaches the output.
+    """
 
     input_spec = _RegridLabelsInput
     output_spec = _RegridLabelsOutput
     touch_rules = {"label_file": only("in_file", geometry=("reference",))}
+    labels_read = {"in_file": _kept}
 
     def _work(self, cwd: Path) -> dict[str, Any]:
         volume, geometry = read_labels(self.inputs.in_file)
         target = geometry_of(open_image(self.inputs.reference))
-        brought = nearest_label(volume, _grid(geometry), _grid(target))
+        labels = self._value("labels")
+        kept = np.where(np.isin(volume, labels), volume, 0) if labels else volume
+        brought = nearest_label(kept, _grid(geometry), _grid(target))
         if not brought.any():
             raise InputError(
                 "no label on the reference's grid",
                 where=self.inputs.in_file,
                 expected=f"labels that meet the grid of {self.inputs.reference}: {target}",
-                got=str(geometry),
+                got=f"labels {labels} on {geometry}" if labels else str(geometry),
                 remedy="check that both are in the same space (mm)",
             )
         path = write_map(cwd / "dseg.nii.gz", brought.reshape(target.shape), target)

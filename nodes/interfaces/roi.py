@@ -20,7 +20,7 @@ from ..images import check_same_grid, read_map
 from ..orthogonality import Certificate
 from ..roi import SUMMARIES, Floats, block_values, per_person
 from ..rules import Branch, Inputs, Leaf, Meeting, Rule, Statistic, Tree, joined, leaves, only
-from .base import InputSpec, SequesterInterface, TraitedSpec, traits, write_json
+from .base import InputSpec, SequesterInterface, TraitedSpec, one_or_each, traits, write_json
 
 _MEETING = Meeting(
     mask="mask_files",
@@ -96,7 +96,7 @@ class Extract(SequesterInterface):
         Without clearance.
     InputError
         When masks, labels and maps do not pair up; for a negative or missing weight; and when
-        maps have data in less than `min_coverage` of their (non-empty) masks.
+        maps have no data in their (non-empty) masks, or in less than `min_coverage` of them.
     """
 
     input_spec = _ExtractInput
@@ -170,19 +170,21 @@ def _weights(path: str, mask: Floats) -> Floats:
 def _check_coverage(
     labels: list[str], coverage: list[float], sizes: list[int], least: float
 ) -> None:
-    """Whether every map has data in enough of its mask."""
+    """Whether every map has data in enough of its mask, and any at all."""
     short = [
         f"{label} {share:.3g}"
         for label, share, size in zip(labels, coverage, sizes, strict=True)
-        if size and share < least
+        if size and (share < least or not share)
     ]
     if short:
         more = f" and {len(short) - 5} more" if len(short) > 5 else ""
         raise InputError(
-            f"{len(short)} of {len(labels)} maps have too little data in their masks",
-            expected=f"coverage of at least {least:g}",
+            f"{len(short)} of {len(labels)} maps have {'too little' if least else 'no'} data in "
+            "their masks",
+            expected=f"coverage of at least {least:g}" if least else "coverage above 0",
             got=", ".join(short[:5]) + more,
-            remedy="leave them out with an exclude_reason, or lower min_coverage",
+            remedy="leave them out with an exclude_reason"
+            + (", or lower min_coverage" * (least > 0)),
         )
 
 
@@ -193,6 +195,9 @@ class _FixedInput(InputSpec):
     sizes = traits.List(traits.Int, mandatory=True, desc="per value: voxels in the mask")
     names = traits.Tuple(
         traits.Str, traits.Str, traits.Str, mandatory=True, desc="roi, plan, search region"
+    )
+    replaced = InputMultiObject(
+        traits.Bool, desc="per value, or for all: the strongest features stand in for an empty mask"
     )
     chosen_on = traits.Enum(
         *CHOSEN_ON, usedefault=True, desc="what the masks were chosen on; for the result in words"
@@ -212,7 +217,7 @@ class FixedRegionTest(SequesterInterface):
 
     input_spec = _FixedInput
     output_spec = _RecordOutput
-    touch_rules = {"record_file": only("values", "coverage", "sizes")}
+    touch_rules = {"record_file": only("values", "coverage", "sizes", "replaced")}
     statistic = Statistic(
         values="values",
         labels="labels",
@@ -226,7 +231,7 @@ class FixedRegionTest(SequesterInterface):
         labels = self._value("labels") or list(map(str, range(len(values))))
         people, names = per_person(values, labels), self.inputs.names
         sizes, coverage = self.inputs.sizes, self.inputs.coverage
-        chosen_on = self.inputs.chosen_on
+        chosen_on, replaced = self.inputs.chosen_on, self._value("replaced") or [False]
         if chosen_on == "nothing":
             result = fixed_region_result(people, names, sizes, coverage)
         elif chosen_on == "group":
@@ -237,7 +242,18 @@ class FixedRegionTest(SequesterInterface):
                 coverage,
                 these_subjects=self.inputs.these_subjects,
                 certificate=self._value("certificate"),
+                replaced=any(replaced),
             )
         else:
-            result = own_mask_result(people, names, sizes, coverage, chosen_on)
+            stood_in = one_or_each("replaced", replaced, len(values))
+            sizes_of = one_or_each("sizes", sizes, len(values))
+            result = own_mask_result(
+                people,
+                names,
+                sizes,
+                coverage,
+                chosen_on,
+                [label for label, yes in zip(labels, stood_in, strict=True) if yes],
+                [label for label, size in zip(labels, sizes_of, strict=True) if not size],
+            )
         return {"record_file": write_json(cwd / "result.json", result.as_dict())}

@@ -293,6 +293,12 @@ def cross_fitted(cell: Cell, number: int, detail: Detail) -> Found:
         target = d * _target(ready, truth)
         yield ("error", str(d)), outcome.estimate - target
         n_folds = len(ready.folds)
+        # With an empty fold a result has no interval: what is covered is of those that are given.
+        yield ("given", str(d)), not outcome.empty
+        if outcome.empty:
+            if d == 0:
+                yield ("rejected",), rejects(ready, outcome.t, number)
+            continue
         if 2 * n_folds <= cell.n:
             yield from _covered(fold_interval(people, n_folds), target, "folds", d)
         if _each(detail.flips, number):
@@ -607,13 +613,16 @@ def summaries(done: list[Job]) -> list[dict[str, Any]]:
             of_cell.setdefault(key, []).extend(values)
     made = []
     for cell in (cell for cell in cells() if cell in found):
-        line: dict[str, Any] = asdict(cell) | {"rate": None, "bias": {}, "coverage": {}}
+        line: dict[str, Any] = asdict(cell) | {"rate": None, "bias": {}, "given": {}}
+        line["coverage"] = {}
         for key, values in found[cell].items():
             match key.split():
                 case ["rejected"]:
                     line["rate"] = share(values)
                 case ["error", d]:
                     line["bias"][d] = share(values)
+                case ["given", d]:
+                    line["given"][d] = share(values)
                 case ["covered", kind, d]:
                     line["coverage"].setdefault(kind, {})[d] = share(values)
         made.append(line)
