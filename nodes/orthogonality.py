@@ -32,6 +32,8 @@ Floats = npt.NDArray[np.floating]
 
 # A correlation below this is rounding.
 TOLERANCE = 1e-6
+# A variance below this share of its parts' is rounding.
+_NO_VARIANCE = 1e-12
 
 
 @dataclass(frozen=True)
@@ -141,16 +143,53 @@ def error_covariance(
 
 
 def correlation(covariance: npt.ArrayLike, a: npt.ArrayLike, b: npt.ArrayLike) -> float:
-    """The correlation of two contrasts of estimates with a covariance; 0 where one has none.
+    """The correlation of two contrasts of estimates with a covariance.
+
+    Parameters
+    ----------
+    covariance : (n, n) float
+        Symmetric, without negative eigenvalues, in any unit.
+    a, b : (n,) float
+
+    Raises
+    ------
+    InputError
+        Where a contrast has no weight or no variance: nothing can be shown about it then.
 
     Examples
     --------
     >>> float(round(correlation(np.diag([1 / 6, 1 / 3]), [1, 1], [1, -1]), 6))
     -0.333333
     """
-    C, one, other = (np.asarray(x, dtype=float) for x in (covariance, a, b))
-    size = float(np.sqrt(max(one @ C @ one, 0) * max(other @ C @ other, 0)))
-    return 0.0 if size == 0 else float(one @ C @ other) / size
+    C = np.asarray(covariance, dtype=float)
+    # Every regressor in its own standard deviation first: no unit is so small that it is lost.
+    scaled = C / (np.abs(C).max() or 1)
+    sd = np.sqrt(np.maximum(np.diag(scaled), 0))
+    inside = np.where(sd > 0, sd, 1)
+    R = scaled / inside[:, None] / inside
+    one, other = (_in_deviations(np.asarray(x, dtype=float), sd) for x in (a, b))
+    variances = [float(x @ R @ x) for x in (one, other)]
+    if min(variances) < _NO_VARIANCE:
+        raise InputError(
+            "a contrast without variance",
+            expected="two contrasts that vary, in the run and between subjects",
+            got="weights and covariance that leave nothing of one of them",
+            remedy="state the weights of both contrasts and a covariance that was measured",
+        )
+    return float(one @ R @ other) / float(np.sqrt(variances[0] * variances[1]))
+
+
+def _in_deviations(weights: Floats, sd: Floats) -> Floats:
+    """Weights of regressors in standard deviations; the largest is 1."""
+    if not weights.any():
+        raise InputError(
+            "a contrast without weights",
+            expected="a weight that is not zero",
+            got=str(weights.tolist()),
+            remedy="state the weights of both contrasts",
+        )
+    made: Floats = weights / np.abs(weights).max() * sd
+    return made / (np.abs(made).max() or 1)
 
 
 def autoregressive(n: int, rho: float) -> Floats:
@@ -202,6 +241,8 @@ def within_and_between(
     >>> [one.holds for one in within_and_between([X], [1, 1], [1, -1], np.diag([1, 2]))]
     [True, False]
     """
+    if not designs:
+        raise InputError("no design", expected="one per subject, or one for all")
     worst = 0.0
     for design in designs:
         noise = autoregressive(len(np.asarray(design)), rho) if rho else None
@@ -239,5 +280,7 @@ def mean_and_weights(weights: npt.ArrayLike, variances: npt.ArrayLike) -> Condit
             expected="a difference or a slope",
             got=f"sum {w.sum():g}",
         )
+    if not (np.isfinite(v) & (v >= 0)).all():
+        raise InputError("variances out of range", expected="0 or more", got=str(v.tolist()))
     pooled = np.full(len(w), 1 / len(w))
     return Condition("subject: variances", correlation(np.diag(v), pooled, w))

@@ -183,6 +183,79 @@ def also_scores(rule: Rule, field: str, named_by: str, labels_by: str = "labels"
     return Rule(rule.names, derive)
 
 
+def kept_by_scores(rule: Rule, scores: str, quality: str) -> Rule:
+    """The same rule, when who is there at all was decided by columns of the study table.
+
+    Every element is then selected by all that the columns say: who stands where takes all of it.
+
+    Parameters
+    ----------
+    rule : Rule
+    scores : str
+        The setting with the names of columns that chose.
+    quality : str
+        The setting with those that say how good the data are: geometry.
+    """
+
+    def derive(inputs: Inputs) -> Leaf | Branch:
+        tree = rule.derive(inputs)
+        touch = Touch(geometry=_whole(inputs, quality), selected=_whole(inputs, scores))
+        if not (touch.geometry or touch.selected):
+            return tree
+        return _with_each(tree, Leaf(touch, place=f"{inputs.where}.{scores}"))
+
+    return Rule(rule.names, derive)
+
+
+def dealt_by_scores(rule: Rule, scheme: str) -> Rule:
+    """The same rule, when a column of the study table decided who is in which fold: geometry.
+
+    Dealing people to folds, evenly by group or as listed, uses nothing that was measured in them,
+    and a fold's mask is chosen without those it holds out in any case.
+
+    Parameters
+    ----------
+    rule : Rule
+    scheme : str
+        The setting with a fold scheme, or with a procedure that has one.
+    """
+
+    def derive(inputs: Inputs) -> Leaf | Branch:
+        tree, setting = rule.derive(inputs), inputs.settings.get(scheme)
+        dealt = getattr(getattr(setting, "scheme", setting), "dealt_by", ())
+        found = _saying(inputs.scores, [(label, text) for label, text in dealt if text])
+        by = Leaf(Touch(geometry=found), place=f"{inputs.where}.{scheme}")
+        return _with_each(tree, by) if found else tree
+
+    return Rule(rule.names, derive)
+
+
+def _saying(cells: Cells, said: Sequence[tuple[str, str]]) -> int:
+    """The units of the columns that say the very same of these labels."""
+    found = 0
+    for column in dict.fromkeys(name for name, _ in cells):
+        there = [(cells.get((column, label)), text) for label, text in said]
+        if said and all(cell is not None and text in cell.texts for cell, text in there):
+            for cell, _ in there:
+                found |= cell.units if cell is not None else 0
+    return found
+
+
+def _with_each(tree: Leaf | Branch, more: Leaf) -> Leaf | Branch:
+    """A tree whose every element derives from something more."""
+    if isinstance(tree, Leaf):
+        return joined([tree, more], single=tree.single)
+    return Branch([_with_each(child, more) for child in tree.children])
+
+
+def _whole(inputs: Inputs, setting: str) -> int:
+    """All units of the columns that a setting names."""
+    columns, found = inputs.settings.get(setting) or (), 0
+    for (column, _), cell in inputs.scores.items() if columns else ():
+        found |= cell.units if column in columns else 0
+    return found
+
+
 def scores_by_row(inputs: Inputs, named_by: str, labels_by: str = "labels") -> list[Touch]:
     """What the scores of each row touch; one touch for all when the labels are not known.
 

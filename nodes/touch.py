@@ -226,6 +226,17 @@ class UnitTable:
         return _listed(inside, most)
 
 
+def of_sphere(source: str, centre: Sequence[float], radius: float) -> str:
+    """The name of what an origin says of one sphere (mm) alone.
+
+    Examples
+    --------
+    >>> of_sphere("table 2", (-36, 12, 21), 6)
+    'table 2 (sphere at -36 12 21, 6 mm)'
+    """
+    return f"{source} (sphere at {' '.join(f'{x:g}' for x in centre)}, {radius:g} mm)"
+
+
 def _listed(units: Sequence[Unit], most: int) -> str:
     shown = ", ".join(str(unit) for unit in units[:most])
     return shown if len(units) <= most else f"{shown} and {len(units) - most} more"

@@ -4,19 +4,24 @@ from __future__ import annotations
 
 import csv
 import json
+import shutil
+from pathlib import Path
 
+import nibabel as nib
 import numpy as np
 import pytest
 from click.testing import CliRunner
+from planting import a_grid
 from scipy import ndimage, stats
 from sequester import read_settings, run_study
-from sequester.nodes.contour import _LEAST, Contour, _share, boundary, complete, contour_of
+from sequester.nodes.contour import _LEAST, Contour, _at, _share, boundary, complete, contour_of
 from sequester.nodes.errors import InputError
 from sequester.nodes.groupmaps import group_map
-from sequester.nodes.images import Geometry, write_map
+from sequester.nodes.images import write_map
 from sequester.nodes.masks import Cluster, Threshold, choose
 from sequester.nodes.simulated import Noise
 from sequester.nodes.space import Grid
+from sequester.workflows import contours
 from sequester.workflows.cli import main
 from sequester.workflows.contours import contour_in_files
 
@@ -103,7 +108,7 @@ def rates(kinds, sets, effect=None):
 def test_masks_from_the_data_are_flagged_and_others_are_not():
     kinds = {
         "ball": lambda maps, rng: ball(rng.uniform(7, 21, 3), 3.5),
-        "blob": lambda maps, rng: Noise(GRID, (7,) * 3).draw(rng, 1)[0] > 1.6,
+        "blob": lambda maps, rng: Noise(GRID, (5,) * 3).draw(rng, 1)[0] > 2.2,
         "cluster": lambda maps, rng: own_cluster(maps),
         "dilated": lambda maps, rng: dilated(own_cluster(maps)),
         "smoothed": lambda maps, rng: smoothed(dilated(own_cluster(maps))),
@@ -171,9 +176,16 @@ def test_few_unlike_placements_cannot_make_a_small_p():
     assert result.share > 0.95 and result.p_placements > 0.02
 
 
+def test_what_lies_outside_the_data_has_no_value():
+    number = np.full((3, 3, 3), -1)
+    number[0, 1, 2], number[2, 1, 0] = 0, 1
+    where = np.array([[0, 1, 2], [-1, 1, 0], [0, 1, 3], [1, 1, 1], [2, 1, 0]])
+    assert _at(np.array([5.0, 7.0]), number, where).tolist() == [5.0, 7.0]
+
+
 # -- on files -----------------------------------------------------------------------------------
 
-GEOMETRY = Geometry(SHAPE, tuple(map(tuple, GRID.affine.tolist())))
+GEOMETRY = a_grid(SHAPE, GRID.affine)
 
 
 @pytest.fixture(scope="module")
@@ -215,13 +227,12 @@ def test_files_give_what_arrays_give(garden):
     assert not complete(maps)[ball((3, 3, 3), 2)].any()
     with pytest.raises(InputError, match="too few people"):
         contour_in_files(garden / "found.nii", paths, ["a", "b", "c"] * 12)
-    write_map(garden / "other.nii", np.ones((4, 4, 4), bool), Geometry((4, 4, 4), GEOMETRY.rows))
+    write_map(garden / "other.nii", np.ones((4, 4, 4), bool), a_grid((4, 4, 4), GRID.affine))
     with pytest.raises(InputError, match="grid"):
         contour_in_files(garden / "other.nii", paths, LABELS * 2)
 
 
-def test_a_run_says_which_masks_follow_its_maps(garden, monkeypatch):
-    monkeypatch.setenv("NO_ET", "1")
+def test_a_run_says_which_masks_follow_its_maps(garden):
     settings = read_settings(garden / "STUDY.toml")
     run_study(settings)
     with (settings.output / "roi_tests.tsv").open() as stream:
@@ -236,3 +247,59 @@ def test_a_run_says_which_masks_follow_its_maps(garden, monkeypatch):
     assert told["flagged"] is True
     unknown = CliRunner().invoke(main, [*arguments, "--roi", "Cinder"])
     assert unknown.exit_code == 2 and "no such region" in unknown.stdout
+
+
+def atlas_of(root: Path) -> np.ndarray:
+    """A label image: 3 is what was found, 5 the ball, 9 is too small to have a boundary."""
+    found, other = (np.asarray(nib.load(root / f"{n}.nii").dataobj) != 0 for n in ("found", "ball"))
+    atlas = 3 * found + 5 * (other & ~found)
+    atlas[0, 0, 0] = 9
+    return atlas.astype(np.int16)
+
+
+def run_of(root: Path, region: str, data: str = "") -> list[dict[str, str]]:
+    """The tests of a study with one region."""
+    head = f'[study]\nname = "garden"\ntable = "table.tsv"\noutput = "others"\n{data}'
+    (root / "OTHER.toml").write_text(
+        f'{head}\n[[roi]]\nname = "All"\nplan = "a-priori"\n{region}\n'
+    )
+    settings = read_settings(root / "OTHER.toml")
+    run_study(settings, record=False)
+    with (settings.output / "roi_tests.tsv").open() as stream:
+        return list(csv.DictReader(stream, delimiter="\t"))
+
+
+def test_every_label_of_a_family_is_checked_by_itself(garden, monkeypatch):
+    write_map(garden / "atlas.nii", atlas_of(garden), GEOMETRY)
+    region = 'each_label = true\nregion = { atlas = "atlas.nii", origin = "an atlas of 1909" }'
+    found, other, small = run_of(garden, region)
+    paths = [garden / f"sub-{label}_run-{run}.nii" for run in "12" for label in LABELS]
+    alone = contour_in_files(garden / "found.nii", paths, LABELS * 2)
+    assert float(found["contour"]) == pytest.approx(alone.share)
+    assert float(found["contour_p"]) <= 0.01 < float(other["contour_p"])
+    told = (
+        "It is one of 1 such among the 2 labels that were checked; by chance alone 0.02 would be."
+    )
+    assert told in found["sentence"]
+    assert "contour" not in other["sentence"]
+    assert (small["contour"], small["contour_p"]) == ("n/a", "n/a")
+    monkeypatch.setattr(contours, "_MOST_VALUES", 1)  # a boundary at a time
+    assert run_of(garden, region) == [found, other, small]
+
+
+def test_where_there_is_no_one_boundary_in_one_map_it_says_why(garden):
+    for label in LABELS:
+        shutil.copy(garden / "ball.nii", garden / f"{label}_ball.nii")
+    own = 'region = { mask = "{sub}_ball.nii", origin = "drawn for each" }'
+    (made,) = run_of(garden, own)
+    assert (
+        "Shape check: not made, because each subject has a region of their own" in made["sentence"]
+    )
+    given = 'region = { mask = "ball.nii", origin = "a drawing of 1909" }'
+    (made,) = run_of(garden, given, '[data]\ngrids = "own"\n')
+    assert "Shape check: not made, because the maps share no grid" in made["sentence"]
+    (made,) = run_of(
+        garden, f'select = {{ sub = ["{LABELS[0]}", "{LABELS[1]}", "{LABELS[2]}"] }}\n{given}'
+    )
+    assert "Shape check: not made, because it needs 4 independent subjects" in made["sentence"]
+    assert made["contour"] == "n/a"

@@ -11,7 +11,7 @@ import pytest
 from carrying import (
     CarryOne,
     ForeignEach,
-    WatchPlugin,
+    ancestry_of,
     blend,
     carried_study,
     function,
@@ -21,12 +21,14 @@ from nipype import Function, IdentityInterface, JoinNode, MapNode, Merge, Node, 
 from nipype import Workflow as Engine
 from nipype.interfaces.io import SelectFiles
 from nipype.interfaces.utility import Split
+from planting import paths_of
+from running import workflow
 from sequester import GuardPlugin, Meeting, Statistic, contract, each, everything, only
 from sequester.nodes.errors import InputError
 from sequester.nodes.interfaces import Extract
 from sequester.nodes.interfaces.contracts import contract_of
 from sequester.nodes.rules import leaves, lost_precision
-from sequester.workflows.ancestry import Ancestry, meetings_of
+from sequester.workflows.ancestry import meetings_of
 from sequester.workflows.guard import GuardRefused
 from sequester.workflows.judge import judge
 from sequester.workflows.study import Study
@@ -41,19 +43,7 @@ def study(tmp_path: Path) -> Study:
 
 @pytest.fixture
 def f(study: Study) -> list[str]:
-    return [str(study.root / row.path) for row in study.rows]
-
-
-def workflow(name: str = "w") -> Engine:
-    made = Engine(name, base_dir="work")
-    made.config["execution"] = {"crashdump_dir": ".", "create_report": "false"}
-    return made
-
-
-def judged(made: Engine, study: Study) -> Ancestry:
-    watch = WatchPlugin(study, run=False)
-    made.run(plugin=watch)
-    return watch.ancestry
+    return paths_of(study)
 
 
 class Smooth(ForeignEach):
@@ -93,14 +83,14 @@ class TestOfAClass:
     def test_rules_and_geometry_take_the_place_of_the_union(self, study: Study, f: list[str]):
         made = workflow()
         made.add_nodes([smooth(f)])
-        tree = judged(made, study).outputs["w.smooth", "out_files"]
+        tree = ancestry_of(made, study).outputs["w.smooth", "out_files"]
         assert said(tree) == [{0}, {1}]
         assert [leaf.touch.geometry for leaf in leaves(tree)] == [1 << 7] * 2
 
     def test_trust_is_not_inherited(self, study: Study, f: list[str]):
         made = workflow()
         made.add_nodes([smooth(f, Rougher)])
-        assert said(judged(made, study).outputs["w.smooth", "out_files"]) == {0, 1, 7}
+        assert said(ancestry_of(made, study).outputs["w.smooth", "out_files"]) == {0, 1, 7}
 
     def test_what_guards_is_inherited(self):
         assert meetings_of(Louder())[0] == Meeting(mask="more", data="files")
@@ -123,7 +113,7 @@ class TestOfAClass:
         join = JoinNode(Smooth(), joinsource="start", joinfield="files", name="join")
         made.connect([(start, again, [("x", "inputnode.x")]), (start, join, [("x", "files")])])
         made.add_nodes([mapped])
-        found = {name: said(tree) for name, tree in judged(made, study).outputs.items()}
+        found = {name: said(tree) for name, tree in ancestry_of(made, study).outputs.items()}
         assert found["w.mapped", "out_files"] == [[{0}, {1}], [{2}, {3}, {4}]]
         assert found["w.join", "out_files"] == [{0, 1}, {2, 3}]
         cloned = [tree for (name, _), tree in found.items() if "again" in name]
@@ -143,7 +133,7 @@ class TestOfANode:
         made.connect(start, "x", node, "a")
         both = workflow("both")
         both.add_nodes([made, made.clone("twin")])
-        found = [said(tree) for tree in judged(both, study).outputs.values()]
+        found = [said(tree) for tree in ancestry_of(both, study).outputs.values()]
         assert found == [{0}, {1}, {0}, {1}]
 
     def test_it_is_of_that_node_alone(self, study: Study, f: list[str]):
@@ -152,7 +142,7 @@ class TestOfANode:
         for node in (mine, other):
             node.inputs.a, node.inputs.b = f[0], f[1]
         made.add_nodes([mine, other])
-        outputs = judged(made, study).outputs
+        outputs = ancestry_of(made, study).outputs
         assert (said(outputs["w.n", "out"]), said(outputs["w.other", "out"])) == ({0}, {0, 1})
 
     def test_workers_get_the_node_and_not_its_rules(self, study: Study, f: list[str]):
@@ -212,7 +202,7 @@ class TestExtractionsAndStatistics:
         read.inputs.files = f[:3]
         read.inputs.more = [[f[1], f[2]], [f[0], f[2]], [f[0], f[1]]]
         made.connect(read, "out_file", Node(Test(), name="test"), "files")
-        found = {x.node: x for x in judge(judged(made, study))}
+        found = {x.node: x for x in judge(ancestry_of(made, study))}
         assert found["w.read"].verdict == "apart"
         assert found["w.test"].verdict == "leak"
         assert "cross-fitted" in found["w.test"].reason
@@ -223,7 +213,7 @@ class TestExtractionsAndStatistics:
         contract(read, rules={"out_file": only("files", ignored=("more",))})
         read.inputs.files, read.inputs.more = f[0], f[1]
         made.add_nodes([read])
-        [mark] = judged(made, study).outputs["w.read", "out_file"].touch.extractions
+        [mark] = ancestry_of(made, study).outputs["w.read", "out_file"].touch.extractions
         assert (mark.mask, mark.data) == (0b10, 0b01)
 
 
@@ -272,7 +262,7 @@ class TestLostPrecision:
     def told(
         self, made: Engine, study: Study, end: str, output: str = "out"
     ) -> list[tuple[str, str]]:
-        tree = judged(made, study).outputs[end, output]
+        tree = ancestry_of(made, study).outputs[end, output]
         return [(node, reason) for node, reason, cure in lost_precision(tree) if cure]
 
     def files(self, f: list[str]) -> MapNode:
@@ -290,7 +280,7 @@ class TestLostPrecision:
         foreign, behind = Node(ForeignEach(), name="foreign"), Node(Select(index=[0]), name="pick")
         foreign.inputs.files = f[:3]
         made.connect(foreign, "out_files", behind, "inlist")
-        tree = judged(made, study).outputs["w.pick", "out"]
+        tree = ancestry_of(made, study).outputs["w.pick", "out"]
         (near, why, _), (far, reason, cure) = lost_precision(tree)
         assert (near, far) == ("w.pick", "w.foreign")
         assert "length of its list" in why
@@ -353,7 +343,7 @@ class TestLostPrecision:
         made = workflow()
         grab = Node(SelectFiles({"out": str(study.root / "f{n}.txt")}), name="grab")
         made.connect(Node(function(_first, "n"), name="which"), "out", grab, "n")
-        tree = judged(made, study).outputs["w.grab", "out"]
+        tree = ancestry_of(made, study).outputs["w.grab", "out"]
         assert tree.touch.unknown == {"what w.grab finds"}
         assert lost_precision(tree)[0][:2] == (
             "w.grab",
@@ -366,7 +356,7 @@ class TestLostPrecision:
         foreign.inputs.files = f[4:6]
         made.connect([(self.files(f), merge, [("out_file", "files")])])
         made.connect(foreign, "out_files", merge, "more")
-        tree = judged(made, study).outputs["w.all", "out_file"]
+        tree = ancestry_of(made, study).outputs["w.all", "out_file"]
         assert [node for node, *_ in lost_precision(tree, 1 << 4)] == ["w.all", "w.foreign"]
         assert [node for node, *_ in lost_precision(tree, 1 << 1)] == ["w.all"]
 

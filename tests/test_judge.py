@@ -12,6 +12,7 @@ from typing import Any
 import pytest
 import sequester.nodes.interfaces as interfaces
 from nipype import Function, MapNode, Merge, Node, Workflow
+from running import workflow
 from sequester.nodes.foldnull import plain_t_false_positives
 from sequester.nodes.folds import KFold, LeaveOneOut, Scheme
 from sequester.nodes.interfaces import (
@@ -91,12 +92,6 @@ def function(name: str, iterfield: str = "", **inputs: Any) -> Node:
     node = MapNode(body, iterfield=[iterfield], name=name) if iterfield else Node(body, name=name)
     node.inputs.trait_set(**inputs)
     return node
-
-
-def workflow() -> Workflow:
-    empty = Workflow("w", base_dir="work")
-    empty.config["execution"] = {"crashdump_dir": ".", "create_report": "false"}
-    return empty
 
 
 def judged(graph: Workflow, study: Study) -> list[Finding]:

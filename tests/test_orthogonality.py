@@ -112,3 +112,29 @@ def test_a_certificate_without_conditions_does_not_hold():
     assert Certificate("a", "b", (Condition("run", 0), Condition("subject", 1e-9)), ()).holds
     assert not Certificate("a", "b", (Condition("run", 1e-9),), ()).holds  # nothing of the people
     assert not Certificate("a", "b", (Condition("run", 1e-3), Condition("subject", 0)), ()).holds
+
+
+def test_a_contrast_without_weight_or_variance_shows_nothing():
+    """An empty certificate: 0 for lack of anything is not the 0 of two orthogonal contrasts."""
+    X, zeros = design("AABB"), np.zeros((2, 2))
+    for a, b, between, told in (
+        ((0, 0), DIFFERENCE, np.eye(2), "without weights"),
+        (SUM, (0, 0), np.eye(2), "without weights"),
+        (SUM, DIFFERENCE, zeros, "without variance"),
+        (SUM, DIFFERENCE, np.ones((2, 2)), "without variance"),  # nobody differs in A - B
+    ):
+        with pytest.raises(InputError, match=told):
+            within_and_between([X], a, b, between)
+    with pytest.raises(InputError, match="no design"):
+        within_and_between([], SUM, DIFFERENCE, np.eye(2))
+    with pytest.raises(InputError, match="variances out of range"):
+        mean_and_weights([1, -1], [1, -2])
+
+
+@pytest.mark.parametrize("unit", [1e-200, 1e-12, 1, 1e12, 1e200])
+def test_a_correlation_has_no_unit(unit):
+    between = np.diag([1.0, 4.0])
+    assert correlation(between * unit, SUM, DIFFERENCE) == pytest.approx(-0.6)
+    assert correlation(between, SUM * unit, DIFFERENCE / unit) == pytest.approx(-0.6)
+    own = np.diag([1.0, unit])  # a regressor in another unit than the other
+    assert correlation(own, [1, 1 / np.sqrt(unit)], [0, 1]) == pytest.approx(np.sqrt(0.5))

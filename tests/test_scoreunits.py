@@ -45,6 +45,8 @@ from sequester.nodes.interfaces import (
 from sequester.nodes.masks import Strongest
 from sequester.nodes.models import Score
 from sequester.nodes.procedure import Procedure
+from sequester.nodes.rules import Inputs, Leaf, Loss, Rule, joined, lost_precision, stamped
+from sequester.nodes.scoreunits import Cell, kept_by_scores
 from sequester.nodes.subjects import Keep
 from sequester.nodes.touch import Touch, Unit
 from sequester.workflows.findings import Finding
@@ -489,4 +491,15 @@ def test_a_mask_chosen_among_the_kept_is_judged_by_what_kept_them(garden: Garden
     graph.connect(region, "mask_file", read, "mask_files")
     test = correlating(AGE)
     graph.connect(read, "values", test, "values")
-    assert "chosen by age of the very subjects" in of_statistic(graph, garden).reason
+    assert "kept or left out by age" in of_statistic(graph, garden).reason
+
+
+def test_what_kept_somebody_leaves_word_of_where_precision_was_lost():
+    loss = Loss("nobody knows which", "give a list")
+    rule = Rule(None, lambda inputs: joined([Leaf(Touch(1))], single=False, lost=loss))
+    cells = {("skill", "01"): Cell(frozenset({"5"}), 0b100)}
+    given = Inputs({}, {"kept_by": ["skill"]}, "w.maps", scores=cells)
+    made = kept_by_scores(rule, "kept_by", "quality")(given)
+    assert (made.touch, made.single) == (Touch(0b001, selected=0b100), False)
+    told = lost_precision(stamped(made, "w.maps.out_files"))
+    assert told == [("w.maps", "nobody knows which", "give a list")]

@@ -55,7 +55,7 @@ from .inlined import given_to_functions
 from .literals import named_in, paths_in
 from .literals import plain as plain_value
 from .scorelists import score_trees
-from .study import Study
+from .study import Labels, Study
 
 
 def node_name(node: Any) -> str:
@@ -65,14 +65,15 @@ def node_name(node: Any) -> str:
 
 _LENGTH_UNKNOWN = Loss(
     "it maps over a list whose length is not known before the run",
-    "let a MapNode or a JoinNode make that list, or state the rule of the node that makes it: "
-    "contract(NODE, rules={OUTPUT: each(INPUT)})",
+    "let a MapNode or a JoinNode make that list; or if the node that makes it really keeps the "
+    "items apart, say so: contract(NODE, rules={OUTPUT: each(INPUT)})",
 )
 _UNIQUE = Loss(
     "unique=True drops repeats, and which is not known before the run", "leave unique=True out"
 )
 _SET = Loss("it joins into a set, which has no order", "join into a list")
 _LONGEST = 4096  # of a file name
+SEEN = " (seen while running)"  # beside a place that the graph did not show
 
 
 class Ancestry:
@@ -90,7 +91,7 @@ class Ancestry:
         self._graph = graph
         self._order = list(nx.topological_sort(graph))
         self._names = {node: node_name(node) for node in self._order}
-        self._files: dict[tuple[str, int | None], Leaf | None] = {}
+        self._files: dict[tuple[str, int | None, Labels], Leaf | None] = {}
         self._seen: dict[tuple[str, str], list[Leaf]] = {}
         self.inputs: dict[str, Inputs] = {}
         self.outputs: dict[tuple[str, str], Tree] = {}
@@ -133,13 +134,15 @@ class Ancestry:
         for field in edges:  # what an edge brings replaces a literal
             settings.pop(field, None)
         trees: dict[str, Tree] = {}
-        volumes = vars(type(interface)).get("volumes", {})  # a subclass may read them otherwise
+        own = vars(type(interface))  # a subclass may read them otherwise
+        volumes = own.get("volumes", {})
+        labels = {field: read(settings) for field, read in own.get("labels_read", {}).items()}
         for field, value in settings.items():
             code = field == "function_str"
             tree = (
                 self._file(value, None, code=True)
                 if code
-                else self._literal(value, settings.get(volumes.get(field, "")))
+                else self._literal(value, settings.get(volumes.get(field, "")), labels.get(field))
             )
             if tree is not None:
                 trees[field] = tree
@@ -230,18 +233,18 @@ class Ancestry:
             return joined([tree], single=False, lost=lost)
         return self.outputs.get((name, output)) or Leaf(NOTHING, single=False)
 
-    def _literal(self, value: Any, volume: Any = None) -> Tree | None:
+    def _literal(self, value: Any, volume: Any = None, labels: Labels = None) -> Tree | None:
         """The tree of a literal: None when it holds no file."""
         value = plain_value(value)
         if isinstance(value, str | Path):
             number = volume if isinstance(volume, int) and volume >= 0 else None
-            key = (str(value), number)
+            key = (str(value), number, labels)
             if key not in self._files:
                 self._files[key] = self._file(*key)
             return self._files[key]
         if isinstance(value, list):
             numbers = volume if isinstance(volume, list | tuple) else [volume] * len(value)
-            items = [self._literal(v, n) for v, n in zip(value, numbers, strict=False)]
+            items = [self._literal(v, n, labels) for v, n in zip(value, numbers, strict=False)]
             if all(item is None for item in items):
                 return None
             return Branch(
@@ -249,17 +252,20 @@ class Ancestry:
             )
         if isinstance(value, tuple | set | frozenset):
             # One element to some interfaces, a list to others.
-            parts = [tree for item in value if (tree := self._literal(item, volume)) is not None]
+            made = (self._literal(item, volume, labels) for item in value)
+            parts = [tree for tree in made if tree is not None]
             return joined(parts, single=False) if parts else None
         return None
 
-    def _file(self, text: str, number: int | None, *, code: bool = False) -> Leaf | None:
+    def _file(
+        self, text: str, number: int | None, labels: Labels = None, *, code: bool = False
+    ) -> Leaf | None:
         """What a text names: a file, or files that stand in it (a command, a pattern).
 
         What a program's own text names besides declared files may be a place to write to.
         """
         if not code and len(text) <= _LONGEST and "\n" not in text:
-            touch = self.study.touch_of(text, number)
+            touch = self.study.touch_of(text, number, labels)
             if touch is not None:
                 place = self.study.relative(text)
                 return Leaf(touch, place=place if number is None else f"{place} volume {number}")
@@ -313,8 +319,13 @@ class Ancestry:
     def observe(self, node: Any, field: str, found: Mapping[str, Touch]) -> None:
         """Add what a node turned out to be given: the files it reads, and their touches."""
         self._seen.setdefault((node_name(node), field), []).extend(
-            Leaf(touch, place=f"{place} (seen while running)") for place, touch in found.items()
+            Leaf(touch, place=f"{place}{SEEN}") for place, touch in found.items()
         )
+
+    @property
+    def seen(self) -> list[Leaf]:
+        """The files that were seen while running, besides those that the graph shows."""
+        return [leaf for found in self._seen.values() for leaf in found]
 
 
 Iterations = Inputs | list["Iterations"]

@@ -113,6 +113,10 @@ def subject_maps(
         ):
             given[f"{field}_files"] = files(subjects, "variance")
             given[f"{field}_volumes"] = volumes(subjects)
+    quality = [column for column in selection.kept_by if column in settings.quality]
+    scores = [column for column in selection.kept_by if column not in quality]
+    for field, columns in (("kept_by", scores), ("quality", quality)):
+        given[field] = columns or None
     most = max(len(rows) for _, rows in selection.subjects)
     return node(
         SubjectMaps(),
@@ -216,7 +220,7 @@ def _parcels(
     return parcels(
         roi.name,
         people,
-        _atlas(region, at) if region.regrid else at.path(region.atlas),
+        _atlas(region, at, numbers) if region.regrid else at.path(region.atlas),
         region.describe(),
         numbers,
         table,
@@ -226,8 +230,8 @@ def _parcels(
     )
 
 
-def _atlas(region: Labels, at: Places) -> Node:
-    """The node that brings an atlas to the grid of the maps, or of each subject's map."""
+def _atlas(region: Labels, at: Places, numbers: tuple[int, ...]) -> Node:
+    """The node that brings labels of an atlas to the grid of the maps, or of each subject's."""
     if len(at.references) == 1:
         atlas = Node(RegridLabels(), name="atlas", mem_gb=0.3)
         atlas.inputs.reference = at.references[0]
@@ -236,5 +240,7 @@ def _atlas(region: Labels, at: Places) -> Node:
         atlas = MapNode(RegridLabels(), iterfield=fields, name="atlas", mem_gb=0.3)
         atlas.inputs.reference = list(at.references)
     atlas.inputs.in_file = at.path(region.atlas)
+    if numbers:
+        atlas.inputs.labels = list(numbers)
     atlas.config = {"execution": {"hash_method": "content"}}
     return atlas

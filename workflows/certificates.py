@@ -63,11 +63,11 @@ def read_certificate(read: Reader, table: dict[str, Any], tested: Selection) -> 
             got=str(table["between"]),
         )
     covariance = between.astype(float)
-    if not np.allclose(covariance, covariance.T) or np.linalg.eigvalsh(covariance).min() < -1e-9:
+    if not _is_covariance(covariance):
         raise InputError(
             "between is no covariance of the regressors",
             where=read.where("between"),
-            expected="a symmetric matrix without negative eigenvalues",
+            expected="a symmetric matrix without negative eigenvalues, not all zero",
             got=str(table["between"]),
         )
     noise = read.one_of(table, "noise", ("white", "ar1"), ...)
@@ -94,6 +94,16 @@ def read_certificate(read: Reader, table: dict[str, Any], tested: Selection) -> 
             f"between-subject covariance: {source}",
         ),
     )
+
+
+def _is_covariance(matrix: Any) -> bool:
+    """Whether a square matrix is symmetric, finite, not all zero, and without a negative eigenvalue
+    beyond rounding."""
+    largest = np.abs(matrix).max()
+    if not 0 < largest < np.inf:
+        return False
+    scaled = matrix / largest
+    return bool(np.allclose(scaled, scaled.T) and np.linalg.eigvalsh(scaled).min() > -1e-9)
 
 
 def _read_design(path: Path) -> tuple[list[str], Any]:

@@ -1,58 +1,125 @@
 """The shape check of every mask from outside: does it follow the contour of the tested maps?
 
+Every label of a family is a mask of its own. Its p is that of the label alone: an adjustment over
+a hundred labels would ask for a p below any that the number of places in a map allows, so it is
+said instead how many are flagged, and how many would be by chance. Where each subject has a mask
+of their own, or maps on a grid of their own, there is no one boundary in one group map to look at.
+
 Nobody can see in a file how it was made. A mask that was thresholded from the study's own data
 shows it by its boundary (`nodes.contour`). A flag is a report beside the result, no refusal.
 """
 
 from __future__ import annotations
 
+import math
 import tempfile
-from collections.abc import Sequence
+from collections.abc import Iterable, Iterator, Sequence
 from contextlib import chdir
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 from nipype import Workflow
 
-from ..nodes.contour import Contour, boundary, contour
+from ..nodes.contour import FLAG, Boundary, Contour, boundary, contour
 from ..nodes.errors import InputError
 from ..nodes.groupmaps import Missing, t_from_sums
-from ..nodes.images import Floats, check_same_grid, geometry_of, open_image, read_map, read_mask
+from ..nodes.images import (
+    Bools,
+    Floats,
+    check_same_grid,
+    geometry_of,
+    open_image,
+    read_labels,
+    read_map,
+    read_mask,
+)
 from ..nodes.space import Grid
 from .build import subject_maps
 from .collect import RoiOutput
 from .guard import GuardPlugin
+from .ledger import Ledger, shelf_of
+from .origins import Recorded, mask_set
+from .regions import Whole
 from .rois import Roi
 from .settings import Settings
 
 _LEAST_PEOPLE = 4  # with three, eight flips
+_FLIPS_OF_MANY = 299  # of each label of a family: enough for p = .01
+_MOST_VALUES = 20_000_000  # held at once: 160 MB
 TOO_SMALL = "The mask's boundary has too few voxels with data for the shape check."
 
 
 def check_masks(outputs: Sequence[RoiOutput], settings: Settings) -> None:
-    """Check every region that came from outside and is one mask for all, where maps share a grid.
+    """Check every region that came from outside and is one mask, or one label image, for all.
 
     Its figures go into the records: ``contour``, ``contour_p``, ``contour_step_p``, and a
-    sentence when it is flagged.
+    sentence when it is flagged, or cannot be checked.
     """
-    if settings.maps.own_grids:
-        return
     done: dict[tuple[Path, tuple[Path, ...]], Contour | None] = {}
     for output in outputs:
-        if len(output.searched) != 1 or output.roi.variant_of:
+        if output.roi.variant_of or isinstance(output.roi.region, Whole):
             continue
-        key, people = (output.searched[0], output.maps), _people(output.roi, len(output.maps))
-        if len(set(people)) < _LEAST_PEOPLE:
+        people = _people(output.roi, len(output.maps))
+        if why := _cannot(output, settings, people):
+            for record in output.records:
+                record["sentence"] += f" Shape check: not made, because {why}."
             continue
+        if output.roi.each_label:
+            _check_family(output, people, settings)
+            continue
+        if len(output.searched) != 1:
+            continue
+        key = (output.searched[0], output.maps)
         if key not in done:
             done[key] = contour_in_files(*key, people, settings.maps.marked, settings.seed)
-        found = done[key]
-        for record in output.records if found is not None else ():
-            assert found is not None, "the loop is empty otherwise"
-            record["contour"], record["contour_p"] = found.share, found.p
-            record["contour_step_p"] = found.p_steps
-            if found.flagged:
-                record["sentence"] += f" {found.describe()}"
+        for record in output.records:
+            _tell(record, done[key])
+
+
+def _cannot(output: RoiOutput, settings: Settings, people: Sequence[str]) -> str:
+    """Why a region is not checked; "" when it can be."""
+    if settings.maps.own_grids:
+        return "the maps share no grid, and so have no group map"
+    if output.roi.region.of_each:
+        return "each subject has a region of their own, and the group map's contour is no one's"
+    if len(set(people)) < _LEAST_PEOPLE:
+        return f"it needs {_LEAST_PEOPLE} independent subjects"
+    return ""
+
+
+def _check_family(output: RoiOutput, people: Sequence[str], settings: Settings) -> None:
+    """Check every label that is a region of its own."""
+    (image,) = output.masks
+    volume, _ = read_labels(image.path)
+    numbers = [record["parcel"] for record in output.records]
+    made = contours_in_files(
+        (volume == number for number in numbers),
+        output.maps,
+        people,
+        settings.maps.marked,
+        settings.seed,
+        _FLIPS_OF_MANY,
+    )
+    flagged = sum(found is not None and found.flagged for found in made)
+    could = sum(found is not None for found in made)
+    for record, found in zip(output.records, made, strict=True):
+        _tell(record, found)
+        if found is not None and found.flagged:
+            record["sentence"] += (
+                f" It is one of {flagged} such among the {could} labels that were checked; by "
+                f"chance alone {FLAG * could:.2g} would be."
+            )
+
+
+def _tell(record: dict[str, Any], found: Contour | None) -> None:
+    """Put the figures of a check into a record."""
+    if found is None:
+        return
+    record["contour"], record["contour_p"] = found.share, found.p
+    record["contour_step_p"] = found.p_steps
+    if found.flagged:
+        record["sentence"] += f" {found.describe()}"
 
 
 def _people(roi: Roi, n_maps: int) -> list[str]:
@@ -86,17 +153,41 @@ def contour_in_files(
     InputError
         When the mask is empty or on another grid; for fewer than four people.
     """
+    inside, _ = read_mask(mask, (str(maps[0]), geometry_of(open_image(maps[0]))))
+    try:
+        (found,) = contours_in_files([inside], maps, people, missing, seed)
+    except InputError as error:
+        raise error.at(str(mask)) from error
+    return found
+
+
+def contours_in_files(
+    masks: Iterable[Bools],
+    maps: Sequence[Path],
+    people: Sequence[str],
+    missing: Missing | None = None,
+    seed: int = 0,
+    n: int = 499,
+) -> list[Contour | None]:
+    """The shape check of several masks on the same maps, which need not fit into memory.
+
+    Parameters
+    ----------
+    masks : iterable of (x, y, z) bool
+        On the maps' grid.
+    maps, people, missing, seed : as in `contour_in_files`
+    n : int
+        Flips, and placements at most.
+    """
     missing = missing or Missing()
     labels = sorted(set(people))
     if len(labels) < _LEAST_PEOPLE:
         raise InputError(
             "too few people for the shape check",
-            where=str(mask),
             expected=f"at least {_LEAST_PEOPLE} who count as independent",
             got=str(len(labels)),
         )
     like = geometry_of(open_image(maps[0]))
-    inside, _ = read_mask(mask, (str(maps[0]), like))
 
     def averaged(label: str) -> Floats:
         mine = [path for path, person in zip(maps, people, strict=True) if person == label]
@@ -105,7 +196,8 @@ def contour_in_files(
         made: Floats = np.where(present, np.mean(read, axis=0), np.nan).ravel()
         return made
 
-    S, Q = np.zeros(inside.size), np.zeros(inside.size)
+    size = math.prod(like.shape)
+    S, Q = np.zeros(size), np.zeros(size)
     for label in labels:  # one map after the other: the study need not fit into memory
         values = averaged(label)
         S += values
@@ -113,12 +205,33 @@ def contour_in_files(
     t = t_from_sums(float(len(labels)), S, Q)
     used = np.isfinite(S) & np.isfinite(t)
     grid = Grid(like.shape, np.array(like.affine), used)
-    edge = boundary(inside.ravel()[used], grid)
-    if edge is None:
-        return None
-    places = grid.voxels[edge.features]
-    effects = np.stack([averaged(label)[places] for label in labels])
-    return contour(t[used], effects, edge, grid, labels, seed)
+    edges = [boundary(inside.ravel()[used], grid) for inside in masks]
+    made: list[Contour | None] = []
+    for some in _batches(edges, len(labels)):
+        here = [edge.features for edge in some if edge is not None]
+        places = np.unique(np.concatenate(here)) if here else np.empty(0, int)
+        effects = np.stack([averaged(label)[grid.voxels[places]] for label in labels])
+        for edge in some:
+            if edge is None:
+                made.append(None)
+                continue
+            own = effects[:, np.searchsorted(places, edge.features)]
+            made.append(contour(t[used], own, edge, grid, labels, seed, n))
+    return made
+
+
+def _batches(edges: Sequence[Boundary | None], n_people: int) -> Iterator[list[Boundary | None]]:
+    """The boundaries in their order, in parts whose values fit into memory together."""
+    some: list[Boundary | None] = []
+    held = 0
+    for edge in edges:
+        own = 0 if edge is None else len(edge.features) * n_people
+        if some and held + own > _MOST_VALUES:
+            yield some
+            some, held = [], 0
+        some.append(edge)
+        held += own
+    yield some
 
 
 def check_mask(mask: Path, settings: Settings, only: str = "") -> list[tuple[Roi, Contour | None]]:
@@ -153,6 +266,33 @@ def check_mask(mask: Path, settings: Settings, only: str = "") -> list[tuple[Roi
         if (roi.name == only) if only else roi.tested not in [one.tested for one, _ in made]:
             made.append((roi, _on_maps_of(roi, mask, settings)))
     return made
+
+
+def known_as(mask: Path, settings: Settings) -> str:
+    """What the ledgers in the study's folder know of a mask's voxels, in a sentence; "" if nothing.
+
+    Parameters
+    ----------
+    mask : Path
+    settings : Settings
+
+    Raises
+    ------
+    InputError
+        For a ledger that was changed, or an empty mask.
+    """
+    shelf = shelf_of(settings.ledger, Ledger(settings.ledger).sound())
+    recorded = Recorded(shelf, settings.study)
+    chosen = [one for one in recorded.made if one.chosen_on]
+    equal = recorded.equal([mask_set(mask)], chosen) if chosen else []
+    if not equal:
+        return ""
+    ledger = shelf.name_of(equal[0].entry) or settings.ledger.name
+    return (
+        f"This mask is one of the study's own: it has the very voxels of {equal[0].name}, which a "
+        f"run chose on data of this study and recorded in {ledger}. It derives from these data, "
+        "whatever its contour shows."
+    )
 
 
 def _on_maps_of(roi: Roi, mask: Path, settings: Settings) -> Contour | None:

@@ -12,7 +12,8 @@ from ..nodes.scoreunits import UNNAMED
 from ..nodes.touch import UnitTable
 from .study import Doubt
 
-_WIDTH = 84  # of a line of a refusal's reason and cure
+_WIDTH = 66  # of what is said beside a head of 12: with "10. " before it, 80 columns
+_MOST = 3  # doubts that are told in full
 APART, CERTIFIED, LEAK, UNPROVEN = "apart", "certified", "leak", "unproven"
 
 
@@ -73,7 +74,7 @@ class Finding:
     def describe(self, table: UnitTable) -> str:
         """The finding in words: meeting, fold, shared units, origins, both paths, cure."""
         fold = "" if self.item is None else f", element {self.item}"
-        parts = [("shared", [table.describe(self.shared, most=2)] if self.shared else [])]
+        parts = [("shared", _wrapped(table.describe(self.shared, most=2)) if self.shared else [])]
         parts += [("origin", _wrapped("; ".join(self.made_of)))]
         parts += [("region", list(self.mask_path)), ("data", list(self.data_path))]
         parts += [("cure", _wrapped(self.cure))]
@@ -93,11 +94,23 @@ class Finding:
 
 def _wrapped(text: str, width: int = _WIDTH) -> list[str]:
     """Lines in which no name of a file or an option is broken."""
-    return textwrap.wrap(text, width, break_on_hyphens=False)
+    return textwrap.wrap(text, width, break_on_hyphens=False, break_long_words=False)
 
 
 class Findings(list[Finding]):
-    """All findings of a graph; in a notebook, a table with a row per node."""
+    """All findings of a graph; in a notebook, a table with a row per node.
+
+    Attributes
+    ----------
+    warnings : list of str
+        What was not judged, although values of an extraction go there.
+    """
+
+    warnings: list[str]
+
+    def __init__(self, findings: Iterable[Finding] = (), warnings: Iterable[str] = ()) -> None:
+        super().__init__(findings)
+        self.warnings = list(warnings)
 
     def _repr_html_(self) -> str:
         rows = []
@@ -147,7 +160,16 @@ def undeclared(
     listed = sorted(unknown)
     doubted = [doubts[what] for what in listed if what in doubts]
     others = [what for what in listed if what not in doubts]
-    reasons, cures = [one.reason for one in doubted], [one.cure for one in doubted]
+    told = doubted[:_MOST]
+    reasons = [one.reason for one in told]
+    commands: dict[str, list[str]] = {}
+    for one in told:
+        commands.setdefault(one.cure, []).extend([one.command] if one.command else [])
+    cures = [
+        f"{cure}: {'; '.join(listed)}" if listed else cure for cure, listed in commands.items()
+    ]
+    if doubted[_MOST:]:
+        reasons.append(f"and so are {len(doubted) - _MOST} more")
     if others:
         reasons.append(f"nobody has declared what {', '.join(others[:3])} derives from")
         cures.append(otherwise or declare(others))
@@ -172,3 +194,12 @@ def several(table: UnitTable, chosen: int, tested: int) -> bool:
     if not chosen & own:
         return False
     return bool(chosen & ~own) or len(table.people_of(tested)) > 1
+
+
+def on_the_same(table: UnitTable, chosen: int, tested: int) -> bool:
+    """Whether a mask was chosen on just those data of the tested subjects that are tested."""
+    measured = measured_in(table, tested)
+    tested &= measured
+    subs = {unit.sub for unit in table.units_of(tested)}
+    theirs = [unit for unit in table.units_of(chosen & measured) if unit.sub in subs]
+    return bool(tested) and table.bits(theirs) == tested

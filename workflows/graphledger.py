@@ -36,7 +36,7 @@ from .collect import peaks_of
 from .digests import digest, digest_text
 from .findings import Finding
 from .judge import meetings_at, place_of, source_files
-from .ledger import WAIVER, Chain, Entry, Ledger
+from .ledger import WAIVER, Chain, Entry, Ledger, Shelf, shelf_of
 from .literals import plain
 from .looks import (
     Look,
@@ -51,12 +51,14 @@ from .looks import (
 )
 from .origins import (
     FWHM_MM,
+    Found,
     Recorded,
     Selected,
     atlas_sets,
     declaration,
     is_volume,
     known_of,
+    labels_in,
     new_declarations,
     new_waivers,
     of_origin,
@@ -111,7 +113,7 @@ class GraphLedger:
 
     def __init__(self, path: Path, study: Study) -> None:
         self.ledger, self.study = Ledger(path.absolute()), study
-        self._recorded = Recorded(Chain(), study.table)
+        self._recorded = Recorded(Shelf(Chain()), study)
         self._regions: dict[str, Selected] = {}  # by their files
 
     def open(self, *, write: bool) -> None:
@@ -128,7 +130,8 @@ class GraphLedger:
             shlex.quote(self.study.relative(self.study.tables[0])) if self.study.tables else "TABLE"
         )
         options = f" --study {table} --ledger {shlex.quote(self.ledger.path.name)}"
-        self._recorded = Recorded(self.ledger.sound(), self.study.table, options)
+        there = shelf_of(self.ledger.path, self.ledger.sound())
+        self._recorded = Recorded(there, self.study, options)
         self._regions = {}
 
     # -- before -----------------------------------------------------------------------------
@@ -149,6 +152,7 @@ class GraphLedger:
                     volume[0].digest,
                     derived_from=tuple(u for origin in origins for u in origin.derived_from),
                     call=shlex.quote(file),
+                    voxels=(volume[0].digest,),
                 )
                 more += known_of(chosen, volume, tested, self._recorded, _smooth)
         return replace(self.study, origins=tuple(dict.fromkeys((*self.study.origins, *more))))
@@ -223,29 +227,35 @@ class GraphLedger:
         volume = _volume(path, labels=True)
         if volume is None:
             return
-        chosen = self._named(_maker(ancestry, part), path, part, volume[0])
+        chosen, single = self._named(_maker(ancestry, part), path, part, volume[0])
         self._regions[path] = chosen
-        yield from known_of(chosen, volume, tested, self._recorded, _smooth)
+        yield from known_of(chosen, [*volume, *single], tested, self._recorded, _smooth)
 
-    def _named(self, node: Any, path: str, part: Tree, voxels: VoxelSet) -> Selected:
-        """A region as `sequester declare` would name it, if it can."""
-        sources = tuple(sorted(part.touch.origins))
+    def _named(self, node: Any, path: str, part: Tree, voxels: VoxelSet) -> Found:
+        """A region as `sequester declare` would name it, if it can; labels of it, each."""
+        sources, here = tuple(sorted(part.touch.origins)), (voxels.digest,)
         interface = None if isinstance(node, MapNode) else getattr(node, "interface", None)
         if isinstance(interface, SphereMask):
             at, radius = interface.inputs.centre, interface.inputs.radius
             centre, selects = " ".join(f"{x:g}" for x in at), sphere_digest(at, radius)
             what, call = f"sphere at {centre}", f"--centre {centre} --radius {radius:g}"
-            return Selected(what, sources, (), selects, call=call)
+            return Selected(what, sources, (), selects, call=call, voxels=here), []
         if isinstance(interface, LabelMask) and self.study.is_declared(interface.inputs.in_file):
             file, numbers = self.study.relative(interface.inputs.in_file), interface.numbers()
             call = f"{shlex.quote(file)} {' '.join(f'--label {number}' for number in numbers)}"
-            selects, _ = atlas_sets(Path(self.study.full(file)), numbers)
+            atlas = Path(self.study.full(file))
+            (selects, _), each = atlas_sets(atlas, numbers), labels_in(atlas)
+            single = [each[number] for number in numbers]
+            parts = tuple(one.digest for one in single)
             what = f"label {', '.join(map(str, numbers))} of {file}"
-            return Selected(what, sources, (), selects, numbers, call=call)
+            made = Selected(what, sources, (), selects, numbers, (), call, here, parts)
+            return made, single if len(single) > 1 else []
         if self.study.is_declared(path):
             file = self.study.relative(path)
-            return Selected(file, sources, (), voxels.digest, call=shlex.quote(file))
-        return Selected(f"a region made by {place_of(part)}", sources, (), voxels.digest)
+            made = Selected(file, sources, (), voxels.digest, call=shlex.quote(file), voxels=here)
+            return made, []
+        what = f"a region made by {place_of(part)}"
+        return Selected(what, sources, (), voxels.digest, voxels=here), []
 
     # -- after ------------------------------------------------------------------------------
 
@@ -258,7 +268,6 @@ class GraphLedger:
             Its looks as they were first recorded: ``node``, ``statistic``, ``looks`` (how many
             have read some of these voxels in some of these data), ``notes`` and more.
         """
-        table = self.study.table
         read = [one for node in ancestry.nodes for one in _read(ancestry, node, findings)]
         sets = {mask: _volume(mask) for mask in dict.fromkeys(one.mask for one in read)}
         known = {mask: volume[0] for mask, volume in sets.items() if volume is not None}
@@ -274,16 +283,16 @@ class GraphLedger:
         keys = [look.key for look in taken]
 
         def entries(chain: Chain) -> list[dict[str, Any]]:
-            recorded = Recorded(chain, table)
+            recorded = Recorded(shelf_of(self.ledger.path, chain), self.study)
 
             def notes(look: Look, first: Mapping[str, Entry]) -> Iterator[str]:
-                regions = [r for r in self._regions.values() if r.selects in look.body["regions"]]
+                regions = [r for r in self._regions.values() if r.key in look.body["regions"]]
                 yield from declared_late(regions, earlier_looks(look, recorded, first), recorded)
 
             return [
                 *new_declarations(stated, chain),
                 *new_waivers(waivers, chain),
-                *new_artefacts(masks, table, chain),
+                *new_artefacts(masks, self.study, chain),
                 *counted(taken, recorded, notes),
             ]
 
@@ -327,7 +336,7 @@ class GraphLedger:
                     )
                     for one in masks.values()
                 ],
-                self.study.table,
+                self.study,
             )  # fmt: skip
 
     def _looks(
@@ -370,10 +379,10 @@ class GraphLedger:
             "statistic": what,
             "contrast": sorted({name for one in enter for name in one.contrasts}),
             "tested": set_record(tested, table),
-            "of": units_body(table)["id"],
+            "of": units_body(self.study)["id"],
             "masks": digest_text(" ".join(sorted(names))),
             "maps": digest_text("\n".join(sorted({digest(m) for one in enter for m in one.maps}))),
-            "regions": sorted({r.selects for path, r in self._regions.items() if path in masks}),
+            "regions": sorted({r.key for path, r in self._regions.items() if path in masks}),
             "parameters": _said_of(nodes[0], [_settings(node) for node in nodes]),
         }
         return Look(look_body(stated, where), tested, where)

@@ -34,6 +34,7 @@ from ..nodes.touch import Touch
 from .ancestry import Ancestry, files_in, join_slot, meetings_of, node_name
 from .caches import made_from_another
 from .engines import engine
+from .findings import Findings
 from .graphledger import GraphLedger
 from .judge import Finding, judge
 from .states import States
@@ -88,7 +89,7 @@ class GuardRefused(Refused):
         super().__init__("\n".join(lines))
 
 
-def check(ancestry: Ancestry) -> tuple[list[Finding], list[Finding]]:
+def check(ancestry: Ancestry) -> tuple[Findings, list[Finding]]:
     """All findings, and those among them that may not take place."""
     findings = judge(ancestry)
     return findings, [f for f in findings if not f.allowed]
@@ -127,8 +128,8 @@ class GuardPlugin(PluginBase):
 
     Attributes
     ----------
-    findings : list of Finding
-        All verdicts of the last run.
+    findings : Findings
+        All verdicts of the last run; its `warnings` say what was not judged.
     ancestry : Ancestry or None
         The touches of the last run, with what was seen while running.
     looks : list of dict
@@ -152,7 +153,7 @@ class GuardPlugin(PluginBase):
         self.engine_args = dict(plugin_args or {})
         if self.engine == "MultiProc" and processes > 1:
             self.engine_args.setdefault("n_procs", processes)
-        self.findings: list[Finding] = []
+        self.findings = Findings()
         self.ancestry: Ancestry | None = None
         self.looks: list[dict[str, Any]] = []
         self._ledger = None if ledger is None else GraphLedger(Path(ledger), study)
@@ -182,8 +183,9 @@ class GuardPlugin(PluginBase):
         self.findings, refused = check(ancestry)
         if refused:
             raise GuardRefused(refused, self.study, ancestry=ancestry)
-        if not self.findings and not self.dry:
-            logging.getLogger("nipype.workflow").warning(NOTHING_JUDGED)
+        said = self.findings.warnings if self.findings else [NOTHING_JUDGED]
+        for warning in () if self.dry else said:
+            logging.getLogger("nipype.workflow").warning(warning)
         self._folders = self._working_folders(ancestry)
         if self.dry:
             return

@@ -8,7 +8,9 @@ Levels, at a meeting of mask M with data D, both restricted to values of the tes
    declared to be about these subjects only: then apart at run level.
 3. No shared subject: apart at subject level.
 
-A certificate that holds (orthogonal contrasts) makes a shared unit harmless: certified.
+A certificate that holds (orthogonal contrasts) makes a shared unit harmless: certified. It speaks
+of two contrasts of the same data, so it covers a mask that was chosen on exactly the units of the
+tested subjects that are tested, on maps of another contrast.
 
 An unknown file on either side, or a mask nobody declared, leaves the meeting unproven. A leak
 may run only into values marked biased, which no statistic accepts.
@@ -21,16 +23,21 @@ others are cross-fitted.
 
 from __future__ import annotations
 
+import os
+import re
 from collections.abc import Iterator
 from dataclasses import replace
 from typing import Any
 
+from ..nodes.errors import InputError
+from ..nodes.images import n_volumes, open_image
 from ..nodes.interfaces.contracts import as_stated
 from ..nodes.orthogonality import Certificate
 from ..nodes.rules import Inputs, Leaf, Meeting, Tree, lost_precision, path_to
 from ..nodes.scoreunits import UNNAMED
 from ..nodes.touch import UnitTable
-from .ancestry import Ancestry, flat, iterations, meetings_of, node_name
+from .ancestry import SEEN, Ancestry, flat, iterations, meetings_of, node_name
+from .digests import digest, map_digest
 from .findings import (
     APART,
     CERTIFIED,
@@ -40,23 +47,27 @@ from .findings import (
     Finding,
     Findings,
     measured_in,
+    on_the_same,
     several,
     these_subjects,
     undeclared,
 )
 from .statistics import judge_statistic
 from .study import Study
+from .untold import untold
 
 __all__ = ["APART", "CERTIFIED", "LEAK", "UNPROVEN", "Finding", "judge"]
+
+_PLACE = re.compile(rf"(.*?)(?: volume (\d+))?(?:{re.escape(SEEN)})?", re.DOTALL)
 
 
 def _subs(table: UnitTable, bits: int) -> set[str]:
     return {unit.sub for unit in table.units_of(bits)}
 
 
-def judge(ancestry: Ancestry) -> list[Finding]:
+def judge(ancestry: Ancestry) -> Findings:
     """All findings of a graph, meetings in the order in which they would run."""
-    findings = Findings()
+    findings = Findings(warnings=[one.describe() for one in untold(ancestry)])
     for node in ancestry.nodes:
         meeting, statistic = meetings_of(node.interface)
         if meeting is not None:
@@ -133,19 +144,19 @@ def _meet(
     shared = table.overlapping(of_mask) & of_data
     verdict, level, reason, cure = APART, "", "", ""
     made_of: tuple[str, ...] = ()
-    both = source_files(mask) & source_files(data) if shared or certificate is not None else set()
-    if (
-        isinstance(certificate, Certificate)
-        and certificate.holds
-        and of_mask & own
-        and not (both or unknown)
-    ):
+    both = same_files(study, mask, data) if shared or certificate is not None else set()
+    if not both and certificate is not None:
+        both = same_maps(study, mask, data)
+    lacks = ""
+    if isinstance(certificate, Certificate) and of_mask & own:
+        lacks = _not_covered(study, certificate, mask, data, both)
+    if isinstance(certificate, Certificate) and of_mask & own and not (lacks or unknown):
         verdict, level = CERTIFIED, "subject"
         reason = f"chosen on the tested data by an orthogonal contrast: {certificate.describe()}"
     elif shared:
         verdict = LEAK
         made_of = () if both else _made_of(study, mask, shared)
-        reason, cure = _circular(table, mask, shared, both, made_of, certificate)
+        reason, cure = _circular(table, mask, shared, both, made_of)
     elif several(table, of_mask, of_data) and not these_only:
         verdict, level, shared = LEAK, "subject", of_mask & own
         reason, cure = _same_people(table, mask, of_mask, of_data)
@@ -170,6 +181,8 @@ def _meet(
     else:
         level, reason = "subject", "the mask was chosen without any data of the tested subjects"
     leak = verdict == LEAK
+    if leak and lacks:
+        reason += f"; {lacks}"
     # One unit on each side for the two ways: the same, or two that overlap (or one person's).
     to_data = shared & -shared if leak and not level else of_data & -of_data
     to_mask = table.overlapping(to_data) & of_mask if leak and not level else shared
@@ -213,7 +226,6 @@ def _circular(
     shared: int,
     both: set[str],
     made_of: tuple[str, ...],
-    certificate: object,
 ) -> tuple[str, str]:
     """Reason and cure, when the tested data have chosen; `both` are files of either side."""
     reason = "the mask was chosen on the data it would be tested on"
@@ -236,13 +248,50 @@ def _circular(
             "choose on that map in held-out subjects (plan k-fold with choose_on), or show "
             "that the two contrasts are orthogonal (plan orthogonal-contrast)"
         )
-    if isinstance(certificate, Certificate):
-        reason += (
-            f"; no certificate covers {min(both)}, which chose and is tested"
-            if both
-            else f", and the certificate does not hold: {certificate.describe()}"
-        )
     return reason, cure
+
+
+def _not_covered(
+    study: Study, certificate: Certificate, mask: Leaf, data: Leaf, both: set[str]
+) -> str:
+    """Why a certificate does not cover a meeting; "" when it does."""
+    table = study.table
+    measured = measured_in(table, data.touch.values)
+    of_data = data.touch.values & measured
+    own = table.company(of_data) & measured
+    if both:
+        return "no certificate covers a map which chose and is tested"
+    if not certificate.holds:
+        return f"the certificate does not hold: {certificate.describe()}"
+    if (mask.touch.selected | data.touch.selected) & own:
+        return "the certificate says nothing of what kept or left out subjects"
+    if not on_the_same(table, mask.touch.values, data.touch.values):
+        return (
+            "the certificate is about the data that are tested, and the mask was not chosen on "
+            "exactly these"
+        )
+    chose, tested = _contrasts(study, mask, own), _contrasts(study, data, own)
+    if "" in chose | tested:
+        return (
+            "the certificate is about two contrasts, and the study table does not say of which "
+            "each of these maps is: fill its contrast column"
+        )
+    if chose & tested:
+        return (
+            f"the certificate is about two contrasts, and {min(chose & tested)} chose and is tested"
+        )
+    return ""
+
+
+def _contrasts(study: Study, leaf: Tree, units: int) -> set[str]:
+    """Of which contrasts the files are by which an element touches some units; "" is unknown."""
+    found: set[str] = set()
+    for source in _sources(leaf):
+        if source.touch.values & units:
+            path, volume = _file(source.place)
+            rows = study.rows_of(path, volume)
+            found |= {row.contrast for row in rows} or {""}
+    return found
 
 
 def _same_people(table: UnitTable, mask: Leaf, of_mask: int, of_data: int) -> tuple[str, str]:
@@ -276,6 +325,53 @@ def _same_people(table: UnitTable, mask: Leaf, of_mask: int, of_data: int) -> tu
 def source_files(leaf: Tree) -> set[str]:
     """The files whose values an element derives from."""
     return {source.place for source in _sources(leaf)}
+
+
+def same_files(study: Study, mask: Tree, data: Tree) -> set[str]:
+    """The tested files that a mask derives from, by whatever name, link or copy it knew them."""
+    touching = study.table.overlapping(data.touch.values)
+    chose = {_content(study, leaf.place) for leaf in _sources(mask) if leaf.touch.values & touching}
+    return {
+        place
+        for place in source_files(data)
+        for content, volume in [_content(study, place)]
+        if any(content == c and (None in (volume, v) or volume == v) for c, v in chose)
+    }
+
+
+def same_maps(study: Study, mask: Tree, data: Tree) -> set[str]:
+    """The tested maps that a mask derives from, however their files store them."""
+    touching = study.table.overlapping(data.touch.values)
+    chose: set[str] = set()
+    for leaf in _sources(mask):
+        if leaf.touch.values & touching:
+            chose |= _maps(study, leaf.place)
+    return {place for place in source_files(data) if chose & _maps(study, place)}
+
+
+def _maps(study: Study, place: str) -> set[str]:
+    """What the maps of a place say; nothing for what is no image: its bytes were compared."""
+    name, volume = _file(place)
+    path = os.path.realpath(study.full(name))
+    try:
+        volumes = range(n_volumes(path, open_image(path))) if volume is None else [int(volume)]
+        return {map_digest(path, one) for one in volumes}
+    except InputError:
+        return set()
+
+
+def _content(study: Study, place: str) -> tuple[str, str | None]:
+    """What stands in a file, and which of its volumes is meant."""
+    name, volume = _file(place)
+    path = os.path.realpath(study.full(name))
+    return digest(path) if os.path.isfile(path) else path, volume
+
+
+def _file(place: str) -> tuple[str, str | None]:
+    """The file of a place, and the volume in it that is meant."""
+    found = _PLACE.fullmatch(place)
+    assert found is not None, "every text is a place"
+    return found[1], found[2]
 
 
 def _sources(leaf: Tree) -> Iterator[Tree]:

@@ -196,7 +196,7 @@ def read_toml(path: Path) -> tuple[dict[str, Any], Reader]:
             remedy="give a STUDY.toml",
         )
     try:
-        text = path.read_text(encoding="utf-8")
+        text = path.read_text(encoding="utf-8-sig")  # some editors begin with a byte order mark
     except UnicodeDecodeError as error:
         raise InputError(
             "unreadable study file",

@@ -8,7 +8,7 @@ another way make another. A comparison of regions is a look of its own, at all t
 
 The count of a result is that of the different looks that read some of its voxels in some of its
 units, itself and those of its own run included, as of the run in which it was first made: so a
-repetition gives the same bytes.
+repetition gives the same bytes. Looks in ledgers that lie beside the study's own are counted too.
 
 Looks are counted and written under the ledger's lock, before the results are: of two runs at the
 same time, the second counts the first. A run that dies while it writes its results has looked,
@@ -31,12 +31,13 @@ from .collect import RoiOutput
 from .comparisons import Comparison
 from .digests import digest, digest_text
 from .judge import Finding
-from .ledger import ARTEFACT, LOOK, UNITS, WAIVER, Chain, Entry
+from .ledger import ARTEFACT, LOOK, UNITS, WAIVER, Chain, Entry, Shelf
 from .origins import (
-    EXPLAINED,
+    LEFT_OUT,
     Recorded,
     Selected,
     given_regions,
+    left_out,
     set_record,
     tested_units,
     units_body,
@@ -44,6 +45,7 @@ from .origins import (
 from .plans import A_PRIORI
 from .rois import Roi
 from .settings import Settings
+from .study import Study
 
 
 @dataclass(frozen=True)
@@ -90,20 +92,20 @@ def artefacts(
         for one in read
         if one.output.roi.plan != A_PRIORI and one.sets
     ]
-    return new_artefacts(made, settings.study.table, chain)
+    return new_artefacts(made, settings.study, chain)
 
 
 def new_artefacts(
-    made: Sequence[dict[str, Any]], table: UnitTable, chain: Chain
+    made: Sequence[dict[str, Any]], study: Study, chain: Chain
 ) -> list[dict[str, Any]]:
     """Those entries that a ledger does not have yet, behind the numbers of the units."""
     known = {entry.body["id"] for kind in (UNITS, ARTEFACT) for entry in chain.of_kind(kind)}
-    return [body for body in (units_body(table), *made) if body["id"] not in known]
+    return [body for body in (units_body(study), *made) if body["id"] not in known]
 
 
 def _artefact(settings: Settings, one: Seen, findings: Sequence[Finding]) -> dict[str, Any]:
     """One entry for all masks of a region, its folds among them."""
-    roi, table = one.output.roi, settings.study.table
+    roi = one.output.roi
     place = f"{settings.name}.{roi.name}"
     chosen_on = _chosen_on(one.output, [f for f in findings if f.node == f"{place}.extract"])
     masks = {mask.name: mask for mask in one.output.masks}
@@ -117,7 +119,7 @@ def _artefact(settings: Settings, one: Seen, findings: Sequence[Finding]) -> dic
         MadeMask(name, masks[name].path, voxels, chosen_on[name], masks[name].peak)
         for name, voxels in zip(one.names, one.sets, strict=True)
     ]
-    return artefact(head, made, table)
+    return artefact(head, made, settings.study)
 
 
 @dataclass(frozen=True)
@@ -142,9 +144,7 @@ class MadeMask:
     peak: tuple[float, ...] = ()
 
 
-def artefact(
-    head: Mapping[str, Any], masks: Sequence[MadeMask], table: UnitTable
-) -> dict[str, Any]:
+def artefact(head: Mapping[str, Any], masks: Sequence[MadeMask], study: Study) -> dict[str, Any]:
     """The entry of masks that one node made.
 
     Parameters
@@ -152,14 +152,14 @@ def artefact(
     head : mapping
         What made them: its ``node`` and its ``parameters``, at least.
     masks : sequence of MadeMask
-    table : UnitTable
+    study : Study
     """
-    everything = 0
+    table, everything = study.table, 0
     for mask in masks:
         everything |= mask.chosen_on
     body = {
         **head,
-        "of": units_body(table)["id"],
+        "of": units_body(study)["id"],
         "chosen_on": set_record(everything, table),
         "masks": [
             {
@@ -198,7 +198,7 @@ def _parameters(roi: Roi, settings: Settings) -> dict[str, Any]:
     stated = (roi.procedure, settings.maps, roi.interval, roi.each_label, roi.these_subjects)
     varied = [other.setting for other in settings.rois if other.variant_of == roi.name]
     return {
-        "rule": roi.region.describe() if roi.procedure is None else roi.procedure.describe(),
+        "rule": roi.rule,
         "search": roi.region.describe(),
         "value": roi.summary,
         "flips": roi.n_flips,
@@ -228,7 +228,7 @@ class Look:
         return str(self.body["key"])
 
 
-def looks(settings: Settings, read: Sequence[Seen], chain: Chain) -> list[dict[str, Any]]:
+def looks(settings: Settings, read: Sequence[Seen], chain: Shelf) -> list[dict[str, Any]]:
     """The entries of a run's looks: of each region, then of each comparison of regions.
 
     Those that are new are there in full, with their count.
@@ -237,12 +237,12 @@ def looks(settings: Settings, read: Sequence[Seen], chain: Chain) -> list[dict[s
     ----------
     settings : Settings
     read : sequence of Seen
-    chain : Chain
+    chain : Shelf
         Without the declarations of this run, which come before its looks.
     """
     taken = [_look(settings, one) for one in read]
     taken += [_comparison(settings, one, taken) for one in settings.comparisons]
-    recorded = Recorded(chain, settings.study.table)
+    recorded = Recorded(chain, settings.study)
     return counted(taken, recorded, partial(_notes, settings, recorded))
 
 
@@ -261,7 +261,7 @@ def counted(
     notes : callable
         From a look and the earlier ones: what a reader must know of their order.
     """
-    first = first_looks(recorded.chain)
+    own, first = first_looks(recorded.chain.own), first_looks(recorded.chain)
     others: dict[str, tuple[int, list[VoxelSet]]] = {
         key: (recorded.bits(entry.body["of"], entry.body["tested"]), unpacked(entry.body["where"]))
         for key, entry in first.items()
@@ -270,18 +270,23 @@ def counted(
         others.setdefault(one.key, (one.tested, one.where))
     made = []
     for one in taken:
-        if one.key in first:
+        if one.key in own:
             made.append({"kind": LOOK, "key": one.key, "again": True})
             continue
-        count = sum(
-            other == one.key or bool(there[0] & one.tested and _meet(one.where, there[1]))
+        count = [
+            other
             for other, there in others.items()
-        )
-        made.append({**one.body, "looks": count, "notes": list(notes(one, first))})
+            if other == one.key or (there[0] & one.tested and _meet(one.where, there[1]))
+        ]
+        named = [recorded.chain.name_of(first[key]) for key in count if key in first]
+        elsewhere = {name: named.count(name) for name in recorded.chain.beside}
+        here = sum(key not in first for key in count)
+        body = {**one.body, "looks": len(count), "of_run": here, "notes": list(notes(one, first))}
+        made.append({**body, "beside": elsewhere} if elsewhere else body)
     return made
 
 
-def first_looks(chain: Chain) -> dict[str, Entry]:
+def first_looks(chain: Chain | Shelf) -> dict[str, Entry]:
     """Every different look, as it was first recorded."""
     found: dict[str, Entry] = {}
     for entry in chain.of_kind(LOOK):
@@ -303,10 +308,10 @@ def _look(settings: Settings, one: Seen) -> Look:
         "statistic": roi.test,
         "contrast": sorted({row.contrast for row in roi.tested.rows}),
         "tested": set_record(tested, table),
-        "of": units_body(table)["id"],
+        "of": units_body(settings.study)["id"],
         "masks": digest_text(" ".join(sorted({voxels.digest for voxels in one.sets}))),
         "maps": digest_text("\n".join(sorted(f"{digest(path)} {n}" for path, n in files))),
-        "region": digest_text(" ".join(sorted(c.selects for c, _ in given_regions(settings, roi)))),
+        "region": digest_text(" ".join(sorted(c.key for c, _ in given_regions(settings, roi)))),
         "parameters": _parameters(roi, settings),
     }
     return Look(look_body(what, where), tested, where, roi)
@@ -339,7 +344,7 @@ def _comparison(settings: Settings, one: Comparison, taken: Sequence[Look]) -> L
         "statistic": one.kind,
         "contrast": sorted({name for part in parts for name in part.body["contrast"]}),
         "tested": set_record(tested, table),
-        "of": units_body(table)["id"],
+        "of": units_body(settings.study)["id"],
         "where": packed(where),
     }
     return Look(body, tested, where)
@@ -364,11 +369,7 @@ def declared_late(
     """That regions were declared after looks at the data, if any was."""
     late = 0
     for chosen in regions:
-        stated = recorded.declared(chosen)
-        late = max(
-            late,
-            sum(stated is None or not recorded.chain.precedes(stated, one) for one in earlier),
-        )
+        late = max(late, sum(not recorded.declared_before(chosen, one) for one in earlier))
     if late:
         yield f"The region was declared after {_times(late)} at these data."
 
@@ -383,9 +384,9 @@ def _notes(
     earlier = earlier_looks(look, recorded, first)
     regions = [chosen for chosen, _ in given_regions(settings, roi)]
     yield from declared_late(regions, earlier, recorded)
-    selected = {chosen.selects for chosen in regions}
+    yield from _left_out_late(settings, earlier, recorded)
     for entry in recorded.chain.of_kind(WAIVER):
-        if entry.body["field"] == EXPLAINED and entry.body["selects"] in selected:
+        if any(recorded.explains(entry, chosen) for chosen in regions):
             yield f'Why it is like a recorded mask was stated as: "{entry.body["says"]}".'
     moved = [
         one
@@ -395,6 +396,18 @@ def _notes(
     if moved:
         was = moved[-1].body["parameters"]["search"]
         yield f"{roi.name} was another region ({was}) in {_times(len(moved))} before."
+
+
+def _left_out_late(
+    settings: Settings, earlier: Sequence[Entry], recorded: Recorded
+) -> Iterator[str]:
+    """That the list of those left out was made, or changed, after looks at the data."""
+    listed = left_out(settings)
+    known = recorded.chain.of_kind(WAIVER)
+    stated = [one for one in known if one.body["field"] == LEFT_OUT and one.body["says"] == listed]
+    late = sum(not any(recorded.chain.precedes(one, look) for one in stated) for look in earlier)
+    if listed and late:
+        yield f"Who is left out was stated after {_times(late)} at these data."
 
 
 def _times(n: int) -> str:
@@ -411,10 +424,19 @@ def tell(
     for records, body in zip(results, bodies, strict=True):
         known = first[body["key"]].body if "looks" not in body else body
         said = list(known["notes"])
+        beside = known.get("beside", {})
         if known["looks"] > 1:
-            said.insert(0, f"Looks at these voxels in these data so far: {known['looks']}.")
+            here = known.get("of_run")  # not in the entries of versions before it was counted
+            there = [f"{n} of them in {name}" for name, n in beside.items() if n]
+            if here == known["looks"]:
+                there.insert(0, "all of one run")
+            elif here is not None and here > 1:
+                there.insert(0, f"{here} of them of one run")
+            more = f" ({', '.join(there)})" if there else ""
+            said.insert(0, f"Looks at these voxels in these data so far: {known['looks']}{more}.")
         for record in records:
-            record["looks"] = known["looks"]
+            record["looks"], record["beside"] = known["looks"], beside
+            record["looks_of_run"] = known.get("of_run")
             record["history"] = " ".join(known["notes"]) or None
             record["sentence"] = " ".join([record["sentence"], *said])
 
@@ -424,7 +446,7 @@ def run_entries(
     read: Sequence[Seen],
     compared: Sequence[dict[str, Any]],
     findings: Sequence[Finding],
-    chain: Chain,
+    chain: Shelf,
 ) -> list[dict[str, Any]]:
     """The entries of a run whose nodes have ended; the counts of its looks go into its results.
 
@@ -435,9 +457,9 @@ def run_entries(
     compared : sequence of dict
         The records of the study's comparisons, in their order.
     findings : sequence of Finding
-    chain : Chain
+    chain : Shelf
         What is in the ledger: nobody may write to it before these entries are written.
     """
     made = looks(settings, read, chain)
-    tell([*(one.output.records for one in read), *([one] for one in compared)], made, chain)
-    return [*artefacts(settings, read, findings, chain), *made]
+    tell([*(one.output.records for one in read), *([one] for one in compared)], made, chain.own)
+    return [*artefacts(settings, read, findings, chain.own), *made]

@@ -15,6 +15,7 @@ import os
 import re
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from functools import cache, partial
+from itertools import chain
 from pathlib import Path
 from typing import Any, Protocol
 
@@ -24,7 +25,7 @@ from ..nodes.errors import InputError
 from ..nodes.folds import Scheme
 from ..nodes.images import write_bytes
 from ..nodes.interfaces.base import SequesterInterface, isdefined
-from ..nodes.interfaces.contracts import contract_of
+from ..nodes.interfaces.contracts import contract_of, told_of
 from ..nodes.orthogonality import Certificate
 from ..nodes.rules import Leaf, Tree, leaves
 from ..nodes.touch import Touch, UnitTable
@@ -63,7 +64,10 @@ class Judged(Protocol):
 
 
 def write_record(
-    folder: str | Path, guard: Judged, reasons: Mapping[str, str] | None = None
+    folder: str | Path,
+    guard: Judged,
+    reasons: Mapping[str, str] | None = None,
+    variants: Mapping[str, str] | None = None,
 ) -> None:
     """Write the record of a workflow that ran under the guard, or was refused by it.
 
@@ -75,30 +79,36 @@ def write_record(
         files that are gone have no digest.
     reasons : mapping of str to str, optional
         By region: why its claim is narrower than usual.
+    variants : mapping of str to str, optional
+        By declared variant: the region that it varies.
 
     Raises
     ------
     InputError
         When nothing was judged yet.
     """
-    folder, record = Path(folder), record_of(guard, reasons)
+    folder, record = Path(folder), record_of(guard, reasons, variants)
     write_bytes(folder / JSON, _by_rows(record).encode())
     write_bytes(folder / TABLE, _table(record).encode())
     write_bytes(folder / PROV, _by_rows(prov_document(record)).encode())
 
 
-def record_of(guard: Judged, reasons: Mapping[str, str] | None = None) -> dict[str, Any]:
+def record_of(
+    guard: Judged,
+    reasons: Mapping[str, str] | None = None,
+    variants: Mapping[str, str] | None = None,
+) -> dict[str, Any]:
     """The content of ``record.json``.
 
     Parameters
     ----------
-    guard, reasons : as in `write_record`
+    guard, reasons, variants : as in `write_record`
 
     Returns
     -------
     dict
-        ``waivers``, ``units``, ``suffixes`` and ``people`` (parallel), ``nodes``, ``edges``,
-        ``elements`` and ``meetings``; docs/record.md lists the keys. A set of units is
+        ``waivers``, ``variants``, ``units``, ``suffixes`` and ``people`` (parallel), ``nodes``,
+        ``edges``, ``elements`` and ``meetings``; docs/record.md lists the keys. A set of units is
         ``{"units": [row numbers]}`` or ``{"all_but": [row numbers], "of": [suffixes]}``.
     """
     ancestry = guard.ancestry
@@ -116,6 +126,7 @@ def record_of(guard: Judged, reasons: Mapping[str, str] | None = None) -> dict[s
     folds = cache(partial(_fold_names, named, ancestry))
     return {
         "waivers": [row for node in nodes for row in waivers_at(ancestry, node, reasons or {})],
+        "variants": dict(variants or {}),
         "units": [str(unit) for unit in table.units],
         "suffixes": [unit.suffix for unit in table.units],
         "people": [person for i in range(len(table.units)) for person in table.people_of(1 << i)],
@@ -167,8 +178,11 @@ def waivers_at(
     if meeting is not None and settings.get(meeting.biased) is True:
         yield waiver("biased", "read on the data that chose the region: its values are biased")
     stated, kind = contract_of(node.interface), type(node.interface)
-    if stated.describe() and not isinstance(node.interface, SequesterInterface):
-        yield waiver("contract", stated.describe())
+    nothing = "neither an extraction nor a statistic" if told_of(node.interface) else ""
+    if (says := stated.describe() or nothing) and not isinstance(
+        node.interface, SequesterInterface
+    ):
+        yield waiver("contract", says)
     elif stated.rules and not kind.__module__.startswith(f"{_OURS}."):
         yield waiver("rules", f"{kind.__name__} has {stated.describe()} of its own")
 
@@ -272,6 +286,11 @@ def _meeting(
         "geometry": encoded(finding.geometry_units, table),
         "shared": encoded(finding.shared, table),
         "origins": list(finding.origins),
+        "made_of": list(finding.made_of),
+        "lost": [
+            {"node": at, "reason": shorten(reason), "cure": shorten(cure)}
+            for at, reason, cure in finding.lost
+        ],
         "mask_path": [shorten(place) for place in finding.mask_path],
         "data_path": [shorten(place) for place in finding.data_path],
         "mask_place": shorten(finding.mask_place),
@@ -342,11 +361,10 @@ def _shortener(ancestry: Ancestry, nodes: Sequence[Any]) -> Shorten:
         named = f".../{path.name}" if place is None else _inside(folders[str(place)], path, place)
         return named + found[2]
 
+    shown = (tree for inputs in ancestry.inputs.values() for tree in inputs.trees.values())
     told = {
         text: short(text)
-        for inputs in ancestry.inputs.values()
-        for tree in inputs.trees.values()
-        for leaf in leaves(tree)
+        for leaf in chain(chain.from_iterable(map(leaves, shown)), ancestry.seen)
         for text in (leaf.place, *leaf.touch.unknown)
         if text.startswith("/")
     }

@@ -16,8 +16,8 @@ from typing import Any
 from nipype import Workflow
 
 from ..nodes.errors import InputError, SequesterError
+from .findings import Findings
 from .guard import GuardPlugin
-from .judge import Finding
 from .keys import read_toml
 from .run import engine_quiet
 from .settings import origin_tables
@@ -106,7 +106,7 @@ def study_of(table: Path, origins: Path | None = None) -> Study:
     return replace(study, origins=tuple(origin_tables(read, toml, study)))
 
 
-def check_workflow(workflow: Workflow, study: Study, ledger: Path | None = None) -> list[Finding]:
+def check_workflow(workflow: Workflow, study: Study, ledger: Path | None = None) -> Findings:
     """Judge a workflow; nothing runs, and nothing is written to its folders or to its ledger.
 
     Raises

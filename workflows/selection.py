@@ -3,6 +3,9 @@
 A selection names rows by the values of their columns. Per subject, the maps of its rows (runs)
 are averaged; those of `minus` are averaged and subtracted (paired differences); the difference
 is given in percent of the average of `baseline`.
+
+Columns of BIDS entities, files and people say which maps are meant. Any other column says
+something of the subjects: whoever is selected by it was chosen by it, and the selection says so.
 """
 
 from __future__ import annotations
@@ -14,7 +17,7 @@ from typing import Any
 from ..nodes.errors import InputError
 from ..nodes.touch import ENTITIES
 from .keys import Reader
-from .study import Row, Study
+from .study import NAMING, Row, Study
 
 _MANY = 8
 # Per subject, sorted by label: the rows whose maps are averaged.
@@ -32,12 +35,15 @@ class Selection:
         Of the same labels; empty when nothing is subtracted, or nothing divided by.
     left_out : tuple of Row
         Selected, but with an exclude_reason.
+    kept_by : tuple of str
+        The columns of scores by which rows were kept.
     """
 
     subjects: Subjects
     minus: Subjects = ()
     baseline: Subjects = ()
     left_out: tuple[Row, ...] = ()
+    kept_by: tuple[str, ...] = ()
 
     @property
     def rows(self) -> Iterator[Row]:
@@ -65,7 +71,8 @@ class Selection:
 
     def by_run(self) -> Selection:
         """A map per run instead: only plain maps have runs of their own."""
-        return Selection(tuple((label, (row,)) for label, rows in self.subjects for row in rows))
+        each = tuple((label, (row,)) for label, rows in self.subjects for row in rows)
+        return Selection(each, kept_by=self.kept_by)
 
 
 def select(
@@ -95,6 +102,7 @@ def select(
         For unknown columns, nothing selected, or maps that cannot be averaged.
     """
     subjects, left_out = _subjects(read, study, wanted, key)
+    asked_for = {*wanted, *(minus or {}), *(baseline or {})}
     others: list[Subjects] = []
     for other, asked in (("minus", minus), ("baseline", baseline)):
         if asked is None:
@@ -104,7 +112,13 @@ def select(
         _same_subjects(read, other, subjects, found)
         left_out += more
         others.append(found)
-    made = Selection(subjects, others[0], others[1], tuple(dict.fromkeys(left_out)))
+    made = Selection(
+        subjects,
+        others[0],
+        others[1],
+        tuple(dict.fromkeys(left_out)),
+        tuple(sorted(asked_for.difference(NAMING))),
+    )
     if made.minus and set(made.subjects) & set(made.minus):
         raise InputError(
             "minus selects the very maps it is subtracted from",
@@ -246,9 +260,12 @@ def _only_runs_differ(read: Reader, label: str, runs: list[Row], key: str) -> No
     numbers = [row.unit.run for row in runs]
     again = [row for row in runs if numbers.count(row.unit.run) > 1]
     if again:
+        unsaid = all(row.volume is not None and not row.contrast for row in again)
         raise InputError(
             f"sub-{label} has several maps of one run",
             where=read.where(key),
             got=", ".join(f"{row.name} (line {row.line} of the table)" for row in again),
-            remedy="select one, or fill the run column",
+            remedy="fill the contrast column of the table (or run): it says what each volume holds"
+            if unsaid
+            else "select one, or fill the run column",
         )

@@ -18,11 +18,11 @@ from .digests import digest, digest_text
 from .keys import Reader, read_toml
 from .ledger import ledger_path
 from .lineage import recorded_units
+from .regions import Ball, units
 from .regions import Given as GivenRegion
-from .regions import units
 from .rois import Maps, Roi, in_table, with_variants
 from .selection import Selection
-from .study import Origin, Row, Study, read_table
+from .study import NAMING, Origin, Row, Study, read_table
 
 _KEYS = {
     "": {"study", "data", "roi", "origin", "comparison", "report"},
@@ -31,6 +31,7 @@ _KEYS = {
         "select",
         "minus",
         "baseline",
+        "quality",
         "null_value",
         "run_weights",
         "grids",
@@ -67,6 +68,8 @@ class Settings:
         How smooth the maps are, in mm, where it is stated: how near a centre is to another.
     background : Path or None
         What the report's slices are drawn over, if not the study's mean map.
+    quality : tuple of str
+        Columns of the study table that say how good the data are: whom they keep, no result chose.
     """
 
     name: str
@@ -83,6 +86,7 @@ class Settings:
     ledger: Path
     fwhm: float | None
     background: Path | None = None
+    quality: tuple[str, ...] = ()
 
     @property
     def selections(self) -> tuple[Selection, ...]:
@@ -90,6 +94,11 @@ class Settings:
         listed = [roi.tested for roi in self.rois]
         listed += [roi.choosing for roi in self.rois if roi.choosing is not None]
         return tuple(dict.fromkeys(listed))
+
+    @property
+    def variants(self) -> dict[str, str]:
+        """By declared variant: the region that it varies."""
+        return {roi.name: roi.variant_of for roi in self.rois if roi.variant_of}
 
     @property
     def used(self) -> tuple[Row, ...]:
@@ -100,6 +109,15 @@ class Settings:
     def left_out(self) -> tuple[Row, ...]:
         """Every row that was selected but has an exclude_reason."""
         return tuple(dict.fromkeys(row for one in self.selections for row in one.left_out))
+
+    @property
+    def inputs(self) -> tuple[Path, ...]:
+        """Everything that a run reads, and the study's folder: no output may take its place."""
+        rows = [path for row in self.study.rows for path in (row.path, row.variance) if path]
+        outside = [path for origin in self.study.origins for path in origin.files]
+        files = [self.root / path for path in (*rows, *outside)]
+        beside = [self.table_path, self.ledger, *([self.background] if self.background else [])]
+        return (self.root, *beside, *files)
 
 
 def read_settings(path: str | Path) -> Settings:
@@ -144,7 +162,35 @@ def read_settings(path: str | Path) -> Settings:
         ledger=ledger_path(root / path.name),
         fwhm=_fwhm(read, data),
         background=_background(read, toml, root),
+        quality=_quality(read, data, plain, rois),
     )
+
+
+def _quality(
+    read: Reader, data: dict[str, Any], study: Study, rois: tuple[Roi, ...]
+) -> tuple[str, ...]:
+    """The columns that say how good the data are: scores of the table that nothing tests."""
+    columns = tuple(read.get(data, "quality", list, []))
+    known = [name for name in study.columns if name not in NAMING]
+    tested = {roi.procedure.model.name for roi in rois if roi.procedure and roi.procedure.model}
+    for column in columns:
+        if column not in known:
+            raise InputError(
+                "quality names no column that says something of the subjects",
+                where=read.where("quality"),
+                expected="a column of the study table such as one with how much they moved: "
+                + (", ".join(known) or "it has none"),
+                got=repr(column),
+            )
+        if column in tested:
+            raise InputError(
+                "a column of quality is what a [[roi]] tests",
+                where=read.where("quality"),
+                expected="columns that say how good the data are, and nothing that is tested",
+                got=column,
+                remedy="take it out of quality, or out of score and compare",
+            )
+    return columns
 
 
 def _background(read: Reader, toml: dict[str, Any], root: Path) -> Path | None:
@@ -228,7 +274,8 @@ def _of_leaf(leaf: GivenRegion, subs: list[str], study: Study, output: Path) -> 
         yield Origin(leaf.origin, shared)
     else:
         recorded = recorded_units(study.root / shared[0], study, output) if shared else ()
-        yield Origin(leaf.origin, shared, (*leaf.derived_from, *recorded))
+        sphere = (*leaf.centre, leaf.radius) if isinstance(leaf, Ball) else ()
+        yield Origin(leaf.origin, shared, (*leaf.derived_from, *recorded), sphere=sphere)
 
 
 def _origins(

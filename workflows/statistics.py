@@ -17,6 +17,7 @@ from .findings import (
     UNPROVEN,
     Finding,
     measured_in,
+    on_the_same,
     several,
     these_subjects,
     undeclared,
@@ -95,7 +96,12 @@ def judge_statistic(ancestry: Ancestry, node: object, statistic: Statistic) -> F
         listed,
         search,
         scores,
-        [mark for mark in every if not mark.certified],
+        # A certificate leaves a meeting that it does not cover as it is: a turn is a turn.
+        [
+            replace(mark, certified=False)
+            for mark in every
+            if not (mark.certified and on_the_same(table, mark.mask, mark.data))
+        ],
         _by_score(table, tree.touch.extractions, scores.touch),
         labels is not None and _by_person(table, labels, listed, data_units),
         these_subjects(statistic, given.settings),
@@ -145,6 +151,11 @@ _BY_SCORE = (
     "fold a region chosen without its own scores and chooses again in each exchange; or choose the "
     "region by something else"
 )
+_BY_OTHERS = (
+    "take everybody, or keep them by something else; leave people out by a list with an "
+    "exclude_reason; in STUDY.toml, a column that says only how good the data are is named in "
+    "[data] quality"
+)
 
 
 def _biased(fed: _Fed) -> _Fault | None:
@@ -191,6 +202,13 @@ def _score_twice(fed: _Fed) -> _Fault | None:
         own |= mark.mask & mark.data
     if not own:
         return None
+    if not own & ~fed.tree.touch.selected:
+        return _Fault(
+            f"subjects were kept or left out by {_columns(fed.table, own)}, in the data or where "
+            "the region was chosen, and it compares values with that",
+            _BY_OTHERS,
+            own,
+        )
     return _Fault(
         f"its region was chosen by {_columns(fed.table, own)} of the very subjects whose "
         "values it compares with that, whether or not their maps were held out",

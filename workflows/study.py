@@ -12,12 +12,12 @@ import csv
 import os
 import re
 from collections.abc import Iterable, Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 
 from ..nodes.errors import InputError
 from ..nodes.scoreunits import Cell
-from ..nodes.touch import ENTITIES, Touch, Unit, UnitTable, union
+from ..nodes.touch import ENTITIES, Touch, Unit, UnitTable, of_sphere, union
 from .digests import digest
 
 COLUMNS = (
@@ -39,7 +39,12 @@ BLANK = ("", "n/a")
 # Columns that are there when a row needs them, beside COLUMNS and the entities.
 _MORE = ("variance", "space")
 _TEXTS = ("contrast", "exclude_reason", "exchange", *_MORE)
+# Columns that name a map or whose it is; any other says something of a subject: a score.
+NAMING = (*COLUMNS, *ENTITIES, *_MORE)
 
+
+Labels = tuple[int, ...] | None
+"""Those of a label image that are meant; None when that is not known: any of them."""
 
 # What tells the cells of a design apart; `group` is a column of the table if there is one.
 CELLS = ("contrast", "ses", "task", "acq", "group")
@@ -114,11 +119,14 @@ class Doubt:
     name : str
         What stands among the unknown, short.
     reason, cure : str
+    command : str
+        What to call for this region; "" when the cure says it all.
     """
 
     name: str
     reason: str
     cure: str
+    command: str = ""
 
 
 @dataclass(frozen=True)
@@ -135,12 +143,25 @@ class Origin:
         The study's own units it was made from, if any (blank entities match all).
     doubts : tuple of Doubt
         What must be explained first: what it touches is unknown until then.
+    labels : tuple of int
+        Of a label image, those that it speaks of; none: all of them.
+    sphere : tuple of float
+        Of a coordinate, the centre and radius (mm) that it speaks of; none: all with its source.
     """
 
     source: str
     files: tuple[str, ...] = ()
     derived_from: tuple[Unit, ...] = ()
     doubts: tuple[Doubt, ...] = ()
+    labels: tuple[int, ...] = ()
+    sphere: tuple[float, ...] = ()
+
+    @property
+    def key(self) -> str:
+        """By which it is known: its source, and the sphere when it speaks of one."""
+        return (
+            of_sphere(self.source, self.sphere[:3], self.sphere[3]) if self.sphere else self.source
+        )
 
 
 @dataclass
@@ -165,7 +186,7 @@ class Study:
     table : UnitTable
         Of the rows' units, and of the scores: what further columns say of each subject.
     declared : dict of str to Touch
-        What each origin touches, by its source.
+        What each origin touches, by its key.
     scores : dict of (column, label) to Cell
         What a column says of whom, by ``sub`` and by who counts as one.
     doubts : dict of str to Doubt
@@ -202,6 +223,7 @@ class Study:
                     got=f"{person!r} (line {line}) and {row.person!r} (line {row.line})",
                     remedy="give all rows of a subject the same value",
                 )
+        self._no_name_of_another()
         acquired = dict(people)
         cells = [
             (row, column, text, Unit(sub=row.unit.sub, suffix=column))
@@ -226,8 +248,8 @@ class Study:
                 bits = there.units | self.table.bits([unit])
                 self.scores[column, label] = Cell(there.texts | {text}, bits)
         self.declared = {
-            origin.source: union(
-                self.of_origin(other) for other in self.origins if other.source == origin.source
+            origin.key: union(
+                self.of_origin(other) for other in self.origins if other.key == origin.key
             )
             for origin in self.origins
         }
@@ -247,6 +269,20 @@ class Study:
         self._tables = {key for path in self.tables for key in self._keys(path)}
         self._sizes: dict[int, list[str]] | None = None
         self._contents: dict[int, dict[str, list[str]]] = {}
+
+    def _no_name_of_another(self) -> None:
+        """Refuse an exchange value that is the label of a subject without that value."""
+        others = {row.unit.sub: row for row in self.rows if row.exchange != row.unit.sub}
+        for row in self.rows:
+            other = others.get(row.exchange)
+            if row.exchange and other is not None:
+                raise InputError(
+                    f"the exchange value {row.exchange!r} is the label of another subject",
+                    got=f"on sub-{row.unit.sub} (line {row.line}), and sub-{row.exchange} has "
+                    f"{other.exchange or 'none'} (line {other.line})",
+                    remedy="if they belong together, give all of them this value; if not, take a "
+                    "value that is no subject's label",
+                )
 
     def of_origin(self, origin: Origin) -> Touch:
         """What comes from an origin touches."""
@@ -270,7 +306,7 @@ class Study:
         root = os.path.abspath(self.root)
         return os.path.relpath(full, root) if full.startswith(root + os.sep) else full
 
-    def _touch_of_key(self, key: str, volume: int | None) -> Touch | None:
+    def _touch_of_key(self, key: str, volume: int | None, labels: Labels = None) -> Touch | None:
         if key in self._by_path:
             bits, unknown = 0, []
             for row in self._by_path[key]:
@@ -282,12 +318,16 @@ class Study:
             return Touch(values=bits, unknown=frozenset(unknown))
         if key in self._origins_of:
             # Whoever declares a file says what it derives from; all of it counts.
-            return union(self.declared[origin.source] for origin in self._origins_of[key])
+            return union(
+                self.declared[origin.key]
+                for origin in self._origins_of[key]
+                if labels is None or not origin.labels or set(origin.labels) & set(labels)
+            )
         if key in self._tables:
             return Touch(values=self.table.scores)
         return None
 
-    def touch_of(self, path: str, volume: int | None = None) -> Touch | None:
+    def touch_of(self, path: str, volume: int | None = None, labels: Labels = None) -> Touch | None:
         """What a file touches: its unit, its origin, unknown; None when it is no file.
 
         Parameters
@@ -295,9 +335,11 @@ class Study:
         path : str
             Absolute, or relative to the root.
         volume : int, optional
+        labels : tuple of int, optional
+            Of a label image, those that are read, where that is known.
         """
         for key in self._keys(path):
-            touch = self._touch_of_key(key, volume)
+            touch = self._touch_of_key(key, volume, labels)
             if touch is not None:
                 return touch
         # A text too long for a file name is no file; os.path says so without an error. A word
@@ -306,6 +348,13 @@ class Study:
         if os.path.isfile(full) or (os.path.isabs(path) and os.path.isdir(full)):
             return Touch(unknown=frozenset({self.relative(path)}))
         return None
+
+    def rows_of(self, path: str | Path, volume: str | int | None = None) -> list[Row]:
+        """The rows that name a file, or a volume of it."""
+        named = (self._by_path.get(key, []) for key in sorted(self._keys(str(path))))
+        wanted = None if volume is None else int(volume)
+        found = dict.fromkeys(row for rows in named for row in rows)
+        return [row for row in found if wanted is None or row.volume in (None, wanted)]
 
     def units_of(self, path: str | Path) -> list[Unit]:
         """The units of the rows that name a file."""
@@ -389,7 +438,14 @@ def read_cells(path: Path, what: str) -> list[list[str]]:
     try:
         with path.open(newline="", encoding="utf-8-sig") as stream:
             return list(csv.reader(stream, delimiter="\t", quoting=csv.QUOTE_NONE))
-    except (OSError, UnicodeDecodeError, csv.Error) as error:
+    except OSError as error:
+        raise InputError(
+            f"unreadable {what}",
+            where=str(path),
+            got=error.strerror or str(error),
+            remedy="check its permissions",
+        ) from error
+    except (UnicodeDecodeError, csv.Error) as error:
         raise InputError(
             f"unreadable {what}",
             where=str(path),
@@ -406,7 +462,8 @@ def read_table(path: str | Path, root: Path | None = None, origins: Sequence[Ori
     ----------
     path : path of a TSV file
     root : Path, optional
-        What the table's paths are relative to; default: the table's folder.
+        The study's root, to which the paths of its rows are relative; default: the table's folder.
+        In the table itself paths are relative to the table.
     origins : sequence of Origin, optional
         Declared sources of files and coordinates from outside the study.
 
@@ -468,11 +525,23 @@ def read_table(path: str | Path, root: Path | None = None, origins: Sequence[Ori
                     got=name if row.volume is None else f"{name} volume {row.volume}",
                     remedy="each map of a subject needs a file (or volume) of its own",
                 )
+    if root is not None:
+        folder = os.path.relpath(path.parent, root)
+        rows = [_from(folder, row) for row in rows] if folder != os.curdir else rows
     try:
         tables = (str(path.absolute()),)
         return Study(root or path.parent, rows, tuple(origins), header, tables)
     except InputError as error:
         raise error.at(str(path)) from error
+
+
+def _from(folder: str, row: Row) -> Row:
+    """A row whose paths are relative to a folder, with paths as from where that is relative to."""
+    named = (
+        os.path.normpath(os.path.join(folder, p)) if p else "" for p in (row.path, row.variance)
+    )
+    path, variance = named
+    return replace(row, path=path, variance=variance)
 
 
 def _ragged(path: Path, number: int, expected: int, got: int) -> Row:

@@ -217,6 +217,12 @@ def contract_of(interface: Any) -> Contract:
     return found.and_then(note.contract)
 
 
+def told_of(interface: Any) -> bool:
+    """Whether a contract was attached, if only an empty one: that there is nothing to state."""
+    attached = any(base in _of_class for base in type(interface).__mro__)
+    return attached or _NOTE in vars(interface)
+
+
 def as_stated(interface: Any, inputs: Inputs) -> Inputs:
     """The inputs of an interface; of those that a contract calls geometry, the grid alone."""
     geometry = contract_of(interface).geometry
@@ -255,9 +261,10 @@ def _finished(
 
 @cache
 def _unknown_rule(kind: str, output: str) -> Loss:
+    target = "NODE" if kind == "Function" else kind
     return Loss(
         f"what {kind} does is not known, so its output is taken to derive from all its inputs",
-        f"state what it does: contract({'NODE' if kind == 'Function' else kind}, "
+        f"if it really keeps the items apart, say so: contract({target}, "
         f"rules={{{output!r}: each(INPUT)}}, geometry=[INPUTS OF WHICH ONLY THE GRID COUNTS])",
     )
 
