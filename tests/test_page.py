@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import json
 import os
+import re
 import shutil
 from pathlib import Path
 
@@ -49,7 +50,7 @@ def pages(garden, tmp_path_factory):
     settings = read_settings(study)
     with pytest.raises(GuardRefused) as refused:
         run_study(settings, record=False)
-    refusal = write_refused(refused.value, settings.output, settings.name)
+    refusal = write_refused(refused.value, settings.output, settings.name, settings.variants)
     return {"report": garden.output / "report.html", "refused": refusal}
 
 
@@ -110,6 +111,19 @@ def test_it_opens_without_a_word_a_request_or_a_sideways_scroll(which, width, op
     assert page.evaluate("document.styleSheets[0].cssRules.length") > 50, (
         "the style was let through"
     )
+
+
+def test_a_name_in_the_first_column_is_not_broken_where_a_line_holds_it(opened):
+    page = opened()
+    lines = page.evaluate(
+        """() => [...document.querySelectorAll("tbody th")].map(cell => {
+            cell.textContent = "BrookKfoldTwice";
+            const name = document.createRange();
+            name.selectNodeContents(cell);
+            return new Set([...name.getClientRects()].map(one => one.top)).size;
+        })"""
+    )
+    assert lines and set(lines) == {1}
 
 
 def test_the_policy_stops_a_request_and_a_foreign_script(browser, pages):
@@ -211,13 +225,24 @@ def test_a_mask_lights_up_its_ancestry_and_a_unit_all_that_it_touched(opened, re
     flowing = {(source, output) for source, output, _, _ in record["edges"]}
     assert lit(page) <= touched
     assert {
-        one["node"]
+        re.sub(r"Variant\d+", "Variant1", one["node"])
         for one in record["elements"]
         if (one["node"], one["output"]) in flowing
         and number in members(one["values"], record["suffixes"])
     } <= lit(page)
     page.click("#clear")
     assert lit(page) == set()
+
+
+def test_the_mask_of_a_variant_lights_up_the_lane_that_all_variants_share(opened):
+    page = opened()
+    assert page.locator("[data-node^='garden.BrookVariant3']").count() == 0
+    page.select_option("#pickmask", label="BrookVariant3: 1")
+    of_lane = {name for name in lit(page) if "Brook" in name}
+    assert of_lane == {"garden.BrookVariant1.region", "garden.BrookVariant1.choose"}
+    assert "made by garden.BrookVariant3.choose" in page.locator("#graphsays").text_content()
+    edge = "#graph .edge[data-from='garden.BrookVariant1.region'].lit"
+    assert page.locator(edge).count() == 1
 
 
 def test_the_steps_of_the_graph_are_reached_and_chosen_by_keyboard(opened):

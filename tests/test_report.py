@@ -15,13 +15,20 @@ from pathlib import Path
 import nibabel as nib
 import numpy as np
 import pytest
+import running
 from click.testing import CliRunner
 from gardens import CENTRES, FLIPS
 from matplotlib.collections import PathCollection
+from nipype import Node
+from planting import a_grid, paths_of, plant
+from sequester import GuardPlugin
 from sequester.nodes.errors import InputError
 from sequester.nodes.images import Geometry
+from sequester.nodes.interfaces import Extract
+from sequester.nodes.touch import Unit
 from sequester.workflows.cli import main
 from sequester.workflows.guard import GuardRefused
+from sequester.workflows.record import record_of
 from sequester.workflows.report import effects
 from sequester.workflows.report.drawing import drawing
 from sequester.workflows.report.folder import read_folder
@@ -34,6 +41,7 @@ from sequester.workflows.report.touchmap import touch_map
 from sequester.workflows.report.words import headline, notes
 from sequester.workflows.run import run_study
 from sequester.workflows.settings import read_settings
+from sequester.workflows.study import Origin
 from worlds import PLANS, World, study_toml
 
 OTHERS = ("Ball", "Parts", "Own", "Half", "Beds", "Same", "Sum")  # plans the garden has not
@@ -101,6 +109,22 @@ def test_the_five_questions_stand_in_order_and_the_notes_above_all(page):
         ("5", "How do I repeat it?"),
     ]
     assert page.index('class="headline"') < page.index("<h2><span>2")
+
+
+def test_the_first_screen_says_what_was_asked_whether_to_believe_it_and_what_was_found(
+    garden, page
+):
+    first = page[: page.index("<h2><span>1")]
+    seen = Seen(first).text
+    places = [seen.index(head) for head in ("What was asked", "May I believe it", "What was found")]
+    assert places == sorted(places)
+    for row in table(garden.output / "roi_tests.tsv"):
+        assert (f'<tr><th scope="row">{row["roi"]}</th>' in first) == (row["biased"] == "false")
+    assert "What is the mean effect in Arbor, Brook and Cinder, chosen leaving out one" in seen
+    assert "Do values go with skill in Skilled" in seen
+    assert "Do day and night differ in Groups" in seen
+    assert "Read by several regions of this run" in seen and "Looked at before" not in seen
+    assert "3 values are exploratory and biased" in seen
 
 
 def test_the_page_asks_for_nothing_and_lets_only_its_own_style_and_script_through(page):
@@ -185,12 +209,20 @@ def test_a_region_says_in_how_many_folds_its_rule_found_something(garden, copy):
         page = write_report(path).read_text(encoding="utf-8")
         first = page[: page.index("<h2><span>2")]
         assert '<th scope="col">Region or search region</th>' in first
-        return re.findall(rf'<th scope="row">{row["roi"]} <small>(found in .*?)</small>', first)
+        (line,) = re.findall(rf'<tr><th scope="row">{row["roi"]}</th>.*?</tr>', first)
+        return re.findall(r"<small>(found in .*?)</small>", line)
 
     n = int(table(garden.output / "roi_tests.tsv")[0]["n_folds"])
     for empty, replaced, said in (
         ("0", "0", []),
-        ("2", "0", [f"found in {n - 2} of {n} folds; the value counts as 0 in the others"]),
+        (
+            "2",
+            "0",
+            [
+                f"found in {n - 2} of {n} folds; the value counts as 0 in the others: not the size "
+                "of an effect"
+            ],
+        ),
         (
             "0",
             "3",
@@ -211,7 +243,7 @@ def test_levels_claims_certificates_and_looks_are_said_before_any_number():
     certified = row | {"verdict": "certified", "roi": "Cinder"}
     again = row | {"looks": "3"}
     shaped = row | {"contour_p": "0.004"}
-    biased = row | {"biased": "true", "verdict": "leak", "p": None}
+    biased = row | {"biased": "true", "verdict": "leak", "p": None, "estimate": "2.5"}
     assert notes([row, biased]) == []
     assert [note.kind for note in notes([waived, certified, again])] == [
         "waiver",
@@ -221,11 +253,24 @@ def test_levels_claims_certificates_and_looks_are_said_before_any_number():
     assert [note.kind for note in notes([shaped, row | {"contour_p": "0.2"}])] == ["shape"]
     assert "Brook" in notes([waived])[0].head and "these subjects only" in notes([waived])[0].text
     assert "Arbor (3 looks)" in notes([again])[0].head
+    # What only this run has read is told apart from what was looked at before it.
+    here, before = again | {"looks_of_run": "3"}, again | {"looks_of_run": "1", "roi": "Brook"}
+    heads = [note.head for note in notes([here, before])]
+    assert heads == [
+        "Looked at before: Brook (3 looks, 2 of them in earlier runs)",
+        "Read by several regions of this run: Arbor (3)",
+    ]
+    (told,) = notes([before], ["OTHER.ledger.jsonl"])
+    assert told.text.endswith("Counted too: the looks in OTHER.ledger.jsonl.")
+    assert "Counted" not in notes([here], ["OTHER.ledger.jsonl"])[0].text
     late = row | {"history": "The region was declared after 1 look at these data."}
     assert "Arbor" in notes([late])[0].head and "after 1 look" in notes([late])[0].text
     assert headline([row, row]).startswith("All 2 tests: the region was chosen without any data")
     assert "1 value is exploratory and biased" in headline([row, biased])
-    assert headline([row, waived]).startswith("2 tests: 1 \N{MULTIPLICATION SIGN} the region was")
+    assert headline([row, waived]) == (
+        "2 tests. Arbor: chosen without the tested subjects; Brook: chosen on other data of the "
+        "tested subjects."
+    )
 
 
 def test_biased_values_stand_apart_without_interval_error_bar_or_p(garden, page):
@@ -268,6 +313,29 @@ def test_points_and_intervals_of_a_figure_are_those_of_the_tables(garden):
     assert len(spans) == 1, "the twin has no interval"
 
 
+def test_all_labels_of_an_atlas_are_drawn_on_one_axis_in_as_many_figures_as_it_takes():
+    rows = [
+        {
+            "roi": "Beds", "parcel": str(i), "parcel_name": f"bed {i}", "scale": "effect maps",
+            "estimate": str(i - 60), "interval_low": str(i - 61), "interval_high": str(i - 59),
+        }
+        for i in range(230)
+    ]  # fmt: skip
+    with drawing():
+        made = list(effects.family_forests(rows))
+        axes = [one.figure.axes[0] for one in made]
+        named = [tick.get_text() for one in axes for tick in one.get_yticklabels()]
+    assert [one.name for one in made] == ["Beds_labels_1", "Beds_labels_2", "Beds_labels_3"]
+    assert named == [row["parcel_name"] for row in rows]
+    assert len({one.get_xlim() for one in axes}) == 1
+    low, high = axes[0].get_xlim()
+    assert low < -61 and high > 170
+    points = [
+        line.get_xdata()[0] for one in axes for line in one.lines if len(line.get_xdata()) == 1
+    ]
+    assert points == [float(row["estimate"]) for row in rows]
+
+
 def test_the_histogram_of_flips_counts_every_exchange(garden):
     rows = table(garden.output / "flips.tsv")
     for name in ("Arbor", "Brook", "Cinder", "Skilled", "Groups"):
@@ -285,7 +353,7 @@ def test_the_methods_change_when_the_procedure_does_and_only_then(copy):
     said = methods_text(read_folder(copy))
     words = " ".join(said.split())
     assert "(Phipson & Smyth 2010)" in words and "Phipson B, Smyth GK (2010)" in words
-    assert "Holm" not in words, "no adjustment was made"
+    assert "Holm 1979" in words
     rows = table(copy / "roi_tests.tsv")
     outcome = (
         "estimate",
@@ -376,6 +444,37 @@ def test_the_flows_of_the_graph(garden):
     assert all(layer[arrow.source] < layer[arrow.target] for arrow in made.arrows)
 
 
+def test_the_lanes_of_variants_are_drawn_once_and_many_alike_too(garden):
+    record = read_folder(garden.output).record
+    made = graph_map(record)
+    assert made.alike == {"BrookVariant1": ["BrookVariant2", "BrookVariant3", "BrookVariant4"]}
+    assert made.drawn_as["garden.BrookVariant4.test"] == "garden.BrookVariant1.test"
+    drawn = {box.name for box in made.boxes}
+    assert drawn | set(made.drawn_as) == {node["name"] for node in record["nodes"]}
+    assert not drawn & set(made.drawn_as)
+    assert any("Brook with 4 variants" in said for said in touch_map(record).summary)
+
+    # A region of its own, whatever its name.
+    named_so = json.loads(json.dumps(record).replace("Cinder", "BrookVariant9"))
+    assert graph_map(named_so).alike == made.alike
+    told = " ".join(touch_map(named_so).summary)
+    assert "Brook with 4 variants and BrookVariant9" in told
+
+    one = {"interface": "Extract", "kind": "extraction"}
+    many = {
+        "nodes": [
+            {"name": f"w.{lane}.{step}", **one} for lane in range(13) for step in ("a", "b")
+        ] + [{"name": "w.other.a", **one}, {"name": "w.maps", **one}],
+        "edges": [[f"w.{lane}.a", "out", f"w.{lane}.b", "in"] for lane in range(13)]
+        + [["w.maps", "out", f"w.{lane}.a", "in"] for lane in (*range(13), "other")],
+        "meetings": [],
+        "variants": {},
+    }  # fmt: skip
+    assert {lane: len(others) for lane, others in graph_map(many).alike.items()} == {"0": 12}
+    many["edges"].pop(0)  # a lane of another shape
+    assert graph_map(many).alike == {}
+
+
 # -- where ----------------------------------------------------------------------------------------
 
 
@@ -436,7 +535,14 @@ def test_every_plan_has_a_page_on_one_grid_and_on_grids_of_their_own(own, tmp_pa
     page = write_report(output).read_text(encoding="utf-8")
     for row in table(output / "roi_tests.tsv"):
         assert row["roi"] in page
-    assert ("grids of the subjects' own" in page) == own
+    spread = [row["roi"] for row in table(output / "roi_tests.tsv") if row["parcel"] == "n/a"]
+    for roi in spread:
+        assert f'id="{roi}_where-figure_1"' in page, "slices of every region"
+        assert (f"{roi} on grids of the subjects' own" in page) == own
+    assert ("filled: the region, on each subject's own grid; 6 of 10 subjects" in page) == own
+    assert ('id="Parts_where-figure_1"' in page) != own
+    assert 'id="Parts_labels-figure_1"' in page and "Parts (3 labels)" in page
+    assert len(list(output.glob("sub-*_background.nii.gz"))) == (6 if own else 0)
     if not own:
         assert "A narrower claim was declared: Same" in page and "No reason is stated." in page
         assert "A certificate was relied on: Sum" in page
@@ -461,12 +567,43 @@ def test_a_refused_run_has_a_page_with_the_leak_both_ways_and_the_fix(garden, tm
     settings = read_settings(folder / "STUDY.toml")
     with pytest.raises(GuardRefused) as refused:
         run_study(settings, record=False)
-    again = write_refused(refused.value, settings.output, settings.name)
+    again = write_refused(refused.value, settings.output, settings.name, settings.variants)
     assert again.read_text(encoding="utf-8") == text
     record = json.loads((garden.output / "record.json").read_text())
     for meeting in record["meetings"]:
         meeting["allowed"] = meeting["verdict"] != "leak"
     assert touch_map(record).marks["leak"]
+
+
+def test_the_page_of_a_refusal_says_what_a_mask_is_made_of_and_where_precision_was_lost(
+    tmp_path, monkeypatch, quiet_engine
+):
+    monkeypatch.chdir(tmp_path)
+    study = plant(
+        tmp_path / "garden",
+        {sub: np.full((3, 3, 3), ord(sub), np.float32) for sub in "abcd"},
+        a_grid((3, 3, 3)),
+        {"drawn": np.ones((3, 3, 3))},
+        [Origin("a <drawing> of b", ("drawn.nii",), (Unit(sub="b"),))],
+    )
+    maps = paths_of(study)
+    graph = running.workflow()
+    pick = Node(running.called("def pick(all): return all[0]", all=maps[:2]), name="pick")
+    for name, tested in (("drawn", maps[1:2]), ("picked", maps[1:3])):
+        labels = [Path(path).stem.removeprefix("sub-") for path in tested]
+        graph.add_nodes([Node(Extract(in_files=tested, labels=labels), name=name)])
+    graph.get_node("drawn").inputs.mask_files = [str(study.root / "drawn.nii")]
+    graph.connect([(pick, graph.get_node("picked"), [("out", "mask_files")])])
+    with pytest.raises(GuardRefused) as refused:
+        graph.run(plugin=GuardPlugin(study))
+    seen = Seen(write_refused(refused.value, tmp_path / "results", "garden").read_text()).text
+    assert "What it is made of: a <drawing> of b." in seen
+    assert seen.count("What it is made of") == 1
+    assert "Or it only seems so" in seen and seen.count("At w.pick") == 1
+    assert "say so: contract(NODE" in seen
+    meetings = record_of(refused.value)["meetings"]
+    assert [one["made_of"] for one in meetings] == [["a <drawing> of b"], []]
+    assert [[lost["node"] for lost in one["lost"]] for one in meetings] == [[], ["w.pick"]]
 
 
 def test_the_page_is_there_with_the_results_or_neither_is(garden, tmp_path, monkeypatch):

@@ -13,7 +13,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from ..nodes.images import geometry_of, open_image, read_map, read_mask, write_map
+from ..nodes.images import Geometry, geometry_of, open_image, read_map, read_mask, write_map
 from ..nodes.interfaces.base import write_json
 from .collect import RoiOutput
 from .plans import A_PRIORI
@@ -22,6 +22,7 @@ from .settings import Settings
 Floats = npt.NDArray[np.floating]
 
 BACKGROUND = "background.nii.gz"
+OWN_SHOWN = 6  # subjects with grids of their own that are drawn
 FLIP_COLUMNS = {
     "roi": "Region of interest.",
     "low": "Lower end of the bin.",
@@ -69,30 +70,61 @@ def flip_rows(outputs: Sequence[RoiOutput]) -> Iterator[dict[str, Any]]:
 
 
 def _background(stage: Path, settings: Settings, outputs: Sequence[RoiOutput]) -> None:
-    """A grey picture of what lies where, in brightness steps; see `brightness`."""
+    """A grey picture of what lies where, in brightness steps; see `brightness`.
+
+    Where subjects have grids of their own there is no mean of them: a few have one each.
+    """
+    for_orientation = " For orientation only: 1 to 255, 0 is no data."
     if settings.background is not None:
         data, geometry = read_map(settings.background)
         given = os.path.relpath(settings.background, settings.root)
-        said, of = f"As given: {given}.", {"Sources": [f"bids:study:{given}"]}
+        said, sources = f"As given: {given}.", [given]
+        pictures = [(BACKGROUND, data, geometry, said, sources)]
     else:
         paths = list(dict.fromkeys(path for output in outputs for path in output.maps))
         geometries = [geometry_of(open_image(path)) for path in paths]
-        geometry = geometries[0]
-        if any(not other.same_as(geometry) for other in geometries):
-            return  # grids of the subjects' own: there is no mean of them
-        total, count = np.zeros(geometry.shape), np.zeros(geometry.shape, np.int32)
-        for path in paths:
-            values, _ = read_map(path)
-            there = np.isfinite(values) & (values != 0)
-            total += np.where(there, values, 0)
-            count += there
-        data = np.where(count > 0, total / np.maximum(count, 1), np.nan)
-        said = f"Mean of the {len(paths)} maps that regions were read in."
-        rows = {row.path for output in outputs for row in output.roi.tested.rows}
-        of = {"Sources": [f"bids:study:{path}" for path in sorted(rows)]}
-    said += " For orientation only: 1 to 255, 0 is no data."
-    write_map(stage / BACKGROUND, brightness(data), geometry)
-    _sidecar(stage / BACKGROUND, {"Description": said, **of})
+        if all(other.same_as(geometries[0]) for other in geometries):
+            rows = {row.path for output in outputs for row in output.roi.tested.rows}
+            said = f"Mean of the {len(paths)} maps that regions were read in."
+            pictures = [(BACKGROUND, *_mean(paths), said, sorted(rows))]
+        else:
+            pictures = list(_own(outputs))
+    for name, data, geometry, said, sources in pictures:
+        write_map(stage / name, brightness(data), geometry)
+        of = {"Sources": [f"bids:study:{path}" for path in sources]}
+        _sidecar(stage / name, {"Description": said + for_orientation, **of})
+
+
+def _own(outputs: Sequence[RoiOutput]) -> Iterator[tuple[str, Floats, Geometry, str, list[str]]]:
+    """The mean of the maps on the first grid of each of a few subjects."""
+    of_sub: dict[str, list[Path]] = {}
+    rows: dict[str, set[str]] = {}
+    for output in outputs:
+        subs = [value.sub for value in output.values]
+        if output.roi.each_label:  # a value per label, a map per subject
+            subs = list(dict.fromkeys(subs))
+        for sub, path in zip(subs, output.maps, strict=True):
+            of_sub.setdefault(sub, []).append(path)
+        for row in output.roi.tested.rows:
+            rows.setdefault(row.unit.sub, set()).add(row.path)
+    for sub in sorted(of_sub)[:OWN_SHOWN]:
+        first = geometry_of(open_image(of_sub[sub][0]))
+        paths = [p for p in dict.fromkeys(of_sub[sub]) if geometry_of(open_image(p)).same_as(first)]
+        label = "".join(c for c in sub if c.isalnum())
+        said = f"Mean of the maps that regions were read in, of {sub}."
+        yield f"sub-{label}_{BACKGROUND}", *_mean(paths), said, sorted(rows.get(sub, ()))
+
+
+def _mean(paths: Sequence[Path]) -> tuple[Floats, Geometry]:
+    """Voxel by voxel over the maps that hold a value there."""
+    geometry = geometry_of(open_image(paths[0]))
+    total, count = np.zeros(geometry.shape), np.zeros(geometry.shape, np.int32)
+    for path in paths:
+        values, _ = read_map(path)
+        there = np.isfinite(values) & (values != 0)
+        total += np.where(there, values, 0)
+        count += there
+    return np.where(count > 0, total / np.maximum(count, 1), np.nan), geometry
 
 
 def brightness(data: Floats) -> npt.NDArray[np.uint8]:

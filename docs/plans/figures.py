@@ -23,8 +23,12 @@ from pathlib import Path
 from typing import Any
 
 from click.testing import CliRunner
+from matplotlib.figure import Figure
+from matplotlib.lines import Line2D
+from matplotlib.patches import Rectangle
 from sequester.workflows.cli import main as command
 from sequester.workflows.demo import write_demo
+from sequester.workflows.report.drawing import BIASED, CHOSEN, HELD, MUTED, PAPER, alone, drawing
 from sequester.workflows.settings import Settings, read_settings
 
 PAGES = Path(__file__).parent
@@ -131,26 +135,8 @@ def _of_guard(made: dict[str, Any]) -> list[Meeting]:
 
 # -- the figure -----------------------------------------------------------------------------------
 
-CELL, ROW, LEFT, TOP = 40, 13, 150, 112
-STYLE = """
-    svg { font-family: sans-serif; font-size: 12px }
-    .paper { fill: #fdfcf8 } .ink, text { fill: #23303d } .line { stroke: #23303d; fill: none }
-    .faint { stroke: #8a939c; stroke-width: 0.5; fill: none } .dot { fill: #8a939c }
-    @media (prefers-color-scheme: dark) {
-      .paper { fill: #16202a } .ink, text { fill: #e9e4d6 } .line { stroke: #e9e4d6 }
-      .faint { stroke: #75808b } .dot { fill: #75808b }
-    }
-  """
-HATCH = (
-    '<pattern id="hatch" width="5" height="5" patternUnits="userSpaceOnUse" '
-    'patternTransform="rotate(45)"><path d="M0 0V5" class="line" stroke-width="2"/></pattern>'
-)
-LEGEND = (
-    ("chosen on", True, False),
-    ("tested on", False, True),
-    ("both", True, True),
-    ("neither", False, False),
-)
+GAP = 0.5  # between subjects, in rows
+STATES = ("chosen on", "tested on", "both", "neither")
 
 
 def draw(name: str, meetings: Sequence[Meeting]) -> str:
@@ -163,41 +149,65 @@ def draw(name: str, meetings: Sequence[Meeting]) -> str:
     shown = list(of_sub)[::step][:SUBJECTS]
     columns = _columns(meetings, shown)
     total = len({(m.roi, m.mask) for m in meetings})
-    units = [(sub, run, of_sub[sub][run]) for sub in shown for run in of_sub[sub]]
-    bottom = TOP + ROW * len(units) + 8 * len(shown)
-    width, height = max(LEFT + CELL * len(columns) + 90, 560), bottom + 66
-    parts = [
-        f'<svg xmlns="http://www.w3.org/2000/svg" viewBox="0 0 {width} {height}" width="{width}" '
-        f'height="{height}" role="img" aria-label="{_alt(name, columns)}">',
-        f"<title>{_alt(name, columns)}</title>",
-        f"<style>{STYLE}</style><defs>{HATCH}</defs>",
-        f'<rect class="paper" width="{width}" height="{height}" rx="6"/>',
-    ]
-    for i, (label, *_) in enumerate(columns):
-        middle = LEFT + CELL * i + CELL / 2
-        turned = f' transform="rotate(-38 {middle:g} {TOP - 8})"'
-        parts.append(_text(middle, TOP - 8, label, turned))
-    for at, head in ((16, "subject"), (88, "run"), (LEFT - 34, "mask")):
-        parts.append(_text(at, TOP - 8, head))
-    y = TOP
-    for i, (sub, run, names) in enumerate(units):
-        first = i == 0 or units[i - 1][0] != sub
-        y += 8 * (first and i > 0)
-        if first:
-            parts.append(_text(16, y + 10.5, sub))
-        parts.append(_text(88, y + 10.5, run or "all"))
-        for j, (_, chosen, tested) in enumerate(columns):
-            both = bool(chosen & set(names)), bool(tested & set(names))
-            parts.append(_cell(LEFT + CELL * j, y, *both))
-        y += ROW
-    x = 16
-    for text, of_choice, of_test in LEGEND:
-        parts.append(_cell(x, bottom + 14, of_choice, of_test))
-        parts.append(_text(x + CELL + 2, bottom + 24.5, text))
-        x += CELL + 20 + 7 * len(text)
-    note = f"{len(shown)} of {len(of_sub)} subjects and {len(columns)} of {total} masks are shown."
-    parts += [_text(16, bottom + 50, note), "</svg>"]
-    return "\n".join(parts) + "\n"
+    rows = [(sub, run) for sub in shown for run in of_sub[sub]]
+    with drawing():
+        figure = Figure(
+            (max(1.9 + 0.5 * len(columns), 5.6), 1.9 + 0.18 * (len(rows) + GAP * len(shown))),
+            layout="constrained",
+        )
+        axes = figure.add_subplot()
+        heights: list[float] = []
+        for i, (sub, run) in enumerate(rows):
+            heights.append(i + GAP * shown.index(sub))
+            for j, (_, chosen, tested) in enumerate(columns):
+                of_choice, of_test = (
+                    not side.isdisjoint(of_sub[sub][run]) for side in (chosen, tested)
+                )
+                state = STATES[(0 if not of_test else 2) if of_choice else (1 if of_test else 3)]
+                for mark in _marks(state, j, heights[-1]):
+                    axes.add_artist(mark).set_gid(f"{state}, row {i}, column {j}".replace(" ", "_"))
+        named = [
+            f"{sub if run == next(iter(of_sub[sub])) else ''}  {run and f'run {run}'}".rstrip()
+            for sub, run in rows
+        ]
+        axes.set_yticks(heights, named)
+        axes.set_xticks(
+            range(len(columns)), [label for label, *_ in columns], rotation=38, ha="left"
+        )
+        axes.xaxis.tick_top()
+        axes.tick_params(length=0)
+        axes.spines[:].set_visible(False)
+        axes.set_xlim(-0.6, max(len(columns), 8) - 0.4)  # few masks make no broad cells
+        axes.set_ylim(heights[-1] + 0.7, -0.7)
+        figure.legend(
+            [tuple(_marks(state)) for state in STATES], STATES, loc="outside lower left", ncols=4,
+            frameon=False, handlelength=2.6, columnspacing=1.6,
+            title=f"{len(shown)} of {len(of_sub)} subjects and {len(columns)} of {total} masks are "
+            "shown.", alignment="left",
+        )  # fmt: skip
+        return alone(figure, _alt(name, columns))
+
+
+def _marks(state: str, x: float = 0, y: float = 0) -> list[Any]:
+    """What one cell is drawn with: hatched when chosen on, a disc when tested on."""
+    chosen, tested = state in ("chosen on", "both"), state in ("tested on", "both")
+    edge = {"edgecolor": MUTED, "linewidth": 0.5}
+    if chosen:
+        edge = {"edgecolor": BIASED if tested else CHOSEN, "linewidth": 1.8 if tested else 0.8}
+    box = Rectangle(
+        (x - 0.45, y - 0.42), 0.9, 0.84, facecolor="none", hatch="/////" if chosen else "", **edge
+    )
+    disc = Line2D(
+        [x],
+        [y],
+        marker="o",
+        markersize=7 if tested else 1.5,
+        linestyle="none",
+        color=HELD if tested else MUTED,
+        markeredgecolor=PAPER if tested else MUTED,
+        markeredgewidth=1.5 if tested else 0,
+    )
+    return [box] if state == "chosen on" else [box, disc]
 
 
 def _columns(
@@ -219,27 +229,6 @@ def _columns(
                 listed.append((label, chosen, tested))
         columns += listed[: max(1, COLUMNS // len(rois))]
     return columns
-
-
-def _cell(x: float, y: float, chosen: bool, tested: bool) -> str:
-    """One cell: hatched when chosen on, a disc when tested on; both in a heavy frame."""
-    w, h = CELL - 4, ROW - 2
-    box = f'x="{x:g}" y="{y:g}" width="{w}" height="{h}"'
-    parts = [f'<rect {box} fill="url(#hatch)"/>'] if chosen else []
-    heavy = chosen and tested
-    parts.append(f'<rect {box} class="{"line" if heavy else "faint"}" stroke-width="2"/>')
-    centre = f'cx="{x + w / 2:g}" cy="{y + h / 2:g}"'
-    if heavy:
-        parts.append(f'<circle {centre} r="6" class="paper"/>')
-    if tested:
-        parts.append(f'<circle {centre} r="4.5" class="ink"/>')
-    elif not chosen:
-        parts.append(f'<circle {centre} r="1" class="dot"/>')
-    return "".join(parts)
-
-
-def _text(x: float, y: float, text: str, more: str = "") -> str:
-    return f'<text x="{x:g}" y="{y:g}"{more}>{text}</text>'
 
 
 def _alt(name: str, columns: Sequence[tuple[str, frozenset[str], frozenset[str]]]) -> str:

@@ -46,7 +46,7 @@ def paged(study: Path) -> tuple[Path, float]:
             run_study(settings)
         except GuardRefused as error:
             started = time.perf_counter()
-            return write_refused(error, settings.output, settings.name), (
+            return write_refused(error, settings.output, settings.name, settings.variants), (
                 time.perf_counter() - started
             )
     started = time.perf_counter()

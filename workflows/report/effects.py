@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Iterator, Sequence
 from typing import Any
 
 import numpy as np
@@ -16,7 +16,8 @@ from .words import estimate_cells, minus, p_cell, plain
 Floats = npt.NDArray[np.floating]
 
 _MOST_NAMES = 24  # characters of a label in a figure
-_MOST_ROWS = 60  # of one forest
+_MOST_ROWS = 100  # labels to a figure
+_CLOSE = 40  # more rows than this are set closer
 
 
 def person_values(run: RunFolder, roi: str) -> dict[str, float]:
@@ -30,13 +31,19 @@ def person_values(run: RunFolder, roi: str) -> dict[str, float]:
 
 
 def twin_of(run: RunFolder, row: Row) -> Row | None:
-    """The exploratory value of the same maps by the same rule in the same search region."""
+    """The exploratory value of the same maps by the same rule in the same search region.
+
+    A look that found no region has none.
+    """
     alike = ("search", "tested", "rule", "value", "scale", "null_value")
     return next(
         (
             other
             for other in run.tests
-            if is_biased(other) and not is_biased(row) and all(other[k] == row[k] for k in alike)
+            if is_biased(other)
+            and number(other, "estimate") is not None
+            and not is_biased(row)
+            and all(other[k] == row[k] for k in alike)
         ),
         None,
     )
@@ -44,19 +51,59 @@ def twin_of(run: RunFolder, row: Row) -> Row | None:
 
 def forest(rows: Sequence[Row], name: str, scale: str) -> Drawn:
     """Estimates and intervals of several tests, one below the other."""
-    shown = list(rows[:_MOST_ROWS])
-    figure = Figure(figsize=(6.6, 0.75 + 0.3 * len(shown)), layout="constrained")
+    labels = [_forest_label(row) for row in rows]
+    figure = _below_one_another(rows, labels, f"estimate and 95 % interval ({scale})")
+    return Drawn(name, figure, f"Estimates with their intervals: {_told(rows, called)}.")
+
+
+def family_forests(rows: Sequence[Row]) -> Iterator[Drawn]:
+    """The labels of one region, on one axis; of many, so many to a figure."""
+    ends = [x for row in rows for k in ("estimate", "interval_low", "interval_high")
+            if (x := number(row, k)) is not None and np.isfinite(x)]  # fmt: skip
+    if not ends:
+        return
+    room = 0.03 * (max(*ends, 0.0) - min(*ends, 0.0))
+    limits = (min(*ends, 0.0) - room, max(*ends, 0.0) + room)
+    parts = [rows[i : i + _MOST_ROWS] for i in range(0, len(rows), _MOST_ROWS)]
+    for i, part in enumerate(parts, 1):
+        of = "" if len(parts) == 1 else f"; part {i} of {len(parts)}"
+        said = f"estimate and 95 % interval of each label ({part[0]['scale']}{of})"
+        figure = _below_one_another(part, [_label(row) for row in part], said, limits)
+        name = f"{part[0]['roi']}_labels" + ("" if len(parts) == 1 else f"_{i}")
+        told = f"Estimates of the labels of {part[0]['roi']}{of}: {_told(part, _label)}."
+        yield Drawn(name, figure, told)
+
+
+def _label(row: Row) -> str:
+    return str(row["parcel_name"] or row["parcel"])
+
+
+def _told(rows: Sequence[Row], named: Callable[[Row], str]) -> str:
+    return "; ".join(f"{named(row)} {', '.join(filter(None, estimate_cells(row)))}" for row in rows)
+
+
+def _below_one_another(
+    rows: Sequence[Row],
+    labels: Sequence[str],
+    x_label: str,
+    limits: tuple[float, float] | None = None,
+) -> Figure:
+    """Estimates with their intervals, a line each; many are set closer."""
+    close = len(rows) > _CLOSE
+    step = 0.15 if close else 0.3
+    figure = Figure(figsize=(6.6, 0.75 + step * len(rows)), layout="constrained")
     axes = figure.add_subplot()
     axes.axvline(0, color=MUTED, linewidth=0.9)
-    for y, row in enumerate(shown):
-        _interval(axes, row, y)
-    axes.set_yticks(range(len(shown)), [cut(_forest_label(row)) for row in shown])
-    axes.set_ylim(len(shown) - 0.4, -0.6)
-    axes.tick_params(axis="y", length=0)
+    for y, row in enumerate(rows):
+        _interval(axes, row, y, 0.55 if close else 1.0)
+    axes.set_yticks(range(len(rows)), [cut(label, 34) for label in labels])
+    axes.set_ylim(len(rows) - 0.4, -0.6)
+    if limits is not None:
+        axes.set_xlim(limits)
+    axes.tick_params(axis="y", length=0, labelsize=6.5 if close else 8.5)
     axes.spines["left"].set_visible(False)
-    axes.set_xlabel(f"estimate and 95 % interval ({scale})")
-    said = "; ".join(f"{called(row)} {' , '.join(estimate_cells(row))}" for row in shown)
-    return Drawn(name, figure, f"Estimates with their intervals: {said}.")
+    axes.set_xlabel(x_label)
+    return figure
 
 
 def _forest_label(row: Row) -> str:
@@ -65,20 +112,20 @@ def _forest_label(row: Row) -> str:
     return f"{called(row)} (difference)" if difference else called(row)
 
 
-def _interval(axes: Any, row: Row, y: float) -> None:
+def _interval(axes: Any, row: Row, y: float, size: float = 1.0) -> None:
     value, low, high = (number(row, k) for k in ("estimate", "interval_low", "interval_high"))
     if low is not None and high is not None:
-        axes.plot([low, high], [y, y], color=HELD, linewidth=2.2, solid_capstyle="butt")
+        axes.plot([low, high], [y, y], color=HELD, linewidth=2.2 * size, solid_capstyle="butt")
     if value is not None:
-        axes.plot([value], [y], marker="D", markersize=6.5, color=HELD, markeredgecolor=INK,
-                  markeredgewidth=0.8, linestyle="none")  # fmt: skip
+        axes.plot([value], [y], marker="D", markersize=6.5 * size, color=HELD,
+                  markeredgecolor=INK, markeredgewidth=0.8 * size, linestyle="none")  # fmt: skip
 
 
 def strip(run: RunFolder, row: Row, twin: Row | None = None) -> Drawn:
     """Each subject's value, the estimate and its interval; when asked, the biased twin below."""
     roi, values = str(row["roi"]), person_values(run, str(row["roi"]))
     other = person_values(run, str(twin["roi"])) if twin is not None else {}
-    groups = _groups(run, roi, values)
+    groups = _groups(run, row, values)
     n_strips = len(groups) + bool(other)
     figure = Figure(figsize=(5.4, 0.8 + 0.72 * n_strips), layout="constrained")
     axes = figure.add_subplot()
@@ -254,19 +301,10 @@ def sensitivity(run: RunFolder, roi: str) -> Drawn | None:
     mine = [row for row in run.variants if row["roi"] == roi]
     if not mine:
         return None
-    shown = mine[:_MOST_ROWS]
-    figure = Figure(figsize=(6.6, 0.8 + 0.27 * len(shown)), layout="constrained")
-    axes = figure.add_subplot()
-    axes.axvline(0, color=MUTED, linewidth=0.9)
-    for y, row in enumerate(shown):
-        _interval(axes, row, y)
-    axes.set_yticks(range(len(shown)), [cut(str(row["setting"]), 34) for row in shown])
-    axes.set_ylim(len(shown) - 0.4, -0.6)
-    axes.tick_params(axis="y", length=0)
-    axes.spines["left"].set_visible(False)
-    axes.set_xlabel("estimate and 95 % interval; one look, none is to be picked")
-    said = "; ".join(f"{row['setting']}: {estimate_cells(row)[0]}" for row in shown)
-    return Drawn(f"{roi}_sensitivity", figure, f"Sensitivity of {roi}: {said}.")
+    x_label = "estimate and 95 % interval; one look, none is to be picked"
+    figure = _below_one_another(mine, [str(row["setting"]) for row in mine], x_label)
+    told = _told(mine, lambda row: str(row["setting"]))
+    return Drawn(f"{roi}_sensitivity", figure, f"Sensitivity of {roi}: {told}.")
 
 
 def spread(values: Sequence[float]) -> Floats:
@@ -300,11 +338,12 @@ def cut(text: str, most: int = _MOST_NAMES) -> str:
     return text if len(text) <= most else text[: most - 1] + "\N{HORIZONTAL ELLIPSIS}"
 
 
-def _groups(run: RunFolder, roi: str, values: dict[str, float]) -> dict[str, list[str]]:
+def _groups(run: RunFolder, row: Row, values: dict[str, float]) -> dict[str, list[str]]:
     """The subjects by the groups that a region compares; all of them as one when it does not."""
-    compare = run.region(roi).get("compare")
+    compare = run.region(str(row["roi"])).get("compare")
     if compare is None:
-        return {"held out": list(values)}
+        at_once = row["plan"] in ("a-priori", "localizer", "orthogonal-contrast")
+        return {"subjects" if at_once else "held out": list(values)}
     of = {str(line["sub"]): line.get(compare["column"]) for line in run.wide}
     names = (compare["first"], compare["second"])
     return {str(name): [sub for sub in values if of.get(sub) == name] for name in names}

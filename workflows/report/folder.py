@@ -27,6 +27,8 @@ class RunFolder:
     tests, values, masks, flips, comparisons, variants : list of dict
         The rows of roi_tests, roi_values, masks, flips, comparisons and sensitivity; cells are
         text, None for n/a. A table that a run has no use for is empty.
+    cells : list of dict
+        The rows of cells: how many maps and subjects each region has.
     wide : list of dict
         The rows of roi_values_wide, which hold the covariates.
     record, manifest : dict
@@ -42,6 +44,7 @@ class RunFolder:
     flips: list[Row]
     comparisons: list[Row]
     variants: list[Row]
+    cells: list[Row]
     wide: list[Row]
     record: dict[str, Any]
     manifest: dict[str, Any]
@@ -84,6 +87,7 @@ def read_folder(path: Path) -> RunFolder:
             read_table(path / "flips.tsv"),
             read_table(path / "comparisons.tsv"),
             read_table(path / "sensitivity.tsv"),
+            read_table(path / "cells.tsv"),
             read_table(path / "roi_values_wide.tsv"),
             json.loads((path / "record.json").read_text(encoding="utf-8")),
             json.loads((path / "manifest.json").read_text(encoding="utf-8")),

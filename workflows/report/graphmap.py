@@ -1,18 +1,20 @@
 """The graph as it ran, laid out in layers: what flows into a choice, and what is held out from it.
 
-Layers run from left to right, sources first; every region has a lane of its own. An edge is
+Layers run from left to right, sources first; every region has a lane of its own. Lanes that are
+alike are drawn once when they are declared variants of one region, or many. An edge is
 selection (it leads to a mask), held out (it brings the data that are read in a mask), or result
 (what is made of the values).
 """
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
 import networkx as nx
 
+_MOST_ALIKE = 12  # lanes of one shape that are drawn one by one
 _STEP_X, _STEP_Y, _BOX_W, _BOX_H = 214.0, 58.0, 146.0, 38.0
 _LEFT, _TOP, _LANE_GAP = 112.0, 16.0, 10.0
 SELECTION, HELD_OUT, RESULT = "selection", "held-out", "result"
@@ -51,13 +53,27 @@ class Arrow:
 
 @dataclass
 class GraphMap:
-    """The graph, laid out."""
+    """The graph, laid out.
+
+    Parameters
+    ----------
+    boxes : list of Box
+    arrows : list of Arrow
+    lanes : list of (y, height, name)
+    width, height : float
+    alike : dict of str to list of str
+        By the lane that is drawn: those for which it stands too.
+    drawn_as : dict of str to str
+        By a node that is not drawn: the one that stands for it.
+    """
 
     boxes: list[Box]
     arrows: list[Arrow]
     lanes: list[tuple[float, float, str]]
     width: float
     height: float
+    alike: dict[str, list[str]]
+    drawn_as: dict[str, str]
 
 
 def graph_map(record: Mapping[str, Any]) -> GraphMap:
@@ -87,15 +103,61 @@ def graph_map(record: Mapping[str, Any]) -> GraphMap:
         for node in record["nodes"]
     }
     flow_of = _flows(record, graph)
+    alike, drawn_as = _folded(boxes, graph, record["variants"])
+    boxes = {name: box for name, box in boxes.items() if name not in drawn_as}
     arrows: dict[tuple[str, str, str], Arrow] = {}
     for source, target, data in graph.edges(data=True):
+        if source in drawn_as or target in drawn_as:
+            continue
         key = (source, target, flow_of(source, target))
         arrows.setdefault(key, Arrow(*key)).ports.append(data["ports"])
     lanes, height = _place(list(boxes.values()))
     for arrow in arrows.values():
         arrow.path = _wire(arrow, boxes[arrow.source], boxes[arrow.target])
     width = max((box.x for box in boxes.values()), default=0) + _BOX_W + 16
-    return GraphMap(list(boxes.values()), list(arrows.values()), lanes, width, height)
+    drawn = list(boxes.values()), list(arrows.values())
+    return GraphMap(*drawn, lanes, width, height, alike, drawn_as)
+
+
+def _folded(
+    boxes: Mapping[str, Box], graph: Any, variants: Mapping[str, str]
+) -> tuple[dict[str, list[str]], dict[str, str]]:
+    """Lanes that stand for others too, and which node stands for which."""
+    lanes: dict[str, list[Box]] = {}
+    for box in boxes.values():
+        if box.lane:
+            lanes.setdefault(box.lane, []).append(box)
+    groups: dict[tuple[object, ...], list[str]] = {}
+    for lane, mine in lanes.items():
+        key = (variants.get(lane, ""), _shape(lane, mine, boxes, graph))
+        groups.setdefault(key, []).append(lane)
+    alike: dict[str, list[str]] = {}
+    drawn_as: dict[str, str] = {}
+    for (varied, _), found in groups.items():
+        if len(found) > (1 if varied else _MOST_ALIKE):
+            first, *alike[found[0]] = found
+            names = {box.name.split(".", 2)[2]: box.name for box in lanes[first]}
+            drawn_as |= {
+                box.name: names[box.name.split(".", 2)[2]]
+                for lane in alike[first]
+                for box in lanes[lane]
+            }
+    return alike, drawn_as
+
+
+def _shape(
+    lane: str, mine: Sequence[Box], boxes: Mapping[str, Box], graph: Any
+) -> tuple[object, ...]:
+    """What two lanes have in common that are drawn alike: steps, and what flows between them."""
+
+    def called(name: str) -> str:
+        return f".{name.split('.', 2)[2]}" if boxes[name].lane == lane else name
+
+    names = {box.name for box in mine}
+    steps = tuple(sorted((called(box.name), box.interface, box.layer) for box in mine))
+    edges = [*graph.in_edges(names, data="ports"), *graph.out_edges(names, data="ports")]
+    flows = {(called(source), called(target), ports) for source, target, ports in edges}
+    return steps, tuple(sorted(flows))
 
 
 def _lane(name: str) -> str:

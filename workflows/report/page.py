@@ -7,6 +7,7 @@ only its own style and script through, by their digests. Everything a user has n
 from __future__ import annotations
 
 import json
+import re
 from base64 import b64encode
 from collections.abc import Iterator, Mapping, Sequence
 from hashlib import sha256
@@ -18,17 +19,20 @@ import jinja2
 from markupsafe import Markup
 
 from ...nodes.images import write_bytes
+from ...nodes.interfaces.base import finite
+from ..staging import FIGURES, METHODS, PAGE
 from ..unitsets import members
 from . import effects, slices
 from .drawing import Drawn, drawing, saved
 from .folder import Row, RunFolder, called, is_biased, number, read_folder
-from .graphmap import graph_map
-from .methods import methods_text
-from .touchmap import TouchMap, touch_map
-from .words import estimate_cells, found_in, headline, independence, minus, notes, p_cell
+from .graphmap import GraphMap, graph_map
+from .methods import asked, methods_text
+from .stated import chosen_maps, runs_averaged, tested_maps
+from .touchmap import TouchMap, named, touch_map
+from .words import claims, estimate_cells, findings, headline, minus, notes, p_cell
 
-PAGE, METHODS, FIGURES = "report.html", "methods.txt", "figures"
 _MOST_OPEN = 6  # regions whose figures stand open
+_MOST_FOUND = 8  # tests whose results stand on the first screen
 _MOST_DRAWN = 40  # regions that have figures of their own
 
 
@@ -65,12 +69,17 @@ def write_report(folder: str | Path) -> Path:
         run.record,
         title=run.name,
         run=run,
+        asked=asked(run),
         headline=headline(run.tests),
-        notes=notes(run.tests),
+        notes=notes(run.tests, run.manifest["ledgers_beside"]),
+        claims=claims(tested),
+        findings=findings(tested),
+        most_found=_MOST_FOUND,
         tested=tested,
         biased=[row for row in run.tests if is_biased(row)],
         regions=_regions(run, tested),
         shows=_shown(run, tested),
+        forests=[name for name in shown if re.fullmatch(r"estimates(_\d+)?", name)],
         figures=shown,
         methods=methods.split("\n\n"),
         left_out=run.manifest["left_out"],
@@ -106,16 +115,18 @@ def rendered(template: str, record: Mapping[str, Any], **given: Any) -> str:
         "cut": effects.cut,
         "worded": worded,
         "few": _few,
+        "named": named,
         "capitalize_first": _capitalised,
     }
     environment.globals |= {
         "number": number,
         "estimate": estimate_cells,
-        "found_in": found_in,
-        "independence": independence,
         "two": _two_digits,
+        "tested_maps": tested_maps,
+        "chosen_maps": chosen_maps,
+        "runs_averaged": runs_averaged,
     }
-    touches = touch_map(record)
+    touches, graph = touch_map(record), graph_map(record)
     policy = (
         f"default-src 'none'; style-src '{_digest(style)}'; script-src '{_digest(script)}'; "
         "img-src data:; base-uri 'none'; form-action 'none'"
@@ -124,9 +135,9 @@ def rendered(template: str, record: Mapping[str, Any], **given: Any) -> str:
         policy=policy,
         style=Markup(style),
         script=Markup(script),
-        data=Markup(in_script(_data(record, touches))),
+        data=Markup(in_script(_data(record, touches, graph))),
         touches=touches,
-        graph=graph_map(record),
+        graph=graph,
         record=record,
         **given,
     )
@@ -144,13 +155,13 @@ def in_script(content: Any) -> str:
     >>> in_script({"name": "</script>"})
     '{"name":"\\\\u003c/script\\\\u003e"}'
     """
-    text = json.dumps(content, ensure_ascii=False, separators=(",", ":"))
+    text = json.dumps(finite(content), ensure_ascii=False, separators=(",", ":"), allow_nan=False)
     for sign in "<>&\u2028\u2029":
         text = text.replace(sign, f"\\u{ord(sign):04x}")
     return text
 
 
-def _data(record: Mapping[str, Any], touches: TouchMap) -> dict[str, Any]:
+def _data(record: Mapping[str, Any], touches: TouchMap, graph: GraphMap) -> dict[str, Any]:
     """What the script needs: units, columns as drawn, and the touches of what flows on."""
     number_of = {node["name"]: i for i, node in enumerate(record["nodes"])}
     outputs: dict[tuple[str, str], int] = {}
@@ -168,6 +179,7 @@ def _data(record: Mapping[str, Any], touches: TouchMap) -> dict[str, Any]:
             "label": column.label,
             "x": round(column.x, 2),
             "wide": round(column.width, 2),
+            "regions": named((place[0] for place in column.places), record["variants"]),
             "places": column.places,
             "chosen": kept(column.chosen),
             "geometry": kept(column.geometry),
@@ -185,7 +197,8 @@ def _data(record: Mapping[str, Any], touches: TouchMap) -> dict[str, Any]:
         "lines": [[line.units, round(line.y, 2)] for line in touches.lines],
         "tall": round(touches.cell_height, 2),
         "columns": columns,
-        "nodes": [node["name"] for node in record["nodes"]],
+        "nodes": list(number_of),
+        "drawn": [number_of[graph.drawn_as.get(name, name)] for name in number_of],
         "edges": [
             [number_of[source], output, number_of[target]]
             for source, output, target, _ in record["edges"]
@@ -308,18 +321,30 @@ def _drawn(run: RunFolder) -> Iterator[Drawn]:
     background = slices.background_of(run)
     tested = [row for row in run.tests if not is_biased(row)]
     of_scale: dict[str, list[Row]] = {}
+    families: dict[str, list[Row]] = {}
     for row in tested:
-        if number(row, "estimate") is not None:
-            scale = "r" if "score" in run.region(str(row["roi"])) else str(row["scale"])
+        if number(row, "estimate") is None:
+            continue
+        scale = "r" if "score" in run.region(str(row["roi"])) else str(row["scale"])
+        if row["parcel"] is None:
             of_scale.setdefault(scale, []).append(row)
+        else:
+            families.setdefault(str(row["roi"]), []).append(row)
     for i, (scale, rows) in enumerate(of_scale.items(), 1):
         if len(rows) > 1:
             name = "estimates" if len(of_scale) == 1 else f"estimates_{i}"
             yield effects.forest(rows, name, scale)
+    for rows in families.values():
+        yield from effects.family_forests(rows)
+        lies = slices.labels_where(run, rows, background)
+        if lies is not None:
+            yield lies
     for row in tested[:_MOST_DRAWN]:
         if row["parcel"] is None:
             yield from _of_region(run, row, background)
     for row in [row for row in run.tests if is_biased(row)][:_MOST_DRAWN]:
+        if number(row, "estimate") is None:
+            continue  # no region: there is nothing to show
         yield effects.biased_strip(run, row)
         lies = slices.where(run, row, background)
         if lies is not None:
@@ -330,7 +355,8 @@ def _of_region(run: RunFolder, row: Row, background: slices.Volume | None) -> It
     roi = str(row["roi"])
     score = run.region(roi).get("score")
     twin = effects.twin_of(run, row)
-    if score is None:  # a correlation is no value among the subjects' values
+    # A correlation is no value among the subjects' values; without a region there is none.
+    if score is None and number(row, "estimate") is not None:
         yield effects.strip(run, row)
         if twin is not None:
             yield effects.strip(run, row, twin)

@@ -27,7 +27,9 @@ class Cause:
         How such a unit came to either side.
     many : int
         How many elements have this fault.
-    lost : list of str
+    made_of : list of str
+        Origins by which the region touches such a unit.
+    lost : list of (nodes, reason, cure)
         Where elements could not be told apart on the way, so that it may only seem so.
     """
 
@@ -40,7 +42,8 @@ class Cause:
     mask_path: list[str]
     data_path: list[str]
     many: int
-    lost: list[str]
+    made_of: list[str]
+    lost: list[tuple[list[str], str, str]]
 
 
 def refused_page(output: Path) -> Path:
@@ -54,7 +57,9 @@ def refused_page(output: Path) -> Path:
     return output.with_name(f"{output.name}.refused.html")
 
 
-def write_refused(error: GuardRefused, output: Path, name: str) -> Path:
+def write_refused(
+    error: GuardRefused, output: Path, name: str, variants: Mapping[str, str] | None = None
+) -> Path:
     """Write the page of a refused run.
 
     Parameters
@@ -64,19 +69,16 @@ def write_refused(error: GuardRefused, output: Path, name: str) -> Path:
         The output folder that the run would have written.
     name : str
         The study's.
+    variants : mapping of str to str, optional
+        By declared variant: the region that it varies.
 
     Returns
     -------
     Path
         Of the page.
     """
-    record = record_of(error)
-    lost = {
-        (one.node, one.reason): [f"{node}: {reason}; {cure}" for node, reason, cure in one.lost]
-        for one in error.findings
-        if one.lost
-    }
-    causes = causes_of(record, lost)
+    record = record_of(error, variants=variants)
+    causes = causes_of(record)
     text = rendered(
         "refused.html.j2",
         record,
@@ -92,18 +94,21 @@ def write_refused(error: GuardRefused, output: Path, name: str) -> Path:
     return page
 
 
-def causes_of(record: Mapping[str, Any], lost: Mapping[tuple[str, str], list[str]]) -> list[Cause]:
+def causes_of(record: Mapping[str, Any]) -> list[Cause]:
     """What stands in the way, each node and reason once."""
     groups: dict[tuple[str, str], list[dict[str, Any]]] = {}
     for meeting in record["meetings"]:
         if not meeting["allowed"]:
             groups.setdefault((meeting["node"], meeting["reason"]), []).append(meeting)
-    return [_cause(found, record, lost.get(key, [])) for key, found in groups.items()]
+    return [_cause(found, record) for found in groups.values()]
 
 
-def _cause(found: Sequence[dict[str, Any]], record: Mapping[str, Any], lost: list[str]) -> Cause:
+def _cause(found: Sequence[dict[str, Any]], record: Mapping[str, Any]) -> Cause:
     one, units = found[0], record["units"]
     shared = members(one["shared"], record["suffixes"])
+    nodes_of: dict[tuple[str, str], list[str]] = {}
+    for lost in (lost for meeting in found for lost in meeting["lost"]):
+        nodes_of.setdefault((lost["reason"], lost["cure"]), []).append(lost["node"])
     return Cause(
         one["kind"],
         one["node"],
@@ -114,5 +119,6 @@ def _cause(found: Sequence[dict[str, Any]], record: Mapping[str, Any], lost: lis
         one["mask_path"],
         one["data_path"],
         len(found),
-        lost,
+        one["made_of"],
+        [(nodes, reason, cure) for (reason, cure), nodes in nodes_of.items()],
     )

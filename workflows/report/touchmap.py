@@ -8,7 +8,7 @@ one of: chosen on, geometry only, tested on, both (biased where marked so, else 
 from __future__ import annotations
 
 import re
-from collections.abc import Mapping, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
@@ -127,7 +127,7 @@ def touch_map(record: Mapping[str, Any]) -> TouchMap:
     made.lines, made.by_subject = _lines(record, made.panels)
     _place(made)
     _mark(made)
-    made.summary = [_summary(panel, record) for panel in made.panels]
+    made.summary = [_summary(panel, record["variants"]) for panel in made.panels]
     return made
 
 
@@ -184,6 +184,37 @@ def _panels(record: Mapping[str, Any]) -> list[Panel]:
         else:
             panels[pattern] = Panel([region], mine)
     return list(panels.values())
+
+
+def named(regions: Iterable[str], variants: Mapping[str, str]) -> str:
+    """Regions in a row; declared variants are counted with the region that they vary.
+
+    Parameters
+    ----------
+    regions : iterable of str
+    variants : mapping of str to str
+        By a declared variant: the region that it varies.
+
+    Examples
+    --------
+    >>> variants = {"BrookVariant1": "Brook", "BrookVariant2": "Brook"}
+    >>> named(["Arbor", "Brook", *variants, "Cinder", "CinderVariant1"], variants)
+    'Arbor, Brook with 2 variants, Cinder, CinderVariant1'
+    >>> named(variants, variants)
+    '2 variants of Brook'
+    """
+    families: dict[str, list[str]] = {}
+    for region in dict.fromkeys(regions):
+        families.setdefault(variants.get(region, region), []).append(region)
+    told = []
+    for stated, found in families.items():
+        n = len(found) - (stated in found)
+        counted = f"{n} variant{'s' * (n > 1)}"
+        if stated in found:
+            told.append(f"{stated} with {counted}" if n else stated)
+        else:
+            told.append(f"{counted} of {stated}" if n > 1 else found[0])
+    return ", ".join(told)
 
 
 def _natural(label: str) -> list[tuple[int, str]]:
@@ -327,15 +358,17 @@ def state_of(column: Column, units: Sequence[int]) -> tuple[str, bool]:
     return ("chosen" if chosen else ""), geometry
 
 
-def _summary(panel: Panel, record: Mapping[str, Any]) -> str:
+def _summary(panel: Panel, variants: Mapping[str, str]) -> str:
     """One panel in a sentence, with the counts that a reader would check."""
-    n, names = len(panel.columns), listed(panel.regions, 8)
+    n, names = len(panel.columns), listed(named(panel.regions, variants).split(", "), 8)
     chosen = sorted({len(column.chosen) for column in panel.columns})
     tested = sorted({len(column.tested) for column in panel.columns})
     both = sum(bool(column.chosen & column.tested) for column in panel.columns)
     each = "each mask" if n > 1 else "the mask"
-    on = f"{each} was chosen on {_span(chosen)}" if chosen != [0] else f"{each} came from outside"
-    told = f"{names}: {n} mask{'s' * (n > 1)}; {on} and read in {_span(tested)}; "
+    on = f"{each} was chosen on {_span(chosen)} and read"
+    if chosen == [0]:
+        on = f"{each} came from outside and was read"
+    told = f"{names}: {n} mask{'s' * (n > 1)}; {on} in {_span(tested)}; "
     if both:
         certified = all(c.verdict == "certified" for c in panel.columns if c.chosen & c.tested)
         how = "under a certificate" if certified else "a leak"

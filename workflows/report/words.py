@@ -2,12 +2,16 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+import math
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
+from typing import Any
 
 from ...nodes.contour import FLAG
 from ...nodes.results import estimate_texts, p_text
 from .folder import Row, called, is_biased, number
+
+LITTLE = 0.8  # a mask of which somebody covers less is said to be covered badly
 
 
 @dataclass(frozen=True)
@@ -16,7 +20,7 @@ class Note:
 
     Parameters
     ----------
-    kind : {"waiver", "certificate", "look", "history", "shape", "verdict"}
+    kind : {"waiver", "certificate", "look", "history", "shape", "coverage", "verdict"}
     head, text : str
     """
 
@@ -58,6 +62,74 @@ def independence(row: Row) -> str:
     return "Not stated by this run."
 
 
+def _in_brief(row: Row) -> str:
+    """The same in a few words, for a page on which tests have several of them."""
+    if row.get("verdict") == "certified":
+        return "chosen on the tested data, under a certificate"
+    if row.get("claim") == "these subjects":
+        return "chosen on other data of the tested subjects"
+    if row.get("level") == "run":
+        return "chosen on other data of the same subject"
+    if row["plan"] == "a-priori":
+        return "from outside the study"
+    return "chosen without the tested subjects" if row.get("level") == "subject" else "not stated"
+
+
+@dataclass(frozen=True)
+class Claim:
+    """Tests of which the same may be believed.
+
+    Parameters
+    ----------
+    names : str
+        Of the regions or labels.
+    independence, null, searched, verdict, level : str
+    """
+
+    names: str
+    independence: str
+    null: str
+    searched: str
+    verdict: str
+    level: str
+
+
+def claims(tested: Sequence[Row]) -> list[Claim]:
+    """What may be believed of each test; those of which the same holds are told together."""
+    alike: dict[tuple[object, ...], list[Row]] = {}
+    for row in tested:
+        key = (independence(row), row["null"], row["verdict"], row["level"])
+        alike.setdefault(key, []).append(row)
+    return [
+        Claim(
+            names_of(rows),
+            independence(rows[0]),
+            str(rows[0]["null"] or ""),
+            "; ".join(dict.fromkeys(str(row["search"]) for row in rows)),
+            str(rows[0]["verdict"] or ""),
+            str(rows[0]["level"] or ""),
+        )
+        for rows in alike.values()
+    ]
+
+
+def names_of(rows: Sequence[Row]) -> str:
+    """Regions by name, of labels how many there are.
+
+    Examples
+    --------
+    >>> labels = [{"roi": "Beds", "parcel": str(i), "parcel_name": None} for i in range(3)]
+    >>> names_of([{"roi": "Arbor", "parcel": None}, *labels])
+    'Arbor and Beds (3 labels)'
+    """
+    many: dict[str, int] = {}
+    for row in rows:
+        name = str(row["roi"])
+        many[name] = many.get(name, 0) + (row.get("parcel") is not None)
+    labels = {n: f" ({k} label{'s' * (k > 1)})" if k else "" for n, k in many.items()}
+    return listed([name + labels[name] for name in many], 8)
+
+
 def found_in(row: Row) -> str:
     """In how many folds (or own masks) the rule found something, unless it did in all.
 
@@ -67,13 +139,18 @@ def found_in(row: Row) -> str:
     'found in 2 of 24 folds; the strongest voxels stood in for the others'
     >>> found_in({"n_folds": "24", "n_empty": "0", "n_replaced": "0"})
     ''
+    >>> found_in({"n_folds": "20", "n_empty": "3", "n_replaced": "0", "dice": "0.1"})
+    'found in 17 of 20 folds; the value counts as 0 in the others: not the size of an effect'
     """
     n, empty, replaced = (number(row, k) or 0 for k in ("n_folds", "n_empty", "n_replaced"))
     if not empty + replaced:
         return ""
+    if not n:
+        return "the rule found nothing; the strongest voxels stood in"
     of = "folds" if row.get("dice") or row.get("noise_dice") else "masks"
     filled = "the strongest voxels stood in for" if replaced else "the value counts as 0 in"
-    return f"found in {n - empty - replaced:.0f} of {n:.0f} {of}; {filled} the others"
+    size = ": not the size of an effect" if empty else ""
+    return f"found in {n - empty - replaced:.0f} of {n:.0f} {of}; {filled} the others{size}"
 
 
 def headline(tests: Sequence[Row]) -> str:
@@ -81,28 +158,33 @@ def headline(tests: Sequence[Row]) -> str:
 
     Examples
     --------
-    >>> headline([{"biased": "true", "p": None}])
+    >>> headline([{"biased": "true", "p": None, "estimate": "1.2"}])
     'Nothing is tested. 1 value is exploratory and biased, which is no evidence.'
+    >>> headline([{"biased": "true", "p": None, "estimate": None}])
+    'Nothing is tested. 1 exploratory look found no region.'
     """
     tested = [row for row in tests if not is_biased(row) and row["p"] is not None]
-    biased = [row for row in tests if is_biased(row)]
+    looked = [row for row in tests if is_biased(row)]
+    biased = [row for row in looked if number(row, "estimate") is not None]
     n = len(tested)
     if not n:
         said = "Nothing is tested."
     else:
-        ways = dict.fromkeys(independence(row) for row in tested)
-        of = "The one test" if n == 1 else f"All {n} tests"
-        said = f"{of}: {_lower(next(iter(ways)))}"
-        if len(ways) > 1:
-            told = [
-                f"{sum(independence(row) == way for row in tested)} \N{MULTIPLICATION SIGN} "
-                f"{_lower(way).rstrip('.')}"
-                for way in ways
-            ]
-            said = f"{n} tests: {'; '.join(told)}."
+        ways: dict[str, list[Row]] = {}
+        for row in tested:
+            ways.setdefault(independence(row), []).append(row)
+        if len(ways) == 1:
+            of = "The one test" if n == 1 else f"All {n} tests"
+            said = f"{of}: {_lower(next(iter(ways)))}"
+        else:
+            brief = [f"{names_of(rows)}: {_in_brief(rows[0])}" for rows in ways.values()]
+            said = f"{n} tests. {'; '.join(brief)}."
     if biased:
         are = "value is" if len(biased) == 1 else "values are"
         said += f" {len(biased)} {are} exploratory and biased, which is no evidence."
+    if empty := len(looked) - len(biased):
+        looks = "exploratory look" if empty == 1 else "exploratory looks"
+        said += f" {empty} {looks} found no region."
     return said
 
 
@@ -110,8 +192,11 @@ def _lower(text: str) -> str:
     return text[:1].lower() + text[1:]
 
 
-def notes(tests: Sequence[Row]) -> list[Note]:
-    """What narrows or burdens the results: waivers, certificates, later looks, shapes."""
+def notes(tests: Sequence[Row], beside: Sequence[str] = ()) -> list[Note]:
+    """What narrows or burdens the results: waivers, certificates, later looks, shapes.
+
+    `beside` are the ledgers beside the study's own that were counted too.
+    """
     tested = [row for row in tests if not is_biased(row)]
     made = []
     waived = [row for row in tested if row["claim"] == "these subjects"]
@@ -143,18 +228,7 @@ def notes(tests: Sequence[Row]) -> list[Note]:
                 "says on what.",
             )
         )
-    again = {called(row): looks for row in tested if (looks := number(row, "looks") or 1) > 1}
-    if again:
-        told = listed([f"{name} ({looks:.0f} looks)" for name, looks in again.items()])
-        made.append(
-            Note(
-                "look",
-                f"More than one look: {told}",
-                "Other regions of this run (exploratory ones count), or earlier runs, read some "
-                "of these voxels in some of these data. Each p-value is that of its own look and "
-                "is not adjusted for the others.",
-            )
-        )
+    made += _looks(tested, beside)
     late = [(called(row), row["history"]) for row in tested if row.get("history")]
     if late:
         made.append(
@@ -177,7 +251,64 @@ def notes(tests: Sequence[Row]) -> list[Note]:
                 "says more. A true effect that fills the region looks like that too.",
             )
         )
+    if low := low_coverage(tested):
+        made.append(
+            Note(
+                "coverage",
+                f"Masks that are not covered: {listed(low)}",
+                "Somebody has data in so little of a mask. Their value is that of another place "
+                "than the others' values. min_coverage in [data] asks for more.",
+            )
+        )
     return made
+
+
+def low_coverage(tested: Sequence[Mapping[str, Any]]) -> list[str]:
+    """The regions in which somebody has data in little of a mask, and in how much.
+
+    Examples
+    --------
+    >>> label = {"parcel": None, "parcel_name": None}
+    >>> low_coverage([label | {"roi": "Arbor", "coverage": "0.33"},
+    ...               label | {"roi": "Brook", "coverage": 0.8}])
+    ['Arbor (33 %)']
+    """
+    least: dict[str, float] = {}
+    for row in tested:
+        share = row.get("coverage")
+        if share is not None and float(share) < LITTLE:
+            name = str(row["roi"])
+            least[name] = min(least.get(name, 1.0), float(share))
+    return [f"{name} ({math.floor(100 * share)} %)" for name, share in least.items()]
+
+
+def _looks(tested: Sequence[Row], beside: Sequence[str]) -> Iterator[Note]:
+    """Tests whose voxels and data others have read too: in earlier runs, or in this one alone."""
+    earlier, here = [], []
+    for row in tested:
+        looks = int(number(row, "looks") or 1)
+        mine = number(row, "looks_of_run")
+        if looks > 1 and mine == looks:
+            here.append(f"{called(row)} ({looks})")
+        elif looks > 1:
+            told = "" if mine is None else f", {looks - int(mine)} of them in earlier runs"
+            earlier.append(f"{called(row)} ({looks} looks{told})")
+    if earlier:
+        yield Note(
+            "look",
+            f"Looked at before: {listed(earlier)}",
+            "Earlier runs read some of these voxels in some of these data. Each p-value is that "
+            "of its own look and is not adjusted for the others, whose results were known."
+            + (f" Counted too: the looks in {listed(beside)}." if beside else ""),
+        )
+    if here:
+        yield Note(
+            "look",
+            f"Read by several regions of this run: {listed(here)}",
+            "Each region is a look of its own, an exploratory one too, and these share voxels and "
+            "data. No earlier run is counted. Each p-value is that of its own look; p Holm covers "
+            "all tested regions of this run.",
+        )
 
 
 def listed(names: Sequence[str], most: int = 6) -> str:
@@ -191,6 +322,38 @@ def listed(names: Sequence[str], most: int = 6) -> str:
     if len(names) > most:
         return f"{', '.join(names[:most])} and {len(names) - most} more"
     return " and ".join([", ".join(names[:-1]), names[-1]] if len(names) > 1 else names)
+
+
+@dataclass(frozen=True)
+class Found:
+    """What came out, in a line.
+
+    Parameters
+    ----------
+    name, estimate, interval, p : str
+    note : str
+        What must be known with it.
+    """
+
+    name: str
+    estimate: str
+    interval: str
+    p: str
+    note: str
+
+
+def findings(tested: Sequence[Row]) -> list[Found]:
+    """Every test in a line."""
+    return [
+        Found(
+            called(row),
+            estimate_cells(row)[0],
+            estimate_cells(row)[1],
+            "no test" if (p := number(row, "p")) is None else p_text(p),
+            found_in(row),
+        )
+        for row in tested
+    ]
 
 
 def estimate_cells(row: Row) -> tuple[str, str]:

@@ -116,9 +116,8 @@
     const mask = data.columns[column];
     const units = data.lines[row][0];
     says.replaceChildren();
-    const regions = mask.places.map((one) => one[0]).join(", ");
     element("h4", data.units[units[0]] + (units.length > 1 ? " and " + (units.length - 1) + " more" : ""), says);
-    element("p", "Mask " + mask.label + " of " + regions + ": " + stateWords(mask, units) + ".", says, "state");
+    element("p", "Mask " + mask.label + " of " + mask.regions + ": " + stateWords(mask, units) + ".", says, "state");
     element("p", "Verdict: " + mask.verdict + (mask.level ? ", " + mask.level + " level" : "") + ".", says);
     const [, maskPlace, node] = mask.places[0];
     const place = placeOf(maskPlace);
@@ -180,7 +179,7 @@
     const [overRow, overColumn] = cellAt(event);
     if (overRow < 0 || overColumn < 0) return;
     choose(overRow, overColumn, false);
-    pick(data.columns[overColumn].places[0], data.lines[overRow][0][0]);
+    pick(data.columns[overColumn].places[0]);
   });
   frame.addEventListener("focus", () => {
     if (row < 0) choose(0, 0, false);
@@ -194,7 +193,7 @@
       event.preventDefault();
       choose(row + moves[event.key][0], column + moves[event.key][1], true);
     } else if (event.key === "Enter" && row >= 0) {
-      pick(data.columns[column].places[0], data.lines[row][0][0]);
+      pick(data.columns[column].places[0]);
     }
   });
 
@@ -274,12 +273,15 @@
     return found;
   }
 
-  const named2 = (set) => new Set([...set].map((i) => data.nodes[i]));
+  // Steps that are alike are drawn once: which node stands for each.
+  const namesOf = (set) => new Set([...set].map((i) => data.nodes[i]));
+  const drawnOf = (set) => new Set([...set].map((i) => data.nodes[data.drawn[i]]));
 
   function lightNode(name, head) {
-    const found = named2(upstream(nodeNumber.get(name)));
-    const others = [...found].filter((one) => one !== name);
-    light(found, (from, to) => found.has(from) && found.has(to),
+    const found = upstream(nodeNumber.get(name));
+    const others = [...namesOf(found)].filter((one) => one !== name);
+    const drawn = drawnOf(found);
+    light(drawn, (from, to) => drawn.has(from) && drawn.has(to),
       head + (others.length ? " Led to by " + others.join(", ") + "." : " Nothing in the graph leads to it."));
   }
 
@@ -294,20 +296,20 @@
     elementsOf.forEach((list, k) => {
       if (list.some((one) => has(one.values, unit) || has(one.geometry, unit))) outputs.add(k);
     });
-    const found = named2(new Set([...outputs].map((k) => data.outputs[k][0])));
+    const found = drawnOf([...outputs].map((k) => data.outputs[k][0]));
     const carried = new Set();
     data.edges.forEach(([source, output, target]) => {
-      if (outputs.has(outputNumber.get(source + "." + output))) carried.add(data.nodes[source] + " " + data.nodes[target]);
+      if (outputs.has(outputNumber.get(source + "." + output))) {
+        carried.add(data.nodes[data.drawn[source]] + " " + data.nodes[data.drawn[target]]);
+      }
     });
     light(found, (from, to) => carried.has(from + " " + to), data.units[unit] + " touched " + (found.size ? [...found].join(", ") : "nothing") + ".");
   }
 
-  function pick(place, unit) {
-    const i = masks.findIndex((one) => one.place === place);
-    at("pickmask").value = String(i);
+  function pick(place) {
+    at("pickmask").value = String(masks.findIndex((one) => one.place === place));
     at("pickunit").value = "";
     lightMask(place);
-    if (i < 0 && unit !== undefined) lightUnit(unit);
   }
 
   at("pickmask").addEventListener("change", () => {
