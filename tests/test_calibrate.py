@@ -7,6 +7,7 @@ import signal
 import subprocess
 import sys
 import time
+from dataclasses import replace
 from pathlib import Path
 
 import nibabel as nib
@@ -14,12 +15,13 @@ import numpy as np
 import psutil
 import pytest
 from click.testing import CliRunner
+from planting import save
 from scipy import ndimage
 from sequester.nodes import nullsets, progress
 from sequester.nodes.errors import InputError
 from sequester.nodes.groupmaps import Missing
 from sequester.nodes.masks import Strongest
-from sequester.nodes.nullsets import Circular, NullMaps, Rows
+from sequester.nodes.nullsets import Circular, NullMaps, Rows, Searched
 from sequester.nodes.procedure import Procedure
 from sequester.nodes.simulated import Noise
 from sequester.nodes.smoothness import fwhm_of_stack
@@ -27,11 +29,12 @@ from sequester.nodes.space import Grid
 from sequester.workflows import calibrate, demo
 from sequester.workflows.calibrate import Calibration
 from sequester.workflows.cli import main
+from sequester.workflows.measured import Measured
 from sequester.workflows.run import run_study
 from sequester.workflows.settings import read_settings
 
 PAGE = Path(__file__).parent.parent / "docs" / "calibrate.md"
-SHAPE, AFFINE = (9, 8, 7), np.diag([3.0, 3.0, 3.0, 1.0])
+SHAPE = (9, 8, 7)
 FWHM = (2.5, 2.0, 1.5)
 # Eight gardeners, two of whom are one household: seven independent ones, all flips enumerated.
 HOUSEHOLD = {"07": "hut", "08": "hut"}
@@ -48,14 +51,14 @@ PLANS = {
     "Below": 'plan = "k-fold"\nfolds = 3\nrule = { kind = "strongest", k = 9 }\nflips = 199\n'
     'tail = "negative"\nvalue = "median"',
     "Other": 'plan = "split-half"\nrule = { kind = "threshold", p = 0.1 }\nflips = 199\n'
-    'choose_on = { task = "paths" }',
+    'choose_on = { task = "paths" }\non_empty = "strongest"\nk = 5',
     "Brook": 'plan = "a-priori"\nvalue = "component"\nregion = { mask = "bed.nii.gz", '
     'origin = "o" }',
     "Scent": 'plan = "a-priori"\nvalue = "weighted"\nregion = { mask = "scent.nii.gz", '
     'origin = "o" }',
     "Beds": 'plan = "a-priori"\neach_label = true\nregion = { atlas = "beds.nii.gz", '
     'origin = "o" }',
-    "Steps": 'plan = "leave-one-run-out"\nrule = { kind = "strongest", k = 9 }\n'
+    "Steps": 'plan = "leave-one-run-out"\nrule = { kind = "strongest", k = 9, map = "mean" }\n'
     'search = { mask = "bed.nii.gz", origin = "o" }',
     "Halves": 'plan = "split-half-runs"\nvalue = "component"\n'
     'rule = { kind = "peak-sphere", radius = 4, map = "mean" }',
@@ -65,11 +68,6 @@ PLANS = {
     'rule = { kind = "cluster", p = 0.2 }\nchoose_on = { task = "paths" }',
     "Look": 'plan = "exploratory"\nrule = { kind = "strongest", k = 9 }',
 }
-
-
-def save(path, data):
-    path.parent.mkdir(parents=True, exist_ok=True)
-    nib.save(nib.Nifti1Image(data, AFFINE), path)
 
 
 def smooth(rng, fwhm=FWHM):
@@ -392,6 +390,46 @@ def test_kept_sets_of_something_else_are_refused(garden, tmp_path):
     assert "got another inputs" in sequester(*ask, "--flips", 19, code=2).stderr
     (tmp_path / "keep" / "Arbor.jsonl").write_text("{}\nnonsense\n")
     assert "kept data sets cannot be read" in sequester(*ask, code=2).stderr
+
+
+def test_kept_sets_are_of_all_that_decides_what_they_give(garden):
+    """Whatever changes a row's data sets must change the digest by which they are kept."""
+    settings = read_settings(garden / "STUDY.toml")
+    (roi,) = [roi for roi in settings.rois if roi.name == "Own"]
+    n = int(np.prod(SHAPE))
+
+    def rows(*gaps):
+        present = np.ones((2, n), bool)
+        present[gaps] = False
+        return Rows(("01", "02"), ("01", "02"), present)
+
+    def place(affine):
+        return Searched(Grid(SHAPE, affine), np.ones((1, n)))
+
+    one = Measured(
+        place(np.eye(4)), np.ones((1, n), int), (1,), FWHM, rows(), rows(), ("1", "1"), 1.0
+    )
+    outside = np.where(np.arange(n) == 5, 0.0, 1.0)[None]
+    others = [
+        replace(one, searched=place(np.diag([2.0, 1, 1, 1]))),
+        replace(one, searched=Searched(one.searched.grid, outside)),
+        replace(one, labels=one.labels + 1),
+        replace(one, numbers=(2,)),
+        replace(one, fwhm=(2.5, 2.0, 1.6)),
+        replace(one, tested=rows(0, 7)),
+        replace(one, tested=replace(one.tested, people=("01", "01"))),
+        replace(one, choosing=rows(0, 7)),
+        replace(one, choosing=None),
+        replace(one, runs=("1", "2")),
+        replace(one, spread=1.5),
+    ]
+    digests = [calibrate._digest(settings, roi, measured) for measured in (one, *others)]
+    assert len(set(digests)) == len(digests)
+    assert calibrate._digest(settings, roi, replace(one)) == digests[0]
+    covered = replace(settings.maps, min_coverage=0.5)
+    assert calibrate._digest(replace(settings, maps=covered), roi, one) not in digests
+    middle = replace(roi, summary="median")
+    assert calibrate._digest(settings, middle, one) not in digests
 
 
 # -- what is asked ----------------------------------------------------------------------------

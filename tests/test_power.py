@@ -16,7 +16,9 @@ from scipy import ndimage, optimize, stats
 from sequester.nodes import power, simulated
 from sequester.nodes.errors import InputError
 from sequester.nodes.folds import KFold, LeaveOneOut
+from sequester.nodes.heldout import _words
 from sequester.nodes.masks import Cluster, Strongest, Threshold
+from sequester.nodes.models import Groups, Score
 from sequester.nodes.power import Correlation, OneSample, Repeated, TwoSample
 from sequester.nodes.procedure import Procedure
 from sequester.nodes.smoothness import fwhm_of_stack
@@ -29,6 +31,7 @@ from sequester.workflows.settings import read_settings
 from statsmodels.stats.power import FTestAnovaPower, TTestIndPower, TTestPower
 
 PAGE = Path(__file__).parent.parent / "docs" / "power.md"
+SVG = "{http://www.w3.org/2000/svg}"
 GRID = Grid((8, 8, 8), np.diag([3.0, 3.0, 3.0, 1.0]))
 
 
@@ -436,6 +439,32 @@ def test_a_study_is_simulated_to_the_same_bytes_and_each_region_by_itself(study,
     assert other[0]["estimate"] != told["Arbor"]["estimate"]
 
 
+def test_folds_that_choose_on_another_task_are_simulated_so(study):
+    """A region found on maps of dawn and read on those of dusk, which go with them."""
+    region = 'search = { mask = "arbor.nii.gz", origin = "drawn beforehand" }\n'
+    region += 'rule = { kind = "strongest", k = 20 }\nplan = "k-fold"\nfolds = 4\n'
+    (study / "TASKS.toml").write_text(
+        f'{STUDY.split("[[roi]]", 1)[0]}[[roi]]\nname = "Pond"\n{region}'
+        f'choose_on = {{ task = "dawn" }}\n[[roi]]\nname = "Same"\n{region}'
+    )
+    settings = read_settings(study / "TASKS.toml")
+    labels, asked = [f"{i:05d}" for i in range(12)], trials.Simulation(effect=0.8, n_flips=19)
+    for roi, other in zip(settings.rois, (True, False), strict=True):
+        measured = trials._measure(settings, roi)
+        assert measured.alike == pytest.approx(other * ALIKE / 1.125, abs=0.1)
+        world = simulated.World(
+            measured.grid, simulated.Noise(measured.grid, measured.fwhm), 0.8, 0.1, measured.alike
+        )
+        made = trials._trial(roi, measured, world, 12, asked)(7, np.random.default_rng(1))
+        expected, unlike = (
+            simulated.cross_fitted_trial(
+                roi.procedure, world, labels, 19, 7, 0.05, np.random.default_rng(1), other_maps=maps
+            )
+            for maps in (other, not other)
+        )
+        assert made == expected != unlike
+
+
 def test_the_text_names_what_the_numbers_rest_on(study):
     said = sequester(
         "power", study / "STUDY.toml", "--effect", 1, "--sets", 5, "--flips", 19, "-q"
@@ -486,11 +515,42 @@ def test_own_grids_are_not_simulated(study, tmp_path):
     assert 'grids = "own" cannot be simulated' in done.stderr
 
 
+def test_what_tests_no_mean_is_left_out_by_name_and_refused_alone(study, tmp_path):
+    copy = Path(shutil.copytree(study, tmp_path / "study"))
+    text = (copy / "STUDY.toml").read_text()
+    head, arbor, brook, *_ = text.split("[[roi]]")
+    groups = arbor.replace("Arbor", "Sides") + (
+        'compare = { column = "shift", first = "early", second = "late" }\n'
+    )
+    score = arbor.replace("Arbor", "Skilled") + 'score = "skill"\n'
+    (copy / "STUDY.toml").write_text("[[roi]]".join([head, groups, brook, score]))
+    head, *lines = (copy / "table.tsv").read_text().splitlines()
+    cells = [(line, int(line[:2])) for line in lines]
+    lines = [f"{line}\t{'late' if i % 2 else 'early'}\t{i * i % 7}" for line, i in cells]
+    (copy / "table.tsv").write_text("\n".join([f"{head}\tshift\tskill", *lines]) + "\n")
+    asked = ["power", copy / "STUDY.toml", "--effect", 1, "-q"]
+    made = json.loads(sequester(*asked, "--json").stdout)
+    told = {one["roi"]: one for one in made["planned"]}
+    assert told["Brook"]["power"] == OneSample().at(1, 12).power
+    for name, what, test in (
+        ("Sides", "a comparison of early and late", "two-sample"),
+        ("Skilled", "a correlation with skill", "correlation"),
+    ):
+        why = f"{what}; by formula: sequester power --test {test}"
+        assert told[name] == {"roi": name, "plan": "k-fold", "refused": why}
+        assert f"{name}: not simulated. It is {why}." in made["notes"]
+        said = " ".join(sequester(*asked, "--roi", name, code=2).stderr.split())
+        assert f"no region that can be simulated (roi {name}): expected a test of one mean" in said
+        assert f"got {why}" in said
+    shown = sequester(*asked).stdout
+    assert "\nBrook " in shown and "\nSides " not in shown.partition("Simulated")[0]
+
+
 # -- an earlier run ---------------------------------------------------------------------------
 
 COLUMNS = [
     "roi", "plan", "parcel", "parcel_name", "n_subjects", "estimate", "biased", "claim",
-    "interval_low", "interval_high", "interval_kind", "p", "p_kind", "dz",
+    "interval_low", "interval_high", "interval_kind", "p", "p_kind", "dz", "target",
 ]  # fmt: skip
 FLIPS = "whole-procedure sign flip, 999 random flips"
 T = "Student's t, two-sided"
@@ -507,13 +567,24 @@ ROWS = [
      "exact", "0.001", T, "1"],
     ["Pond", "given-folds", "n/a", "n/a", "24", "1.9", "false", "population", "1", "2.8",
      "approximate", "n/a", "n/a", "n/a"],
+    ["Sides", "k-fold", "n/a", "n/a", "24", "1.9", "false", "population", "1", "2.8",
+     "approximate", "0.01", FLIPS, "n/a"],
+    ["Skilled", "k-fold", "n/a", "n/a", "24", "0.5", "false", "population", "0.1", "0.7",
+     "approximate", "0.01", FLIPS, "n/a"],
+    ["Hole", "k-fold", "n/a", "n/a", "24", "1.9", "false", "population", "n/a", "n/a",
+     "n/a", "0.01", FLIPS, "n/a"],
 ]  # fmt: skip
+TARGETS = {
+    "Sides": _words(Groups((("a", "late"), ("b", "early")), "late", "early"), "ab").target,
+    "Skilled": _words(Score((("a", 1.0), ("b", 2.0)), name="skill"), "ab").target,
+}
 
 
 @pytest.fixture
 def results(tmp_path):
     def written(rows=ROWS):
-        lines = ["\t".join(row) for row in [COLUMNS, *rows]]
+        about = [[*row, TARGETS.get(row[0], "mean true effect")] for row in rows]
+        lines = ["\t".join(row) for row in [COLUMNS, *about]]
         (tmp_path / "roi_tests.tsv").write_text("\n".join(lines) + "\n")
         return tmp_path
 
@@ -540,7 +611,11 @@ def test_a_new_study_is_planned_on_held_out_effects_and_their_lower_ends(results
     assert {one["kind"] for one in told["Cinder"]["basis"]} == {"held-out dz"}
     assert "inflated by selection" in told["ArborLook"]["refused"]
     assert "about these subjects only" in told["Meadow"]["refused"]
-    assert "not tested" in told["Pond"]["refused"]
+    assert told["Pond"]["refused"] == "not tested"
+    by = "which has no dz; by formula: sequester power --test"
+    assert told["Sides"]["refused"] == f"a comparison of groups, {by} two-sample"
+    assert told["Skilled"]["refused"] == f"a correlation, {by} correlation"
+    assert told["Hole"]["refused"] == "without an effect size"
     said = " ".join(sequester("power", "--from", results()).stdout.split())
     assert "none: includes 0" in said
     assert "ArborLook: refused as a basis. It is exploratory" in said
@@ -589,22 +664,25 @@ def test_no_infinity_reaches_json():
     assert one["type_m"] is None
 
 
+def marks(svg, curve):
+    """Where the points of a curve are drawn: those of its line."""
+    (group,) = [e for e in ET.fromstring(svg).iter() if e.get("id") == curve]
+    drawn = group.find(f"{SVG}path").get("d")
+    return [tuple(map(float, xy)) for xy in re.findall(r"[ML] ([\d.]+) ([\d.]+)", drawn)]
+
+
 def test_the_figure_shows_the_numbers(tmp_path):
     path = tmp_path / "inflation.svg"
     sequester("power", "--inflation", "--p", 0.01, "--n", 12, "--n", 60, "--figure", path)
-    root = ET.fromstring(path.read_bytes())
-    space = "{http://www.w3.org/2000/svg}"
-    line = next(e for e in root.iter(f"{space}path") if e.get("d").count("L") > 5)
-    points = np.array(re.findall(r"([\d.]+) ([\d.]+)", line.get("d")), float)
-    ticks = {
-        e.text: float(e.get("y")) - 4
-        for e in root.iter(f"{space}text")
-        if e.get("text-anchor") == "end"
-    }
-    zero, last = ticks["0"], list(ticks.items())[-1]
-    values = (zero - points[:, 1]) / (zero - last[1]) * float(last[0])
+    ticks = {}
+    for group in ET.parse(path).iter(f"{SVG}g"):
+        if group.get("id", "").startswith("ytick"):
+            at, said = (next(group.iter(f"{SVG}{tag}")) for tag in ("use", "text"))
+            ticks[float(said.text)] = float(at.get("y"))
+    zero, one = ticks[0], max(ticks)
+    y = np.array(marks(path.read_text(), "curve0"))[:, 1]
     expected = [power.circular_inflation(0.01, n) for n in range(12, 61)]
-    assert values == pytest.approx(expected, abs=0.002)
+    assert (zero - y) / (zero - ticks[one]) * one == pytest.approx(expected, abs=1e-4)
     assert (
         "figure exists already"
         in sequester("power", "--inflation", "--figure", path, code=2).stderr
@@ -612,20 +690,37 @@ def test_the_figure_shows_the_numbers(tmp_path):
 
 
 def test_a_figure_names_its_curves_safely_and_shows_errors():
-    made = curves_svg("a < b", "n", "power", [Curve("d & e", (5.0,), (0.4,), (0.1,))], 1)
-    root = ET.fromstring(made)
-    texts = [e.text for e in root.iter() if e.tag.endswith("text")]
-    assert {"a < b", "d & e"} <= set(texts)
-    assert made.count("<circle") == 1
-    assert made == curves_svg("a < b", "n", "power", [Curve("d & e", (5.0,), (0.4,), (0.1,))], 1)
+    def drawn(*error):
+        return curves_svg("a < b", "n", "$power$", [Curve("d & e", (5.0,), (0.4,), error)], 1)
+
+    texts = [e.text for e in ET.fromstring(drawn(0.1)).iter() if e.tag.endswith("text")]
+    assert {"a < b", "d & e", "$power$"} <= set(texts)
+    assert "LineCollection" in drawn(0.1)
+    assert "LineCollection" not in drawn()
+    assert drawn(0.1) == drawn(0.1)
+
+
+def test_curves_are_where_their_numbers_say():
+    (one, other) = Curve("b", (5.0, 10.0, 20.0), (0, 0.5, 1)), Curve("c", (5.0, 20.0), (1, 0))
+    made = curves_svg("a", "n", "power", [one, other], 1)
+    (x, low), (middle, half), (far, high) = marks(made, "curve0")
+    assert marks(made, "curve1") == [(x, high), (far, low)]
+    assert middle - x == pytest.approx((far - x) / 3, abs=0.02)
+    assert low - half == pytest.approx((low - high) / 2, abs=0.02)
 
 
 def test_a_logarithmic_axis_spaces_by_ratio():
     made = curves_svg("a", "n", "power", [Curve("b", (5.0, 50.0, 500.0), (0, 0, 0))], 1, log=True)
-    line = next(e for e in ET.fromstring(made).iter() if e.get("d", "").count("L") == 2)
-    a, b, c = (float(x) for x, _ in re.findall(r"([\d.]+) ([\d.]+)", line.get("d")))
+    (a, _), (b, _), (c, _) = marks(made, "curve0")
     assert b - a == pytest.approx(c - b, abs=0.02)
     assert ">200</text>" in made
+
+
+def test_no_two_curves_look_the_same():
+    listed = [Curve(f"c{i}", (5.0, 6.0), (0.1 * i, 0.1 * i)) for i in range(12)]
+    made = ET.fromstring(curves_svg("a", "n", "power", listed, 1))
+    styles = [e[0].get("style") for e in made.iter() if e.get("id", "").startswith("curve")]
+    assert len(set(styles)) == len(styles) == 12
 
 
 def commands():

@@ -5,10 +5,11 @@ import json
 import shutil
 from pathlib import Path
 
-import nibabel as nib
 import numpy as np
 import pytest
 from click.testing import CliRunner
+from planting import files_in, save
+from sequester.nodes.controlled import Controlled
 from sequester.nodes.errors import InputError
 from sequester.nodes.groupmaps import Missing
 from sequester.nodes.masks import Cluster, Strongest, Threshold
@@ -91,10 +92,18 @@ def test_subjects_are_sorted_as_text_and_runs_within_them(study):
             "near = [1, -2.5, 3] }",
             Cluster(4, None, 26, 10, "nearest", (1.0, -2.5, 3.0)),
         ),
+        (
+            '{ kind = "threshold", control = "bonferroni" }',
+            Threshold(control=Controlled("bonferroni", 0.05, 999, 7)),
+        ),
+        (
+            '{ kind = "cluster", p = 0.01, extent = "max-cluster", level = 0.1, flips = 49 }',
+            Cluster(p=0.01, extent=Controlled("max-cluster", 0.1, 49, 7)),
+        ),
     ],
 )
 def test_rules(study, text, rule):
-    settings = study(HEAD + FOUND.replace('{ kind = "threshold", p = 0.01 }', text))
+    settings = study(HEAD + "seed = 7\n" + FOUND.replace('{ kind = "threshold", p = 0.01 }', text))
     assert settings.rois[0].procedure.rule == rule
 
 
@@ -197,6 +206,10 @@ def test_selection_of_rows(study):
         ),
         (HEAD + FOUND + 'on_empty = "smallest"\n', "unknown on_empty (STUDY, line 9)"),
         (HEAD + FOUND + 'tail = "both"\n', "unknown tail (STUDY, line 9)"),
+        (
+            HEAD + FOUND + 'value = "weighted"\n',
+            "value = \"weighted\" does not go with plan 'leave-one-subject-out' (STUDY, line 9)",
+        ),
         (HEAD + FOUND + 'interval = "bootstrap"\n', "unknown interval (STUDY, line 9)"),
         (HEAD + FOUND + "flips = 9.5\n", "flips has the wrong type (STUDY, line 9): expected a w"),
         (
@@ -214,6 +227,8 @@ def test_selection_of_rows(study):
             "region needs exactly one of mask, centre, atlas, union, intersection, difference (",
         ),
         (HEAD + GIVEN.replace("[9, 12, 9]", "[9, 12]"), "centre is no coordinate (STUDY, line 8)"),
+        (HEAD + GIVEN.replace("[9, 12, 9]", "[9, true, 9]"), "centre is no coordinate (STUDY, lin"),
+        (HEAD + GIVEN.replace("[9, 12, 9]", "[9, nan, 9]"), "centre is no coordinate (STUDY, line"),
         (
             HEAD + GIVEN.replace("radius = 4, ", ""),
             "missing key 'radius' in centre (STUDY, line 8)",
@@ -243,6 +258,14 @@ def test_selection_of_rows(study):
         (
             HEAD + "\n[data]\nmin_fraction = 1.5\n" + FOUND,
             "min_fraction out of range (STUDY, line 6): expected 0 < min_fraction <= 1, got 1.5",
+        ),
+        (
+            HEAD + "\n[data]\nmin_coverage = 1.5\n" + FOUND,
+            "min_coverage out of range (STUDY, line 6): expected 0 to 1, a share of t",
+        ),
+        (
+            HEAD + "\n[data]\nmin_coverage = -0.1\n" + FOUND,
+            "min_coverage out of range (STUDY, line 6): expected 0 to 1, a share of t",
         ),
         (
             HEAD + "\n[data]\nselect = { mood = 'calm' }\n" + FOUND,
@@ -288,6 +311,46 @@ def test_rows_that_do_not_fit_together(study, tmp_path, rows, message):
     assert expected in str(told.value)
 
 
+def test_volumes_of_which_nobody_has_said_what_they_hold(study, tmp_path):
+    table = "path\tvolume\tsub\tcontrast\nmaps.nii\t0\t1\tn/a\nmaps.nii\t1\t1\tn/a\n"
+    with pytest.raises(InputError, match=r"maps of one run.*fill the contrast column of the table"):
+        study(HEAD + GIVEN, table)
+
+
+def test_a_group_is_written_as_the_table_does(study, tmp_path):
+    text = 'compare = { column = "task", first = "Kites", second = "gliders" }\n'
+    table = TABLE + "".join(row(f"{i}.nii", f"{i}", "1", ("kites", "gliders")[i % 2])
+                            for i in range(8))  # fmt: skip
+    study(HEAD + FOUND.replace("0.01", "0.1") + text.replace("K", "k"), table)
+    with pytest.raises(InputError) as told:
+        study(HEAD + FOUND + text, table)
+    assert str(told.value) == (
+        f"compare names a group of nobody ({tmp_path / 'STUDY.toml'}, line 9): expected what "
+        "stands in column task: 'gliders', 'kites', got 'Kites'; write it as the table does: "
+        "capitals count"
+    )
+
+
+def test_a_region_may_subtract_nothing_where_the_others_do(study):
+    table = TABLE + "".join(
+        row(f"{i}{contrast}.nii", str(i), contrast=contrast)
+        for i in range(1, 5)
+        for contrast in ("gust", "lull")
+    )
+    data = '\n[data]\nselect = { contrast = "gust" }\nminus = { contrast = "lull" }\n'
+    both, plain = study(HEAD + data + GIVEN + FOUND + "minus = {}\n", table).rois
+    assert (len(both.tested.minus), len(plain.tested.minus)) == (4, 0)
+    with pytest.raises(InputError, match="minus selects the very maps"):
+        study(HEAD + data.replace('{ contrast = "lull" }', "{}") + GIVEN, table)
+
+
+def test_a_byte_order_mark_before_the_study_file_is_none_of_its_text(study, tmp_path):
+    plain = study(HEAD + GIVEN)
+    (tmp_path / "STUDY.toml").write_text("\ufeff" + HEAD + GIVEN, encoding="utf-8")
+    marked = read_settings(tmp_path / "STUDY.toml")
+    assert (marked.text, marked.rois) == (plain.text, plain.rois)
+
+
 # -- run ------------------------------------------------------------------------------------
 
 RUN = HEAD + FOUND.replace("0.01", "0.1") + 'search = { mask = "in/ridge.nii.gz", origin = "x" }\n'
@@ -298,15 +361,14 @@ RUN += "flips = 49\n" + GIVEN
 def analysed(tmp_path_factory):
     """A study of 7 subjects, one left out, that was run once."""
     folder = tmp_path_factory.mktemp("settings") / "study"
-    (folder / "in").mkdir(parents=True)
-    rng, table, affine = np.random.default_rng(2), TABLE, np.diag([3.0, 3.0, 3.0, 1.0])
+    rng, table = np.random.default_rng(2), TABLE
     for i in range(1, 8):
         data = rng.standard_normal((7, 8, 6)).astype(np.float32) + np.float32(0.5)
-        nib.save(nib.Nifti1Image(data, affine), folder / "in" / f"{i}.nii.gz")
+        save(folder / "in" / f"{i}.nii.gz", data)
         reason = "moved more than 3 mm" if i == 4 else "n/a"
         table += row(f"in/{i}.nii.gz", f"{i:02d}", reason=reason)
     mask = np.ones((7, 8, 6), np.uint8)
-    nib.save(nib.Nifti1Image(mask, affine), folder / "in" / "ridge.nii.gz")
+    save(folder / "in" / "ridge.nii.gz", mask)
     (folder / "table.tsv").write_text(table)
     (folder / "STUDY.toml").write_text(RUN)
     run(folder / "STUDY.toml")
@@ -319,15 +381,11 @@ def run(path):
     return done
 
 
-def content(folder):
-    return {str(p.relative_to(folder)): p.read_bytes() for p in folder.rglob("*") if p.is_file()}
-
-
 def test_study_that_is_moved_gives_the_same_bytes(analysed, tmp_path):
     moved = Path(shutil.copytree(analysed, tmp_path / "elsewhere" / "under another name"))
     shutil.rmtree(moved / "results")
     run(moved / "STUDY.toml")
-    assert content(moved / "results") == content(analysed / "results")
+    assert files_in(moved / "results") == files_in(analysed / "results")
 
 
 def test_study_that_is_run_from_its_own_folder_gives_the_same_bytes(
@@ -337,13 +395,13 @@ def test_study_that_is_run_from_its_own_folder_gives_the_same_bytes(
     shutil.rmtree(moved / "results")
     monkeypatch.chdir(moved)
     run("STUDY.toml")
-    assert content(moved / "results") == content(analysed / "results")
+    assert files_in(moved / "results") == files_in(analysed / "results")
     assert Path.cwd() == moved, "the engine's change of folder was not undone"
 
 
 def test_no_path_of_this_machine_is_recorded(analysed):
     here = str(analysed.parent).encode()
-    for name, data in content(analysed / "results").items():
+    for name, data in files_in(analysed / "results").items():
         assert here not in data, name
 
 
@@ -368,4 +426,4 @@ def test_row_left_out_may_lack_its_file(analysed, tmp_path):
     (study / "in" / "4.nii.gz").unlink()
     shutil.rmtree(study / "results")
     run(study / "STUDY.toml")
-    assert content(study / "results") == content(analysed / "results")
+    assert files_in(study / "results") == files_in(analysed / "results")

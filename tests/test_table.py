@@ -14,6 +14,7 @@ from sequester.nodes.errors import InputError
 from sequester.nodes.images import write_bytes
 from sequester.nodes.touch import Unit
 from sequester.workflows.cli import main
+from sequester.workflows.settings import read_settings
 from sequester.workflows.study import COLUMNS, read_table, table_text
 from sequester.workflows.table import rows_from
 
@@ -338,6 +339,15 @@ def test_columns_of_our_own_are_covariates(tmp_path):
         ("path\tsub\tvolume\na\t1\t-1\n", "volume is no number (TABLE, line 2): expected 0, 1"),
         ("path\tsub\tvolume\na\t1\t²\n", "volume is no number (TABLE, line 2): expected 0, 1"),
         (
+            "path\tsub\texchange\na\t1\t2\nb\t2\tn/a\nc\t3\t2\n",
+            "the exchange value '2' is the label of another subject (TABLE): got on sub-1 (line "
+            "2), and sub-2 has none (line 3)",
+        ),
+        (
+            "path\tsub\texchange\na\t1\t2\nb\t2\tx\n",
+            "the exchange value '2' is the label of another subject",
+        ),
+        (
             "path\tsub\texchange\na\t1\tx\nb\t1\ty\n",
             "sub-1 has two exchange values (TABLE): got 'x' (line 2) and 'y' (line 3)",
         ),
@@ -360,8 +370,19 @@ def test_byte_order_mark_and_line_ends_of_other_programs(tmp_path):
     assert (row.path, row.unit.sub) == ("a.nii", "01")
 
 
+def test_a_cell_without_anything_is_blank_however_it_is_padded(tmp_path):
+    path = tmp_path / "table.tsv"
+    path.write_text("path\tsub\trun\ttask\texclude_reason\n a.nii\t01 \t n/a \t  \tn/a \n")
+    (row,) = read_table(path).rows
+    assert (row.path, row.unit.sub, row.unit.run, row.unit.task) == ("a.nii", "01", "", "")
+    assert row.exclude_reason == ""
+
+
 def test_rows_that_share_an_exchange_value_are_one_person(tmp_path):
     path = tmp_path / "table.tsv"
+    path.write_text("path\tsub\texchange\na\t1\t1\nb\t2\t1\nc\t3\tn/a\n")
+    study = read_table(path)  # named after the first of them
+    assert study.table.people_of(study.table.everything) == {"1", "3"}
     path.write_text("path\tsub\texchange\na\t1\ttwins\nb\t2\ttwins\nc\t3\tn/a\n")
     assert [row.person for row in read_table(path).rows] == ["twins", "twins", "3"]
 
@@ -385,3 +406,72 @@ def test_columns_of_a_participants_table(tmp_path):
     assert done.exit_code == 2
     assert "subjects without a line in the participants table" in done.stderr
     assert "sub-02" in done.stderr
+
+
+@pytest.mark.parametrize(
+    ("text", "told"),
+    [
+        (
+            "participant_id\tage\nsub-01\t31\nsub-02\t40\n01\t32\n",
+            "two lines of one subject that differ (LISTED, lines 2 and 4): expected one line for "
+            "each subject, got sub-01 with age '31' and '32'",
+        ),
+        (
+            "participant_id\tage\nsub-01\t31\nsub-02\n",
+            "row of another length (LISTED, line 3): expected 2 tab-separated cells, got 1",
+        ),
+        (
+            "participant_id\tage\trun\tspace\nsub-01\t31\t1\tx\n",
+            "columns of the participants table with names that are taken (LISTED): expected names "
+            "that say something of subjects, each once, got run, space",
+        ),
+        (
+            "participant_id\tage\tage\nsub-01\t31\t1\n",
+            "names that are taken (LISTED): expected names that say something of subjects, each "
+            "once, got age",
+        ),
+        (None, "no such participants table (LISTED): check the path"),
+    ],
+)
+def test_participants_table_that_does_not_do(tmp_path, text, told):
+    make(tmp_path, *(f"maps/sub-{sub}_stat-effect_statmap.nii" for sub in ("01", "02")))
+    listed, output = tmp_path / "participants.tsv", tmp_path / "table.tsv"
+    if text is not None:
+        listed.write_text(text)
+    done = table(tmp_path / "maps", "--participants", listed, "--output", output)
+    assert done.exit_code == 2
+    assert told.replace("LISTED", str(listed)) in done.stderr
+    assert not output.exists()
+
+
+def test_the_same_line_twice_and_blank_lines_do_no_harm(tmp_path):
+    make(tmp_path, "maps/sub-01_stat-effect_statmap.nii")
+    listed = tmp_path / "participants.tsv"
+    listed.write_text("participant_id\tage\nsub-01\t31\n\nsub-01\t31\n")
+    done = table(tmp_path / "maps", "--participants", listed)
+    assert [row["age"] for row in rows(done.stdout)] == ["31"]
+
+
+def test_a_table_in_another_folder_than_the_study_file(tmp_path, monkeypatch):
+    """What `sequester table` writes anywhere is what a study file anywhere else reads."""
+    study = tmp_path / "study"
+    study.mkdir()
+    names = [
+        f"sub-{sub}_stat-{kind}_statmap.nii" for sub in "12" for kind in ("effect", "variance")
+    ]
+    make(study, *(f"derivatives/maps/{name}" for name in names))
+    monkeypatch.chdir(study)
+    (study / "tabs").mkdir()
+    done = table("derivatives/maps", "--output", "tabs/table.tsv")
+    assert done.exit_code == 0, done.output
+    assert "../derivatives/maps/sub-1_stat-effect" in Path("tabs/table.tsv").read_text()
+    Path("STUDY.toml").write_text(
+        '[study]\nname = "kites"\ntable = "tabs/table.tsv"\n[[roi]]\nname = "Ridge"\n'
+        'plan = "a-priori"\nregion = { centre = [0, 0, 0], radius = 2, origin = "a guess" }\n'
+    )
+    study.rename(tmp_path / "elsewhere")
+    monkeypatch.chdir(tmp_path)
+    settings = read_settings("elsewhere/STUDY.toml")
+    effects = [f"derivatives/maps/sub-{sub}_stat-effect_statmap.nii" for sub in "12"]
+    assert [row.path for row in settings.study.rows] == effects
+    assert all((settings.root / row.variance).is_file() for row in settings.study.rows)

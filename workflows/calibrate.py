@@ -45,7 +45,7 @@ from ..nodes.nullsets import (
 )
 from ..nodes.simulated import Noise
 from .kept import Kept, kept_folder
-from .measured import Measured, measure
+from .measured import Measured, measure, refuse_own_grids
 from .plans import A_PRIORI, CROSS_FITTED, EXPLORATORY, LOCALIZER, ORTHOGONAL, OTHER_RUNS
 from .rois import Roi
 from .settings import Settings
@@ -167,13 +167,7 @@ def _wanted(settings: Settings, only: str) -> list[Roi]:
             expected=f"one of {', '.join(roi.name for roi in settings.rois)}",
             got=repr(only),
         )
-    if settings.maps.own_grids:
-        raise InputError(
-            'grids = "own" cannot be simulated',
-            where=f"roi {rois[0].name}",
-            expected="maps on one grid, whose residuals show how smooth they are",
-            remedy="bring the maps to a common grid for this",
-        )
+    refuse_own_grids(settings, rois[0], "bring the maps to a common grid for this")
     return rois
 
 

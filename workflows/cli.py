@@ -5,7 +5,6 @@ from __future__ import annotations
 import json
 import os
 import sys
-import textwrap
 from collections.abc import Callable
 from functools import partial, wraps
 from pathlib import Path
@@ -20,14 +19,15 @@ os.environ.setdefault("NO_ET", "1")
 from ..nodes import progress
 from ..nodes.errors import InputError, SequesterError
 from ..nodes.images import read_map, write_bytes
+from ..nodes.interfaces.base import finite
 from ..nodes.results import estimate_texts
 from .calibrate import Calibration, calibrate
-from .contours import TOO_SMALL, check_mask
+from .contours import TOO_SMALL, check_mask, known_as
 from .curves import curves_svg
 from .demo import PLACES, truth_in, write_demo
 from .engines import ENGINES, plugin_args
 from .guard import NOTHING_JUDGED, GuardRefused
-from .ledger import Entry, Ledger, ledger_path
+from .ledger import Entry, Ledger, Unjoined, ledger_path
 from .origins import declare as declare_region
 from .origins import declare_in, given_by_hand, unit_of
 from .planning import FORMING, POWERS, SIZES, TESTS, Planned, plan_from, plan_inflation, plan_test
@@ -39,13 +39,17 @@ from .show import (
     Progress,
     finding_record,
     p_value,
+    paragraph,
     print_findings,
     print_table,
     print_tests,
 )
+from .staging import PAGE
 from .study import read_table, table_text
 from .table import rows_from, with_participants
 from .trials import Simulation, plan_study
+
+_PATH = click.Path(path_type=Path)
 
 
 @click.group(context_settings={"help_option_names": ["-h", "--help"]})
@@ -54,7 +58,8 @@ def main() -> None:
     """Region-of-interest statistics that never test a region on the data that chose it.
 
     Exit codes: 0 done, 1 something failed, 2 the request or the data is wrong, 3 refused by
-    the guard. For research use, not for diagnosis.
+    the guard, 4 branches of a ledger wait to be joined (verify alone). For research use, not for
+    diagnosis.
     """
 
 
@@ -100,14 +105,14 @@ def _command(function: Callable[..., dict[str, Any]]) -> Callable[..., None]:
 
 
 def _print_json(told: dict[str, Any]) -> None:
-    click.echo(json.dumps(told, default=str))
+    click.echo(json.dumps(finite(told), default=str, allow_nan=False))
 
 
 @main.command()
-@click.argument("study_toml", type=click.Path(path_type=Path))
+@click.argument("study_toml", type=_PATH)
 @click.option(
     "--work",
-    type=click.Path(path_type=Path),
+    type=_PATH,
     help="Keep the engine's working folder here, so that a second run is faster.",
 )
 @click.option(
@@ -160,7 +165,7 @@ def _run(
     settings: Settings, show: Progress, *, page: bool = True, **more: Any
 ) -> tuple[RunResult, Path | None]:
     """Run a study and make its page; a refusal's page goes when a later run succeeds."""
-    from .report.page import PAGE, write_report  # draws, and so loads slowly
+    from .report.page import write_report  # draws, and so loads slowly
     from .report.refused import refused_page, write_refused
 
     def finish(folder: Path) -> None:
@@ -170,7 +175,7 @@ def _run(
     try:
         result = run_study(settings, show.node, finish=finish if page else None, **more)
     except GuardRefused as error:
-        told = write_refused(error, settings.output, settings.name)
+        told = write_refused(error, settings.output, settings.name, settings.variants)
         error.args = (f"{error}\n\nThe refusal as a page: {told}",)
         raise
     refused_page(settings.output).unlink(missing_ok=True)
@@ -178,7 +183,7 @@ def _run(
 
 
 @main.command()
-@click.argument("run_folder", type=click.Path(path_type=Path))
+@click.argument("run_folder", type=_PATH)
 @_command
 def report(run_folder: Path, show: Progress, as_json: bool) -> dict[str, Any]:
     """Make the page of a run again, from its output folder alone: report.html and its figures."""
@@ -195,18 +200,23 @@ def report(run_folder: Path, show: Progress, as_json: bool) -> dict[str, Any]:
 @click.option(
     "--study",
     "table",
-    type=click.Path(path_type=Path),
+    type=_PATH,
     help="The study table, when a function of a script makes the workflow.",
 )
 @click.option(
     "--origins",
-    type=click.Path(path_type=Path),
+    type=_PATH,
     help="A TOML file with [[origin]] tables, as in STUDY.toml.",
 )
 @click.option(
     "--ledger",
-    type=click.Path(path_type=Path),
+    type=_PATH,
     help="That of the script's runs: it is read, and not written.",
+)
+@click.option(
+    "--must-judge",
+    is_flag=True,
+    help="Exit code 1 when nothing was judged, or values of a region go where nobody knows.",
 )
 @_command
 def check(
@@ -214,6 +224,7 @@ def check(
     table: Path | None,
     origins: Path | None,
     ledger: Path | None,
+    must_judge: bool,
     show: Progress,
     as_json: bool,
 ) -> dict[str, Any]:
@@ -241,28 +252,32 @@ def check(
         fine = "Nothing is refused; the workflow may run under GuardPlugin."
         if not findings:
             fine = NOTHING_JUDGED
+    if must_judge and (findings.warnings or not findings):
+        raise SequesterError(" ".join(findings.warnings) if findings else NOTHING_JUDGED)
     show.clear()
     if not as_json:
         if findings:
             print_findings(findings)
             click.echo()
-        click.echo(textwrap.fill(fine, 96))
-    return {"findings": [finding_record(f, study) for f in findings]}
+        for said in (*findings.warnings, fine):
+            click.echo(paragraph(said))
+    found = [finding_record(f, study) for f in findings]
+    return {"findings": found, "warnings": findings.warnings}
 
 
 @main.command()
-@click.argument("mask", required=False, type=click.Path(path_type=Path))
+@click.argument("mask", required=False, type=_PATH)
 @click.option(
     "--study",
     "study_toml",
-    type=click.Path(path_type=Path),
+    type=_PATH,
     default=Path("STUDY.toml"),
     show_default=True,
     help="The study whose ledger it goes to; with --ledger, its table.",
 )
 @click.option(
     "--ledger",
-    type=click.Path(path_type=Path),
+    type=_PATH,
     help="That of a workflow of your own, run with GuardPlugin(..., ledger=...).",
 )
 @click.option("--source", default="", help="Where the region comes from, with a reference.")
@@ -316,19 +331,20 @@ def declare(
         if not made:
             click.echo("Nothing new: all of it is in the ledger.")
         for note in notes:
-            click.echo("\n" + textwrap.fill(f"note: {note}", 96))
+            click.echo("\n" + paragraph(f"note: {note}"))
         click.echo(f"head {head}")
     return {"entries": [entry.digest for entry in made], "notes": notes, "head": head}
 
 
 @main.command()
-@click.argument("study_or_ledger", type=click.Path(path_type=Path))
+@click.argument("study_or_ledger", type=_PATH)
 @click.option("--deposited", default="", help="A head that was noted earlier: it must be there.")
 @_command
 def verify(study_or_ledger: Path, deposited: str, show: Progress, as_json: bool) -> dict[str, Any]:
     """See whether a ledger holds what was written, and print its head.
 
-    Exit codes: 0 when it does, 1 when it was changed.
+    Exit codes: 0 when it does, 1 when it was changed, 4 when branches of it were merged and wait
+    to be joined by the next run or declare.
     """
     given = study_or_ledger
     path = ledger_path(given) if given.suffix == ".toml" else given
@@ -338,6 +354,10 @@ def verify(study_or_ledger: Path, deposited: str, show: Progress, as_json: bool)
     faults = chain.problems(deposited)
     if faults:
         raise SequesterError(f"the ledger was changed ({path})\n" + "\n".join(faults))
+    if chain.unjoined:
+        raise Unjoined(
+            f"the ledger has more than one end, as after a merge ({path})\n{chain.unjoined}"
+        )
     head = " ".join(chain.heads)
     if not as_json:
         kinds = [entry.kind for entry in chain.entries]
@@ -352,15 +372,15 @@ def verify(study_or_ledger: Path, deposited: str, show: Progress, as_json: bool)
 
 
 @main.command()
-@click.argument("folder", type=click.Path(path_type=Path))
+@click.argument("folder", type=_PATH)
 @click.option("--pattern", help='Such as "sub-{sub}/con_{contrast}.nii.gz"; default: BIDS names.')
 @click.option("--suffix", default="bold", show_default=True, help="Suffix of what was acquired.")
 @click.option(
     "--participants",
-    type=click.Path(path_type=Path),
+    type=_PATH,
     help="A participants.tsv: its columns by subject, exclude_reason and exchange among them.",
 )
-@click.option("--output", type=click.Path(path_type=Path), help="File; default: standard output.")
+@click.option("--output", type=_PATH, help="File; default: standard output.")
 @_command
 def table(
     folder: Path,
@@ -399,8 +419,8 @@ def table(
 
 
 @main.command()
-@click.argument("study_toml", required=False, type=click.Path(path_type=Path))
-@click.option("--from", "results", type=click.Path(path_type=Path), help="Results of a run.")
+@click.argument("study_toml", required=False, type=_PATH)
+@click.option("--from", "results", type=_PATH, help="Results of a run.")
 @click.option("--test", type=click.Choice(TESTS), help="By formula, without a study.")
 @click.option("--inflation", is_flag=True, help="What noise reads in a circular region.")
 @click.option("--effect", "--d", type=float, help="True effect: d, the correlation, or f.")
@@ -417,7 +437,7 @@ def table(
 @click.option("--sets", type=int, default=400, show_default=True, help="Simulated data sets.")
 @click.option("--flips", type=int, default=199, show_default=True, help="Of each data set.")
 @click.option("--seed", type=int, help="Of the simulation; default: the study's.")
-@click.option("--figure", type=click.Path(path_type=Path), help="Draw it, as an SVG file.")
+@click.option("--figure", type=_PATH, help="Draw it, as an SVG file.")
 @_command
 def power(
     study_toml: Path | None,
@@ -456,7 +476,7 @@ def power(
     if not as_json:
         print_table(made.table)
         for note in made.notes:
-            click.echo("\n" + textwrap.fill(note, 96))
+            click.echo("\n" + paragraph(note))
     return {"planned": made.records, "notes": made.notes, "figure": figure and str(figure)}
 
 
@@ -536,8 +556,8 @@ def _planned(
 
 
 @main.command("contour")
-@click.argument("mask", type=click.Path(path_type=Path))
-@click.argument("study_toml", type=click.Path(path_type=Path))
+@click.argument("mask", type=_PATH)
+@click.argument("study_toml", type=_PATH)
 @click.option("--roi", default="", help="On the maps of this region; default: all sets of maps.")
 @_command
 def contour_command(
@@ -552,6 +572,7 @@ def contour_command(
     show.say("reading maps")
     with engine_quiet():
         found = check_mask(mask.absolute(), settings, roi)
+    known = known_as(mask.absolute(), settings)
     show.clear()
     told = [
         {
@@ -566,12 +587,14 @@ def contour_command(
         for one, made in found
     ]
     for row in told if not as_json else []:
-        click.echo(textwrap.fill(f"On the maps of {row['maps_of']}. {row['sentence']}", 96))
-    return {"checked": told}
+        click.echo(paragraph(f"On the maps of {row['maps_of']}. {row['sentence']}"))
+    if known and not as_json:
+        click.echo(paragraph(known))
+    return {"checked": told, "known": known or None}
 
 
 @main.command("calibrate")
-@click.argument("study_toml", type=click.Path(path_type=Path))
+@click.argument("study_toml", type=_PATH)
 @click.option("--sets", type=int, default=500, show_default=True, help="Data sets per region.")
 @click.option(
     "--flips", "n_flips", type=int, help="Of each data set; default: the study's, 199 at most."
@@ -587,7 +610,7 @@ def contour_command(
 )
 @click.option(
     "--keep",
-    type=click.Path(path_type=Path),
+    type=_PATH,
     help="Keep what is done in this folder; a run that was stopped goes on there.",
 )
 @_command
@@ -605,12 +628,12 @@ def calibrate_command(
     if not as_json:
         print_table(made.table)
         for note in made.notes:
-            click.echo("\n" + textwrap.fill(note, 96))
+            click.echo("\n" + paragraph(note))
     return {"calibrated": made.records, "notes": made.notes}
 
 
 @main.command()
-@click.argument("folder", type=click.Path(path_type=Path), default=Path("sequester-demo"))
+@click.argument("folder", type=_PATH, default=Path("sequester-demo"))
 @_command
 def demo(folder: Path, show: Progress, as_json: bool) -> dict[str, Any]:
     """Make a small study with known truth, analyse it, and have its circular twin refused."""
@@ -636,10 +659,10 @@ def demo(folder: Path, show: Progress, as_json: bool) -> dict[str, Any]:
         rows = [
             [
                 "region",
-                "chosen and read on all (BIASED)",
-                "truth in it",
+                "circular (BIASED)",
+                "truth",
                 "held out, 95 % interval",
-                "truth in it",
+                "truth",
                 "p",
             ]
         ]
@@ -659,21 +682,23 @@ def demo(folder: Path, show: Progress, as_json: bool) -> dict[str, Any]:
                 ]
             )
         click.echo(
-            "A made-up study: 24 subjects x 4 runs. Arbor responds strongly, Brook weakly, and\n"
-            "Cinder is noise: there is nothing in it to find.\n"
+            "A made-up study: 24 subjects x 4 runs. Arbor responds strongly, Brook weakly,\n"
+            "and Cinder is noise: there is nothing in it to find.\n"
         )
         print_table(rows)
         click.echo(
-            "\nHeld out: leave-one-subject-out; interval approximate; p by whole-procedure sign\n"
-            "flip, one-sided, for the search region. The biased column has no interval and no p.\n"
-            "Where the rule found no cluster (as in Cinder), the 20 strongest voxels stood in, as\n"
-            "the study file says. One study proves nothing: the tests repeat it over 200 seeds.\n"
-            f"\nThe same study, asking for a t-test in the circular region ({circular}):\n"
+            "\nCircular: chosen and read on all data; it has no interval and no p. Truth: the\n"
+            "mean effect that was put into those voxels. Held out: leave-one-subject-out;\n"
+            "interval approximate; p by whole-procedure sign flip, one-sided, for the search\n"
+            "region. Where the rule found no cluster (as in Cinder), the 20 strongest voxels\n"
+            "stood in, as the study file says. One study proves nothing: the tests repeat it\n"
+            "over 200 seeds.\n"
+            f"\nThe same study, asking for a t-test in the circular region:\n{circular}\n"
         )
-        click.echo(textwrap.indent(refusal, "    "))
+        click.echo(refusal)
         click.echo(
-            f"\nResults are in {result.output}, the page to read is {page};\n"
-            f"start from {honest} for your own.\n{CAUTION}"
+            f"\nWritten to {result.output}\nThe page to read: {page}\n"
+            f"Start your own from {honest}\n{CAUTION}"
         )
     return {
         "tests": result.tests,

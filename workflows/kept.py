@@ -29,6 +29,7 @@ def kept_folder(folder: Path | None) -> Iterator[Path | None]:
     if folder.exists() and not folder.is_dir():
         raise InputError("--keep is a file", where=str(folder), remedy="name a folder")
     folder.mkdir(parents=True, exist_ok=True)
+    # Its file stays: taking it away while somebody waits for it would admit two.
     lock = FileLock(folder / ".lock")
     try:
         lock.acquire(timeout=0.2)  # held a moment longer by a run that was killed just now
@@ -43,7 +44,6 @@ def kept_folder(folder: Path | None) -> Iterator[Path | None]:
         yield folder
     finally:
         lock.release()
-        Path(lock.lock_file).unlink(missing_ok=True)
 
 
 class Kept:

@@ -129,6 +129,24 @@ def maps_made(
         yield {rows: output(name, "out_files") for rows, name in names.items()}, masks
 
 
+def refuse_own_grids(settings: Settings, roi: Roi, remedy: str) -> None:
+    """Raise InputError where there is no one grid on which to see how smooth the maps are."""
+    if settings.maps.own_grids:
+        raise InputError(
+            'grids = "own" cannot be simulated',
+            where=f"roi {roi.name}",
+            expected="maps on one grid, whose residuals show how smooth they are",
+            remedy=remedy,
+        )
+
+
+def by_person(effects: Floats, people: Sequence[str]) -> Floats:
+    """(n_people, n_features) maps averaged over the rows of each person, by sorted name."""
+    owner = np.array(people)
+    names = sorted(set(people))
+    return np.stack([effects[owner == name].mean(axis=0, dtype=np.float64) for name in names])
+
+
 def measure(settings: Settings, rois: Sequence[Roi]) -> list[Measured]:
     """Regions, missing voxels and smoothness, from maps made as a run makes them."""
     found = []
@@ -224,15 +242,12 @@ def _smoothness(
     effects: Floats, people: Sequence[str], grid: Grid, *, within: bool
 ) -> tuple[float, ...]:
     """The FWHM of residuals: of runs about their subject's mean, or of subjects about theirs."""
-    names = sorted(set(people))
-    owner = np.array([names.index(who) for who in people])
-    means = np.stack(
-        [effects[owner == i].mean(axis=0, dtype=np.float64) for i in range(len(names))]
-    )
+    means = by_person(effects, people)
     if within:
         complete = np.asarray(np.isfinite(effects).all(axis=0))
+        owner = np.searchsorted(sorted(set(people)), people)
         rest = np.where(complete, effects - means[owner], 0.0)
-        fwhm = fwhm_of_residuals(rest, grid, len(people) - len(names), complete)
+        fwhm = fwhm_of_residuals(rest, grid, len(people) - len(means), complete)
     else:
         fwhm = fwhm_of_stack(means, grid)
     if np.isnan(fwhm).all() and grid.n_features > 1:

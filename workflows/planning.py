@@ -39,6 +39,12 @@ _EXPLORATORY = (
     "sample planned on it would be too small"
 )
 
+# By the words that `target` has for them: what is no mean, and the test whose formula it needs.
+_NO_MEAN = (
+    ("difference of the groups' mean", "a comparison of groups", "two-sample"),
+    ("correlation of ", "a correlation", "correlation"),
+)
+
 
 @dataclass(frozen=True)
 class Planned:
@@ -313,7 +319,7 @@ def plan_from(
             "no result that a sample may be planned on",
             where=str(folder),
             got=" ".join(refused) or "no test",
-            remedy="plan on a held-out or an a-priori region",
+            remedy="plan on the mean of a held-out or an a-priori region",
         )
     head = ["region", "plan", "n", "planned on", *(f"N for power {p:g}" for p in powers)]
     return Planned(
@@ -347,7 +353,7 @@ def _tests(folder: Path, only: str) -> Iterator[dict[str, str]]:
     with path.open(encoding="utf-8", newline="") as stream:
         rows = list(csv.DictReader(stream, delimiter="\t", quoting=csv.QUOTE_NONE))
     needed = {"roi", "plan", "parcel", "parcel_name", "n_subjects", "estimate", "biased", "claim"}
-    needed |= {"interval_low", "interval_high", "interval_kind", "p", "p_kind", "dz"}
+    needed |= {"target", "interval_low", "interval_high", "interval_kind", "p", "p_kind", "dz"}
     lacking = sorted(needed - set(rows[0] if rows else ()))
     if lacking:
         raise InputError(
@@ -388,8 +394,13 @@ def _no_basis(row: dict[str, str]) -> str:
         return _EXPLORATORY
     if row["claim"] == "these subjects":
         return "about these subjects only, not about the population that a new sample comes from"
-    if "n/a" in (row["p"], row["dz"], row["interval_low"]) or float(row["dz"]) == 0:
-        return "not tested, or without an effect size"
+    if row["p"] == "n/a":
+        return "not tested"
+    for told, what, test in _NO_MEAN:
+        if told in row["target"]:
+            return f"{what}, which has no dz; by formula: sequester power --test {test}"
+    if "n/a" in (row["dz"], row["interval_low"]) or float(row["dz"]) == 0:
+        return "without an effect size"
     return ""
 
 

@@ -14,11 +14,13 @@ import click
 
 from ..nodes.results import estimate_texts, p_text
 from .judge import LEAK, Finding
+from .report.words import listed, low_coverage
 from .settings import Settings
 from .study import Study
 
 # Of a large family of labels, so many are shown in the table, and told in sentences.
 _ROWS, _SENTENCES = 10, 3
+_WIDEST = 96  # characters of a line of text
 CAUTION = "For research use, not for diagnosis. Follow your ethics board and local rules."
 
 
@@ -125,12 +127,11 @@ def print_tests(
     ]
     for row in (row for family in families for row in _strongest(family)):
         head = [_called(row), row["plan"], "nobody" if row["biased"] else row["claim"]]
-        if row["biased"]:
-            value = "-" if math.isnan(row["estimate"]) else f"{row['estimate']:.3g}"
-            rows.append([*head, f"{value} BIASED", *["-"] * 7])
-            continue
-        if row["p"] is None:
-            rows.append([*head, f"{row['estimate']:.3g}", *["-"] * 7])
+        if row["biased"] or row["p"] is None:
+            # Of no region: NaN in the value that was read, None in what a test has recorded.
+            none = row["estimate"] is None or math.isnan(row["estimate"])
+            value = "-" if none else f"{row['estimate']:.3g}"
+            rows.append([*head, f"{value} BIASED" if row["biased"] else value, *["-"] * 7])
             continue
         mean, interval = f"{row['estimate']:.3g}", "-"
         if row["interval_low"] is not None:
@@ -150,32 +151,45 @@ def print_tests(
         rows.append([*head, mean, interval, *numbers, folds, dice])
     print_table(rows)
     if overlaps:
-        one, other = overlaps[0]
-        rest = len(overlaps) - 1
-        more = f" (and of {rest} more pair{'s' * (rest > 1)})" if rest else ""
-        click.echo(
-            f"\nNo p Holm over the regions: the search regions of {one} and {other}{more} share "
-            "voxels (a whole map shares all). p max, where given, holds all the same."
+        click.echo("\n" + paragraph(_shared(overlaps)))
+    if covered := low_coverage([row for row in tests if not row["biased"]]):
+        said = (
+            f"Somebody has data in little of a mask: {listed(covered)}. "
+            "min_coverage in [data] asks for more."
         )
+        click.echo("\n" + paragraph(said))
     for family in families:
         shown = _strongest(family, _SENTENCES)
         for row in shown:
-            click.echo("\n" + textwrap.fill(row["sentence"], 96))
+            click.echo("\n" + paragraph(row["sentence"]))
         if len(shown) < len(family):
             told = sum(row["p_holm"] is not None and row["p_holm"] < 0.05 for row in family)
-            click.echo(
-                f"\n{family[0]['roi']}: {len(family)} labels, {told} with Holm-adjusted p < .05; "
+            said = (
+                f"{family[0]['roi']}: {len(family)} labels, {told} with Holm-adjusted p < .05; "
                 "all of them are in roi_tests.tsv."
             )
+            click.echo("\n" + paragraph(said))
     for record in comparisons:
         said = f"{record['name']}: {record['sentence']} Taken for granted: {record['assumption']}."
-        click.echo("\n" + textwrap.fill(said, 96))
+        click.echo("\n" + paragraph(said))
     varied = [roi for roi in settings.rois if roi.variant_of]
     if varied:
-        click.echo(
-            f"\nSensitivity: {len(varied)} declared variants in sensitivity.tsv, one look at the "
+        said = (
+            f"Sensitivity: {len(varied)} declared variants in sensitivity.tsv, one look at the "
             "stated analysis, none to be picked."
         )
+        click.echo("\n" + paragraph(said))
+
+
+def _shared(overlaps: Sequence[tuple[str, str]]) -> str:
+    """What Holm says of regions whose search regions share voxels."""
+    (one, other), rest = overlaps[0], len(overlaps) - 1
+    more = f" (and of {rest} more pair{'s' * (rest > 1)})" if rest else ""
+    return (
+        f"p Holm is over null hypotheses, not over places: the search regions of {one} and "
+        f"{other}{more} share voxels (a whole map shares all), and each p speaks of its own "
+        "region as a whole."
+    )
 
 
 def _strongest(
@@ -191,11 +205,29 @@ def _called(row: Mapping[str, Any]) -> str:
     return f"{row['roi']} {row['parcel_name']}" if row["parcel_name"] else str(row["roi"])
 
 
+def paragraph(text: str) -> str:
+    """A text in lines of at most 96 characters, fewer where the terminal is narrower."""
+    width = min(_WIDEST, shutil.get_terminal_size((_WIDEST, 24)).columns)
+    # Names of files stay whole.
+    return textwrap.fill(text, width, break_on_hyphens=False, break_long_words=False)
+
+
 def print_table(rows: Sequence[Sequence[str]]) -> None:
-    """Columns padded to their widest cell, the first row underlined."""
+    """Columns padded to their widest cell, the first row underlined.
+
+    On a terminal too narrow for that, each row stands in lines of its own.
+    """
     widths = [max(map(len, column)) for column in zip(*rows, strict=True)]
-    for row in [rows[0], ["-" * width for width in widths], *rows[1:]]:
-        click.echo("  ".join(map(str.ljust, row, widths)).rstrip())
+    if sum(widths) + 2 * (len(widths) - 1) <= shutil.get_terminal_size((sys.maxsize, 24)).columns:
+        for row in [rows[0], ["-" * width for width in widths], *rows[1:]]:
+            click.echo("  ".join(map(str.ljust, row, widths)).rstrip())
+        return
+    heads = rows[0][1:]
+    for i, (name, *cells) in enumerate(rows[1:]):
+        click.echo(("\n" if i else "") + name)
+        for head, cell in zip(heads, cells, strict=True):
+            if cell != "-":
+                click.echo(f"  {head.ljust(max(map(len, heads)))}  {cell}")
 
 
 def p_value(p: float | None) -> str:

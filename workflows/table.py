@@ -17,12 +17,14 @@ from typing import Any
 from ..nodes.errors import InputError
 from ..nodes.images import n_volumes, open_image
 from ..nodes.touch import ENTITIES, Unit
-from .study import BLANK, Row, read_cells
+from .study import BLANK, NAMING, Row, read_cells
 
 _FIELDS = (*ENTITIES, "contrast")
 _ENDINGS = (".nii", ".nii.gz")
 # Derivative maps that hold no effect of their own.
 _NOT_EFFECTS = ("mask", "dseg", "probseg")
+# The study table's own columns that are about subjects.
+_OF_SUBJECTS = ("exclude_reason", "exchange")
 
 
 def rows_from(
@@ -167,7 +169,7 @@ def with_participants(rows: list[Row], path: Path) -> list[Row]:
     """The rows with the columns of a BIDS ``participants.tsv``, by subject.
 
     Columns of the study table's own (``exclude_reason``, ``exchange``) are filled; any other
-    becomes a covariate.
+    becomes a covariate, and must not be named as what says which map is meant.
 
     Parameters
     ----------
@@ -177,9 +179,16 @@ def with_participants(rows: list[Row], path: Path) -> list[Row]:
     Raises
     ------
     InputError
-        When the file cannot be read, or lacks a subject of the rows.
+        When the file cannot be read, or does not say one thing of every subject of the rows.
     """
-    header, *lines = read_cells(path, "participants table")
+    if not path.is_file():
+        raise InputError(
+            "no such participants table",
+            where=str(path),
+            got="a folder" if path.is_dir() else "",
+            remedy="check the path",
+        )
+    header, *lines = read_cells(path, "participants table") or [[]]
     if not header or header[0] != "participant_id":
         raise InputError(
             "participants table without participant_id",
@@ -187,7 +196,47 @@ def with_participants(rows: list[Row], path: Path) -> list[Row]:
             expected="participant_id as the first column, as BIDS has it",
             got=header[0] if header else "an empty file",
         )
-    of_sub = {line[0].removeprefix("sub-"): dict(zip(header, line, strict=False)) for line in lines}
+    taken = sorted(
+        {n for n in header if (n in NAMING and n not in _OF_SUBJECTS) or header.count(n) > 1}
+    )
+    if taken:
+        raise InputError(
+            "columns of the participants table with names that are taken",
+            where=str(path),
+            expected="names that say something of subjects, each once",
+            got=", ".join(taken),
+            remedy="rename them: the study table has columns of these names, which say of each map "
+            "what it was made from",
+        )
+    of_sub: dict[str, dict[str, str]] = {}
+    first: dict[str, int] = {}
+    for number, line in enumerate(lines, 2):
+        if not line:
+            continue
+        if len(line) != len(header):
+            raise InputError(
+                "row of another length",
+                where=f"{path}, line {number}",
+                expected=f"{len(header)} tab-separated cells",
+                got=str(len(line)),
+                remedy="write n/a into blank cells, and no tab at the end",
+            )
+        sub, cells = line[0].strip().removeprefix("sub-"), dict(zip(header, line, strict=True))
+        cells["participant_id"] = sub
+        if of_sub.setdefault(sub, cells) != cells:
+            raise InputError(
+                "two lines of one subject that differ",
+                where=f"{path}, lines {first[sub]} and {number}",
+                expected="one line for each subject",
+                got=f"sub-{sub} with "
+                + "; ".join(
+                    f"{k} {of_sub[sub][k]!r} and {v!r}"
+                    for k, v in cells.items()
+                    if of_sub[sub][k] != v
+                ),
+                remedy="remove one of them",
+            )
+        first.setdefault(sub, number)
     lacking = sorted({row.unit.sub for row in rows} - of_sub.keys())
     if lacking:
         raise InputError(
@@ -201,9 +250,7 @@ def with_participants(rows: list[Row], path: Path) -> list[Row]:
         cells = {
             k: "" if v.strip() in BLANK else v.strip() for k, v in of_sub[row.unit.sub].items()
         }
-        own: dict[str, Any] = {
-            k: v for k, v in cells.items() if k in ("exclude_reason", "exchange")
-        }
+        own: dict[str, Any] = {k: v for k, v in cells.items() if k in _OF_SUBJECTS}
         extra = tuple((k, v) for k, v in cells.items() if k not in (*own, "participant_id"))
         made.append(replace(row, **own, extra=(*row.extra, *extra)))
     return made

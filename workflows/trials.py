@@ -19,6 +19,7 @@ from ..nodes import progress
 from ..nodes.errors import InputError
 from ..nodes.folds import Given, KFold
 from ..nodes.images import read_mask, stack
+from ..nodes.models import Groups
 from ..nodes.power import OneSample
 from ..nodes.procedure import Procedure
 from ..nodes.simulated import (
@@ -36,9 +37,9 @@ from ..nodes.smoothness import fwhm_of_stack
 from ..nodes.space import Grid
 from .build import tested_rows
 from .curves import Curve
-from .measured import maps_made
+from .measured import by_person, maps_made, refuse_own_grids
 from .planning import Planned, errors_of, said_errors
-from .plans import A_PRIORI, CROSS_FITTED, EXPLORATORY, LOCALIZER, ORTHOGONAL, OTHER_RUNS
+from .plans import A_PRIORI, CROSS_FITTED, EXPLORATORY, ORTHOGONAL, OTHER_RUNS
 from .rois import Roi
 from .settings import Settings
 from .verify import verify
@@ -148,7 +149,7 @@ def plan_study(
     Raises
     ------
     InputError
-        For a region that does not exist or cannot be simulated, or too few subjects.
+        For a region that does not exist, where none can be simulated, or for too few subjects.
     """
     if min(ns, default=3) < 3:
         raise InputError("n out of range", expected="3 or more", got=str(min(ns)))
@@ -159,11 +160,25 @@ def plan_study(
             "no such region", expected=f"one of {', '.join(r.name for r in stated)}", got=repr(only)
         )
     for roi in rois:
-        _check_simulated(settings, roi)
+        _check_grids(settings, roi)
+    left_out = {roi.name: why for roi in rois if (why := _no_mean(roi))}
+    if len(left_out) == len(rois):
+        raise InputError(
+            "no region that can be simulated",
+            where=f"roi {', '.join(left_out)}",
+            expected="a test of one mean",
+            got="; ".join(dict.fromkeys(left_out.values())),
+            remedy="simulate another region, or use the formula",
+        )
     verify(settings)
     records: list[dict[str, Any]] = []
     notes, curves = [asked.describe()], []
     for roi in rois:
+        if roi.name in left_out:
+            why = left_out[roi.name]
+            records.append({"roi": roi.name, "plan": roi.plan, "refused": why})
+            notes.append(f"{roi.name}: not simulated. It is {why}.")
+            continue
         of_roi = _by_formula if roi.plan == A_PRIORI else _by_simulation
         made, note = of_roi(settings, roi, asked, list(dict.fromkeys(ns)))
         records += made
@@ -180,7 +195,7 @@ def plan_study(
             )
     return Planned(
         records,
-        [list(_HEADER), *(_study_row(one) for one in records)],
+        [list(_HEADER), *(_study_row(one) for one in records if "refused" not in one)],
         notes,
         f"Power at a true effect of {asked.effect:g} sd",
         "subjects",
@@ -193,27 +208,24 @@ _HEADER = (
     "region", "plan", "n", "power", "truth", "estimate", "bias", "type M", "type S", "empty masks",
 )  # fmt: skip
 _UNTESTED = dict.fromkeys(("power", "power_error", "type_m", "type_s"))
-_SIMULATED = (*CROSS_FITTED, *OTHER_RUNS, LOCALIZER, ORTHOGONAL, EXPLORATORY)
 
 
-def _check_simulated(settings: Settings, roi: Roi) -> None:
-    if roi.plan == A_PRIORI:
-        return
-    if settings.maps.own_grids:
-        raise InputError(
-            'grids = "own" cannot be simulated',
-            where=f"roi {roi.name}",
-            expected="maps on one grid, whose residuals show how smooth they are",
-            remedy="use --test one-sample with the effect in the region's own values",
+def _check_grids(settings: Settings, roi: Roi) -> None:
+    if roi.plan != A_PRIORI:
+        refuse_own_grids(
+            settings, roi, "use --test one-sample with the effect in the region's own values"
         )
-    if roi.plan not in _SIMULATED or (roi.procedure and roi.procedure.model):
-        raise InputError(
-            "this plan cannot be simulated",
-            where=f"roi {roi.name}",
-            expected=f"one mean, and plan {', '.join(_SIMULATED)}",
-            got=f"plan {roi.plan}",
-            remedy="leave the region out: --roi NAME names another",
-        )
+
+
+def _no_mean(roi: Roi) -> str:
+    """What a region tests instead of one mean, which alone is simulated; "" for a mean."""
+    model = roi.procedure.model if roi.procedure else None
+    if model is None:
+        return ""
+    if isinstance(model, Groups):
+        what = f"a comparison of {model.first} and {model.second}"
+        return f"{what}; by formula: sequester power --test two-sample"
+    return f"a correlation with {model.name}; by formula: sequester power --test correlation"
 
 
 def _by_formula(
@@ -363,7 +375,7 @@ def _measure(settings: Settings, roi: Roi) -> _Measured:
             remedy="search a region that all subjects cover",
         )
     grid, tested = grid.restricted(keep), tested[:, keep]
-    maps = _by_person(tested, rows.people)
+    maps = by_person(tested, rows.people)
     # Numbers along an axis of a single slice do not exist, and need not.
     fwhm = tuple(np.nan_to_num(fwhm_of_stack(maps, grid), posinf=np.inf).tolist())
     people = tuple(sorted(set(rows.people)))
@@ -373,14 +385,7 @@ def _measure(settings: Settings, roi: Roi) -> _Measured:
     if roi.choosing is None or chosen is None:
         return found
     of = roi.choosing.people
-    return _with_choosing(found, maps, _by_person(chosen[:, keep], of), sorted(set(of)))
-
-
-def _by_person(effects: Floats, people: Sequence[str]) -> Floats:
-    """Maps averaged over the rows of each person, by sorted name."""
-    names = sorted(set(people))
-    rows = {name: [i for i, one in enumerate(people) if one == name] for name in names}
-    return np.stack([effects[rows[name]].mean(axis=0, dtype=np.float64) for name in names])
+    return _with_choosing(found, maps, by_person(chosen[:, keep], of), sorted(set(of)))
 
 
 def _with_runs(found: _Measured, runs: Floats, people: Sequence[str], maps: Floats) -> _Measured:
