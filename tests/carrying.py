@@ -64,6 +64,13 @@ class WatchPlugin(PluginBase):
         self.graph = graph
 
 
+def ancestry_of(workflow: Engine, study: Study) -> Ancestry:
+    """What is said of a workflow that does not run."""
+    watch = WatchPlugin(study, run=False)
+    workflow.run(plugin=watch)
+    return watch.ancestry
+
+
 # -- what is really inside, and what was said to be ----------------------------------------------
 
 
@@ -74,7 +81,8 @@ def inside(value: Any) -> set[int]:
 
 def units_of(tree: Tree) -> set[int]:
     """The units that a tree says are inside."""
-    return {i for i in range(N) if tree.touch.values >> i & 1}
+    values = tree.touch.values
+    return {i for i in range(values.bit_length()) if values >> i & 1}
 
 
 def said(tree: Tree) -> Any:
@@ -82,7 +90,9 @@ def said(tree: Tree) -> Any:
     return [said(child) for child in tree.children] if isinstance(tree, Branch) else units_of(tree)
 
 
-def understated(tree: Tree, real: Any, where: str) -> list[str]:
+def understated(
+    tree: Tree, real: Any, where: str = "out", inside: Callable[[Any], set[int]] = inside
+) -> list[str]:
     """Where a tree says less than the truth about a real output."""
     if isinstance(tree, Leaf):
         faults = []
@@ -94,13 +104,14 @@ def understated(tree: Tree, real: Any, where: str) -> list[str]:
         return faults
     if not isinstance(real, list | tuple):
         # The engine hands on a list of one as its item.
-        return understated(tree.children[0], real, where) if len(tree.children) == 1 else [where]
+        one = len(tree.children) == 1
+        return understated(tree.children[0], real, where, inside) if one else [where]
     if len(tree.children) != len(real):
         return [f"{where}: {len(tree.children)} elements promised, {len(real)} made"]
     return [
         fault
         for i, (child, item) in enumerate(zip(tree.children, real, strict=True))
-        for fault in understated(child, item, f"{where}[{i}]")
+        for fault in understated(child, item, f"{where}[{i}]", inside)
     ]
 
 

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import json
-import logging
+import os
 import sys
 from pathlib import Path
 from typing import Any
@@ -13,8 +13,13 @@ import pytest
 
 # Modules that several test modules share, such as worlds.py, lie beside them.
 sys.path.append(str(Path(__file__).parent))
+os.environ["NO_ET"] = "1"  # the engine would ask the network for its latest version
+os.environ.pop("COLUMNS", None)  # tests in parallel are told of a terminal that is not there
 
 from engines_under_test import cluster, ipython, mortal, slurm  # noqa: F401 - fixtures for every module
+from planting import paths_of
+from running import silence
+from sequester.workflows.study import Study
 
 # The same examples on every machine, and no time limit on a busy one.
 hypothesis.settings.register_profile("sequester", deadline=None, derandomize=True)
@@ -24,10 +29,14 @@ hypothesis.settings.load_profile("sequester")
 @pytest.fixture
 def quiet_engine(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
     """The engine in a folder of its own, without its log."""
-    monkeypatch.setenv("NO_ET", "1")  # it would ask the network for its latest version
     monkeypatch.chdir(tmp_path)
-    for name in ("nipype.workflow", "nipype.utils", "nipype.interface"):
-        monkeypatch.setattr(logging.getLogger(name), "level", logging.CRITICAL + 1)
+    silence(monkeypatch)
+
+
+@pytest.fixture
+def maps(study: Study) -> list[str]:
+    """The files of the module's own ``study``."""
+    return paths_of(study)
 
 
 @pytest.fixture(scope="session")

@@ -9,6 +9,7 @@ from __future__ import annotations
 from pathlib import Path
 
 import numpy as np
+from planting import a_grid
 from scipy.ndimage import gaussian_filter
 from sequester.nodes.images import Geometry, write_bytes, write_map
 
@@ -32,7 +33,7 @@ def geometry() -> Geometry:
     """A coarse grid that holds the demo's made-up brain."""
     affine = np.diag([MM] * 3 + [1.0])
     affine[:3, 3] = [-75.0, -105.0, -66.0]
-    return Geometry(SHAPE, tuple(tuple(float(x) for x in row) for row in affine))
+    return a_grid(SHAPE, affine)
 
 
 def plant(folder: Path, n: int, n_runs: int, flips: int = 499) -> Path:
@@ -71,7 +72,7 @@ def plant(folder: Path, n: int, n_runs: int, flips: int = 499) -> Path:
     if n_runs > 1:
         runs = {"name": "Runs", "centre": CENTRES["Arbor"], "look": "", "more": ""}
         text += REGION.format(**runs, plan="leave-one-run-out").replace(
-            'kind = "cluster", p = 0.01, min_size = 3', 'kind = "strongest", k = 12'
+            'kind = "cluster", p = 0.01, min_size = 3', 'kind = "strongest", k = 12, map = "mean"'
         )
     skilled = {"name": "Skilled", "centre": CENTRES["Brook"], "look": "", "plan": "k-fold"}
     more = f'score = "skill"\nreliability = {{ values = 0.8, score = 0.7 }}\nflips = {flips}\n'

@@ -17,6 +17,7 @@ from carrying import (
     CarryOne,
     CarrySet,
     WatchPlugin,
+    ancestry_of,
     blend,
     carried_study,
     function,
@@ -30,12 +31,14 @@ from nipype import Workflow as Engine
 from nipype.algorithms.misc import Gunzip
 from nipype.interfaces.io import DataGrabber, DataSink, SelectFiles
 from nipype.interfaces.utility import Split
+from planting import paths_of
+from running import workflow
 from sequester.nodes.interfaces import ChooseByFold, GroupMap, SubjectMaps
 from sequester.nodes.masks import Strongest
 from sequester.nodes.procedure import Procedure
 from sequester.nodes.rules import joined, leaves, lost_precision, path_to
 from sequester.nodes.touch import Touch, Unit
-from sequester.workflows.ancestry import Ancestry, files_in
+from sequester.workflows.ancestry import files_in
 from sequester.workflows.study import Origin, Row, Study
 
 pytestmark = pytest.mark.usefixtures("quiet_engine")
@@ -49,19 +52,7 @@ def study(tmp_path: Path) -> Study:
 
 @pytest.fixture
 def f(study: Study) -> list[str]:
-    return [str(study.root / row.path) for row in study.rows]
-
-
-def workflow(name: str = "w") -> Engine:
-    made = Engine(name, base_dir="work")
-    made.config["execution"] = {"crashdump_dir": ".", "create_report": "false"}
-    return made
-
-
-def ancestry_of(made: Engine, study: Study) -> Ancestry:
-    watch = WatchPlugin(study, run=False)
-    made.run(plugin=watch)
-    return watch.ancestry
+    return paths_of(study)
 
 
 # -- functions that keep account of what they read ---------------------------------------------

@@ -21,8 +21,8 @@ SUBJECTS = [f"{i:02d}" for i in range(demo.N_SUBJECTS)]
 @pytest.fixture(scope="module")
 def shown(tmp_path_factory):
     folder = tmp_path_factory.mktemp("demo") / "lanterns"
-    done = CliRunner().invoke(main, ["demo", str(folder), "--quiet"])
-    return folder, done
+    runner = CliRunner(env={"COLUMNS": "80"})
+    return folder, runner.invoke(main, ["demo", str(folder), "--quiet"])
 
 
 def test_demo_prints_truth_circular_and_held_out_side_by_side(shown):
@@ -38,6 +38,11 @@ def test_demo_prints_truth_circular_and_held_out_side_by_side(shown):
         assert low < estimate < high and float(biased) > 0 and "." in p
     assert "BIASED" in done.output
     assert "not for diagnosis" in done.output
+
+
+def test_demo_fits_80_columns_but_for_a_name_at_the_end_of_a_line(shown):
+    wide = [line for line in shown[1].output.splitlines() if len(line) > 80]
+    assert [line for line in wide if len(line.rpartition(" ")[0]) > 25] == []
 
 
 def test_demo_refuses_the_circular_twin_with_the_way_and_the_cure(shown):

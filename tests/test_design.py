@@ -278,7 +278,7 @@ def test_faults_of_a_design_are_named():
         regression([1.0, 2.0], {"score": [1.0, 2.0]})
     with pytest.raises(InputError, match="one weight per column, and one that is not zero"):
         Design((("a", (1.0, 2.0)),), (0.0,))
-    with pytest.raises(InputError, match="add an intercept"):
+    with pytest.raises(InputError, match=r"got \[.a.\]; add an intercept"):
         Design((("a", (1.0, 2.0)), ("b", (0.0, 1.0))), (1.0, 0.0), ("b",))
     with pytest.raises(InputError, match=r"two groups .* expected two of fen, pond, got fen, hill"):
         two_sample(["fen", "pond"], "fen", "hill")

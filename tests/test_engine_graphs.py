@@ -20,7 +20,7 @@ def judged(tmp_path_factory: pytest.TempPathFactory) -> list[dict[str, Any]]:
     folder = tmp_path_factory.mktemp("engine")
     command = [sys.executable, "-m", "pytest", "-q", "-p", "no:cacheprovider", "-p", "judging"]
     command += ["--pyargs", "nipype.pipeline.engine.tests", "nipype.pipeline.plugins.tests"]
-    environ = {**os.environ, "NO_ET": "1", "JUDGED": "judged.json", "PYTHONPATH": str(HERE)}
+    environ = {**os.environ, "JUDGED": "judged.json", "PYTHONPATH": str(HERE)}
     environ["TMPDIR"] = str(folder)
     done = subprocess.run(
         command, cwd=folder, env=environ, capture_output=True, text=True, timeout=300, check=False

@@ -1,76 +1,43 @@
 """The guard on several processes: the same verdicts, the same bytes, nothing left hanging."""
 
-import signal
 from pathlib import Path
 
 import numpy as np
 import pytest
 from click.testing import CliRunner
-from nipype import Function, MapNode, Node, Workflow
+from nipype import MapNode, Node
+from planting import a_grid, plant
+from running import called, hidden, two_minutes, workflow
 from sequester.nodes.errors import InputError
-from sequester.nodes.images import Geometry, write_map
 from sequester.nodes.interfaces import Extract, GivenMask, SubjectMaps
 from sequester.workflows.cli import main
 from sequester.workflows.guard import GuardPlugin, GuardRefused
 from sequester.workflows.study import Origin, Study, read_table
 
 SHAPE = (5, 5, 4)
-GRID = Geometry(SHAPE, ((2, 0, 0, 0), (0, 2, 0, 0), (0, 0, 2, 0), (0, 0, 0, 1)))
+GRID = a_grid(SHAPE, 2.0)
 LABELS = [f"{i:02d}" for i in range(6)]
+CHART = Origin("a chart of moss", ("moss.nii",))
 
 
 @pytest.fixture(autouse=True)
-def time_limit():
-    """A pool whose worker dies would wait for ever; a test must not."""
-
-    def late(signum, frame):
-        raise TimeoutError("still running after two minutes")
-
-    before = signal.signal(signal.SIGALRM, late)
-    signal.alarm(120)
-    yield
-    signal.alarm(0)
-    signal.signal(signal.SIGALRM, before)
+def time_limit(quiet_engine):
+    with two_minutes():
+        yield
 
 
 @pytest.fixture
-def folder(tmp_path):
-    rng = np.random.default_rng(5)
-    lines = ["path\tsub\tsuffix"]
-    for label in LABELS:
-        write_map(tmp_path / f"{label}.nii", rng.standard_normal(SHAPE).astype(np.float32), GRID)
-        lines.append(f"{label}.nii\t{label}\tbold")
-    write_map(tmp_path / "moss.nii", np.arange(100).reshape(SHAPE) < 40, GRID)
-    (tmp_path / "table.tsv").write_text("\n".join(lines) + "\n")
-    return tmp_path
+def study(tmp_path) -> Study:
+    maps = np.random.default_rng(5).standard_normal((len(LABELS), *SHAPE)).astype(np.float32)
+    moss = np.arange(100).reshape(SHAPE) < 40
+    return plant(
+        tmp_path, dict(zip(LABELS, maps, strict=True)), GRID, {"moss": moss}, [CHART], prefix=""
+    )
 
 
 @pytest.fixture
-def study(folder) -> Study:
-    return read_table(folder / "table.tsv", origins=[Origin("a chart of moss", ("moss.nii",))])
-
-
-def workflow(folder: Path) -> Workflow:
-    made = Workflow("w", base_dir=str(folder / "work"))
-    made.config["execution"] = {
-        "crashdump_dir": str(folder / "work"),
-        "create_report": "false",
-        "poll_sleep_duration": "0.02",
-    }
-    return made
-
-
-def function(body: str, **inputs) -> Function:
-    made = Function(input_names=list(inputs), output_names=["out"])
-    made.inputs.function_str = body
-    for name, value in inputs.items():
-        setattr(made.inputs, name, value)
-    return made
-
-
-def hidden(path: object) -> str:
-    """A path as an expression in which the graph does not see a file's name."""
-    return f"{str(path)[::-1]!r}[::-1]"
+def folder(study) -> Path:
+    return study.root
 
 
 def result_of(folder: Path, name: str) -> bool:
@@ -117,14 +84,14 @@ def test_a_refusal_while_running_stops_what_depends_on_it_alone(folder, study, p
     """A node hands on the path of a tested map as a mask; another branch has nothing to do
     with it, and ends."""
     maps = [str(folder / f"{label}.nii") for label in LABELS]
-    made = workflow(folder)
-    hard = function(f"def hard(x):\n    return {hidden(maps[0])}\n", x=str(folder / "moss.nii"))
+    made = workflow()
+    hard = called(f"def hard(x):\n    return {hidden(maps[0])}\n", x=str(folder / "moss.nii"))
     read = Node(Extract(in_files=[maps[0]], labels=LABELS[:1]), "read")
     made.connect(Node(hard, "hard"), "out", read, "mask_files")
-    after = Node(function("def after(x):\n    return x\n", x=None), "after")
+    after = Node(called("def after(x):\n    return x\n", x=None), "after")
     made.connect(read, "values", after, "x")
     slow = "def slow(x):\n    import time\n    time.sleep(0.3)\n    return x\n"
-    other, last = (Node(function(slow, x=1), "other"), Node(function(slow, x=None), "last"))
+    other, last = (Node(called(slow, x=1), "other"), Node(called(slow, x=None), "last"))
     made.connect(other, "out", last, "x")
     with pytest.raises(GuardRefused, match="refused while running") as told:
         made.run(plugin=GuardPlugin(study, processes=processes))
@@ -142,13 +109,13 @@ def test_a_refusal_while_running_stops_what_depends_on_it_alone(folder, study, p
 @pytest.mark.parametrize("processes", [1, 2])
 def test_a_map_node_is_looked_at_before_it_is_split(folder, study, processes):
     maps = [str(folder / f"{label}.nii") for label in LABELS]
-    made = workflow(folder)
-    hard = function(f"def hard(x):\n    return [{hidden(maps[0])}, {hidden(maps[1])}]\n", x=1)
-    each = MapNode(function("def each(x):\n    return x\n", x=None), iterfield=["x"], name="each")
+    made = workflow()
+    hard = called(f"def hard(x):\n    return [{hidden(maps[0])}, {hidden(maps[1])}]\n", x=1)
+    each = MapNode(called("def each(x):\n    return x\n", x=None), iterfield=["x"], name="each")
     read = Node(Extract(in_files=maps[:2], labels=LABELS[:2]), "read")
     made.connect(Node(hard, "hard"), "out", each, "x")
     mask = Node(GivenMask(in_file=str(folder / "moss.nii"), reference=maps[0]), "mask")
-    join = Node(function("def join(x, y):\n    return y\n", x=None, y=None), "join")
+    join = Node(called("def join(x, y):\n    return y\n", x=None, y=None), "join")
     made.connect([(each, join, [("out", "x")]), (mask, join, [("mask_file", "y")])])
     made.connect(join, "out", read, "mask_files")
     with pytest.raises(GuardRefused, match="refused while running"):
@@ -160,7 +127,7 @@ def test_a_map_node_is_looked_at_before_it_is_split(folder, study, processes):
 @pytest.mark.parametrize("processes", [1, 2])
 def test_an_error_of_our_nodes_arrives_as_itself(folder, study, processes):
     (folder / "03.nii").write_bytes(b"no image")
-    made = workflow(folder)
+    made = workflow()
     maps = [str(folder / f"{label}.nii") for label in LABELS]
     made.add_nodes([Node(SubjectMaps(in_files=maps, labels=LABELS), "maps")])
     with pytest.raises(InputError, match=r"unreadable image \(.*03\.nii\)"):
@@ -168,11 +135,11 @@ def test_an_error_of_our_nodes_arrives_as_itself(folder, study, processes):
 
 
 def test_a_leak_is_refused_before_any_process_starts(folder, study):
-    made = workflow(folder)
+    made = workflow()
     maps = [str(folder / f"{label}.nii") for label in LABELS]
     trace = folder / "trace"
     body = f"def mark(x):\n    open({str(trace)!r}, 'w').close()\n    return x\n"
-    mark = Node(function(body, x=maps[0]), "mark")
+    mark = Node(called(body, x=maps[0]), "mark")
     read = Node(Extract(in_files=[maps[0]], labels=LABELS[:1]), "read")
     made.connect(mark, "out", read, "mask_files")
     with pytest.raises(GuardRefused, match="refused before anything ran: 1 cause, 1 finding"):
@@ -183,12 +150,12 @@ def test_a_leak_is_refused_before_any_process_starts(folder, study):
 def test_a_declared_file_that_changes_while_the_workflow_runs_is_refused(folder, study):
     maps = [str(folder / f"{label}.nii") for label in LABELS]
     moss = folder / "moss.nii"
-    made = workflow(folder)
+    made = workflow()
     body = (
         "def swap(x):\n    import shutil\n"
         f"    shutil.copyfile({hidden(maps[0])}, {str(moss)!r})\n    return x\n"
     )
-    swap = Node(function(body, x=maps[:2]), "swap")
+    swap = Node(called(body, x=maps[:2]), "swap")
     read = Node(Extract(mask_files=[str(moss)], labels=LABELS[:2]), "read")
     made.connect(swap, "out", read, "in_files")
     with pytest.raises(Exception, match=r"moss\.nii was changed while the workflow ran"):
@@ -200,12 +167,12 @@ def test_a_row_left_out_of_the_study_is_not_read(folder):
     text = (folder / "table.tsv").read_text().splitlines()
     rows = [f"{text[0]}\texclude_reason", *(f"{line}\tn/a" for line in text[1:-1])]
     (folder / "table.tsv").write_text("\n".join([*rows, f"{text[-1]}\tmoved"]) + "\n")
-    study = read_table(folder / "table.tsv", origins=[Origin("a chart of moss", ("moss.nii",))])
+    study = read_table(folder / "table.tsv", origins=[CHART])
     maps = [str(folder / f"{label}.nii") for label in LABELS]
-    made = workflow(folder)
+    made = workflow()
     read = Extract(in_files=maps, labels=LABELS, mask_files=[str(folder / "moss.nii")])
     made.add_nodes([Node(read, "read")])
-    with pytest.raises(GuardRefused, match=r"05\.nii \(left out of the study: moved\)"):
+    with pytest.raises(GuardRefused, match=r"05\.nii \(left out of\sthe study: moved\)"):
         made.run(plugin=GuardPlugin(study))
 
 

@@ -10,12 +10,15 @@ import shutil
 import struct
 from collections.abc import Callable
 from dataclasses import dataclass
+from functools import partial
 from pathlib import Path
 
 import nibabel as nib
 import numpy as np
+import planting
 import pytest
 from click.testing import CliRunner
+from planting import content
 from sequester.workflows.cli import main
 
 PAGE = Path(__file__).parent.parent / "docs" / "errors.md"
@@ -91,15 +94,16 @@ def noise(*shape, seed=0):
     return np.random.default_rng([seed, *shape]).standard_normal(shape).astype(np.float32)
 
 
-def save(path, data, affine=AFFINE):
-    nib.save(nib.Nifti1Image(data, affine), path)
+save = partial(planting.save, affine=AFFINE)
 
 
 def make_study(folder):
     """Five gardeners, two tasks of two runs, an atlas, a mask, and earlier results."""
     for name in ("maps", "variances", "results"):
         (folder / name).mkdir(parents=True)
-    (folder / "results" / "manifest.json").write_text("{}")
+    (folder / "results" / "manifest.json").write_text(
+        '{"study": "garden", "outputs": {"roi_tests.tsv": ""}}'
+    )
     (folder / "results" / "roi_tests.tsv").write_text("earlier\n")
     lines = ["path\tvolume\tsub\ttask\trun\tsuffix\tcontrast\texclude_reason\texchange\tvariance"]
     lines[0] += "\tgroup\tfold"
@@ -120,6 +124,13 @@ def make_study(folder):
 
 
 # -- ways to spoil it -------------------------------------------------------------------------
+
+
+def another_folder(study):
+    """The output is a folder that no run wrote."""
+    (study / "others").mkdir()
+    (study / "others" / "manifest.json").write_text("{}")
+    edit("seed = 3", 'seed = 3\noutput = "others"')(study)
 
 
 def edit(old, new, name="STUDY.toml"):
@@ -149,7 +160,7 @@ def copy(name, other):
 
 
 def image(name, data, affine=AFFINE):
-    return lambda folder: save(folder / name, data, affine)
+    return lambda folder: save(folder / name, data, affine=affine)
 
 
 def raw(name, change):
@@ -232,6 +243,11 @@ def more(text):
     return edit("flips = 19\n", f"flips = 19\n\n{text}\n")
 
 
+# A plan over runs, of which each subject has two: the rule reads their mean.
+RUNS = both(
+    plan('plan = "leave-one-run-out"'),
+    edit('{ kind = "strongest", k = 5 }', '{ kind = "strongest", k = 5, map = "mean" }'),
+)
 WEIGHTED = in_data('run_weights = "variance"')
 MINUS = in_data('minus = { task = "paths" }')
 BASELINE = in_data('baseline = { task = "paths" }')
@@ -666,6 +682,26 @@ SECTIONS = {
             "fwhm out of range (FOLDER/STUDY.toml, line 7): expected > 0 mm, got 0",
         ),
         Case(
+            "`quality` is no column that says something of the subjects.",
+            edit("select = {", 'quality = ["task"]\nselect = {'),
+            "quality names no column that says something of the subjects (FOLDER/STUDY.toml, line "
+            "7): expected a column of the study table such as one with how much they moved: group, "
+            "fold, got 'task'",
+        ),
+        Case(
+            "A column of `quality` is what is tested.",
+            both(
+                edit("select = {", 'quality = ["group"]\nselect = {'),
+                edit(
+                    "flips = 19",
+                    'flips = 19\ncompare = { column = "group", first = "a", second = "b" }',
+                ),
+            ),
+            "a column of quality is what a [[roi]] tests (FOLDER/STUDY.toml, line 7): expected "
+            "columns that say how good the data are, and nothing that is tested, got group; take "
+            "it out of quality, or out of score and compare",
+        ),
+        Case(
             "A file of an origin is not the one that was declared.",
             more('[[origin]]\nsource = "an atlas"\nfiles = ["garden_dseg.tsv"]\nsha256 = ["0123"]'),
             "a file of an origin is not the one that was declared "
@@ -794,6 +830,36 @@ SECTIONS = {
             "plan",
         ),
         Case(
+            "A plan over runs reads t, and one run is all that chooses.",
+            plan('plan = "leave-one-run-out"'),
+            "the rule reads t, and there is no t of one map (FOLDER/STUDY.toml, line 13, "
+            "roi Arbor): expected at least 2 maps on the side that chooses, got one run "
+            "in 01, 02, 03, 04, 05; use the rule strongest or peak-sphere with map = "
+            '"mean"',
+        ),
+        Case(
+            "Other maps choose, by a rule that may find nothing.",
+            edit(
+                'rule = { kind = "strongest", k = 5 }',
+                'rule = { kind = "threshold", p = 0.01 }\nchoose_on = { task = "paths" }',
+            ),
+            "a region that is chosen on other maps than are tested, by a rule that may "
+            "find nothing (FOLDER/STUDY.toml, line 14, roi Arbor): expected a rule that "
+            "always finds something: [...], got all voxels with p < 0.01, on_empty = "
+            '"empty"; state on_empty = "strongest" with a k, or the rule strongest or '
+            "peak-sphere",
+        ),
+        Case(
+            "A jackknife cannot do without somebody.",
+            both(
+                edit('plan = "leave-one-subject-out"', 'plan = "k-fold"\nfolds = 5'),
+                edit("flips = 19", 'interval = "jackknife"'),
+            ),
+            "the jackknife cannot do without 01: too few subjects for 5 folds "
+            "(FOLDER/STUDY.toml, line 15, roi Arbor): expected at least 5, got 4 (02, 03,"
+            ' 04, 05); use interval = "flips"',
+        ),
+        Case(
             "A localizer without its maps.",
             edit('choose_on = { task = "paths" }\n', ""),
             "missing key 'choose_on' (FOLDER/STUDY.toml, line 16): add it: choose_on = ...",
@@ -811,6 +877,19 @@ SECTIONS = {
             "line 19): got sub-02, sub-04 in one of them only; give every subject a map "
             "of both; or narrow this region to those who have both: select = { sub = [...] } in "
             "its [[roi]]",
+        ),
+        Case(
+            "A group is written in another way than in the table.",
+            edit("flips = 19", 'compare = { column = "fold", first = "X", second = "y" }'),
+            "compare names a group of nobody (FOLDER/STUDY.toml, line 14): expected what stands in "
+            "column fold: 'x', 'y', 'z', got 'X'; write it as the table does: capitals count",
+        ),
+        Case(
+            "More voxels are asked for than are searched.",
+            edit('"strongest", k = 5', '"strongest", k = 5000'),
+            "k is larger than the search region ([...]): expected at most its [...] voxels, got "
+            "5000; state a smaller k, or a larger search region",
+            RUN,
         ),
         Case(
             "Subjects of neither group.",
@@ -1123,7 +1202,7 @@ SECTIONS = {
         ),
         Case(
             "A mask on one of the grids alone.",
-            both(plan('plan = "leave-one-run-out"'), own_grid("02")),
+            both(RUNS, own_grid("02")),
             "grids differ (FOLDER/arbor.nii.gz, roi Arbor): expected the grid of "
             "FOLDER/maps/sub-02_task-lanterns_run-1.nii.gz: 7 x 5 x 4 voxels of 3 x 3 x "
             "3 mm, first at (-9, -6, -6) mm, got 6 x 5 x 4 voxels of 3 x 3 x 3 mm, first "
@@ -1131,7 +1210,7 @@ SECTIONS = {
         ),
         Case(
             "Two grids in one subject.",
-            both(plan('plan = "leave-one-run-out"'), own_grid("02", "paths")),
+            both(RUNS, own_grid("02", "paths")),
             "grids differ (FOLDER/maps/sub-02_task-paths_run-1.nii.gz): expected the "
             "grid of FOLDER/maps/sub-02_task-lanterns_run-1.nii.gz: 6 x 5 x 4 voxels of "
             "3 x 3 x 3 mm, first at (-9, -6, -6) mm, got 7 x 5 x 4 voxels of 3 x 3 x 3 "
@@ -1337,9 +1416,24 @@ SECTIONS = {
         ),
         Case(
             "The output folder is somebody else's.",
+            another_folder,
+            "output folder holds something else (FOLDER/others): expected nothing, or an "
+            "earlier run (its manifest.json); name another output folder; nothing was changed",
+            RUN,
+        ),
+        Case(
+            "The output folder holds the results of another study.",
+            edit('name = "garden"', 'name = "gardens"'),
+            "output folder holds the results of another study (FOLDER/results): expected nothing, "
+            "or results of gardens, got those of garden; name another output folder, or take "
+            "these away first; nothing was changed",
+            RUN,
+        ),
+        Case(
+            "The output folder is the study's own.",
             edit("seed = 3", 'seed = 3\noutput = "maps"'),
-            "output folder holds something else (FOLDER/maps): expected nothing, or an "
-            "earlier run (manifest.json); name another output folder; nothing was changed",
+            "the output folder holds what the study is made from (FOLDER/maps): expected a folder "
+            "of its own, got it holds [...]; name another output folder; nothing was changed",
             RUN,
         ),
         Case(
@@ -1435,6 +1529,14 @@ SECTIONS = {
             "ledger; take it back from a copy or a commit",
         ),
         Case(
+            "One that lies beside it was changed.",
+            put("OTHER.ledger.jsonl", "{}\n"),
+            "a ledger beside the study's own was changed (FOLDER/OTHER.ledger.jsonl): expected the "
+            "lines as sequester wrote them, and in their order, got line 1: not an entry of a "
+            "ledger; take it back from a copy or a commit, or move it out of the folder of "
+            "STUDY.ledger.jsonl, whose looks it tells of",
+        ),
+        Case(
             "It was changed, and is verified.",
             put(LEDGER, "{}\n"),
             "the ledger was changed (FOLDER/STUDY.ledger.jsonl)\nline 1: not an entry of a ledger",
@@ -1454,6 +1556,13 @@ SECTIONS = {
             "no entry 0123456789ab: what was there then was written again",
             (*VERIFY, "--deposited", "0123456789ab"),
             exit_code=1,
+        ),
+        Case(
+            "What is asked for is no digest.",
+            put(LEDGER, ""),
+            "no digest (--deposited): expected a head as verify prints it: 64 hexadecimal digits, "
+            "or the first 12 of them or more, got 'yes'",
+            (*VERIFY, "--deposited", "yes"),
         ),
         Case(
             "A source without a region is declared.",
@@ -1573,8 +1682,7 @@ SECTIONS = {
             both(
                 ARBOR_ONLY,
                 in_data('grids = "own"'),
-                edit('plan = "leave-one-subject-out"', 'plan = "leave-one-run-out"'),
-                edit("flips = 19\n", ""),
+                RUNS,
             ),
             'the shape check needs maps on one grid, and grids = "own" says that they are'
             " not: check the mask on maps that were brought to one space",
@@ -1703,15 +1811,13 @@ SECTIONS = {
             edit("flips = 19", 'test = "t"'),
             "refused before anything ran: 1 cause, 1 finding\n"
             "\n"
-            "1. leak: garden.Arbor.test: the 5 values are cross-fitted: each mask was "
-            "chosen on the other\n"
-            "values' data, so they are correlated and this statistic rejects a true null "
-            "far more often\n"
-            "than it says (about 18% of the time at a nominal 5 %, for n = 5 and a "
-            "threshold of p < .01)\n"
-            "    cure    use the whole-procedure sign flip, which chooses every fold's "
-            "region again in each\n"
-            '            flip (FlipTest; in STUDY.toml the default: leave test = "t" out)',
+            "1. leak: garden.Arbor.test: the 5 values are cross-fitted: each mask was chosen\n"
+            "on the other values' data, so they are correlated and this statistic rejects\n"
+            "a true null far more often than it says (about 18% of the time at a nominal\n"
+            "5 %, for n = 5 and a threshold of p < .01)\n"
+            "    cure    use the whole-procedure sign flip, which chooses every fold's\n"
+            "            region again in each flip (FlipTest; in STUDY.toml the default:\n"
+            '            leave test = "t" out)',
             exit_code=3,
         ),
         Case(
@@ -1719,25 +1825,22 @@ SECTIONS = {
             plan('plan = "exploratory"\ntest = "t"'),
             "refused before anything ran: 2 causes, 6 findings\n"
             "\n"
-            "1. leak: garden.Arbor.extract, element 0: the mask was chosen on the data "
-            "it would be tested on\n"
-            "    shared  sub-01_task-lanterns_run-1_bold, "
-            "sub-01_task-lanterns_run-2_bold\n"
+            "1. leak: garden.Arbor.extract, element 0: the mask was chosen on the data it\n"
+            "would be tested on\n"
+            "    shared  sub-01_task-lanterns_run-1_bold, sub-01_task-lanterns_run-2_bold\n"
             "    region  maps/sub-01_task-lanterns_run-1.nii.gz\n"
             "            -> garden.maps.out_files[0]\n"
             "            -> garden.Arbor.group.out_file\n"
             "            -> garden.Arbor.choose.mask_file\n"
             "    data    maps/sub-01_task-lanterns_run-1.nii.gz\n"
             "            -> garden.maps.out_files[0]\n"
-            "    cure    choose the region without the tested data (plan k-fold or "
-            "leave-one-subject-out; a\n"
-            "            region from outside the study), or read it as exploratory: a value "
-            "without interval\n"
-            "            and p\n"
+            "    cure    choose the region without the tested data (plan k-fold or\n"
+            "            leave-one-subject-out; a region from outside the study), or read\n"
+            "            it as exploratory: a value without interval and p\n"
             "    also    4 more elements of this node\n"
             "\n"
-            "2. leak: garden.Arbor.test: its values were read in a region chosen on "
-            "those very data\n"
+            "2. leak: garden.Arbor.test: its values were read in a region chosen on those\n"
+            "very data\n"
             "    cure    see the extraction that leaks",
             exit_code=3,
         ),
@@ -1751,23 +1854,21 @@ SECTIONS = {
             ),
             "refused before anything ran: 2 causes, 6 findings\n"
             "\n"
-            "1. leak: garden.Brook.extract, element 0: the mask was chosen on another map "
-            "of the very data it\n"
-            "would be tested on\n"
-            "    shared  sub-01_task-lanterns_run-1_bold, "
-            "sub-01_task-lanterns_run-2_bold\n"
+            "1. leak: garden.Brook.extract, element 0: the mask was chosen on another map of\n"
+            "the very data it would be tested on\n"
+            "    shared  sub-01_task-lanterns_run-1_bold, sub-01_task-lanterns_run-2_bold\n"
             "    region  maps/sub-01_task-paths_run-1.nii.gz\n"
             "            -> garden.maps1.out_files[0]\n"
             "            -> garden.Brook.choose.row_masks[0]\n"
             "    data    maps/sub-01_task-lanterns_run-1.nii.gz\n"
             "            -> garden.maps.out_files[0]\n"
-            "    cure    choose on that map in held-out subjects (plan k-fold with "
-            "choose_on), or show that\n"
-            "            the two contrasts are orthogonal (plan orthogonal-contrast)\n"
+            "    cure    choose on that map in held-out subjects (plan k-fold with\n"
+            "            choose_on), or show that the two contrasts are orthogonal (plan\n"
+            "            orthogonal-contrast)\n"
             "    also    4 more elements of this node\n"
             "\n"
-            "2. leak: garden.Brook.test: its values were read in a region chosen on "
-            "those very data\n"
+            "2. leak: garden.Brook.test: its values were read in a region chosen on those\n"
+            "very data\n"
             "    cure    see the extraction that leaks",
             exit_code=3,
         ),
@@ -1781,38 +1882,26 @@ SECTIONS = {
             ),
             "refused before anything ran: 2 causes, 6 findings\n"
             "\n"
-            "1. leak: garden.Cinder.extract, element 0: the region was made from the data "
-            "it would be tested\n"
-            "on, as its origin declares or a run has recorded\n"
-            "    shared  sub-01_task-lanterns_run-1_bold, "
-            "sub-01_task-lanterns_run-2_bold\n"
+            "1. leak: garden.Cinder.extract, element 0: the region was made from the data it\n"
+            "would be tested on, as its origin declares or a run has recorded\n"
+            "    shared  sub-01_task-lanterns_run-1_bold, sub-01_task-lanterns_run-2_bold\n"
             "    origin  drawn\n"
             "    region  cinder.nii.gz\n"
             "            -> garden.Cinder.region.mask_file\n"
             "    data    maps/sub-01_task-lanterns_run-1.nii.gz\n"
             "            -> garden.maps.out_files[0]\n"
-            "    cure    choose the region without the tested data (plan k-fold or "
-            "leave-one-subject-out; a\n"
-            "            region from outside the study), or read it as exploratory: a value "
-            "without interval\n"
-            "            and p\n"
+            "    cure    choose the region without the tested data (plan k-fold or\n"
+            "            leave-one-subject-out; a region from outside the study), or read\n"
+            "            it as exploratory: a value without interval and p\n"
             "    also    4 more elements of this node\n"
             "\n"
-            "2. leak: garden.Cinder.test: its values were read in a region chosen on "
-            "those very data\n"
+            "2. leak: garden.Cinder.test: its values were read in a region chosen on those\n"
+            "very data\n"
             "    cure    see the extraction that leaks",
             exit_code=3,
         ),
     ],
 }
-
-
-def content(folder):
-    """Every path below a folder, with its bytes."""
-    return {
-        str(p.relative_to(folder)): p.read_bytes() if p.is_file() else None
-        for p in folder.rglob("*")
-    }
 
 
 def told(case, folder):
@@ -1824,7 +1913,9 @@ def told(case, folder):
     assert isinstance(done.exception, SystemExit), done.exception
     assert done.exit_code == case.exit_code
     assert done.stdout == ""
-    assert content(folder) == before, "something was written"
+    after = content(folder)
+    after.pop(".results.lock", None)  # it stays once a run has begun
+    assert after == before, "something was written"
     return done.stderr.replace(str(folder), "FOLDER")
 
 
@@ -1879,7 +1970,8 @@ When a request or its data are wrong, `sequester` ends with exit code 2 and one 
 standard error: what is wrong, where (the file, its line, the region), what was expected, what
 was there, and what can be done. Nothing is written then: there is no output folder, and earlier
 results are as they were. What the guard refuses ends with exit code 3 and the reasons. A
-ledger that was changed ends `sequester verify` with exit code 1, and everything else with 2. With
+ledger that was changed ends `sequester verify` with exit code 1 (one whose branches wait to be
+joined, after a merge, with 4), and everything else with 2. With
 `--json` the same words are the value of `error`.
 
 The messages below are those of a small study in FOLDER, spoilt in one way at a time; {CUT}

@@ -10,12 +10,13 @@ from typing import Any
 import numpy as np
 import pytest
 from nipype import Function, Node, Workflow
+from planting import a_grid, plant
 from scipy import stats
 from sequester.nodes.design import two_sample
 from sequester.nodes.errors import InputError
 from sequester.nodes.folds import KFold, LeaveOneOut
 from sequester.nodes.heldout import held_out_difference, held_out_result
-from sequester.nodes.images import Geometry, read_map, write_map
+from sequester.nodes.images import read_map, write_map
 from sequester.nodes.interfaces import (
     ChooseMask,
     FixedRegionTest,
@@ -29,12 +30,12 @@ from sequester.nodes.interfaces.foldlists import fold_of_row
 from sequester.nodes.masks import Strongest, Threshold
 from sequester.nodes.roi import one_sample_t
 from sequester.nodes.rules import Branch, Inputs, Leaf
-from sequester.nodes.touch import Touch, Unit
+from sequester.nodes.touch import Touch
 from sequester.workflows.around import around_folds, compared
 from sequester.workflows.guard import GuardPlugin, GuardRefused
-from sequester.workflows.study import Origin, Row, Study
+from sequester.workflows.study import Origin, Study
 
-GRID = Geometry((6, 6, 6), tuple(map(tuple, np.diag([3.0, 3.0, 3.0, 1.0]).tolist())))
+GRID = a_grid((6, 6, 6))
 LABELS = ["08", "01", "06", "03", "05", "02", "07", "04"]  # out of order: fold k is not row k
 GROUPS = ["hill", "pond", "pond", "hill", "pond", "hill", "hill", "pond"]
 AGES = [31.0, 45.0, 52.0, 28.0, 60.0, 39.0, 33.0, 41.0]
@@ -59,25 +60,16 @@ pytestmark = pytest.mark.usefixtures("quiet_engine")
 @pytest.fixture
 def study(tmp_path: Path) -> Study:
     """Eight gardeners with an effect map each, and a search region of declared origin."""
-    root = tmp_path / "study"
-    root.mkdir()
-    rows = []
-    for label, group, age in zip(LABELS, GROUPS, AGES, strict=True):
+    maps = {}
+    for label in LABELS:
         data = np.random.default_rng(int(label)).normal(0.8, 1, GRID.shape).astype(np.float32)
         data[0, :, :2] = 0  # outside the field of view
-        write_map(root / f"sub-{label}.nii", data, GRID)
-        told = (("place", group), ("age", str(age)))
-        unit = Unit(sub=label, suffix="bold")
-        rows.append(Row(f"sub-{label}.nii", None, unit, extra=told))
+        maps[label] = data
     inside = np.ones(GRID.shape, bool)
     inside[5] = False
-    write_map(root / "garden.nii", inside, GRID)
-    return Study(root, rows, [Origin("a garden plan of 1909", ("garden.nii",))])
-
-
-@pytest.fixture
-def maps(study: Study) -> list[str]:
-    return [str(study.root / row.path) for row in study.rows]
+    origin = Origin("a garden plan of 1909", ("garden.nii",))
+    told = {"place": GROUPS, "age": AGES}
+    return plant(tmp_path / "study", maps, GRID, {"garden": inside}, [origin], told)
 
 
 def medians() -> Function:
@@ -187,7 +179,7 @@ def test_masks_in_the_wrong_order_are_refused(study: Study, maps: list[str]):
     plan = given(around(study), maps)
     rows = plan.get_node("rows")
     rows.inputs.fold_of_row = [(k + 1) % 8 for k in rows.inputs.fold_of_row]
-    with pytest.raises(GuardRefused, match="chosen on the data it would be tested on") as raised:
+    with pytest.raises(GuardRefused, match=r"chosen on the data it would be\stested") as raised:
         plan.run(plugin=GuardPlugin(study, dry=True))
     # Each mask meets one map that chose it; the values of all of them are then refused too.
     assert [f.kind for f in raised.value.findings] == ["extraction"] * 8 + ["statistic"]
@@ -214,7 +206,7 @@ def test_a_plain_t_on_the_held_out_values_is_refused(study: Study, maps: list[st
     test = Node(FixedRegionTest(names=NAMES, labels=LABELS), name="test")
     fields = ("values", "coverage", "sizes")
     plan.connect([(plan.get_node("extract"), test, [(f, f) for f in fields])])
-    with pytest.raises(GuardRefused, match="rejects a true null far more often"):
+    with pytest.raises(GuardRefused, match=r"rejects a true\snull far more often"):
         plan.run(plugin=GuardPlugin(study, dry=True))
 
 
@@ -380,8 +372,29 @@ def test_rows_of_a_person_are_averaged_and_empty_masks_are_told():
     )
     assert made.estimate == pytest.approx((2 + 5 + 0) / 3)
     assert (made.n_subjects, made.coverage, made.interval) == (3, 0.5, None)
-    assert "1 of 4 masks are empty; their value counts as 0." in made.sentence
     assert "no interval, for which the folds are too many" in made.sentence
+
+
+@pytest.mark.parametrize("groups", [False, True])
+def test_where_a_mask_is_empty_the_estimate_is_no_effect_size(groups):
+    def made(*sizes):
+        about = (NAMES, 2, sizes, [1.0] * 4, "r")
+        if groups:
+            of = ["hill", "pond"] * 2
+            return held_out_difference([1, 3, 5, 0], list("abcd"), of, ("hill", "pond"), *about)
+        return held_out_result([1.0, 3.0, 5.0, 0.0], list("abcd"), *about)
+
+    full, some = made(4, 4, 4, 4), made(4, 4, 4, 0)
+    assert some.estimate == full.estimate
+    assert (some.interval, some.dz, some.g, some.p) == (None,) * 4
+    assert (full.interval is None) == groups
+    told = (
+        "1 of 4 masks are empty; there the value counts as 0, so the estimate is not the size of "
+        "an effect and has no interval."
+    )
+    assert some.sentence.endswith(told) and "interval " not in some.sentence.replace(told, "")
+    assert "masks are empty" not in full.sentence
+    assert some.target == f"{full.target}, 0 in the empty ones: not the size of an effect"
 
 
 def test_a_difference_counts_people_and_only_the_groups_compared():

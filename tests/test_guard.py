@@ -11,10 +11,13 @@ from typing import Any
 import nibabel as nib
 import numpy as np
 import pytest
+import running
 from nipype import Function, IdentityInterface, JoinNode, MapNode, Merge, Node, Workflow
 from nipype.pipeline.engine.nodes import NodeExecutionError
+from planting import a_grid, plant
+from running import called, hidden
 from sequester.nodes.errors import EmptyFoldError, InputError, Refused
-from sequester.nodes.images import Geometry, read_map, write_map
+from sequester.nodes.images import read_map, write_map
 from sequester.nodes.interfaces import (
     ChooseByFold,
     ChooseMask,
@@ -33,7 +36,7 @@ from sequester.workflows import plans
 from sequester.workflows.guard import GuardPlugin, GuardRefused
 from sequester.workflows.study import Origin, Row, Study
 
-GRID = Geometry((6, 6, 6), tuple(map(tuple, np.diag([3.0, 3.0, 3.0, 1.0]).tolist())))
+GRID = a_grid((6, 6, 6))
 LABELS = [f"{i:02d}" for i in range(1, 9)]
 PROCEDURE = Procedure(Threshold(p=0.05))
 
@@ -48,19 +51,13 @@ def effects(seed: int) -> Any:
 @pytest.fixture
 def study(tmp_path: Path) -> Study:
     """Eight subjects with an effect map each, and an atlas of declared origin."""
-    root = tmp_path / "study"
-    root.mkdir()
-    rows = []
-    for i, label in enumerate(LABELS):
-        write_map(root / f"sub-{label}.nii", effects(i), GRID)
-        rows.append(Row(f"sub-{label}.nii", None, Unit(sub=label, suffix="bold")))
-    write_map(root / "atlas.nii", np.random.default_rng(99).random(GRID.shape) < 0.2, GRID)
-    return Study(root, rows, [Origin("an atlas of 1909", ("atlas.nii",))])
-
-
-@pytest.fixture
-def maps(study: Study) -> list[str]:
-    return [str(study.root / row.path) for row in study.rows]
+    return plant(
+        tmp_path / "study",
+        {label: effects(i) for i, label in enumerate(LABELS)},
+        GRID,
+        {"atlas": np.random.default_rng(99).random(GRID.shape) < 0.2},
+        [Origin("an atlas of 1909", ("atlas.nii",))],
+    )
 
 
 @pytest.fixture
@@ -69,13 +66,8 @@ def atlas(study: Study) -> str:
 
 
 def workflow(name: str = "w") -> Workflow:
-    empty = Workflow(name, base_dir="work")
-    empty.config["execution"] = {
-        "crashdump_dir": ".",
-        "create_report": "false",
-        "remove_unnecessary_outputs": "false",
-    }
-    return empty
+    """One that keeps outputs which nothing is connected to."""
+    return running.workflow(name, remove_unnecessary_outputs="false")
 
 
 def leave_one_out(maps: list[str]) -> Workflow:
@@ -94,19 +86,6 @@ def circular(maps: list[str], **extract: Any) -> Workflow:
     graph.connect([(group, choose, [("out_file", "in_file")])])
     graph.connect([(choose, read, [("mask_file", "mask_files")])])
     return graph
-
-
-def called(body: str, **inputs: Any) -> Function:
-    """A function of somebody else's, with its constants written into it."""
-    made = Function(input_names=sorted(inputs), output_names=["out"])
-    made.inputs.function_str = body
-    made.inputs.trait_set(**inputs)
-    return made
-
-
-def hidden(path: object) -> str:
-    """A path as an expression in which the graph does not see a file's name."""
-    return f"{str(path)[::-1]!r}[::-1]"
 
 
 def ran(graph: Workflow, study: Study) -> tuple[GuardPlugin, dict[str, Any]]:
@@ -359,7 +338,8 @@ class TestWhileRunning:
         graph.connect([(each, group, [("out", "in_files")])])
         graph.connect([(group, choose, [("out_file", "in_file")])])
         graph.connect([(choose, read, [("mask_file", "mask_files")])])
-        self.refused(graph, study, tmp_path)
+        (finding,) = self.refused(graph, study, tmp_path).findings
+        assert (finding.verdict, study.table.describe(finding.shared)) == ("leak", "sub-01_bold")
 
     def test_a_long_text_is_no_path(self, study: Study):
         graph = workflow()
@@ -382,7 +362,10 @@ class TestWhileRunning:
             called(f"def mask(x):\n    return {hidden(maps[0])}\n", x=maps[1]), [maps[0]]
         )
         self.refused(graph, study, tmp_path)
-        self.refused(graph, study, tmp_path)
+        (cached,) = tmp_path.rglob("mask/result_*.pklz")
+        made = cached.stat().st_mtime_ns
+        (finding,) = self.refused(graph, study, tmp_path).findings
+        assert (finding.verdict, cached.stat().st_mtime_ns) == ("leak", made)
 
     def test_other_branches_finish(self, study: Study, maps: list[str], tmp_path: Path):
         graph = self.extraction(
@@ -403,7 +386,9 @@ class TestWhileRunning:
     ):
         stranger = write_map(tmp_path / "stranger.nii", effects(50) > 1, GRID)
         hard = called(f"def mask(x):\n    return {hidden(stranger)}\n", x=maps[1])
-        self.refused(self.extraction(hard, [maps[0]]), study, tmp_path)
+        (finding,) = self.refused(self.extraction(hard, [maps[0]]), study, tmp_path).findings
+        assert (finding.verdict, finding.shared) == ("unproven", 0)
+        assert "stranger.nii" in str(finding)
 
     @pytest.mark.parametrize("where", ["of an earlier run", "of another branch"])
     def test_a_product_that_no_edge_brings_does_not_slip_in(
@@ -487,7 +472,12 @@ class TestWhileRunning:
         graph.connect([(each, choose, [("out_files", "in_files")])])
         graph.connect([(each, read, [("out_files", "in_files")])])
         graph.connect([(choose, read, [("row_masks", "mask_files")])])
-        ran(graph, Study(study.root, rows))
+        used = Study(study.root, rows)
+        findings = ran(graph, used)[0].findings
+        assert [(f.verdict, f.level) for f in findings] == [("apart", "subject")] * 7
+        assert [used.table.describe(f.data_units) for f in findings] == [
+            f"sub-{label}_bold" for label in LABELS[:7]
+        ]
 
 
 class TestErrors:
@@ -495,7 +485,7 @@ class TestErrors:
         graph = workflow()
         read = Node(Extract(in_files=maps, labels=LABELS), name="extract")
         mask = Node(GivenMask(in_file=atlas), name="given")
-        coarse = Geometry((6, 6, 6), tuple(map(tuple, np.diag([4.0, 4.0, 4.0, 1.0]).tolist())))
+        coarse = a_grid((6, 6, 6), 4.0)
         mask.inputs.reference = str(write_map(study.root / "coarse.nii", effects(0), coarse))
         graph.connect(mask, "mask_file", read, "mask_files")
         with pytest.raises(InputError, match="grids differ") as raised:
@@ -704,7 +694,11 @@ class TestPlans:
             step.inputs.x = part
             graph.connect(step, "out", merge, f"in{i}")
         graph.connect(merge, "out", plan, "inputnode.effects")
-        ran(graph, study)
+        findings = ran(graph, study)[0].findings
+        assert {(f.kind, f.verdict, f.level) for f in findings} == {
+            (kind, "apart", "subject") for kind in ("extraction", "statistic")
+        }
+        assert [f.data_units for f in findings[:8]] == [1 << i for i in range(8)]
 
     def test_a_join_that_comes_right_behind_the_iterable(self, study: Study, maps: list[str]):
         graph = workflow("own")

@@ -14,9 +14,10 @@ import pytest
 from click.testing import CliRunner
 from nipype import Function, JoinNode, MapNode, Node, Workflow
 from nipype.interfaces.utility import IdentityInterface
+from planting import a_grid, paths_of, plant
+from running import workflow
 from sequester import GuardPlugin, contract
 from sequester.nodes.errors import InputError
-from sequester.nodes.images import Geometry, write_map
 from sequester.nodes.interfaces import (
     ChooseByFold,
     Extract,
@@ -30,16 +31,16 @@ from sequester.nodes.interfaces import (
 from sequester.nodes.masks import Strongest
 from sequester.nodes.procedure import Procedure
 from sequester.nodes.rules import Meeting, Statistic, each
-from sequester.nodes.touch import Unit
 from sequester.workflows.cli import main
+from sequester.workflows.graphledger import _said
 from sequester.workflows.guard import GuardRefused
 from sequester.workflows.ledger import Ledger
 from sequester.workflows.record import record_of
-from sequester.workflows.study import Origin, Row, Study
+from sequester.workflows.study import Origin, Study
 
 SHAPE, SUBS = (9, 8, 7), [f"{i:02}" for i in range(1, 8)]
 AFFINE = np.array([[-3, 0.2, 0, 12], [0.2, 3, -0.1, -11], [0, 0.1, 3, -9], [0, 0, 0, 1.0]])
-GRID = Geometry(SHAPE, tuple(map(tuple, AFFINE.tolist())))
+GRID = a_grid(SHAPE, AFFINE)
 PROCEDURE = Procedure(Strongest(20))
 
 
@@ -49,39 +50,30 @@ pytestmark = pytest.mark.usefixtures("quiet_engine")
 @pytest.fixture
 def garden(tmp_path: Path) -> Study:
     """Seven people with a map each, a bulb of an effect at the voxel (3, 3, 3), a plot apart."""
-    root, rows = tmp_path / "garden", []
-    root.mkdir()
     at = np.stack(np.meshgrid(*map(np.arange, SHAPE), indexing="ij"), axis=-1)
     bulb = 3 * (np.linalg.norm(at - [3, 3, 3], axis=-1) < 1.8)
-    for i, sub in enumerate(SUBS):
-        data = np.random.default_rng(i).normal(0, 1, SHAPE) + bulb
-        write_map(root / f"sub-{sub}.nii", data.astype(np.float32), GRID)
-        rows.append(Row(f"sub-{sub}.nii", None, Unit(sub=sub, suffix="bold"), "glow"))
-    write_map(root / "plot.nii", (at == [7, 6, 5]).all(axis=-1) | (at[..., 0] == 8), GRID)
-    return Study(root, rows, [Origin("a plan of 1909", ("plot.nii",))])
-
-
-def maps(study: Study) -> list[str]:
-    return [str(study.root / row.path) for row in study.rows]
-
-
-def engine(name: str) -> Workflow:
-    made = Workflow(name, base_dir="work")
-    made.config["execution"] = {"crashdump_dir": ".", "create_report": "false"}
-    return made
+    noise = {sub: np.random.default_rng(i).normal(0, 1, SHAPE) for i, sub in enumerate(SUBS)}
+    return plant(
+        tmp_path / "garden",
+        {sub: (data + bulb).astype(np.float32) for sub, data in noise.items()},
+        GRID,
+        {"plot": (at == [7, 6, 5]).all(axis=-1) | (at[..., 0] == 8)},
+        [Origin("a plan of 1909", ("plot.nii",))],
+        {"contrast": ["glow"] * len(SUBS)},
+    )
 
 
 def found(study: Study, name: str = "found", *, k: int = 20, seed: int = 0) -> Workflow:
     """A region that is found and tested, everybody held out in turn."""
-    graph = engine(name)
+    graph = workflow(name)
     procedure = Procedure(Strongest(k))
     choose = Node(
-        ChooseByFold(in_files=maps(study), labels=SUBS, procedure=procedure), name="choose"
+        ChooseByFold(in_files=paths_of(study), labels=SUBS, procedure=procedure), name="choose"
     )
-    read = Node(Extract(in_files=maps(study), labels=SUBS), name="extract")
+    read = Node(Extract(in_files=paths_of(study), labels=SUBS), name="extract")
     test = Node(
         FlipTest(
-            in_files=maps(study),
+            in_files=paths_of(study),
             labels=SUBS,
             procedure=procedure,
             n_flips=9,
@@ -104,17 +96,19 @@ def t_test(graph: Workflow, read: Node) -> None:
 
 def given(study: Study, mask: Path, name: str = "given") -> Workflow:
     """A region from outside that is tested."""
-    graph = engine(name)
-    read = Node(Extract(in_files=maps(study), labels=SUBS, mask_files=[str(mask)]), name="extract")
+    graph = workflow(name)
+    read = Node(
+        Extract(in_files=paths_of(study), labels=SUBS, mask_files=[str(mask)]), name="extract"
+    )
     t_test(graph, read)
     return graph
 
 
 def parcels(study: Study, atlas: Path, base: str = "work") -> Workflow:
     """The labels of an atlas, each tested."""
-    graph = engine("parcels")
+    graph = workflow("parcels")
     graph.base_dir = base
-    read = ExtractParcels(in_files=maps(study), labels=SUBS, label_files=[str(atlas)])
+    read = ExtractParcels(in_files=paths_of(study), labels=SUBS, label_files=[str(atlas)])
     node = Node(read, name="extract")
     test = Node(FamilyTest(labels=SUBS, names=("Brook", "a-priori", "the atlas")), name="test")
     for field in ("values_file", "coverage_file", "parcels", "sizes"):
@@ -123,12 +117,12 @@ def parcels(study: Study, atlas: Path, base: str = "work") -> Workflow:
 
 
 def sphere(study: Study, centre: tuple[float, ...], name: str = "ball") -> Workflow:
-    graph = engine(name)
+    graph = workflow(name)
     ball = Node(
-        SphereMask(reference=maps(study)[0], centre=centre, radius=4.0, origin="a letter"),
+        SphereMask(reference=paths_of(study)[0], centre=centre, radius=4.0, origin="a letter"),
         name="sphere",
     )
-    read = Node(Extract(in_files=maps(study), labels=SUBS), name="extract")
+    read = Node(Extract(in_files=paths_of(study), labels=SUBS), name="extract")
     graph.connect(ball, "mask_file", read, "mask_files")
     t_test(graph, read)
     return graph
@@ -204,16 +198,18 @@ class TestWhatARunAdds:
         ] == [1]
 
     def test_values_that_no_statistic_takes_were_looked_at(self, garden: Study):
-        graph = engine("values")
+        graph = workflow("values")
         mask = str(garden.root / "plot.nii")
-        read = Node(Extract(in_files=maps(garden), labels=SUBS, mask_files=[mask]), name="extract")
+        read = Node(
+            Extract(in_files=paths_of(garden), labels=SUBS, mask_files=[mask]), name="extract"
+        )
         graph.add_nodes([read])
         (look,) = run(graph, garden).looks
         assert (look["node"], look["statistic"]) == ("values.extract", "")
         # Everybody by an iterable is one look too: the nodes are one in the script.
-        graph = engine("each")
+        graph = workflow("each")
         read = Node(Extract(mask_files=[mask], labels=["somebody"]), name="extract")
-        read.iterables = ("in_files", [[path] for path in maps(garden)])
+        read.iterables = ("in_files", [[path] for path in paths_of(garden)])
         graph.add_nodes([read])
         (look,) = run(graph, garden).looks
         assert (look["node"], look["tested"], look["looks"]) == ("each.extract", {"all_but": []}, 2)
@@ -222,17 +218,17 @@ class TestWhatARunAdds:
         """Whichever way the lists are wired: what was read where counts."""
         mask = str(garden.root / "plot.nii")
         (whole,) = run(given(garden, garden.root / "plot.nii"), garden).looks
-        graph = engine("mapped")
+        graph = workflow("mapped")
         read = MapNode(Extract(mask_files=[mask]), iterfield=["in_files", "labels"], name="extract")
-        read.inputs.in_files = [[path] for path in maps(garden)]
+        read.inputs.in_files = [[path] for path in paths_of(garden)]
         read.inputs.labels = [[sub] for sub in SUBS]
         flat = MapNode(Function(["a"], ["out"], first), iterfield=["a"], name="flat")
         contract(flat, rules={"out": each("a")})
         graph.connect(read, "values", flat, "a")
         t_tested(graph, flat)
-        joined = engine("joined")
+        joined = workflow("joined")
         who = Node(IdentityInterface(["path"]), name="who")
-        who.iterables = ("path", maps(garden))
+        who.iterables = ("path", paths_of(garden))
         pick = JoinNode(
             Extract(mask_files=[mask], labels=SUBS),
             joinsource="who",
@@ -251,7 +247,7 @@ class TestWhatARunAdds:
     def test_a_contract_is_written_down_with_the_geometry_it_states(self, garden: Study):
         graph = given(garden, garden.root / "plot.nii")
         smooth = Node(Function(["files", "grid"], ["out"], same), name="smooth")
-        smooth.inputs.files, smooth.inputs.grid = maps(garden), maps(garden)[0]
+        smooth.inputs.files, smooth.inputs.grid = paths_of(garden), paths_of(garden)[0]
         contract(smooth, rules={"out": each("files")}, geometry=["grid"])
         graph.connect(smooth, "out", graph.get_node("extract"), "in_files")
         says = "rules for out; geometry only: grid"
@@ -262,11 +258,11 @@ class TestWhatARunAdds:
         assert [w["says"] for w in record_of(guard)["waivers"]] == [says]
 
     def test_claims_biased_values_and_rules_of_their_own_are_written_down(self, garden: Study):
-        graph = engine("waived")
+        graph = workflow("waived")
         choose = Node(
-            ChooseByFold(in_files=maps(garden), labels=SUBS, procedure=PROCEDURE), name="choose"
+            ChooseByFold(in_files=paths_of(garden), labels=SUBS, procedure=PROCEDURE), name="choose"
         )
-        read = Node(Own(in_files=maps(garden), labels=SUBS[1:] + SUBS[:1]), name="extract")
+        read = Node(Own(in_files=paths_of(garden), labels=SUBS[1:] + SUBS[:1]), name="extract")
         read.inputs.exploratory = read.inputs.these_subjects = True
         graph.connect(choose, "row_masks", read, "mask_files")
         run(graph, garden)
@@ -275,9 +271,9 @@ class TestWhatARunAdds:
         }
 
     def test_extractions_and_tests_of_others_are_looks_too(self, garden: Study):
-        graph = engine("foreign")
+        graph = workflow("foreign")
         read = Node(Function(["mask", "files"], ["out"], means), name="means")
-        read.inputs.mask, read.inputs.files = str(garden.root / "plot.nii"), maps(garden)
+        read.inputs.mask, read.inputs.files = str(garden.root / "plot.nii"), paths_of(garden)
         contract(read, extraction=Meeting(mask="mask", data="files"))
         test = Node(Function(["values"], ["t"], t_of), name="t")
         contract(test, statistic=Statistic(values="values"))
@@ -329,14 +325,14 @@ class TestRegionsFromOutside:
         # It would not have, had nobody stated it before.
         ledger().path.unlink()
         run(found(garden), garden)
-        with pytest.raises(GuardRefused):
+        with pytest.raises(GuardRefused, match="or a run has recorded"):
             run(given(study, path), study)
 
     def test_a_sphere_near_a_found_region_is_unproven_until_it_is_explained(self, garden: Study):
         run(found(garden), garden)
         study = Study(garden.root, garden.rows, [*garden.origins, Origin("a letter")])
         near = tuple(float(x) for x in (AFFINE @ [3, 3, 3, 1])[:3])
-        with pytest.raises(GuardRefused, match="is like a mask that was chosen on") as caught:
+        with pytest.raises(GuardRefused, match=r"is like a mask\sthat was chosen on") as caught:
             run(sphere(study, near), study)
         assert {f.verdict for f in caught.value.findings if not f.allowed} >= {"unproven"}
         said = " ".join(str(caught.value).split())
@@ -363,15 +359,16 @@ class TestRegionsFromOutside:
         study, path = with_region(garden, "garden_dseg.nii.gz", atlas)
 
         def through(label: int) -> Workflow:
-            graph = found(study, f"label{label}", k=5) if searched else engine(f"label{label}")
+            graph = found(study, f"label{label}", k=5) if searched else workflow(f"label{label}")
             mask = Node(
-                LabelMask(in_file=str(path), labels=[label], reference=maps(study)[0]), name="label"
+                LabelMask(in_file=str(path), labels=[label], reference=paths_of(study)[0]),
+                name="label",
             )
             if searched:
                 for name in ("choose", "test"):
                     graph.connect(mask, "mask_file", graph.get_node(name), "search_file")
             else:
-                read = Node(Extract(in_files=maps(study), labels=SUBS), name="extract")
+                read = Node(Extract(in_files=paths_of(study), labels=SUBS), name="extract")
                 graph.connect(mask, "mask_file", read, "mask_files")
                 t_test(graph, read)
             return graph
@@ -407,9 +404,9 @@ class TestRegionsFromOutside:
         near = tuple(map(float, (AFFINE @ [3, 3, 3, 1])[:3]))
 
         def balls(name: str, centres: list[Any]) -> Workflow:
-            graph = engine(name)
-            ball = SphereMask(reference=maps(study)[0], radius=4.0, origin="a letter")
-            read = Extract(in_files=maps(study), labels=SUBS)
+            graph = workflow(name)
+            ball = SphereMask(reference=paths_of(study)[0], radius=4.0, origin="a letter")
+            read = Extract(in_files=paths_of(study), labels=SUBS)
             if how == "mapped":
                 made: Node = MapNode(ball, iterfield=["centre"], name="spheres")
                 made.inputs.centre = centres
@@ -438,11 +435,16 @@ class TestRegionsFromOutside:
         assert [d["sources"] for d in declared] == [["a letter"], ["a letter"]]
 
 
+def test_a_number_makes_another_look_down_to_its_tenth_digit():
+    assert _said({"p": [0.05]}) != _said({"p": [0.05001]})
+    assert _said({"p": [0.1 + 0.2]}) == _said({"p": [0.3]})  # another machine's last digit
+
+
 class TestNothingIsWritten:
     def test_by_a_refused_run(self, garden: Study):
         study, path = with_region(garden, "mine.nii.gz", np.ones(SHAPE, np.uint8))
         undeclared = Study(study.root, study.rows)
-        with pytest.raises(GuardRefused):
+        with pytest.raises(GuardRefused, match=r"unproven: .*mine\.nii\.gz"):
             run(given(undeclared, path), undeclared)
         assert not ledger().path.exists()
 
@@ -457,7 +459,7 @@ class TestNothingIsWritten:
         run(found(garden), garden)
         study, path = with_region(garden, "mine.nii.gz", np.asarray(fold_mask().dataobj))
         size = ledger().path.stat().st_size
-        with pytest.raises(GuardRefused):
+        with pytest.raises(GuardRefused, match="or a run has recorded"):
             run(given(study, path), study, dry=True)
         run(given(garden, garden.root / "plot.nii"), garden, dry=True)
         assert ledger().path.stat().st_size == size
@@ -490,7 +492,8 @@ def test_check_reads_the_ledger_and_writes_nothing(garden: Study, tmp_path: Path
         "from sequester.nodes.interfaces import Extract\n"
         "def build():\n"
         "    graph = Workflow('w')\n"
-        f"    read = Extract(in_files={maps(study)!r}, labels={SUBS!r}, mask_files={str(path)!r})\n"
+        f"    maps, labels, mask = {paths_of(study)!r}, {SUBS!r}, {str(path)!r}\n"
+        "    read = Extract(in_files=maps, labels=labels, mask_files=mask)\n"
         "    graph.add_nodes([Node(read, name='extract')])\n"
         "    return graph\n"
     )

@@ -130,7 +130,7 @@ def test_lines_that_were_removed_moved_or_put_in_are_found(small):
     digest = hashlib.sha256(content.encode()).hexdigest()
     forged = b'{"entry":"' + digest.encode() + b'",' + content.encode() + b"\n"
     chain = Chain(one + forged + two + three + four)
-    assert chain.faults == [] and "branches end at" in chain.problems()[0]
+    assert chain.problems() == [] and "branches end at" in chain.unjoined
 
 
 def test_a_changed_ledger_is_not_appended_to(small):
@@ -150,9 +150,11 @@ def test_writing_all_of_it_again_is_found_by_whoever_noted_the_head(small):
     again = Ledger(small.path.with_name("again.ledger.jsonl"))
     again.append(note("first", "second", "never said", "fourth", "fifth"))
     assert again.chain().problems() == []  # no chain can show it by itself
-    for ledger, code in ((small, 0), (again, 1)):
-        args = ["verify", str(ledger.path), "--deposited", head]
-        assert CliRunner().invoke(main, args).exit_code == code
+    asked = [(small, head, 0), (again, head, 1), (small, f" {head[:12].upper()}", 0)]
+    asked += [(small, wrong, 2) for wrong in (head[:11], f"{head}0", "the first head")]
+    for ledger, noted, code in asked:
+        args = ["verify", str(ledger.path), "--deposited", noted]
+        assert CliRunner().invoke(main, args).exit_code == code, noted
 
 
 @pytest.mark.skipif(shutil.which("git") is None, reason="git is not installed")
@@ -176,7 +178,14 @@ def test_a_git_merge_of_two_branches_is_joined_by_the_next_entry(tmp_path):
     git("merge", "-q", "other")
     chain = Ledger(path).sound()
     assert set(chain.heads) == {ours[-1].digest, theirs[-1].digest}
-    assert "the next run or declare joins them" in chain.problems()[0]
+    assert chain.problems() == [] and "the next run or declare joins them" in chain.unjoined
+    said = CliRunner().invoke(main, ["verify", str(path)])
+    assert said.exit_code == 4 and "more than one end, as after a merge" in said.stderr
+    said = CliRunner().invoke(main, ["verify", str(path), "--deposited", "0" * 64])
+    assert said.exit_code == 1 and "was written again" in said.stderr
+    shutil.copyfile(path, tmp_path / "copy.ledger.jsonl")
+    assert Ledger(tmp_path / "copy.ledger.jsonl").append([]) == []  # nothing new joins them too
+    assert CliRunner().invoke(main, ["verify", str(tmp_path / "copy.ledger.jsonl")]).exit_code == 0
     (new,) = Ledger(path).append(note("after"))
     chain = Ledger(path).sound()
     assert chain.problems() == [] and chain.heads == (new.digest,)

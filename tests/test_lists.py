@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import logging
 from pathlib import Path
 
 import pytest
@@ -35,11 +34,7 @@ PLAIN = Procedure(Strongest(6))
 
 
 @pytest.fixture
-def garden(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Garden:
-    monkeypatch.setenv("NO_ET", "1")
-    monkeypatch.chdir(tmp_path)
-    for name in ("nipype.workflow", "nipype.utils", "nipype.interface"):
-        monkeypatch.setattr(logging.getLogger(name), "level", logging.CRITICAL + 1)
+def garden(tmp_path: Path, quiet_engine: None) -> Garden:
     return Garden(tmp_path / "garden")
 
 
@@ -94,7 +89,7 @@ def test_two_gaps_that_move_everybody_by_one(garden: Garden):
     own_runs(garden, None).run(plugin=GuardPlugin(garden.study))  # without gaps all is well
     graph = own_runs(garden, (0, 6))
     graph.base_dir = "again"
-    with pytest.raises(GuardRefused, match="other runs of several subjects") as refused:
+    with pytest.raises(GuardRefused, match=r"other runs of several\ssubjects") as refused:
         graph.run(plugin=GuardPlugin(garden.study))
     assert refused.value.started
 

@@ -3,10 +3,12 @@
 import json
 import re
 import shutil
+from functools import partial
 from pathlib import Path
 
 import nibabel as nib
 import numpy as np
+import planting
 import pytest
 from click.testing import CliRunner
 from scipy.ndimage import gaussian_filter
@@ -16,6 +18,8 @@ from sequester.nodes.likeness import dice, packed, same, unpacked, voxel_set
 from sequester.workflows.cli import main
 from sequester.workflows.guard import GuardRefused
 from sequester.workflows.ledger import Ledger
+from sequester.workflows.looks import look_body
+from sequester.workflows.origins import mask_set
 from sequester.workflows.run import check_study
 
 SHAPE, SUBS = (9, 8, 7), [f"{i:02}" for i in range(1, 8)]
@@ -59,8 +63,7 @@ def refused(root: Path, region: str) -> list:
     return []
 
 
-def save(path: Path, data: np.ndarray, affine: np.ndarray = AFFINE) -> None:
-    nib.save(nib.Nifti1Image(data, affine), path)
+save = partial(planting.save, affine=AFFINE)
 
 
 def plant(root: Path) -> None:
@@ -248,7 +251,7 @@ def test_parts_of_an_atlas_and_what_is_made_of_parts_are_compared_too(ran):
         # A half by itself is like the mask it lies in.
         assert "leak" in {finding.verdict for finding in refused(ran, region)}
     family = BEACON.format(region='atlas = "atlas.nii.gz"') + "each_label = true\n"
-    with pytest.raises(GuardRefused, match=r"made from the data it would be tested\son"):
+    with pytest.raises(GuardRefused, match=r"made from the data it\s+would be tested\s+on"):
         check_study(read_settings(study(ran, family)))
 
 
@@ -397,6 +400,52 @@ def test_an_explanation_does_not_cover_the_very_same_voxels(ran):
     assert {f.verdict for f in refused(ran, 'mask = "beacon.nii"')} == {"leak"}
 
 
+def test_masks_of_a_run_derive_from_what_their_sidecars_say(ran):
+    """Even without a ledger: shared by all, or one for each subject."""
+    masks, name = ran / "results" / "masks", "label-Arbor_desc-without{}_mask"
+    for sub in SUBS:
+        for suffix in ("nii.gz", "json"):
+            here = masks / f"{name.format(sub)}.{suffix}"
+            shutil.copyfile(here, masks / f"sub-{sub}_mask.{suffix}")
+    for file, without in (
+        (f"results/masks/{name.format('03')}.nii.gz", {"03"}),
+        ("results/masks/sub-{sub}_mask.nii.gz", None),
+    ):
+        settings = read_settings(study(ran, BEACON.format(region=f'mask = "{file}"')))
+        of = {path: o.derived_from for o in settings.study.origins for path in o.files}
+        for sub in SUBS if without is None else ("",):
+            units = {unit.sub for unit in of[file.replace("{sub}", sub)]}
+            assert units == set(SUBS) - (without or {sub})
+
+
+def test_a_reason_alone_declares_nothing(fresh):
+    call = ["declare", "--study", str(study(fresh)), "--explained", "as the moss grows"]
+    done = CliRunner().invoke(main, call)
+    assert (done.exit_code, "nothing to declare" in done.stderr) == (2, True)
+    assert not (fresh / "STUDY.ledger.jsonl").exists()
+
+
+def test_a_sphere_is_declared_with_the_voxels_that_a_run_reads(fresh):
+    centre = (AFFINE @ [6, 5, 4, 1])[:3].tolist()
+    run(fresh, BEACON.format(region=f"centre = {centre}, radius = 5"))
+    (stated,) = (
+        entry.body
+        for entry in Ledger(fresh / "STUDY.ledger.jsonl").chain().entries
+        if entry.kind == "declaration" and entry.body.get("voxels")
+    )
+    (read,) = (fresh / "results" / "masks").glob("label-Beacon*_mask.nii.gz")
+    assert stated["voxels"] == [mask_set(read).digest]
+
+
+def test_neither_a_name_nor_the_numbers_of_rows_make_another_look():
+    what = {"roi": "Arbor", "node": "a", "tested": {"units": [0]}, "of": ["Arbor"], "p": 0.05}
+    key = look_body(what, [])["key"]
+    renamed = {"roi": "Brook", "node": "b", "tested": {"units": [3]}, "of": ["Brook"]}
+    for name, other in renamed.items():
+        assert look_body(what | {name: other}, [])["key"] == key, name
+    assert look_body(what | {"p": 0.01}, [])["key"] != key
+
+
 def test_a_mask_declared_as_derived_is_so_wherever_it_is_used(fresh):
     made = np.zeros(SHAPE, np.uint8)
     made[7:, 6:, 5:] = 1
@@ -404,7 +453,7 @@ def test_a_mask_declared_as_derived_is_so_wherever_it_is_used(fresh):
     call = ["declare", str(fresh / "drawn.nii.gz"), "--study", str(study(fresh))]
     call += ["--source", "drawn on the map of 04", "--derived-from", "sub=04,suffix=bold"]
     assert CliRunner().invoke(main, call).exit_code == 0
-    save(fresh / "copy.nii", made[5:, 4:], AFFINE @ np.array(
+    save(fresh / "copy.nii", made[5:, 4:], affine=AFFINE @ np.array(
         [[1, 0, 0, 5], [0, 1, 0, 4], [0, 0, 1, 0], [0, 0, 0, 1]]))  # fmt: skip
     (finding,) = refused(fresh, 'mask = "copy.nii", regrid = true')
     assert (finding.verdict, finding.data_path[0]) == ("leak", "sub-04_glow.nii.gz")
@@ -497,6 +546,20 @@ def test_labels_of_a_family_and_variants_are_one_look_and_regions_together_are_s
     assert run(fresh, both, family)["Arbor"]["looks"] == 2
 
 
+def test_the_shape_check_says_that_a_mask_is_one_of_the_studys_own(fresh):
+    corner = np.zeros(SHAPE, np.uint8)
+    corner[:4, :4, :4] = 1
+    save(fresh / "corner.nii.gz", corner)
+    run(fresh, ARBOR.format(k=20), BEACON.format(region='mask = "corner.nii.gz"'))
+    (mask, *_) = sorted((fresh / "results" / "masks").glob("*desc-without*_mask.nii.gz"))
+    mine = Path(shutil.copyfile(mask, fresh / "found-in-the-hut.nii.gz"))
+    for path, known in ((mine, True), (fresh / "corner.nii.gz", False)):
+        said = CliRunner().invoke(main, ["contour", str(path), str(fresh / "STUDY.toml")])
+        told = "one of the study's own: it has the very voxels of label-Arbor_desc-without"
+        assert said.exit_code == 0, said.output
+        assert (told in " ".join(said.output.split())) == known
+
+
 def test_a_comparison_is_a_look_of_its_own_and_counts_for_its_regions(fresh):
     corner, opposite = np.zeros((2, *SHAPE), np.uint8)
     corner[:2, :2, :2] = opposite[6:, 6:, 5:] = 1
@@ -511,7 +574,7 @@ def test_a_comparison_is_a_look_of_its_own_and_counts_for_its_regions(fresh):
     done = run_study(read_settings(study(fresh, one, other, both)))
     assert {row["roi"]: row["looks"] for row in done.tests} == {"Beacon": 1, "Cinder": 2}
     assert done.comparisons[0]["looks"] == 3  # its own, and each region's
-    assert "Looks at these voxels in these data so far: 3." in done.comparisons[0]["sentence"]
+    assert "in these data so far: 3 (2 of them of one run)." in done.comparisons[0]["sentence"]
     table = (fresh / "results" / "comparisons.tsv").read_text().splitlines()
     assert dict(zip(*(line.split("\t") for line in table), strict=True))["looks"] == "3"
     once = contents(fresh)

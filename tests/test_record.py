@@ -14,12 +14,13 @@ from typing import Any
 import numpy as np
 import prov
 import pytest
+import running
 from nipype import Function, Node, Workflow
+from planting import a_grid, paths_of, plant
 from prov.model import PROV, ProvDocument
 from sequester import GuardPlugin, Procedure, leave_one_subject_out, read_settings, run_study
 from sequester.nodes.errors import InputError
 from sequester.nodes.folds import LeaveOneOut
-from sequester.nodes.images import Geometry, write_map
 from sequester.nodes.interfaces import ChooseMask, Extract, GroupMap, KeepSubjects
 from sequester.nodes.interfaces.contracts import contract
 from sequester.nodes.masks import Strongest, Threshold
@@ -30,9 +31,9 @@ from sequester.workflows import plans
 from sequester.workflows.around import around_folds
 from sequester.workflows.guard import GuardRefused
 from sequester.workflows.record import record_of, write_record
-from sequester.workflows.study import Origin, Row, Study
+from sequester.workflows.study import Origin, Study
 
-GRID = Geometry((5, 5, 5), tuple(map(tuple, np.diag([3.0, 3.0, 3.0, 1.0]).tolist())))
+GRID = a_grid((5, 5, 5))
 FILES = ("record.json", "record.tsv", "record_prov.json")
 NAMESPACE = "urn:sequester:record:"
 PROCEDURE = Procedure(Strongest(9, "mean"))
@@ -43,18 +44,14 @@ pytestmark = pytest.mark.usefixtures("quiet_engine")
 
 def planted(root: Path, n: int) -> Study:
     """n subjects with an effect map each, and an atlas of declared origin."""
-    root.mkdir()
-    rows = []
-    for i in range(n):
-        data = np.random.default_rng(i).normal(0.8, 1, GRID.shape).astype(np.float32)
-        write_map(root / f"sub-{i:03d}.nii", data, GRID)
-        rows.append(Row(f"sub-{i:03d}.nii", None, Unit(sub=f"{i:03d}", suffix="bold")))
-    write_map(root / "atlas.nii", np.random.default_rng(99).random(GRID.shape) < 0.2, GRID)
-    return Study(root, rows, [Origin("an atlas of 1909", ("atlas.nii",))])
-
-
-def maps(study: Study) -> list[str]:
-    return [str(study.root / row.path) for row in study.rows]
+    seeded = [np.random.default_rng(i).normal(0.8, 1, GRID.shape) for i in range(n)]
+    return plant(
+        root,
+        {f"{i:03d}": data.astype(np.float32) for i, data in enumerate(seeded)},
+        GRID,
+        {"atlas": np.random.default_rng(99).random(GRID.shape) < 0.2},
+        [Origin("an atlas of 1909", ("atlas.nii",))],
+    )
 
 
 def labels(study: Study) -> list[str]:
@@ -62,15 +59,10 @@ def labels(study: Study) -> list[str]:
 
 
 def workflow(plan: Workflow | None = None, study: Study | None = None) -> Workflow:
-    made = Workflow("garden", base_dir="work")
-    made.config["execution"] = {
-        "crashdump_dir": ".",
-        "create_report": "false",
-        "remove_unnecessary_outputs": "false",
-    }
+    made = running.workflow("garden", remove_unnecessary_outputs="false")
     if plan is not None and study is not None:
         made.add_nodes([plan])
-        plan.get_node("inputnode").inputs.effects = maps(study)
+        plan.get_node("inputnode").inputs.effects = paths_of(study)
     return made
 
 
@@ -154,7 +146,7 @@ def test_folds_are_named_in_every_plan_that_has_them(tmp_path):
     own = plans.own_masks("cinder", over_runs, people, runs)
     graph = workflow(around, study)
     graph.add_nodes([own])
-    own.get_node("inputnode").inputs.effects = maps(study)
+    own.get_node("inputnode").inputs.effects = paths_of(study)
     guard = GuardPlugin(study, dry=True)
     graph.run(plugin=guard)
     met = [m for m in record_of(guard)["meetings"] if m["kind"] == "extraction"]
@@ -191,12 +183,12 @@ def test_a_list_of_unknown_length_is_recorded_item_by_item(tmp_path):
 
     study = planted(tmp_path / "study", 3)
     made = Node(Function(["in_files", "names"], ["out"], copies), name="copies")
-    made.inputs.in_files, made.inputs.names = maps(study), ["a.nii", "b.nii", "c.nii"]
+    made.inputs.in_files, made.inputs.names = paths_of(study), ["a.nii", "b.nii", "c.nii"]
     graph = workflow()
     graph.add_nodes([made])
     record, _ = recorded(graph, study)
     assert [e["index"] for e in record["elements"]] == [[0], [1], [2]]
-    for element, path in zip(record["elements"], maps(study), strict=True):
+    for element, path in zip(record["elements"], paths_of(study), strict=True):
         assert element["values"] == {"all_but": []}  # which copy is whose, the guard cannot know
         assert element["sha256"] == hashlib.sha256(Path(path).read_bytes()).hexdigest()
 
@@ -208,12 +200,12 @@ def test_a_refused_run_has_a_record_without_digests_and_without_this_machine(tmp
     shutil.copy(study.root / "atlas.nii", elsewhere / "some mask.nii")
     os.utime(elsewhere / "some mask.nii")
     graph = workflow()
-    group = Node(GroupMap(in_files=maps(study)), name="group")
+    group = Node(GroupMap(in_files=paths_of(study)), name="group")
     choose = Node(ChooseMask(rule=Strongest(9)), name="choose")
-    read = Node(Extract(in_files=maps(study), labels=labels(study)), name="extract")
+    read = Node(Extract(in_files=paths_of(study), labels=labels(study)), name="extract")
     graph.connect(group, "out_file", choose, "in_file")
     graph.connect(choose, "mask_file", read, "mask_files")
-    other = Node(Extract(in_files=maps(study), labels=labels(study)), name="other")
+    other = Node(Extract(in_files=paths_of(study), labels=labels(study)), name="other")
     other.inputs.mask_files = [str(elsewhere / "some mask.nii")]
     graph.add_nodes([other])
     with pytest.raises(GuardRefused) as refused:
@@ -236,10 +228,10 @@ def test_who_decided_that_an_element_is_there_and_who_answers_for_it_is_recorded
     study = planted(tmp_path / "study", 4)
     graph = workflow()
     measure = Node(Function(["in_files", "grid"], ["out"], each_mean), name="measure")
-    measure.inputs.in_files, measure.inputs.grid = maps(study), str(study.root / "atlas.nii")
+    measure.inputs.in_files, measure.inputs.grid = paths_of(study), str(study.root / "atlas.nii")
     contract(measure, rules={"out": each("in_files")}, geometry=["grid"])
     keep = Node(
-        KeepSubjects(in_files=maps(study), labels=labels(study), keep=Keep(at_least=-9)), "keep"
+        KeepSubjects(in_files=paths_of(study), labels=labels(study), keep=Keep(at_least=-9)), "keep"
     )
     graph.connect(measure, "out", keep, "measures")
     record, _ = recorded(graph, study)
@@ -388,9 +380,7 @@ rule = { kind = "strongest", k = 9 }
 
 
 def settled(root: Path) -> Path:
-    study = planted(root, 5)
-    lines = ["path\tsub\tsuffix", *(f"{r.path}\t{r.unit.sub}\tbold" for r in study.rows)]
-    (root / "table.tsv").write_text("\n".join(lines) + "\n")
+    planted(root, 5)
     (root / "STUDY.toml").write_text(STUDY)
     return root / "STUDY.toml"
 

@@ -10,10 +10,10 @@ import sys
 import time
 from pathlib import Path
 
-import nibabel as nib
 import numpy as np
 import pytest
 from click.testing import CliRunner
+from planting import files_in, save
 from sequester.workflows.cli import main
 
 STUDY = """\
@@ -43,25 +43,19 @@ def write_study(folder):
     folder.mkdir()
     rng = np.random.default_rng(5)
     lines = ["path\tsub\trun\tsuffix"]
-    affine = np.diag([3.0, 3.0, 3.0, 1.0])
     for i in range(1, 9):
         for run in (1, 2, 3):
             data = rng.standard_normal((10, 10, 10)).astype(np.float32)
             data[2:5, 2:5, 2:5] += 1
             name = f"sub-{i:02d}_run-{run}.nii.gz"
-            nib.save(nib.Nifti1Image(data, affine), folder / name)
+            save(folder / name, data)
             lines.append(f"{name}\t{i:02d}\t{run}\tbold")
     ridge = np.zeros((10, 10, 10), np.uint8)
     ridge[1:8, 1:8, 1:8] = 1
-    nib.save(nib.Nifti1Image(ridge, affine), folder / "ridge.nii.gz")
+    save(folder / "ridge.nii.gz", ridge)
     (folder / "table.tsv").write_text("\n".join(lines) + "\n")
     (folder / "STUDY.toml").write_text(STUDY.format(seed=SEED))
     return folder
-
-
-def content(folder):
-    """Every file of a folder, with its bytes."""
-    return {str(p.relative_to(folder)): p.read_bytes() for p in folder.rglob("*") if p.is_file()}
 
 
 def run(study, *arguments):
@@ -69,7 +63,7 @@ def run(study, *arguments):
         main, ["run", str(study / "STUDY.toml"), "-q", "--no-page", *arguments]
     )
     assert done.exit_code == 0, done.output
-    return content(study / "results")
+    return files_in(study / "results")
 
 
 def rows(files, name):
@@ -82,7 +76,7 @@ def plain(tmp_path_factory):
     study = write_study(tmp_path_factory.mktemp("plain") / "study")
     command = [str(Path(sys.executable).with_name("sequester")), "run", str(study / "STUDY.toml")]
     subprocess.run([*command, "--no-page"], check=True, capture_output=True)
-    return study, content(study / "results")
+    return study, files_in(study / "results")
 
 
 def test_two_runs_give_the_same_bytes(plain):
@@ -181,7 +175,7 @@ def test_killed_at_random_moments_and_started_again(plain, server, tmp_path):
     server.start(study)
     assert server.end() == 0
     span = time.monotonic() - start
-    assert content(results) == expected
+    assert files_in(results) == expected
 
     rng = np.random.default_rng(25)
     killed, left = 0, []
@@ -199,9 +193,9 @@ def test_killed_at_random_moments_and_started_again(plain, server, tmp_path):
         killed += 1
         left.append({p.name for p in study.iterdir()} - inputs - {"results"})
         if results.exists():
-            assert content(results) in ([expected, earlier] if attempt % 2 else [expected])
+            assert files_in(results) in ([expected, earlier] if attempt % 2 else [expected])
         elif attempt % 2:
-            assert content(study / ".results.old") == earlier, "earlier results are lost"
+            assert files_in(study / ".results.old") == earlier, "earlier results are lost"
 
         assert run(study) == expected
         assert {p.name for p in study.iterdir()} == inputs | {"results"}
@@ -238,7 +232,7 @@ def test_a_run_that_fails_puts_earlier_results_back(plain, tmp_path):
     )
     done = CliRunner().invoke(main, ["run", str(study / "STUDY.toml"), "-q"])
     assert "8 of 8 folds found no region" in done.stderr
-    assert content(study / "results") == expected
+    assert files_in(study / "results") == expected
     assert {p.name for p in study.iterdir()} == {p.name for p in plain[0].iterdir()}
 
 
@@ -259,7 +253,7 @@ def test_fault_between_the_two_renames(plain, tmp_path, monkeypatch, fault, exit
     monkeypatch.setattr(Path, "rename", faulty)
     done = CliRunner().invoke(main, ["run", str(study / "STUDY.toml"), "-q"])
     assert done.exit_code == exit_code
-    assert content(study / "results") == expected
+    assert files_in(study / "results") == expected
     assert {p.name for p in study.iterdir()} == {p.name for p in plain[0].iterdir()}
 
 
@@ -278,4 +272,4 @@ def test_two_runs_at_once(plain, server, tmp_path):
     assert first == 0
     assert done.exit_code == 2
     assert f"output folder in use ({study / 'results'}): got another run" in done.stderr
-    assert content(study / "results") == expected
+    assert files_in(study / "results") == expected

@@ -17,6 +17,7 @@ import pytest
 import statsmodels.api as sm
 from hypothesis import given, settings
 from hypothesis import strategies as st
+from planting import a_grid
 from scipy import ndimage, stats
 from sequester.nodes import foldstack, scored
 from sequester.nodes import procedure as procedure_module
@@ -25,7 +26,7 @@ from sequester.nodes.exchange import max_statistic
 from sequester.nodes.flips import random_orders, random_signs
 from sequester.nodes.folds import Given, KFold, LeaveOneOut
 from sequester.nodes.heldout import cross_fitted_result
-from sequester.nodes.images import Geometry, write_map
+from sequester.nodes.images import write_map
 from sequester.nodes.masks import Cluster, PeakSphere, Strongest, Threshold
 from sequester.nodes.models import Groups, Score
 from sequester.nodes.procedure import Prepared, Procedure
@@ -529,7 +530,7 @@ def test_one_sample_results_have_g_and_influence():
 @pytest.mark.parametrize("kind", ["groups", "score"])
 def test_a_plan_of_two_groups_or_a_score_runs_under_the_guard(kind, tmp_path, monkeypatch):
     monkeypatch.chdir(tmp_path)
-    x, geometry = maps(kind), Geometry(SHAPE, tuple(map(tuple, GRID.affine.tolist())))
+    x, geometry = maps(kind), a_grid(SHAPE, GRID.affine)
     rows, made = [], model(kind)
     for (label, told), row in zip(made.of, x, strict=True):
         write_map(tmp_path / f"{label}.nii", row.reshape(SHAPE), geometry)

@@ -8,14 +8,15 @@ from pathlib import Path
 import numpy as np
 import pytest
 from click.testing import CliRunner, Result
-from sequester.nodes.images import Geometry, write_map
+from planting import a_grid
+from sequester.nodes.images import write_map
 from sequester.workflows.cli import main
 from sequester.workflows.guard import GuardPlugin
 from sequester.workflows.scripts import workflow_from
 from sequester.workflows.study import read_table
 
 SHAPE = (4, 4, 3)
-GRID = Geometry(SHAPE, ((2, 0, 0, 0), (0, 2, 0, 0), (0, 0, 2, 0), (0, 0, 0, 1)))
+GRID = a_grid(SHAPE, 2.0)
 LABELS = [f"{i:02d}" for i in range(4)]
 SCRIPT = """
 from pathlib import Path
@@ -108,6 +109,10 @@ def test_a_workflow_in_which_nothing_is_judged_is_not_called_fine(folder, caplog
     assert done.exit_code == 0, done.output
     assert done.stdout.startswith("Nothing was judged, and nothing is shown by that")
     assert "refused" not in done.stdout
+    done = check("mine.py:foreign", "--study", "table.tsv", "--must-judge")
+    assert done.exit_code == 1 and "Nothing was judged" in done.stderr and done.stdout == ""
+    fine = ("mine.py:given", "--study", "table.tsv", "--origins", "origins.toml", "--must-judge")
+    assert check(*fine).exit_code == 0
 
     workflow_from("mine.py:foreign").run(plugin=GuardPlugin(read_table("table.tsv")))
     assert "Nothing was judged" in caplog.text

@@ -11,7 +11,6 @@ made: each that is inside the region is a leak, and must be caught; each other m
 
 from __future__ import annotations
 
-import logging
 import os
 import shutil
 import tempfile
@@ -35,6 +34,8 @@ from carrying import (
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 from nipype.pipeline.engine.utils import evaluate_connect_function
+from planting import paths_of
+from running import silence
 from sequester.workflows.ancestry import node_name
 from sequester.workflows.judge import judge
 
@@ -50,9 +51,7 @@ def seen() -> Counter[str]:
 @pytest.fixture(scope="module", autouse=True)
 def _quiet() -> Any:
     with pytest.MonkeyPatch.context() as patch:
-        patch.setenv("NO_ET", "1")  # the engine would ask the network for its latest version
-        for name in ("nipype.workflow", "nipype.utils", "nipype.interface"):
-            patch.setattr(logging.getLogger(name), "level", logging.CRITICAL + 1)
+        silence(patch)
         yield
 
 
@@ -81,8 +80,7 @@ def faults_of(
 ) -> list[str]:
     """Draw a workflow, run it, and compare what was said with what was made."""
     study = carried_study(folder / "study")
-    files = [str(study.root / row.path) for row in study.rows]
-    drawn = Drawn(rng, files, precise=precise, steps=steps)
+    drawn = Drawn(rng, paths_of(study), precise=precise, steps=steps)
     drawn.workflow.base_dir = str(folder / "work")
     watch = WatchPlugin(study, run=True)
     drawn.workflow.run(plugin=watch)

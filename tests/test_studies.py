@@ -13,6 +13,7 @@ from pathlib import Path
 import nibabel as nib
 import numpy as np
 import pytest
+from planting import files_in, save
 from scipy import stats
 from sequester import read_settings, run_study
 from sequester.nodes.errors import InputError
@@ -39,11 +40,6 @@ def affine(shift: float = 0.0, flip: bool = False) -> np.ndarray:
 def coordinates(grid: np.ndarray) -> np.ndarray:
     index = np.stack(np.meshgrid(*map(np.arange, SHAPE), indexing="ij"), axis=-1)
     return index @ grid[:3, :3].T + grid[:3, 3]
-
-
-def save(path: Path, data: np.ndarray, grid: np.ndarray) -> None:
-    path.parent.mkdir(parents=True, exist_ok=True)
-    nib.save(nib.Nifti1Image(data, grid), path)
 
 
 def plant(root: Path, *, own_grids: bool = False) -> Path:
@@ -94,6 +90,9 @@ def wild(tmp_path_factory):
 
 
 def write(folder: Path, text: str, name: str = "STUDY") -> Path:
+    for other in folder.glob("*.ledger.jsonl"):  # the studies of these tests begin anew
+        if other.name != f"{name}.ledger.jsonl":
+            other.unlink()
     path = folder / f"{name}.toml"
     path.write_text(HEAD + text)
     return path
@@ -348,9 +347,27 @@ def test_certificate_that_does_not_hold_is_refused_with_the_numbers(two_contrast
 
 
 @pytest.mark.parametrize(
+    ("tested", "chosen", "told"),
+    [
+        ('contrast = "glow", run = "2"', 'run = ["1", "3"]', "was not chosen on exactly these"),
+        ('contrast = "glow", run = "2"', 'contrast = "dim", run = "1"', "not chosen on exactly"),
+        ('contrast = "glow"', 'contrast = "dim", run = ["1", "2"]', "not chosen on exactly these"),
+    ],
+)
+def test_certificate_of_other_runs_makes_nothing_harmless(two_contrasts, tested, chosen, told):
+    """It would make a localizer, which is refused for several subjects, one of the population."""
+    text = CERTIFIED.replace('choose_on = { contrast = "dim" }', f"choose_on = {{ {chosen} }}")
+    text = text.replace('contrast = "glow"', tested, 1)
+    assert told in refused(two_contrasts, text, "sum")
+
+
+@pytest.mark.parametrize(
     ("old", "new", "told"),
     [
         ("[0.2, 1]]", "[0.3, 1]]", "between is no covariance.*symmetric"),
+        ("[[1, 0.2], [0.2, 1]]", "[[0, 0], [0, 0]]", "between is no covariance.*not all zero"),
+        ("[[1, 0.2], [0.2, 1]]", "[[inf, 0], [0, 1]]", "between is no covariance"),
+        ("{ amber = 1, teal = 1 }", "{}", "a contrast without weights .*sum.toml, line"),
         ("[[1, 0.2], [0.2, 1]]", "[1, 1]", "between is no covariance.*2 x 2 numbers"),
         ("teal = -1", "rose = -1", "unknown key 'rose'.*one of amber, teal"),
         ("design.tsv", "nowhere.tsv", "no such design"),
@@ -487,17 +504,13 @@ EVERY = HERE + "".join(
 )  # fmt: skip
 
 
-def content(folder: Path) -> dict[str, bytes]:
-    return {str(p.relative_to(folder)): p.read_bytes() for p in folder.rglob("*") if p.is_file()}
-
-
 def test_every_plan_gives_the_same_bytes_on_both_engines_cold_and_warm(garden, tmp_path):
     work = tmp_path / "work"
-    first = content(ran(garden, EVERY, "every"))
-    assert content(ran(garden, EVERY, "every", processes=2, work=work)) == first
-    assert content(ran(garden, EVERY, "every", work=work)) == first, "on a warm cache"
+    first = files_in(ran(garden, EVERY, "every"))
+    assert files_in(ran(garden, EVERY, "every", processes=2, work=work)) == first
+    assert files_in(ran(garden, EVERY, "every", work=work)) == first, "on a warm cache"
     shutil.rmtree(work)
-    assert content(ran(garden, EVERY, "every", work=work)) == first, "after deleting the folder"
+    assert files_in(ran(garden, EVERY, "every", work=work)) == first, "after deleting the folder"
 
 
 def test_where_masks_lie(garden):

@@ -14,9 +14,11 @@ import numpy as np
 import pytest
 import sequester
 from click.testing import CliRunner
-from nipype import DataSink, Function, MapNode, Node, SelectFiles, Workflow
+from nipype import DataSink, MapNode, Node, SelectFiles, Workflow
+from planting import a_grid, plant
+from running import called, workflow
 from sequester.nodes.errors import InputError, Refused
-from sequester.nodes.images import Geometry, write_map
+from sequester.nodes.images import write_map
 from sequester.nodes.interfaces import Extract
 from sequester.nodes.touch import Unit
 from sequester.workflows.cli import main
@@ -24,7 +26,7 @@ from sequester.workflows.guard import GuardPlugin, GuardRefused
 from sequester.workflows.study import Origin, Row, Study, read_table
 
 SHAPE = (4, 4, 3)
-GRID = Geometry(SHAPE, ((2, 0, 0, 0), (0, 2, 0, 0), (0, 0, 2, 0), (0, 0, 0, 1)))
+GRID = a_grid(SHAPE, 2.0)
 LABELS = ["01", "02", "03", "04", "05"]
 CHART = Origin("a chart of moss", ("moss.nii",))
 SAME = "def same(x):\n    return x\n"
@@ -38,33 +40,10 @@ def effects(seed: int) -> Any:
 
 
 @pytest.fixture
-def maps(tmp_path: Path) -> list[str]:
-    lines = ["path\tsub\tsuffix"]
-    for i, label in enumerate(LABELS):
-        write_map(tmp_path / f"{label}.nii", effects(i), GRID)
-        lines.append(f"{label}.nii\t{label}\tbold")
-    write_map(tmp_path / "moss.nii", np.arange(48).reshape(SHAPE) < 9, GRID)
-    (tmp_path / "table.tsv").write_text("\n".join(lines) + "\n")
-    return [str(tmp_path / f"{label}.nii") for label in LABELS]
-
-
-@pytest.fixture
-def study(maps: list[str], tmp_path: Path) -> Study:
-    return read_table(tmp_path / "table.tsv", origins=[CHART])
-
-
-def workflow() -> Workflow:
-    made = Workflow("w", base_dir=str(Path("work").absolute()))
-    made.config["execution"] = {"crashdump_dir": str(Path("work").absolute())}
-    made.config["execution"]["create_report"] = "false"
-    return made
-
-
-def called(body: str, **inputs: Any) -> Function:
-    made = Function(input_names=list(inputs), output_names=["out"])
-    made.inputs.function_str = body
-    made.inputs.trait_set(**inputs)
-    return made
+def study(tmp_path: Path) -> Study:
+    maps = {label: effects(i) for i, label in enumerate(LABELS)}
+    moss = np.arange(48).reshape(SHAPE) < 9
+    return plant(tmp_path, maps, GRID, {"moss": moss}, [CHART], prefix="")
 
 
 def extraction(maps: list[str], mask: str) -> Workflow:
