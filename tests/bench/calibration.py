@@ -718,6 +718,19 @@ def _heads(kinds: Iterable[str]) -> list[str]:
     return [f"{kind} ({INTERVAL_KINDS[kind]})" for kind in kinds]
 
 
+def _given(lines: list[dict[str, Any]]) -> str:
+    """What the coverage says of data sets in which a fold found nothing."""
+    if any(line.get("given") for line in lines):
+        return (
+            "A result with an empty fold has no interval: the coverage is of those that are given."
+        )
+    return (
+        "A result with an empty fold has no interval any more. When these data sets were made it "
+        "still had one, which is counted here; with an effect hardly any has an empty fold, and "
+        "without one up to an eighth of the data sets of a cell."
+    )
+
+
 def _plan_row(line: dict[str, Any], kinds: Iterable[str]) -> list[str]:
     off = [
         f"{mean / error:+.1f}" if error else "0"
@@ -784,7 +797,7 @@ def table(results: dict[str, Any]) -> str:
             "the mean true effect over the masks that were used. Exact and conservative intervals "
             f"must reach {_number(LEAST_COVERAGE, 2)} (within 2 Monte Carlo errors where there are "
             f"fewer than {FEW:,} data sets: the jackknife has one data set in 4, 8 or 20, the "
-            "interval by flips one in 40, and only all cells together).",
+            "interval by flips one in 40, and only all cells together). " + _given(right),
             f"{kept} of {len(right)} cells keep all of it. All cells of a plan together:",
             _rows(["plan", "cells", "rate at .05", *_heads(INTERVAL_KINDS)], short),
             "Each cell:",
