@@ -18,6 +18,7 @@ from sequester.workflows.digests import fingerprint
 from sequester.workflows.guard import GuardRefused
 from sequester.workflows.ledger import Chain, Ledger, Shelf, shelf_of
 from sequester.workflows.origins import declare
+from sequester.workflows.regions import Given, MaskFile
 from sequester.workflows.run import check_study
 
 OTHER = HEAD.replace('table.tsv"', 'table.tsv"\noutput = "others"')
@@ -160,25 +161,91 @@ def second(root: Path, label: str = "{}", same: int = 0) -> str:
     return OTHER.replace('"table.tsv"', '"second.tsv"')
 
 
-def test_other_data_of_the_same_labels_are_other_data(garden: Path):
+def near(of: float) -> str:
+    """A sphere, so far (mm) from where most was found."""
+    return BROOK.replace("REGION", f"centre = [{-3 + of:g}, -1, 0], radius = 5")
+
+
+def test_a_look_at_other_maps_of_the_same_labels_is_none_at_these(garden: Path):
     head = second(garden)
-    assert refused(garden, head + HUT) == ""
-    x, y, z = -3, -1, 0  # where most was found
-    near = BROOK.replace("REGION", f"centre = [{x}, {y}, {z}], radius = 5")
-    assert refused(garden, head + near) == ""
-    made = ran(garden, head + HUT)
+    assert refused(garden, head + near(of=9)) == ""  # like no mask
+    made = ran(garden, head + near(of=9))
     assert (made["looks"], made["history"]) == (1, None)
-    # Whose it is can be read all the same.
-    record = json.loads((garden / "others" / "record.json").read_text())
-    said = {origin for one in record["meetings"] for origin in one["origins"]}
-    (told,) = (one for one in said if one.startswith("a map in the hut (the same voxels as label-"))
-    assert told.endswith("in STUDY.ledger.jsonl, chosen on data that are not in this table)")
     # Nor do they count for the first study, whose own looks do.
     assert ran(garden, HEAD + ARBOR.replace("k = 20", "k = 25"), "STUDY.toml")["looks"] == 2
 
 
+@pytest.mark.parametrize(
+    ("roi", "how"),
+    [
+        (HUT, r"its overlap \(Dice\) is 1.00 with"),
+        (
+            BROOK.replace("REGION", 'mask = "less.nii.gz"'),
+            r"its overlap \(Dice\) is 0\.[89]\d with",
+        ),
+        (near(of=0), "its centre is"),
+    ],
+    ids=["the same", "alike", "near"],
+)
+def test_a_mask_of_other_maps_of_the_same_labels_is_in_doubt_until_explained(
+    garden: Path, roi: str, how: str
+):
+    # They may be other people, or the very same data smoothed anew.
+    head, less = second(garden), arbor(garden)
+    less[tuple(np.argwhere(less)[0])] = False
+    save(garden / "less.nii.gz", less.astype("u1"))
+    told = refused(garden, head + roi)
+    assert "unproven: garden.Brook.extract" in told
+    assert "leak" not in told
+    assert "found on maps that are not in this table, of subjects with the same labels" in told
+    assert re.search(how + r" .*, which a run recorded in entry \d+ of STUDY.ledger.jsonl", told)
+    assert "if these are other people or new data, say so: sequester declare" in told
+    settings = read_settings(garden / "COPY.toml")
+    others = [one for one in (HUT, near(of=0)) if one != roi]
+    region = settings.rois[0].region
+    assert isinstance(region, Given)
+    declare(settings, region, "gardeners of another town")
+    assert refused(garden, head + roi) == ""
+    made = ran(garden, head + roi)
+    assert made["looks"] == 1
+    assert '"gardeners of another town"' in made["history"]
+    # It speaks of this region alone.
+    assert all("unproven: garden.Brook" in refused(garden, head + one) for one in others)
+
+
+def test_whose_a_mask_of_other_maps_is_can_be_read_when_it_is_explained(garden: Path):
+    (garden / "COPY.toml").write_text(second(garden) + HUT)
+    settings = read_settings(garden / "COPY.toml")
+    declare(settings, MaskFile("a map in the hut", (), "", "hut.nii.gz"), "other gardeners")
+    run_study(settings)
+    record = json.loads((garden / "others" / "record.json").read_text())
+    said = {origin for one in record["meetings"] for origin in one["origins"]}
+    (told,) = (one for one in said if one.startswith("a map in the hut (the same voxels as label-"))
+    assert told.endswith("in STUDY.ledger.jsonl, chosen on data that are not in this table)")
+
+
+def test_that_a_mask_is_one_of_these_data_clears_no_doubt_of_others(garden: Path):
+    head = second(garden) + '[data]\nselect = { sub = ["04", "05", "06", "07"] }\n'
+    entries = [
+        {"kind": one.kind, **one.body}
+        for one in Ledger(garden / "STUDY.ledger.jsonl").sound().entries
+    ]
+    own = [one for one in entries if one["kind"] in ("units", "artefact")]
+    own[0]["id"] = own[1]["of"] = "these"
+    for mask in own[1]["masks"]:  # as if chosen on 01 to 03 of the study's own maps
+        mask["only"] = [0, 1, 2]
+    Ledger(garden / "COPY.ledger.jsonl").append(own)
+    told = refused(garden, head + HUT)
+    assert "leak" not in told
+    assert "found on maps that are not in this table" in told
+    (garden / "STUDY.ledger.jsonl").unlink()
+    assert refused(garden, head + HUT) == ""
+
+
 def test_what_a_mask_of_other_data_was_made_from_is_theirs(garden: Path):
-    head = second(garden)
+    head, far = second(garden), np.zeros(SHAPE, "u1")
+    far[6:8, 5:7, 4:6] = 1
+    save(garden / "hut.nii.gz", far)
     stated = HUT.replace('origin = "a map', 'derived_from = [{ suffix = "bold" }], origin = "a map')
     (garden / "STUDY.toml").write_text(HEAD + ARBOR + stated)
     declare(read_settings(garden / "STUDY.toml"), None)

@@ -18,6 +18,7 @@ from __future__ import annotations
 import hashlib
 import json
 import os
+import re
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
@@ -27,7 +28,7 @@ from typing import Any
 
 from filelock import FileLock, Timeout
 
-from ..nodes.errors import InputError
+from ..nodes.errors import InputError, SequesterError
 
 SUFFIX = ".ledger.jsonl"
 DECLARATION, UNITS, ARTEFACT = "declaration", "units", "artefact"
@@ -47,6 +48,37 @@ def ledger_path(study_toml: Path) -> Path:
     'garden/STUDY.ledger.jsonl'
     """
     return study_toml.with_name(f"{study_toml.stem}{SUFFIX}")
+
+
+class Unjoined(SequesterError):
+    """Branches of a ledger were merged, and nothing has been written since to join them."""
+
+    exit_code = 4
+
+
+def deposited_digest(text: str) -> str:
+    """A digest that was noted, as ledgers have it.
+
+    Raises
+    ------
+    InputError
+        When it is none.
+
+    Examples
+    --------
+    >>> deposited_digest(" 0123456789ABcd ")
+    '0123456789abcd'
+    """
+    made = text.strip().lower()
+    if not re.fullmatch(rf"[0-9a-f]{{{_SHORTEST},{_DIGITS}}}", made):
+        raise InputError(
+            "no digest",
+            where="--deposited",
+            expected=f"a head as verify prints it: {_DIGITS} hexadecimal digits, or the first "
+            f"{_SHORTEST} of them or more",
+            got=repr(text),
+        )
+    return made
 
 
 @dataclass(frozen=True)
@@ -143,8 +175,16 @@ class Chain:
         """The entries of a kind, in the order of the file."""
         return [entry for entry in self.entries if entry.kind == kind]
 
+    @property
+    def unjoined(self) -> str:
+        """That branches which were merged wait to be joined, which is no fault; "" if none do."""
+        if len(self.heads) < 2 or self.faults:
+            return ""
+        ends = " and ".join(head[:_SHORTEST] for head in self.heads)
+        return f"branches end at {ends}: the next run or declare joins them"
+
     def problems(self, deposited: str = "") -> list[str]:
-        """Everything that is wrong: faults, branches that nobody joined, a head that is gone.
+        """Everything that is wrong: faults, and a head that is gone.
 
         Parameters
         ----------
@@ -152,20 +192,95 @@ class Chain:
             The digest (or its first 12 digits or more) of a head that was noted earlier.
         """
         found = list(self.faults)
-        if len(self.heads) > 1 and not found:
-            ends = " and ".join(head[:12] for head in self.heads)
-            found.append(f"branches end at {ends}: the next run or declare joins them")
-        if deposited and not any(
-            len(deposited) >= _SHORTEST and entry.digest.startswith(deposited)
-            for entry in self.entries
-        ):
+        noted = deposited_digest(deposited) if deposited else ""
+        if noted and not any(entry.digest.startswith(noted) for entry in self.entries):
             found.append(f"no entry {deposited}: what was there then was written again")
         return found
+
+    def __contains__(self, entry: Entry) -> bool:
+        return entry.digest in self._number
 
     def precedes(self, one: Entry, other: Entry) -> bool:
         """Whether one entry was in the ledger when the other was written."""
         at = self._number[one.digest]
         return bool(self._before[self._number[other.digest]] >> at & 1)
+
+
+class Shelf:
+    """A ledger with those that lie beside it: another study file's, a copy's, a script's.
+
+    Data of one folder may be looked at by any of them. Within a ledger the order of entries is
+    that of its chain; between two of them only the clock says what came first, and what it leaves
+    open did not. Entries that two ledgers share, one being a copy of the other, count once.
+
+    Parameters
+    ----------
+    own : Chain
+    beside : mapping of str to Chain
+        By the names of their files.
+
+    Attributes
+    ----------
+    entries : list of Entry
+        The own ones first.
+    """
+
+    def __init__(self, own: Chain, beside: Mapping[str, Chain] | None = None) -> None:
+        self.own, self._chains = own, {"": own, **(beside or {})}
+        of_digest: dict[str, Entry] = {}
+        self._name: dict[str, str] = {}
+        for name, chain in self._chains.items():
+            for entry in chain.entries:
+                of_digest.setdefault(entry.digest, entry)
+                self._name.setdefault(entry.digest, name)
+        self.entries = list(of_digest.values())
+
+    @property
+    def beside(self) -> tuple[str, ...]:
+        """The names of the ledgers beside the own one."""
+        return tuple(self._chains)[1:]
+
+    def of_kind(self, kind: str) -> list[Entry]:
+        """The entries of a kind."""
+        return [entry for entry in self.entries if entry.kind == kind]
+
+    def name_of(self, entry: Entry) -> str:
+        """The ledger beside the own one that an entry is in; "" for the own."""
+        return self._name[entry.digest]
+
+    def precedes(self, one: Entry, other: Entry) -> bool:
+        """Whether one entry was there when the other was written, for all that can be known."""
+        chain = self._of_both(one, other)
+        return one.time < other.time if chain is None else chain.precedes(one, other)
+
+    def may_know(self, one: Entry, other: Entry) -> bool:
+        """Whether the other entry may have been written with the one at hand."""
+        if self._of_both(one, other) is None:
+            return not self.precedes(other, one)
+        return self.precedes(one, other)
+
+    def _of_both(self, one: Entry, other: Entry) -> Chain | None:
+        return next((c for c in self._chains.values() if one in c and other in c), None)
+
+
+def shelf_of(path: Path, own: Chain) -> Shelf:
+    """A ledger with those that lie beside it in its folder.
+
+    Parameters
+    ----------
+    path : Path
+        Where the own ledger lies; it need not exist.
+    own : Chain
+
+    Raises
+    ------
+    InputError
+        When one of them was changed or cannot be read: its looks would be counted wrongly.
+    """
+    found = sorted(one for one in path.absolute().parent.glob(f"*{SUFFIX}") if one.is_file())
+    # What begins with a dot is a lock, or what a system keeps of a file on a foreign disk.
+    others = [one for one in found if one.name != path.name and not one.name.startswith(".")]
+    return Shelf(own, {one.name: Ledger(one).sound(beside=path.name) for one in others})
 
 
 def _parsed(line: bytes, number: int) -> Entry | str:
@@ -231,8 +346,13 @@ class Ledger:
             raise self._unusable(error) from error
         return self._chain
 
-    def sound(self) -> Chain:
+    def sound(self, beside: str = "") -> Chain:
         """The file as it is now.
+
+        Parameters
+        ----------
+        beside : str
+            The ledger that it lies beside, when it is not the study's own.
 
         Raises
         ------
@@ -241,13 +361,16 @@ class Ledger:
         """
         chain = self.chain()
         if chain.faults:
+            moved = f", or move it out of the folder of {beside}, whose looks it tells of"
             raise InputError(
-                "the ledger was changed",
+                "a ledger beside the study's own was changed"
+                if beside
+                else "the ledger was changed",
                 where=str(self.path),
                 expected="the lines as sequester wrote them, and in their order",
                 got=chain.faults[0]
                 + f" (and {len(chain.faults) - 1} more)" * (len(chain.faults) > 1),
-                remedy="take it back from a copy or a commit",
+                remedy=f"take it back from a copy or a commit{moved if beside else ''}",
             )
         return chain
 
@@ -288,7 +411,7 @@ class Ledger:
         with self._locked():
             chain = self.sound()
             bodies = make(chain)
-            if not bodies:
+            if not bodies and len(chain.heads) < 2:
                 return []
             if len(chain.heads) > 1:
                 bodies = [{"kind": MERGE}, *bodies]

@@ -6,7 +6,10 @@ the masks that runs of this study recorded before it was declared:
 - the same voxels: it derives from what that mask was chosen on, and the guard judges it so;
 - alike (`DICE`, `CONTAINED`, or a centre within one FWHM of a recorded centre or peak), and that
   mask was chosen on data that are tested here: unproven, until somebody explains it. The FWHM is
-  that of the tested maps' residuals, unless the study file states one.
+  that of the tested maps' residuals, unless the study file states one;
+- the same or alike, and that mask was chosen on maps that are not in this table, of subjects with
+  the same labels, in a ledger beside: unproven too. They may be other people, or these data made
+  anew.
 
 Masks that were recorded after the declaration do not count: a region that was stated first and
 then found again has succeeded.
@@ -44,8 +47,19 @@ from ..nodes.regrid import nearest_label
 from ..nodes.smoothness import fwhm_of_stack
 from ..nodes.space import Grid
 from ..nodes.touch import ENTITIES, Unit, UnitTable
-from .digests import digest, digest_text
-from .ledger import ARTEFACT, DECLARATION, UNITS, WAIVER, Chain, Entry, Ledger
+from .digests import digest, digest_text, fingerprint
+from .findings import undeclared
+from .ledger import (
+    ARTEFACT,
+    DECLARATION,
+    UNITS,
+    WAIVER,
+    Chain,
+    Entry,
+    Ledger,
+    Shelf,
+    shelf_of,
+)
 from .regions import Ball, Combined, Eroded, Given, Labels, MaskFile, Mirrored, Region
 from .rois import Roi
 from .selection import Selection
@@ -56,7 +70,7 @@ DICE, CONTAINED = 0.8, 0.9
 FWHM_MM = 8.0  # where nothing says how smooth the maps are
 _FROM = 40  # maps that are read to see it
 _FEWEST = 4
-EXPLAINED = "explained"
+EXPLAINED, LEFT_OUT = "explained", "left_out"
 
 
 @dataclass(frozen=True)
@@ -78,6 +92,12 @@ class Selected:
     derived_from : tuple of Unit
     call : str
         What follows ``sequester declare`` to name it; "" for what is made of several parts.
+    voxels : tuple of str
+        Digests of the voxels that are read: of one region, or of each label that is one.
+    parts : tuple of str
+        Of labels that are read together, the digests of each.
+    origins : tuple of Origin
+        Of each mask, sphere or atlas that it is made of, what its source speaks of.
     """
 
     what: str
@@ -87,6 +107,14 @@ class Selected:
     labels: tuple[int, ...] = ()
     derived_from: tuple[Unit, ...] = ()
     call: str = ""
+    voxels: tuple[str, ...] = ()
+    parts: tuple[str, ...] = ()
+    origins: tuple[Origin, ...] = ()
+
+    @property
+    def key(self) -> str:
+        """What it selects: of an atlas, which labels too."""
+        return " ".join((self.selects, *map(str, self.labels)))
 
 
 Named = tuple[str, Geometry]
@@ -101,40 +129,53 @@ def given_regions(settings: Settings, roi: Roi) -> Iterator[Found]:
 
     Where each subject has a file of their own, one for each subject.
     """
-    seen: set[tuple[str, ...]] = set()
+    known: dict[tuple[str, ...], Found] = {}
     for sub, rows in roi.tested.subjects if roi.region.of_each else roi.tested.subjects[:1]:
         path = settings.root / rows[0].path
         like = (str(path), geometry_of(open_image(path)))
+        made_of: dict[Origin, None] = {}
         for leaf in roi.region.leaves():
-            key = tuple(name.replace("{sub}", sub) for name in leaf.files) or (leaf.describe(),)
-            if key not in seen:
-                seen.add(key)
-                yield _of_leaf(leaf, settings.root, sub, like)
+            key = (leaf.describe(), *(name.replace("{sub}", sub) for name in leaf.files))
+            if key not in known:
+                known[key] = _of_leaf(leaf, settings.root, sub, like)
+                yield known[key]
+            made_of.update(dict.fromkeys(known[key][0].origins))
         if list(roi.region.parts()):
             made = voxel_set(_mask(roi.region, settings.root, sub, like), like[1].affine)
-            sources = tuple(dict.fromkeys(leaf.origin for leaf in roi.region.leaves()))
-            yield Selected(roi.region.describe(), sources, (), made.digest), [made]
+            sources = tuple(dict.fromkeys(origin.source for origin in made_of))
+            head = (roi.region.describe(), sources, (), made.digest)
+            yield Selected(*head, voxels=(made.digest,), origins=tuple(made_of)), [made]
 
 
 def _of_leaf(leaf: Given, root: Path, sub: str, like: Named) -> Found:
     files = tuple(name.replace("{sub}", sub) for name in leaf.files)
     derived = tuple(replace(u, sub=sub) if u.sub == "{sub}" else u for u in leaf.derived_from)
     head = (leaf.describe().replace("SUB", sub) if files else leaf.describe(), (leaf.origin,))
+    origin = Origin(leaf.origin, files[:1])
     if isinstance(leaf, Labels):
         table = read_label_table(root / files[1]) if len(files) > 1 else ()
         numbers = numbers_of(leaf.labels, table, str(root / files[-1]))
-        selects, sets = atlas_sets(root / files[0], numbers)
+        each = labels_in(root / files[0])
+        read = _together(root / files[0], numbers) if numbers else [*each.values()]
+        voxels = tuple(one.digest for one in read)
+        single = [each[number] for number in numbers]
+        parts = tuple(one.digest for one in single)
         named = " ".join(f"--label {number}" for number in numbers) or "--all-labels"
         call = f"{shlex.quote(files[0])} {named}"
-        return Selected(*head, files, selects, numbers, derived, call), sets
+        selects = _atlas_digest(each)
+        sets = [*read, *(single if len(single) > 1 else ())]
+        of = (replace(origin, labels=numbers),)
+        return Selected(*head, files, selects, numbers, derived, call, voxels, parts, of), sets
     if isinstance(leaf, Ball):
         centre = " ".join(f"{x:g}" for x in leaf.centre)
         call = f"--centre {centre} --radius {leaf.radius:g}"
         made = voxel_set(_mask(leaf, root, sub, like), like[1].affine)
-        selects = sphere_digest(leaf.centre, leaf.radius)
-        return Selected(*head, files, selects, (), derived, call), [made]
+        selects, here = sphere_digest(leaf.centre, leaf.radius), (made.digest,)
+        of = (replace(origin, sphere=(*leaf.centre, leaf.radius)),)
+        return Selected(*head, files, selects, (), derived, call, here, origins=of), [made]
     made = mask_set(root / files[0])
-    return Selected(*head, files, made.digest, (), derived, shlex.quote(files[0])), [made]
+    call, here = shlex.quote(files[0]), (made.digest,)
+    return Selected(*head, files, made.digest, (), derived, call, here, origins=(origin,)), [made]
 
 
 def mask_set(path: Path) -> VoxelSet:
@@ -155,6 +196,22 @@ def atlas_sets(path: Path, numbers: Sequence[int]) -> tuple[str, list[VoxelSet]]
     numbers : sequence of int
         Together; none: each label of the image.
     """
+    each = labels_in(path)
+    return _atlas_digest(each), _together(path, numbers) if numbers else [*each.values()]
+
+
+def _atlas_digest(each: Mapping[int, VoxelSet]) -> str:
+    return digest_text("".join(f"{number} {voxels.digest}\n" for number, voxels in each.items()))
+
+
+def _together(path: Path, numbers: Sequence[int]) -> list[VoxelSet]:
+    """The voxels of some labels together."""
+    volume, geometry = read_labels(path)
+    return [voxel_set(labelled(volume, numbers, str(path)), geometry.affine)]
+
+
+def labels_in(path: Path) -> dict[int, VoxelSet]:
+    """The voxels of each label of a label image, by number, ascending."""
     volume, geometry = read_labels(path)
     each = {}
     for number in np.unique(volume[volume != 0]):
@@ -165,11 +222,27 @@ def atlas_sets(path: Path, numbers: Sequence[int]) -> tuple[str, list[VoxelSet]]
         each[int(number)] = voxel_set(volume[box] == number, geometry.affine @ shift)
     if not each:
         raise InputError("label image without labels", where=str(path), got="0 at every voxel")
-    text = "".join(f"{number} {each[number].digest}\n" for number in sorted(each))
-    if numbers:
-        mask = labelled(volume, numbers, str(path))
-        return digest_text(text), [voxel_set(mask, geometry.affine)]
-    return digest_text(text), [each[number] for number in sorted(each)]
+    return each
+
+
+def by_label(chosen: Selected, path: Path) -> Iterator[Found]:
+    """A family of labels, each a region of its own.
+
+    Parameters
+    ----------
+    chosen : Selected
+        Some labels of an atlas, or all.
+    path : Path
+        The atlas.
+    """
+    selects, _ = atlas_sets(path, ())
+    for number, voxels in labels_in(path).items():
+        if not chosen.labels or number in chosen.labels:
+            what, call = f"label {number} of {chosen.files[0]}", shlex.quote(chosen.files[0])
+            one = replace(chosen, what=what, selects=selects, labels=(number,))
+            of = tuple(replace(origin, labels=(number,)) for origin in chosen.origins)
+            one = replace(one, voxels=(voxels.digest,), parts=(), origins=of)
+            yield replace(one, call=f"{call} --label {number}"), [voxels]
 
 
 def sphere_digest(centre: Iterable[float], radius: float) -> str:
@@ -209,11 +282,27 @@ def unit_record(unit: Unit) -> dict[str, str]:
     return {f.name: value for f in fields(unit) if (value := getattr(unit, f.name))}
 
 
-def units_body(table: UnitTable) -> dict[str, Any]:
-    """The entry that numbers a study's units; others refer to it by its ``id``."""
-    listed = [unit_record(unit) for unit in table.units]
+def units_body(study: Study) -> dict[str, Any]:
+    """The entry that numbers a study's units and says which maps they are in.
+
+    Others refer to it by its ``id``.
+    """
+    listed, maps = [unit_record(unit) for unit in study.table.units], _maps_of(study)
     text = "\n".join(" ".join(f"{k}={v}" for k, v in one.items()) for one in listed)
-    return {"kind": UNITS, "id": digest_text(text)[:16], "units": listed}
+    text += "".join(f"\n{' '.join(of_unit)}" for of_unit in maps)
+    return {"kind": UNITS, "id": digest_text(text)[:16], "units": listed, "maps": maps}
+
+
+def _maps_of(study: Study) -> list[list[str]]:
+    """Per unit that was acquired, the fingerprints of its maps that are there."""
+    found: dict[Unit, set[str]] = {row.unit: set() for row in study.rows}
+    for row in study.rows:
+        path = Path(study.full(row.path))
+        path = path.with_suffix(".img") if path.suffix == ".hdr" else path
+        if path.is_file():
+            volume = "" if row.volume is None else f" {row.volume}"
+            found[row.unit].add(f"{fingerprint(path)[:12]}{volume}")
+    return [sorted(marks) for marks in found.values()]
 
 
 def set_record(bits: int, table: UnitTable) -> dict[str, list[int]]:
@@ -233,6 +322,9 @@ class Made:
     entry : Entry
     chosen_on : int
         The set of units it was chosen on, in the study's table as it is now.
+    namesakes : int
+        Where it was chosen on maps that are not in the table: the set of units in it that have
+        the same labels.
     points : tuple of (x, y, z)
         Its centre, and the peak of what chose it: mm.
     number : int
@@ -242,17 +334,48 @@ class Made:
     name: str
     entry: Entry
     chosen_on: int
+    namesakes: int
     points: tuple[tuple[float, ...], ...]
     number: int
 
 
+def _union(bits: Sequence[int], numbers: Iterable[int]) -> int:
+    found = 0
+    for number in numbers:
+        found |= bits[number]
+    return found
+
+
+def _any_of(by_map: Mapping[str, int], marks: Iterable[str]) -> int:
+    found = 0
+    for mark in marks:
+        found |= by_map.get(mark, 0)
+    return found
+
+
+def _voxels_of(entry: Entry) -> set[str]:
+    """The digests of the voxels that a declaration speaks of, whatever file they stand in."""
+    return {*entry.body["selects"], *entry.body.get("voxels", ())}
+
+
+def _within(chosen: Selected, labels: Sequence[int]) -> bool:
+    """Whether what is said of some labels, or of all when none is named, holds for a region."""
+    return not labels or (bool(chosen.labels) and set(chosen.labels) <= set(labels))
+
+
 class Recorded:
-    """What a ledger holds, in terms of a study's table as it is now.
+    """What a ledger and those beside it hold, in terms of a study's table as it is now.
+
+    Recorded data are the study's when a map is the same, or no label contradicts. Labels are those
+    of one table, though: in a ledger beside the study's own they count only when some map is in
+    both tables, or when one of them says nothing of its maps. Else they are of other data, as far
+    as can be known.
 
     Parameters
     ----------
-    chain : Chain
-    table : UnitTable
+    chain : Shelf
+        Its ledger, and those beside it.
+    study : Study
     options : str
         What ``sequester declare`` needs besides, when the ledger is no study file's.
 
@@ -265,16 +388,12 @@ class Recorded:
         How smooth maps were found to be, in mm, so far.
     """
 
-    def __init__(self, chain: Chain, table: UnitTable, options: str = "") -> None:
-        self.chain, self.table, self.options = chain, table, options
-        there = set(table.units)
+    def __init__(self, chain: Shelf, study: Study, options: str = "") -> None:
+        self.chain, self.table, self.options = chain, study.table, options
         self._bits: dict[str, list[int]] = {}
-        for entry in chain.of_kind(UNITS):
-            units = [Unit(**record) for record in entry.body["units"]]
-            self._bits[entry.body["id"]] = [
-                table.overlapping(table.bits([unit])) if unit in there else table.matching(unit)
-                for unit in units
-            ]
+        self._by_label: set[str] = set()  # units of which only the labels could be compared
+        self._others: dict[str, list[int]] = {}  # units of other data: those with their labels
+        self._match(study)
         self.made: list[Made] = []
         self.sets: list[VoxelSet] = []
         self.fwhm: dict[Selection, float] = {}
@@ -284,52 +403,94 @@ class Recorded:
             for record in entry.body["masks"]:
                 points = (tuple(record["centre"]), *map(tuple, record["peaks"]))
                 rows = record.get("only", everything - set(record.get("without", ())))
-                bits = self._union(of, rows)
-                self.made.append(Made(record["name"], entry, bits, points, len(self.made)))
+                bits = _union(self._bits[of], rows)
+                alike = _union(self._others[of], rows) if of in self._others else 0
+                self.made.append(Made(record["name"], entry, bits, alike, points, len(self.made)))
             self.sets += unpacked(entry.body["sets"])
         self._low = np.array([one.mm.min(axis=0) for one in self.sets]).reshape(-1, 3)
         self._high = np.array([one.mm.max(axis=0) for one in self.sets]).reshape(-1, 3)
         self._mm3 = np.array([one.mm3 for one in self.sets])
 
+    def _match(self, study: Study) -> None:
+        """Find the recorded units among those of the study."""
+        table, listed = study.table, self.chain.of_kind(UNITS)
+        there, by_map = set(table.units), dict[str, int]()
+        if any("maps" in entry.body for entry in listed):
+            for unit, marks in zip(table.units, _maps_of(study), strict=False):
+                for mark in marks:
+                    by_map[mark] = by_map.get(mark, 0) | table.overlapping(table.bits([unit]))
+        for entry in listed:
+            of, maps = entry.body["id"], entry.body.get("maps", [])
+            if of in self._bits:
+                continue  # the study's own entries come first: what they number too is no other's
+            units = [Unit(**record) for record in entry.body["units"]]
+            bits = [
+                table.overlapping(table.bits([unit])) if unit in there else table.matching(unit)
+                for unit in units
+            ]
+            same = [_any_of(by_map, marks) for marks in maps] + [0] * (len(units) - len(maps))
+            if self.chain.name_of(entry) and not any(same):
+                if by_map and any(maps):
+                    self._others[of], bits = bits, same
+                else:
+                    self._by_label.add(of)
+            self._bits[of] = [a | b for a, b in zip(bits, same, strict=True)]
+
+    def of_others(self, entry: Entry) -> bool:
+        """Whether an entry is of a ledger that has looked at other data only."""
+        name = self.chain.name_of(entry)
+        listed = [one for one in self.chain.of_kind(UNITS) if self.chain.name_of(one) == name]
+        return bool(name and listed) and all(one.body["id"] in self._others for one in listed)
+
+    def told(self, entry: Entry) -> str:
+        """The ledger of an entry, if not the study's own, and how its data were recognised."""
+        name = self.chain.name_of(entry)
+        if not name:
+            return ""
+        alone = entry.body.get("of") in self._by_label
+        return f"{name}{' (by the labels of its subjects alone)' if alone else ''}"
+
     def bits(self, of: str, record: Mapping[str, Sequence[int]]) -> int:
         """The units of the table that overlap a recorded set."""
-        return self._union(of, self._rows(of, record))
+        return _union(self._bits[of], self._rows(of, record))
 
     def _rows(self, of: str, record: Mapping[str, Sequence[int]]) -> set[int]:
         if "units" in record:
             return set(record["units"])
         return set(range(len(self._bits[of]))) - set(record["all_but"])
 
-    def _union(self, of: str, numbers: Iterable[int]) -> int:
-        found = 0
-        for number in numbers:
-            found |= self._bits[of][number]
-        return found
-
-    def declared(self, chosen: Selected) -> Entry | None:
-        """The first entry that declares what a region selects."""
+    def declarations(self, chosen: Selected) -> Iterator[Entry]:
+        """The entries that declare what a region selects, be it saved anew."""
         for entry in self.chain.of_kind(DECLARATION):
-            labels = entry.body["labels"]
-            within = not labels or (chosen.labels and set(chosen.labels) <= set(labels))
-            if chosen.selects in entry.body["selects"] and within:
-                return entry
-        return None
+            there = _voxels_of(entry)
+            of_voxels = (set(one) <= there for one in (chosen.voxels, chosen.parts) if one)
+            here = chosen.selects in entry.body["selects"]
+            if (here and _within(chosen, entry.body["labels"])) or any(of_voxels):
+                yield entry
+
+    def declared_before(self, chosen: Selected, entry: Entry) -> bool:
+        """Whether a region was declared when an entry was written."""
+        return any(self.chain.precedes(one, entry) for one in self.declarations(chosen))
 
     def before(self, chosen: Selected) -> list[Made]:
         """The masks that were not recorded after a region was declared."""
-        stated = self.declared(chosen)
-        return [
-            one for one in self.made if stated is None or not self.chain.precedes(stated, one.entry)
-        ]
+        return [one for one in self.made if not self.declared_before(chosen, one.entry)]
 
     def explained(self, chosen: Selected, one: Made) -> bool:
         """Whether somebody has said why a region is like a mask."""
         return any(
-            entry.body["field"] == EXPLAINED
-            and entry.body["selects"] == chosen.selects
-            and self.chain.precedes(one.entry, entry)
+            self.explains(entry, chosen)
+            and _within(chosen, entry.body.get("labels", ()))
+            and self.chain.may_know(one.entry, entry)
             for entry in self.chain.of_kind(WAIVER)
         )
+
+    def explains(self, entry: Entry, chosen: Selected) -> bool:
+        """Whether an entry says why a region, or a label of it, is like a mask."""
+        if entry.body["field"] != EXPLAINED or entry.body["selects"] != chosen.selects:
+            return False
+        labels = set(entry.body.get("labels", ()))
+        return not (labels and chosen.labels) or bool(labels & set(chosen.labels))
 
     def equal(self, sets: Sequence[VoxelSet], made: Sequence[Made]) -> list[Made]:
         """Those masks that hold the very voxels of one of some sets."""
@@ -364,14 +525,14 @@ class Recorded:
 # -- what follows for a study ---------------------------------------------------------------------
 
 
-def recognised(settings: Settings, chain: Chain) -> Settings:
+def recognised(settings: Settings, chain: Shelf) -> Settings:
     """A study whose origins say what its ledger knows of them.
 
     Parameters
     ----------
     settings : Settings
-    chain : Chain
-        Of the study's ledger.
+    chain : Shelf
+        Of the study's ledger, and of those beside it.
 
     Returns
     -------
@@ -381,13 +542,17 @@ def recognised(settings: Settings, chain: Chain) -> Settings:
     if not chain.entries:
         return settings
     table = settings.study.table
-    recorded = Recorded(chain, table)
+    recorded = Recorded(chain, settings.study)
     more: list[Origin] = []
     for roi in settings.rois:
         if not roi.variant_of:
             fwhm, tested = partial(_fwhm, settings, (roi,), recorded), tested_units(roi, table)
             for chosen, sets in given_regions(settings, roi):
-                more += known_of(chosen, sets, tested, recorded, fwhm)
+                alone = [(chosen, sets)]
+                if roi.each_label:
+                    alone = [*by_label(chosen, settings.root / chosen.files[0])]
+                for one, voxels in alone:
+                    more += known_of(one, voxels, tested, recorded, fwhm)
     if not more:
         return settings
     origins = tuple(dict.fromkeys((*settings.study.origins, *more)))
@@ -412,7 +577,8 @@ def known_of(
     ----------
     chosen : Selected
     sets : sequence of VoxelSet
-        Its voxels; of an atlas, those of each label.
+        Its voxels; of an atlas, those of each label. Of labels that are read together, all of
+        them and each.
     tested : int
         The set of units that it is tested on.
     recorded : Recorded
@@ -424,27 +590,38 @@ def known_of(
         stated |= table.matching(unit)
     for entry in recorded.chain.of_kind(DECLARATION):
         units = tuple(Unit(**record) for record in entry.body["derived_from"])
-        if units and chosen.selects in entry.body["selects"]:
-            yield from _added(chosen, f"declared with source {entry.body['sources'][0]}", units)
+        labels = entry.body["labels"]
+        some = not labels or not chosen.labels or set(labels) & set(chosen.labels)
+        here = some and chosen.selects in entry.body["selects"]
+        if recorded.of_others(entry):
+            continue
+        if units and (here or _voxels_of(entry) & {*chosen.voxels, *chosen.parts}):
+            if more := tuple(unit for unit in units if unit not in chosen.derived_from):
+                yield from _added(chosen, f"declared with source {entry.body['sources'][0]}", more)
             stated |= table.bits(u for p in units for u in table.units_of(table.matching(p)))
     before = recorded.before(chosen)
     equal = recorded.equal(sets, before)
     bits = 0
     for one in equal:
         bits |= one.chosen_on
-    if bits:
-        what = f"the same voxels as {equal[0].name}, which a run recorded"
+    if equal:
+        first = next((one for one in equal if one.chosen_on), equal[0])
+        where = recorded.told(first.entry)
+        in_part = len(chosen.parts) > 1 and not recorded.equal(sets[:1], [first])
+        what = f"{'one has ' * in_part}the same voxels as {first.name}, which a run recorded"
+        what += f" in {where}" if where else ""
+        what += "" if bits else ", chosen on data that are not in this table"
         yield from _added(chosen, what, tuple(table.units_of(bits)))
-        return
-    doubtful = [
-        one
-        for one in before
-        if one.chosen_on & tested & ~stated and not recorded.explained(chosen, one)
-    ]
-    found = recorded.alike(sets, doubtful, fwhm()) if doubtful else None
-    if found is not None:
-        what = f"like {found[0].name}, which a run recorded"
-        yield from _added(chosen, what, (), (_doubt(chosen, *found, recorded),))
+    # What it derives from is known when it is a mask of these data; not so of any others.
+    of_these = [] if bits else [one for one in before if one.chosen_on & tested & ~stated]
+    compared = equal if bits else [*equal, *before]  # the very same are told of first
+    of_others = [one for one in compared if one.namesakes & tested & ~stated]
+    for listed in (of_these, of_others):
+        doubtful = [one for one in listed if not recorded.explained(chosen, one)]
+        found = recorded.alike(sets, doubtful, fwhm()) if doubtful else None
+        if found is not None:
+            what = f"like {found[0].name}, which a run recorded"
+            yield from _added(chosen, what, (), (_doubt(chosen, *found, recorded),))
 
 
 def _fwhm(settings: Settings, rois: Sequence[Roi], recorded: Recorded) -> float:
@@ -476,32 +653,51 @@ def _measured_fwhm(root: Path, tested: Selection, missing: Missing) -> float:
 
 
 def _doubt(chosen: Selected, one: Made, how: str, recorded: Recorded) -> Doubt:
-    """That a region is like a mask which was chosen on the data it would be tested on."""
-    stated = recorded.declared(chosen)
+    """That a region is like a mask which was, or may have been, chosen on what is tested."""
+    stated = next(recorded.declarations(chosen), None)
     if stated is None:
         when = "and no entry declares this region"
     elif recorded.chain.precedes(one.entry, stated):
-        when = f"before this region was declared in entry {stated.number}"
+        when = f"before this region was declared in {_entry(stated, recorded)}"
     else:
-        when = f"on another branch than the region's declaration in entry {stated.number}"
+        when = f"on another branch than the region's declaration in {_entry(stated, recorded)}"
+    data = "chosen on the data it would be tested on"
+    cure = "if it is like that mask for another reason, say which"
+    if one.namesakes:
+        data = "found on maps that are not in this table, of subjects with the same labels"
+        cure = "if these are other people or new data, say so"
     return Doubt(
-        f"{chosen.what} (like {one.name})",
-        f"{chosen.what} is like a mask that was chosen on the data it would be tested on: {how} "
-        f"{one.name}, which a run recorded in entry {one.entry.number} of the ledger, {when}",
-        "if it was made from these data, say so with derived_from; if it is like that mask for "
-        f"another reason, say which{'' if chosen.call else ', of the region saved as one MASK'}: "
+        f"{chosen.what} (like {one.name}{' of other maps' if one.namesakes else ''})",
+        f"{chosen.what} is like a mask that was {data}: {how} "
+        f"{one.name}, which a run recorded in {_entry(one.entry, recorded)}"
+        f"{'' if recorded.chain.name_of(one.entry) else ' of the ledger'}, {when}",
+        f"if it was made from these data, say so with derived_from; {cure}"
+        f"{'' if chosen.call else ', of the region saved as one MASK'}",
         f"sequester declare {chosen.call or 'MASK'} --source TEXT --explained TEXT"
         + recorded.options,
     )
 
 
+def _entry(entry: Entry, recorded: Recorded) -> str:
+    """An entry, and the ledger that it is in when that is not the study's own."""
+    name = recorded.told(entry)
+    return f"entry {entry.number}{f' of {name}' if name else ''}"
+
+
 def _added(
     chosen: Selected, what: str, units: tuple[Unit, ...], doubts: tuple[Doubt, ...] = ()
 ) -> Iterator[Origin]:
-    """More of a region's origin: of its file alone, or of its source where it has none."""
-    for source in chosen.sources:
-        said = f"{source} ({what})" if chosen.files else source
-        yield Origin(said, chosen.files[:1], units, doubts)
+    """More of a region's origin: of its file, labels or sphere alone, not of all with its source.
+
+    Of what is made of several parts: of each of them.
+    """
+    of = f"label {', '.join(map(str, chosen.labels))}: " if chosen.labels else ""
+    if doubts or not chosen.files:
+        of = f"{chosen.what} is "
+    apart = (Origin(source, chosen.files[:1], labels=chosen.labels) for source in chosen.sources)
+    for origin in chosen.origins or apart:
+        said = f"{origin.source} ({of}{what})" if origin.files else origin.source
+        yield replace(origin, source=said, derived_from=units, doubts=doubts)
 
 
 # -- what a study declares ------------------------------------------------------------------------
@@ -518,7 +714,7 @@ def declarations(settings: Settings, chain: Chain) -> list[dict[str, Any]]:
                 body["rois"].append(roi.name)
             if chosen.selects not in body["selects"]:
                 more = declaration(chosen, (), settings.root)
-                for name in ("files", "selects", "derived_from"):
+                for name in ("files", "selects", "voxels", "derived_from"):
                     body[name] += more[name]
     of_regions = {record["path"] for body in made.values() for record in body["files"]}
     listed = [*made.values()]
@@ -554,6 +750,7 @@ def declaration(chosen: Selected, rois: Sequence[str], root: Path) -> dict[str, 
         "rois": list(rois),
         "files": [{"path": name, "sha256": digest(root / name)} for name in chosen.files],
         "selects": [chosen.selects],
+        "voxels": list(dict.fromkeys((*chosen.voxels, *chosen.parts))),
         "labels": list(chosen.labels),
         "derived_from": [unit_record(unit) for unit in chosen.derived_from],
     }
@@ -561,12 +758,16 @@ def declaration(chosen: Selected, rois: Sequence[str], root: Path) -> dict[str, 
 
 def explanation(chosen: Selected, text: str) -> dict[str, Any]:
     """The entry that explains why a region is like a recorded mask."""
-    return {"kind": WAIVER, "field": EXPLAINED, "selects": chosen.selects, "says": text}
+    of_some = {"labels": list(chosen.labels)} if chosen.labels else {}
+    body = {"kind": WAIVER, "field": EXPLAINED, "selects": chosen.selects}
+    return {**body, **of_some, "says": text}
 
 
 def of_origin(origin: Origin, root: Path) -> dict[str, Any]:
     """The entry of an origin: files of any kind, or none; of images also what they select."""
-    selects = [one for name in origin.files for one in _selected_by(root / name)]
+    selected = [_selected_by(root / name) for name in origin.files]
+    selects = [digest for listed, _ in selected for digest in listed]
+    voxels = [digest for _, listed in selected for digest in listed]
     return {
         "kind": DECLARATION,
         "what": origin.files[0] if len(origin.files) == 1 else f"{len(origin.files)} files",
@@ -574,6 +775,7 @@ def of_origin(origin: Origin, root: Path) -> dict[str, Any]:
         "rois": [],
         "files": [{"path": name, "sha256": digest(root / name)} for name in origin.files],
         "selects": list(dict.fromkeys(selects)),
+        "voxels": list(dict.fromkeys(voxels)),
         "labels": [],
         "derived_from": [unit_record(unit) for unit in origin.derived_from],
     }
@@ -585,19 +787,34 @@ def is_volume(path: Path) -> bool:
     return image and n_volumes(path, open_image(path)) == 1
 
 
-def _selected_by(path: Path) -> Iterator[str]:
-    """What an image selects as a mask, and as labels when it can be those."""
+def _selected_by(path: Path) -> tuple[list[str], list[str]]:
+    """What an image selects as a mask, and as labels when it can be those; and each label."""
     if not is_volume(path):
-        return
+        return [], []
     data, geometry = read_map(path)
     inside = data[np.isfinite(data) & (data != 0)]
-    if inside.size:
-        yield voxel_set(data, geometry.affine).digest
-        if np.array_equal(inside, np.rint(inside)) and np.abs(inside).max() < 2**31:
-            yield atlas_sets(path, ())[0]
+    if not inside.size:
+        return [], []
+    whole = voxel_set(data, geometry.affine).digest
+    if not np.array_equal(inside, np.rint(inside)) or np.abs(inside).max() >= 2**31:
+        return [whole], []
+    each = labels_in(path)
+    return [whole, _atlas_digest(each)], [one.digest for one in each.values()]
+
+
+def left_out(settings: Settings) -> str:
+    """Who is left out and why, as the study table states it; "" for nobody."""
+    rows = {f"sub-{row.unit.sub}: {row.exclude_reason}" for row in settings.left_out}
+    return "; ".join(sorted(rows))
 
 
 def _waivers(settings: Settings) -> Iterator[dict[str, Any]]:
+    if listed := left_out(settings):
+        yield {"kind": WAIVER, "field": LEFT_OUT, "says": listed}
+    kept_by = {column for one in settings.selections for column in one.kept_by}
+    for column in sorted(kept_by.intersection(settings.quality)):
+        says = f"{column} says how good the data are, and nothing that is tested"
+        yield {"kind": WAIVER, "field": "quality", "says": says}
     for roi in settings.rois:
         if roi.these_subjects:
             says = "the claim is about these subjects only"
@@ -764,9 +981,10 @@ def _declare(
         return [*new_declarations(said[:1], chain), *said[1:]]
 
     made = ledger.extend(new)
-    recorded = Recorded(ledger.sound(), study.table)
+    recorded = Recorded(shelf_of(path, ledger.sound()), study)
     more = known_of(chosen, sets, tested, recorded, partial(fwhm, recorded))
     return made, [
-        f"{origin.doubts[0].reason}; {origin.doubts[0].cure}" if origin.doubts else origin.source
+        "; ".join(undeclared(doubts, doubts)) if doubts else origin.source
         for origin in more
+        for doubts in [{doubt.name: doubt for doubt in origin.doubts}]
     ]
