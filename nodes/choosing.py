@@ -8,7 +8,7 @@ signs, a score under exchange ...) is behind `FoldMaps`; an exchange is one weig
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterable, Iterator, Sequence
 from copy import copy
 from dataclasses import dataclass
 from functools import lru_cache, partial
@@ -19,6 +19,7 @@ import numpy.typing as npt
 
 from .errors import InputError
 from .foldstack import FoldStack
+from .leading import in_any, leading
 from .masks import (
     Cluster,
     MaskRule,
@@ -27,9 +28,9 @@ from .masks import (
     Spheres,
     Strongest,
     Threshold,
+    check_k,
     distances,
     keep_clusters,
-    strongest,
 )
 from .space import Space
 
@@ -58,12 +59,18 @@ class FoldMaps(Protocol):
     def may_pass(self, weights: Floats) -> list[Ints]:
         """For each row of weights, features with all that are above the threshold in a fold."""
 
-    def may_lead(self, weights: Floats, k: int, kind: str) -> list[Ints]:
-        """For each row of weights, features with all that are in the first k of a fold."""
+    def leaders(self, weights: Floats, k: Sequence[int], kind: str) -> Iterable[tuple[Ints, Bools]]:
+        """For each row of weights, the features in the first k (of each fold) of any fold.
+
+        Ascending, with (n_features_found, n_folds) bool.
+        """
 
 
 class Narrowing(Protocol):
     """What a control decides on the maps of each exchange (see `foldcontrol`)."""
+
+    def each(self, weights: Floats) -> Iterable[tuple[Ints, Bools]]:
+        """For each row of weights what passes in any fold; see `passed`."""
 
     def passing(self, weights: Floats, features: Ints, above: Bools) -> Bools:
         """(n_some_features, n_folds) what passes among features above the maps' threshold.
@@ -80,16 +87,16 @@ class Narrowing(Protocol):
 
 
 class Chooser(Protocol):
-    """A rule on the folds' maps."""
+    """A rule on the folds' maps: features in any fold's mask, ascending, and in whose.
 
-    def candidates(self, weights: Floats) -> list[Ints]:
-        """For each row of weights, the features that may be in some fold's mask (or its peak)."""
+    The latter is (n_features_found, n_folds) bool.
+    """
 
-    def everywhere(self, weights: Floats) -> Ints:
-        """The same for one row of weights, without making the stack ready for many."""
+    def each(self, weights: Floats) -> Iterable[tuple[Ints, Bools]]:
+        """For each row of weights; makes the stack ready for many."""
 
-    def members(self, weights: Floats, candidates: Ints) -> tuple[Ints, Bools]:
-        """The features in any fold's mask, ascending, and (n_features_found, n_folds) bool."""
+    def one(self, weights: Floats) -> tuple[Ints, Bools]:
+        """For one row of weights, without making the stack ready for many."""
 
     def on(self, maps: FoldMaps, narrowing: Narrowing | None) -> Chooser:
         """The same rule on the maps of another stack."""
@@ -112,36 +119,40 @@ class ByThreshold:
             self._hood = Neighbourhood(space, rule.connectivity)
             self._distance = distances(space, rule.near)
 
-    def candidates(self, weights: Floats) -> list[Ints]:
+    def each(self, weights: Floats) -> Iterator[tuple[Ints, Bools]]:
         """See `Chooser`."""
-        return self._maps.may_pass(weights)
+        control = self._narrowing
+        found = passed(self._maps, weights) if control is None else control.each(weights)
+        for row, (features, members) in zip(weights, found, strict=True):
+            yield self._kept(row, features, members)
 
-    def everywhere(self, weights: Floats) -> Ints:
+    def one(self, weights: Floats) -> tuple[Ints, Bools]:
         """See `Chooser`."""
-        return np.concatenate(
-            [
-                block.start + np.flatnonzero(self._maps.above(weights, block).any(axis=1))
-                for block in self._maps.stack.pieces()
-            ]
-        )
-
-    def members(self, weights: Floats, candidates: Ints) -> tuple[Ints, Bools]:
-        """See `Chooser`."""
-        above = self._maps.above(weights, candidates)
-        some = above.any(axis=1)
-        found, members = candidates[some], np.ascontiguousarray(above[some])
-        least = None
+        stack = self._maps.stack
+        parts = [
+            in_any(stack.numbers(block), self._maps.above(weights, block))
+            for block in stack.batches()
+        ]
+        found = np.concatenate([features for features, _ in parts])
+        members = np.concatenate([above for _, above in parts])
+        order = np.argsort(found)
+        found, members = found[order], members[order]
         if self._narrowing is not None:
-            members = self._narrowing.passing(weights, found, members)
-            found, members = _in_any(found, members)
-            least = partial(self._narrowing.least_sizes, weights)
+            found, members = in_any(found, self._narrowing.passing(weights, found, members))
+        return self._kept(weights, found, members)
+
+    def _kept(self, weights: Floats, found: Ints, members: Bools) -> tuple[Ints, Bools]:
+        """What the rule keeps, of all features that pass the threshold in any fold."""
         if isinstance(self._rule, Cluster):
             assert self._hood is not None
+            least = None
+            if self._narrowing is not None:
+                least = partial(self._narrowing.least_sizes, weights)
             t = self._maps.maps(weights, found, "t").T if self._rule.pick == "peak" else None
             members = keep_clusters(
                 members, found, self._rule, self._hood, t, self._distance, least
             )
-            found, members = _in_any(found, members)
+            found, members = in_any(found, members)
         return found, members
 
     def on(self, maps: FoldMaps, narrowing: Narrowing | None) -> Chooser:
@@ -151,10 +162,13 @@ class ByThreshold:
         return other
 
 
-def _in_any(features: Ints, members: Bools) -> tuple[Ints, Bools]:
-    """The features that are in any fold's mask."""
-    some = members.any(axis=1)
-    return features[some], members[some]
+def passed(maps: FoldMaps, weights: Floats) -> Iterator[tuple[Ints, Bools]]:
+    """For each row of weights the features above the maps' threshold in any fold.
+
+    Ascending, with (n_features_found, n_folds) bool.
+    """
+    for row, may in zip(weights, maps.may_pass(weights), strict=True):
+        yield in_any(may, maps.above(row, may))
 
 
 class ByRank:
@@ -173,18 +187,16 @@ class ByRank:
         else:
             self._k = [rule.number(n) for n in maps.counts(rule.map_kind).tolist()]
 
-    def candidates(self, weights: Floats) -> list[Ints]:
+    def each(self, weights: Floats) -> Iterator[tuple[Ints, Bools]]:
         """See `Chooser`."""
-        return self._maps.may_lead(weights, max(self._k), self._kind)
+        for found, members in self._maps.leaders(weights, self._k, self._kind):
+            yield self._around_peaks(found, members)
 
-    def everywhere(self, weights: Floats) -> Ints:
+    def one(self, weights: Floats) -> tuple[Ints, Bools]:
         """See `Chooser`."""
-        return np.arange(self._maps.stack.n_features)
-
-    def members(self, weights: Floats, candidates: Ints) -> tuple[Ints, Bools]:
-        """See `Chooser`."""
-        found, members = leading(self._maps, weights, candidates, self._k, self._kind)
-        return (found, members) if self._around is None else self._spheres(found, members)
+        everything: Ints = np.arange(self._maps.stack.n_features)
+        maps = self._maps.maps(weights, everything, self._kind)
+        return self._around_peaks(*leading(maps, everything, self._k))
 
     def on(self, maps: FoldMaps, narrowing: Narrowing | None) -> Chooser:
         """See `Chooser`."""
@@ -192,9 +204,10 @@ class ByRank:
         other._maps = maps
         return other
 
-    def _spheres(self, peaks: Ints, members: Bools) -> tuple[Ints, Bools]:
-        """The spheres around each fold's peak."""
-        assert self._around is not None
+    def _around_peaks(self, peaks: Ints, members: Bools) -> tuple[Ints, Bools]:
+        """The spheres around each fold's peak, if that is the rule."""
+        if self._around is None:
+            return peaks, members
         spheres = [self._around(peak) for peak in peaks.tolist()]
         found = np.unique(np.concatenate([np.empty(0, np.intp), *spheres]))
         inside = np.zeros((len(found), members.shape[1]), bool)
@@ -202,43 +215,6 @@ class ByRank:
             # A fold has one peak, and so one sphere.
             inside[np.searchsorted(found, sphere)] |= of_fold
         return found, inside
-
-
-def leading(
-    maps: FoldMaps, weights: Floats, candidates: Ints, k: Sequence[int], kind: str
-) -> tuple[Ints, Bools]:
-    """The strongest of the candidates in each fold's map, so many as `k` says for the fold."""
-    chosen = strongest_of_each(maps.maps(weights, candidates, kind), k)
-    some = np.flatnonzero(chosen.any(axis=0))
-    return candidates[some], np.ascontiguousarray(chosen[:, some].T)
-
-
-def strongest_of_each(values: Floats, k: Sequence[int]) -> Bools:
-    """`masks.strongest` of each map: (n_maps, n_features) bool.
-
-    Parameters
-    ----------
-    values : (n_maps, n_features) float
-    k : sequence of int
-        How many of each map.
-
-    Examples
-    --------
-    >>> strongest_of_each(np.array([[3.0, 1.0, 2.0], [1.0, 1.0, np.nan]]), [2, 1]).tolist()
-    [[True, False, True], [True, False, False]]
-    """
-    chosen = np.zeros(values.shape, bool)
-    many = max(k)
-    alike = min(k) == many and 0 < many < values.shape[1]
-    if alike:
-        # All at once, where as many are at least the k-th value as are wanted.
-        ranked = np.where(np.isnan(values), -np.inf, values)
-        limit = np.partition(ranked, -many, axis=1)[:, -many, None]
-        np.greater_equal(ranked, limit, out=chosen)
-    for one, few in enumerate(k):
-        if few and not (alike and limit[one] > -np.inf and chosen[one].sum() == few):
-            chosen[one] = strongest(values[one], few)
-    return chosen
 
 
 @dataclass(frozen=True)
@@ -283,6 +259,7 @@ class Choosing:
         narrowing: Narrowing | None = None,
     ) -> None:
         self._maps, self._stand_ins = maps, stand_ins
+        check_k(rule.k if isinstance(rule, Strongest) else stand_ins, maps.stack.n_features)
         self._chooser: Chooser
         if isinstance(rule, Threshold | Cluster):
             self._chooser = ByThreshold(rule, maps, space, narrowing)
@@ -290,6 +267,7 @@ class Choosing:
             self._chooser = ByRank(rule, maps, space)
         else:
             raise InputError("no rule that folds can choose by", got=repr(rule))
+        self._kind = rule.map_kind
 
     def on(self, maps: FoldMaps, narrowing: Narrowing | None) -> Choosing:
         """The same on the maps of another stack, with the same people and features."""
@@ -297,29 +275,31 @@ class Choosing:
         other._maps, other._chooser = maps, self._chooser.on(maps, narrowing)
         return other
 
-    def candidates(self, weights: Floats) -> list[Ints]:
-        """See `Chooser`."""
-        return self._chooser.candidates(weights)
+    def each(self, weights: Floats) -> Iterator[Chosen]:
+        """Every fold's features for each row of weights; makes the stack ready for many."""
+        for row, (found, members) in zip(weights, self._chooser.each(weights), strict=True):
+            yield self._completed(row, found, members)
 
-    def everywhere(self, weights: Floats) -> Ints:
-        """See `Chooser`."""
-        return self._chooser.everywhere(weights)
+    def one(self, weights: Floats) -> Chosen:
+        """Every fold's features for one row of weights."""
+        return self._completed(weights, *self._chooser.one(weights))
 
     def maps_at(self, weights: Floats, features: Ints, kind: str) -> Floats:
         """(n_folds, n_some_features) the folds' maps; see `FoldMaps`."""
         return self._maps.maps(weights, features, kind)
 
-    def chosen(self, weights: Floats, candidates: Ints) -> Chosen:
-        """Every fold's features, from candidates that hold all of them."""
-        found, members = self._chooser.members(weights, candidates)
+    def _completed(self, weights: Floats, found: Ints, members: Bools) -> Chosen:
+        """With what stands in for empty masks."""
         nothing = np.flatnonzero(~members.any(axis=0)).tolist()
         if not nothing or not self._stand_ins:
             return Chosen(found, members, nothing, [])
-        among: Ints = np.arange(self._maps.stack.n_features)
-        if self._maps.stack.turned:
-            (among,) = self._maps.may_lead(weights[None], self._stand_ins, "t")
         wanted = [self._stand_ins if k in nothing else 0 for k in range(members.shape[1])]
-        more, extra = leading(self._maps, weights, among, wanted, "t")
+        if self._maps.stack.turned:
+            ((more, extra),) = self._maps.leaders(weights[None], wanted, self._kind)
+        else:
+            everything: Ints = np.arange(self._maps.stack.n_features)
+            maps = self._maps.maps(weights, everything, self._kind)
+            more, extra = leading(maps, everything, wanted)
         both = np.union1d(found, more)
         merged = np.zeros((len(both), members.shape[1]), bool)
         merged[np.searchsorted(both, found)] |= members

@@ -11,6 +11,8 @@ import numpy as np
 import numpy.typing as npt
 from scipy import stats
 
+from .products import gram
+
 Bools = npt.NDArray[np.bool_]
 
 
@@ -34,8 +36,7 @@ def mean_dice(members: Bools) -> float:
     ----------
     members : (n_features, n_masks) bool
     """
-    x = members.astype(np.float32)
-    both = x.T @ x
+    both = gram(members.T.astype(np.float32))
     size = np.diag(both)
     total = size[:, None] + size[None, :]
     upper = np.triu(total > 0, k=1)

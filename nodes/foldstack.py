@@ -15,6 +15,9 @@ import numpy.typing as npt
 
 from .folds import Fold
 from .groupmaps import Missing, fold_sums, rows_with_data, without_each
+from .pages import Pages
+from .presence import Presence
+from .products import blocks_alone
 
 Floats = npt.NDArray[np.floating]
 Ints = npt.NDArray[np.integer]
@@ -23,47 +26,9 @@ Bools = npt.NDArray[np.bool_]
 # Features a block: enough to hide the cost of a call, and fewer when the numbers of many rows
 # would not fit a cache.
 BLOCK, _SMALL_BLOCK, _BLOCK_NUMBERS = 8192, 1024, 2**19
-# Small enough for a BLAS to stay on one thread and in its cache: the product is soon done, and
-# waiting for other threads is what would take long.
-_SCREEN_BLOCK = 1024
-# With fewer exchanges than these, blocks are larger.
-_FULL = 16
 # Bytes of a stack of which copies are made that are quicker to read; of a larger one there is
 # no room for another.
 _COPIED = 2**27
-
-
-class Presence:
-    """Where a stack has data, a bit each: a large study has no room for bytes.
-
-    Examples
-    --------
-    >>> there = Presence(3, 2)
-    >>> there.put(1, np.array([True, False]))
-    >>> there.at(slice(None)).tolist()
-    [[True, True], [True, False], [True, True]]
-    """
-
-    def __init__(self, n_rows: int, n_features: int) -> None:
-        self._n_rows = n_rows
-        self._bits = np.full((-(-n_rows // 8), n_features), 255, np.uint8)
-
-    @classmethod
-    def of(cls, present: Bools) -> Presence:
-        """From (n_rows, n_features) bool."""
-        made = cls(*present.shape)
-        for row, there in enumerate(present):
-            made.put(row, there)
-        return made
-
-    def put(self, row: int, present: Bools) -> None:
-        """Say where a row has data: (n_features,). So far it has it everywhere."""
-        self._bits[row // 8] &= ~((~present).astype(np.uint8) << (7 - row % 8))
-
-    def at(self, features: Ints | slice, rows: slice = slice(None)) -> Bools:
-        """(n_some_rows, n_some_features) where there is data."""
-        bits = np.unpackbits(self._bits[:, features], axis=0, count=self._n_rows)
-        return bits.view(np.bool_)[rows]
 
 
 class FoldStack:
@@ -71,9 +36,11 @@ class FoldStack:
 
     Parameters
     ----------
-    x : (n_rows, n_features) float
-        Zero where data is missing; high in the direction of selection.
+    x : (n_rows, n_features) float, or Pages of such a stack
+        Zero where data is missing; high in the direction of selection. Pages are read as sums
+        ask for them; whatever needs the whole (`x`, `presence`, `pieces`, `turn`) holds it.
     presence : Presence, or None for data everywhere
+        Pages have their own.
     folds : sequence of Fold
         Their held-out rows partition the rows.
     missing : Missing
@@ -88,13 +55,34 @@ class FoldStack:
     """
 
     def __init__(
-        self, x: Floats, presence: Presence | None, folds: Sequence[Fold], missing: Missing
+        self,
+        x: Floats | Pages,
+        presence: Presence | None,
+        folds: Sequence[Fold],
+        missing: Missing,
     ) -> None:
-        self.x, self.presence, self.folds, self.missing = x, presence, folds, missing
+        self._x, self._presence, self.folds, self.missing = x, presence, folds, missing
         self.n_rows, self.n_features = x.shape
+        self._complete = rows_with_data(None, folds)
         self._least: dict[str, Ints] = {}
         self._single: Floats | None = None
         self._by_feature: Floats | None = None
+        self._even: Floats | None = None
+
+    @property
+    def x(self) -> Floats:
+        """(n_rows, n_features) the whole stack."""
+        return self._held()[0]
+
+    @property
+    def presence(self) -> Presence | None:
+        """Where the whole stack has data; None for everywhere."""
+        return self._held()[1]
+
+    def _held(self) -> tuple[Floats, Presence | None]:
+        if isinstance(self._x, Pages):
+            self._x, self._presence = self._x.whole()
+        return self._x, self._presence
 
     @property
     def turned(self) -> bool:
@@ -105,9 +93,13 @@ class FoldStack:
         """Make the stack ready for many exchanges; later calls do nothing."""
         if self._single is None:
             self._single = self.x
-            if self.x.nbytes <= _COPIED:
+            if self._copied:
                 self._single = _as_single(self.x)
                 self._by_feature = np.ascontiguousarray(self.x.T)
+
+    @property
+    def _copied(self) -> bool:
+        return self.x.nbytes <= _COPIED
 
     @property
     def piece(self) -> int:
@@ -116,28 +108,48 @@ class FoldStack:
         return min(BLOCK, fitting)
 
     def pieces(self) -> list[slice]:
-        """The features in blocks."""
-        return [
-            slice(start, min(start + self.piece, self.n_features))
-            for start in range(0, self.n_features, self.piece)
-        ]
+        """The features in blocks, of the whole stack."""
+        return self._slices(self.x.shape[1])
+
+    def batches(self, features: Ints | None = None) -> Iterator[Ints | slice]:
+        """Blocks of all features, or positions among some, in the order that is quick to read.
+
+        Not to hold the whole stack, go through it in these.
+        """
+        if isinstance(self._x, Pages):
+            return self._x.batches(self.piece, features)
+        return iter(self._slices(self.n_features if features is None else len(features)))
+
+    def _slices(self, n: int) -> list[slice]:
+        return [slice(at, min(at + self.piece, n)) for at in range(0, n, self.piece)]
+
+    def numbers(self, features: Ints | slice) -> Ints:
+        """The features of a block."""
+        if not isinstance(features, slice):
+            return features
+        numbers: Ints = np.arange(*features.indices(self.n_features))
+        return numbers
 
     def columns(self, features: Ints | slice, rows: slice = slice(None)) -> Floats:
         """(n_some_rows, n_some_features) of the stack."""
+        if isinstance(self._x, Pages):
+            return self._x.columns(features, rows)
         if self._by_feature is None or isinstance(features, slice):
-            return self.x[rows, features]
+            return self._x[rows, features]
         # Gathered by feature: whole cache lines.
         return np.take(self._by_feature, features, axis=0).T[rows]
 
     def there(self, features: Ints | slice, rows: slice = slice(None)) -> Bools | None:
         """(n_some_rows, n_some_features) where there is data, or None for everywhere."""
-        present = None if self.presence is None else self.presence.at(features, rows)
+        if isinstance(self._x, Pages):
+            return self._x.there(features, rows)
         # One missing value anywhere must not make all features slow.
-        return None if present is None or present.all() else present
+        return None if self._presence is None else self._presence.at(features, rows)
 
     def rows(self, features: Ints | slice) -> Floats:
         """(n_folds, n_some_features or 1): rows of each fold's selection side with data."""
-        return rows_with_data(self.there(features), self.folds)
+        present = self.there(features)
+        return self._complete if present is None else rows_with_data(present, self.folds)
 
     def least(self, kind: str = "t") -> Ints:
         """(n_folds, 1): how many rows of each fold's selection side must have data."""
@@ -159,7 +171,7 @@ class FoldStack:
             return without_each(fold_sums(self.columns(features), self.folds, square=True))
 
     def most_off(self, block: slice) -> tuple[Floats, Floats, Bools]:
-        """How far fold sums and the float32 sum over all rows can be apart, for weights of +-1.
+        """How far fold sums and the sums of `all_sums` can be apart, for weights of +-1.
 
         Returns
         -------
@@ -175,11 +187,18 @@ class FoldStack:
         with np.errstate(over="ignore", invalid="ignore"):
             reach = fold_sums(size, self.folds)
             total = size.sum(axis=0)
+            if self._copied:
+                first, less = _uneven(reach)
+                # The first fold's own part is smaller, and of the others' sums some is missing.
+                reach = reach + np.where(first, -less, less)
             slack = 4 * (len(size) + 2) * (single.eps * total + single.tiny)
             return reach, slack, total < single.max / 2
 
     def all_sums(self, weights: Floats) -> Iterator[tuple[slice, Floats]]:
         """Blocks of features with their (n_exchanges, n_features) float32 sums over all rows.
+
+        To be as near as can be to all folds' sums (see `most_off`), the fold that can change the
+        sum the most counts less, if there is room for a stack of its own.
 
         Parameters
         ----------
@@ -187,7 +206,24 @@ class FoldStack:
         """
         self.turn()
         assert self._single is not None
-        yield from blocked_products(weights.astype(np.float32), self._single)
+        rows = self._evened() if self._copied else self._single
+        yield from blocked_products(weights.astype(np.float32), rows)
+
+    def _evened(self) -> Floats:
+        """(n_rows, n_features) float32: the rows of `all_sums`."""
+        if self._even is None:
+            assert self._single is not None
+            self._even = self._single.copy()
+            fold_of_row = np.empty(self.n_rows, np.intp)
+            for k, fold in enumerate(self.folds):
+                fold_of_row[list(fold.held_out)] = k
+            for block in self.pieces():
+                with np.errstate(over="ignore", invalid="ignore", divide="ignore"):
+                    reach = fold_sums(np.abs(self.x[:, block].astype(np.float64)), self.folds)
+                    first, less = _uneven(reach)
+                    share = np.where(first & (less > 0), 1 - less / reach, 1)
+                    self._even[:, block] *= share[fold_of_row]
+        return self._even
 
     def side_sums(self, weights: Floats) -> Iterator[tuple[slice, list[Floats]]]:
         """Blocks of features with their float32 sums over each fold's selection side.
@@ -206,32 +242,22 @@ class FoldStack:
         assert self._single is not None
         rows = [list(fold.held_out) for fold in self.folds]
         signs = [np.ascontiguousarray(weights[:, held], np.float32) for held in rows]
-        for block in _screen_blocks(self.n_features, len(weights)):
+        largest = max(len(held) for held in rows)
+        for block in blocks_alone(self.n_features, len(weights) * largest):
             x = _as_single(self._single[:, block])
             with np.errstate(over="ignore", invalid="ignore"):
                 held = [s @ x[some] for s, some in zip(signs, rows, strict=True)]
                 total = np.sum(held, axis=0, dtype=np.float32)
                 yield block, [total - part for part in held]
 
-    def may_reach(self, weights: Floats, lowest: Floats) -> list[Ints]:
-        """For each row of weights, features where some fold's sum is not below its lowest.
 
-        Parameters
-        ----------
-        weights : (n_exchanges, n_rows)
-        lowest : (n_folds, n_features) float32
-            NaN keeps a feature in.
-        """
-
-        def pieces() -> Iterator[tuple[slice, Bools]]:
-            for block, sums in self.side_sums(weights):
-                may = np.zeros(sums[0].shape, bool)
-                for of_fold, least in zip(sums, lowest[:, block], strict=True):
-                    # Negated, so that what is not a number stays in.
-                    may |= ~(of_fold <= least)
-                yield block, may
-
-        return gathered(pieces(), len(weights))
+def _uneven(reach: Floats) -> tuple[Bools, Floats]:
+    """Where a feature's fold has the largest reach, and half of what it is larger than the next."""
+    most = reach.max(axis=0)
+    first = reach == most
+    next_most = np.where(first, 0, reach).max(axis=0)
+    alone = (np.count_nonzero(first, axis=0) == 1) & np.isfinite(most)
+    return first, np.where(alone, (most - next_most) / 2, 0)
 
 
 def _as_single(x: Floats) -> Floats:
@@ -240,15 +266,9 @@ def _as_single(x: Floats) -> Floats:
         return x.astype(np.float32, copy=False)
 
 
-def _screen_blocks(n_features: int, n_exchanges: int) -> Iterator[slice]:
-    size = _SCREEN_BLOCK * max(1, _FULL // n_exchanges)
-    for start in range(0, n_features, size):
-        yield slice(start, start + size)
-
-
 def blocked_products(weights: Floats, rows: Floats) -> Iterator[tuple[slice, Floats]]:
     """Blocks of features with weights @ rows there, in float32."""
-    for block in _screen_blocks(rows.shape[1], len(weights)):
+    for block in blocks_alone(rows.shape[1], weights.size):
         with np.errstate(over="ignore", invalid="ignore"):
             yield block, weights @ _as_single(rows[:, block])
 
@@ -264,24 +284,19 @@ def by_exchange(products: Iterator[tuple[slice, Floats]], lowest: Floats, n: int
     n : int
     """
     # Negated, so that what is not a number stays in.
-    return gathered(((block, ~(sums <= lowest[block])) for block, sums in products), n)
+    pieces = ((block, ~(sums <= lowest[block])) for block, sums in products)
+    return gathered(pieces, n, len(lowest))
 
 
-def gathered(pieces: Iterator[tuple[slice, Bools]], n: int) -> list[Ints]:
+def gathered(pieces: Iterator[tuple[slice, Bools]], n: int, n_features: int) -> list[Ints]:
     """For each of n exchanges the features, ascending, that are marked in blocks of them.
 
     Parameters
     ----------
-    pieces : blocks of features with (n, n_features) bool
-    n : int
+    pieces : blocks of features with (n, n_features_of_block) bool
+    n, n_features : int
     """
-    exchanges, features = [], []
+    marked = np.empty((n, n_features), bool)
     for block, may in pieces:
-        exchange, feature = np.divmod(np.flatnonzero(may), may.shape[1])
-        exchanges.append(exchange)
-        features.append(feature + block.start)
-    of_exchange = np.concatenate(exchanges)
-    # Blocks come in order, so a stable sort by exchange leaves the features ascending.
-    order = np.argsort(of_exchange, kind="stable")
-    ends = np.cumsum(np.bincount(of_exchange, minlength=n))
-    return np.split(np.concatenate(features)[order], ends[:-1])
+        marked[:, block] = may
+    return [np.flatnonzero(row) for row in marked]
