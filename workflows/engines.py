@@ -174,7 +174,7 @@ class _Watched(DistributedPluginBase, ABC):
         gc.freeze()
         try:
             super().run(graph, config, updatehash)
-        except Exception as error:
+        except Exception as error:  # raised again, or as what is known to be its cause
             # The engine's own error is that of the first node that failed, or a count of them.
             if self._lost:
                 raise self._lost[0] from error
@@ -201,7 +201,7 @@ class _Watched(DistributedPluginBase, ABC):
     def _passes(self, jobid: int) -> bool:
         try:
             self.before(self.procs[jobid])
-        except Exception as error:
+        except Exception as error:  # kept: other branches go on
             # Told by the engine when the other branches are done.
             self._run_errors.append(error)
             self._clean_queue(jobid, self._graph)
@@ -360,7 +360,7 @@ class _IPython(_Watched, IPythonPlugin):
     def _get_result(self, taskid: int) -> Any:
         try:
             answer = super()._get_result(taskid)
-        except Exception as error:
+        except Exception as error:  # raised again, or as a worker that is lost
             if getattr(error, "ename", type(error).__name__) == "EngineError":
                 cure = "look at the cluster's log"
                 raise self._lose(DIED, f"killed, or out of memory or time; {cure}") from error

@@ -216,7 +216,7 @@ class GuardPlugin(PluginBase):
         try:
             runner.run(graph, config, updatehash=False)
             self._states.look_again()
-        except Exception as error:
+        except Exception as error:  # raised again, or as our own
             # Our own error says more than the engine's wrapping of it.
             if self._refused:
                 raise GuardRefused(

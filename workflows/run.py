@@ -192,7 +192,7 @@ def _here() -> Iterator[None]:
 def _run(workflow: Any, guard: GuardPlugin) -> Any:
     try:
         return workflow.run(plugin=guard)
-    except Exception as error:
+    except Exception as error:  # raised again, as what it is where that can be told
         # Inside the engine the error is text; the caller tells it as any fault in writing.
         for code in (errno.ENOSPC, errno.EDQUOT, errno.EFBIG, errno.EROFS):
             if os.strerror(code) in str(error):

@@ -65,6 +65,14 @@ def _union(inputs: Inputs, reason: str, cure: str) -> Leaf:
     return joined(inputs.trees.values(), single=False, lost=Loss(reason, cure))
 
 
+def _of_unknown_length(inputs: Inputs) -> Leaf:
+    return _union(
+        inputs,
+        "the length of its list is not known before the run",
+        "let a MapNode or a JoinNode make the list, or state the rule of the node that does",
+    )
+
+
 def _merged(inputs: Inputs) -> Tree:
     settings = inputs.settings
     names = sorted(
@@ -133,11 +141,7 @@ def _selected(inputs: Inputs) -> Tree:
     if not isinstance(index, list):
         return _union(inputs, "its index arrives over an edge", "set the index literally")
     if not isinstance(tree, Branch):
-        return _union(
-            inputs,
-            "the length of its list is not known before the run",
-            "let a MapNode or a JoinNode make the list, or state the rule of the node that does",
-        )
+        return _of_unknown_length(inputs)
     n = len(tree.children)
     if not all(isinstance(i, int) and -n <= i < n for i in index):
         return _union(inputs, f"its index {index} goes beyond {n} items", "correct the index")
@@ -150,11 +154,7 @@ def _split(part: int, inputs: Inputs) -> Tree:
     if not isinstance(sizes, list) or "squeeze" in inputs.arriving:
         return _union(inputs, "its splits arrive over an edge", "set them literally")
     if not isinstance(tree, Branch):
-        return _union(
-            inputs,
-            "the length of its list is not known before the run",
-            "let a MapNode or a JoinNode make the list, or state the rule of the node that does",
-        )
+        return _of_unknown_length(inputs)
     start = sum(sizes[:part])
     items = list(tree.children[start : start + sizes[part]])
     return items[0] if inputs.settings.get("squeeze") is True and len(items) == 1 else Branch(items)
